@@ -1,0 +1,110 @@
+"""What a fit works on: measured traces with their conditions, and the job that binds them.
+
+Internal units: frequency in MHz, fields in mT, angles in rad, temperature in K.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+from spinfit.species import Species
+from spinfit.sweep import Sample
+
+
+@dataclass(frozen=True, eq=False)
+class Trace:
+    """One measured field sweep, read, ordered and cut to what is to be fitted.
+
+    Attributes
+    ----------
+    name : str
+        How it is called in parameter names and tables.
+    field : ndarray, shape (n,)
+        mT, as in the file after unit and calibration, strictly increasing, *before* `field_offset`
+        and `field_scale`: true field = field * field_scale + field_offset.
+    signal : ndarray, shape (n,)
+    used : ndarray of bool, shape (n,)
+        Points inside `fit_range`, outside `exclude`, and not glitches.
+    frequency, temperature, microwave, modulation, detect, phase
+        Conditions, as in `spinfit.sweep.Sweep`.
+    angle : float or None
+        rad; crystal and aligned samples.
+    axis, start : vectors or None
+        This trace's own rotation plane, where it differs from the sample's.
+    background : ndarray, shape (n,), or None
+        Empty-tube signal at `field`.
+    baseline : int or None
+        Polynomial order; None for no baseline.
+    group : str or None
+        Traces that share a correction.
+    field_offset, field_scale : float
+        mT and 1.
+    field_uncertainty, frequency_uncertainty : float
+        Standard uncertainties, mT and MHz.
+    sha256 : str
+        Of the input file.
+    notes : tuple of (code, text)
+        What the reader wants to warn of.
+    """
+
+    name: str
+    field: NDArray[np.float64]
+    signal: NDArray[np.float64]
+    used: NDArray[np.bool_]
+    frequency: float
+    temperature: float | None = None
+    microwave: str = "perpendicular"
+    modulation: float = 0.0
+    detect: str = "derivative"
+    phase: float = 0.0
+    angle: float | None = None
+    axis: tuple[float, float, float] | None = None
+    start: tuple[float, float, float] | None = None
+    background: NDArray[np.float64] | None = None
+    baseline: int | None = 1
+    group: str | None = None
+    field_offset: float = 0.0
+    field_scale: float = 1.0
+    field_uncertainty: float = 0.0
+    frequency_uncertainty: float = 0.0
+    file: str = ""
+    sha256: str = ""
+    notes: tuple[tuple[str, str], ...] = ()
+
+
+@dataclass(frozen=True, eq=False)
+class Job:
+    """A model, the traces, and what to vary.
+
+    Attributes
+    ----------
+    vary : tuple of str
+        Names or groups, as the user wrote them, checked.
+    limits : mapping of name -> (low, high)
+        In internal units.
+    ties : mapping of name -> expression
+        Arithmetic on parameter names, text; numbers in the unit of the job.
+    start : str
+        "given" or "auto".
+    units : mapping of name -> unit
+        The unit in which the job gave each parameter ("" for a plain number); outcomes use it.
+    text : str
+        The job file as it was read.
+    """
+
+    species: tuple[Species, ...]
+    sample: Sample
+    traces: tuple[Trace, ...]
+    vary: tuple[str, ...]
+    limits: Mapping[str, tuple[float, float]] = field(default_factory=dict)
+    ties: Mapping[str, str] = field(default_factory=dict)
+    start: str = "given"
+    tolerance: float = 1e-3
+    units: Mapping[str, str] = field(default_factory=dict)
+    name: str = "job"
+    path: str = ""
+    text: str = ""
