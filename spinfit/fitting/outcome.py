@@ -1,0 +1,117 @@
+"""Everything a fit found, as plain frozen data.
+
+Values are in the unit in which the job gave each parameter ("" for a plain number); fields of
+curves in mT.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+
+@dataclass(frozen=True)
+class Value:
+    """One parameter after the fit.
+
+    `uncertainty` is one standard deviation, the quadrature sum of `uncertainty_noise` (from the
+    covariance at the trace's noise) and `uncertainty_field` (from the stated uncertainties of the
+    field axis and of the frequency); all None when the parameter was not varied or when no
+    covariance could be had.
+    """
+
+    value: float
+    uncertainty: float | None = None
+    uncertainty_noise: float | None = None
+    uncertainty_field: float | None = None
+    unit: str = ""
+    varied: bool = False
+    at_limit: bool = False
+    tied: bool = False
+    start: float | None = None
+
+
+@dataclass(frozen=True)
+class Quality:
+    """How good the fit is.
+
+    `noise` is the estimated standard deviation of the first trace's points, in its signal's unit;
+    `finished` is False when the fit was interrupted.
+    """
+
+    converged: bool
+    finished: bool
+    chi2_reduced: float
+    noise: float
+    points: int
+    free_parameters: int
+    aicc: float
+    bic: float
+
+
+@dataclass(frozen=True)
+class Note:
+    """A warning: a stable `code` for scripts ("at_limit") and a sentence for people."""
+
+    code: str
+    text: str
+
+
+@dataclass(frozen=True, eq=False)
+class Curves:
+    """One trace with its fit; every array has shape (n,).
+
+    `field` is the true field (offset and scale applied), mT.  `fitted` includes `baseline`;
+    `parts` maps species name to its scaled signal without the baseline; `used` marks the points
+    that were fitted.
+    """
+
+    trace: str
+    frequency: float
+    field: NDArray[np.float64]
+    measured: NDArray[np.float64]
+    fitted: NDArray[np.float64]
+    residual: NDArray[np.float64]
+    baseline: NDArray[np.float64]
+    used: NDArray[np.bool_]
+    parts: Mapping[str, NDArray[np.float64]]
+    noise: float
+    scale: float
+    detect: str = "derivative"
+
+
+@dataclass(frozen=True, eq=False)
+class Outcome:
+    """The result of one fit.
+
+    Attributes
+    ----------
+    parameters : mapping of name -> Value
+        All parameters of the model, in file order, varied or not.
+    correlation_names, correlation_matrix
+        Of the varied parameters; shape (n, n); empty when there is no covariance.
+    fractions : mapping of species name -> Value
+        Relative numbers of spins, summing to 1.
+    effective : tuple of mappings
+        Effective units for people: e.g. {"name": "cu.A_z", "value": ..., "unit": "cm^-1"}.
+    engine : mapping
+        What accuracy was used: orientations, diagonalisations, estimated error, per trace.
+    seconds : float
+        Wall time; kept out of files that must be bit-identical.
+    """
+
+    name: str
+    parameters: Mapping[str, Value]
+    quality: Quality
+    correlation_names: tuple[str, ...]
+    correlation_matrix: NDArray[np.float64]
+    warnings: tuple[Note, ...]
+    curves: tuple[Curves, ...]
+    fractions: Mapping[str, Value] = field(default_factory=dict)
+    provenance: Mapping[str, object] = field(default_factory=dict)
+    engine: Mapping[str, object] = field(default_factory=dict)
+    message: str = ""
+    seconds: float = 0.0
