@@ -6,7 +6,9 @@ The numbers stand in `data/isotopes.csv` with their source; `scripts/make_isotop
 from __future__ import annotations
 
 import csv
+import math
 import re
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from functools import lru_cache
 from importlib import resources
@@ -105,3 +107,27 @@ def natural(element: str) -> tuple[Isotope, ...]:
         names = ", ".join(one.name for one in known)
         raise InputError(f"{element} has no natural isotopes", f"name an isotope instead of an element: {names}")
     return tuple(replace(one, abundance=one.abundance / total) for one in known if one.abundance)
+
+
+def mixtures(shares: Sequence[float], count: int) -> list[tuple[float, tuple[int, ...]]]:
+    """Return every way in which `count` places are filled by kinds with these shares.
+
+    Parameters
+    ----------
+    shares : sequence of float
+        Probability of each kind, summing to 1.
+    count : int
+        Number of equivalent places.
+
+    Returns
+    -------
+    list of (float, tuple of int)
+        Multinomial probability and how many places each kind holds.
+    """
+    if len(shares) == 1:
+        return [(shares[0] ** count, (count,))]
+    ways = []
+    for first in range(count, -1, -1):
+        factor = math.comb(count, first) * shares[0] ** first
+        ways += [(factor * share, (first, *rest)) for share, rest in mixtures(shares[1:], count - first)]
+    return ways

@@ -107,25 +107,24 @@ def stevens(spin: float, k: int, q: int) -> Matrix:
     return operator
 
 
-def add_single(total: Matrix, operator: Matrix, spins: Sequence[float], position: int) -> None:
-    """Add an operator of one spin to a matrix of the product space, in place.
+def add_block(total: Matrix, operator: Matrix, before: int = 1) -> None:
+    """Add an operator of a part of the product space, 1 x operator x 1, to a matrix in place.
 
     Parameters
     ----------
     total : ndarray, shape (..., n, n)
         Matrix, or stack of matrices, that is added to; C-contiguous.
     operator : ndarray, shape (..., d, d)
-        Acts on the spin at `position` alone; leading axes as those of `total`.
-    spins : sequence of float
-        All spins of the product space.
-    position : int
-        Counted from 0.
+        Acts on neighbouring spins with d states together; leading axes as those of `total`.
+    before : int
+        Number of states of the spins before them; n / (d before) is that of the spins after.
     """
-    before, d, after = dimension(spins[:position]), multiplicity(spins[position]), dimension(spins[position + 1 :])
-    lead = total.shape[:-2]
+    *lead, n, _ = total.shape
+    d = operator.shape[-1]
+    after = n // (d * before)
     view = total.reshape(*lead, before, d, after, before, d, after)
     # The repeated letters pick the identity's diagonal as a writeable view: no Kronecker product is stored.
-    np.einsum("...aibajb->ab...ij", view)[...] += operator
+    np.einsum("...aibajb->...ijab", view)[...] += operator[..., None, None]
 
 
 def add_bilinear(
@@ -157,6 +156,22 @@ def add_bilinear(
         dimension(after),
     )
     np.einsum("aibjcakblc->abcijkl", total.reshape(*shape, *shape))[...] += product
+
+
+@lru_cache(maxsize=256)
+def coupled_spins(spin: float, count: int) -> tuple[tuple[float, int], ...]:
+    """Couple `count` equal spins: return the total spins F, falling, each with how often it occurs.
+
+    sum over F of times x (2F + 1) = (2 spin + 1)^count.
+    """
+    times = {0: 1}
+    for _ in range(count):
+        sums: dict[int, int] = {}
+        for twice, often in times.items():
+            for total in range(abs(twice - round(2 * spin)), twice + round(2 * spin) + 1, 2):
+                sums[total] = sums.get(total, 0) + often
+        times = sums
+    return tuple((twice / 2, times[twice]) for twice in sorted(times, reverse=True))
 
 
 def rotation_matrix(spins: Sequence[float], axis: Sequence[float], angle: float) -> Matrix:
