@@ -1,7 +1,7 @@
 """Delimited text in the forms that instruments, scripts and spreadsheets write it.
 
 Commas, semicolons, tabs or blanks between numbers, decimal points or commas, comments anywhere, headings with or
-without units.  A fast path hands a clean block of numbers to pandas; whatever it cannot take goes line by line, which
+without units.  A fast path hands a clean block of numbers to numpy; whatever it cannot take goes line by line, which
 is also where every error finds its line number.  Both give the same numbers.
 """
 
@@ -10,12 +10,10 @@ from __future__ import annotations
 import io
 import math
 import re
-import warnings
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
-import pandas as pd
 from numpy.typing import NDArray
 
 from spinfit.errors import InputError
@@ -32,14 +30,13 @@ _SAMPLE = 400
 
 @dataclass(frozen=True)
 class Dialect:
-    """How a file writes its numbers: `separator` "" stands for blanks."""
+    """How a file writes its numbers: `separator` "" stands for blanks and tabs."""
 
     separator: str
     decimal: str
 
     def split(self, line: str) -> list[str]:
         """Split a data line into its fields; an empty last one (trailing separator) is dropped."""
-        line = line.strip() if self.separator == "\t" else line
         fields = line.split(self.separator) if self.separator else line.split()
         fields = [field.strip().strip("\"'").strip() for field in fields]
         while len(fields) > 1 and not fields[-1]:
@@ -75,15 +72,12 @@ def _dialect(sample: list[str]) -> Dialect:
     A comma is a decimal mark when semicolons, tabs or blanks separate the numbers and no number has a point.
     """
     text = "\n".join(line.strip() for line in sample)
-    comma_decimal = "," in text and "." not in text
     if ";" in text:
         return Dialect(";", "," if "," in text else ".")
-    if "\t" in text:
-        return Dialect("\t", "," if comma_decimal else "." if "," not in text else ".")
     if "," not in text:
         return Dialect("", ".")
-    spaced = all(re.search(r"[^,\s][ ]+[^,\s]", line) for line in text.split("\n"))
-    if comma_decimal and spaced and not re.search(r",\s|\s,", text):
+    spaced = all(re.search(r"[^,\s]\s+[^,\s]", line) for line in text.split("\n"))
+    if "." not in text and spaced and not re.search(r",\s|\s,", text):
         return Dialect("", ",")
     return Dialect(",", ".")
 
@@ -152,28 +146,15 @@ def _fast(body: str, dialect: Dialect, width: int) -> NDArray[np.float64] | None
     """Read a clean block of numbers; None when it is not clean, so that the slow path finds out why."""
     if _UNCLEAN.search(body):
         return None
-    blanks = dialect.separator in ("", "\t")
+    if dialect.decimal == ",":
+        body = body.replace(",", ".")
+    if dialect.separator:
+        body = re.sub(rf"[{dialect.separator}\s]+$", "", body, flags=re.MULTILINE)
     try:
-        with warnings.catch_warnings():
-            warnings.simplefilter("error")
-            frame = pd.read_csv(
-                io.StringIO(body),
-                header=None,
-                sep=r"\s+" if blanks else dialect.separator,
-                decimal=dialect.decimal,
-                names=list(range(width + 1)) if not blanks else None,
-                index_col=False,
-                dtype=np.float64,
-                float_precision="round_trip",
-                skipinitialspace=True,
-                na_filter=True,
-            )
-    except (ValueError, Warning, pd.errors.ParserError, OverflowError):
+        data = np.loadtxt(io.StringIO(body), delimiter=dialect.separator or None, comments=None, ndmin=2)
+    except ValueError:
         return None
-    data = frame.to_numpy()
-    if data.shape[1] == width + 1 and np.isnan(data[:, width]).all():
-        data = data[:, :width]  # the place for a trailing separator
-    return np.ascontiguousarray(data) if data.shape[1] == width and np.isfinite(data).all() else None
+    return data if data.shape[1] == width and np.isfinite(data).all() else None
 
 
 def _slow(lines: list[str], pre: _Preamble, header: dict[str, Any], notes: list[Note], file: str) -> NDArray:
