@@ -1,0 +1,351 @@
+"""Directions of the field: symmetry of a spin system, knots to diagonalise at, meshes to sum over.
+
+A spectrum is even in the field direction, so the most general system needs half a sphere; rotation
+symmetry found by testing the matrices themselves reduces it to a quarter, an octant, one meridian
+or one point.  Knots lie on rings of constant theta with about as many azimuths as the ring is long;
+values at the knots are continued to any mesh by Fourier series in phi on each ring and cosine (or
+sine) series in theta, which respect parity at the pole and at the equator.  All continuation is
+linear, so it is a cached matrix.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import lru_cache
+
+import numpy as np
+from numpy.typing import NDArray
+
+from spinfit.hamiltonian import System, rotation
+
+Array = NDArray[np.float64]
+
+KINDS = ("point", "axial", "octant", "quarter", "half")
+"""Size of the domain, by symmetry: all rotations, any turn about z, three twofold axes, one, none."""
+
+
+@dataclass(frozen=True, eq=False)
+class Symmetry:
+    """What part of the sphere is enough for a system.
+
+    Attributes
+    ----------
+    kind : str
+        One of `KINDS`.
+    axes : ndarray, shape (3, 3)
+        The frame in which the domain stands, axes as columns in molecular components; z is the
+        rotation axis where there is one.
+    """
+
+    kind: str
+    axes: Array
+
+
+def _turn(axis: Array, angle: float) -> Array:
+    k = np.array([[0, -axis[2], axis[1]], [axis[2], 0, -axis[0]], [-axis[1], axis[0], 0]])
+    return np.eye(3) + np.sin(angle) * k + (1 - np.cos(angle)) * k @ k
+
+
+def _invariant(system: System, axis: Array, angle: float) -> bool:
+    """Whether turning every spin and the field about `axis` leaves H(B) as it is."""
+    u = rotation(system, axis, angle)
+    n = len(system.h0)
+    scale = 1e-9 * (np.abs(system.h0).max() + 1e3 * np.abs(system.zeeman).max())
+    if np.abs(u @ system.h0 @ u.conj().T - system.h0).max() > scale:
+        return False
+    turned = u @ system.zeeman @ u.conj().T
+    expected = np.dot(_turn(axis, angle).T, system.zeeman.reshape(3, -1)).reshape(3, n, n)
+    return np.abs(turned - expected).max() <= 1e-9 * np.abs(system.zeeman).max()
+
+
+def symmetry_of(system: System) -> Symmetry:
+    """Find the largest symmetry of a system among the frames of its tensors.
+
+    Each candidate is tested on the matrices: a rotation counts only if it turns H(B) into H(RB)
+    to 1e-9, whatever the terms of the Hamiltonian are.
+    """
+    frames = system.frames or (np.eye(3),)
+    any_angle = 1.0  # rad; an angle that is no fraction of a turn stands for all angles
+    axes = [frame[:, k] for frame in frames for k in (2, 0, 1)]
+    continuous = [axis for axis in axes if _invariant(system, axis, any_angle)]
+    if continuous:
+        z = continuous[0]
+        if any(abs(z @ axis) < 0.999 for axis in continuous):
+            return Symmetry("point", np.eye(3))
+        return Symmetry("axial", _frame_about(z))
+    best: Symmetry | None = None
+    for frame in frames:
+        twofold = [_invariant(system, frame[:, k], np.pi) for k in range(3)]
+        if all(twofold):
+            return Symmetry("octant", frame)
+        if any(twofold) and best is None:
+            k = twofold.index(True)
+            best = Symmetry("quarter", frame[:, [(k + 1) % 3, (k + 2) % 3, k]])
+    return best or Symmetry("half", frames[-1])
+
+
+def _frame_about(z: Array) -> Array:
+    x = np.eye(3)[np.argmin(np.abs(z))]
+    x = x - (x @ z) * z
+    x /= np.linalg.norm(x)
+    return np.column_stack([x, np.cross(z, x), z])
+
+
+def _phi_basis(kind: str, harmonics: int, phi: Array) -> Array:
+    """Return the azimuthal basis, shape (len(phi), count), for `harmonics` as in `Rings`."""
+    if kind == "axial":
+        return np.ones((len(phi), 1))
+    if kind == "octant":
+        return np.cos(2 * np.outer(phi, np.arange(harmonics + 1)))
+    unit, top = (2, harmonics) if kind == "quarter" else (1, 2 * harmonics)
+    m = np.arange(top + 1)
+    angle = unit * np.outer(phi, m)
+    return np.concatenate([np.cos(angle), np.sin(angle[:, 1:-1])], axis=1)
+
+
+def _odd_harmonics(kind: str, harmonics: int) -> NDArray[np.bool_]:
+    """Which columns of `_phi_basis` have odd m, hence odd parity in theta."""
+    if kind != "half":
+        return np.zeros(_phi_basis(kind, harmonics, np.zeros(1)).shape[1], dtype=bool)
+    m = np.concatenate([np.arange(2 * harmonics + 1), np.arange(1, 2 * harmonics)])
+    return m % 2 == 1
+
+
+def _ring_azimuths(kind: str, intervals: int, equator: bool) -> Array:
+    if kind == "axial" or intervals == 0:
+        return np.zeros(1)
+    if kind == "octant":
+        return 0.5 * np.pi * np.arange(intervals + 1) / intervals
+    if kind == "quarter":
+        return np.pi * np.arange(2 * intervals) / (2 * intervals)
+    count = 2 * intervals if equator else 4 * intervals
+    return 2 * np.pi * np.arange(count) / (4 * intervals)
+
+
+def _ring_analysis(kind: str, harmonics: int, intervals: int, equator: bool) -> Array:
+    """Return the matrix from values on one ring to its harmonic amplitudes."""
+    phi = _ring_azimuths(kind, intervals, equator)
+    full = _phi_basis(kind, harmonics, phi)
+    if kind == "axial":
+        return np.ones((1, 1))
+    if intervals == 0:
+        used = np.zeros(1, dtype=int)
+    elif kind == "octant":
+        used = np.arange(intervals + 1)
+    else:
+        top, own = (harmonics, intervals) if kind == "quarter" else (2 * harmonics, 2 * intervals)
+        cosines = np.arange(own + 1)
+        sines = top + np.arange(1, own)
+        if equator and kind == "half":  # opposite points of the equator are the same direction
+            cosines, sines = cosines[::2], top + np.arange(2, own, 2)
+        used = np.concatenate([cosines, sines])
+    out = np.zeros((full.shape[1], len(phi)))
+    out[used] = np.linalg.inv(full[:, used])
+    return out
+
+
+@lru_cache(maxsize=256)
+def _theta_matrices(rings: int, theta: tuple[float, ...] | int) -> tuple[Array, Array]:
+    """Return the even and the odd continuation in theta, each of shape (len(theta), rings + 1).
+
+    `theta` is a tuple of angles, or the number of intervals of an even mesh over 0 to pi/2.
+    """
+    angles = np.linspace(0, 0.5 * np.pi, theta + 1) if isinstance(theta, int) else np.array(theta)
+    knots = 0.5 * np.pi * np.arange(rings + 1) / rings
+    k = np.arange(rings + 1)
+    even = np.cos(2 * np.outer(angles, k)) @ np.linalg.inv(np.cos(2 * np.outer(knots, k)))
+    odd = np.zeros_like(even)
+    inner = k[1:-1]
+    if len(inner):
+        odd[:, 1:-1] = np.sin(2 * np.outer(angles, inner)) @ np.linalg.inv(np.sin(2 * np.outer(knots[1:-1], inner)))
+    return even, odd
+
+
+@dataclass(frozen=True)
+class Mesh:
+    """A product mesh to sum over: even in theta (0 to pi/2) and in phi, with quadrature weights.
+
+    Attributes
+    ----------
+    kind : str
+        Domain.
+    thetas, phis : int
+        Numbers of intervals.
+    """
+
+    kind: str
+    thetas: int
+    phis: int
+
+    def theta_weights(self) -> Array:
+        """Return Clenshaw-Curtis weights for the average over cos(theta), shape (thetas + 1,)."""
+        return _clenshaw_curtis(self.thetas)
+
+    def phi(self) -> Array:
+        """Return the azimuths, shape (n,): closed for an octant, periodic otherwise."""
+        if self.kind == "axial":
+            return np.zeros(1)
+        if self.kind == "octant":
+            return np.linspace(0, 0.5 * np.pi, self.phis + 1)
+        span = np.pi if self.kind == "quarter" else 2 * np.pi
+        return span * np.arange(self.phis) / self.phis
+
+    def phi_weights(self) -> Array:
+        """Return the weights of the azimuths, summing to 1."""
+        if self.kind == "axial":
+            return np.ones(1)
+        if self.kind == "octant":
+            w = np.full(self.phis + 1, 1.0 / self.phis)
+            w[[0, -1]] *= 0.5
+            return w
+        return np.full(self.phis, 1.0 / self.phis)
+
+    def weights(self) -> Array:
+        """Return the weights of all points, shape (thetas + 1, n), summing to 1."""
+        return _mesh_weights(self)
+
+
+@lru_cache(maxsize=64)
+def _mesh_weights(mesh: Mesh) -> Array:
+    return np.outer(mesh.theta_weights(), mesh.phi_weights())
+
+
+@lru_cache(maxsize=64)
+def _clenshaw_curtis(intervals: int) -> Array:
+    """Return weights on theta = 0 ... pi/2 of functions even about the equator; they sum to 1.
+
+    C. W. Clenshaw, A. R. Curtis, Numer. Math. 2, 197 (1960), folded at the equator.
+    """
+    n = 2 * intervals
+    k = np.arange(intervals + 1)
+    amplitude = -2.0 / (4.0 * k**2 - 1)
+    amplitude[0] = 1.0
+    amplitude[-1] *= 0.5
+    series = np.zeros(n)
+    series[: intervals + 1] = amplitude
+    w = np.fft.fft(series).real[: intervals + 1] * 2 / n
+    w[0] *= 0.5
+    full = w.copy()
+    full[:-1] *= 2
+    return full / full.sum()
+
+
+@dataclass(frozen=True)
+class Rings:
+    """Knots on rings theta_i = (pi/2) i/rings with min(i, harmonics) azimuth intervals a right angle.
+
+    Attributes
+    ----------
+    kind : str
+        Domain.
+    rings : int
+        Even, so that every second ring is a coarser set of the same knots.
+    harmonics : int
+        Largest number of azimuth intervals; even, or at least `rings`.
+    """
+
+    kind: str
+    rings: int
+    harmonics: int
+
+    def _intervals(self, ring: int) -> int:
+        return min(ring, self.harmonics)
+
+    def angles(self) -> tuple[Array, Array]:
+        """Return (theta, phi) of all knots, each of shape (n,), in the domain's frame."""
+        return _knot_angles(self)
+
+    def directions(self, axes: Array) -> Array:
+        """Return the knots as unit vectors in molecular axes, shape (n, 3)."""
+        theta, phi = self.angles()
+        s = np.sin(theta)
+        return np.column_stack([s * np.cos(phi), s * np.sin(phi), np.cos(theta)]) @ axes.T
+
+    def halved(self) -> Rings:
+        """Return the coarser set of which every knot is a knot of this one."""
+        return Rings(self.kind, self.rings // 2, max(1, min(self.harmonics, self.rings) // 2))
+
+    def halved_knots(self) -> NDArray[np.intp]:
+        """Return the positions of the coarser set's knots among this one's."""
+        return _positions(self.halved(), self)
+
+    def within(self, finer: Rings) -> NDArray[np.intp]:
+        """Return the position of each of this set's knots among those of a finer set, -1 for none."""
+        return _positions(self, finer)
+
+    def knot_weights(self) -> Array:
+        """Return the solid angle that each knot stands for, shape (n,), summing to 1."""
+        theta, _ = self.angles()
+        ring = np.rint(theta * (2 * self.rings / np.pi)).astype(int)
+        count = np.bincount(ring)
+        w = _clenshaw_curtis(self.rings)[ring] / count[ring]
+        if self.kind == "octant":
+            _, phi = self.angles()
+            edge = ((phi < 1e-9) | (phi > 0.5 * np.pi - 1e-9)) & (ring > 0)
+            interval = np.maximum(count - 1, 1)
+            w = _clenshaw_curtis(self.rings)[ring] / interval[ring] * np.where(edge, 0.5, 1.0)
+        return w
+
+    def to_mesh(self, values: Array, mesh: Mesh) -> Array:
+        """Continue values at the knots, shape (q, n), to a mesh: (q, thetas + 1, azimuths)."""
+        even, odd = _theta_matrices(self.rings, mesh.thetas)
+        basis, has_odd = _mesh_basis(self, mesh)
+        amplitude = (values @ _analysis(self).T).reshape(len(values), self.rings + 1, -1)
+        if has_odd is not None:
+            columns = np.where(has_odd[None, :, None], (odd @ amplitude).transpose(0, 2, 1), 0)
+            columns += np.where(has_odd[None, :, None], 0, (even @ amplitude).transpose(0, 2, 1))
+            return columns.transpose(0, 2, 1) @ basis.T
+        return even @ amplitude @ basis.T
+
+    def to_finer(self, values: Array, finer: Rings) -> Array:
+        """Continue values at the knots, shape (q, n), to the knots of another set, (q, n')."""
+        return values @ _knots_to_knots(self, finer).T
+
+
+@lru_cache(maxsize=128)
+def _knot_angles(rings: Rings) -> tuple[Array, Array]:
+    theta, phi = [], []
+    for i in range(rings.rings + 1):
+        azimuths = _ring_azimuths(rings.kind, rings._intervals(i), i == rings.rings)
+        phi.append(azimuths)
+        theta.append(np.full(len(azimuths), 0.5 * np.pi * i / rings.rings))
+    return np.concatenate(theta), np.concatenate(phi)
+
+
+@lru_cache(maxsize=128)
+def _positions(coarse: Rings, fine: Rings) -> NDArray[np.intp]:
+    keys = {(round(t * 1e9), round(p * 1e9)): i for i, (t, p) in enumerate(zip(*fine.angles(), strict=True))}
+    return np.array([keys.get((round(t * 1e9), round(p * 1e9)), -1) for t, p in zip(*coarse.angles(), strict=True)])
+
+
+@lru_cache(maxsize=128)
+def _analysis(rings: Rings) -> Array:
+    """Return the matrix, shape ((rings + 1) * count, n), from knot values to ring harmonics."""
+    blocks = [
+        _ring_analysis(rings.kind, rings.harmonics, rings._intervals(i), i == rings.rings)
+        for i in range(rings.rings + 1)
+    ]
+    count = blocks[0].shape[0]
+    out = np.zeros(((rings.rings + 1) * count, sum(b.shape[1] for b in blocks)))
+    column = 0
+    for i, block in enumerate(blocks):
+        out[i * count : (i + 1) * count, column : column + block.shape[1]] = block
+        column += block.shape[1]
+    return out
+
+
+@lru_cache(maxsize=128)
+def _mesh_basis(rings: Rings, mesh: Mesh) -> tuple[Array, NDArray[np.bool_] | None]:
+    odd = _odd_harmonics(rings.kind, rings.harmonics)
+    return _phi_basis(rings.kind, rings.harmonics, mesh.phi()), (odd if odd.any() else None)
+
+
+@lru_cache(maxsize=64)
+def _knots_to_knots(coarse: Rings, fine: Rings) -> Array:
+    theta, phi = fine.angles()
+    unique, inverse = np.unique(np.round(theta, 12), return_inverse=True)
+    even, odd = (m[inverse] for m in _theta_matrices(coarse.rings, tuple(unique)))
+    basis = _phi_basis(coarse.kind, coarse.harmonics, phi)
+    is_odd = _odd_harmonics(coarse.kind, coarse.harmonics)
+    along = np.where(is_odd[None, None, :], odd[:, :, None], even[:, :, None]) * basis[:, None, :]
+    return along.reshape(len(theta), -1) @ _analysis(coarse)
