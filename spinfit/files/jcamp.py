@@ -26,7 +26,8 @@ from spinfit.files.raw import MAX_POINTS, Note, RawTrace, decode, quote
 _SQZ = {c: str(i) for i, c in enumerate("@ABCDEFGHI")} | {c: f"-{i}" for i, c in enumerate("abcdefghi", 1)}
 _DIF = {c: str(i) for i, c in enumerate("%JKLMNOPQR")} | {c: f"-{i}" for i, c in enumerate("jklmnopqr", 1)}
 _DUP = {c: str(i) for i, c in enumerate("STUVWXYZs", 1)}
-_AFFN = r"[+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d{1,3}(?!\d))?"
+# "1204E5" is 1204 and the squeezed 55: an exponent has a sign, or its mantissa a point.
+_AFFN = r"[+-]?(?:(?:\d+\.\d*|\.\d+)(?:[eE][+-]?\d{1,3}(?!\d))?|\d+(?:[eE][+-]\d{1,3}(?!\d))?)"
 _AFFN_LINE = re.compile(rf"\s*{_AFFN}(?:(?:\s+|\s*[,;]\s*|(?=[+-])){_AFFN})*[\s,;]*")
 _FIRST = re.compile(r"\s*([+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]\d{1,3}(?!\d))?)")
 _TOKEN = re.compile(r"\s*(?:([@A-Ia-i])|([%J-Rj-r])|([S-Zs])|([+-])|(?=[\d.])|(\?))((?:\d*\.)?\d*)")
@@ -286,6 +287,8 @@ def read_jcamp(content: bytes, file: str, sha256: str = "") -> RawTrace:
     """
     notes: list[Note] = []
     block = _choose(_blocks(decode(content, file)), notes, file)
+    if re.search(r"\d,\d", block.labels.get("FIRSTX", ("", 0))[0]):  # written with decimal commas
+        block.lines = [(number, line.replace(",", ".")) for number, line in block.lines]
     yfactor = _number(block, "YFACTOR", file) or 1.0
     if block.form.startswith("(X++(Y..Y))"):
         table = _ordinates(block, notes, file)
