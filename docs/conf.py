@@ -1,11 +1,11 @@
 """Sphinx configuration: ``python -m sphinx -W docs OUT`` with the extra ``docs`` installed."""
 
-from importlib.metadata import version
+from importlib import metadata
 
 project = "spinfit"
 author = "The spinfit developers"
 copyright = "2026, The spinfit developers"
-release = version("spinfit")
+release = metadata.version("spinfit")
 
 extensions = ["myst_parser"]
 source_suffix = {".md": "markdown"}
