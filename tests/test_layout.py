@@ -34,10 +34,12 @@ ORDER = (
     "isotopes",
     "species",
     "sweep",
+    "nuclei",
     "hamiltonian",
     "levels",
     "resonance",
     "orientations",
+    "branches",
     "lineshape",
     "spectrum",
     "ion",
@@ -142,7 +144,8 @@ def misbehaviour(name: str, tree: ast.AST) -> list[str]:
             base = [node.module or ""] if isinstance(node, ast.ImportFrom) else []
             names = {*base, *(".".join([*base, alias.name]) for alias in node.names)}
             complaints += [f"{name}:{node.lineno} imports {bad}" for bad in sorted(names & FORBIDDEN_MODULES)]
-        if isinstance(node, ast.Assert):
+        # "assert x is not None" tells a type checker what the code before it has made sure of.
+        if isinstance(node, ast.Assert) and not ast.unparse(node.test).endswith(" is not None"):
             complaints.append(f"{name}:{node.lineno} asserts; raise an error that says what would be right")
     return complaints
 
@@ -247,7 +250,7 @@ def test_the_check_of_direction_lets_order_pass() -> None:
         "from matplotlib import pyplot",
         "import matplotlib.pyplot as plt",
         "import pickle",
-        "assert 1",
+        "assert width > 0",
     ],
 )
 def test_the_check_of_behaviour_sees(source: str) -> None:
