@@ -232,7 +232,7 @@ def _clenshaw_curtis(intervals: int) -> Array:
 
 @dataclass(frozen=True)
 class Rings:
-    """Knots on rings theta_i = (pi/2) i/rings with min(i, harmonics) azimuth intervals a right angle.
+    """Knots on rings theta_i = (pi/2) i/rings with min(i + extra, harmonics) azimuth intervals a right angle.
 
     Attributes
     ----------
@@ -241,15 +241,19 @@ class Rings:
     rings : int
         Even, so that every second ring is a coarser set of the same knots.
     harmonics : int
-        Largest number of azimuth intervals; even, or at least `rings`.
+        Largest number of azimuth intervals; even, or at least `rings` + `extra`.
+    extra : int
+        Even.  Small rings need a few azimuths more than their length asks for: the lowest
+        harmonics fall only as a low power of theta towards the pole.
     """
 
     kind: str
     rings: int
     harmonics: int
+    extra: int = 0
 
     def _intervals(self, ring: int) -> int:
-        return min(ring, self.harmonics)
+        return min(ring + self.extra, self.harmonics) if ring else 0
 
     def angles(self) -> tuple[Array, Array]:
         """Return (theta, phi) of all knots, each of shape (n,), in the domain's frame."""
@@ -263,7 +267,8 @@ class Rings:
 
     def halved(self) -> Rings:
         """Return the coarser set of which every knot is a knot of this one."""
-        return Rings(self.kind, self.rings // 2, max(1, min(self.harmonics, self.rings) // 2))
+        top = min(self.harmonics, self.rings + self.extra)
+        return Rings(self.kind, self.rings // 2, max(1, top // 2), self.extra // 2)
 
     def halved_knots(self) -> NDArray[np.intp]:
         """Return the positions of the coarser set's knots among this one's."""

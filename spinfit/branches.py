@@ -1,0 +1,285 @@
+"""Resonances over the whole sphere from few diagonalisations.
+
+Levels, slopes and intensities are computed on knots (a few directions) times nodes (a few fields
+shared by all directions).  Along the field every level difference is a chain of quintics; over the
+sphere everything is continued from the knots.  `FieldNodes` grows the nodes, `knot_data` holds the
+numbers, `trace_branches` follows the pairs that have exactly one resonance everywhere.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from spinfit import hermite
+from spinfit.hamiltonian import System
+from spinfit.levels import population_difference, solve
+from spinfit.resonance import can_reach, level_pairs, midpoint_error
+
+Array = NDArray[np.float64]
+Pairs = tuple[NDArray[np.intp], NDArray[np.intp]]
+
+
+@dataclass(frozen=True, eq=False)
+class Request:
+    """What is asked of a powder average.
+
+    Attributes
+    ----------
+    frequency : float
+        MHz.
+    low, high : float
+        Fields between which every resonance counts, mT.
+    spacing : float
+        mT that neighbouring directions of the final sum may lie apart.
+    scale : float
+        Length over which the line is smooth, mT.
+    tolerance : float
+        Of the spectrum, relative to its largest value.
+    microwave : str
+        "perpendicular" or "parallel".
+    temperature : float or None
+        K.
+    """
+
+    frequency: float
+    low: float
+    high: float
+    spacing: float
+    scale: float
+    tolerance: float
+    microwave: str = "perpendicular"
+    temperature: float | None = None
+
+
+@dataclass(frozen=True, eq=False)
+class KnotData:
+    """Numbers on nodes x knots.
+
+    Attributes
+    ----------
+    fields : ndarray, shape (k,)
+        Nodes, increasing, mT.
+    leaves : ndarray of int, shape (l, 3)
+        Node indices of first, middle and last node of each leaf.
+    pairs : (lower, upper), each shape (p,)
+        Pairs of levels that matter.
+    gap, slope : ndarray, shape (p, k, n)
+        E_upper - E_lower - h nu, MHz; its slope, MHz/mT.
+    strength : ndarray, shape (p, k, n)
+        Intensity times population difference.
+    """
+
+    fields: Array
+    leaves: NDArray[np.intp]
+    pairs: Pairs
+    gap: Array
+    slope: Array
+    strength: Array
+
+
+class FieldNodes:
+    """Solutions at shared fields for a growing set of directions."""
+
+    def __init__(self, system: System, request: Request, directions: Array) -> None:
+        self.system, self.request, self.directions = system, request, directions
+        self.lower, self.upper = level_pairs(len(system.h0))
+        self.solved: dict[float, tuple[Array, Array, Array]] = {}
+        self.leaves: list[tuple[float, float, float]] = []
+        self.count = 0
+
+    def _solve(self, directions: Array, fields: list[float]) -> list[tuple[Array, Array, Array]]:
+        n = len(directions)
+        got = solve(
+            self.system,
+            np.tile(directions, (len(fields), 1)),
+            np.repeat(fields, n),
+            microwave=self.request.microwave,
+        )
+        self.count += n * len(fields)
+        shape = (len(fields), n)
+        return list(
+            zip(
+                got.energy.reshape(*shape, -1),
+                got.slope.reshape(*shape, -1),
+                got.intensity.reshape(*shape, *got.intensity.shape[1:]),
+                strict=True,
+            )
+        )
+
+    def _ensure(self, fields: list[float]) -> None:
+        missing = [b for b in fields if b not in self.solved]
+        if missing:
+            self.solved.update(zip(missing, self._solve(self.directions, missing), strict=True))
+
+    def _differences(self, field: float, pairs: Pairs) -> tuple[Array, Array, Array]:
+        """Return gap, slope and strength at one node, each of shape (n, p)."""
+        energy, slope, intensity = self.solved[field]
+        lower, upper = pairs
+        gap = energy[:, upper] - energy[:, lower] - self.request.frequency
+        change = population_difference(energy, lower, upper, self.request.temperature)
+        return gap, slope[:, upper] - slope[:, lower], intensity[:, lower, upper] * change
+
+    def choose(self, accuracy: float, deepest: int = 9) -> None:
+        """Halve the field range until quintics follow every pair that can be resonant.
+
+        Parameters
+        ----------
+        accuracy : float
+            MHz by which a cubic may miss the midpoint of its segment.
+        deepest : int
+            On symmetry axes levels truly cross: there halving ends at this depth.
+        """
+        low, high = self.request.low, self.request.high
+        pieces = 1 if len(self.lower) == 1 else 2
+        edges = [float(e) for e in np.linspace(low, high, pieces + 1)]
+        pending = list(zip(edges[:-1], edges[1:], strict=True))
+        for depth in range(deepest + 1):
+            middles = [0.5 * (a + b) for a, b in pending]
+            self._ensure(edges + middles if depth == 0 else middles)
+            pending = self._judge(pending, accuracy, depth == deepest, depth >= 3)
+            if not pending:
+                break
+        self.leaves.sort()
+
+    def _judge(
+        self, pending: list[tuple[float, float]], accuracy: float, last: bool, lenient: bool
+    ) -> list[tuple[float, float]]:
+        """Accept, drop or halve each pending segment; return the halves."""
+        pairs = (self.lower, self.upper)
+        halves = []
+        for a, b in pending:
+            m, h = 0.5 * (a + b), b - a
+            (f_a, g_a, s_a), (f_m, g_m, s_m), (f_b, g_b, s_b) = (self._differences(x, pairs) for x in (a, m, b))
+            strength = np.maximum(np.maximum(s_a, s_m), s_b)
+            reach = can_reach(f_a, f_b, g_a * h, g_b * h) | ((f_m >= 0) != (f_a >= 0))
+            reach &= np.abs(strength) > 1e-3 * self.request.tolerance * np.abs(strength).max()
+            if not reach.any():
+                continue
+            error = np.where(reach, midpoint_error(f_a, f_m, f_b, g_a * h, g_m * h, g_b * h), 0.0).max(axis=1)
+            bad = error > accuracy
+            # deep down only knots on symmetry axes are left, where a true crossing has no width
+            if not bad.any() or last or (lenient and bad.mean() < 0.02):
+                self.leaves.append((a, m, b))
+            else:
+                halves += [(a, m), (m, b)]
+        return halves
+
+    def extend(self, directions: Array, known: NDArray[np.intp]) -> None:
+        """Go over to a finer set of directions.
+
+        Parameters
+        ----------
+        directions : ndarray, shape (n', 3)
+        known : ndarray of int, shape (n,)
+            Position of each present direction in the new set, -1 for none.
+        """
+        fields = sorted({x for leaf in self.leaves for x in leaf})
+        kept = known >= 0
+        new = np.ones(len(directions), dtype=bool)
+        new[known[kept]] = False
+        fresh = self._solve(directions[new], fields)
+        merged = {}
+        for field, columns in zip(fields, fresh, strict=True):
+            arrays = []
+            for old, added in zip(self.solved[field], columns, strict=True):
+                array = np.empty((len(directions), *added.shape[1:]))
+                array[new], array[known[kept]] = added, old[kept]
+                arrays.append(array)
+            merged[field] = tuple(arrays)
+        self.solved, self.directions = merged, directions
+
+    def data(self) -> KnotData:
+        """Return gap, slope and strength of every pair that can be resonant and is strong enough."""
+        fields = sorted({x for leaf in self.leaves for x in leaf})
+        index = {x: i for i, x in enumerate(fields)}
+        leaves = np.array([[index[x] for x in leaf] for leaf in self.leaves], dtype=np.intp).reshape(-1, 3)
+        pairs = self._relevant(fields)
+        columns = [self._differences(x, pairs) for x in fields]
+        if not columns:
+            empty = np.empty((0, 0, len(self.directions)))
+            return KnotData(np.empty(0), leaves, pairs, empty, empty, empty)
+        stacked = [np.stack(c).transpose(2, 0, 1) for c in zip(*columns, strict=True)]
+        gap, slope, strength = (np.ascontiguousarray(c) for c in stacked)
+        return KnotData(np.array(fields), leaves, pairs, gap, slope, strength)
+
+    def _relevant(self, fields: list[float]) -> Pairs:
+        every = (self.lower, self.upper)
+        low = high = top = None
+        for x in fields:
+            gap, slope, strength = self._differences(x, every)
+            size = np.abs(strength).max(axis=0)
+            lo, hi = gap.min(axis=0), gap.max(axis=0)
+            low = lo if low is None else np.minimum(low, lo)
+            high = hi if high is None else np.maximum(high, hi)
+            top = size if top is None else np.maximum(top, size)
+        if low is None:
+            return self.lower[:0], self.upper[:0]
+        margin = 0.05 * (high - low)
+        keep = (low - margin <= 0) & (high + margin >= 0)
+        if keep.any():
+            keep &= top > 1e-3 * self.request.tolerance * top[keep].max()
+        return self.lower[keep], self.upper[keep]
+
+
+@dataclass(frozen=True, eq=False)
+class Branches:
+    """Pairs with exactly one resonance at every knot; arrays of shape (p, n)."""
+
+    pair: NDArray[np.intp]
+    field: Array
+    weight: Array
+    slope: Array
+
+
+def count_roots(data: KnotData) -> NDArray[np.intp]:
+    """Return the number of sign changes of the gap along the nodes, shape (p, n).
+
+    Leaves that do not touch (nothing can be resonant between them) are separate chains.
+    """
+    p, _, n = data.gap.shape
+    total = np.zeros((p, n), dtype=np.intp)
+    positive = data.gap >= 0
+    for first, middle, last in data.leaves:
+        total += positive[:, first] != positive[:, middle]
+        total += positive[:, middle] != positive[:, last]
+    return total
+
+
+def trace_branches(data: KnotData, chosen: NDArray[np.intp]) -> Branches:
+    """Solve the one root of each chosen pair at each knot.
+
+    Parameters
+    ----------
+    chosen : ndarray of int, shape (q,)
+        Rows of `data` with exactly one sign change at every knot.
+    """
+    n = data.gap.shape[2]
+    gap = data.gap[chosen]
+    field, weight, slope = (np.zeros((len(chosen), n)) for _ in range(3))
+    positive = gap >= 0
+    for leaf in data.leaves:
+        first, middle, last = leaf
+        early = positive[:, first] != positive[:, middle]
+        here = early | (positive[:, middle] != positive[:, last])
+        if not here.any():
+            continue
+        row, knot = np.nonzero(here)
+        half = 0.5 * (data.fields[last] - data.fields[first])
+        f = gap[row[None], leaf[:, None], knot[None]]
+        g = data.slope[chosen[row][None], leaf[:, None], knot[None]]
+        s = data.strength[chosen[row][None], leaf[:, None], knot[None]]
+        c = hermite.quintic(f, g * half)
+        left = early[row, knot]
+        t = hermite.refine(c, np.where(left, -1.0, 0.0), np.where(left, 0.0, 1.0), 4)
+        field[row, knot] = data.fields[middle] + half * t
+        slope[row, knot] = hermite.slope(c, t) / half
+        weight[row, knot] = parabola(s, t) / np.maximum(np.abs(slope[row, knot]), 1e-300)
+    return Branches(chosen, field, weight, slope)
+
+
+def parabola(s: Array, t: Array) -> Array:
+    """Return the parabola through values s, shape (3, ...), at t = -1, 0, 1, evaluated at t."""
+    return s[1] + t * (0.5 * (s[2] - s[0]) + t * (0.5 * (s[2] + s[0]) - s[1]))

@@ -1,0 +1,288 @@
+"""The powder average: from knots on the sphere to histograms of resonance fields.
+
+Knots are refined until continuing from every second ring already predicts the rest to the promised
+tolerance.  Pairs of levels with one resonance in every direction are continued as fields and
+weights (as B^-2 and W B^-3, which are exact for a pure Zeeman doublet); pairs whose resonances
+appear, vanish or loop are continued as level differences and solved on the mesh.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+from spinfit import hermite
+from spinfit.branches import (
+    Branches,
+    FieldNodes,
+    KnotData,
+    Request,
+    count_roots,
+    parabola,
+    trace_branches,
+)
+from spinfit.hamiltonian import System
+from spinfit.lineshape import FieldGrid
+from spinfit.orientations import Mesh, Rings, Symmetry, symmetry_of
+from spinfit.resonance import can_reach, find
+
+Array = NDArray[np.float64]
+
+LADDER = (4, 8, 16, 24, 32, 48, 64, 96)
+"""Numbers of rings that are tried in turn."""
+LARGEST_MESH = 60_000
+"""Points of a two-dimensional mesh."""
+LARGEST_LINE = 200_000
+"""Points of a one-dimensional mesh."""
+
+
+@dataclass
+class Report:
+    """What the powder average used."""
+
+    symmetry: str
+    rings: int = 0
+    directions: int = 0
+    diagonalisations: int = 0
+    pairs: int = 0
+    looping: int = 0
+    mesh_points: int = 0
+    estimated_error: float = 0.0
+    notes: list[str] = field(default_factory=list)
+
+
+def powder(system: System, request: Request, grid: FieldGrid) -> tuple[dict[int, Array], Report]:
+    """Return histograms of resonance fields averaged over all directions.
+
+    Parameters
+    ----------
+    system : System
+    request : Request
+    grid : FieldGrid
+        Where resonances are deposited.
+
+    Returns
+    -------
+    histograms : dict of int -> ndarray, shape (grid.count,)
+        See `FieldGrid.coefficients`.
+    report : Report
+    """
+    symmetry = symmetry_of(system)
+    report = Report(symmetry.kind)
+    if symmetry.kind == "point":
+        return _one_direction(system, request, grid, report)
+    nodes, rings, data, smooth = _refine(system, symmetry, request, report)
+    histogram = np.zeros(grid.count)
+    counts = count_roots(data)
+    single = _single(data, counts) & smooth
+    if single.any():
+        _sum_branches(rings, trace_branches(data, np.flatnonzero(single)), request, grid, histogram, report)
+    other = ~single & (counts.any(axis=1) | _touches(data))
+    if other.any():
+        _sum_loops(rings, data, np.flatnonzero(other), request, grid, histogram, report)
+    report.directions, report.diagonalisations = len(nodes.directions), nodes.count
+    report.pairs, report.looping = int(single.sum()), int(other.sum())
+    return {0: histogram}, report
+
+
+def _one_direction(
+    system: System, request: Request, grid: FieldGrid, report: Report
+) -> tuple[dict[int, Array], Report]:
+    got = find(
+        system,
+        np.array([[0.0, 0.0, 1.0]]),
+        request.frequency,
+        (request.low, request.high),
+        microwave=request.microwave,
+        temperature=request.temperature,
+    )
+    report.directions, report.diagonalisations, report.pairs = 1, 1, len(got.field)
+    return {0: _deposit(grid, got.field, got.weight, request)}, report
+
+
+def _deposit(grid: FieldGrid, fields: Array, weights: Array, request: Request) -> Array:
+    out = grid.deposit(fields, weights)
+    if grid.start < 0:  # the spectrum is even in B
+        out += grid.deposit(-fields, weights)
+    return out
+
+
+def _rings(kind: str, size: int) -> Rings:
+    extra = 0 if size == 4 else 2 * (size // 8)
+    return Rings(kind, size, size + extra, extra)
+
+
+def _single(data: KnotData, counts: NDArray[np.intp]) -> NDArray[np.bool_]:
+    """Which pairs have one well-sloped resonance at every knot."""
+    return (counts == 1).all(axis=1) if counts.size else np.zeros(len(counts), dtype=bool)
+
+
+def _touches(data: KnotData) -> NDArray[np.bool_]:
+    """Which pairs could be resonant between nodes though they change sign at none."""
+    out = np.zeros(len(data.gap), dtype=bool)
+    for first, middle, last in data.leaves:
+        for a, b in ((first, middle), (middle, last)):
+            h = data.fields[b] - data.fields[a]
+            reach = can_reach(data.gap[:, a], data.gap[:, b], data.slope[:, a] * h, data.slope[:, b] * h)
+            out |= reach.any(axis=1)
+    return out
+
+
+def _refine(
+    system: System, symmetry: Symmetry, request: Request, report: Report
+) -> tuple[FieldNodes, Rings, KnotData, NDArray[np.bool_]]:
+    """Refine the knots until the halved set predicts the full one well enough."""
+    kind = symmetry.kind
+    doublet = len(system.h0) == 2
+    steps = LADDER[0 if doublet else 1 :]
+    nodes: FieldNodes | None = None
+    previous: Rings | None = None
+    for size in steps:
+        rings = _rings(kind, size)
+        directions = rings.directions(symmetry.axes)
+        if nodes is None:
+            nodes = FieldNodes(system, request, directions)
+            nodes.choose(accuracy=_node_accuracy(request))
+        else:
+            nodes.extend(directions, previous.within(rings))
+        previous = rings
+        data = nodes.data()
+        error = _knot_error(rings, data, request)
+        report.rings, report.estimated_error = size, error
+        if error <= request.tolerance or not np.isfinite(error):
+            break
+    return nodes, rings, data, np.ones(len(data.gap), dtype=bool)
+
+
+def _node_accuracy(request: Request) -> float:
+    """Return the MHz that a cubic may miss by; the quintic used is some fifty times better."""
+    return 28.0 * request.scale * request.tolerance * 10
+
+
+GAIN = 0.1
+"""What halving the spacing of the knots is trusted to gain at least."""
+
+
+def _knot_error(rings: Rings, data: KnotData, request: Request) -> float:
+    """Estimate the spectrum's relative error from what every second ring predicts."""
+    single = _single(data, count_roots(data))
+    if not single.any():
+        return 0.0
+    branches = trace_branches(data, np.flatnonzero(single))
+    coarse, kept = rings.halved(), rings.halved_knots()
+    x, y = _continued(branches.field, branches.weight)
+    guess_x, guess_y = coarse.to_finer(x[:, kept], rings), coarse.to_finer(y[:, kept], rings)
+    field, weight = _restored(guess_x, guess_y, _squared(branches.field))
+    share = branches.weight * rings.knot_weights()
+    total = np.abs(share).sum()
+    shift = np.abs(field - branches.field) / request.scale
+    change = np.abs(weight - branches.weight)
+    error = (np.abs(share) * shift).sum() / total + (change * rings.knot_weights()).sum() / total
+    return GAIN * float(error)
+
+
+def _squared(fields: Array) -> NDArray[np.bool_]:
+    """Which branches (rows) are far enough from zero field to be continued as B^-2, shape (p, 1)."""
+    return fields.min(axis=1, keepdims=True) > 0.1 * fields.max(axis=1, keepdims=True)
+
+
+def _continued(fields: Array, weights: Array) -> tuple[Array, Array]:
+    inverse = _squared(fields)
+    safe = np.where(inverse, fields, 1.0)
+    return np.where(inverse, safe**-2, fields), np.where(inverse, weights * safe**-3, weights)
+
+
+def _restored(x: Array, y: Array, inverse: NDArray[np.bool_]) -> tuple[Array, Array]:
+    safe = np.where(inverse, np.maximum(x, 1e-30), 1.0)
+    fields = np.where(inverse, safe**-0.5, x)
+    return fields, np.where(inverse, y * np.where(inverse, fields, 1.0) ** 3, y)
+
+
+def _ladder_size(wanted: float) -> int:
+    """Round a mesh size up to a short list of sizes, so that matrices and weights are shared."""
+    wanted = max(8.0, wanted)
+    return 2 * math.ceil(0.5 * 2 ** (math.ceil(4 * math.log2(wanted)) / 4))
+
+
+def _mesh_for(rings: Rings, fields: Array, request: Request) -> list[tuple[int, int]]:
+    """Return for each branch the mesh on which neighbours lie within the request's spacing."""
+    probe = Mesh(rings.kind, 2 * rings.rings, _probe_azimuths(rings))
+    values = rings.to_mesh(fields, probe)
+    along_theta = np.abs(np.diff(values, axis=1)).max(axis=(1, 2)) * probe.thetas
+    sizes_theta = np.maximum(along_theta / request.spacing, 2 * rings.rings)
+    if rings.kind == "axial":
+        limit = LARGEST_LINE
+        return [(min(_ladder_size(t), limit), 1) for t in sizes_theta]
+    closed = values if rings.kind == "octant" else np.concatenate([values, values[:, :, :1]], axis=2)
+    along_phi = np.abs(np.diff(closed, axis=2)).max(axis=(1, 2)) * probe.phis
+    sizes_phi = np.maximum(along_phi / request.spacing, _probe_azimuths(rings))
+    out = []
+    for t, p in zip(sizes_theta, sizes_phi, strict=True):
+        if t * p > LARGEST_MESH:
+            shrink = math.sqrt(LARGEST_MESH / (t * p))
+            t, p = max(t * shrink, 2 * rings.rings), max(p * shrink, 16)
+        out.append((_ladder_size(t), _ladder_size(p)))
+    return out
+
+
+def _probe_azimuths(rings: Rings) -> int:
+    return {"axial": 1, "octant": 2, "quarter": 4, "half": 8}[rings.kind] * min(rings.harmonics, 24)
+
+
+def _sum_branches(
+    rings: Rings, branches: Branches, request: Request, grid: FieldGrid, histogram: Array, report: Report
+) -> None:
+    """Add every branch, continued to a mesh fine enough for it."""
+    x, y = _continued(branches.field, branches.weight)
+    inverse = _squared(branches.field)
+    sizes = _mesh_for(rings, branches.field, request)
+    for size in sorted(set(sizes)):
+        rows = [i for i, s in enumerate(sizes) if s == size]
+        mesh = Mesh(rings.kind, *size)
+        weights = mesh.weights()
+        step = max(1, 4_000_000 // weights.size)
+        for start in range(0, len(rows), step):
+            part = rows[start : start + step]
+            both = rings.to_mesh(np.concatenate([x[part], y[part]]), mesh)
+            fields, strength = _restored(both[: len(part)], both[len(part) :], inverse[part][:, :, None])
+            histogram += _deposit(grid, fields, strength * weights, request)
+            report.mesh_points += fields.size
+
+
+def _sum_loops(
+    rings: Rings,
+    data: KnotData,
+    rows: NDArray[np.intp],
+    request: Request,
+    grid: FieldGrid,
+    histogram: Array,
+    report: Report,
+) -> None:
+    """Add pairs whose resonances come and go: solved on the mesh from continued level differences."""
+    size = 200
+    mesh = Mesh(rings.kind, 4000 if rings.kind == "axial" else size, size)
+    weights = mesh.weights().ravel()
+    for row in rows:
+        nodes = np.concatenate([data.gap[row], data.slope[row], data.strength[row]])
+        k = len(data.fields)
+        gap, slope, strength = rings.to_mesh(nodes, mesh).reshape(3, k, -1)
+        for leaf in data.leaves:
+            half = 0.5 * (data.fields[leaf[2]] - data.fields[leaf[0]])
+            f, g = gap[leaf], slope[leaf] * half
+            near = np.zeros(f.shape[1], dtype=bool)
+            for a in (0, 1):
+                near |= can_reach(f[a], f[a + 1], g[a], g[a + 1])
+            at = np.flatnonzero(near)
+            if not len(at):
+                continue
+            c = hermite.quintic(f[:, at], g[:, at])
+            q, low, high = hermite.brackets(c, f[:, at])
+            c, at = c[:, q], at[q]
+            t = hermite.refine(c, low, high)
+            fields = data.fields[leaf[1]] + half * t
+            steep = np.maximum(np.abs(hermite.slope(c, t)) / half, 1e-6)
+            histogram += _deposit(grid, fields, parabola(strength[leaf][:, at], t) / steep * weights[at], request)
+            report.mesh_points += len(at)
