@@ -1,0 +1,127 @@
+"""The fit: from a job to an outcome."""
+
+from __future__ import annotations
+
+import time
+from dataclasses import replace
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from spinfit.errors import InputError
+from spinfit.fitting.data import Job
+from spinfit.fitting.outcome import Note, Outcome
+from spinfit.fitting.residuals import Problem, Progress, View, full_view
+from spinfit.fitting.signals import Simulate
+from spinfit.fitting.solve import Descent, Goal, Interrupted
+from spinfit.fitting.starts import Search
+from spinfit.fitting.summary import outcome_of
+from spinfit.fitting.uncertainty import spread_of
+from spinfit.fitting.warn import check_before, check_lines, notes_after
+from spinfit.spectrum import simulate as _engine
+
+Array = NDArray[np.float64]
+
+# The engine is asked for this part of the job's tolerance, so that its choices do not show as noise.
+_FINER = 0.1
+
+
+def fit(job: Job, *, progress: Progress | None = None, simulate: Simulate = _engine) -> Outcome:
+    """Fit a model to its traces.
+
+    Parameters
+    ----------
+    job : Job
+    progress : callable, optional
+        Called after every evaluation with its number, the best chi-squared so far and the best
+        values by name in the units of the job.
+    simulate : callable, optional
+        The engine, as `spinfit.spectrum.simulate`.
+
+    Returns
+    -------
+    Outcome
+        After Ctrl-C the best so far, with ``quality.finished`` False.
+
+    Raises
+    ------
+    InputError
+        When the job cannot be fitted: no traces, too few points, a species without a line in the
+        window, limits that exclude the start, names the model does not have.
+    """
+    begun = time.perf_counter()
+    if not job.traces:
+        raise InputError("the job has no trace", "add a [[trace]] table", file=job.path or None)
+    try:
+        problem = Problem(job, simulate)
+        view = full_view(job.traces, problem.noises, _FINER * job.tolerance)
+        check_before(problem, view)
+        descent, finished = _search(problem, view, progress)
+    except InputError as error:
+        raise error.at(file=job.path or None) from None
+    return _conclude(problem, view, descent, finished=finished, begun=begun)
+
+
+def _search(problem: Problem, view: View, progress: Progress | None) -> tuple[Descent, bool]:
+    """Run the search; return the best descent and whether it was left to finish."""
+    goal = Goal(evaluations=100 + 20 * len(problem.names))
+    search = Search(problem, view, goal=goal, progress=progress)
+    automatic = problem.job.start == "auto"
+    try:
+        if not automatic:
+            check_lines(problem, problem.evaluate(problem.start, view), view)
+        return search.run(problem.start, automatic=automatic), True
+    except Interrupted as stop:
+        return _best_so_far(problem, view, search.best, None if stop.point is None else stop.point.free), False
+    except KeyboardInterrupt:
+        return _best_so_far(problem, view, search.best, None), False
+
+
+def _best_so_far(problem: Problem, view: View, best: Descent | None, free: Array | None) -> Descent:
+    """Whichever is better: the best finished descent, the broken-off one, or the start."""
+    tried = [problem.evaluate(f, view) for f in (problem.start, free) if f is not None]
+    if best is not None:
+        tried.append(best.point)
+    point = min(tried, key=lambda p: p.chi2)
+    return Descent(point, None, False, "stopped before it was finished; these are the best values so far")
+
+
+def _conclude(problem: Problem, view: View, descent: Descent, *, finished: bool, begun: float) -> Outcome:
+    """Uncertainties, notes and everything else at the end of a search."""
+    at_limit = limits_reached(problem, descent.point.free)
+    spread = None
+    if finished and problem.names:
+        jacobian = problem.jacobian(descent.point, view, central=True)
+        descent = replace(descent, jacobian=jacobian)
+        if np.all(np.isfinite(jacobian)):
+            spread = spread_of(problem, view, descent.point, jacobian, at_limit)
+    notes = [Note(code, f"{trace.name}: {text}") for trace in problem.job.traces for code, text in trace.notes]
+    if not finished:
+        notes.append(Note("unfinished", "The fit was stopped; the values are the best so far and have no uncertainty."))
+        descent = replace(descent, converged=False)
+    notes += notes_after(problem, view, descent, spread, at_limit)
+    notes += [_engine_note(warning) for warning in problem.signals.warnings]
+    return outcome_of(
+        problem,
+        view,
+        descent,
+        spread,
+        at_limit,
+        notes,
+        finished=finished,
+        seconds=time.perf_counter() - begun,
+    )
+
+
+def limits_reached(problem: Problem, free: Array) -> NDArray[np.bool_]:
+    """Which parameters ended on a limit, to a millionth of their typical step."""
+    near = np.array([1e-6 * problem.parameters[name].scale for name in problem.names])
+    return (free - problem.lower <= near) | (problem.upper - free <= near)
+
+
+def _engine_note(warning: Any) -> Note:
+    """Carry a warning of the engine over, whether it has a code or is a sentence only."""
+    if isinstance(warning, tuple) and len(warning) == 2:
+        return Note(str(warning[0]), str(warning[1]))
+    return Note("engine", str(warning))

@@ -1,0 +1,194 @@
+"""Simulated signals of traces, each computed once.
+
+A fit asks for the same signal many times: a column of the Jacobian changes one species, a shift of
+the field axis changes none.  `Signals` simulates species by species and remembers the result under
+everything it depends on, the dataclasses' own values; nothing is rounded, so that an answer from
+memory is the answer.
+"""
+
+from __future__ import annotations
+
+import math
+from collections import OrderedDict
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from spinfit.fitting.data import Trace
+from spinfit.species import Species
+from spinfit.sweep import Sample, Sweep
+
+Array = NDArray[np.float64]
+Simulate = Callable[..., Any]
+
+# A trace of 4000 points takes 32 kB: about 16 MB at most.
+_REMEMBERED = 512
+
+
+@dataclass(frozen=True)
+class Stage:
+    """How a signal is wanted.
+
+    Attributes
+    ----------
+    broadening : float
+        Peak-to-peak width of a further Gaussian on every resonance, mT; 0 for the real thing.
+    tolerance : float
+        Asked of the engine.
+    """
+
+    broadening: float = 0.0
+    tolerance: float = 1e-4
+
+
+def true_field(trace: Trace, field: Array) -> Array:
+    """Carry fields as in the file to true fields with the trace's correction."""
+    return field * trace.field_scale + trace.field_offset
+
+
+def conditions(trace: Trace) -> tuple[Any, ...]:
+    """Everything but the field axis that a trace's signal depends on."""
+    return (
+        trace.frequency,
+        trace.temperature,
+        trace.microwave,
+        trace.modulation,
+        trace.detect,
+        trace.phase,
+        trace.angle,
+        trace.axis,
+        trace.start,
+    )
+
+
+def sample_of(sample: Sample, trace: Trace) -> Sample:
+    """Return the sample with the trace's own rotation plane, where it has one."""
+    if trace.axis is not None:
+        sample = replace(sample, axis=trace.axis)
+    if trace.start is not None:
+        sample = replace(sample, start=trace.start)
+    return sample
+
+
+def sweep_of(trace: Trace, fields: Array) -> Sweep:
+    """Return the measuring conditions of a trace over the given true fields."""
+    return Sweep(
+        frequency=trace.frequency,
+        field=(float(fields[0]), float(fields[-1])),
+        points=int(fields.size),
+        temperature=trace.temperature,
+        microwave=trace.microwave,
+        modulation=trace.modulation,
+        detect=trace.detect,
+        phase=trace.phase,
+    )
+
+
+def broadened(species: Species, broadening: float) -> Species:
+    """Return a species whose every resonance is wider by a Gaussian (peak to peak, mT)."""
+    if broadening == 0:
+        return species
+    width = species.width
+    return replace(species, width=replace(width, gaussian=math.hypot(width.gaussian, broadening)))
+
+
+class Signals:
+    """Simulated signals, remembered.
+
+    Parameters
+    ----------
+    simulate : callable
+        As `spinfit.spectrum.simulate`.
+
+    Attributes
+    ----------
+    simulations : int
+        How many times the engine was called.
+    reports : dict of (trace name, species name) -> mapping
+        The engine's last report of each.
+    warnings : dict of text -> None
+        What the engine warned of, in order.
+    """
+
+    def __init__(self, simulate: Simulate) -> None:
+        self._simulate = simulate
+        self._memory: OrderedDict[Any, Array] = OrderedDict()
+        self.simulations = 0
+        self.reports: dict[tuple[str, str], Any] = {}
+        self.warnings: dict[Any, None] = {}
+
+    def part(self, species: Species, trace: Trace, sample: Sample, field: Array, stage: Stage) -> Array:
+        """Signal of one species at unit amount, shape (n,).
+
+        Parameters
+        ----------
+        field : ndarray, shape (n,)
+            mT, as in the file: the trace's correction is applied here.
+        """
+        plain = replace(species, amount=1.0)
+        key = (plain, conditions(trace), trace.field_offset, trace.field_scale, sample, field.tobytes(), stage)
+        known = self._memory.get(key)
+        if known is not None:
+            self._memory.move_to_end(key)
+            return known
+        fields = true_field(trace, field)
+        spectrum = self._simulate(
+            (broadened(plain, stage.broadening),),
+            sweep_of(trace, fields),
+            sample_of(sample, trace),
+            tolerance=stage.tolerance,
+            fields=fields,
+            angle=trace.angle,
+        )
+        self.simulations += 1
+        signal = np.asarray(spectrum.parts[0], dtype=float)
+        signal.setflags(write=False)
+        if stage.broadening == 0:
+            self.reports[trace.name, species.name] = getattr(spectrum, "report", {})
+            self.warnings.update(dict.fromkeys(getattr(spectrum, "warnings", ())))
+        self._memory[key] = signal
+        while len(self._memory) > _REMEMBERED:
+            self._memory.popitem(last=False)
+        return signal
+
+    def total(self, species: tuple[Species, ...], trace: Trace, sample: Sample, field: Array, stage: Stage) -> Array:
+        """Sum of amount times part over the species, shape (n,)."""
+        out = np.zeros(field.size)
+        for one in species:
+            out += one.amount * self.part(one, trace, sample, field, stage)
+        return out
+
+    def slope(
+        self, species: tuple[Species, ...], trace: Trace, sample: Sample, field: Array, stage: Stage, step: float
+    ) -> Array:
+        """Derivative of the sum with respect to the true field, shape (n,), by central differences.
+
+        Both sides come from one simulation, so that a choice the engine makes is the same for both.
+
+        Parameters
+        ----------
+        step : float
+            mT; half the distance of the two sides.
+        """
+        shift = step / trace.field_scale
+        both, place = np.unique(np.concatenate((field - shift, field + shift)), return_inverse=True)
+        total = self.total(species, trace, sample, both, stage)[place]
+        return (total[field.size :] - total[: field.size]) / (2 * step)
+
+
+def narrowest_width(species: tuple[Species, ...]) -> float:
+    """Smallest peak-to-peak width of the species' resonances, mT; 0 when none has any.
+
+    A Voigt line's width is taken as l/2 + sqrt(l^2/4 + g^2), within 2 % of the exact one for peak to
+    peak components g and l; widths from hidden hyperfine structure and spreads only add to it.
+    """
+    widths = []
+    for one in species:
+        gaussian, lorentzian = one.width.gaussian, one.width.lorentzian
+        if one.width.a:
+            gaussian = math.hypot(gaussian, one.width.a)
+        widths.append(lorentzian / 2 + math.sqrt(lorentzian**2 / 4 + gaussian**2))
+    return min(widths)

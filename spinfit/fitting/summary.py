@@ -1,0 +1,135 @@
+"""From the end of a descent to an `Outcome`: quality, curves, fractions, provenance."""
+
+from __future__ import annotations
+
+import math
+import platform
+
+import lmfit
+import numpy as np
+import scipy
+from numpy.typing import NDArray
+
+from spinfit import __version__
+from spinfit.fitting.data import Trace
+from spinfit.fitting.outcome import Curves, Note, Outcome, Quality
+from spinfit.fitting.residuals import Point, Problem, Seen, View, known_columns
+from spinfit.fitting.signals import true_field
+from spinfit.fitting.solve import Descent
+from spinfit.fitting.uncertainty import Covariances, fractions_of, reported_values
+
+Array = NDArray[np.float64]
+
+# An exact fit of exact data has no residual; its logarithm is taken of rounding instead.
+_SMALLEST_CHI2 = 1e-20
+
+
+def quality_of(problem: Problem, view: View, descent: Descent, finished: bool) -> Quality:
+    """Chi-squared with the noise from the trace itself, AICc and BIC with the noise left free.
+
+    The information criteria hold for Gaussian noise of unknown level: n ln(chi2/n) plus the penalty
+    for k free parameters and the noise level (K. P. Burnham, D. R. Anderson, Model Selection and
+    Multimodel Inference, 2002, from memory).
+    """
+    points, chi2 = view.points, max(descent.point.chi2, _SMALLEST_CHI2)
+    free = len(problem.names) + view.linear
+    k = free + 1
+    likelihood = points * math.log(chi2 / points)
+    return Quality(
+        converged=descent.converged,
+        finished=finished,
+        chi2_reduced=descent.point.chi2 / max(points - free, 1),
+        noise=problem.noises[0],
+        points=points,
+        free_parameters=free,
+        aicc=likelihood + 2 * k + 2 * k * (k + 1) / max(points - k - 1, 1),
+        bic=likelihood + k * math.log(points),
+    )
+
+
+def curves_of(problem: Problem, view: View, point: Point) -> tuple[Curves, ...]:
+    """Every trace with its fit, over all its points, used or not."""
+    out = []
+    for trace, seen, scale, noise, signal in zip(
+        point.traces, view.seen, point.scales, problem.noises, point.signals, strict=True
+    ):
+        parts = {
+            one.name: scale * one.amount * problem.signals.part(one, trace, point.sample, trace.field, view.stage)
+            for one in point.species
+        }
+        baseline = _baseline(trace, seen, scale, signal)
+        fitted = np.sum(list(parts.values()), axis=0) + baseline
+        out.append(
+            Curves(
+                trace=trace.name,
+                frequency=trace.frequency,
+                field=true_field(trace, trace.field),
+                measured=trace.signal,
+                fitted=fitted,
+                residual=trace.signal - fitted,
+                baseline=baseline,
+                used=trace.used,
+                parts=parts,
+                noise=noise,
+                scale=scale,
+                detect=trace.detect,
+            )
+        )
+    return tuple(out)
+
+
+def _baseline(trace: Trace, seen: Seen, scale: float, signal: Array) -> Array:
+    """Solve the linear coefficients of background and baseline and lay them over the whole trace."""
+    if seen.known.shape[1] == 0:
+        return np.zeros(trace.field.size)
+    rest = seen.signal - scale * signal / seen.noise
+    coefficients = np.linalg.lstsq(seen.known, rest, rcond=1e-10)[0]
+    return known_columns(trace, trace.field, trace.background) @ coefficients
+
+
+def provenance_of(problem: Problem) -> dict[str, object]:
+    """Which input, which versions, which job."""
+    job = problem.job
+    versions = {
+        "spinfit": __version__,
+        "python": platform.python_version(),
+        "numpy": np.__version__,
+        "scipy": scipy.__version__,
+        "lmfit": lmfit.__version__,
+    }
+    inputs = {trace.name: {"file": trace.file, "sha256": trace.sha256} for trace in job.traces}
+    return {"input": inputs, "versions": versions, "job": job.text}
+
+
+def outcome_of(
+    problem: Problem,
+    view: View,
+    descent: Descent,
+    spread: Covariances | None,
+    at_limit: NDArray[np.bool_],
+    notes: list[Note],
+    *,
+    finished: bool,
+    seconds: float,
+) -> Outcome:
+    """Put everything a fit found together."""
+    point = descent.point
+    parameters = reported_values(problem, point.free, spread, at_limit)
+    known = np.zeros(len(problem.names), dtype=bool) if spread is None else spread.known
+    names = tuple(name for name, ok in zip(problem.names, known, strict=True) if ok)
+    amounts = [(one.name, one.amount) for one in point.species]
+    reports = {f"{trace} {species}": report for (trace, species), report in problem.signals.reports.items()}
+    return Outcome(
+        name=problem.job.name,
+        parameters=parameters,
+        quality=quality_of(problem, view, descent, finished),
+        correlation_names=names,
+        correlation_matrix=np.zeros((0, 0)) if spread is None else spread.correlation,
+        warnings=tuple(notes),
+        curves=curves_of(problem, view, point),
+        fractions=fractions_of(amounts, problem, point.free, spread),
+        provenance=provenance_of(problem),
+        engine={"tolerance": view.stage.tolerance, "simulations": problem.signals.simulations, "reports": reports},
+        message=descent.message,
+        seconds=seconds,
+    )

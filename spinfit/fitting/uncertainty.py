@@ -1,0 +1,268 @@
+"""What the varied parameters are known to: noise, field axis, frequency.
+
+The response of the least-squares values to a change e of the residuals is dp = -G e with
+G = (J'J)^-1 J' and J the projected Jacobian, so that everything linear (scales, baselines) is
+refitted along.  Three kinds of change go through it:
+
+- the noise, with the covariance C that the residuals show: G C G', which is the familiar
+  sigma^2 (J'J)^-1 when the noise is white and wider when neighbours hang together;
+- a shift of the field axis by its standard uncertainty;
+- a shift of the frequency by its own.
+
+They are independent and combine in quadrature (JCGM 100:2008, 5.1.2).  Traces of one group share
+one field axis; traces without a group share one as well, since averaging over traces of one magnet
+does not make its calibration better.  The same holds for the frequency counter.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from spinfit.fitting.noise import ResidualNoise, local_covariance, residual_noise
+from spinfit.fitting.outcome import Value
+from spinfit.fitting.residuals import Point, Problem, View
+from spinfit.fitting.signals import narrowest_width
+
+Array = NDArray[np.float64]
+
+# Singular values of the Jacobian with columns of unit length: below this finite differences of an
+# engine of 1e-4 cannot tell a direction from none.
+_BLIND = 3e-4
+# A column this small against the noise moves chi-squared by less than 1 over a hundred typical steps.
+_UNSEEN_STEPS = 100.0
+# Standard deviations by which squared residuals on the lines may exceed those beside them.
+_UNEVEN = 4.0
+# Part of a line width by which the frequency is moved, as a field.
+_FREQUENCY_STEP = 0.02
+
+
+@dataclass(frozen=True, eq=False)
+class Covariances:
+    """Covariances of the varied parameters at the minimum, internal units.
+
+    Attributes
+    ----------
+    known : ndarray of bool, shape (k,)
+        Whether the data determine the parameter and it is not on a limit; rows and columns of the
+        others are 0.
+    noise, field : ndarray, shape (k, k)
+        From the noise; from field axis and frequency.
+    field_shifts : ndarray, shape (m, k)
+        The parameters' response to each shared standard shift of an axis or a frequency.
+    blind : tuple of tuple of str
+        Sets of parameters of which only combinations are determined.
+    traces : tuple of ResidualNoise
+        The noise of each trace in units of its level before the fit.
+    """
+
+    known: NDArray[np.bool_]
+    noise: Array
+    field: Array
+    field_shifts: Array
+    blind: tuple[tuple[str, ...], ...]
+    traces: tuple[ResidualNoise, ...]
+
+    @property
+    def correlation(self) -> Array:
+        """Correlation matrix of the noise part, of the known parameters."""
+        inner = self.noise[np.ix_(self.known, self.known)]
+        sigma = np.sqrt(np.diag(inner))
+        return inner / np.outer(sigma, sigma) if sigma.size and np.all(sigma > 0) else np.eye(sigma.size)
+
+
+def spread_of(problem: Problem, view: View, point: Point, jacobian: Array, at_limit: NDArray[np.bool_]) -> Covariances:
+    """Work out the covariances at the minimum.
+
+    Parameters
+    ----------
+    jacobian : ndarray, shape (points, k)
+        Projected, as `Problem.jacobian` gives it.
+    at_limit : ndarray of bool, shape (k,)
+        Parameters on a limit: the others' uncertainties are those with these held there.
+    """
+    known, blind = _seen_parameters(problem, jacobian, at_limit)
+    used = jacobian[:, known]
+    size = np.linalg.norm(used, axis=0)
+    left, singular, right = np.linalg.svd(used / size, full_matrices=False) if used.shape[1] else _nothing(used)
+    response = (right.T / singular) @ left.T / size[:, None]
+    blocks = _blocks(view)
+    linear = problem.fitted_basis(point, view)
+    traces, noise = [], np.zeros((used.shape[1],) * 2)
+    for rows, basis in zip(blocks, linear, strict=True):
+        residual = point.residual[rows]
+        one = residual_noise(residual, np.column_stack((basis, left[rows])))
+        traces.append(one)
+        columns = response[:, rows].T
+        noise += _widened(columns.T @ one.applied(columns), one, residual, columns)
+    shifts = _axis_shifts(problem, view, point, response)
+    k = known.size
+    whole, moved = np.zeros((k, k)), np.zeros((shifts.shape[0], k))
+    whole[np.ix_(known, known)] = (noise + noise.T) / 2
+    moved[:, known] = shifts
+    return Covariances(known, whole, moved.T @ moved, moved, blind, tuple(traces))
+
+
+def _nothing(used: Array) -> tuple[Array, Array, Array]:
+    return np.zeros((used.shape[0], 0)), np.zeros(0), np.zeros((0, 0))
+
+
+def _blocks(view: View) -> list[slice]:
+    edges = np.cumsum([0] + [seen.field.size for seen in view.seen])
+    return [slice(int(a), int(b)) for a, b in zip(edges[:-1], edges[1:], strict=True)]
+
+
+def _widened(covariance: Array, noise: ResidualNoise, residual: Array, columns: Array) -> Array:
+    """Widen where the residuals are larger on the lines than beside them."""
+    if noise.uneven <= _UNEVEN:
+        return covariance
+    bandwidth = max(int(4 * (residual.size / 100) ** (2 / 9)), 4 * noise.order)
+    local = np.diag(local_covariance(residual, columns, bandwidth))
+    ratio = np.sqrt(np.maximum(local / np.maximum(np.diag(covariance), np.finfo(float).tiny), 1.0))
+    return covariance * np.outer(ratio, ratio)
+
+
+def _seen_parameters(
+    problem: Problem, jacobian: Array, at_limit: NDArray[np.bool_]
+) -> tuple[NDArray[np.bool_], tuple[tuple[str, ...], ...]]:
+    """Find parameters without effect, and sets of which only combinations have one."""
+    scales = np.array([problem.parameters[name].scale for name in problem.names])
+    norms = np.linalg.norm(jacobian, axis=0)
+    unseen = norms * scales * _UNSEEN_STEPS < 1.0
+    known = ~at_limit & ~unseen
+    blind = [(problem.names[k],) for k in np.flatnonzero(unseen & ~at_limit)]
+    if known.any():
+        _, singular, right = np.linalg.svd(jacobian[:, known] / norms[known], full_matrices=False)
+        places = np.flatnonzero(known)
+        for row in right[singular < _BLIND]:
+            members = places[np.abs(row) > 0.1]
+            blind.append(tuple(problem.names[k] for k in members))
+            known[members] = False
+    return known, tuple(blind)
+
+
+def _axis_shifts(problem: Problem, view: View, point: Point, response: Array) -> Array:
+    """Response of the parameters to each shared standard shift, shape (m, k)."""
+    rows = []
+    for group in dict.fromkeys(trace.group for trace in point.traces):
+        for changes in (_field_changes, _frequency_changes):
+            moved = changes(problem, view, point, group)
+            if any(change is not None for change in moved):
+                rows.append(-response @ problem.projected_change(point, view, moved))
+    return np.array(rows).reshape(len(rows), response.shape[0])
+
+
+def _field_changes(problem: Problem, view: View, point: Point, group: str | None) -> list[Array | None]:
+    """Change of each trace's signal when its axis is off by one standard uncertainty."""
+    out: list[Array | None] = []
+    for trace, seen in zip(point.traces, view.seen, strict=True):
+        if trace.group != group or trace.field_uncertainty == 0:
+            out.append(None)
+        else:
+            out.append(problem.slope(point, trace, seen, view.stage) * trace.field_uncertainty)
+    return out
+
+
+def _frequency_changes(problem: Problem, view: View, point: Point, group: str | None) -> list[Array | None]:
+    """Change of each trace's signal when its frequency is off by one standard uncertainty."""
+    out: list[Array | None] = []
+    for trace, seen in zip(point.traces, view.seen, strict=True):
+        if trace.group != group or trace.frequency_uncertainty == 0:
+            out.append(None)
+            continue
+        highest = max(abs(float(seen.field[-1])), abs(float(seen.field[0])), np.finfo(float).tiny)
+        width = narrowest_width(point.species) or float(np.median(np.diff(seen.field)))
+        step = _FREQUENCY_STEP * width / highest * trace.frequency
+        above, below = (
+            problem.signals.total(
+                point.species, replace(trace, frequency=trace.frequency + s), point.sample, seen.field, view.stage
+            )
+            for s in (step, -step)
+        )
+        out.append((above - below) / (2 * step) * trace.frequency_uncertainty)
+    return out
+
+
+def combined(noise: float, field: float) -> float:
+    """Quadrature sum of independent standard uncertainties (JCGM 100:2008, 5.1.2)."""
+    return math.hypot(noise, field)
+
+
+def reported_values(
+    problem: Problem, free: Array, spread: Covariances | None, at_limit: NDArray[np.bool_]
+) -> dict[str, Value]:
+    """Every parameter of the model with its uncertainty, in the units of the job."""
+    values = problem.values(free)
+    gradient = problem.ties.gradient(values)
+    order = {name: k for k, name in enumerate(problem.names)}
+    out = {}
+    for name, parameter in problem.parameters.items():
+        value = values.get(name, parameter.value)
+        slope = np.zeros(len(order))
+        if name in order:
+            slope[order[name]] = 1.0
+        for inner, part in gradient.get(name, {}).items():
+            if inner in order:
+                slope[order[inner]] += part
+        parts = _parts(slope, spread)
+        limited = name in order and bool(at_limit[order[name]])
+        shown = [None if p is None else abs(parameter.to_job(p)) for p in parts]
+        out[name] = Value(
+            value=parameter.to_job(value),
+            uncertainty=None if None in shown else combined(*shown),
+            uncertainty_noise=shown[0],
+            uncertainty_field=shown[1],
+            unit=parameter.unit,
+            varied=name in order,
+            at_limit=limited,
+            tied=name in gradient,
+            start=parameter.to_job(parameter.value),
+        )
+    return out
+
+
+def _parts(slope: Array, spread: Covariances | None) -> tuple[float | None, float | None]:
+    """Standard uncertainties of a linear combination; None when it has none or they are not known."""
+    moving = slope != 0
+    if spread is None or not moving.any() or not spread.known[moving].all():
+        return None, None
+    noise, field = (math.sqrt(max(float(slope @ c @ slope), 0.0)) for c in (spread.noise, spread.field))
+    if not (math.isfinite(noise) and math.isfinite(field)):
+        return None, None
+    return noise, field
+
+
+def fractions_of(
+    species: Sequence[tuple[str, float]], problem: Problem, free: Array, spread: Covariances | None
+) -> Mapping[str, Value]:
+    """Relative numbers of spins, summing to 1, with uncertainties by linear propagation.
+
+    Parameters
+    ----------
+    species : sequence of (name, amount)
+    """
+    total = sum(amount for _, amount in species)
+    if total == 0:
+        return {}
+    gradient = problem.ties.gradient(problem.values(free))
+    order = {name: k for k, name in enumerate(problem.names)}
+    slopes = []
+    for name, _ in species:
+        slope = np.zeros(len(order))
+        amount = f"{name}.amount"
+        for inner, part in gradient.get(amount, {amount: 1.0}).items():
+            if inner in order:
+                slope[order[inner]] += part
+        slopes.append(slope)
+    whole = np.sum(slopes, axis=0)
+    out = {}
+    for (name, amount), slope in zip(species, slopes, strict=True):
+        change = slope / total - amount / total**2 * whole
+        noise, field = _parts(change, spread)
+        both = None if noise is None or field is None else combined(noise, field)
+        out[name] = Value(amount / total, both, noise, field, varied=bool(np.any(change)))
+    return out
