@@ -77,6 +77,49 @@ class Trace:
 
 
 @dataclass(frozen=True, eq=False)
+class Lines:
+    """A table of resonance fields of one crystal.
+
+    Attributes
+    ----------
+    name : str
+        How it is called in parameter names and tables.
+    field : ndarray, shape (n,)
+        mT, as in the file, before `field_offset` and `field_scale` (see `Trace`).
+    angle : ndarray, shape (n,), or None
+        Of rotation, rad; None when `direction` is given.
+    direction : ndarray, shape (n, 2), or None
+        Polar angles theta, phi of the field in the crystal frame, rad.
+    uncertainty : ndarray, shape (n,), or None
+        Standard uncertainties of the fields, mT.
+    levels : ndarray of int, shape (n, 2), or None
+        Lower and upper level, counted from 1 by energy; 0 where the file does not say.
+    frequency, temperature, microwave, axis, start, group, field_offset, field_scale
+        As in `Trace`.
+    """
+
+    name: str
+    field: NDArray[np.float64]
+    frequency: float
+    angle: NDArray[np.float64] | None = None
+    direction: NDArray[np.float64] | None = None
+    uncertainty: NDArray[np.float64] | None = None
+    levels: NDArray[np.int64] | None = None
+    temperature: float | None = None
+    microwave: str = "perpendicular"
+    axis: tuple[float, float, float] | None = None
+    start: tuple[float, float, float] | None = None
+    group: str | None = None
+    field_offset: float = 0.0
+    field_scale: float = 1.0
+    field_uncertainty: float = 0.0
+    frequency_uncertainty: float = 0.0
+    file: str = ""
+    sha256: str = ""
+    notes: tuple[tuple[str, str], ...] = ()
+
+
+@dataclass(frozen=True, eq=False)
 class Job:
     """A model, the traces, and what to vary.
 
@@ -94,6 +137,8 @@ class Job:
         The unit in which the job gave each parameter ("" for a plain number); outcomes use it.
     text : str
         The job file as it was read.
+    lines : tuple of Lines
+        Tables of line positions, fitted together with the traces.
     """
 
     species: tuple[Species, ...]
@@ -108,3 +153,4 @@ class Job:
     name: str = "job"
     path: str = ""
     text: str = ""
+    lines: tuple[Lines, ...] = ()
