@@ -181,6 +181,18 @@ class Binding:
             slot.refused,
         )
 
+    def named(self, given: Mapping[Path, str]) -> dict[str, str]:
+        """Return the unit of each parameter that a file gives, from the units by path in the model.
+
+        A path leads to a parameter or to the tensor it belongs to.
+        """
+        units = {}
+        for name, path in self._paths.items():
+            unit = next((given[path[:n]] for n in range(len(path), 1, -1) if path[:n] in given), None)
+            if unit is not None:
+                units[name] = unit
+        return units
+
     def apply(self, values: Mapping[str, float]) -> tuple[tuple[Species, ...], Sample, tuple[Any, ...]]:
         """Return the model with new values, in internal units; names not mentioned keep theirs.
 
