@@ -12,7 +12,7 @@ from spinfit import units
 from spinfit.errors import InputError, nearest
 from spinfit.files.conditions import is_field
 from spinfit.files.raw import Note, RawTrace, quote
-from spinfit.files.sweeps import Bools, Floats, Run, find_runs, find_spikes, find_unrepeated, lag
+from spinfit.files.sweeps import Bools, Floats, Run, find_foreign, find_runs, find_spikes, find_unrepeated, lag
 
 DIRECTIONS = ("both", "up", "down")
 _SIGNAL_NAMES = ("signal", "measured", "intensity", "y", "derivative", "absorption", "amplitude")
@@ -124,6 +124,12 @@ def _glitches(field: Floats, signal: Floats, runs: list[Run], notes: list[Note])
         keep = np.arange(run.start, run.stop)[~bad[run.part]]
         order = keep[np.argsort(field[keep], kind="stable")]
         sorted_runs.append(order)
+    foreign = find_foreign([(field[order], signal[order]) for order in sorted_runs])
+    for i in foreign:
+        run, order = runs[i], sorted_runs[i]
+        text = f"points {run.start + 1} to {run.stop} ({field[order[0]]:.4g} to {field[order[-1]]:.4g} mT) contradict"
+        notes.append(("foreign_sweep", f"{text} the other sweeps of the file and are left out"))
+    sorted_runs = [order for i, order in enumerate(sorted_runs) if i not in foreign]
     alone = np.zeros_like(bad)
     for i, order in enumerate(sorted_runs):
         best, most = None, 0.0
@@ -139,6 +145,8 @@ def _glitches(field: Floats, signal: Floats, runs: list[Run], notes: list[Note])
         where = ", ".join(f"{b:.2f}" for b in _places(np.sort(field[bad])))
         by = f", {alone.sum()} of them because the other sweep does not show them" if alone.any() else ""
         notes.append(("glitches", f"{bad.sum()} points look like glitches and are left out{by}: near {where} mT"))
+    for i in foreign:
+        bad[runs[i].part] = True
     return bad
 
 
@@ -223,7 +231,8 @@ def _describe(field: Floats, signal: Floats, runs: list[Run], stray: Bools, dire
         shift = lag(pair[1], pair[0])
         step = float(np.ptp(field)) / len(field)
         if shift is not None and abs(shift) > step:
-            notes.append(("sweep_lag", f"lines stand {shift:.3g} mT higher in the upward than in the downward sweep"))
+            text = f"lines stand {shift:.3g} mT higher in the upward than in the downward sweep"
+            notes.append(("sweep_lag", f"{text}: the mean of both is closer to the truth than either"))
 
 
 def assemble(

@@ -21,7 +21,8 @@ _PAIR = 15.0  # noise levels; two points in a row
 _SPIKE_RATIO = 4.0  # times the range of six neighbours; a Gaussian line of 2 points FWHM reaches 2
 _PAIR_RATIO = 6.0  # times the range of six neighbours; a Gaussian line of 2 points FWHM reaches 4
 _LONE = 6.0  # noise levels outside what the other sweep saw near that field
-_LONE_RATIO = 3.0  # and that many times the height of what it saw
+_LONE_RATIO = 3.0  # and that many times the height of what it saw there
+_FOREIGN = 10.0  # times the difference of two other runs
 _LONE_MOST = 0.02  # share of points; more are no glitches, the sweeps differ
 
 
@@ -184,9 +185,9 @@ def find_unrepeated(a: tuple[Floats, Floats], b: tuple[Floats, Floats]) -> Bools
     """Find what sweep `a` shows and sweep `b` over the same fields does not.
 
     The two are aligned by `lag` and brought to one baseline (medians in 20 windows).  A point of `a` is alone when it
-    lies outside the range of `b` near its field by more than 6 noise levels and 3 times the height of that range;
-    points beside it that are outside by 3 noise levels go with it.  A line that is in both is never alone, however
-    narrow, nor one that lost up to three quarters of its height.
+    lies outside the range of `b` near its field by more than 6 noise levels and 3 times the height over the baseline
+    that `b` has there, noise aside; points beside it that are outside by 3 noise levels go with it.  A line that is in
+    both is never alone, however narrow, nor one that lost up to three quarters of its height.
 
     Parameters
     ----------
@@ -210,17 +211,56 @@ def find_unrepeated(a: tuple[Floats, Floats], b: tuple[Floats, Floats]) -> Bools
     reach = 2 * int(np.ceil(max(abs(shift), 5 * step) / step)) + 1
     grid = np.linspace(field[inside][0], field[inside][-1], int(inside.sum()))
     other = np.interp(grid + shift, *b)
-    difference = np.interp(grid, field, signal) - other
     parts = np.array_split(np.arange(len(grid)), 20)
-    other = other + np.interp(grid, [grid[p].mean() for p in parts], [np.median(difference[p]) for p in parts])
-    residual = np.interp(grid, field, signal) - other
+    centres = [grid[p].mean() for p in parts]
+    base = np.interp(grid, centres, [np.median(other[p]) for p in parts])
+    difference = np.interp(grid, field, signal) - other
+    drift = np.interp(grid, centres, [np.median(difference[p]) for p in parts])
+    residual = difference - drift
     noise = float(1.4826 * np.median(np.abs(residual - np.median(residual))) / np.sqrt(2))
     noise = max(noise, _quantum(signal))
+    other, base = other + drift, base + drift
     top, bottom = ndimage.maximum_filter1d(other, reach), ndimage.minimum_filter1d(other, reach)
+    height = np.interp(field, grid, np.maximum(top - base, base - bottom))
     top, bottom = np.interp(field, grid, top), np.interp(field, grid, bottom)
     outside = np.where(inside, np.maximum(signal - top, bottom - signal), 0.0)
-    alone = outside > np.maximum(_LONE * noise, _LONE_RATIO * (top - bottom))
+    # Noise alone spans about 2.5 levels to either side.
+    alone = outside > np.maximum(_LONE * noise, _LONE_RATIO * (height - 2.5 * noise))
     labels, _ = ndimage.label(outside > 3 * noise)
     with_them = np.isin(labels, np.unique(labels[alone & (labels > 0)]))
     alone = alone | with_them
     return alone if alone.mean() <= _LONE_MOST else none
+
+
+def _apart(a: tuple[Floats, Floats], b: tuple[Floats, Floats]) -> float | None:
+    """Return the median difference of two sweeps where they overlap, a constant offset aside; None when they do not."""
+    low, high = max(a[0][0], b[0][0]), min(a[0][-1], b[0][-1])
+    inside = (a[0] >= low) & (a[0] <= high)
+    if high <= low or inside.sum() < 50:
+        return None
+    difference = a[1][inside] - np.interp(a[0][inside], *b)
+    return float(np.median(np.abs(difference - np.median(difference))))
+
+
+def find_foreign(sweeps: list[tuple[Floats, Floats]]) -> list[int]:
+    """Find runs that two others, which agree with each other, contradict: an aborted start, a cable pulled.
+
+    Parameters
+    ----------
+    sweeps : list of (field, signal)
+        Each with its field increasing.
+
+    Returns
+    -------
+    list of int
+        Positions in `sweeps`.
+    """
+    n = len(sweeps)
+    apart = {(i, j): _apart(sweeps[i], sweeps[j]) for i in range(n) for j in range(n) if i != j} if n <= 50 else {}
+    found = []
+    for i in range(n):
+        mine = {j: apart[i, j] for j in range(n) if (i, j) in apart and apart[i, j] is not None}
+        theirs = [apart[j, k] for j in mine for k in mine if j != k and apart[j, k] is not None]
+        if len(mine) >= 2 and theirs and min(mine.values()) > _FOREIGN * min(theirs):
+            found.append(i)
+    return found
