@@ -255,7 +255,16 @@ def apply(
 def unknown(name: str, parameters: Mapping[str, Parameter], *, place: str | None = None) -> InputError:
     """Return the error for a name that the model does not have, with the nearest that it has."""
     groups = {group for parameter in parameters.values() for group in parameter.groups}
-    return InputError(f'"{name}" is no parameter of this model', nearest(name, [*parameters, *groups]), place=place)
+    right = nearest(name, [*parameters, *groups])
+    tensor = re.sub(r"_(x|y|z|perp|par)$", "", name)
+    head, _, last = name.rpartition(".")
+    twin = {"E": f"{head}.rhombicity", "rhombicity": f"{head}.E"}.get(last, "")
+    if tensor in groups:
+        parts = ", ".join(p.name for p in parameters.values() if tensor in p.groups)
+        right = f"this tensor was given as {parts}"
+    elif twin in parameters:
+        right = f"the model was given {twin}"
+    return InputError(f'"{name}" is no parameter of this model', right, place=place)
 
 
 def members(name: str, parameters: Mapping[str, Parameter], *, place: str | None = None) -> tuple[str, ...]:
