@@ -59,8 +59,7 @@ def simulate(species, sweep, sample=None, *, tolerance=1e-3, fields=None, angle=
     parts = np.array(
         [
             sum(
-                w * line(x, c, max(one.width.gaussian, 1e-6), sweep.phase, sweep.detect)
-                for c, w in centers(one, sweep)
+                w * line(x, c, max(one.width.gaussian, 1e-6), sweep.phase, sweep.detect) for c, w in centers(one, sweep)
             )
             for one in species
         ]

@@ -118,13 +118,17 @@ class _Run:
         if self.latest is None or self.latest[0] is not point:
             self.latest = (point, self.problem.jacobian(point, self.view))
         jacobian = self.latest[1]
-        step, gain = bounded_step(
-            point.residual, jacobian[:, self.moving] * self.steps[self.moving], *self._room(point.free)
-        )
+        low, high = self._room(point.free)
+        step, gain = bounded_step(point.residual, jacobian[:, self.moving] * self.steps[self.moving], low, high)
         if gain <= self.goal.gain * max(point.chi2 / self.view.points, 1e-12):
             free = point.free.copy()
             free[self.moving] += step * self.steps[self.moving]
-            self.evaluate(np.clip(free, self.problem.lower, self.problem.upper))
+            # A limit is reached exactly, not to rounding.
+            free[self.moving[step == low]] = self.problem.lower[self.moving[step == low]]
+            free[self.moving[step == high]] = self.problem.upper[self.moving[step == high]]
+            last = self.evaluate(np.clip(free, self.problem.lower, self.problem.upper))
+            if self.best is not None and last.chi2 <= self.best.chi2 * (1 + 1e-9):
+                self.best = last
             raise _Converged
         return jacobian[:, self.moving] * self.steps[self.moving]
 

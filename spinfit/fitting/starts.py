@@ -254,4 +254,4 @@ def _good(descent: Descent | None, view: View) -> bool:
     if descent is None or not descent.converged:
         return False
     freedom = max(view.points - view.linear - descent.point.free.size, 1)
-    return descent.point.chi2 / freedom < 1.15 and min(descent.point.scales) > 0
+    return descent.point.chi2 / freedom < 1.2 and min(descent.point.scales) > 0

@@ -36,7 +36,7 @@ _BLIND = 3e-4
 # A column this small against the noise moves chi-squared by less than 1 over a hundred typical steps.
 _UNSEEN_STEPS = 100.0
 # Standard deviations by which squared residuals on the lines may exceed those beside them.
-_UNEVEN = 4.0
+_UNEVEN = 4.5
 # Part of a line width by which the frequency is moved, as a field.
 _FREQUENCY_STEP = 0.02
 
