@@ -34,6 +34,8 @@ def short(value: float | None, digits: int = 7) -> str:
     if value is None or not math.isfinite(value):
         return "-"
     text = f"{value:.{digits}g}"
+    if "e+" in text and abs(value) < 1e7:
+        text = f"{float(text):.0f}"
     return "0" if float(text) == 0 else text
 
 

@@ -1,0 +1,168 @@
+"""``spinfit``: find the command, run it, turn what it raises into one line and an exit code.
+
+Exit codes: 0 done; 1 ran, but the result is not good; 2 bad input; 3 a fault of ours.
+"""
+
+from __future__ import annotations
+
+import argparse
+import os
+import sys
+import traceback
+import warnings
+from collections.abc import Sequence
+
+from spinfit import __version__
+from spinfit.commands import TABLE
+from spinfit.commands.screen import Screen
+from spinfit.errors import InputError, SpinfitError, nearest
+
+COMMON = ("--json", "--debug")
+
+
+class _Parser(argparse.ArgumentParser):
+    """An argument parser that raises `InputError` where argparse would print its usage and exit."""
+
+    def error(self, message: str) -> None:
+        raise InputError(message, f'see "{self.prog} --help"', place=self.prog.removeprefix("spinfit").strip() or None)
+
+
+def _top_help() -> str:
+    width = max(map(len, TABLE))
+    listed = "\n".join(f"  {name:<{width}}  {module.SUMMARY}" for name, module in TABLE.items())
+    return f"""usage: spinfit COMMAND ... [--json] [--debug]
+       spinfit COMMAND --help
+
+From a measured magnetic-resonance trace to a g-tensor that stands up.
+
+commands:
+{listed}
+
+options:
+  --help     this text; after a command, its own with an example
+  --version  the version
+  --json     standard output holds one JSON document and nothing else
+  --debug    show where in the program an error arose
+
+example:
+  spinfit fit kiln-07.toml --out kiln-07
+
+exit codes: 0 done; 1 ran, but the result is not good; 2 bad input; 3 a fault of spinfit
+"""
+
+
+def build_parser(name: str) -> argparse.ArgumentParser:
+    """Return the parser of one command."""
+    module = TABLE[name]
+    parser = _Parser(
+        prog=f"spinfit {name}",
+        description=module.SUMMARY[0].upper() + module.SUMMARY[1:] + ".",
+        epilog="examples:\n" + "\n".join(f"  {line}" for line in module.EXAMPLES),
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+        allow_abbrev=False,
+    )
+    module.options(parser)
+    parser.add_argument("--json", action="store_true", help="print one JSON document and nothing else")
+    parser.add_argument("--debug", action="store_true", help="show where in the program an error arose")
+    return parser
+
+
+def _parsed(name: str, arguments: list[str]) -> argparse.Namespace:
+    """Parse a command's arguments; unknown options are refused with the nearest known."""
+    parser = build_parser(name)
+    known = {option for action in parser._actions for option in action.option_strings}
+    for argument in arguments:
+        if argument == "--":
+            break
+        option = argument.partition("=")[0]
+        if option.startswith("--") and option not in known:
+            raise InputError(f'there is no option "{option}"', nearest(option, known), place=name)
+    args, extra = parser.parse_known_args(arguments)
+    if extra:
+        raise InputError(f'"{extra[0]}" is one argument too many', f'see "spinfit {name} --help"', place=name)
+    return args
+
+
+def _run(argv: list[str]) -> int:
+    """Run a command line and return its exit code."""
+    before: list[str] = []
+    while argv and argv[0] in COMMON:
+        before.append(argv.pop(0))
+    if not argv or argv[0] in ("--help", "-h", "help"):
+        sys.stdout.write(_top_help())
+        return 0
+    if argv[0] == "--version":
+        print(f"spinfit {__version__}")
+        return 0
+    name = argv.pop(0)
+    if name not in TABLE:
+        kind = "option" if name.startswith("-") else "command"
+        words = TABLE if kind == "command" else ("--help", "--version", *COMMON)
+        raise InputError(f'there is no {kind} "{name}"', nearest(name, words))
+    args = _parsed(name, argv + before)
+    return TABLE[name].run(args, Screen(as_json=args.json))
+
+
+def _one_line(text: object) -> str:
+    return " ".join(str(text).split())
+
+
+def _fault(error: BaseException) -> str:
+    """Say that spinfit is at fault and what to do about it."""
+    what = _one_line(f"{type(error).__name__}: {error}")
+    return (
+        f"spinfit: a fault of spinfit, not yours: {what}; please report it on the project's issue tracker with the "
+        "command line and the file (--debug shows where it arose)"
+    )
+
+
+def _leave_quietly() -> None:
+    """Point standard output at nothing, so that the interpreter's last flush finds no broken pipe."""
+    try:
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+    except (OSError, ValueError, AttributeError):  # standard output has no file descriptor
+        pass
+
+
+def main(argv: Sequence[str] | None = None) -> int:
+    """Run ``spinfit`` with `argv` (by default the process's own) and return the exit code."""
+    arguments = list(sys.argv[1:] if argv is None else argv)
+    debug = "--debug" in arguments
+    for stream in (sys.stdout, sys.stderr):  # a terminal that cannot show a character shows "?" in its place
+        if hasattr(stream, "reconfigure"):
+            stream.reconfigure(errors="replace")
+    with warnings.catch_warnings():
+        if not debug and not sys.warnoptions:
+            warnings.simplefilter("ignore")  # a library's own warnings are not for users; ours are in the outcome
+        try:
+            code = _run(arguments)
+            sys.stdout.flush()
+            return code
+        except SystemExit as leaving:  # argparse's --help
+            return leaving.code if isinstance(leaving.code, int) else 0
+        except BrokenPipeError:  # whoever read our output has seen enough: "spinfit simulate ... | head"
+            _leave_quietly()
+            return 0
+        except KeyboardInterrupt:
+            message, code = "spinfit: stopped", 1
+        except SpinfitError as error:
+            message, code = f"spinfit: {error}", error.exit_code
+        except MemoryError as error:
+            message = f"spinfit: not enough memory ({_one_line(error) or 'none left'}); ask for fewer points or levels"
+            code = 2
+        except OSError as error:
+            where = f"{error.filename}: " if error.filename else ""
+            message = (
+                f"spinfit: {where}{error.strerror or _one_line(error)}; check the name, permissions and free space"
+            )
+            code = 2
+        except Exception as error:
+            message, code = _fault(error), 3
+        if debug:
+            traceback.print_exc()
+        print(_one_line(message), file=sys.stderr)
+        return code
+
+
+if __name__ == "__main__":
+    sys.exit(main())

@@ -1,0 +1,106 @@
+"""Outcomes for programs: `outcome.json` and `curves.csv`.
+
+Nothing that changes from run to run goes in (no dates, no wall time), keys keep their order and there
+is never a NaN: what could not be had is null.
+"""
+
+from __future__ import annotations
+
+import io
+import json
+import math
+from collections.abc import Mapping
+from dataclasses import asdict, is_dataclass
+from typing import Any
+
+import numpy as np
+
+from spinfit.fitting.outcome import Curves, Outcome, Value
+
+VALUE_KEYS = ("value", "uncertainty", "uncertainty_noise", "uncertainty_field", "unit", "varied", "at_limit")
+QUALITY_KEYS = ("converged", "finished", "chi2_reduced", "noise", "points", "free_parameters", "aicc", "bic")
+
+
+def clean(content: Any) -> Any:
+    """Return plain JSON types: arrays as lists, numpy numbers as Python's, what is not finite as None."""
+    if content is None or isinstance(content, (str, bool)):
+        return content
+    if isinstance(content, np.ndarray):
+        return clean(content.tolist())
+    if isinstance(content, (np.bool_, np.integer, int)):
+        return content.item() if isinstance(content, np.generic) else content
+    if isinstance(content, (float, np.floating)):
+        return float(content) if math.isfinite(content) else None
+    if isinstance(content, Mapping):
+        return {str(key): clean(value) for key, value in content.items()}
+    if isinstance(content, (list, tuple)):
+        return [clean(value) for value in content]
+    if is_dataclass(content) and not isinstance(content, type):
+        return clean(asdict(content))
+    return str(content)
+
+
+def value_record(value: Value) -> dict[str, Any]:
+    """Return one parameter's record."""
+    return {key: getattr(value, key) for key in VALUE_KEYS}
+
+
+def outcome_record(outcome: Outcome) -> dict[str, Any]:
+    """Return an outcome as plain JSON types, without its curves.
+
+    Keys: ``parameters``, ``fractions``, ``quality``, ``correlations`` {names, matrix}, ``warnings``
+    [{code, text}] and ``provenance``, which holds the job's name, what the engine used and the
+    optimiser's message as well.
+    """
+    return clean(
+        {
+            "parameters": {name: value_record(value) for name, value in outcome.parameters.items()},
+            "fractions": {name: value_record(value) for name, value in outcome.fractions.items()},
+            "quality": {key: getattr(outcome.quality, key) for key in QUALITY_KEYS},
+            "correlations": {"names": outcome.correlation_names, "matrix": outcome.correlation_matrix},
+            "warnings": [{"code": note.code, "text": note.text} for note in outcome.warnings],
+            "provenance": {
+                "name": outcome.name,
+                **outcome.provenance,
+                "traces": [
+                    {"name": c.trace, "frequency_MHz": c.frequency, "scale": c.scale, "noise": c.noise}
+                    for c in outcome.curves
+                ],
+                "engine": outcome.engine,
+                "message": outcome.message,
+            },
+        }
+    )
+
+
+def outcome_text(outcome: Outcome) -> str:
+    """Return the text of `outcome.json`."""
+    return json.dumps(outcome_record(outcome), indent=2, ensure_ascii=False, allow_nan=False) + "\n"
+
+
+def _columns(curves: Curves, species: list[str]) -> list[np.ndarray]:
+    missing = np.full(curves.field.shape, np.nan)
+    parts = [curves.parts.get(name, missing) for name in species]
+    return [curves.field, curves.measured, curves.fitted, curves.residual, *parts]
+
+
+def _quoted(name: str) -> str:
+    return '"' + name.replace('"', '""') + '"' if any(c in name for c in ',"\n') else name
+
+
+def curves_text(outcome: Outcome) -> str:
+    """Return the text of `curves.csv`: field_mT, measured, fitted, residual, one column a species.
+
+    With more than one trace a column ``trace`` stands in front.  Nine digits keep a field of 400 mT
+    to a millionth of a mT.  A curve that is not there (a fit that was stopped) leaves its cells empty.
+    """
+    species = list(dict.fromkeys(name for curves in outcome.curves for name in curves.parts))
+    several = len(outcome.curves) > 1
+    out = io.StringIO()
+    header = [*(["trace"] if several else []), "field_mT", "measured", "fitted", "residual", *species]
+    out.write(",".join(map(_quoted, header)) + "\n")
+    for curves in outcome.curves:
+        front = _quoted(curves.trace) + "," if several else ""
+        for row in np.column_stack(_columns(curves, species)):
+            out.write(front + ",".join(f"{v:.9g}" if math.isfinite(v) else "" for v in row) + "\n")
+    return out.getvalue()

@@ -1,0 +1,57 @@
+"""One style for every picture: sizes of a journal column, colours told apart by everybody.
+
+The colours are chosen so that they differ in lightness as well as in hue: they stay apart for red-,
+green- and blue-blind readers and, nearly, on a grey printer.  Curves differ in their dashes too.
+"""
+
+from __future__ import annotations
+
+from matplotlib import rc_context
+
+MEASURED = "#30343b"
+FITTED = "#e4572e"
+UNUSED = "#b9bec7"
+GUIDE = "#8a909b"
+PARTS = ("#17508f", "#2fa6a0", "#b0822b", "#8e3b78", "#7fb2e5", "#5f6f2e")
+DASHES = ((None, None), (5, 1.5), (2, 1.2), (6, 1.5, 1.5, 1.5), (1, 1), (8, 2))
+
+COLUMN_WIDTH = 86 / 25.4
+"""Width of one journal column, inches (86 mm)."""
+PAGE_WIDTH = 178 / 25.4
+DOTS_PER_INCH = 300
+
+SETTINGS = {
+    "font.family": "sans-serif",
+    "font.sans-serif": ["DejaVu Sans"],  # comes with matplotlib: the same picture everywhere
+    "font.size": 7.0,
+    "axes.labelsize": 7.0,
+    "axes.titlesize": 7.0,
+    "axes.linewidth": 0.6,
+    "axes.edgecolor": "#444a54",
+    "axes.labelcolor": "#20242b",
+    "xtick.labelsize": 6.5,
+    "ytick.labelsize": 6.5,
+    "xtick.direction": "in",
+    "ytick.direction": "in",
+    "xtick.major.width": 0.6,
+    "ytick.major.width": 0.6,
+    "xtick.minor.visible": True,
+    "xtick.minor.width": 0.4,
+    "legend.fontsize": 6.5,
+    "legend.frameon": False,
+    "legend.handlelength": 2.0,
+    "lines.linewidth": 0.9,
+    "lines.solid_joinstyle": "round",
+    "savefig.dpi": DOTS_PER_INCH,
+    "svg.hashsalt": "spinfit",  # the same ids in every run
+}
+
+
+def styled():
+    """Return a context in which figures are built and saved in the project's style."""
+    return rc_context(SETTINGS)
+
+
+def part_colour(index: int) -> tuple[str, tuple]:
+    """Return colour and dashes of the `index`-th species."""
+    return PARTS[index % len(PARTS)], DASHES[index % len(DASHES)]
