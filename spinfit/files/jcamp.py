@@ -95,6 +95,12 @@ def _number(block: _Block, label: str, file: str) -> float | None:
     return value
 
 
+def _last_digit(text: str) -> float:
+    """Return one unit of the last digit in which a label's number is written: 0.0001 for 0.0183."""
+    match = re.match(r"[+-]?\d*[.,]?(\d*)(?:[eE]([+-]?\d{1,3}))?", text)
+    return 10.0 ** (int(match[2] or 0) - len(match[1]))
+
+
 def _affn(line: str) -> list[float] | None:
     """Return the numbers of a line in free form, signs serving as separators (PAC); None when it is another form."""
     if _AFFN_LINE.fullmatch(line) is None:
@@ -194,7 +200,8 @@ def _abscissas(block: _Block, table: _Ordinates, notes: list[Note], file: str) -
         first = stated[0] if len(stated) else 0.0
     if last is not None and points is not None and points > 1:
         step = (last - first) / (points - 1)
-        if delta is not None and abs(delta - step) * (points - 1) > abs(step) * 0.5:
+        rounding = _last_digit(block.labels["DELTAX"][0]) if delta is not None else 0.0
+        if delta is not None and (abs(delta - step) - rounding) * (points - 1) > abs(step) * 0.5:
             notes.append(
                 ("jcamp_step", f"DELTAX is {delta:g}, FIRSTX, LASTX and NPOINTS give {step:g}; these are used")
             )
