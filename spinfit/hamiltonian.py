@@ -276,7 +276,8 @@ def systems(species: Species, *, perturb: bool = False, negligible: float = NEGL
     result = []
     for sites, weight in arrangements(exact, ways).items():
         h0, zeeman, everything = _assemble(electrons, spins, sites, resolved, species.nuclei)
-        result.append(System(h0, zeeman, everything, len(spins), frames, weight, label(sites, resolved), tuple(weak)))
+        name = label(sites, species.nuclei, resolved)
+        result.append(System(h0, zeeman, everything, len(spins), frames, weight, name, tuple(weak)))
     return tuple(result)
 
 

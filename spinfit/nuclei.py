@@ -94,12 +94,11 @@ class Exact(NamedTuple):
 
 
 class Site(NamedTuple):
-    """A nuclear spin in the matrix: kind `kind` of nucleus `nucleus`; `spin` is I, or F of `count` nuclei."""
+    """A nuclear spin in the matrix: kind `kind` of nucleus `nucleus`; `spin` is I, or F of equivalent ones."""
 
     nucleus: int
     kind: int
     spin: float
-    count: int
 
 
 def turned(values: Tensor, tilt: Angles) -> Tensor:
@@ -222,10 +221,10 @@ def _couplings(nucleus: int, index: int, kind: Kind, count: int) -> list[tuple[f
         return [(1.0, ())]
     if count == 1 or np.any(kind.quadrupole):
         # I.P.I of each nucleus mixes the total spins, so nuclei with P stand in the matrix one by one.
-        return [(1.0, (Site(nucleus, index, kind.spin, 1),) * count)]
+        return [(1.0, (Site(nucleus, index, kind.spin),) * count)]
     states = multiplicity(kind.spin) ** count
     return [
-        (often * multiplicity(total) / states, (Site(nucleus, index, total, count),) if total else ())
+        (often * multiplicity(total) / states, (Site(nucleus, index, total),) if total else ())
         for total, often in coupled_spins(kind.spin, count)
     ]
 
@@ -264,10 +263,21 @@ def arrangements(
     return weights
 
 
-def label(sites: tuple[Site, ...], resolved: list[tuple[Kind, ...]]) -> str:
-    """Return "63Cu, 1H F=3/2", or "" without nuclear spins."""
+def label(sites: tuple[Site, ...], nuclei: tuple[Nucleus, ...], resolved: list[tuple[Kind, ...]]) -> str:
+    """Return "63Cu, 1H F=3/2", or "" without nuclear spins.
+
+    F is the total spin of equivalent nuclei.  A nucleus with a name has it in brackets; several of
+    the same isotope or element without names are numbered, "14N_1".
+    """
     parts = []
     for site in sites:
-        name = resolved[site.nucleus][site.kind].name
-        parts.append(f"{name} F={Fraction(site.spin)}" if site.count > 1 else name)
+        nucleus, kind = nuclei[site.nucleus], resolved[site.nucleus][site.kind]
+        alike = [k for k, one in enumerate(nuclei) if (one.isotope, one.element) == (nucleus.isotope, nucleus.element)]
+        name = kind.name
+        if nucleus.name:
+            name = f"{name} ({nucleus.name})"
+        elif len(alike) > 1:
+            name = f"{name}_{alike.index(site.nucleus) + 1}"
+        coupled = nucleus.count > 1 and not np.any(kind.quadrupole)
+        parts.append(f"{name} F={Fraction(site.spin)}" if coupled else name)
     return ", ".join(parts)
