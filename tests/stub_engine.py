@@ -45,7 +45,7 @@ def centers(species, sweep) -> list[tuple[float, float]]:
         center = sweep.frequency / (g * MU_B_OVER_H)
         moves = [(0.0, 1.0)]
         if spin.S > 0.5:
-            bias = 0.0 if sweep.temperature is None else np.tanh(spin.D / 1000 / sweep.temperature)
+            bias = 0.0 if sweep.temperature is None else np.tanh(1 / sweep.temperature)
             moves = [(spin.D / 56, 0.5 + 0.3 * bias), (-spin.D / 56, 0.5 - 0.3 * bias)]
         for nucleus in species.nuclei[:1]:
             splitting = principal(nucleus.A)[0] / 28

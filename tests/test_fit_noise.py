@@ -2,6 +2,7 @@
 
 import numpy as np
 import pytest
+from scipy.linalg import toeplitz
 from scipy.signal import lfilter
 
 from spinfit.fitting.noise import autocorrelation, local_covariance, noise_level, residual_noise, runs_test
@@ -67,8 +68,6 @@ def test_white_noise_is_mostly_called_white():
 
 def test_applied_is_the_toeplitz_matrix():
     """Against scipy.linalg.toeplitz."""
-    from scipy.linalg import toeplitz
-
     rng = np.random.default_rng(5)
     noise = ar1(rng, 400, 0.8)
     found = residual_noise(noise, np.zeros((400, 0)))

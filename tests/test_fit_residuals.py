@@ -6,13 +6,15 @@ from dataclasses import replace
 import fit_jobs as jobs
 import numpy as np
 import pytest
-from scipy.optimize import curve_fit
+from scipy.optimize import curve_fit, lsq_linear
+from scipy.special import wofz
 from stub_engine import line, simulate
 
 from spinfit.errors import InputError
 from spinfit.fitting.residuals import Problem, broadened_view, full_view
 from spinfit.fitting.signals import Signals, Stage, narrowest_width
 from spinfit.fitting.solve import Goal, bounded_step, descend
+from spinfit.units import MU_B_OVER_H
 
 
 def ready(job):
@@ -21,8 +23,6 @@ def ready(job):
 
 
 def explicit(x, g1, g2, g3, width, scale, a, b):
-    from spinfit.units import MU_B_OVER_H
-
     total = sum(line(x, jobs.FREQUENCY / (g * MU_B_OVER_H), width, 0.0, "derivative") for g in (g1, g2, g3))
     return scale * total + a + b * (x - 335)
 
@@ -131,8 +131,6 @@ def test_active_limit_is_reached_exactly():
 
 
 def test_bounded_step_against_scipy():
-    from scipy.optimize import lsq_linear
-
     rng = np.random.default_rng(15)
     jacobian, residual = rng.normal(size=(40, 4)), rng.normal(size=40)
     low, high = np.full(4, -0.05), np.full(4, 0.05)
@@ -179,8 +177,6 @@ def test_limits_that_exclude_the_start_or_are_swapped():
 
 def test_narrowest_width_of_a_voigt_line():
     """Peak to peak of the Voigt derivative, from scipy.special.wofz on a fine axis, within 2 %."""
-    from scipy.special import wofz
-
     gaussian, lorentzian = 0.5, 0.3
     sigma, gamma = gaussian / 2, lorentzian * math.sqrt(3) / 2
     x = np.linspace(-2, 2, 40001)

@@ -115,9 +115,8 @@ def _conclude(problem: Problem, view: View, descent: Descent, *, finished: bool,
 
 
 def limits_reached(problem: Problem, free: Array) -> NDArray[np.bool_]:
-    """Which parameters ended on a limit, to a millionth of their typical step."""
-    near = np.array([1e-6 * problem.parameters[name].scale for name in problem.names])
-    return (free - problem.lower <= near) | (problem.upper - free <= near)
+    """Which parameters ended on a limit."""
+    return (free <= problem.lower) | (free >= problem.upper)
 
 
 def _engine_note(warning: Any) -> Note:

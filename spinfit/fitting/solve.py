@@ -25,6 +25,10 @@ Array = NDArray[np.float64]
 
 # Singular values of the Jacobian in natural steps below this are directions the data do not see.
 _BLIND = 1e-6
+# The step that ends a descent is at most this many natural steps long in each parameter.
+_LONGEST = 2.0
+# A parameter this close to a limit, in typical steps, is on it.
+_ON_LIMIT = 1e-4
 
 
 @dataclass(frozen=True)
@@ -119,16 +123,12 @@ class _Run:
             self.latest = (point, self.problem.jacobian(point, self.view))
         jacobian = self.latest[1]
         low, high = self._room(point.free)
+        low, high = np.maximum(low, -_LONGEST), np.minimum(high, _LONGEST)
         step, gain = bounded_step(point.residual, jacobian[:, self.moving] * self.steps[self.moving], low, high)
         if gain <= self.goal.gain * max(point.chi2 / self.view.points, 1e-12):
             free = point.free.copy()
             free[self.moving] += step * self.steps[self.moving]
-            # A limit is reached exactly, not to rounding.
-            free[self.moving[step == low]] = self.problem.lower[self.moving[step == low]]
-            free[self.moving[step == high]] = self.problem.upper[self.moving[step == high]]
-            last = self.evaluate(np.clip(free, self.problem.lower, self.problem.upper))
-            if self.best is not None and last.chi2 <= self.best.chi2 * (1 + 1e-9):
-                self.best = last
+            self.evaluate(np.clip(free, self.problem.lower, self.problem.upper))
             raise _Converged
         return jacobian[:, self.moving] * self.steps[self.moving]
 
@@ -204,7 +204,19 @@ def descend(
         raise Interrupted(run.best) from None
     assert run.best is not None
     jacobian = None if run.latest is None else run.latest[1]
-    return Descent(run.best, jacobian, converged, message)
+    return Descent(_on_limits(run.best, problem, view), jacobian, converged, message)
+
+
+def _on_limits(point: Point, problem: Problem, view: View) -> Point:
+    """Put parameters that are next to a limit on it: the optimiser keeps strictly inside."""
+    near = np.array([_ON_LIMIT * problem.parameters[name].scale for name in problem.names])
+    free = np.where(point.free - problem.lower <= near, problem.lower, point.free)
+    free = np.where(problem.upper - point.free <= near, problem.upper, free)
+    if np.array_equal(free, point.free):
+        return point
+    moved = problem.evaluate(free, view)
+    per_point = point.chi2 / max(view.points, 1)
+    return moved if moved.chi2 <= point.chi2 + 1e-2 * per_point else point
 
 
 def _drive(run: _Run) -> tuple[bool, str]:

@@ -32,8 +32,9 @@ _NO_LINE = 1e-3
 _BEYOND = 0.02
 # A flipped sign that lowers the fit by less than this (2 standard deviations) is not excluded.
 _SIGN_CHI2 = 4.0
-# Runs test: 1 trace of white noise in 30 000.
+# Standardised runs and correlation of neighbours: less than 1 trace of white noise in 30 000 goes so far.
 _RUNS_Z = -4.0
+_NEIGHBOURS_Z = 4.5
 _LOOK_POINTS = 1024
 
 
@@ -171,13 +172,13 @@ def _residual_notes(point: Point, view: View, spread: Covariances) -> list[Note]
         at += seen.field.size
         runs = runs_test(residual)
         neighbours = float(autocorrelation(residual, 1)[-1])
-        excess = noise.variance
-        if runs.z < _RUNS_Z or noise.uneven > 6:
+        linked = runs.z < _RUNS_Z or neighbours * math.sqrt(residual.size) > _NEIGHBOURS_Z
+        if linked or noise.uneven > 6:
             detail = f"{runs.runs} runs of one sign, {runs.expected:.0f} expected; correlation {neighbours:.2f}"
             where = ", largest on the lines" if noise.uneven > 4 else ""
             text = (
-                f"The residuals of {trace.name} are systematic ({detail}{where}; variance {excess:.2f} times that of "
-                "the noise): the model misses something or the noise is correlated; uncertainties were widened."
+                f"The residuals of {trace.name} are systematic ({detail}{where}; variance {noise.variance:.2f} times "
+                "that of the noise): the model misses something or the noise is correlated; uncertainties were widened."
             )
             notes.append(Note("systematic_residuals", text))
     return notes
