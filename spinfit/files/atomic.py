@@ -21,7 +21,7 @@ def _umask() -> int:
 def _refusal(path: Path, error: OSError) -> InputError:
     """Say in one line why a file cannot be written."""
     reason = error.strerror or str(error)
-    if not path.parent.is_dir():
+    if not os.path.isdir(path.parent):
         return InputError(f"there is no folder {path.parent}", "make it first, or write elsewhere", file=path)
     return InputError(f"cannot be written ({reason})", "choose another place", file=path)
 
@@ -43,17 +43,20 @@ def whole_file(path: str | Path) -> Iterator[Path]:
     InputError
         When the place cannot be written to, or is a folder.
     """
-    target = Path(os.path.realpath(path))
-    if target.is_dir():
+    try:
+        target = Path(os.path.realpath(path))
+    except (OSError, ValueError) as error:
+        raise InputError(f"cannot be written ({error})", "choose another name", file=path) from error
+    if os.path.isdir(target):
         raise InputError("is a folder", "name a file in it", file=path)
-    if target.exists() and not target.is_file():  # a pipe or device cannot be replaced, only written to
+    if os.path.exists(target) and not os.path.isfile(target):  # a pipe or device cannot be replaced, only written to
         yield target
         return
     try:
         handle, name = tempfile.mkstemp(prefix=f".{target.stem[:100]}.", suffix=target.suffix, dir=target.parent)
         os.close(handle)
-    except (OSError, ValueError) as error:
-        raise _refusal(target, error if isinstance(error, OSError) else OSError(str(error))) from error
+    except OSError as error:
+        raise _refusal(target, error) from error
     beside = Path(name)
     try:
         yield beside

@@ -22,6 +22,7 @@ _SPIKE_RATIO = 4.0  # times the range of six neighbours; a Gaussian line of 2 po
 _PAIR_RATIO = 6.0  # times the range of six neighbours; a Gaussian line of 2 points FWHM reaches 4
 _LONE = 6.0  # noise levels outside what the other sweep saw near that field
 _LONE_RATIO = 3.0  # and that many times the height of what it saw there
+_SEEN = 4.0  # noise levels; lower is noise, not something that the other sweep saw
 _FOREIGN = 10.0  # times the difference of two other runs
 _LONE_MOST = 0.02  # share of points; more are no glitches, the sweeps differ
 
@@ -41,23 +42,22 @@ class Run:
 
 def _turning_points(field: Floats, least: float) -> list[int]:
     """Return the indices where the field turns by at least `least`; less is jitter of the reading."""
-    turns, extreme, way = [0], 0, 0
-    # Only strict local extremes can be turning points: a few of very many points.
+    # Only local extremes can be turning points: among very many points, a few.
     step = np.sign(np.diff(field))
     moving = np.flatnonzero(step)
     flips = moving[1:][step[moving[1:]] != step[moving[:-1]]]
+    turns, low, high, way = [0], 0, 0, 0
     for i in [*flips.tolist(), len(field) - 1]:
-        change = field[i] - field[extreme]
-        if way == 0:
-            if abs(change) >= least:
-                way, extreme = (1 if change > 0 else -1), i
-            elif abs(field[i] - field[0]) > abs(field[extreme] - field[0]):
-                extreme = i
-        elif change * way >= 0:
-            extreme = i
-        elif abs(change) >= least:
-            turns.append(extreme)
-            way, extreme = -way, i
+        if way >= 0 and field[i] > field[high]:
+            high = i
+        if way <= 0 and field[i] < field[low]:
+            low = i
+        if way >= 0 and field[high] - field[i] >= least:
+            turns += [high] if way else []  # the first way taken is no turn
+            way, low = -1, i
+        elif way <= 0 and field[i] - field[low] >= least:
+            turns += [low] if way else []
+            way, high = 1, i
     return [*turns, len(field)]
 
 
@@ -91,7 +91,7 @@ def find_runs(field: Floats) -> tuple[list[Run], Bools]:
         if b - a <= 2 and n > 20:
             stray[a:b] = True
             continue
-        turns = _turning_points(field[a:b], max(0.02 * span, 10 * median))
+        turns = _turning_points(field[a:b], max(0.02 * span, min(10 * median, 0.2 * span)))
         for c, d in zip(turns[:-1], turns[1:], strict=True):
             end = min(a + d, b - 1)
             runs.append(Run(a + c, a + d, "up" if field[end] >= field[a + c] else "down"))
@@ -186,8 +186,8 @@ def find_unrepeated(a: tuple[Floats, Floats], b: tuple[Floats, Floats]) -> Bools
 
     The two are aligned by `lag` and brought to one baseline (medians in 20 windows).  A point of `a` is alone when it
     lies outside the range of `b` near its field by more than 6 noise levels and 3 times the height over the baseline
-    that `b` has there, noise aside; points beside it that are outside by 3 noise levels go with it.  A line that is in
-    both is never alone, however narrow, nor one that lost up to three quarters of its height.
+    that `b` has there (below 4 noise levels it has none); points beside it that are outside by 3 noise levels go with
+    it.  A line that is in both is never alone, however narrow, nor one that lost up to three quarters of its height.
 
     Parameters
     ----------
@@ -224,8 +224,8 @@ def find_unrepeated(a: tuple[Floats, Floats], b: tuple[Floats, Floats]) -> Bools
     height = np.interp(field, grid, np.maximum(top - base, base - bottom))
     top, bottom = np.interp(field, grid, top), np.interp(field, grid, bottom)
     outside = np.where(inside, np.maximum(signal - top, bottom - signal), 0.0)
-    # Noise alone spans about 2.5 levels to either side.
-    alone = outside > np.maximum(_LONE * noise, _LONE_RATIO * (height - 2.5 * noise))
+    height = np.where(height > _SEEN * noise, height, 0.0)
+    alone = outside > np.maximum(_LONE * noise, _LONE_RATIO * height)
     labels, _ = ndimage.label(outside > 3 * noise)
     with_them = np.isin(labels, np.unique(labels[alone & (labels > 0)]))
     alone = alone | with_them
@@ -261,6 +261,6 @@ def find_foreign(sweeps: list[tuple[Floats, Floats]]) -> list[int]:
     for i in range(n):
         mine = {j: apart[i, j] for j in range(n) if (i, j) in apart and apart[i, j] is not None}
         theirs = [apart[j, k] for j in mine for k in mine if j != k and apart[j, k] is not None]
-        if len(mine) >= 2 and theirs and min(mine.values()) > _FOREIGN * min(theirs):
+        if len(mine) >= 2 and theirs and min(mine.values()) > _FOREIGN * max(min(theirs), noise_level(sweeps[i][1])):
             found.append(i)
     return found
