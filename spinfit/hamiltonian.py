@@ -78,6 +78,8 @@ class System:
     weight : float
         Share of this system among all of the species', counted in states: with every state of a
         system populated equally by 1/n, weight/n is the population of a state.  Weights sum to 1.
+        With a temperature, each system has its own partition function: exact for isotopologues;
+        between total spins F it neglects terms of order (A/kT)^2.
     label : str
         Which isotopologue, and total spins F of equivalent nuclei: "63Cu, 1H F=3/2".
     weak : tuple of Weak

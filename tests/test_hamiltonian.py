@@ -379,6 +379,16 @@ def test_a_and_p_refer_to_different_isotopes_where_they_must() -> None:
     assert spinless.share == pytest.approx(1 - 0.264 - 0.212, abs=2e-3)
 
 
+def test_the_most_abundant_isotope_counts_not_the_lightest() -> None:
+    """B: A and P are those of 11B (80 %); g_n 0.600 and 1.792, Q 0.0846 (I = 3) and 0.0406 b (I = 3/2), from memory."""
+    heavy, light = kinds(Nucleus(element="B", A=(30.0,), P=(-1, -1, 2)))
+    assert (heavy.name, light.name) == ("11B", "10B")
+    np.testing.assert_allclose(heavy.hyperfine, 30 * np.eye(3))
+    np.testing.assert_allclose(heavy.quadrupole, np.diag([-1, -1, 2]))
+    assert light.hyperfine[0, 0] == pytest.approx(30 * 0.600 / 1.792, rel=2e-3)
+    assert light.quadrupole[2, 2] == pytest.approx(2 * (0.0846 / 15) / (0.0406 / 3), rel=2e-3)
+
+
 def test_spin_scales_the_quadrupole_tensor() -> None:
     """Sb: 121Sb has I = 5/2, 123Sb I = 7/2; P ~ Q/[I(2I-1)] with Q = -0.543 and -0.692 b (from memory)."""
     light, heavy = kinds(Nucleus(element="Sb", A=(100.0,), P=(-10, -10, 20)))
