@@ -350,6 +350,12 @@ def test_tables_of_lines_go_by_their_headings(folder, heading, message):
     assert "bad.csv" in str(caught.value)
 
 
+def test_a_traces_own_axis_goes_with_the_samples_direction(folder):
+    text = changed(POWDER_JOB, FILE, FILE + '\nangle = "1 deg"\naxis = [1, 0, 0]')
+    path = write(folder, '[sample]\nform = "crystal"\n' + text, "job.toml")
+    assert "trace.1.axis: axis and from are parallel; write both here" in refusal(read_job, path)
+
+
 def test_crystals_need_an_angle_for_each_trace(folder):
     path = write(folder, '[sample]\nform = "crystal"\n' + POWDER_JOB, "job.toml")
     message = 'trace.1.angle: is missing, here and in the header of data/kiln-07.csv; write angle = "140 deg"'

@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 from spinfit.errors import InputError
 from spinfit.files.raw import RawTrace
 from spinfit.files.reading import Assembled, assemble, read
-from spinfit.files.toml_sample import conditions, plane
+from spinfit.files.toml_sample import conditions, parallel, plane
 from spinfit.files.toml_table import Given, Table, describe
 from spinfit.fitting.data import Lines, Trace
 from spinfit.sweep import Sample
@@ -96,11 +96,15 @@ class _Source:
                 if key in table:
                     right = f'it needs [sample] form = "crystal": take {key} out'
                     raise table.error(key, f"means nothing for a {sample.form}", right)
+        turning = plane(table)
+        if parallel(turning["axis"] or sample.axis, turning["start"] or sample.start):
+            key = "axis" if "axis" in table else "from"
+            raise table.error(key, "axis and from are parallel", "write both here: from is the field at angle 0")
         scale = table.number("field_scale")
         if scale is not None and scale <= 0:
             raise table.error("field_scale", f"{scale:g}", "a scale is positive, near 1")
         return {
-            **plane(table),
+            **turning,
             "group": table.name("group"),
             "field_offset": table.quantity("field_offset", "field"),
             "field_scale": scale,
