@@ -23,8 +23,11 @@ from spinfit.spectrum import simulate as _engine
 
 Array = NDArray[np.float64]
 
-# The engine is asked for this part of the job's tolerance, so that its choices do not show as noise.
-_FINER = 0.1
+# The engine's error, relative to the largest signal, is kept below this part of the noise relative to
+# the same: a line is drawn by about a hundred points, so that it then stays below a fifth of what the
+# noise leaves open.  Never coarser than the job's tolerance, nor finer than a tenth of it.
+_ERROR_TO_NOISE = 0.02
+_FINEST = 0.1
 
 
 def fit(job: Job, *, progress: Progress | None = None, simulate: Simulate = _engine) -> Outcome:
@@ -55,12 +58,23 @@ def fit(job: Job, *, progress: Progress | None = None, simulate: Simulate = _eng
         raise InputError("the job has no trace", "add a [[trace]] table", file=job.path or None)
     try:
         problem = Problem(job, simulate)
-        view = full_view(job.traces, problem.noises, _FINER * job.tolerance)
+        view = full_view(job.traces, problem.noises, engine_tolerance(problem))
         check_before(problem, view)
         descent, finished = _search(problem, view, progress)
     except InputError as error:
         raise error.at(file=job.path or None) from None
     return _conclude(problem, view, descent, finished=finished, begun=begun)
+
+
+def engine_tolerance(problem: Problem) -> float:
+    """The tolerance that the noise of the traces allows, within a decade of the job's."""
+    allowed = problem.job.tolerance
+    for trace, noise in zip(problem.job.traces, problem.noises, strict=True):
+        kept = trace.signal[trace.used]
+        largest = float(np.abs(kept - np.median(kept)).max()) if kept.size else 0.0
+        if largest > 0:
+            allowed = min(allowed, _ERROR_TO_NOISE * noise / largest)
+    return max(allowed, _FINEST * problem.job.tolerance)
 
 
 def _search(problem: Problem, view: View, progress: Progress | None) -> tuple[Descent, bool]:
