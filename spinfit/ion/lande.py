@@ -116,14 +116,16 @@ def moment(g: float | None, J: float) -> float:
 def orbital_to_spin(S: float, L: float, J: float) -> float | None:
     """Return r = <L>/<S> of a free level, the yardstick of a surviving orbital moment.
 
-    r = [J(J+1) + L(L+1) - S(S+1)] / [J(J+1) - L(L+1) + S(S+1)] from the projections of L and S on J.
-    For J = 0 the limit of the stretched states is used, -1 x L/S with L against S below half filling:
-    the caller knows the filling, so None is returned here; None also where <S> vanishes.
+    r = [J(J+1) + L(L+1) - S(S+1)] / [J(J+1) - L(L+1) + S(S+1)], from the projections of L and S on J; for
+    J = 0, where both vanish while L and S stay antiparallel and equal, -L/S.  None where there is no
+    orbital moment or no spin.
     """
-    below = J * (J + 1) - L * (L + 1) + S * (S + 1)
-    if J == 0 or below == 0:
+    if S == 0 or L == 0:
         return None
-    return (J * (J + 1) + L * (L + 1) - S * (S + 1)) / below
+    if J == 0:
+        return -L / S
+    below = J * (J + 1) - L * (L + 1) + S * (S + 1)
+    return None if below == 0 else (J * (J + 1) + L * (L + 1) - S * (S + 1)) / below
 
 
 def lookup(name: str, *, g_spin: float | None = None, g_orbital: float = 1.0) -> IonLevel:

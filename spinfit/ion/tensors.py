@@ -8,10 +8,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spinfit.errors import InputError
-from spinfit.ion.model import IonModel, Levels, solve
+from spinfit.ion.model import DENSE, IonModel, Levels, solve
 from spinfit.ion.names import half
 from spinfit.ion.terms import hund
 from spinfit.operators import spin_matrices, stevens
+
+PURE = 0.85
+"""Smallest overlap with pure spin states at which levels are still called those of a spin."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -185,7 +188,13 @@ def spin_hamiltonian(model: IonModel, *, levels: Levels | None = None, spin: flo
         describes it (ask for the g of a doublet).
     """
     levels = solve(model) if levels is None else levels
-    reference, S = _spin_states(model, spin)
+    if model.space == "level":
+        raise InputError("the ground level alone has no spin manifold", 'use the space "configuration" or "term"')
+    # The spin of the ground manifold is not known yet; Hund's is the largest it can be.
+    few = None if len(levels.states) <= DENSE else min(24, 3 * (round(2 * hund((model.shell,))[0]) + 1))
+    reference, S = spin_states(model, solve(replace(model, zeta=0.0), lowest=few))
+    if spin is not None and spin != S:
+        raise InputError(f"the ground state has S = {half(S)}, not {half(spin)}", "change the crystal field or S")
     size = round(2 * S) + 1
     if len(levels.energies) < size:
         raise InputError(f"{len(levels.energies)} levels", f"compute at least {size}", place="lowest")
@@ -193,7 +202,7 @@ def spin_hamiltonian(model: IonModel, *, levels: Levels | None = None, spin: flo
     left, singular, right = np.linalg.svd(overlap)
     turn = left @ right
     purity = float(singular[-1])
-    if purity < 0.3:
+    if purity < PURE:
         raise InputError(
             f"the lowest {size} levels of {model.name or model.shell} are not those of a spin S = {half(S)}",
             "spin-orbit coupling mixes them too strongly: ask for the g of a doublet",
@@ -203,12 +212,19 @@ def spin_hamiltonian(model: IonModel, *, levels: Levels | None = None, spin: flo
     return _resolve(S, effective, moments, purity)
 
 
-def _spin_states(model: IonModel, spin: float | None) -> tuple[NDArray, float]:
-    """Return the pure states |S M>, M falling, of the ground manifold without spin-orbit coupling."""
-    if model.space == "level":
-        raise InputError("the ground level alone has no spin manifold", 'use the space "configuration" or "term"')
-    highest = round(2 * hund((model.shell,))[0]) + 1
-    without = solve(replace(model, zeta=0.0), lowest=min(24, 3 * highest) if model.shell.l == 3 else None)
+def spin_states(model: IonModel, without: Levels) -> tuple[NDArray, float]:
+    """Return the pure states |S M>, M falling, of the ground manifold and its S.
+
+    Parameters
+    ----------
+    without : Levels
+        Of the same model without spin-orbit coupling.
+
+    Raises
+    ------
+    InputError
+        When that ground state is orbitally degenerate.
+    """
     size = without.degeneracies()[0]
     _, spins = without.matrices(slice(0, size))
     square = np.einsum("iab,ibc->ac", spins, spins)
@@ -221,8 +237,6 @@ def _spin_states(model: IonModel, spin: float | None) -> tuple[NDArray, float]:
             f"({size}-fold)",
             "lower the symmetry of the crystal field, or ask for the g of a doublet",
         )
-    if spin is not None and spin != S:
-        raise InputError(f"the ground state has S = {half(S)}, not {half(spin)}", "change the crystal field or S")
     _, vectors = np.linalg.eigh(spins[2])
     states = without.states[:, :size] @ vectors[:, ::-1]
     raising = spins[0] + 1j * spins[1]
