@@ -32,6 +32,11 @@ def slope(c: Array, t: Array) -> Array:
     return c[1] + t * (2 * c[2] + t * (3 * c[3] + t * (4 * c[4] + t * 5 * c[5])))
 
 
+def curvature(c: Array, t: Array) -> Array:
+    """Return d2/dt2 of the polynomial at t; c has shape (6, ...)."""
+    return 2 * c[2] + t * (6 * c[3] + t * (12 * c[4] + t * 20 * c[5]))
+
+
 def refine(c: Array, low: Array, high: Array, rounds: int = 5) -> Array:
     """Return the root inside each bracket [low, high] over which the polynomial changes sign.
 

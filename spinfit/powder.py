@@ -14,20 +14,20 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit import hermite
 from spinfit.branches import (
     Branches,
     FieldNodes,
     KnotData,
     Request,
     count_roots,
-    parabola,
     trace_branches,
 )
 from spinfit.hamiltonian import System
 from spinfit.lineshape import FieldGrid
+from spinfit.loops import add_looping
 from spinfit.orientations import Mesh, Rings, Symmetry, symmetry_of
 from spinfit.resonance import can_reach, find
+from spinfit.sheets import RICHARDSON, Histograms, add_points, add_spread, cells, point_share, spacing
 
 Array = NDArray[np.float64]
 
@@ -75,17 +75,17 @@ def powder(system: System, request: Request, grid: FieldGrid) -> tuple[dict[int,
     if symmetry.kind == "point":
         return _one_direction(system, request, grid, report)
     nodes, rings, data, smooth = _refine(system, symmetry, request, report)
-    histogram = np.zeros(grid.count)
+    histograms = Histograms(grid)
     counts = count_roots(data)
     single = _single(data, counts) & smooth
     if single.any():
-        _sum_branches(rings, trace_branches(data, np.flatnonzero(single)), request, grid, histogram, report)
+        _sum_branches(rings, trace_branches(data, np.flatnonzero(single)), request, histograms, report)
     other = ~single & (counts.any(axis=1) | _touches(data))
     if other.any():
-        _sum_loops(rings, data, np.flatnonzero(other), request, grid, histogram, report)
+        _sum_loops(rings, data, np.flatnonzero(other), request, histograms, report)
     report.directions, report.diagonalisations = len(nodes.directions), nodes.count
     report.pairs, report.looping = int(single.sum()), int(other.sum())
-    return {0: histogram}, report
+    return histograms.orders, report
 
 
 def _one_direction(
@@ -100,14 +100,9 @@ def _one_direction(
         temperature=request.temperature,
     )
     report.directions, report.diagonalisations, report.pairs = 1, 1, len(got.field)
-    return {0: _deposit(grid, got.field, got.weight, request)}, report
-
-
-def _deposit(grid: FieldGrid, fields: Array, weights: Array, request: Request) -> Array:
-    out = grid.deposit(fields, weights)
-    if grid.start < 0:  # the spectrum is even in B
-        out += grid.deposit(-fields, weights)
-    return out
+    histograms = Histograms(grid)
+    histograms.points(got.field, got.weight)
+    return histograms.orders, report
 
 
 def _rings(kind: str, size: int) -> Rings:
@@ -232,9 +227,7 @@ def _probe_azimuths(rings: Rings) -> int:
     return {"axial": 1, "octant": 2, "quarter": 4, "half": 8}[rings.kind] * min(rings.harmonics, 24)
 
 
-def _sum_branches(
-    rings: Rings, branches: Branches, request: Request, grid: FieldGrid, histogram: Array, report: Report
-) -> None:
+def _sum_branches(rings: Rings, branches: Branches, request: Request, histograms: Histograms, report: Report) -> None:
     """Add every branch, continued to a mesh fine enough for it."""
     x, y = _continued(branches.field, branches.weight)
     inverse = _squared(branches.field)
@@ -242,47 +235,29 @@ def _sum_branches(
     for size in sorted(set(sizes)):
         rows = [i for i, s in enumerate(sizes) if s == size]
         mesh = Mesh(rings.kind, *size)
-        weights = mesh.weights()
-        step = max(1, 4_000_000 // weights.size)
+        step = max(1, 2_000_000 // mesh.weights().size)
         for start in range(0, len(rows), step):
             part = rows[start : start + step]
             both = rings.to_mesh(np.concatenate([x[part], y[part]]), mesh)
-            fields, strength = _restored(both[: len(part)], both[len(part) :], inverse[part][:, :, None])
-            histogram += _deposit(grid, fields, strength * weights, request)
+            fields, weights = _restored(both[: len(part)], both[len(part) :], inverse[part][:, :, None])
             report.mesh_points += fields.size
+            apart = spacing(fields, mesh)
+            if apart.max() <= 1.05 * request.spacing:
+                histograms.points(fields, weights * mesh.weights())
+                continue
+            share = point_share(apart, request.spacing)
+            for one in range(len(part)):
+                b, w, u = fields[one].ravel(), weights[one].ravel(), share[one].ravel()
+                add_points(histograms, mesh, b, w, u)
+                for stride, factor in RICHARDSON:
+                    add_spread(histograms, b, w * (1 - u), *cells(mesh, stride), factor)
 
 
 def _sum_loops(
-    rings: Rings,
-    data: KnotData,
-    rows: NDArray[np.intp],
-    request: Request,
-    grid: FieldGrid,
-    histogram: Array,
-    report: Report,
+    rings: Rings, data: KnotData, rows: NDArray[np.intp], request: Request, histograms: Histograms, report: Report
 ) -> None:
-    """Add pairs whose resonances come and go: solved on the mesh from continued level differences."""
-    size = 200
-    mesh = Mesh(rings.kind, 4000 if rings.kind == "axial" else size, size)
-    weights = mesh.weights().ravel()
+    """Add pairs whose resonances come and go."""
+    size = _ladder_size(max(2 * rings.rings, 4.0 * request.tolerance**-0.5))
+    mesh = Mesh(rings.kind, 20 * size if rings.kind == "axial" else size, size)
     for row in rows:
-        nodes = np.concatenate([data.gap[row], data.slope[row], data.strength[row]])
-        k = len(data.fields)
-        gap, slope, strength = rings.to_mesh(nodes, mesh).reshape(3, k, -1)
-        for leaf in data.leaves:
-            half = 0.5 * (data.fields[leaf[2]] - data.fields[leaf[0]])
-            f, g = gap[leaf], slope[leaf] * half
-            near = np.zeros(f.shape[1], dtype=bool)
-            for a in (0, 1):
-                near |= can_reach(f[a], f[a + 1], g[a], g[a + 1])
-            at = np.flatnonzero(near)
-            if not len(at):
-                continue
-            c = hermite.quintic(f[:, at], g[:, at])
-            q, low, high = hermite.brackets(c, f[:, at])
-            c, at = c[:, q], at[q]
-            t = hermite.refine(c, low, high)
-            fields = data.fields[leaf[1]] + half * t
-            steep = np.maximum(np.abs(hermite.slope(c, t)) / half, 1e-6)
-            histogram += _deposit(grid, fields, parabola(strength[leaf][:, at], t) / steep * weights[at], request)
-            report.mesh_points += len(at)
+        report.mesh_points += add_looping(histograms, rings, mesh, data, row, request)
