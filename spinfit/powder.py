@@ -33,8 +33,8 @@ Array = NDArray[np.float64]
 
 LADDER = (4, 8, 16, 24, 32, 48, 64, 96)
 """Numbers of rings that are tried in turn."""
-LARGEST_MESH = 60_000
-"""Points of a two-dimensional mesh."""
+FLATNESS = 0.25
+"""Root of the curvature of a field over one step of the mesh, in line widths, at the default tolerance."""
 LARGEST_LINE = 200_000
 """Points of a one-dimensional mesh."""
 
@@ -203,24 +203,41 @@ def _ladder_size(wanted: float) -> int:
 
 
 def _mesh_for(rings: Rings, fields: Array, request: Request) -> list[tuple[int, int]]:
-    """Return for each branch the mesh on which neighbours lie within the request's spacing."""
+    """Return for each branch the mesh that its own spread over the sphere asks for.
+
+    Either neighbours lie within the request's spacing everywhere, so that the plain sum is
+    enough, or, where that takes many more points, simplices must be flat: the field may curve by
+    `FLATNESS` of the line within one step.
+    """
     probe = Mesh(rings.kind, 2 * rings.rings, _probe_azimuths(rings))
     values = rings.to_mesh(fields, probe)
-    along_theta = np.abs(np.diff(values, axis=1)).max(axis=(1, 2)) * probe.thetas
-    sizes_theta = np.maximum(along_theta / request.spacing, 2 * rings.rings)
+    thetas = _sizes(values, 1, probe.thetas, request, even=True)
+    thetas = np.maximum(thetas, 2 * rings.rings)
     if rings.kind == "axial":
-        limit = LARGEST_LINE
-        return [(min(_ladder_size(t), limit), 1) for t in sizes_theta]
-    closed = values if rings.kind == "octant" else np.concatenate([values, values[:, :, :1]], axis=2)
-    along_phi = np.abs(np.diff(closed, axis=2)).max(axis=(1, 2)) * probe.phis
-    sizes_phi = np.maximum(along_phi / request.spacing, _probe_azimuths(rings))
-    out = []
-    for t, p in zip(sizes_theta, sizes_phi, strict=True):
-        if t * p > LARGEST_MESH:
-            shrink = math.sqrt(LARGEST_MESH / (t * p))
-            t, p = max(t * shrink, 2 * rings.rings), max(p * shrink, 16)
-        out.append((_ladder_size(t), _ladder_size(p)))
-    return out
+        return [(min(_ladder_size(t), LARGEST_LINE), 1) for t in thetas[0]]
+    phis = _sizes(values, 2, probe.phis, request, even=rings.kind == "octant")
+    phis = np.maximum(phis, _probe_azimuths(rings))
+    plain, flat = thetas[0] * phis[0], thetas[1] * phis[1]
+    choice = np.where(plain <= 2.5 * flat, 0, 1)
+    row = np.arange(len(fields))
+    return [(_ladder_size(t), _ladder_size(p)) for t, p in zip(thetas[choice, row], phis[choice, row], strict=True)]
+
+
+def _sizes(values: Array, axis: int, intervals: int, request: Request, even: bool) -> Array:
+    """Return the intervals for close neighbours and for flat simplices, shape (2, branches)."""
+    if not even:
+        values = np.concatenate([values, np.take(values, [0, 1], axis)], axis)
+    first = np.diff(values, axis=axis)
+    second = np.diff(first, axis=axis)
+    slope = np.abs(first).max(axis=(1, 2)) * intervals
+    # even at the ends: there the second difference is twice the first
+    ends = np.maximum(
+        np.abs(first[:, :1] if axis == 1 else first[:, :, :1]).max(axis=(1, 2)),
+        np.abs(first[:, -1:] if axis == 1 else first[:, :, -1:]).max(axis=(1, 2)),
+    )
+    bend = np.maximum(np.abs(second).max(axis=(1, 2)), 2 * ends) * intervals**2
+    flatness = FLATNESS * (request.tolerance / 1e-3) ** 0.25
+    return np.stack([slope / request.spacing, np.sqrt(bend / request.scale) / flatness])
 
 
 def _probe_azimuths(rings: Rings) -> int:

@@ -147,7 +147,7 @@ def point_share(apart: Array, allowed: float) -> Array:
     allowed : float
         Distance up to which the plain sum is accurate, mT.
     """
-    x = np.clip((apart / allowed - 0.75) / 0.75, 0.0, 1.0)
+    x = np.clip((apart / allowed - 0.25) / 0.75, 0.0, 1.0)
     return 1.0 - x * x * x * (10 + x * (6 * x - 15))
 
 

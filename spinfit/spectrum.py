@@ -143,9 +143,10 @@ def _spacing(shape: Shape, tolerance: float) -> float:
     """Return how far apart in field neighbouring directions may lie, mT.
 
     A sum over directions spaced d apart in field aliases by the line's transform at 2 pi/d:
-    exp(-2 pi^2 sigma^2/d^2 - 2 pi gamma/d), which is set to a fifth of the tolerance.
+    exp(-2 pi^2 sigma^2/d^2 - 2 pi gamma/d), which is set to a twentieth of the tolerance: the
+    derivative lifts it by 2 pi sigma/d against the line itself.
     """
-    level = np.log(5 / tolerance)
+    level = np.log(20 / tolerance)
     a, b = 2 * (np.pi * shape.sigma) ** 2, 2 * np.pi * shape.gamma
     inverse = 2 * level / (b + np.sqrt(b * b + 4 * a * level))
     return float(1 / inverse)
