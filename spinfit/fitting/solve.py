@@ -17,6 +17,7 @@ from dataclasses import dataclass
 import lmfit
 import numpy as np
 from numpy.typing import NDArray
+from scipy import optimize
 
 from spinfit.errors import InputError
 from spinfit.fitting.residuals import Point, Problem, Progress, View
@@ -141,8 +142,10 @@ class _Run:
 def bounded_step(residual: Array, jacobian: Array, low: Array, high: Array) -> tuple[Array, float]:
     """Gauss-Newton step that keeps inside limits, and what it would lower chi-squared by.
 
-    Parameters whose step leaves their limits are put on them one round after the other and the
-    others solved again.
+    Parameters
+    ----------
+    low, high : ndarray, shape (k,)
+        Of the step; low <= 0 <= high.
 
     Returns
     -------
@@ -150,18 +153,13 @@ def bounded_step(residual: Array, jacobian: Array, low: Array, high: Array) -> t
     gain : float
         By the linear model.
     """
-    step = np.zeros(jacobian.shape[1])
-    open_ = np.ones(step.size, dtype=bool)
-    for _ in range(step.size + 1):
-        if not open_.any():
-            break
-        target = -(residual + jacobian[:, ~open_] @ step[~open_])
-        step[open_] = np.linalg.lstsq(jacobian[:, open_], target, rcond=_BLIND)[0]
-        outside = open_ & ((step < low) | (step > high))
-        if not outside.any():
-            break
-        step[outside] = np.clip(step[outside], low[outside], high[outside])
-        open_ &= ~outside
+    step = np.linalg.lstsq(jacobian, -residual, rcond=_BLIND)[0]
+    if np.any((step < low) | (step > high)):
+        # The k x k triangle has the same minimum as the whole; an open interval is what the solver wants.
+        orthonormal, triangle = np.linalg.qr(jacobian)
+        high = np.where(high > low, high, low + 1e-12)
+        found = optimize.lsq_linear(triangle, -orthonormal.T @ residual, (low, high), method="bvls")
+        step = np.clip(found.x, low, high)
     after = residual + jacobian @ step
     return step, float(residual @ residual - after @ after)
 

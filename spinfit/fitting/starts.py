@@ -118,7 +118,7 @@ def draws(problem: Problem, start: Array, count: int, *, wide: bool) -> Array:
     return np.clip(out, problem.lower, problem.upper)
 
 
-def candidates(problem: Problem, start: Array, *, wide: bool, keep: int = 6) -> list[Array]:
+def candidates(problem: Problem, start: Array, *, wide: bool, keep: int = 4) -> list[Array]:
     """The best of many draws in a broadened view, each unlike the others, best first."""
     views = _screens(problem, start)
     if not views:
