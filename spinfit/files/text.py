@@ -126,7 +126,7 @@ def _preamble(lines: list[str], header: dict[str, Any], notes: list[Note], file:
         text = text.lstrip("".join(_COMMENT)).strip() if is_comment else text
         fields = dialect.split(text)
         if not is_comment and len(fields) == width > 1 and dialect.number(fields[0]) is not None:
-            bad = next(field for field in fields if dialect.number(field) is None)
+            bad = next((field for field in fields if dialect.number(field) is None), text)
             raise InputError(f"{quote(bad)} is not a number", "write numbers only", place=f"line {number}", file=file)
         if not understand(text, header, notes) and text:
             candidates.append((text, is_comment))
