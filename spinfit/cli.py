@@ -107,13 +107,20 @@ def _one_line(text: object) -> str:
     return " ".join(str(text).split())
 
 
-def _fault(error: BaseException) -> str:
-    """Say that spinfit is at fault and what to do about it."""
+def _verdict(error: BaseException) -> tuple[str, int]:
+    """Return what to say of an error, in one line, and the exit code."""
+    if isinstance(error, KeyboardInterrupt):
+        return "stopped", 1
+    if isinstance(error, SpinfitError):
+        return _one_line(error), error.exit_code
+    if isinstance(error, MemoryError):
+        return f"not enough memory ({_one_line(error) or 'none left'}); ask for fewer points or smaller spins", 2
+    if isinstance(error, OSError):
+        where = f"{error.filename}: " if error.filename else ""
+        return _one_line(f"{where}{error.strerror or error}; check the name, the permissions and the free space"), 2
     what = _one_line(f"{type(error).__name__}: {error}")
-    return (
-        f"spinfit: a fault of spinfit, not yours: {what}; please report it on the project's issue tracker with the "
-        "command line and the file (--debug shows where it arose)"
-    )
+    report = "please report it on the project's issue tracker with the command line and the file"
+    return f"a fault of spinfit, not yours: {what}; {report} (--debug shows where it arose)", 3
 
 
 def _leave_quietly() -> None:
@@ -143,25 +150,12 @@ def main(argv: Sequence[str] | None = None) -> int:
         except BrokenPipeError:  # whoever read our output has seen enough: "spinfit simulate ... | head"
             _leave_quietly()
             return 0
-        except KeyboardInterrupt:
-            message, code = "spinfit: stopped", 1
-        except SpinfitError as error:
-            message, code = f"spinfit: {error}", error.exit_code
-        except MemoryError as error:
-            message = f"spinfit: not enough memory ({_one_line(error) or 'none left'}); ask for fewer points or levels"
-            code = 2
-        except OSError as error:
-            where = f"{error.filename}: " if error.filename else ""
-            message = (
-                f"spinfit: {where}{error.strerror or _one_line(error)}; check the name, permissions and free space"
-            )
-            code = 2
-        except Exception as error:
-            message, code = _fault(error), 3
-        if debug:
-            traceback.print_exc()
-        print(_one_line(message), file=sys.stderr)
-        return code
+        except (Exception, KeyboardInterrupt) as error:
+            if debug:
+                traceback.print_exception(error)
+            message, code = _verdict(error)
+            print(f"spinfit: {message}", file=sys.stderr)
+            return code
 
 
 if __name__ == "__main__":

@@ -39,8 +39,8 @@ def third(g: float | None, field: float | None, frequency: float | None) -> tupl
             place="convert",
         )
     for option, value in (("--g", g), ("--field", field), ("--frequency", frequency)):
-        if value == 0:
-            raise InputError("0 has no resonance", "write a value that is not 0", place=option)
+        if value is not None and value <= 0:
+            raise InputError(f"{value:g}", "write a positive value", place=option)
     if frequency is None:
         return g, field, frequency_of(g, field)
     return (g_of(field, frequency), field, frequency) if g is None else (g, field_of(g, frequency), frequency)

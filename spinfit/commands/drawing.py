@@ -5,7 +5,7 @@ from __future__ import annotations
 from pathlib import Path
 from typing import Any
 
-from spinfit.errors import InputError, nearest
+from spinfit.errors import InputError
 
 KINDS = (".png", ".svg", ".pdf")
 
@@ -21,9 +21,7 @@ def picture_kind(path: str) -> str:
     suffix = Path(path).suffix.lower()
     if suffix not in KINDS:
         found = f'"{suffix}" is not a format of pictures' if suffix else "the name has no suffix"
-        hint = nearest(suffix, KINDS) if suffix else ""
-        right = hint if hint.startswith("did") else "end the name in " + ", ".join(KINDS)
-        raise InputError(found, right, place="--plot", file=path)
+        raise InputError(found, "end the name in " + ", ".join(KINDS), place="--plot", file=path)
     return suffix[1:]
 
 

@@ -8,7 +8,6 @@ from collections.abc import Mapping, Sequence
 from typing import Any, TextIO
 
 from spinfit.errors import InputError
-from spinfit.report.outcome_json import clean
 
 
 class Screen:
@@ -32,6 +31,8 @@ class Screen:
 
     def emit(self, content: Mapping[str, Any] | Sequence[Any]) -> None:
         """Write the JSON document; nothing without --json."""
+        from spinfit.report.outcome_json import clean
+
         if self.as_json:
             print(json.dumps(clean(content), indent=2, ensure_ascii=False, allow_nan=False), file=self.out)
 

@@ -6,8 +6,8 @@ import argparse
 from pathlib import Path
 from typing import Any
 
-from spinfit.commands.screen import Screen
-from spinfit.errors import InputError, nearest
+from spinfit.commands.screen import Screen, quantity
+from spinfit.errors import InputError
 
 NAME = "simulate"
 SUMMARY = "the spectrum of a model file"
@@ -25,6 +25,9 @@ def options(parser: argparse.ArgumentParser) -> None:
         "-o", "--output", metavar="FILE", help="write there (.csv, .jdx or .h5) instead of csv on standard output"
     )
     parser.add_argument("--plot", metavar="FILE", help="draw it as well (.png, .svg or .pdf)")
+    parser.add_argument(
+        "--angle", metavar="QUANTITY", help='crystal or aligned sample: this angle only, such as "30 deg"'
+    )
     parser.add_argument("--species", action="store_true", help="csv: one more column for each species")
 
 
@@ -34,9 +37,7 @@ def _check_names(args: argparse.Namespace) -> None:
         suffix = Path(args.output).suffix.lower()
         if suffix not in SUFFIXES:
             found = f'"{suffix}" is not a format to write' if suffix else "the name has no suffix"
-            hint = nearest(suffix, SUFFIXES) if suffix else ""
-            right = hint if hint.startswith("did") else "end the name in " + ", ".join(SUFFIXES)
-            raise InputError(found, right, place="-o", file=args.output)
+            raise InputError(found, "end the name in " + ", ".join(SUFFIXES), place="-o", file=args.output)
         if args.species and suffix != ".csv":
             raise InputError("columns for species go to csv only", "end the name in .csv", place="--species")
     if args.plot is not None:
@@ -47,34 +48,77 @@ def _check_names(args: argparse.Namespace) -> None:
 
 def run(args: argparse.Namespace, screen: Screen) -> int:
     """Simulate and write."""
+    import numpy as np
+
     from spinfit.files.job import read_model
     from spinfit.spectrum import simulate
 
     _check_names(args)
     model = read_model(args.model)
+    angles = _angles(args, model)
     try:
-        spectrum = simulate(model.species, model.sweep, model.sample, tolerance=model.tolerance)
+        spectra = [
+            simulate(model.species, model.sweep, model.sample, tolerance=model.tolerance, angle=angle)
+            for angle in angles
+        ]
     except InputError as error:
         raise error.at(file=args.model) from error
-    parts = {one.name: one.amount * part for one, part in zip(model.species, spectrum.parts, strict=True)}
-    for warning in spectrum.warnings:
-        screen.aside(f"warning: {warning[1] if isinstance(warning, tuple) else warning}")
-    _write(args, screen, model, spectrum, parts)
+    tables = []
+    for angle, spectrum in zip(angles, spectra, strict=True):
+        parts = {one.name: one.amount * part for one, part in zip(model.species, spectrum.parts, strict=True)}
+        turned = (
+            {"angle_deg": np.full(len(spectrum.fields), round(float(np.rad2deg(angle)), 9))} if len(angles) > 1 else {}
+        )
+        tables.append({**turned, "field_mT": spectrum.fields, "signal": spectrum.signal, **parts})
+    warnings = list(dict.fromkeys(_said(warning) for spectrum in spectra for warning in spectrum.warnings))
+    for text in warnings:
+        screen.aside(f"warning: {text}")
+    several = {key: np.concatenate([table[key] for table in tables]) for key in tables[0]}
+    names = [one.name for one in model.species]
+    columns = {key: column for key, column in several.items() if args.species or key not in names}
+    _write(args, screen, model, columns, angles)
+    screen.emit(
+        {
+            "frequency_MHz": model.sweep.frequency,
+            "file": args.output,
+            "plot": args.plot,
+            **({} if args.output else columns),
+            "report": [spectrum.report for spectrum in spectra],
+            "warnings": warnings,
+        }
+    )
     if args.plot:
-        _draw(args.plot, model, spectrum, parts)
+        _draw(args.plot, model, tables, angles)
     return 0
 
 
-def _write(args: argparse.Namespace, screen: Screen, model: Any, spectrum: Any, parts: dict[str, Any]) -> None:
+def _said(warning: Any) -> str:
+    return str(warning[1]) if isinstance(warning, tuple) else str(warning)
+
+
+def _angles(args: argparse.Namespace, model: Any) -> list[float | None]:
+    """Return the angles to simulate, rad; [None] where the sample has none."""
+    if args.angle is not None:
+        if model.sample.form not in ("crystal", "aligned"):
+            raise InputError(f"a {model.sample.form} has no angle", "leave it out", place="--angle")
+        return [quantity(args.angle, "angle", "--angle")]
+    angles = list(model.sample.angles) if model.sample.form == "crystal" else [None]
+    if len(angles) > 1 and args.output is not None and Path(args.output).suffix.lower() != ".csv":
+        raise InputError(f"{len(angles)} angles do not fit in one such file", "add --angle, or write .csv", place="-o")
+    return angles
+
+
+def _write(
+    args: argparse.Namespace, screen: Screen, model: Any, columns: dict[str, Any], angles: list[float | None]
+) -> None:
     """Write the numbers where they are wanted."""
     from spinfit.files.atomic import write_text
     from spinfit.files.curves import csv_text, write_spectrum
 
-    columns = {"field_mT": spectrum.fields, "signal": spectrum.signal, **(parts if args.species else {})}
-    sweep = model.sweep
     if args.output is not None and Path(args.output).suffix.lower() == ".csv":
         write_text(args.output, csv_text(columns))
     elif args.output is not None:
+        sweep = model.sweep
         header = {
             "title": Path(args.model).stem,
             "frequency": sweep.frequency,
@@ -82,27 +126,23 @@ def _write(args: argparse.Namespace, screen: Screen, model: Any, spectrum: Any, 
             "modulation": sweep.modulation or None,
             "microwave": sweep.microwave,
             "detect": sweep.detect,
+            "angle": angles[0],
         }
-        write_spectrum(args.output, spectrum.fields, spectrum.signal, header=header)
+        write_spectrum(args.output, columns["field_mT"], columns["signal"], header=header)
     elif not screen.as_json:
         screen.raw(csv_text(columns))
-    screen.emit(
-        {
-            "frequency_MHz": sweep.frequency,
-            "file": args.output,
-            "plot": args.plot,
-            **({} if args.output else columns),
-            "report": spectrum.report,
-            "warnings": [list(w) if isinstance(w, tuple) else w for w in spectrum.warnings],
-        }
-    )
 
 
-def _draw(path: str, model: Any, spectrum: Any, parts: dict[str, Any]) -> None:
+def _draw(path: str, model: Any, tables: list[dict[str, Any]], angles: list[float | None]) -> None:
+    """Draw one spectrum with its species, or several angles above each other."""
     from spinfit.commands.drawing import save_picture
-    from spinfit.report.plots import spectrum_figure
+    from spinfit.report.plots import angles_figure, spectrum_figure
 
-    figure = spectrum_figure(
-        spectrum.fields, spectrum.signal, frequency=model.sweep.frequency, detect=model.sweep.detect, parts=parts
-    )
+    sweep = model.sweep
+    fields, signals = tables[0]["field_mT"], [table["signal"] for table in tables]
+    if len(angles) > 1:
+        figure = angles_figure(fields, signals, angles, frequency=sweep.frequency, detect=sweep.detect)
+    else:
+        parts = {one.name: tables[0][one.name] for one in model.species}
+        figure = spectrum_figure(fields, signals[0], frequency=sweep.frequency, detect=sweep.detect, parts=parts)
     save_picture(path, figure)

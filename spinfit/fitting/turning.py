@@ -88,7 +88,7 @@ class _Extremum:
     index: int
     kind: str
     scale: float  # of the smoothing, in points
-    width: float  # at half prominence, in points
+    width: float  # twice the nearer flank's distance where the top has lost 0.3 of its prominence, in points
     prominence: float
 
 
@@ -115,8 +115,9 @@ def _extrema(values: Array, noise: float) -> list[_Extremum]:
         prominence = max(smallest, SIGNIFICANT * noise * _noise_left(scale), 1e-300)
         new: list[_Extremum] = []
         for sign, kind in ((1.0, "maximum"), (-1.0, "minimum")):
-            index, more = filters.find_peaks(sign * smooth, prominence=prominence, width=0)
-            for k, width, height in zip(index, more["widths"], more["prominences"], strict=True):
+            index, more = filters.find_peaks(sign * smooth, prominence=prominence, width=0, rel_height=0.3)
+            flanks = 2 * np.minimum(index - more["left_ips"], more["right_ips"] - index)
+            for k, width, height in zip(index, flanks, more["prominences"], strict=True):
                 if all(abs(k - old.index) > NEIGHBOURHOOD * scale for old in found):
                     new.append(_Extremum(int(k), kind, scale, float(width), float(height)))
         found += new
@@ -140,7 +141,7 @@ def _alternating(extrema: list[_Extremum], values: Array) -> list[_Extremum]:
 
 def _vertex(field: Array, values: Array, extremum: _Extremum, noise: float) -> tuple[float, float, float]:
     """Return field, its standard uncertainty and value of an extremum, by a parabola through its top."""
-    half = max(1 if extremum.width < 10 else 2, round(max(0.2 * extremum.width, 1.2 * extremum.scale)))
+    half = max(1 if extremum.width < 7 else 2, round(max(0.28 * extremum.width, 1.2 * extremum.scale)))
     part = slice(max(extremum.index - half, 0), min(extremum.index + half + 1, field.size))
     x = field[part] - field[extremum.index]
     design = np.stack([np.ones_like(x), x, x**2], axis=1)

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import io
 import math
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 
 import numpy as np
 from matplotlib.axes import Axes
@@ -32,31 +32,26 @@ EVEN_TICKS = 1.8
 MOST_TRACES = 12
 
 
-def _roundest(low: float, high: float) -> float:
-    """Return the number in [low, high] that is shortest to write."""
-    middle = 0.5 * (low + high)
-    for decimals in range(12):
-        for step in (5.0, 2.0, 1.0):
-            unit = step * 10.0**-decimals
-            candidate = round(middle / unit) * unit
-            if low <= candidate <= high:
-                return round(candidate, decimals)
-    return middle
+# Roundest first: over a wide range ticks are taken in this order wherever they find room.
+_ROUND_G = (2, 4, 1, 6, 3, 10, 20, 5, 8, 15, 50, 100, 1.5, 2.5, 1.2, 30, 0.5, 1.7, 0.7, 2.2, 3.5, 1.4, 1.1, 0.2, 0.1)
 
 
 def g_ticks(first: float, last: float, frequency: float, *, most: int = 6) -> list[float]:
-    """Return g values for the ticks over a field range, mT; empty when the range holds no g."""
+    """Return g values for the ticks over a field range, mT, by field; empty when the range holds no g."""
     first = max(first, 0.02 * last)
     if last <= 0 or first >= last:
         return []
     small, large = g_of(last, frequency), g_of(first, frequency)
     if large / small < EVEN_TICKS:
-        return [
-            float(g) for g in MaxNLocator(most, steps=[1, 2, 5, 10]).tick_values(small, large) if small <= g <= large
-        ]
-    edges = np.linspace(first, last, most + 1)
-    slots = zip(edges, edges[1:], strict=False)
-    return [_roundest(g_of(b - 0.2 * (b - a), frequency), g_of(a + 0.2 * (b - a), frequency)) for a, b in slots]
+        ticks = MaxNLocator(most, steps=[1, 2, 5, 10]).tick_values(small, large)
+        return [float(g) for g in ticks[::-1] if small <= g <= large]
+    taken: list[float] = []
+    room = (last - first) / (1.6 * most)
+    for g in _ROUND_G:
+        where = field_of(g, frequency)
+        if small <= g <= large and all(abs(where - field_of(other, frequency)) >= room for other in taken):
+            taken.append(float(g))
+    return sorted(taken, reverse=True)
 
 
 def add_g_axis(axes: Axes, frequency: float, *, label: bool = True, most: int = 6) -> None:
@@ -91,6 +86,13 @@ def _limits(axes: Axes, *curves: Array) -> None:
     axes.set_ylim(low - room, high + room)
 
 
+def _field_axis(axes: Axes) -> None:
+    """Label the field axis; few enough ticks that "1212.5" has room at a column's width."""
+    axes.xaxis.set_major_locator(MaxNLocator(6, steps=[1, 2, 2.5, 5, 10]))
+    axes.xaxis.get_major_formatter().set_useOffset(False)
+    axes.set_xlabel(FIELD_LABEL)
+
+
 def _draw_fit(axes: Axes, curves: Curves) -> None:
     """Draw measured and fitted signal."""
     factor, unit = _power(curves.measured)
@@ -107,16 +109,16 @@ def _legend(axes: Axes, columns: int = 1) -> None:
     axes.legend(loc="best", ncols=columns, borderaxespad=0.4, labelspacing=0.3)
 
 
-def _draw_parts(axes: Axes, curves: Curves) -> None:
+def _draw_parts(axes: Axes, fields: Array, parts: Mapping[str, Array]) -> None:
     """Draw each species' own signal, shifted apart so that none hides another."""
     shift, below = 0.0, 0.0
-    for index, (name, part) in enumerate(curves.parts.items()):
+    for index, (name, part) in enumerate(parts.items()):
         y = np.asarray(part)
         if index:
             shift += below - 1.1 * float(np.max(y))
         below = 1.1 * float(np.min(y))
         colour, dashes = style.part_colour(index)
-        axes.plot(curves.field, y + shift, color=colour, dashes=dashes)
+        axes.plot(fields, y + shift, color=colour, dashes=dashes)
         axes.annotate(name, (0.012, shift), xycoords=("axes fraction", "data"), xytext=(0, 1.5), color=colour,
                       textcoords="offset points", va="bottom", fontsize=6.5)  # fmt: skip
     axes.set_yticks([])
@@ -135,7 +137,7 @@ def _draw_residual(axes: Axes, curves: Curves) -> None:
     reach = max(4.0, 1.1 * float(np.nanmax(np.abs(shown))))
     axes.set_ylim(-reach, reach)
     axes.set_ylabel("residual\n/ σ")
-    axes.set_xlabel(FIELD_LABEL)
+    _field_axis(axes)
 
 
 def fit_figure(outcome: Outcome) -> Figure:
@@ -153,7 +155,7 @@ def fit_figure(outcome: Outcome) -> Figure:
             panels = block.subplots(len(heights), 1, sharex=True, gridspec_kw={"height_ratios": heights})
             _draw_fit(panels[0], curves)
             if several:
-                _draw_parts(panels[1], curves)
+                _draw_parts(panels[1], curves.field, curves.parts)
             _draw_residual(panels[-1], curves)
             panels[0].set_xlim(curves.field[0], curves.field[-1])
             add_g_axis(panels[0], curves.frequency)
@@ -170,24 +172,42 @@ def spectrum_figure(
     frequency: float,
     detect: str = "derivative",
     parts: Mapping[str, Array] | None = None,
-    relative: bool = True,
 ) -> Figure:
-    """Return the picture of a simulated spectrum with its species; signal relative to its largest value."""
-    largest = float(np.max(np.abs(signal))) if relative else 1.0
-    largest = largest or 1.0
+    """Return the picture of a simulated spectrum, relative to its largest value, with its species below."""
+    largest = float(np.max(np.abs(signal))) or 1.0
+    several = parts is not None and len(parts) > 1
     with style.styled():
-        figure = Figure(figsize=(style.COLUMN_WIDTH, 2.3), layout="constrained")
+        figure = Figure(figsize=(style.COLUMN_WIDTH, 3.2 if several else 2.3), layout="constrained")
+        ratios = [1.5, 1.0] if several else [1.0]
+        panels = figure.subplots(len(ratios), 1, sharex=True, squeeze=False, gridspec_kw={"height_ratios": ratios})[
+            :, 0
+        ]
+        panels[0].plot(fields, signal / largest, color=style.MEASURED)
+        panels[0].set_ylabel(f"{SIGNAL_NAMES.get(detect, 'signal')} / largest value")
+        if parts is not None and several:
+            _draw_parts(panels[1], fields, parts)
+        panels[0].set_xlim(fields[0], fields[-1])
+        _field_axis(panels[-1])
+        add_g_axis(panels[0], frequency)
+    return figure
+
+
+def angles_figure(
+    fields: Array, signals: Sequence[Array], angles: Sequence[float], *, frequency: float, detect: str = "derivative"
+) -> Figure:
+    """Return spectra at several angles (rad), shifted upwards by their number."""
+    largest = max(float(np.max(np.abs(signal))) for signal in signals) or 1.0
+    height = float(np.clip(0.3 * len(signals) + 1.2, 2.3, 8.0))
+    with style.styled():
+        figure = Figure(figsize=(style.COLUMN_WIDTH, height), layout="constrained")
         axes = figure.subplots()
-        if parts and len(parts) > 1:
-            for index, (name, part) in enumerate(parts.items()):
-                colour, dashes = style.part_colour(index)
-                axes.plot(fields, np.asarray(part) / largest, color=colour, dashes=dashes, label=name)
-        axes.plot(fields, signal / largest, color=style.MEASURED, label="all")
-        if parts and len(parts) > 1:
-            _legend(axes)
+        for index, signal in enumerate(signals):
+            axes.plot(fields, 0.8 * signal / largest + index, color=style.MEASURED, lw=0.8)
+        shown = range(0, len(signals), max(1, len(signals) // 20))
+        axes.set_yticks(list(shown), [f"{np.rad2deg(angles[k]):.4g}" for k in shown])
+        axes.set_ylabel(f"angle / deg ({SIGNAL_NAMES.get(detect, 'signal')}, shifted)")
         axes.set_xlim(fields[0], fields[-1])
-        axes.set_xlabel(FIELD_LABEL)
-        axes.set_ylabel(f"{SIGNAL_NAMES.get(detect, 'signal')} / largest value")
+        _field_axis(axes)
         add_g_axis(axes, frequency)
     return figure
 
@@ -214,7 +234,7 @@ def trace_figure(
             _legend(axes)
         axes.set_xlim(field[0], field[-1])
         axes.set_ylim(low - 3 * room, high + 3 * room)
-        axes.set_xlabel(FIELD_LABEL)
+        _field_axis(axes)
         axes.set_ylabel(f"{SIGNAL_NAMES.get(detect, 'signal')} / {unit}")
         if frequency is not None:
             add_g_axis(axes, frequency)

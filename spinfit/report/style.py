@@ -12,7 +12,7 @@ MEASURED = "#30343b"
 FITTED = "#e4572e"
 UNUSED = "#b9bec7"
 GUIDE = "#8a909b"
-PARTS = ("#17508f", "#2fa6a0", "#b0822b", "#8e3b78", "#7fb2e5", "#5f6f2e")
+PARTS = ("#23149a", "#1fc7ae", "#dc8a22", "#7b0a5a", "#8d86f5", "#7a673f")
 DASHES = ((None, None), (5, 1.5), (2, 1.2), (6, 1.5, 1.5, 1.5), (1, 1), (8, 2))
 
 COLUMN_WIDTH = 86 / 25.4

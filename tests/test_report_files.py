@@ -1,0 +1,180 @@
+"""Files of an outcome: JSON without NaN, csv that adds up, HDF5 that a generic viewer opens, a page that is safe."""
+
+from __future__ import annotations
+
+import base64
+import csv
+import io
+import json
+from html.parser import HTMLParser
+
+import h5py
+import numpy as np
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+from outcomes import curves, outcome
+
+from spinfit.fitting.outcome import Note, Quality, Value
+from spinfit.report.archive import archive_bytes
+from spinfit.report.html import report_text
+from spinfit.report.outcome_json import clean, curves_text, outcome_record, outcome_text
+
+
+def no_constants(name):
+    raise AssertionError(f"{name} in JSON")
+
+
+def test_keys_are_those_promised():
+    record = outcome_record(outcome())
+    assert list(record) == ["parameters", "fractions", "quality", "correlations", "warnings", "provenance"]
+    for value in record["parameters"].values():
+        assert list(value) == [
+            "value", "uncertainty", "uncertainty_noise", "uncertainty_field", "unit", "varied", "at_limit",
+        ]  # fmt: skip
+    assert list(record["quality"]) == [
+        "converged", "finished", "chi2_reduced", "noise", "points", "free_parameters", "aicc", "bic",
+    ]  # fmt: skip
+    assert record["correlations"] == {"names": ["cu.g_perp", "cu.63Cu.A_par"], "matrix": [[1, -0.95], [-0.95, 1]]}
+    assert record["warnings"] == [{"code": "at_limit", "text": "cu.width.gaussian ends at its lower limit of 0.8 mT."}]
+    assert sum(value["value"] for value in record["fractions"].values()) == pytest.approx(1)
+
+
+def test_nothing_of_the_run_itself_is_written():
+    fast, slow = outcome(seconds=0.1), outcome(seconds=99.0)
+    assert outcome_text(fast) == outcome_text(slow)
+    assert archive_bytes(fast) == archive_bytes(slow)
+
+
+def test_what_is_not_finite_becomes_null():
+    bad = outcome(
+        parameters={"a.g": Value(float("nan"), float("inf"))},
+        quality=Quality(False, False, float("nan"), 0.0, 1, 1, float("-inf"), 1.0),
+        correlation_matrix=np.array([[np.nan]]),
+        engine={"error": np.float64("nan"), "count": np.int64(3), "flag": np.bool_(True)},
+    )
+    record = json.loads(outcome_text(bad), parse_constant=no_constants)
+    assert record["parameters"]["a.g"]["value"] is None
+    assert record["quality"]["chi2_reduced"] is None
+    assert record["correlations"]["matrix"] == [[None]]
+    assert record["provenance"]["engine"] == {"error": None, "count": 3, "flag": True}
+
+
+@settings(derandomize=True, deadline=None)
+@given(
+    st.recursive(
+        st.none() | st.booleans() | st.integers() | st.floats() | st.text() | st.builds(np.float64, st.floats()),
+        lambda inner: st.lists(inner, max_size=3) | st.dictionaries(st.text(), inner, max_size=3),
+        max_leaves=12,
+    )
+)
+def test_anything_cleaned_is_json(content):
+    assert json.loads(json.dumps(clean(content), allow_nan=False)) == clean(content)
+
+
+def test_curves_of_one_and_of_several_traces():
+    one = list(csv.reader(io.StringIO(curves_text(outcome()))))
+    assert one[0] == ["field_mT", "measured", "fitted", "residual", "cu", "radical"]
+    data = np.array(one[1:], dtype=float)
+    np.testing.assert_allclose(data[:, 0], curves().field, rtol=1e-8)
+    np.testing.assert_allclose(data[:, 1] - data[:, 2], data[:, 3], atol=1e-4)
+    several = list(csv.reader(io.StringIO(curves_text(outcome(curves("a"), curves("b", species=1))))))
+    assert several[0] == ["trace", "field_mT", "measured", "fitted", "residual", "cu", "radical"]
+    assert several[1][0] == "a"
+    assert several[-1][0] == "b"
+    assert several[-1][-1] == ""  # this trace has no such species
+
+
+def test_archive_opens_on_the_picture_of_the_fit():
+    """The path a generic viewer follows: NXroot's default, NXentry's default, NXdata's signal and axes."""
+    with h5py.File(io.BytesIO(archive_bytes(outcome(curves("a"), curves("b")))), "r") as root:
+        entry = root[root.attrs["default"]]
+        assert entry.attrs["NX_class"] == "NXentry"
+        data = entry[entry.attrs["default"]]
+        assert data.attrs["NX_class"] == "NXdata"
+        field, measured = data[data.attrs["axes"]], data[data.attrs["signal"]]
+        assert field.attrs["units"] == "mT"
+        np.testing.assert_array_equal(field[()], curves("a").field)
+        np.testing.assert_array_equal(measured[()], curves("a").measured)
+        assert list(data.attrs["auxiliary_signals"]) == ["fitted"]
+        assert {"a", "b", "spinfit_outcome"} == set(root)
+        assert root["b/frequency"].attrs["units"] == "MHz"
+        assert root["b/frequency"][()] == 9432.1
+
+
+def test_archive_holds_everything():
+    found = outcome()
+    with h5py.File(io.BytesIO(archive_bytes(found)), "r") as root:
+        fit = root["spinfit_outcome"]
+        names = fit["parameters/name"].asstr()[()].tolist()
+        assert names == list(found.parameters)
+        np.testing.assert_array_equal(fit["parameters/value"][()], [v.value for v in found.parameters.values()])
+        assert np.isnan(fit["parameters/uncertainty"][names.index("cu.amount")])
+        assert fit["parameters/varied"][names.index("cu.g_par")]
+        assert fit["correlations/matrix"][()].tolist() == found.correlation_matrix.tolist()
+        assert fit["job"].asstr()[()] == found.provenance["job"]
+        assert fit["outcome_json"].asstr()[()] == outcome_text(found)
+        assert root.attrs["spinfit_format"] == 1
+
+
+class Page(HTMLParser):
+    """Tags, what they load, and the text of a page."""
+
+    def __init__(self, text):
+        super().__init__()
+        self.open, self.seen, self.loads, self.text = [], [], [], []
+        self.feed(text)
+        self.close()
+
+    def handle_starttag(self, tag, attrs):
+        self.seen.append(tag)
+        self.loads += [value for key, value in attrs if key in ("src", "href", "action", "data")]
+        if tag not in ("meta", "img", "br"):
+            self.open.append(tag)
+
+    def handle_endtag(self, tag):
+        assert self.open.pop() == tag
+
+    def handle_data(self, data):
+        self.text.append(data)
+
+
+def test_report_is_whole_and_loads_nothing():
+    page = Page(report_text(outcome(), b"\x89PNG"))
+    assert page.open == []
+    assert page.loads == ["data:image/png;base64," + base64.b64encode(b"\x89PNG").decode()]
+    text = " ".join(" ".join(page.text).split())
+    for word in (
+        "kiln-07",
+        "2.0412(3)",
+        "-540(2)",
+        "held fixed",
+        "lower limit of 0.8 mT",
+        'file = "kiln-07.csv"',
+        "-0.950",
+    ):
+        assert word in text
+    assert "script" not in page.seen
+
+
+def test_texts_from_users_are_escaped():
+    evil = "<script>alert(1)</script>\"'&"
+    page = Page(
+        report_text(
+            outcome(
+                curves(evil),
+                name=evil,
+                parameters={evil: Value(1.0, 0.1, unit=evil, varied=True), evil + "2": Value(1.0, unit=evil)},
+                fractions={evil: Value(0.5), "b": Value(0.5)},
+                correlation_names=(evil, "b"),
+                warnings=(Note(evil, evil),),
+                provenance={"job": evil, evil: evil},
+                message=evil,
+                quality=Quality(False, True, 1.0, 1.0, 1, 1, 1.0, 1.0),
+            ),
+            b"",
+        )
+    )
+    assert page.open == []
+    assert "script" not in page.seen
+    assert evil in "".join(page.text)
