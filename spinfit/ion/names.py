@@ -10,7 +10,7 @@ import csv
 import re
 from dataclasses import dataclass
 from functools import lru_cache
-from importlib import resources
+from pathlib import Path
 
 from spinfit.errors import InputError, nearest
 
@@ -100,7 +100,7 @@ def term_symbol(S: float, L: int, J: float | None = None) -> str:
 @lru_cache(maxsize=1)
 def _elements() -> dict[tuple[str, int], tuple[int, str, str]]:
     """Return (symbol, charge) -> (Z, noble-gas core, configuration outside it)."""
-    text = (resources.files("spinfit") / "data" / "elements.csv").read_text(encoding="utf-8")
+    text = (Path(__file__).parents[1] / "data" / "elements.csv").read_text(encoding="utf-8")
     rows = csv.DictReader(line for line in text.splitlines() if not line.startswith("#"))
     return {(r["symbol"], int(r["charge"])): (int(r["z"]), r["core"], r["configuration"]) for r in rows}
 

@@ -120,14 +120,18 @@ class SpinJacobian:
 
 
 def _scale(model: IonModel, name: str) -> float:
-    """Return the size on which a parameter matters: its own, or that of the others when it is small."""
+    """Return the size on which a parameter matters.
+
+    Energies of a crystal field count from an arbitrary zero, so that theirs is that of the whole field.
+    """
     if name == "reduction":
         return 1.0
     own = model.parameters
     if name not in own:
         model.with_parameters({name: 0.0})  # raises, with the nearest known name
-    largest = max(abs(v) for v in own.values()) or 1.0
-    return max(abs(own[name]), 0.01 * largest)
+    if name in model.crystal.names:
+        return max(abs(v) for v in model.crystal.values) or model.zeta or 1.0
+    return abs(own[name]) or 0.01 * max(abs(v) for v in own.values()) or 1.0
 
 
 def spin_jacobian(model: IonModel, names: Sequence[str], *, step: float = 1e-4) -> SpinJacobian:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import csv
 from dataclasses import dataclass
 from functools import lru_cache
-from importlib import resources
+from pathlib import Path
 
 from spinfit.ion.names import Shell
 
@@ -51,7 +51,7 @@ def _shell_of(configuration: str) -> Shell:
 
 def read_table(name: str) -> list[dict[str, str]]:
     """Read a csv of the package's data folder; lines that begin with # are its heading."""
-    text = (resources.files("spinfit") / "data" / name).read_text(encoding="utf-8")
+    text = (Path(__file__).parents[1] / "data" / name).read_text(encoding="utf-8")
     return list(csv.DictReader(line for line in text.splitlines() if not line.startswith("#")))
 
 
