@@ -162,8 +162,8 @@ def test_table_of_standards():
 
 
 def test_what_cannot_be_calibrated_is_refused():
-    with pytest.raises(InputError, match=r'"dpqh" is not a known standard; did you mean "dpph"\?'):
-        standard("dpqh")
+    with pytest.raises(InputError, match=r'"DPQH" is not a known standard; did you mean "DPPH"\?'):
+        standard("DPQH")
     noise = np.random.default_rng(0).normal(0, 1, FIELD.size)
     with pytest.raises(InputError, match="no line stands out of the noise"):
         fit_line(FIELD, noise)

@@ -341,6 +341,32 @@ def test_inspect_reads_home_built_columns(here, run):
     assert "--field-zero" in run("inspect", "v.txt", "--field-zero", "3 mT", code=2)
 
 
+def test_inspect_takes_one_way_of_a_sweep_that_comes_back(here, run):
+    """The two ways stand apart by the detector's lag; laid into each other they would be a comb of extrema."""
+    field = np.concatenate([np.linspace(330, 340, 500), np.linspace(339.99, 330.01, 500)])
+    centre = np.where(np.arange(1000) < 500, 335.1, 334.9)
+    x = (field - centre) / 0.2
+    signal = -1000 * x * np.exp(-0.5 * x**2) + np.random.default_rng(2).normal(0, 5, 1000)
+    rows = "".join(f"{a:.5f},{b:.4f}\n" for a, b in zip(field, signal, strict=True))
+    (here / "loop.csv").write_text("field/mT,signal\n" + rows)
+    for argv, expected in (((), 335.1), (("--direction", "down"), 334.9)):
+        seen = json.loads(run("inspect", "loop.csv", *argv, "--json"))
+        assert [point["kind"] for point in seen["turning_points"]] == ["maximum", "crossing", "minimum"]
+        assert seen["turning_points"][1]["field_mT"] == pytest.approx(expected, abs=0.01)
+
+
+def test_inspect_advises_its_own_options(here, run):
+    rows = "".join(f"{k},{k % 5},{300 + k}\n" for k in range(20))
+    (here / "three.csv").write_text(rows)
+    assert "add --columns 1,2" in run("inspect", "three.csv", code=2)
+    assert "add --field-unit mT" in run("inspect", "three.csv", "--columns", "3,2", code=2)
+    (here / "volts.csv").write_text("B/V,signal\n" + rows)
+    assert json.loads(run("inspect", "three.csv", "--columns", "3,2", "--field-unit", "G", "--json"))["field_mT"] == [
+        30,
+        31.9,
+    ]
+
+
 def test_calibrate_gives_lines_that_a_job_takes(here, run):
     known = field_mt(2.0036, 9.4)
     write_line(here / "s.csv", centre=known - 0.21, width=0.15, shape="lorentzian")
@@ -378,7 +404,7 @@ def test_calibrate_with_two_standards_gives_the_scale(here, run):
     ("argv", "says"),
     [
         ((), "no standard is named"),
-        (("--standard", "dpphh"), 'did you mean "dpph"?'),
+        (("--standard", "DPPHH"), 'did you mean "DPPH"?'),
         (("--g", "-2"), "--g: -2; write a positive number"),
         (("--g", "2", "--g-uncertainty", "-1"), "--g-uncertainty"),
         (("--standard", "dpph", "--g", "2"), "--g"),
@@ -390,6 +416,13 @@ def test_calibrate_with_two_standards_gives_the_scale(here, run):
 def test_calibrate_refuses(argv, says, here, run):
     write_line(here / "s.csv", header="")
     assert says in run("calibrate", "s.csv", *argv, code=2)
+
+
+def test_calibrate_lists_its_standards(run):
+    out = run("calibrate", "--list")
+    assert re.search(r"DPPH +2\.0036\(2\) .*common practice", out)
+    assert {"name", "g", "uncertainty", "source"} <= set(json.loads(run("calibrate", "--list", "--json"))[0])
+    assert "no trace is named" in run("calibrate", "--standard", "dpph", code=2)
 
 
 def test_calibrate_names_the_file_without_a_line(here, run):

@@ -97,7 +97,7 @@ def test_archive_opens_on_the_picture_of_the_fit():
         np.testing.assert_array_equal(field[()], curves("a").field)
         np.testing.assert_array_equal(measured[()], curves("a").measured)
         assert list(data.attrs["auxiliary_signals"]) == ["fitted"]
-        assert {"a", "b", "spinfit_outcome"} == set(root)
+        assert {"a", "b", "spinfit.outcome"} == set(root)
         assert root["b/frequency"].attrs["units"] == "MHz"
         assert root["b/frequency"][()] == 9432.1
 
@@ -105,7 +105,7 @@ def test_archive_opens_on_the_picture_of_the_fit():
 def test_archive_holds_everything():
     found = outcome()
     with h5py.File(io.BytesIO(archive_bytes(found)), "r") as root:
-        fit = root["spinfit_outcome"]
+        fit = root["spinfit.outcome"]
         names = fit["parameters/name"].asstr()[()].tolist()
         assert names == list(found.parameters)
         np.testing.assert_array_equal(fit["parameters/value"][()], [v.value for v in found.parameters.values()])

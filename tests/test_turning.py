@@ -11,6 +11,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy import constants
+from scipy.signal import lfilter
 
 from spinfit.fitting.turning import analyse, largest_modulation
 
@@ -60,6 +61,27 @@ def test_noise_and_drift_alone_show_nothing(seed):
     rng = np.random.default_rng(seed)
     drift = 3 + 0.2 * (FIELD - 320) + 2 * ((FIELD - 335) / 15) ** 2
     assert analyse(FIELD, drift + rng.normal(0, 1, FIELD.size)).turning_points == ()
+
+
+@pytest.mark.parametrize("seed", range(20))
+def test_slow_noise_is_not_taken_for_lines(seed):
+    """Noise through a detector with a time constant of some points: an autoregressive process of order 1."""
+    white = np.random.default_rng(seed).normal(0, 1, FIELD.size + 100)
+    slow = lfilter([np.sqrt(1 - 0.9**2)], [1, -0.9], white)[100:]  # standard deviation 1
+    found = analyse(FIELD, slow)
+    assert found.turning_points == ()
+    assert found.white_noise < 0.5
+    line = analyse(FIELD, slow + 40 * gaussian_derivative(FIELD, 335.0, 0.5))
+    assert kinds(line) == ["maximum", "crossing", "minimum"]
+    assert line.noise == pytest.approx(1, rel=0.35)
+    assert abs(line.turning_points[1].field - 335.0) < 4 * line.turning_points[1].field_uncertainty
+
+
+def test_white_noise_is_not_called_slow():
+    found = analyse(
+        FIELD, 40 * gaussian_derivative(FIELD, 335.0, 0.5) + np.random.default_rng(3).normal(0, 1, FIELD.size)
+    )
+    assert found.noise == found.white_noise == pytest.approx(1, rel=0.08)
 
 
 def test_a_narrow_line_on_a_broad_weak_one_shows_both():

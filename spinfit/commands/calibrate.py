@@ -15,13 +15,14 @@ SUMMARY = "the field axis's offset, and scale, from traces of g standards"
 EXAMPLES = (
     "spinfit calibrate standard.csv --standard dpph",
     'spinfit calibrate standard.csv --g 2.0036 --g-uncertainty 0.0002 --frequency "9.40005 GHz"',
+    "spinfit calibrate --list",
     'spinfit calibrate radical.csv chromium.csv --standard dpph --standard "Cr3+ in MgO"',
 )
 
 
 def options(parser: argparse.ArgumentParser) -> None:
     """Add the command's arguments."""
-    parser.add_argument("trace", nargs="+", metavar="TRACE", help="data file of a standard")
+    parser.add_argument("trace", nargs="*", metavar="TRACE", help="data file of a standard")
     known = parser.add_mutually_exclusive_group()
     known.add_argument(
         "--standard", action="append", metavar="NAME", help="known standard: once for all traces, or once for each"
@@ -31,7 +32,7 @@ def options(parser: argparse.ArgumentParser) -> None:
         "--g-uncertainty", action="append", metavar="VALUE", help="standard uncertainty of --g (default: 0)"
     )
     parser.add_argument("--frequency-uncertainty", metavar="QUANTITY", help='such as "0.2 MHz" (default: 0)')
-    parser.add_argument("--list", action="store_true", help="with any TRACE: list the known standards and stop")
+    parser.add_argument("--list", action="store_true", help="list the known standards")
     add_reading_options(parser)
 
 
@@ -74,6 +75,8 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
 
     if args.list:
         return _list(screen, standards().values())
+    if not args.trace:
+        raise InputError("no trace is named", "give the data file of a standard, or --list", place="calibrate")
     sigma = quantity(args.frequency_uncertainty, "frequency", "--frequency-uncertainty", default=0.0)
     if sigma < 0:
         raise InputError(args.frequency_uncertainty, "an uncertainty is not negative", place="--frequency-uncertainty")

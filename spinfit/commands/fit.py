@@ -36,7 +36,7 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
 
     job = read_job(args.job)
     folder = None if args.out is None else ready_folder(args.out)
-    points = sum(int(trace.used.sum()) for trace in job.traces)
+    points = max(1, sum(int(trace.used.sum()) for trace in job.traces) + sum(len(one.field) for one in job.lines))
     with shown_progress(screen, points) as progress:
         outcome = fit(job, progress=progress)
     written = [] if folder is None else write_outcome(folder, outcome)
@@ -119,9 +119,18 @@ def shown_progress(screen: Screen, points: int) -> Iterator[Any]:
         yield None
     elif screen.is_terminal:
         from rich.console import Console
+        from rich.text import Text
 
-        with Console(file=screen.err, stderr=True).status("fitting") as status:
-            yield lambda number, chi2, values: status.update(progress_line(number, chi2 / points, values, most=4))
+        console = Console(file=screen.err, stderr=True)
+        with console.status("fitting") as status:
+
+            def live(number: int, chi2: float, values: Mapping[str, float]) -> None:
+                # Cut to one line beside the spinner; Text, so that nothing in a name is taken for markup.
+                line = Text(progress_line(number, chi2 / points, values))
+                line.truncate(max(20, console.width - 3), overflow="ellipsis")
+                status.update(line)
+
+            yield live
     else:
         last = time.monotonic()
 

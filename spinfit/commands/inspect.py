@@ -48,6 +48,11 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
 
         picture_kind(args.plot)
     trace = read_measured(args.file, args)
+    codes = {code for code, _ in trace.notes}
+    if args.direction == "both" and "sweeps" in codes:
+        # Lines of the two ways stand apart by the detector's lag: laid into each other they are a comb.
+        args.direction = "up"
+        trace = read_measured(args.file, args)
     found = analyse(trace.field[trace.used], trace.signal[trace.used], frequency=trace.frequency, detect=trace.detect)
     sentence, too_large = modulation_sentence(trace.modulation, found.narrowest)
     screen.emit(_record(args.file, trace, found, too_large))
@@ -78,6 +83,7 @@ def _record(file: str, trace: Measured, found: Any, too_large: bool | None) -> d
         "modulation_mT": trace.modulation,
         "detect": trace.detect,
         "noise": found.noise,
+        "white_noise": found.white_noise,
         "peak_to_peak": found.peak_to_peak,
         "signal_to_noise": found.signal_to_noise,
         "narrowest_width_mT": found.narrowest,
@@ -120,6 +126,9 @@ def _text(file: str, trace: Measured, found: Any, modulation: str) -> str:
         f"signal to noise {short(found.signal_to_noise, 3)} (largest height over standard deviation)",
         f"  modulation   {modulation}",
     ]
+    if found.noise > found.white_noise:
+        white = small(found.white_noise)
+        lines.append(f"  slow noise   neighbouring points differ by {white} only: a long time constant, or drift")
     if left_out:
         lines.append(f"  left out     {left_out} points")
     lines += ["  note         " + wrapped(text, width=85, indent=" " * 15) for _, text in trace.notes]

@@ -60,6 +60,20 @@ def _calibration(args: argparse.Namespace) -> tuple[float, float] | None:
     return slope, zero or 0.0
 
 
+# What a job writes and what stands for it on the command line.
+_OPTIONS = {
+    "columns": "add --columns 1,2 with the numbers of the field and the signal column",
+    "field_unit": "add --field-unit mT (or T, G)",
+    "field_calibration": 'add --field-slope "216 mT/V" and --field-zero "3 mT"',
+}
+
+
+def _as_options(error: InputError) -> InputError:
+    """Return the same error, advising the command's option where a job's key is named."""
+    right = _OPTIONS.get(error.place or "", error.right)
+    return InputError(error.found, right, place=error.place, file=error.file)
+
+
 def read_measured(path: str, args: argparse.Namespace, *, needs_frequency: bool = False) -> Measured:
     """Read a data file with the command's options; what an option says wins over the header.
 
@@ -79,9 +93,12 @@ def read_measured(path: str, args: argparse.Namespace, *, needs_frequency: bool 
         raise InputError(f'"{args.detect}" is not known', nearest(args.detect, DETECT), place="--detect")
     columns, calibration = _columns(args.columns), _calibration(args)
     raw = read(path)
-    trace = assemble(
-        raw, columns=columns, field_unit=args.field_unit, field_calibration=calibration, direction=args.direction
-    )
+    try:
+        trace = assemble(
+            raw, columns=columns, field_unit=args.field_unit, field_calibration=calibration, direction=args.direction
+        )
+    except InputError as error:
+        raise _as_options(error) from error
     header = raw.header
     frequency = header.get("frequency") if frequency is None else frequency
     if frequency is None and needs_frequency:

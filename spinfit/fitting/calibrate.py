@@ -114,11 +114,11 @@ class Calibration:
 
 
 def standards() -> dict[str, Standard]:
-    """Return the known g standards by name."""
+    """Return the known g standards by name in lower case."""
     with resources.files("spinfit").joinpath("data/standards.csv").open(encoding="utf-8", newline="") as lines:
         rows = csv.DictReader(line for line in lines if not line.startswith("#"))
         return {
-            row["name"]: Standard(
+            row["name"].lower(): Standard(
                 row["name"], float(row["g"]), float(row["uncertainty"]), row["description"], row["source"]
             )
             for row in rows
@@ -136,7 +136,10 @@ def standard(name: str) -> Standard:
     table = standards()
     key = " ".join(name.lower().split())
     if key not in table:
-        raise InputError(f'"{name}" is not a known standard', f"{nearest(key, table)} or give --g and --g-uncertainty")
+        raise InputError(
+            f'"{name}" is not a known standard',
+            f"{nearest(name, [known.name for known in table.values()])} or give its g",
+        )
     return table[key]
 
 

@@ -95,8 +95,6 @@ class Outcome:
         Of the varied parameters; shape (n, n); empty when there is no covariance.
     fractions : mapping of species name -> Value
         Relative numbers of spins, summing to 1.
-    effective : tuple of mappings
-        Effective units for people: e.g. {"name": "cu.A_z", "value": ..., "unit": "cm^-1"}.
     engine : mapping
         What accuracy was used: orientations, diagonalisations, estimated error, per trace.
     seconds : float

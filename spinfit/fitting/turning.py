@@ -12,7 +12,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import ndimage
+from scipy import ndimage, special
 from scipy import signal as filters
 
 from spinfit.fitting.noise import noise_level
@@ -29,8 +29,17 @@ SMALLEST_PART = 0.004
 NEIGHBOURHOOD = 3.0
 # Where the curve merely returns to the baseline between two lines it has an extremum too; nothing turns there.
 RETURN = 0.1
+# Extrema of one line are at most this many times their own width apart (1.3 times for a Gaussian).
+FARTHEST = 6.0
+# Noise of all frequencies this many times that of neighbouring points is slow noise; less may be the lines' own.
+SLOW_NOISE = 1.5
 # Common practice: over-modulation sets in at about a third of the narrowest peak-to-peak width.
 LARGEST_MODULATION = 1 / 3
+# Lower quartile of |x| of a standard normal deviate.
+_QUARTILE = float(special.ndtri(0.625))
+# Variance of the difference of white noise smoothed by s and by 2s, 1 + 1/2 - 2 sqrt(2/5) of that at s, summed
+# over octaves.
+_OCTAVES = 2 * (1.5 - 2 * np.sqrt(0.4))
 
 
 @dataclass(frozen=True)
@@ -64,7 +73,9 @@ class Analysis:
     Attributes
     ----------
     noise : float
-        Standard deviation of the points, in the signal's unit.
+        Standard deviation of the points, in the signal's unit, slow noise included where there is some.
+    white_noise : float
+        What neighbouring points differ by; less than `noise` where noise hangs together over points.
     peak_to_peak : float
         Largest minus smallest height of a turning point.
     signal_to_noise : float
@@ -77,6 +88,7 @@ class Analysis:
     """
 
     noise: float
+    white_noise: float
     peak_to_peak: float
     signal_to_noise: float
     turning_points: tuple[TurningPoint, ...]
@@ -105,14 +117,42 @@ def _noise_left(scale: float) -> float:
     return float(np.linalg.norm(weights) / weights.sum())
 
 
-def _extrema(values: Array, noise: float) -> list[_Extremum]:
+def _scales(points: int) -> list[float]:
+    """Return the smoothing scales, in points: 0, 1, 2, 4, ... up to a thirtieth of the trace."""
+    return [0.0] + [2.0**k for k in range(20) if 2.0**k <= points / 30]
+
+
+def noise_by_scale(values: Array, white: float) -> dict[float, float]:
+    """Return the standard deviation of the noise that is left at each scale.
+
+    A detector's time constant makes noise hang together over neighbouring points, and smoothing then
+    takes little of it away.  So noise is measured octave by octave, as what two scales differ by; the
+    lower quartile of its size keeps the lines out, unless they fill three quarters of the trace.  Octaves
+    of white noise overlap: their variances sum to `_OCTAVES` of that of all coarser scales together.
+    Never less than white noise of standard deviation `white` would leave.
+    """
+    scales = _scales(values.size)
+    smooth = [_smooth(values, scale) for scale in [*scales, 2 * scales[-1] or 1.0]]
+    out: dict[float, float] = {}
+    variance = 0.0
+    for k in range(len(scales) - 1, -1, -1):
+        octave = np.abs(smooth[k] - smooth[k + 1])
+        if scales[k]:
+            variance += (float(np.quantile(octave, 0.25)) / _QUARTILE) ** 2 / _OCTAVES
+            total = float(np.sqrt(variance))
+        else:
+            total = float(np.sqrt(variance + white**2 * (1 - _noise_left(1.0) ** 2)))
+        out[scales[k]] = max(total, white * _noise_left(scales[k]))
+    return dict(sorted(out.items()))
+
+
+def _extrema(values: Array, left: dict[float, float]) -> list[_Extremum]:
     """Return every extremum that stands out of the noise, at the narrowest scale that shows it."""
     found: list[_Extremum] = []
     smallest = SMALLEST_PART * float(np.ptp(_smooth(values, 1.0)))
-    scale = 0.0
-    while scale <= values.size / 30:
+    for scale, noise in left.items():
         smooth = _smooth(values, scale)
-        prominence = max(smallest, SIGNIFICANT * noise * _noise_left(scale), 1e-300)
+        prominence = max(smallest, SIGNIFICANT * noise, 1e-300)
         new: list[_Extremum] = []
         for sign, kind in ((1.0, "maximum"), (-1.0, "minimum")):
             index, more = filters.find_peaks(sign * smooth, prominence=prominence, width=0, rel_height=0.3)
@@ -121,7 +161,6 @@ def _extrema(values: Array, noise: float) -> list[_Extremum]:
                 if all(abs(k - old.index) > NEIGHBOURHOOD * scale for old in found):
                     new.append(_Extremum(int(k), kind, scale, float(width), float(height)))
         found += new
-        scale = max(1.0, 2 * scale)
     return sorted(found, key=lambda e: e.index)
 
 
@@ -155,13 +194,18 @@ def _vertex(field: Array, values: Array, extremum: _Extremum, noise: float) -> t
     return float(field[extremum.index] + shift), min(sigma, reach), float(c[0] - c[1] ** 2 / (4 * c[2]))
 
 
-def _crossing(field: Array, height: Array, noise: float, first: _Extremum, second: _Extremum) -> tuple | None:
+def _crossing(
+    field: Array, height: Array, as_white: dict[float, float], first: _Extremum, second: _Extremum
+) -> tuple | None:
     """Return field and uncertainty of a line's centre between two extrema of opposite sign, or None.
 
-    A line's centre is steep: where the slope at the crossing is less than the mean slope between the
-    extrema, two different lines were met.
+    A line's centre is steep and its extrema are about as far apart as each is wide: where the slope at
+    the crossing is less than the mean slope between the extrema, or these lie far apart, two different
+    lines were met.
     """
     start, stop = first.index, second.index
+    if stop - start > FARTHEST * max(first.width, second.width, first.scale, second.scale):
+        return None
     scale = max(first.scale, second.scale, 1.0 if stop - start > 12 else 0.0)
     part = _smooth(height, scale)[start : stop + 1]
     signs = np.flatnonzero(np.sign(part[:-1]) != np.sign(part[1:]))
@@ -175,7 +219,7 @@ def _crossing(field: Array, height: Array, noise: float, first: _Extremum, secon
     if slope * np.sign(mean_slope) < 0.9 * abs(mean_slope):
         return None
     where = field[start + k] - part[k] / (part[k + 1] - part[k]) * spacing
-    return float(where), float(noise * _noise_left(scale) / abs(slope) * spacing)
+    return float(where), float(as_white[scale] * _noise_left(scale) / abs(slope) * spacing)
 
 
 def _baseline(field: Array, values: Array) -> Array:
@@ -205,16 +249,19 @@ def analyse(
     detect : str
         As in `spinfit.sweep.Sweep`: crossings are looked for in a "derivative" only.
     noise : float, optional
-        Standard deviation of a point; by default `spinfit.fitting.noise.noise_level`.
+        Standard deviation of white noise; by default `spinfit.fitting.noise.noise_level`.
     """
     grid = np.linspace(field[0], field[-1], len(field))
     values = np.interp(grid, field, signal)
-    noise = noise_level(np.asarray(signal, float)) if noise is None else noise
+    white = noise_level(np.asarray(signal, float)) if noise is None else noise
+    left = noise_by_scale(values, white)
+    # White noise that leaves as much at a scale: for uncertainties of what is found there.
+    as_white = {scale: sigma / _noise_left(scale) for scale, sigma in left.items()}
     baseline = _baseline(grid, values)
     points: list[TurningPoint] = []
     found: list[_Extremum] = []
-    for extremum in _alternating(_extrema(values, noise), values):
-        where, sigma, top = _vertex(grid, values, extremum, noise)
+    for extremum in _alternating(_extrema(values, left), values):
+        where, sigma, top = _vertex(grid, values, extremum, as_white[extremum.scale])
         height = top - float(np.interp(where, grid, baseline))
         if abs(height) >= RETURN * extremum.prominence:
             found.append(extremum)
@@ -222,15 +269,17 @@ def analyse(
     heights = [point.height for point in points] or [0.0]
     narrowest: list[float] = []
     for k in range(len(found) - 1 if detect == "derivative" else 0):
-        crossing = _crossing(grid, values - baseline, noise, found[k], found[k + 1])
+        crossing = _crossing(grid, values - baseline, as_white, found[k], found[k + 1])
         if crossing is not None:
             points.append(_with_g("crossing", *crossing, 0.0, frequency))
             narrowest.append(points[k + 1].field - points[k].field)
+    total = left[0.0] if left[0.0] > SLOW_NOISE * white else white
     largest = max(abs(h) for h in heights)
     return Analysis(
-        noise=noise,
+        noise=total,
+        white_noise=white,
         peak_to_peak=max([*heights, 0.0]) - min([*heights, 0.0]),
-        signal_to_noise=largest / noise if noise > 0 else 0.0,
+        signal_to_noise=largest / total if total > 0 else 0.0,
         turning_points=tuple(sorted(points, key=lambda point: point.field)),
         narrowest=min(narrowest, default=None),
     )

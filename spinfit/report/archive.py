@@ -20,6 +20,9 @@ from spinfit.report.outcome_json import outcome_text
 FORMAT_VERSION = 1
 """Of the layout below; readers accept this and every older one."""
 
+OUTCOME_GROUP = "spinfit.outcome"
+"""Where the results stand; no trace can be called so, since names hold no dots."""
+
 _NUMBERS = ("value", "uncertainty", "uncertainty_noise", "uncertainty_field", "start")
 _FLAGS = ("varied", "at_limit", "tied")
 
@@ -77,7 +80,7 @@ def _fill(root: h5py.File, outcome: Outcome) -> None:
         _trace(root.create_group(curves.trace), curves, outcome.name)
     if outcome.curves:
         root.attrs["default"] = outcome.curves[0].trace
-    fit = root.create_group("spinfit_outcome")
+    fit = root.create_group(OUTCOME_GROUP)
     fit.attrs["NX_class"] = "NXcollection"
     _values(fit.create_group("parameters"), outcome.parameters)
     _values(fit.create_group("fractions"), outcome.fractions)
