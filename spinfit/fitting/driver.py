@@ -14,7 +14,7 @@ from spinfit.fitting.data import Job
 from spinfit.fitting.outcome import Note, Outcome
 from spinfit.fitting.residuals import Problem, Progress, View, full_view
 from spinfit.fitting.signals import Simulate
-from spinfit.fitting.solve import Descent, Goal, Interrupted
+from spinfit.fitting.solve import Descent, Goal, Interrupted, descend
 from spinfit.fitting.starts import Search
 from spinfit.fitting.summary import outcome_of
 from spinfit.fitting.uncertainty import spread_of
@@ -28,6 +28,8 @@ Array = NDArray[np.float64]
 # noise leaves open.  Never coarser than the job's tolerance, nor finer than a tenth of it.
 _ERROR_TO_NOISE = 0.02
 _FINEST = 0.1
+# Until then chi-squared need not be known better than this times its value per point.
+_ROUGH_GAIN = 0.03
 
 
 def fit(job: Job, *, progress: Progress | None = None, simulate: Simulate = _engine) -> Outcome:
@@ -58,9 +60,9 @@ def fit(job: Job, *, progress: Progress | None = None, simulate: Simulate = _eng
         raise InputError("the job has no trace", "add a [[trace]] table", file=job.path or None)
     try:
         problem = Problem(job, simulate)
-        view = full_view(job.traces, problem.noises, engine_tolerance(problem))
-        check_before(problem, view)
-        descent, finished = _search(problem, view, progress)
+        rough = full_view(job.traces, problem.noises, job.tolerance)
+        check_before(problem, rough)
+        descent, view, finished = _search(problem, rough, progress)
     except InputError as error:
         raise error.at(file=job.path or None) from None
     return _conclude(problem, view, descent, finished=finished, begun=begun)
@@ -77,19 +79,30 @@ def engine_tolerance(problem: Problem) -> float:
     return max(allowed, _FINEST * problem.job.tolerance)
 
 
-def _search(problem: Problem, view: View, progress: Progress | None) -> tuple[Descent, bool]:
-    """Run the search; return the best descent and whether it was left to finish."""
-    goal = Goal(evaluations=100 + 20 * len(problem.names))
-    search = Search(problem, view, goal=goal, progress=progress)
+def _search(problem: Problem, rough: View, progress: Progress | None) -> tuple[Descent, View, bool]:
+    """Search at the job's tolerance, then finish at the one that the noise calls for.
+
+    Returns
+    -------
+    descent : Descent
+    view : View
+        In which the descent ended.
+    finished : bool
+        False when it was stopped.
+    """
+    search = Search(problem, rough, goal=Goal(_ROUGH_GAIN, 100 + 20 * len(problem.names)), progress=progress)
     automatic = problem.job.start == "auto"
     try:
         if not automatic:
-            check_lines(problem, problem.evaluate(problem.start, view), view)
-        return search.run(problem.start, automatic=automatic), True
+            check_lines(problem, problem.evaluate(problem.start, rough), rough)
+        found = search.run(problem.start, automatic=automatic)
+        view = full_view(problem.job.traces, problem.noises, engine_tolerance(problem))
+        fine = descend(problem, view, found.point.free, goal=Goal(central=True), progress=progress)
+        return fine, view, True
     except Interrupted as stop:
-        return _best_so_far(problem, view, search.best, None if stop.point is None else stop.point.free), False
+        return _best_so_far(problem, rough, search.best, None if stop.point is None else stop.point.free), rough, False
     except KeyboardInterrupt:
-        return _best_so_far(problem, view, search.best, None), False
+        return _best_so_far(problem, rough, search.best, None), rough, False
 
 
 def _best_so_far(problem: Problem, view: View, best: Descent | None, free: Array | None) -> Descent:
@@ -106,7 +119,10 @@ def _conclude(problem: Problem, view: View, descent: Descent, *, finished: bool,
     at_limit = limits_reached(problem, descent.point.free)
     spread = None
     if finished and problem.names:
-        jacobian = problem.jacobian(descent.point, view, central=True)
+        # A descent that converged computed its last Jacobian a few hundredths of an uncertainty away.
+        jacobian = descent.jacobian if descent.converged else None
+        if jacobian is None:
+            jacobian = problem.jacobian(descent.point, view, central=True)
         descent = replace(descent, jacobian=jacobian)
         if np.all(np.isfinite(jacobian)):
             spread = spread_of(problem, view, descent.point, jacobian, at_limit)

@@ -34,10 +34,21 @@ _ON_LIMIT = 1e-4
 
 @dataclass(frozen=True)
 class Goal:
-    """When to stop: gain in chi-squared over chi-squared per point, and evaluations of the model."""
+    """When to stop, and how well to look.
+
+    Attributes
+    ----------
+    gain : float
+        In chi-squared, over chi-squared per point, below which nothing is left to gain.
+    evaluations : int
+        Of the model, at most.
+    central : bool
+        Whether the Jacobian is worth two evaluations a parameter.
+    """
 
     gain: float = 1e-3
     evaluations: int = 200
+    central: bool = False
 
 
 @dataclass(frozen=True, eq=False)
@@ -121,7 +132,7 @@ class _Run:
             self.at = self.problem.evaluate(free, self.view)
         point = self.at
         if self.latest is None or self.latest[0] is not point:
-            self.latest = (point, self.problem.jacobian(point, self.view))
+            self.latest = (point, self.problem.jacobian(point, self.view, central=self.goal.central))
         jacobian = self.latest[1]
         low, high = self._room(point.free)
         low, high = np.maximum(low, -_LONGEST), np.minimum(high, _LONGEST)
@@ -224,7 +235,7 @@ def _drive(run: _Run) -> tuple[bool, str]:
     if run.moving.size == 0:
         return True, "nothing to vary"
     run.at = first
-    run.latest = (first, problem.jacobian(first, run.view))
+    run.latest = (first, problem.jacobian(first, run.view, central=run.goal.central))
     run.steps = problem.natural_steps(first, run.view, run.latest[1])
     params = lmfit.Parameters()
     for k in run.moving:
