@@ -79,6 +79,33 @@ class KnotData:
     slope: Array
     strength: Array
 
+    def strength_at(self, leaf: int, row: Array | slice, knot: Array | slice, fields: Array) -> Array:
+        """Return the strength inside a leaf, by the polynomial through the nodes about it."""
+        nodes, basis = stencil(self.fields, self.leaves[leaf, 1], fields)
+        return sum(basis[i] * self.strength[row, node, knot] for i, node in enumerate(nodes))
+
+
+def stencil(nodes: Array, middle: int, fields: Array, most: int = 5) -> tuple[range, Array]:
+    """Return up to `most` nodes about one of them and their Lagrange polynomials at some fields.
+
+    Strengths have no slopes to go by, and a parabola through a leaf's own three nodes is what
+    would limit the accuracy.
+
+    Returns
+    -------
+    indices : range
+    basis : ndarray, shape (len(indices), *fields.shape)
+    """
+    first = max(0, min(middle - most // 2, len(nodes) - most))
+    indices = range(first, min(first + most, len(nodes)))
+    x = nodes[indices.start : indices.stop]
+    basis = np.ones((len(x), *fields.shape))
+    for i in range(len(x)):
+        for j in range(len(x)):
+            if i != j:
+                basis[i] *= (fields - x[j]) / (x[i] - x[j])
+    return indices, basis
+
 
 class FieldNodes:
     """Solutions at shared fields for a growing set of directions."""
@@ -133,8 +160,9 @@ class FieldNodes:
             On symmetry axes levels truly cross: there halving ends at this depth.
         """
         low, high = self.request.low, self.request.high
-        pieces = 1 if len(self.lower) == 1 else 2
-        edges = [float(e) for e in np.linspace(low, high, pieces + 1)]
+        # levels of one electron spin 1/2 hardly bend over a narrow range
+        narrow = high - low < 0.5 * high and self.system.electrons == 1 and self.system.spins[0] == 0.5
+        edges = [float(e) for e in np.linspace(low, high, 2 if narrow else 3)]
         pending = list(zip(edges[:-1], edges[1:], strict=True))
         for depth in range(deepest + 1):
             middles = [0.5 * (a + b) for a, b in pending]
@@ -167,8 +195,8 @@ class FieldNodes:
                 halves += [(a, m), (m, b)]
         return halves
 
-    def extend(self, directions: Array, known: NDArray[np.intp]) -> None:
-        """Go over to a finer set of directions.
+    def moved(self, directions: Array, known: NDArray[np.intp]) -> FieldNodes:
+        """Return the same nodes for another set of directions, reusing what is known.
 
         Parameters
         ----------
@@ -176,27 +204,33 @@ class FieldNodes:
         known : ndarray of int, shape (n,)
             Position of each present direction in the new set, -1 for none.
         """
+        other = FieldNodes(self.system, self.request, directions)
+        other.leaves, other.count = self.leaves, self.count
         fields = sorted({x for leaf in self.leaves for x in leaf})
         kept = known >= 0
         new = np.ones(len(directions), dtype=bool)
         new[known[kept]] = False
-        fresh = self._solve(directions[new], fields)
-        merged = {}
-        for field, columns in zip(fields, fresh, strict=True):
+        for field, columns in zip(fields, other._solve(directions[new], fields), strict=True):
             arrays = []
             for old, added in zip(self.solved[field], columns, strict=True):
                 array = np.empty((len(directions), *added.shape[1:]))
                 array[new], array[known[kept]] = added, old[kept]
                 arrays.append(array)
-            merged[field] = tuple(arrays)
-        self.solved, self.directions = merged, directions
+            other.solved[field] = tuple(arrays)
+        return other
 
-    def data(self) -> KnotData:
-        """Return gap, slope and strength of every pair that can be resonant and is strong enough."""
+    def data(self, pairs: Pairs | None = None) -> KnotData:
+        """Return gap, slope and strength of every pair that can be resonant and is strong enough.
+
+        Parameters
+        ----------
+        pairs : (lower, upper), optional
+            Take these pairs in place of finding them.
+        """
         fields = sorted({x for leaf in self.leaves for x in leaf})
         index = {x: i for i, x in enumerate(fields)}
         leaves = np.array([[index[x] for x in leaf] for leaf in self.leaves], dtype=np.intp).reshape(-1, 3)
-        pairs = self._relevant(fields)
+        pairs = self._relevant(fields) if pairs is None else pairs
         columns = [self._differences(x, pairs) for x in fields]
         if not columns:
             empty = np.empty((0, 0, len(self.directions)))
@@ -260,7 +294,7 @@ def trace_branches(data: KnotData, chosen: NDArray[np.intp]) -> Branches:
     gap = data.gap[chosen]
     field, weight, slope = (np.zeros((len(chosen), n)) for _ in range(3))
     positive = gap >= 0
-    for leaf in data.leaves:
+    for number, leaf in enumerate(data.leaves):
         first, middle, last = leaf
         early = positive[:, first] != positive[:, middle]
         here = early | (positive[:, middle] != positive[:, last])
@@ -270,13 +304,13 @@ def trace_branches(data: KnotData, chosen: NDArray[np.intp]) -> Branches:
         half = 0.5 * (data.fields[last] - data.fields[first])
         f = gap[row[None], leaf[:, None], knot[None]]
         g = data.slope[chosen[row][None], leaf[:, None], knot[None]]
-        s = data.strength[chosen[row][None], leaf[:, None], knot[None]]
         c = hermite.quintic(f, g * half)
         left = early[row, knot]
         t = hermite.refine(c, np.where(left, -1.0, 0.0), np.where(left, 0.0, 1.0), 4)
         field[row, knot] = data.fields[middle] + half * t
         slope[row, knot] = hermite.slope(c, t) / half
-        weight[row, knot] = parabola(s, t) / np.maximum(np.abs(slope[row, knot]), 1e-300)
+        strength = data.strength_at(number, chosen[row], knot, field[row, knot])
+        weight[row, knot] = strength / np.maximum(np.abs(slope[row, knot]), 1e-300)
     return Branches(chosen, field, weight, slope)
 
 

@@ -16,7 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spinfit import hermite
-from spinfit.branches import KnotData, Request, parabola
+from spinfit.branches import KnotData, Request, parabola, stencil
 from spinfit.orientations import Mesh, Rings
 from spinfit.resonance import can_reach
 from spinfit.sheets import (
@@ -56,7 +56,14 @@ class _Landscape:
         nodes = self.leaves[leaf].T
         steps = self.steps[:, nodes, point]
         apart = np.hypot(parabola(steps[0], t), parabola(steps[1], t))
-        return parabola(self.strength[nodes, point], t), apart
+        strength = np.empty(len(t))
+        for number in np.unique(leaf):
+            here = np.flatnonzero(leaf == number)
+            first, middle, last = self.leaves[number]
+            half = 0.5 * (self.fields[last] - self.fields[first])
+            indices, basis = stencil(self.fields, middle, self.fields[middle] + half * t[here])
+            strength[here] = sum(basis[i] * self.strength[node, point[here]] for i, node in enumerate(indices))
+        return strength, apart
 
 
 @dataclass(frozen=True, eq=False)

@@ -77,11 +77,35 @@ def symmetry_of(system: System) -> Symmetry:
     for frame in frames:
         twofold = [_invariant(system, frame[:, k], np.pi) for k in range(3)]
         if all(twofold):
-            return Symmetry("octant", frame)
+            return Symmetry("octant", _with_unique_z(frame, _anisotropy(system)))
         if any(twofold) and best is None:
             k = twofold.index(True)
             best = Symmetry("quarter", frame[:, [(k + 1) % 3, (k + 2) % 3, k]])
-    return best or Symmetry("half", frames[-1])
+    anisotropy = _anisotropy(system)
+    return best or Symmetry("half", _with_unique_z(np.linalg.eigh(anisotropy)[1], anisotropy))
+
+
+def _anisotropy(system: System) -> Array:
+    """Return a symmetric tensor, shape (3, 3), with the directions in which the spectrum differs most.
+
+    n.Q.n = Tr[(n.Z) H0 (n.Z) H0] sees D and A (to second order) and Tr[(n.Z)^2] sees g; which
+    combination does not matter, since it only places the grid.
+    """
+    z, h0 = system.zeeman, system.h0
+    zh = z @ h0
+    second = np.einsum("aij,bji->ab", zh, zh).real / max(np.abs(np.trace(h0 @ h0)), 1e-300)
+    return second + 1e-3 * np.einsum("aij,bji->ab", z, z).real / len(h0)
+
+
+def _with_unique_z(frame: Array, tensor: Array) -> Array:
+    """Return the frame with its axes turned round so that z is the one that differs from the other two."""
+    along = np.einsum("ak,ab,bk->k", frame, tensor, frame)
+    order = np.argsort(along)
+    low, middle, high = along[order]
+    if high - middle < middle - low:
+        order = order[::-1]
+    turned = frame[:, order]
+    return turned * np.array([1, 1, np.sign(np.linalg.det(turned))])
 
 
 def _frame_about(z: Array) -> Array:
@@ -144,13 +168,34 @@ def _ring_analysis(kind: str, harmonics: int, intervals: int, equator: bool) -> 
     return out
 
 
+def stretched(angle: Array, stretch: float) -> Array:
+    """Return s = (angle + w) / 2 with tan w = stretch x tan(angle), 0 to pi/2.
+
+    A function of theta that is even about the pole and the equator is so in s too, and analytic
+    where it was.  A stretch below 1 draws s out at the equator, above 1 at the pole, where
+    features may be much narrower than elsewhere; the rest keeps at least half of its room.
+    """
+    return 0.5 * (angle + np.arctan2(stretch * np.sin(angle), np.cos(angle)))
+
+
+def unstretched(s: Array, stretch: float) -> Array:
+    """Return the angle at which `stretched` gives s, by bisection and Newton steps."""
+    low, high = np.zeros_like(s), np.full_like(s, 0.5 * np.pi)
+    for _ in range(50):
+        middle = 0.5 * (low + high)
+        below = stretched(middle, stretch) < s
+        low, high = np.where(below, middle, low), np.where(below, high, middle)
+    return np.where(s <= 0, 0.0, np.where(s >= 0.5 * np.pi, 0.5 * np.pi, 0.5 * (low + high)))
+
+
 @lru_cache(maxsize=256)
-def _theta_matrices(rings: int, theta: tuple[float, ...] | int) -> tuple[Array, Array]:
+def _theta_matrices(rings: int, theta: tuple[float, ...] | int, stretch: float) -> tuple[Array, Array]:
     """Return the even and the odd continuation in theta, each of shape (len(theta), rings + 1).
 
     `theta` is a tuple of angles, or the number of intervals of an even mesh over 0 to pi/2.
     """
-    angles = np.linspace(0, 0.5 * np.pi, theta + 1) if isinstance(theta, int) else np.array(theta)
+    plain = np.linspace(0, 0.5 * np.pi, theta + 1) if isinstance(theta, int) else np.array(theta)
+    angles = stretched(plain, stretch)
     knots = 0.5 * np.pi * np.arange(rings + 1) / rings
     k = np.arange(rings + 1)
     even = np.cos(2 * np.outer(angles, k)) @ np.linalg.inv(np.cos(2 * np.outer(knots, k)))
@@ -232,7 +277,9 @@ def _clenshaw_curtis(intervals: int) -> Array:
 
 @dataclass(frozen=True)
 class Rings:
-    """Knots on rings theta_i = (pi/2) i/rings with min(i + extra, harmonics) azimuth intervals a right angle.
+    """Knots on rings with min(i + extra, harmonics) azimuth intervals a right angle.
+
+    Ring i lies at s_i = (pi/2) i/rings in the coordinate of `stretched`.
 
     Attributes
     ----------
@@ -245,12 +292,15 @@ class Rings:
     extra : int
         Even.  Small rings need a few azimuths more than their length asks for: the lowest
         harmonics fall only as a low power of theta towards the pole.
+    stretch : float
+        1 for evenly spaced rings.
     """
 
     kind: str
     rings: int
     harmonics: int
     extra: int = 0
+    stretch: float = 1.0
 
     def _intervals(self, ring: int) -> int:
         return min(ring + self.extra, self.harmonics) if ring else 0
@@ -268,7 +318,7 @@ class Rings:
     def halved(self) -> Rings:
         """Return the coarser set of which every knot is a knot of this one."""
         top = min(self.harmonics, self.rings + self.extra)
-        return Rings(self.kind, self.rings // 2, max(1, top // 2), self.extra // 2)
+        return Rings(self.kind, self.rings // 2, max(1, top // 2), self.extra // 2, self.stretch)
 
     def halved_knots(self) -> NDArray[np.intp]:
         """Return the positions of the coarser set's knots among this one's."""
@@ -280,20 +330,11 @@ class Rings:
 
     def knot_weights(self) -> Array:
         """Return the solid angle that each knot stands for, shape (n,), summing to 1."""
-        theta, _ = self.angles()
-        ring = np.rint(theta * (2 * self.rings / np.pi)).astype(int)
-        count = np.bincount(ring)
-        w = _clenshaw_curtis(self.rings)[ring] / count[ring]
-        if self.kind == "octant":
-            _, phi = self.angles()
-            edge = ((phi < 1e-9) | (phi > 0.5 * np.pi - 1e-9)) & (ring > 0)
-            interval = np.maximum(count - 1, 1)
-            w = _clenshaw_curtis(self.rings)[ring] / interval[ring] * np.where(edge, 0.5, 1.0)
-        return w
+        return _knot_weights(self)
 
     def to_mesh(self, values: Array, mesh: Mesh) -> Array:
         """Continue values at the knots, shape (q, n), to a mesh: (q, thetas + 1, azimuths)."""
-        even, odd = _theta_matrices(self.rings, mesh.thetas)
+        even, odd = _theta_matrices(self.rings, mesh.thetas, self.stretch)
         basis, has_odd = _mesh_basis(self, mesh)
         amplitude = (values @ _analysis(self).T).reshape(len(values), self.rings + 1, -1)
         if has_odd is not None:
@@ -301,6 +342,13 @@ class Rings:
             columns += np.where(has_odd[None, :, None], 0, (even @ amplitude).transpose(0, 2, 1))
             return columns.transpose(0, 2, 1) @ basis.T
         return even @ amplitude @ basis.T
+
+    def without_harmonics(self, values: Array, kept: int) -> Array:
+        """Return values at the knots, shape (q, n), with azimuthal harmonics above `kept` removed.
+
+        Harmonics are counted so that `harmonics` azimuth intervals resolve as many.
+        """
+        return values @ _truncation(self, kept).T
 
     def to_finer(self, values: Array, finer: Rings) -> Array:
         """Continue values at the knots, shape (q, n), to the knots of another set, (q, n')."""
@@ -310,11 +358,29 @@ class Rings:
 @lru_cache(maxsize=128)
 def _knot_angles(rings: Rings) -> tuple[Array, Array]:
     theta, phi = [], []
+    rows = unstretched(0.5 * np.pi * np.arange(rings.rings + 1) / rings.rings, rings.stretch)
     for i in range(rings.rings + 1):
         azimuths = _ring_azimuths(rings.kind, rings._intervals(i), i == rings.rings)
         phi.append(azimuths)
-        theta.append(np.full(len(azimuths), 0.5 * np.pi * i / rings.rings))
+        theta.append(np.full(len(azimuths), rows[i]))
     return np.concatenate(theta), np.concatenate(phi)
+
+
+@lru_cache(maxsize=128)
+def _knot_weights(rings: Rings) -> Array:
+    theta, phi = rings.angles()
+    even = stretched(theta, rings.stretch)
+    ring = np.rint(even * (2 * rings.rings / np.pi)).astype(int)
+    count = np.bincount(ring)
+    # d(cos theta) = d(cos s) sin(theta)/sin(s) dtheta/ds
+    e = rings.stretch
+    grow = 2 / (1 + e / (np.cos(theta) ** 2 + (e * np.sin(theta)) ** 2))
+    jacobian = grow * np.where(ring > 0, np.sin(theta) / np.maximum(np.sin(even), 1e-300), grow)
+    w = _clenshaw_curtis(rings.rings)[ring] * jacobian
+    if rings.kind != "octant":
+        return w / count[ring]
+    edge = ((phi < 1e-9) | (phi > 0.5 * np.pi - 1e-9)) & (ring > 0)
+    return w / np.maximum(count - 1, 1)[ring] * np.where(edge, 0.5, 1.0)
 
 
 @lru_cache(maxsize=128)
@@ -339,6 +405,26 @@ def _analysis(rings: Rings) -> Array:
     return out
 
 
+@lru_cache(maxsize=64)
+def _truncation(rings: Rings, kept: int) -> Array:
+    """Return the matrix, shape (n, n), that removes harmonics above `kept` on every ring."""
+    theta, phi = rings.angles()
+    basis = _phi_basis(rings.kind, rings.harmonics, phi)
+    top = rings.harmonics
+    if rings.kind == "octant":
+        order = np.arange(top + 1.0)
+    elif rings.kind == "quarter":
+        order = np.concatenate([np.arange(top + 1.0), np.arange(1.0, top)])
+    else:
+        order = 0.5 * np.concatenate([np.arange(2 * top + 1.0), np.arange(1.0, 2 * top)])
+    basis = basis * (order <= kept)
+    analysis = _analysis(rings).reshape(rings.rings + 1, -1, len(theta))
+    ring = np.concatenate(
+        [[i] * len(_ring_azimuths(rings.kind, rings._intervals(i), i == rings.rings)) for i in range(rings.rings + 1)]
+    )
+    return np.einsum("nh,nhk->nk", basis, analysis[ring])
+
+
 @lru_cache(maxsize=128)
 def _mesh_basis(rings: Rings, mesh: Mesh) -> tuple[Array, NDArray[np.bool_] | None]:
     odd = _odd_harmonics(rings.kind, rings.harmonics)
@@ -349,7 +435,7 @@ def _mesh_basis(rings: Rings, mesh: Mesh) -> tuple[Array, NDArray[np.bool_] | No
 def _knots_to_knots(coarse: Rings, fine: Rings) -> Array:
     theta, phi = fine.angles()
     unique, inverse = np.unique(np.round(theta, 12), return_inverse=True)
-    even, odd = (m[inverse] for m in _theta_matrices(coarse.rings, tuple(unique)))
+    even, odd = (m[inverse] for m in _theta_matrices(coarse.rings, tuple(unique), coarse.stretch))
     basis = _phi_basis(coarse.kind, coarse.harmonics, phi)
     is_odd = _odd_harmonics(coarse.kind, coarse.harmonics)
     along = np.where(is_odd[None, None, :], odd[:, :, None], even[:, :, None]) * basis[:, None, :]

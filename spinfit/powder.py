@@ -14,25 +14,17 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit.branches import (
-    Branches,
-    FieldNodes,
-    KnotData,
-    Request,
-    count_roots,
-    trace_branches,
-)
+from spinfit.branches import Branches, KnotData, Request, trace_branches
 from spinfit.hamiltonian import System
+from spinfit.knots import continued, restored, settle
 from spinfit.lineshape import FieldGrid
 from spinfit.loops import add_looping
-from spinfit.orientations import Mesh, Rings, Symmetry, symmetry_of
-from spinfit.resonance import can_reach, find
+from spinfit.orientations import Mesh, Rings, symmetry_of
+from spinfit.resonance import find
 from spinfit.sheets import RICHARDSON, Histograms, add_points, add_spread, cells, point_share, spacing
 
 Array = NDArray[np.float64]
 
-LADDER = (4, 8, 16, 24, 32, 48, 64, 96)
-"""Numbers of rings that are tried in turn."""
 FLATNESS = 0.25
 """Root of the curvature of a field over one step of the mesh, in line widths, at the default tolerance."""
 LARGEST_LINE = 200_000
@@ -74,17 +66,16 @@ def powder(system: System, request: Request, grid: FieldGrid) -> tuple[dict[int,
     report = Report(symmetry.kind)
     if symmetry.kind == "point":
         return _one_direction(system, request, grid, report)
-    nodes, rings, data, smooth = _refine(system, symmetry, request, report)
+    knots = settle(system, symmetry, request)
     histograms = Histograms(grid)
-    counts = count_roots(data)
-    single = _single(data, counts) & smooth
-    if single.any():
-        _sum_branches(rings, trace_branches(data, np.flatnonzero(single)), request, histograms, report)
-    other = ~single & (counts.any(axis=1) | _touches(data))
-    if other.any():
-        _sum_loops(rings, data, np.flatnonzero(other), request, histograms, report)
-    report.directions, report.diagonalisations = len(nodes.directions), nodes.count
-    report.pairs, report.looping = int(single.sum()), int(other.sum())
+    if knots.single.any():
+        branches = trace_branches(knots.data, np.flatnonzero(knots.single))
+        _sum_branches(knots.rings, branches, request, histograms, report)
+    if knots.other.any():
+        _sum_loops(knots.rings, knots.data, np.flatnonzero(knots.other), request, histograms, report)
+    report.rings, report.estimated_error = knots.rings.rings, knots.error
+    report.directions, report.diagonalisations = knots.directions, knots.diagonalisations
+    report.pairs, report.looping = int(knots.single.sum()), int(knots.other.sum())
     return histograms.orders, report
 
 
@@ -103,97 +94,6 @@ def _one_direction(
     histograms = Histograms(grid)
     histograms.points(got.field, got.weight)
     return histograms.orders, report
-
-
-def _rings(kind: str, size: int) -> Rings:
-    extra = 0 if size == 4 else 2 * (size // 8)
-    return Rings(kind, size, size + extra, extra)
-
-
-def _single(data: KnotData, counts: NDArray[np.intp]) -> NDArray[np.bool_]:
-    """Which pairs have one well-sloped resonance at every knot."""
-    return (counts == 1).all(axis=1) if counts.size else np.zeros(len(counts), dtype=bool)
-
-
-def _touches(data: KnotData) -> NDArray[np.bool_]:
-    """Which pairs could be resonant between nodes though they change sign at none."""
-    out = np.zeros(len(data.gap), dtype=bool)
-    for first, middle, last in data.leaves:
-        for a, b in ((first, middle), (middle, last)):
-            h = data.fields[b] - data.fields[a]
-            reach = can_reach(data.gap[:, a], data.gap[:, b], data.slope[:, a] * h, data.slope[:, b] * h)
-            out |= reach.any(axis=1)
-    return out
-
-
-def _refine(
-    system: System, symmetry: Symmetry, request: Request, report: Report
-) -> tuple[FieldNodes, Rings, KnotData, NDArray[np.bool_]]:
-    """Refine the knots until the halved set predicts the full one well enough."""
-    kind = symmetry.kind
-    doublet = len(system.h0) == 2
-    steps = LADDER[0 if doublet else 1 :]
-    nodes: FieldNodes | None = None
-    previous: Rings | None = None
-    for size in steps:
-        rings = _rings(kind, size)
-        directions = rings.directions(symmetry.axes)
-        if nodes is None:
-            nodes = FieldNodes(system, request, directions)
-            nodes.choose(accuracy=_node_accuracy(request))
-        else:
-            nodes.extend(directions, previous.within(rings))
-        previous = rings
-        data = nodes.data()
-        error = _knot_error(rings, data, request)
-        report.rings, report.estimated_error = size, error
-        if error <= request.tolerance or not np.isfinite(error):
-            break
-    return nodes, rings, data, np.ones(len(data.gap), dtype=bool)
-
-
-def _node_accuracy(request: Request) -> float:
-    """Return the MHz that a cubic may miss by; the quintic used is some fifty times better."""
-    return 28.0 * request.scale * request.tolerance * 10
-
-
-GAIN = 0.1
-"""What halving the spacing of the knots is trusted to gain at least."""
-
-
-def _knot_error(rings: Rings, data: KnotData, request: Request) -> float:
-    """Estimate the spectrum's relative error from what every second ring predicts."""
-    single = _single(data, count_roots(data))
-    if not single.any():
-        return 0.0
-    branches = trace_branches(data, np.flatnonzero(single))
-    coarse, kept = rings.halved(), rings.halved_knots()
-    x, y = _continued(branches.field, branches.weight)
-    guess_x, guess_y = coarse.to_finer(x[:, kept], rings), coarse.to_finer(y[:, kept], rings)
-    field, weight = _restored(guess_x, guess_y, _squared(branches.field))
-    share = branches.weight * rings.knot_weights()
-    total = np.abs(share).sum()
-    shift = np.abs(field - branches.field) / request.scale
-    change = np.abs(weight - branches.weight)
-    error = (np.abs(share) * shift).sum() / total + (change * rings.knot_weights()).sum() / total
-    return GAIN * float(error)
-
-
-def _squared(fields: Array) -> NDArray[np.bool_]:
-    """Which branches (rows) are far enough from zero field to be continued as B^-2, shape (p, 1)."""
-    return fields.min(axis=1, keepdims=True) > 0.1 * fields.max(axis=1, keepdims=True)
-
-
-def _continued(fields: Array, weights: Array) -> tuple[Array, Array]:
-    inverse = _squared(fields)
-    safe = np.where(inverse, fields, 1.0)
-    return np.where(inverse, safe**-2, fields), np.where(inverse, weights * safe**-3, weights)
-
-
-def _restored(x: Array, y: Array, inverse: NDArray[np.bool_]) -> tuple[Array, Array]:
-    safe = np.where(inverse, np.maximum(x, 1e-30), 1.0)
-    fields = np.where(inverse, safe**-0.5, x)
-    return fields, np.where(inverse, y * np.where(inverse, fields, 1.0) ** 3, y)
 
 
 def _ladder_size(wanted: float) -> int:
@@ -246,8 +146,7 @@ def _probe_azimuths(rings: Rings) -> int:
 
 def _sum_branches(rings: Rings, branches: Branches, request: Request, histograms: Histograms, report: Report) -> None:
     """Add every branch, continued to a mesh fine enough for it."""
-    x, y = _continued(branches.field, branches.weight)
-    inverse = _squared(branches.field)
+    x, y, inverse = continued(branches.field, branches.weight)
     sizes = _mesh_for(rings, branches.field, request)
     for size in sorted(set(sizes)):
         rows = [i for i, s in enumerate(sizes) if s == size]
@@ -256,7 +155,7 @@ def _sum_branches(rings: Rings, branches: Branches, request: Request, histograms
         for start in range(0, len(rows), step):
             part = rows[start : start + step]
             both = rings.to_mesh(np.concatenate([x[part], y[part]]), mesh)
-            fields, weights = _restored(both[: len(part)], both[len(part) :], inverse[part][:, :, None])
+            fields, weights = restored(both[: len(part)], both[len(part) :], inverse[part][:, :, None])
             report.mesh_points += fields.size
             apart = spacing(fields, mesh)
             if apart.max() <= 1.05 * request.spacing:

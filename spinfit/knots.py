@@ -1,0 +1,330 @@
+"""How many knots, and where: refinement until the sphere is known well enough.
+
+Every second ring of a set of knots is a set of its own.  What it predicts at the knots it does not
+hold, against what was computed there, is its error; from two such errors the error of the full set
+is extrapolated.  When the error sits near the equator or the pole, as with a hyperfine tensor much
+larger along z, the rings are drawn together there.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from spinfit.branches import FieldNodes, KnotData, Request, count_roots, trace_branches
+from spinfit.hamiltonian import System
+from spinfit.orientations import Rings, Symmetry, unstretched
+from spinfit.resonance import can_reach
+
+Array = NDArray[np.float64]
+
+SIZES = (8, 12, 16, 20, 24, 32, 40, 48, 64, 80, 96)
+"""Numbers of rings that are tried in turn."""
+MOST_KNOTS = 12_000
+"""Directions at which refinement gives up and says so."""
+POOR = 0.02
+"""Error of the coarse half of the first set above which drawing the rings together is tried."""
+MISTRUST = 2.0
+"""Factor on the extrapolated error, unless it falls so fast that a power law is itself pessimistic."""
+
+
+@dataclass(frozen=True, eq=False)
+class Knots:
+    """The knots that were settled on, with everything computed there.
+
+    Attributes
+    ----------
+    rings : Rings
+    data : KnotData
+    single : ndarray of bool, shape (pairs,)
+        Pairs with exactly one resonance at every knot.
+    other : ndarray of bool, shape (pairs,)
+        Pairs with resonances at some knots, or more than one.
+    error : float
+        Estimated error of the spectrum relative to its top.
+    directions, diagonalisations : int
+    """
+
+    rings: Rings
+    data: KnotData
+    single: NDArray[np.bool_]
+    other: NDArray[np.bool_]
+    error: float
+    directions: int
+    diagonalisations: int
+
+
+def settle(system: System, symmetry: Symmetry, request: Request) -> Knots:
+    """Refine knots for a system until the tolerance is met or `MOST_KNOTS` is reached."""
+    if len(system.h0) == 2:  # B^-2 of a doublet holds no harmonics above l = 2
+        trial = _Trial(system, symmetry, request, Rings(symmetry.kind, 4, 4))
+        if trial.half_error() <= request.tolerance:
+            return trial.knots(trial.half_error(), trial.count)
+    trial = _Trial(system, symmetry, request, _rings(symmetry.kind, SIZES[0]))
+    spent = trial.count
+    harmonics = None
+    if trial.half_error() > request.tolerance:
+        harmonics = trial.harmonics_needed()
+    if trial.half_error() > max(POOR, request.tolerance):
+        trial, extra = _drawn_together(trial, system, symmetry, request, harmonics)
+        spent += extra
+    history = [(trial.rings.rings // 2, trial.half_error())]
+    for size in [s for s in SIZES if s > trial.rings.rings]:
+        error = _extrapolated(history, trial.rings.rings)
+        if error <= request.tolerance:
+            break
+        if size < SIZES[-1] and _hoped(history[-1], size) > request.tolerance:
+            continue
+        finer = _rings(symmetry.kind, size, trial.rings.stretch, harmonics)
+        if len(finer.angles()[0]) > MOST_KNOTS:
+            break
+        trial = _Trial(system, symmetry, request, finer, trial)
+        spent += trial.count
+        history.append((size // 2, trial.half_error()))
+    return trial.knots(_extrapolated(history, trial.rings.rings), spent)
+
+
+def _rings(kind: str, size: int, stretch: float = 1.0, harmonics: int | None = None) -> Rings:
+    extra = 2 * max(1, size // 8)
+    most = size + extra
+    return Rings(kind, size, most if harmonics is None else min(most, harmonics), extra, stretch)
+
+
+def _hoped(last: tuple[int, float], size: int) -> float:
+    """Return the error to hope for at a size, between geometric and algebraic convergence."""
+    rings, error = last
+    geometric = 10 * (min(error, 5.0) / 10) ** (size / rings)
+    return math.sqrt(geometric * error) * (rings / size) ** 2
+
+
+def _extrapolated(history: list[tuple[int, float]], rings: int) -> float:
+    """Return the error expected at `rings` from the errors measured at smaller numbers.
+
+    The power law through the last two; a first measurement alone is trusted to gain little.
+    """
+    size, error = history[-1]
+    power = 2.0
+    if len(history) > 1:
+        before, worse = history[-2]
+        if error <= 0:
+            return 0.0
+        power = min(8.0, max(0.5, math.log(max(worse, error) / error) / math.log(size / before)))
+    return (1.0 if power > 4.5 else MISTRUST) * error * (size / rings) ** power
+
+
+def _drawn_together(
+    trial: _Trial, system: System, symmetry: Symmetry, request: Request, harmonics: int | None
+) -> tuple[_Trial, int]:
+    """Draw the rings to where the error sits, if that helps; return the trial and what it cost."""
+    theta, _ = trial.rings.angles()
+    ring = np.rint(theta * (2 * SIZES[0] / np.pi)).astype(int)
+    solid = np.bincount(ring, trial.rings.knot_weights())
+    # rings of even number are the coarse half's own and carry no error
+    density = (np.bincount(ring, trial.error_by_knot()) / solid)[1::2]
+    if density[-1] > density[-2]:
+        stretches = (1.0, 0.25, 0.08)
+    elif density[0] > density[1]:
+        stretches = (1.0, 4.0, 12.0)
+    else:
+        return trial, 0
+    along, count = _along_meridian(trial, symmetry, stretches)
+    stretch = stretches[int(np.argmin(along))]
+    if stretch == 1.0:
+        return trial, count
+    better = _Trial(system, symmetry, request, _rings(symmetry.kind, 16, stretch, harmonics), trial)
+    return better, count + better.count
+
+
+MERIDIAN = 32
+"""Points of the meridian, pole to pole, on which stretches are compared."""
+
+
+def _along_meridian(trial: _Trial, symmetry: Symmetry, stretches: tuple[float, ...]) -> tuple[list[float], int]:
+    """Return for each stretch the error that every second point of a meridian makes, and the cost.
+
+    On a great circle a spectrum has period pi, so that Fourier series need no parity.
+    """
+    azimuth = 0.4  # rad; a meridian that is no symmetry plane
+    s = np.pi * np.arange(MERIDIAN) / MERIDIAN
+    north = s <= 0.5 * np.pi
+    k = np.arange(1, MERIDIAN // 4)
+
+    def basis(x: Array) -> Array:
+        waves = 2 * np.outer(x, k)
+        top = np.cos(2 * (MERIDIAN // 4) * x)[:, None]
+        return np.concatenate([np.ones((len(x), 1)), np.cos(waves), np.sin(waves), top], axis=1)
+
+    to_odd = basis(s[1::2]) @ np.linalg.inv(basis(s[::2]))
+    thetas = []
+    for stretch in stretches:
+        folded = unstretched(np.where(north, s, np.pi - s), stretch)
+        thetas.append(np.where(north, folded, np.pi - folded))
+    theta = np.concatenate(thetas)
+    sin = np.sin(theta)
+    directions = np.column_stack([sin * math.cos(azimuth), sin * math.sin(azimuth), np.cos(theta)]) @ symmetry.axes.T
+    nodes = trial.nodes.moved(directions, np.full(len(trial.nodes.directions), -1))
+    data = nodes.data(trial.data.pairs)
+    rows = np.flatnonzero((count_roots(data) == 1).all(axis=1))
+    if not len(rows):
+        return [0.0] * len(stretches), len(theta)
+    branches = trace_branches(data, rows)
+    errors = []
+    for i in range(len(stretches)):
+        part = slice(i * MERIDIAN, (i + 1) * MERIDIAN)
+        field, weight = branches.field[:, part], branches.weight[:, part]
+        x, y, inverse = continued(field, weight)
+        guess_b, guess_w = restored(x[:, ::2] @ to_odd.T, y[:, ::2] @ to_odd.T, inverse)
+        shift = np.minimum(np.abs(guess_b - field[:, 1::2]) / trial.request.scale, 1.0)
+        width = np.gradient(thetas[i])[1::2] * np.sin(thetas[i][1::2])
+        miss = weight[:, 1::2] * shift + np.abs(guess_w - weight[:, 1::2])
+        errors.append(float((miss * width).sum()))
+    return errors, nodes.count - trial.nodes.count
+
+
+class _Trial:
+    """One set of knots with its numbers and the error of its coarser half."""
+
+    def __init__(
+        self, system: System, symmetry: Symmetry, request: Request, rings: Rings, before: _Trial | None = None
+    ) -> None:
+        self.rings, self.request = rings, request
+        directions = rings.directions(symmetry.axes)
+        if before is None:
+            self.nodes = FieldNodes(system, request, directions)
+            self.nodes.choose(node_accuracy(request))
+            self.count = self.nodes.count
+        else:
+            self.nodes = before.nodes.moved(directions, before.rings.within(rings))
+            self.count = self.nodes.count - before.nodes.count
+        self.data = self.nodes.data()
+        counts = count_roots(self.data)
+        self.single = (counts == 1).all(axis=1) if counts.size else np.zeros(len(counts), dtype=bool)
+        self.other = ~self.single & (counts.any(axis=1) | _touches(self.data))
+        self._by_knot: Array | None = None
+
+    def error_by_knot(self) -> Array:
+        """Return each knot's share of the error that the coarser half makes, shape (n,)."""
+        if self._by_knot is None:
+            self._by_knot = self._compare()
+        return self._by_knot
+
+    def half_error(self) -> float:
+        """Return the spectrum's relative error as the coarser half would make it."""
+        return float(self.error_by_knot().sum())
+
+    def harmonics_needed(self) -> int | None:
+        """Return how many azimuth intervals a right angle are enough, None where these are too few.
+
+        Twice as many as the harmonics that matter, so that the coarser half still holds them all.
+        """
+        if self.rings.kind == "axial" or self.other.any() or not self.single.any():
+            return None
+        for kept in (1, 2, 3, 4):
+            miss = self._miss(lambda values, k=kept: self.rings.without_harmonics(values, k))
+            if miss.sum() <= 0.2 * self.request.tolerance:
+                return 2 * kept
+        return None
+
+    def _miss(self, predict: Callable[[Array], Array]) -> Array:
+        """Return the relative error, by knot, of single branches when continued values are replaced."""
+        rows = np.flatnonzero(self.single)
+        solid = self.rings.knot_weights()
+        branches = trace_branches(self.data, rows)
+        x, y, inverse = continued(branches.field, branches.weight)
+        guess = predict(np.concatenate([x, y]))
+        field, weight = restored(guess[: len(rows)], guess[len(rows) :], inverse)
+        size = np.abs(branches.weight)
+        shift = np.minimum(np.abs(field - branches.field) / self.request.scale, 1.0)
+        return ((size * shift + np.abs(weight - branches.weight)) * solid).sum(axis=0) / (size * solid).sum()
+
+    def _compare(self) -> Array:
+        solid = self.rings.knot_weights()
+        coarse, kept = self.rings.halved(), self.rings.halved_knots()
+        error = np.zeros(len(solid))
+        whole = self.weight_of_single()
+        total = whole
+        if self.single.any():
+            error += whole * self._miss(lambda values: coarse.to_finer(values[:, kept], self.rings))
+        if self.other.any():
+            amount, miss = self._compare_gaps(np.flatnonzero(self.other), coarse, kept)
+            error += miss * solid
+            total += (amount * solid).sum()
+        return error / total if total else error
+
+    def weight_of_single(self) -> float:
+        """Return the intensity in single branches."""
+        if not self.single.any():
+            return 0.0
+        branches = trace_branches(self.data, np.flatnonzero(self.single))
+        return float((np.abs(branches.weight) * self.rings.knot_weights()).sum())
+
+    def _compare_gaps(self, rows: NDArray[np.intp], coarse: Rings, kept: NDArray[np.intp]) -> tuple[Array, Array]:
+        """Return weight and weight in error of pairs without single branches, each of shape (n,).
+
+        A miss of the level difference is a shift of field by its slope; nodes farther from
+        resonance than a leaf's reach do not count.
+        """
+        gap, slope, strength = self.data.gap[rows], self.data.slope[rows], np.abs(self.data.strength[rows])
+        k, n = gap.shape[1:]
+        near = np.zeros((len(rows), k, n), dtype=bool)
+        for leaf in self.data.leaves:
+            for a, b in ((leaf[0], leaf[1]), (leaf[1], leaf[2])):
+                h = self.data.fields[b] - self.data.fields[a]
+                reach = can_reach(gap[:, a], gap[:, b], slope[:, a] * h, slope[:, b] * h)
+                near[:, a] |= reach
+                near[:, b] |= reach
+        p, node, knot = np.nonzero(near)
+        if not len(p):
+            return np.zeros(n), np.zeros(n)
+        values = np.concatenate([gap, self.data.strength[rows]]).reshape(2 * len(rows) * k, n)
+        guess = coarse.to_finer(values[:, kept], self.rings).reshape(2, len(rows), k, n)
+        steep = np.maximum(np.abs(slope[p, node, knot]), 2.0)
+        weight = strength[p, node, knot] / steep
+        shift = np.abs(guess[0] - gap)[p, node, knot] / steep / self.request.scale
+        change = np.abs(guess[1] - self.data.strength[rows])[p, node, knot] / steep
+        share = 1.0 / near.sum(axis=1)[p, knot]
+        amount = np.bincount(knot, weights=weight * share, minlength=n)
+        miss = np.bincount(knot, weights=(weight * np.minimum(shift, 1.0) + change) * share, minlength=n)
+        return amount, miss
+
+    def knots(self, error: float, spent: int) -> Knots:
+        """Return the settled result."""
+        return Knots(self.rings, self.data, self.single, self.other, error, len(self.nodes.directions), spent)
+
+
+def node_accuracy(request: Request) -> float:
+    """Return the MHz by which a cubic may miss; the quintic that is used errs some hundred times less."""
+    return 28.0 * request.scale * request.tolerance * 70
+
+
+def _touches(data: KnotData) -> NDArray[np.bool_]:
+    """Which pairs could be resonant between nodes though they change sign at none."""
+    out = np.zeros(len(data.gap), dtype=bool)
+    for first, middle, last in data.leaves:
+        for a, b in ((first, middle), (middle, last)):
+            h = data.fields[b] - data.fields[a]
+            reach = can_reach(data.gap[:, a], data.gap[:, b], data.slope[:, a] * h, data.slope[:, b] * h)
+            out |= reach.any(axis=1)
+    return out
+
+
+def continued(fields: Array, weights: Array) -> tuple[Array, Array, NDArray[np.bool_]]:
+    """Return what is continued in place of fields and weights, shape (p, n), and which rows are inverse.
+
+    B^-2 and W B^-3 are polynomials of second degree in the direction for a pure Zeeman doublet;
+    branches that come close to zero field are continued as they are.
+    """
+    inverse = fields.min(axis=1, keepdims=True) > 0.1 * fields.max(axis=1, keepdims=True)
+    safe = np.where(inverse, fields, 1.0)
+    return np.where(inverse, safe**-2, fields), np.where(inverse, weights * safe**-3, weights), inverse
+
+
+def restored(x: Array, y: Array, inverse: NDArray[np.bool_]) -> tuple[Array, Array]:
+    """Return fields and weights from what was continued; `inverse` broadcasts against x and y."""
+    safe = np.where(inverse, np.maximum(x, 1e-30), 1.0)
+    fields = np.where(inverse, safe**-0.5, x)
+    return fields, np.where(inverse, y * np.where(inverse, fields, 1.0) ** 3, y)
