@@ -39,8 +39,8 @@ class Candidate:
         The range in which such ions are found.
     in_range : bool
     score : float
-        Squared misfit plus squared distance outside the range, each in units of what is expected; the lower
-        the better.
+        Squared misfit plus squared distance outside the range, each in units of what is expected, plus a
+        little for what is seldom met or fits anything; the lower the better.
     decide : str
         Which measurement would decide.
     """
@@ -121,7 +121,7 @@ def _from_table(measured: MeasuredG) -> Iterator[Candidate]:
 def _formula(row: dict[str, str], measured: MeasuredG, order: tuple[int, ...]) -> Candidate:
     """Try g_e - n lambda k^2/Delta with the measured components taken as (perp, perp, par) in this order."""
     lam = float(row["lambda"])
-    score, needs, inside = 0.0, [], True
+    score, needs, inside = float(row["rarity"]), [], True
     model = list(measured.values)
     isotropic = row["n_perp"] == row["n_par"]
     for place, axis in enumerate(order):
@@ -188,7 +188,7 @@ def _range_text(row: dict[str, str]) -> str:
 
 def _window(row: dict[str, str], measured: MeasuredG, order: tuple[int, ...]) -> Candidate:
     """Try a window of g, for ions and radicals without a formula of one splitting."""
-    score, inside = 0.0, True
+    score, inside = float(row["rarity"]), True
     model = list(measured.values)
     for place, axis in enumerate(order):
         end = "par" if place == 2 else "perp"
