@@ -5,7 +5,7 @@ from __future__ import annotations
 import argparse
 import time
 from collections.abc import Iterator, Mapping
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from pathlib import Path
 from typing import Any
 
@@ -35,11 +35,18 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
     from spinfit.fitting.driver import fit
 
     job = read_job(args.job)
+    is_new = args.out is not None and not Path(args.out).exists()
     folder = None if args.out is None else ready_folder(args.out)
     points = max(1, sum(int(trace.used.sum()) for trace in job.traces) + sum(len(one.field) for one in job.lines))
-    with shown_progress(screen, points) as progress:
-        outcome = fit(job, progress=progress)
-    written = [] if folder is None else write_outcome(folder, outcome)
+    try:
+        with shown_progress(screen, points) as progress:
+            outcome = fit(job, progress=progress)
+        written = [] if folder is None else write_outcome(folder, outcome)
+    except BaseException:
+        if is_new and folder is not None:  # a refused fit leaves no empty folder behind
+            with suppress(OSError):
+                folder.rmdir()
+        raise
     _say(screen, outcome, folder, written)
     return 0 if outcome.quality.converged and outcome.quality.finished else 1
 

@@ -10,10 +10,11 @@ import numpy as np
 from spinfit.ion.assignment import Candidate
 from spinfit.ion.free_levels import FreeLevel
 from spinfit.ion.inverse import Needed
-from spinfit.ion.kramers import doublet_table
+from spinfit.ion.kramers import DoubletMatch, doublet_table
 from spinfit.ion.lande import IonLevel
 from spinfit.ion.names import half
 from spinfit.ion.quench import QuenchRow
+from spinfit.ion.tensors import DoubletG
 from spinfit.report.numbers import with_uncertainty
 from spinfit.report.tables import table, wrapped
 from spinfit.units import MHZ_PER_WAVENUMBER
@@ -202,3 +203,32 @@ def free_levels_table(levels: Sequence[FreeLevel]) -> str:
         for level in levels
     ]
     return table(["level", "E / cm^-1", "g", "of that term / %"], cells)
+
+
+def matches_table(matches: Sequence[DoubletMatch]) -> str:
+    """Return which doublets come nearest to a measured effective g, at which E/D."""
+    cells = [
+        [
+            str(match.doublet),
+            with_uncertainty(match.rhombicity, match.uncertainty) if match.uncertainty else f"{match.rhombicity:.4f}",
+            _joined([f"{g:.3f}" for g in match.g]),
+            f"{100 * match.misfit:.1f}",
+        ]
+        for match in matches
+    ]
+    return table(["doublet", "E/D", "its g", "misfit / %"], cells, left=(2,))
+
+
+def doublet_lines(found: Sequence[tuple[str, str, DoubletG]]) -> str:
+    """Return g, axes and energy of doublets, each with its ion and field."""
+    headings = ["ion", "E / cm^-1", "g", "from L", "from S", "axis x", "axis y", "axis z", "sign of det g"]
+    cells, below = [], []
+    for name, remark, doublet in found:
+        sign = {1: "+", -1: "-", 0: "none"}[doublet.determinant_sign]
+        for k in range(3):
+            numbers = [f"{v[k]:.4f}" for v in (doublet.principal, doublet.orbital, doublet.spin)]
+            axis = [f"{component:.3f}" for component in doublet.axes[:, k]]
+            head = [name, f"{doublet.energy / MHZ_PER_WAVENUMBER:.1f}"] if k == 0 else ["", ""]
+            cells.append([*head, *numbers, *axis, sign if k == 0 else ""])
+        below.append(wrapped(f"{name}: crystal field: {remark}"))
+    return "\n\n".join([table(headings, cells), "\n".join(below)])

@@ -88,7 +88,7 @@ def _limits(axes: Axes, *curves: Array) -> None:
 
 def _field_axis(axes: Axes) -> None:
     """Label the field axis; few enough ticks that "1212.5" has room at a column's width."""
-    axes.xaxis.set_major_locator(MaxNLocator(6, steps=[1, 2, 2.5, 5, 10]))
+    axes.xaxis.set_major_locator(MaxNLocator(7, steps=[1, 2, 2.5, 5, 10]))
     axes.xaxis.get_major_formatter().set_useOffset(False)
     axes.set_xlabel(FIELD_LABEL)
 
