@@ -15,6 +15,7 @@ from spinfit.ion.first_order import first_order
 from spinfit.ion.model import IonModel, solve
 from spinfit.ion.quench import MeasuredG, ground_state
 from spinfit.ion.tensors import SpinHamiltonian
+from spinfit.units import MHZ_PER_WAVENUMBER
 
 
 @dataclass(frozen=True)
@@ -44,6 +45,20 @@ class Needed:
     uncertainty: float | None
     given: float
     reason: str = ""
+
+    def as_record(self) -> dict[str, object]:
+        """Return the machine-readable form; splittings in cm^-1."""
+        factor = 1 / MHZ_PER_WAVENUMBER if self.quantity == "splitting" else 1.0
+        scaled = [None if v is None else v * factor for v in (self.value, self.uncertainty, self.given)]
+        return {
+            "axis": self.axis,
+            "quantity": self.quantity,
+            "value": scaled[0],
+            "uncertainty": scaled[1],
+            "given": scaled[2],
+            "unit": "cm^-1" if self.quantity == "splitting" else "",
+            "reason": self.reason,
+        }
 
 
 def principal_g(model: IonModel) -> NDArray[np.float64]:

@@ -11,6 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spinfit.errors import InputError
+from spinfit.ion.names import half
 from spinfit.operators import spin_matrices
 from spinfit.units import G_ELECTRON
 
@@ -83,6 +84,17 @@ class DoubletMatch:
     uncertainty: float | None
     g: tuple[float, float, float]
     misfit: float
+
+    def as_record(self) -> dict[str, object]:
+        """Return the machine-readable form."""
+        return {
+            "S": half(self.S),
+            "doublet": self.doublet,
+            "rhombicity": self.rhombicity,
+            "uncertainty": self.uncertainty,
+            "g": list(self.g),
+            "misfit": self.misfit,
+        }
 
 
 @lru_cache(maxsize=16)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from itertools import permutations
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,6 +13,7 @@ from spinfit.ion.model import DENSE, IonModel, Levels, solve
 from spinfit.ion.names import half
 from spinfit.ion.terms import hund
 from spinfit.operators import spin_matrices, stevens
+from spinfit.units import MHZ_PER_WAVENUMBER
 
 PURE = 0.85
 """Smallest overlap with pure spin states at which levels are still called those of a spin."""
@@ -50,6 +52,17 @@ class DoubletG:
     def matrix(self) -> NDArray[np.float64]:
         """The symmetric positive g-tensor, sqrt(G), shape (3, 3), molecular axes."""
         return (self.axes * self.principal) @ self.axes.T
+
+    def as_record(self) -> dict[str, object]:
+        """Return the machine-readable form; the axes are lists of x, y, z components."""
+        return {
+            "g": self.principal.tolist(),
+            "axes": self.axes.T.tolist(),
+            "determinant_sign": self.determinant_sign,
+            "from_orbital": self.orbital.tolist(),
+            "from_spin": self.spin.tolist(),
+            "energy_cm1": self.energy / MHZ_PER_WAVENUMBER,
+        }
 
 
 def doublet_g(levels: Levels, *, which: int = 0) -> DoubletG:
@@ -96,9 +109,8 @@ def _from_moments(orbital: NDArray, spin: NDArray, energy: float) -> DoubletG:
     total = orbital + spin
     G = 2 * np.einsum("iab,jba->ij", total, total).real
     G = (G + G.T) / 2
-    squares, vectors = np.linalg.eigh(G)
-    order, axes = _near_xyz(vectors)
-    principal = np.sqrt(np.clip(squares[order], 0, None))
+    squares, axes = principal_axes(G)
+    principal = np.sqrt(np.clip(squares, 0, None))
     determinant = 4 * np.einsum("ab,bc,ca->", *total).imag
     scale = max(principal.max(), 1e-300) ** 3
     sign = 0 if abs(determinant) < 1e-9 * scale else int(np.sign(determinant))
@@ -110,21 +122,35 @@ def _from_moments(orbital: NDArray, spin: NDArray, energy: float) -> DoubletG:
     return DoubletG(principal, axes, G, sign, orbital_part, principal - orbital_part, energy)
 
 
-def _near_xyz(vectors: NDArray) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
-    """Order axes so that they lie nearest to x, y, z, and make them right-handed with positive diagonal.
+def principal_axes(tensor: NDArray) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Return principal values and axes of a symmetric tensor, ordered to lie as near as possible to x, y, z.
 
-    Returns the order of the columns and the ordered axes.
+    The axes are columns, right-handed, with a positive diagonal where possible.  Where values coincide (to
+    1e-7), their axes are free and are taken as near to x, y, z as they can be.
     """
+    values, vectors = np.linalg.eigh(tensor)
+    edges = np.flatnonzero(np.diff(values) > 1e-7 * max(np.abs(values).max(), 1e-300)) + 1
+    for group in np.split(np.arange(3), edges):
+        if len(group) > 1:
+            vectors[:, group] = _straightened(vectors[:, group])
     overlap = np.abs(vectors)
     best, order = -1.0, np.arange(3)
-    for trial in ((0, 1, 2), (0, 2, 1), (1, 0, 2), (1, 2, 0), (2, 0, 1), (2, 1, 0)):
+    for trial in permutations(range(3)):
         value = sum(overlap[i, trial[i]] for i in range(3))
         if value > best + 1e-9:
             best, order = value, np.array(trial)
     axes = vectors[:, order] * np.where(np.diag(vectors[:, order]) < 0, -1.0, 1.0)
     if np.linalg.det(axes) < 0:
         axes[:, np.argmin(np.abs(np.diag(axes)))] *= -1
-    return order, axes
+    return values[order], axes + 0.0  # no minus before zero
+
+
+def _straightened(vectors: NDArray) -> NDArray[np.float64]:
+    """Return another orthonormal basis of the same space, near the Cartesian axes that lie closest to it."""
+    projector = vectors @ vectors.T
+    nearest = np.sort(np.argsort(-np.diag(projector), kind="stable")[: vectors.shape[1]])
+    u, _, vt = np.linalg.svd(projector[:, nearest], full_matrices=False)
+    return u @ vt
 
 
 @dataclass(frozen=True, eq=False)
@@ -264,10 +290,9 @@ def _resolve(S: float, effective: NDArray, moments: NDArray, purity: float) -> S
     g = (u * s) @ u.T
     turn = u @ vt
     D_tensor = turn @ D_tensor @ turn.T
-    values, vectors = np.linalg.eigh(g)
-    order, g_axes = _near_xyz(vectors)
+    values, g_axes = principal_axes(g)
     D, E, D_axes = d_and_e(D_tensor)
-    return SpinHamiltonian(S, g, D_tensor, D, E, D_axes, values[order], g_axes, zfs_error, g_error, purity)
+    return SpinHamiltonian(S, g, D_tensor, D, E, D_axes, values, g_axes, zfs_error, g_error, purity)
 
 
 def _zero_field(S: float, effective: NDArray) -> tuple[NDArray, float]:

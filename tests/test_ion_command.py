@@ -1,0 +1,178 @@
+"""``spinfit quench`` and the tables and pictures of ions."""
+
+import json
+
+import numpy as np
+import pytest
+
+from spinfit.cli import main
+from spinfit.errors import InputError
+from spinfit.ion.defaults import default_model
+from spinfit.ion.free_levels import free_levels
+from spinfit.ion.lande import lookup
+from spinfit.ion.model import solve
+from spinfit.ion.quench import parse_measured, quench_row
+from spinfit.ion.tensors import doublet_g, principal_axes
+from spinfit.report.ion_plots import comparison_figure, doublets_figure, level_figure, stages, term_figure
+from spinfit.report.ion_tables import free_levels_table, levels_table, mixing_table, quench_table
+from spinfit.units import MHZ_PER_WAVENUMBER as CM
+
+FIELD = """
+[[ion]]
+name = "Cu2+"
+source = "band maxima of this glass"
+covalency = 0.8
+measured = "2.05, 2.33(1)"
+[ion.orbitals]
+"x2-y2" = "15000 cm^-1"
+z2 = "7000 cm^-1"
+xy = "0 cm^-1"
+xz = "-500 cm^-1"
+yz = "-500 cm^-1"
+"""
+
+
+def run(capsys, *arguments):
+    code = main(["quench", *arguments])
+    out, err = capsys.readouterr()
+    return code, out, err
+
+
+def test_one_table_for_three_ions(capsys):
+    code, out, err = run(capsys, "Cu2+", "Ni(II)", "Er3+")
+    assert (code, err) == (0, "")
+    first = out.splitlines()[0]
+    for heading in ("g_J", "spin", "field", "1st order", "measured", "L left / %", "p(J)", "p(S)"):
+        assert heading in first
+    assert max(map(len, out.splitlines())) <= 120
+    assert out.count("typical values from memory") == 3  # never used silently
+    assert "4I15/2" in out
+
+
+def test_json_is_json_alone(capsys):
+    code, out, err = run(capsys, "Cu2+", "--measured", "2.05, 2.06, 2.33(1)", "--json")
+    assert (code, err) == (0, "")
+    (record,) = json.loads(out)
+    assert record["g_measured"] == [2.05, 2.06, 2.33]
+    # (2.33 - g_e)/4 (reference collection)
+    assert record["orbital_fraction_measured"][2] == pytest.approx((2.33 - 2.0023193) / 4, abs=1e-6)
+    kinds = {(n["quantity"], n["axis"]) for n in record["needed"]}
+    assert {("reduction", "all"), ("splitting", "z")} <= kinds
+    splitting = next(n for n in record["needed"] if (n["quantity"], n["axis"]) == ("splitting", "z"))
+    assert splitting["unit"] == "cm^-1"
+    assert splitting["uncertainty"] == pytest.approx(0.01 / 0.33 * splitting["value"], rel=0.1)
+
+
+def test_field_file_and_outcome(capsys, tmp_path):
+    field = tmp_path / "glass.toml"
+    field.write_text(FIELD, encoding="utf-8")
+    code, out, _ = run(capsys, "--field", str(field), "--json")
+    (record,) = json.loads(out)
+    assert code == 0
+    assert record["crystal_field"] == "band maxima of this glass"
+    assert record["g_measured"] == [2.05, 2.05, 2.33]
+    outcome = tmp_path / "outcome.json"
+    entry = {"value": 2.06, "uncertainty": 0.001}
+    outcome.write_text(json.dumps({"parameters": {"cu.g_perp": entry, "cu.g_par": {"value": 2.3}}}), encoding="utf-8")
+    code, out, _ = run(capsys, "Cu2+", "--field", str(field), "--outcome", str(outcome), "--json")
+    assert json.loads(out)[0]["g_measured"] == [2.06, 2.06, 2.3]
+
+
+def test_candidates_and_doublets(capsys):
+    code, out, _ = run(capsys, "--measured", "2.05, 2.06, 2.33", "--candidates")
+    assert code == 0
+    assert "Cu2+, hole in x2-y2" in "\n".join(out.splitlines()[2:5])
+    code, out, _ = run(capsys, "--doublets", "5/2", "--measured", "4.29", "--json")
+    record = json.loads(out)
+    np.testing.assert_allclose(record["doublets"][0][0], [6, 6, 2], atol=1e-9)
+    assert record["matches"][0]["rhombicity"] == pytest.approx(1 / 3, abs=0.01)
+
+
+def test_doublet_of_erbium(capsys):
+    code, out, _ = run(capsys, "Er3+", "--doublet", "1", "--json")
+    (record,) = json.loads(out)
+    np.testing.assert_allclose(record["g"], 6.8, atol=0.05)  # cubic gamma 7, K. R. Lea et al. (1962)
+    np.testing.assert_allclose(np.add(record["from_orbital"], record["from_spin"]), record["g"])
+
+
+@pytest.mark.parametrize(
+    ("arguments", "found"),
+    [
+        ([], "no ion is named"),
+        (["Xx2+"], 'no element "Xx"'),
+        (["Cu2+", "--measured", "abc"], '--measured: "abc" is not a g value'),
+        (["Cu2+", "Ni2+", "--measured", "2"], "1 measured g for 2 ions"),
+        (["Cu2+", "--field", "none.toml"], "none.toml: there is no such file"),
+        (["Cu2+", "--outcome", "none.json"], "none.json: there is no such file"),
+        (["Cu2+", "--species", "cu"], "--species: stands without --outcome"),
+        (["--doublets", "2"], "not a spin with Kramers doublets"),
+        (["--candidates"], "wants one measured g"),
+        (["Ni2+", "--doublet", "1"], "even number of electrons"),
+        (["Cr3+", "--doublet", "1"], "4-fold, not a doublet"),
+        (["Cu2+", "--doublet", "9"], "no level 9"),
+        (["Cu2+", "--plot", "x.gif"], "not a format"),
+        (["Cu2+", "Ni2+", "--levels", "x.png"], "name one ion"),
+        (["Zn2+", "--doublet", "1"], "only closed shells"),
+        (["Cu2+", "--measred", "2"], 'did you mean "--measured"'),
+    ],
+)
+def test_mistakes(capsys, tmp_path, monkeypatch, arguments, found):
+    monkeypatch.chdir(tmp_path)
+    code, out, err = run(capsys, *arguments)
+    assert code == 2
+    assert found in err
+    assert err.count("\n") == 1
+    assert "Traceback" not in err
+    assert not list(tmp_path.iterdir())
+
+
+def test_pictures_are_drawn(capsys, tmp_path):
+    names = [tmp_path / "c.png", tmp_path / "l.svg", tmp_path / "d.pdf"]
+    assert run(capsys, "Cu2+", "--plot", str(names[0]), "--levels", str(names[1]))[0] == 0
+    assert run(capsys, "--doublets", "3/2", "--plot", str(names[2]))[0] == 0
+    for name, magic in zip(names, (b"\x89PNG", b"<?xml", b"%PDF"), strict=True):
+        assert name.read_bytes().startswith(magic)
+
+
+def test_what_the_pictures_hold():
+    row = quench_row("Cu2+", measured=parse_measured("2.05, 2.33"))
+    axes = comparison_figure([row, quench_row("Eu3+")]).axes[0]
+    assert [label.get_text() for label in axes.get_yticklabels()] == ["Cu2+  2D5/2", "Eu3+  7F0"]
+    drawn = {line.get_marker(): sorted(line.get_xdata()) for line in axes.lines if line.get_ydata()[0] < 0.5}
+    assert drawn["D"] == [2.05, 2.05, 2.33]
+    assert len({line.get_color() for line in axes.lines}) == 4
+    model = default_model("Cr3+")
+    terms = dict(stages(model))["free ion:\nterms"]
+    # 4P lies 15 B above 4F (E. U. Condon, G. H. Shortley), B = 680 cm^-1 in the typical field
+    assert np.isclose(terms / CM, 15 * 680, rtol=1e-9).sum() == 12
+    figure = level_figure(model)
+    assert len(figure.axes[1].lines) == 4  # S = 3/2
+    assert len(doublets_figure(2.5).axes) == 3
+    assert len(term_figure(0.5, 1, 1.5, 10 * CM).axes) == 2
+
+
+def test_tables_of_levels():
+    text = levels_table(lookup("Cu2+"))
+    # 2D3/2 lies 5/2 |lambda| = 2072.5 cm^-1 above 2D5/2
+    assert text.splitlines()[3].split() == ["2D3/2", "0.79954", "2072"]
+    model = default_model("Cr3+")
+    assert free_levels_table(free_levels(model, lowest=2)).splitlines()[2].startswith("4F3/2")
+    assert "8.000" in mixing_table(quench_row("Cr3+"))
+    assert "no level mixes" in mixing_table(quench_row("Eu3+"))
+    assert "closed shells" in quench_table([quench_row("Zn2+")])
+
+
+def test_axes_of_coinciding_values_are_straight():
+    values, axes = principal_axes(np.diag([2.0, 3.0, 2.0]))
+    np.testing.assert_allclose(axes, np.eye(3))
+    np.testing.assert_allclose(values, [2, 3, 2])
+    turn = np.array([[0.6, -0.8, 0], [0.8, 0.6, 0], [0, 0, 1]])
+    values, axes = principal_axes(turn @ np.diag([1.0, 2.0, 3.0]) @ turn.T)
+    np.testing.assert_allclose((axes * values) @ axes.T, turn @ np.diag([1.0, 2.0, 3.0]) @ turn.T, atol=1e-12)
+    assert np.linalg.det(axes) == pytest.approx(1)
+
+
+def test_levels_beyond_what_was_computed():
+    levels = solve(default_model("Cu2+"))
+    with pytest.raises(InputError, match="levels were computed"):
+        doublet_g(levels, which=7)
