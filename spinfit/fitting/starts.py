@@ -39,6 +39,10 @@ _SCREENED = 64
 # Two descents whose chi-squared differ by less than this part ended at the same or an equivalent minimum.
 _SAME = 1e-3
 _SEED = 20240229
+# A descent is good below this chi-squared per degree of freedom, which the estimate of the noise leaves
+# uncertain by some per cent, or when no more than this part of the trace's sum of squares is unexplained.
+_AT_NOISE = 1.2
+_NEXT_TO_NOTHING = 1e-3
 # Parameters that shape lines and do not move them: held while the view is broader than the lines.
 _SHAPES = (".width.", ".spread.", ".phase")
 
@@ -250,8 +254,13 @@ class Search:
 
 
 def _good(descent: Descent | None, view: View) -> bool:
-    """Whether a descent ended at the noise, with its scale the right way up."""
-    if descent is None or not descent.converged:
+    """Whether a descent ended where no other minimum need be looked for, its scale the right way up.
+
+    That is at the noise, or, in a trace of little noise, where what is left above the noise is next
+    to nothing of the trace: then the model is the limit and not the start.
+    """
+    if descent is None or not descent.converged or min(descent.point.scales) <= 0:
         return False
     freedom = max(view.points - view.linear - descent.point.free.size, 1)
-    return descent.point.chi2 / freedom < 1.2 and min(descent.point.scales) > 0
+    total = sum(float(seen.rest @ seen.rest) for seen in view.seen)
+    return descent.point.chi2 < max(_AT_NOISE * freedom, freedom + _NEXT_TO_NOTHING * (total - freedom))
