@@ -13,6 +13,7 @@ from __future__ import annotations
 import itertools
 import math
 from collections.abc import Iterator, Sequence
+from dataclasses import replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -226,6 +227,7 @@ class Search:
         """Search from a start; with `automatic` the start counts as one candidate among many."""
         problem = self.problem
         start = np.clip(start, problem.lower, problem.upper)
+        self._try_steps(start)
         if not automatic and explained(problem.evaluate(start, self.view), self.view) > 0.5:
             self._follow(start)
         if not self._done():
@@ -238,6 +240,12 @@ class Search:
                     break
         assert self.best is not None
         return self.best
+
+    def _try_steps(self, start: Array) -> None:
+        """Let finite-difference steps find their size where a simulation is cheap."""
+        stage = replace(self.view.stage, tolerance=max(_COARSE_TOLERANCE, self.view.stage.tolerance))
+        cheap = replace(self.view, stage=stage)
+        self.problem.jacobian(self.problem.evaluate(start, cheap), cheap)
 
     def _follow(self, free: Array) -> None:
         descent = descend(self.problem, self.view, free, goal=self.goal, progress=self.progress)
