@@ -17,6 +17,7 @@ from spinfit import hermite
 from spinfit.hamiltonian import System
 from spinfit.levels import population_difference, solve
 from spinfit.resonance import can_reach, level_pairs, midpoint_error
+from spinfit.sheets import Grain
 
 Array = NDArray[np.float64]
 Pairs = tuple[NDArray[np.intp], NDArray[np.intp]]
@@ -32,8 +33,8 @@ class Request:
         MHz.
     low, high : float
         Fields between which every resonance counts, mT.
-    spacing : float
-        mT that neighbouring directions of the final sum may lie apart.
+    grain : Grain
+        How far apart in field neighbouring directions of the final sum may lie.
     scale : float
         Length over which the line is smooth, mT.
     tolerance : float
@@ -47,7 +48,7 @@ class Request:
     frequency: float
     low: float
     high: float
-    spacing: float
+    grain: Grain
     scale: float
     tolerance: float
     microwave: str = "perpendicular"

@@ -115,54 +115,76 @@ class FieldGrid:
     count: int
 
     @classmethod
-    def covering(cls, low: float, high: float, scale: float, reach: float, tolerance: float) -> FieldGrid:
+    def covering(
+        cls, low: float, high: float, scale: float, reach: float, tolerance: float, beyond: float = 0.0
+    ) -> FieldGrid:
         """Choose the grid for a window, a smoothness length and a line's reach, all mT.
+
+        `beyond` is how far past the reach resonances are deposited all the same.
 
         The step is an eighth of the narrowest peak-to-peak width at the default tolerance: an
         interpolating cubic spline then misses a Gaussian derivative by less than 2e-4 of its top,
         and the error falls as the fourth power of the step.
         """
         step = 0.25 * scale * min(1.1, max(0.3, (tolerance / 1e-3) ** 0.25))
-        count = math.ceil((high - low + 3 * reach) / step) + 16
-        return cls(low - reach - 4 * step, step, fft.next_fast_len(count, real=True))
+        count = math.ceil((high - low + 3 * (reach + beyond)) / step) + 16
+        return cls(low - reach - beyond - 4 * step, step, fft.next_fast_len(count, real=True))
 
     def deposit(self, fields: Array, weights: Array) -> Array:
         """Return the histogram, shape (count,), of weighted resonances; those off the grid are left out."""
-        x = (np.ravel(fields) - self.start) / self.step
-        w = np.ravel(weights)
+        out = np.zeros((1, self.count))
+        self.deposit_rows(out, np.intp(0), np.ravel(fields), np.ravel(weights))
+        return out[0]
+
+    def deposit_rows(self, into: Array, rows: NDArray[np.intp] | np.intp, fields: Array, weights: Array) -> None:
+        """Add weighted resonances to one of several histograms each, in place.
+
+        Parameters
+        ----------
+        into : ndarray, shape (r, count)
+        rows : ndarray of int, shape (n,), or one int
+        fields, weights : ndarray, shape (n,)
+        """
+        x = (fields - self.start) / self.step
         inside = (x >= 1) & (x < self.count - 3)
         if not inside.all():
-            x, w = x[inside], w[inside]
+            x, weights = x[inside], weights[inside]
+            rows = rows if np.ndim(rows) == 0 else rows[inside]
         i = x.astype(np.intp)
         taps = _taps(x - i)
-        out = np.zeros(self.count)
+        i += rows * self.count
+        flat = into.reshape(-1)
         for k in range(4):
-            out += np.bincount(i + (k - 1), weights=w * taps[k], minlength=self.count)
-        return out
+            flat += np.bincount(i + (k - 1), weights=weights * taps[k], minlength=flat.size)
 
     def wavenumbers(self) -> Array:
         """Return the non-negative wavenumbers of the real transform, shape (count//2 + 1,), rad/mT."""
         return 2 * np.pi * fft.rfftfreq(self.count, self.step)
 
-    def coefficients(self, histograms: dict[int, Array], shape: Shape) -> Array:
-        """Return the spline coefficients, shape (count,), of the histogram's spectrum.
+    def transform(self, histogram: Array, order: int = 0) -> NDArray[np.complex128]:
+        """Return the Fourier transform of a deposit, shape (count//2 + 1,), the spline divided out.
 
         Parameters
         ----------
-        histograms : dict of int -> ndarray, shape (count,)
-            Deposits by order: 0 plain, 1 to be integrated once over the field, 2 twice.
+        histogram : ndarray, shape (count,)
+        order : int
+            0 as it stands, 1 integrated once over the field, 2 twice.
         """
         k = self.wavenumbers()
-        half = 0.5 * k * self.step
-        total = np.zeros(len(k), dtype=complex)
-        for order, histogram in histograms.items():
-            running = histogram
-            for _ in range(order):
-                running = np.cumsum(running)
-            total += fft.rfft(running) * _integration(k, self.step) ** order
-        # the deposit's spline divides out; so does the sampling spline's own value at the grid points
-        spline = np.sinc(half / np.pi) ** 4 * (2 + np.cos(2 * half)) / 3
-        return fft.irfft(total * shape.transform(k) / (spline * self.step), self.count)
+        running = histogram
+        for _ in range(order):
+            running = np.cumsum(running)
+        return fft.rfft(running) * _integration(k, self.step) ** order / np.sinc(0.5 * k * self.step / np.pi) ** 4
+
+    def render(self, transform: NDArray[np.complex128], shape: Shape) -> Array:
+        """Return the spline coefficients, shape (count,), of a transform broadened by a shape."""
+        k = self.wavenumbers()
+        own_value = (2 + np.cos(k * self.step)) / 3  # of the sampling spline at the grid points
+        return fft.irfft(transform * shape.transform(k) / (own_value * self.step), self.count)
+
+    def coefficients(self, histograms: dict[int, Array], shape: Shape) -> Array:
+        """Return the spline coefficients, shape (count,), of the spectrum of deposits by order."""
+        return self.render(sum(self.transform(h, order) for order, h in histograms.items()), shape)
 
     def sample(self, coefficients: Array, fields: Array) -> Array:
         """Return the spline's values at any fields, same shape as `fields`."""

@@ -78,6 +78,7 @@ class _Roots:
     field: Array
     weight: Array
     share: Array
+    apart: Array
     extent: Array
 
 
@@ -93,7 +94,8 @@ def add_looping(histograms: Histograms, rings: Rings, mesh: Mesh, data: KnotData
     roots = _solve(land, request)
     present = np.arange(len(roots.field))[:, None] < roots.count
     for rank in range(len(roots.field)):
-        add_points(histograms, mesh, roots.field[rank], roots.weight[rank], roots.share[rank])
+        columns = (roots.field[rank], roots.weight[rank], roots.apart[rank], roots.share[rank])
+        add_points(histograms, mesh, *columns, request.grain)
     spread = np.where(present, roots.weight * (1 - roots.share), 0.0)
     for stride, factor in RICHARDSON:
         corners, part = cells(mesh, stride)
@@ -124,26 +126,27 @@ def _solve(land: _Landscape, request: Request) -> _Roots:
         found.append((at[q], np.full(len(q), number), t))
     if not found:
         empty = np.zeros((0, points))
-        return _Roots(np.zeros(points, dtype=np.intp), np.zeros(points, dtype=bool), empty, empty, empty, empty)
+        return _Roots(np.zeros(points, dtype=np.intp), np.zeros(points, dtype=bool), empty, empty, empty, empty, empty)
     point, leaf, t = (np.concatenate(c) for c in zip(*found, strict=True))
     c, half = land.quintic(leaf, point)
     slope = hermite.slope(c, t) / half
     strength, apart = land.along(leaf, point, t)
     field = land.fields[land.leaves[leaf, 1]] + half * t
     steep = np.maximum(np.abs(slope), 1e-9)
-    share = point_share(apart / steep, request.spacing)
+    distance = apart / steep
+    share = point_share(distance, request.grain.far)
     # at a fold the slope vanishes and the curvature bounds how far the sheet runs
     bend = np.abs(hermite.curvature(c, t)) / half**2
-    extent = 2 * np.minimum(apart / steep, np.sqrt(2 * apart / np.maximum(bend, 1e-12)))
+    extent = 2 * np.minimum(distance, np.sqrt(2 * apart / np.maximum(bend, 1e-12)))
     order = np.lexsort((field, point))
-    columns = (point, field, strength / steep, share, extent, slope)
-    point, field, weight, share, extent, slope = (v[order] for v in columns)
+    columns = (point, field, strength / steep, share, distance, extent, slope)
+    point, field, weight, share, distance, extent, slope = (v[order] for v in columns)
     count = np.bincount(point, minlength=points)
     first = np.cumsum(count) - count
     rank = np.arange(len(point)) - first[point]
     shape = (int(count.max(initial=0)), points)
-    out = [np.zeros(shape) for _ in range(4)]
-    for into, values in zip(out, (field, weight, share, extent), strict=True):
+    out = [np.zeros(shape) for _ in range(5)]
+    for into, values in zip(out, (field, weight, share, distance, extent), strict=True):
         into[rank, point] = values
     rising = np.zeros(points, dtype=bool)
     rising[point[rank == 0]] = slope[rank == 0] > 0
@@ -158,8 +161,8 @@ def _add_folded(
     at_corners = roots.field[:, corners]
     low = np.where(present, at_corners, np.inf).min(axis=(0, 1))
     high = np.where(present, at_corners, -np.inf).max(axis=(0, 1))
-    step = request.spacing / 3
-    reach = np.where(present, roots.extent[:, corners], 0.0).max(axis=(0, 1)) + 2 * request.spacing
+    step = request.grain.close / 3
+    reach = np.where(present, roots.extent[:, corners], 0.0).max(axis=(0, 1)) + 2 * request.grain.close
     first = np.ceil(np.maximum(low - reach, request.low) / step).astype(np.intp)
     last = np.floor(np.minimum(high + reach, request.high) / step).astype(np.intp)
     number = np.maximum(last - first + 1, 0)
@@ -191,7 +194,7 @@ def _project(
     gap = hermite.value(c, t)
     steep = np.maximum(np.abs(hermite.slope(c, t)) / half, 1e-9)
     strength, apart = land.along(many, flat, t)
-    spread = strength * (1 - point_share(apart / steep, request.spacing))
+    spread = strength * (1 - point_share(apart / steep, request.grain.far))
     density = fold_density(gap.reshape(corners.shape), spread.reshape(corners.shape), part)
     hit = density != 0
-    histograms.points(fields[hit], density[hit] * (request.spacing / 3))
+    histograms.points(fields[hit], density[hit] * (request.grain.close / 3))

@@ -21,11 +21,11 @@ from spinfit.lineshape import FieldGrid
 from spinfit.loops import add_looping
 from spinfit.orientations import Mesh, Rings, symmetry_of
 from spinfit.resonance import find
-from spinfit.sheets import RICHARDSON, Histograms, add_points, add_spread, cells, point_share, spacing
+from spinfit.sheets import Histograms, spacing
 
 Array = NDArray[np.float64]
 
-FLATNESS = 0.25
+FLATNESS = 0.23
 """Root of the curvature of a field over one step of the mesh, in line widths, at the default tolerance."""
 LARGEST_LINE = 200_000
 """Points of a one-dimensional mesh."""
@@ -46,8 +46,8 @@ class Report:
     notes: list[str] = field(default_factory=list)
 
 
-def powder(system: System, request: Request, grid: FieldGrid) -> tuple[dict[int, Array], Report]:
-    """Return histograms of resonance fields averaged over all directions.
+def powder(system: System, request: Request, grid: FieldGrid) -> tuple[Histograms, Report]:
+    """Return the histograms of resonance fields averaged over all directions.
 
     Parameters
     ----------
@@ -58,8 +58,7 @@ def powder(system: System, request: Request, grid: FieldGrid) -> tuple[dict[int,
 
     Returns
     -------
-    histograms : dict of int -> ndarray, shape (grid.count,)
-        See `FieldGrid.coefficients`.
+    histograms : Histograms
     report : Report
     """
     symmetry = symmetry_of(system)
@@ -67,7 +66,7 @@ def powder(system: System, request: Request, grid: FieldGrid) -> tuple[dict[int,
     if symmetry.kind == "point":
         return _one_direction(system, request, grid, report)
     knots = settle(system, symmetry, request)
-    histograms = Histograms(grid)
+    histograms = Histograms(grid, request.scale)
     if knots.single.any():
         branches = trace_branches(knots.data, np.flatnonzero(knots.single))
         _sum_branches(knots.rings, branches, request, histograms, report)
@@ -76,12 +75,10 @@ def powder(system: System, request: Request, grid: FieldGrid) -> tuple[dict[int,
     report.rings, report.estimated_error = knots.rings.rings, knots.error
     report.directions, report.diagonalisations = knots.directions, knots.diagonalisations
     report.pairs, report.looping = int(knots.single.sum()), int(knots.other.sum())
-    return histograms.orders, report
+    return histograms, report
 
 
-def _one_direction(
-    system: System, request: Request, grid: FieldGrid, report: Report
-) -> tuple[dict[int, Array], Report]:
+def _one_direction(system: System, request: Request, grid: FieldGrid, report: Report) -> tuple[Histograms, Report]:
     got = find(
         system,
         np.array([[0.0, 0.0, 1.0]]),
@@ -91,9 +88,9 @@ def _one_direction(
         temperature=request.temperature,
     )
     report.directions, report.diagonalisations, report.pairs = 1, 1, len(got.field)
-    histograms = Histograms(grid)
+    histograms = Histograms(grid, request.scale)
     histograms.points(got.field, got.weight)
-    return histograms.orders, report
+    return histograms, report
 
 
 def _ladder_size(wanted: float) -> int:
@@ -105,26 +102,25 @@ def _ladder_size(wanted: float) -> int:
 def _mesh_for(rings: Rings, fields: Array, request: Request) -> list[tuple[int, int]]:
     """Return for each branch the mesh that its own spread over the sphere asks for.
 
-    Either neighbours lie within the request's spacing everywhere, so that the plain sum is
-    enough, or, where that takes many more points, simplices must be flat: the field may curve by
-    `FLATNESS` of the line within one step.
+    Neighbours lie within what the largest smear hides, and near turning points, where the line
+    itself must hide the grain, the field curves by little more than the line within one step.
     """
     probe = Mesh(rings.kind, 2 * rings.rings, _probe_azimuths(rings))
     values = rings.to_mesh(fields, probe)
     thetas = _sizes(values, 1, probe.thetas, request, even=True)
     thetas = np.maximum(thetas, 2 * rings.rings)
     if rings.kind == "axial":
-        return [(min(_ladder_size(t), LARGEST_LINE), 1) for t in thetas[0]]
+        return [(_ladder_size(t[0] if t[0] <= 4 * t[1] else t[1]), 1) for t in thetas.T]
     phis = _sizes(values, 2, probe.phis, request, even=rings.kind == "octant")
     phis = np.maximum(phis, _probe_azimuths(rings))
-    plain, flat = thetas[0] * phis[0], thetas[1] * phis[1]
-    choice = np.where(plain <= 2.5 * flat, 0, 1)
+    # smearing costs about three times as much a point
+    choice = np.where(np.prod([thetas[0], phis[0]], axis=0) <= 3 * thetas[1] * phis[1], 0, 1)
     row = np.arange(len(fields))
     return [(_ladder_size(t), _ladder_size(p)) for t, p in zip(thetas[choice, row], phis[choice, row], strict=True)]
 
 
 def _sizes(values: Array, axis: int, intervals: int, request: Request, even: bool) -> Array:
-    """Return the intervals for close neighbours and for flat simplices, shape (2, branches)."""
+    """Return the intervals along one angle for close neighbours and for smeared ones, shape (2, branches)."""
     if not even:
         values = np.concatenate([values, np.take(values, [0, 1], axis)], axis)
     first = np.diff(values, axis=axis)
@@ -136,8 +132,10 @@ def _sizes(values: Array, axis: int, intervals: int, request: Request, even: boo
         np.abs(first[:, -1:] if axis == 1 else first[:, :, -1:]).max(axis=(1, 2)),
     )
     bend = np.maximum(np.abs(second).max(axis=(1, 2)), 2 * ends) * intervals**2
-    flatness = FLATNESS * (request.tolerance / 1e-3) ** 0.25
-    return np.stack([slope / request.spacing, np.sqrt(bend / request.scale) / flatness])
+    flatness = FLATNESS * (request.tolerance / 1e-3) ** 0.17
+    plain = slope / request.grain.close
+    smeared = np.maximum(slope / (0.4 * request.grain.far), np.sqrt(bend / request.scale) / flatness)
+    return np.stack([plain, np.minimum(plain, smeared)])
 
 
 def _probe_azimuths(rings: Rings) -> int:
@@ -158,22 +156,58 @@ def _sum_branches(rings: Rings, branches: Branches, request: Request, histograms
             fields, weights = restored(both[: len(part)], both[len(part) :], inverse[part][:, :, None])
             report.mesh_points += fields.size
             apart = spacing(fields, mesh)
-            if apart.max() <= 1.05 * request.spacing:
+            if apart.max() <= 1.05 * request.grain.close:
                 histograms.points(fields, weights * mesh.weights())
-                continue
-            share = point_share(apart, request.spacing)
-            for one in range(len(part)):
-                b, w, u = fields[one].ravel(), weights[one].ravel(), share[one].ravel()
-                add_points(histograms, mesh, b, w, u)
-                for stride, factor in RICHARDSON:
-                    add_spread(histograms, b, w * (1 - u), *cells(mesh, stride), factor)
+            else:
+                weighted = (weights * mesh.weights()).ravel()
+                histograms.smeared(fields.ravel(), weighted, request.grain.smear_for(apart).ravel())
 
 
 def _sum_loops(
     rings: Rings, data: KnotData, rows: NDArray[np.intp], request: Request, histograms: Histograms, report: Report
 ) -> None:
     """Add pairs whose resonances come and go."""
-    size = _ladder_size(max(2 * rings.rings, 4.0 * request.tolerance**-0.5))
-    mesh = Mesh(rings.kind, 20 * size if rings.kind == "axial" else size, size)
     for row in rows:
+        mesh = Mesh(rings.kind, *_mesh_for_loop(rings, data, row, request))
         report.mesh_points += add_looping(histograms, rings, mesh, data, row, request)
+
+
+def _mesh_for_loop(rings: Rings, data: KnotData, row: int, request: Request) -> tuple[int, int]:
+    """Return the mesh on which simplices are flat, judged where the pair is near resonance.
+
+    The curvature of the level difference at fixed field, over its slope along the field, is that
+    of the resonance field; at a fold, where the slope vanishes, what counts is the frequency.
+    """
+    probe = Mesh(rings.kind, 2 * rings.rings, _probe_azimuths(rings))
+    k = len(data.fields)
+    gap, slope = rings.to_mesh(np.concatenate([data.gap[row], data.slope[row]]), probe).reshape(
+        2, k, probe.thetas + 1, -1
+    )
+    step = np.gradient(data.fields) if k > 1 else np.ones(1)
+    near = np.abs(gap) <= 1.5 * np.abs(slope) * step[:, None, None] + request.scale * FOLD_SLOPE
+    if not near.any():
+        return _ladder_size(2 * rings.rings), _ladder_size(_probe_azimuths(rings))
+    bend = np.where(near, 1.0 / np.maximum(np.abs(slope), FOLD_SLOPE), 0.0)
+    flatness = FLATNESS * (request.tolerance / 1e-3) ** 0.17
+    thetas = _loop_size(gap, bend, 1, probe.thetas, request, flatness, even=True)
+    if rings.kind == "axial":
+        return min(_ladder_size(20 * thetas), LARGEST_LINE), 1
+    phis = _loop_size(gap, bend, 2, probe.phis, request, flatness, even=rings.kind == "octant")
+    return _ladder_size(max(thetas, 2 * rings.rings)), _ladder_size(max(phis, _probe_azimuths(rings)))
+
+
+FOLD_SLOPE = 8.0
+"""MHz/mT below which a level difference counts as folding, about a quarter of a free spin's slope."""
+
+
+def _loop_size(
+    gap: Array, bend: Array, axis: int, intervals: int, request: Request, flatness: float, even: bool
+) -> float:
+    before, after = (1, 1) if even else (intervals - 1, 0)
+    lower = np.take(gap, [before], axis + 0)
+    upper = np.take(gap, [-2 if even else after], axis + 0)
+    padded = np.concatenate([lower, gap, upper], axis)
+    second = np.abs(np.diff(padded, 2, axis=axis)) * bend
+    # the few sharpest spots, where levels cross on an axis, would size the mesh for everything
+    sharp = np.quantile(second[second > 0], 0.98) if (second > 0).any() else 0.0
+    return float(np.sqrt(sharp * intervals**2 / request.scale) / flatness)

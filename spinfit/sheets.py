@@ -1,44 +1,107 @@
 """Summing resonances over a mesh of directions without its grain showing.
 
 A sheet is one resonance field as a function on the mesh.  Where neighbouring directions lie closer
-in field than the line is wide, the plain weighted sum converges exponentially and is used; where
-the field changes faster, each triangle of the mesh (each interval, in one dimension) is spread over
-the fields between its corners, as if the field were linear in it.  A smooth share u divides every
-point between the two, so that neither sees an edge.  Where sheets end (the fold of a looping
-transition) neither works, because the weight diverges; `add_folded` there projects the triangle at
-each field onto the frequency axis, which has no singularity.
+in field than the line is wide, the plain weighted sum converges exponentially.  Where the field
+changes faster the spectrum is smooth, and each point is smeared by a kernel that leaves smooth
+things as they are.  Where it changes faster still, towards the fold of a looping transition, each
+triangle of the mesh (each interval, in one dimension) is spread over the fields between its
+corners; a smooth share divides every point between points and triangles, so that neither sees an
+edge.  Triangles that hold the fold itself are projected at each field onto the frequency axis,
+which has no singularity (`fold_density`).
 """
 
 from __future__ import annotations
 
+import math
+from dataclasses import dataclass
 from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit.lineshape import FieldGrid
+from spinfit.lineshape import FieldGrid, Shape
 from spinfit.orientations import Mesh
 
 Array = NDArray[np.float64]
 Cells = tuple[NDArray[np.intp], Array]
 
 
+SMEAR_LEAST, SMEAR_MOST, SMEAR_RATIO = 0.4, 10.0, 1.6
+"""Smallest and largest smear in line widths, and the ratio from one class to the next."""
+SMEAR_REACH = 4.0
+"""How far a smear reaches, in units of itself."""
+
+
+def smear_kernel(k: Array, size: float) -> Array:
+    """Return the transform of a smoothing kernel whose second and fourth moments vanish.
+
+    exp(-x)(1 + x + x^2/2) with x = (k size)^2/2 differs from 1 by x^3/6: what is smooth over `size`
+    passes unchanged, while the grain of points up to about `size` apart is gone.
+    """
+    x = 0.5 * (k * size) ** 2
+    return np.exp(-x) * (1 + x * (1 + 0.5 * x))
+
+
 class Histograms:
-    """Deposits by order (see `FieldGrid.coefficients`) on one grid, mirrored where it spans zero field."""
+    """Deposits on one grid: plain, smeared by classes of size, and to be integrated over the field.
 
-    def __init__(self, grid: FieldGrid) -> None:
+    Parameters
+    ----------
+    grid : FieldGrid
+    scale : float
+        Smoothness length of the line, mT; smears are multiples of it.
+    """
+
+    def __init__(self, grid: FieldGrid, scale: float = 0.0) -> None:
         self.grid = grid
-        self.orders: dict[int, Array] = {0: np.zeros(grid.count)}
+        self.sizes = np.empty(0)
+        if scale > 0:
+            number = 1 + math.ceil(math.log(SMEAR_MOST / SMEAR_LEAST) / math.log(SMEAR_RATIO))
+            self.sizes = scale * SMEAR_LEAST * SMEAR_RATIO ** np.arange(number)
+        self.plain = np.zeros((1 + len(self.sizes), grid.count))
+        self.integrated: dict[int, Array] = {}
 
-    def _add(self, order: int, fields: Array, weights: Array) -> None:
-        into = self.orders.setdefault(order, np.zeros(self.grid.count))
-        into += self.grid.deposit(fields, weights)
+    def transform(self) -> NDArray[np.complex128]:
+        """Return the Fourier transform of everything deposited."""
+        k = self.grid.wavenumbers()
+        total = self.grid.transform(self.plain[0])
+        for size, histogram in zip(self.sizes, self.plain[1:], strict=True):
+            if histogram.any():
+                total += self.grid.transform(histogram) * smear_kernel(k, size)
+        for order, histogram in self.integrated.items():
+            total += self.grid.transform(histogram, order)
+        return total
 
     def points(self, fields: Array, weights: Array) -> None:
         """Add resonances at `fields` with `weights`, both of one shape."""
-        self._add(0, fields, weights)
-        if self.grid.start < 0:
-            self._add(0, -fields, weights)
+        self._add(self.plain[0], fields, weights)
+
+    def smeared(self, fields: Array, weights: Array, smear: Array) -> None:
+        """Add resonances, each smeared over about `smear`, mT; arrays of shape (n,).
+
+        Each goes to the two classes next to its size, in smooth shares, so that no edge between
+        classes shows.
+        """
+        place = np.where(
+            smear < self.sizes[0],
+            smear / self.sizes[0],
+            1 + np.log(np.maximum(smear, self.sizes[0]) / self.sizes[0]) / math.log(SMEAR_RATIO),
+        )
+        place = np.minimum(place, len(self.sizes) - 1e-9)
+        lower = place.astype(np.intp)
+        x = place - lower
+        upper_share = x * x * (3 - 2 * x)
+        rows = np.concatenate([lower, lower + 1])
+        shares = np.concatenate([weights * (1 - upper_share), weights * upper_share])
+        both = np.concatenate([fields, fields])
+        self.grid.deposit_rows(self.plain, rows, both, shares)
+        if self.grid.start < 0:  # the spectrum is even in B
+            self.grid.deposit_rows(self.plain, rows, -both, shares)
+
+    def _add(self, into: Array, fields: Array, weights: Array) -> None:
+        into += self.grid.deposit(fields, weights)
+        if self.grid.start < 0:  # the spectrum is even in B
+            into += self.grid.deposit(-fields, weights)
 
     def simplices(self, corners: Array, mass: Array) -> None:
         """Spread each mass over the fields between its corners.
@@ -66,13 +129,17 @@ class Histograms:
         b[1] = np.maximum(b[1], b[0] + least)
         if len(b) == 2:
             height = mass / (b[1] - b[0])
-            self._add(1, b.ravel(), np.concatenate([height, -height]))
+            self._add_integrated(1, b.ravel(), np.concatenate([height, -height]))
             return
         b[2] = np.maximum(b[2], b[1] + least)
         d01, d12, d02 = b[1] - b[0], b[2] - b[1], b[2] - b[0]
         first = 2 * mass / (d01 * d02)
         last = 2 * mass / (d12 * d02)
-        self._add(2, b.ravel(), np.concatenate([first, -first - last, last]))
+        self._add_integrated(2, b.ravel(), np.concatenate([first, -first - last, last]))
+
+    def _add_integrated(self, order: int, fields: Array, weights: Array) -> None:
+        into = self.integrated.setdefault(order, np.zeros(self.grid.count))
+        into += self.grid.deposit(fields, weights)
 
 
 RICHARDSON = ((1, 4 / 3), (2, -1 / 3))
@@ -138,23 +205,70 @@ def _central(values: Array, axis: int, periodic: bool) -> Array:
 
 
 def point_share(apart: Array, allowed: float) -> Array:
-    """Return u, the share of a point that the plain sum takes: 1 for close neighbours, 0 for far ones.
+    """Return the share of a point that the sum over points takes: 1 for close neighbours, 0 for far ones.
 
     Parameters
     ----------
     apart : ndarray
         Distance in field to the neighbours, mT.
     allowed : float
-        Distance up to which the plain sum is accurate, mT.
+        Distance up to which the sum over points is accurate, mT.
     """
-    x = np.clip((apart / allowed - 0.25) / 0.75, 0.0, 1.0)
+    x = np.clip((apart / allowed - 0.4) / 0.6, 0.0, 1.0)
     return 1.0 - x * x * x * (10 + x * (6 * x - 15))
 
 
-def add_points(histograms: Histograms, mesh: Mesh, fields: Array, weights: Array, share: Array) -> None:
-    """Add the plain sum's share of one sheet; all arrays of shape (points,)."""
-    direct = share > 0
-    histograms.points(fields[direct], (weights * share * mesh.weights().ravel())[direct])
+@dataclass(frozen=True)
+class Grain:
+    """How far apart in field neighbouring points may lie, mT, for the tolerance in force.
+
+    Attributes
+    ----------
+    close : float
+        Up to here the line itself hides the grain.
+    far : float
+        Up to here a smear of the allowed size does.
+    smear : float
+        Smear per distance that hides it.
+    """
+
+    close: float
+    far: float
+    smear: float
+
+    @classmethod
+    def of(cls, shape: Shape, tolerance: float) -> Grain:
+        """Derive the distances from a line shape.
+
+        A sum over points d apart aliases by the line's transform at k = 2 pi/d, which is set to
+        a twentieth of the tolerance (the derivative lifts it by about 2 pi sigma/d).
+        """
+        level = math.log(20 / tolerance)
+        a, b = 2 * (math.pi * shape.sigma) ** 2, 2 * math.pi * shape.gamma
+        close = (b + math.sqrt(b * b + 4 * a * level)) / (2 * level)
+        x = level
+        for _ in range(20):  # exp(-x)(1 + x + x^2/2) at the same level
+            x = level + math.log(1 + x + 0.5 * x * x)
+        smear = math.sqrt(2 * x) / (2 * math.pi)
+        return cls(close, SMEAR_MOST * shape.scale / smear, smear)
+
+    def smear_for(self, apart: Array) -> Array:
+        """Return the smear of points whose neighbours lie `apart`, mT.
+
+        It sets in slowly: what a varying smear does to a density is the sixth derivative of the
+        density times the sixth power of the smear, so a quick onset would be a feature itself.
+        """
+        ratio = (apart / self.close) ** 2
+        return self.smear * apart * ratio / (ratio + 0.3)
+
+
+def add_points(
+    histograms: Histograms, mesh: Mesh, fields: Array, weights: Array, apart: Array, share: Array, grain: Grain
+) -> None:
+    """Add the points' share of one sheet; all arrays of shape (points,)."""
+    used = share > 0
+    weight = (weights * share * mesh.weights().ravel())[used]
+    histograms.smeared(fields[used], weight, grain.smear_for(apart[used]))
 
 
 def add_spread(
