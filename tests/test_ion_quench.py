@@ -262,12 +262,23 @@ def test_moments_in_typical_fields_are_near_the_measured_ones(ion, p):
     assert quench_row(ion).moment_300K == pytest.approx(p, abs=0.45)
 
 
+@pytest.mark.parametrize(
+    ("ion", "p"),
+    # Measured moments of trivalent lanthanides near room temperature: C. Kittel, table of effective magneton numbers.
+    # Sm3+ and Eu3+ are the cases where Hund's level alone (0.84 and 0) fails.  Yb3+ is left out: its typical field,
+    # that of a fluorite, splits the level by 600 cm^-1, so that p at 300 K lies well below that of the salts.
+    [("Ce3+", 2.4), ("Pr3+", 3.5), ("Nd3+", 3.5), ("Sm3+", 1.5), ("Eu3+", 3.4), ("Gd3+", 8.0), ("Tb3+", 9.5)]
+    + [("Dy3+", 10.6), ("Ho3+", 10.4), ("Er3+", 9.5), ("Tm3+", 7.3)],
+)
+def test_moments_of_lanthanides_in_typical_fields(ion, p):
+    assert quench_row(ion).moment_300K == pytest.approx(p, abs=0.25)
+
+
 def test_every_typical_field_solves_and_says_what_it_is():
     for ion in ions_with_default():
         model = default_model(ion)
         assert model.crystal.remark
-        if ion != "Gd3+":
-            assert solve(model).complete
+        assert len(solve(model).energies) >= 10
 
 
 def test_neodymium_in_lanthanum_chloride():
@@ -294,7 +305,7 @@ def test_rows_without_a_doublet_say_why():
     zinc = quench_row("Zn2+")
     assert zinc.g_crystal is None
     assert any("closed shells" in note for note in zinc.notes)
-    assert any("no typical crystal field" in note for note in quench_row("Eu3+").notes)
+    assert any("no typical crystal field" in note for note in quench_row("Fe+").notes)
 
 
 def test_singly_charged_ions_put_all_electrons_into_d():

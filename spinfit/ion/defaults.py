@@ -22,6 +22,33 @@ def _repulsions() -> dict[str, dict[str, str]]:
     return {row["ion"]: row for row in read_table("repulsion.csv")}
 
 
+@lru_cache(maxsize=1)
+def _racahs() -> dict[str, dict[str, str]]:
+    return {row["ion"]: row for row in read_table("racah.csv")}
+
+
+def free_ion(name: str) -> tuple[IonModel, str]:
+    """Return a free ion with repulsion and spin-orbit constants of the tables, and where they stand.
+
+    Raises
+    ------
+    InputError
+        When a constant that is needed is in no table.
+    """
+    shell, ion = open_shell(name), parse_name(name).name
+    zeta, source = default_zeta(ion), [f"zeta: {spin_orbit_table()[ion].source}"]
+    slater: dict[int, float] = {}
+    if shell.count not in (1, 4 * shell.l + 1):
+        row = _repulsions().get(ion) or _racahs().get(ion)
+        if row is None:
+            raise InputError(f"no repulsion parameters of {ion} are in the tables", "give a file with racah or slater")
+        slater = default_slater(ion)
+        if not slater:
+            slater = racah_to_slater(*(float(row[key]) * MHZ_PER_WAVENUMBER for key in ("B_cm1", "C_cm1")))
+        source.append(f"repulsion: {row['source']}")
+    return IonModel(shell, zeta, slater, name=ion), "; ".join(source)
+
+
 def ions_with_default() -> tuple[str, ...]:
     """Return the ions for which a typical field is at hand."""
     return tuple(_fields())
@@ -83,13 +110,8 @@ def default_zeta(name: str) -> float:
 
 
 def default_space(shell: Shell, slater: dict[int, float]) -> str:
-    """Return the whole configuration where repulsion is known and it is small enough, else Hund's term."""
-    if shell.count in (1, 4 * shell.l + 1):
-        return "configuration"
-    if not slater:
-        return "term"
-    small = shell.l < 3 or shell.count in (2, 3, 7, 11, 12)
-    return "configuration" if small else "term"
+    """Return the whole configuration where its repulsion is known (or there is none), else Hund's term."""
+    return "configuration" if slater or shell.count in (1, 4 * shell.l + 1) else "term"
 
 
 def default_model(name: str) -> IonModel:

@@ -12,7 +12,7 @@ from scipy.optimize import brentq
 
 from spinfit.errors import InputError
 from spinfit.ion.first_order import first_order
-from spinfit.ion.model import IonModel, solve
+from spinfit.ion.model import IonModel, solve_ground
 from spinfit.ion.quench import MeasuredG, ground_state
 from spinfit.ion.tensors import SpinHamiltonian
 from spinfit.units import MHZ_PER_WAVENUMBER
@@ -69,7 +69,7 @@ def principal_g(model: IonModel) -> NDArray[np.float64]:
     InputError
         When there is neither a spin Hamiltonian nor a doublet.
     """
-    ground = ground_state(model, solve(model))
+    ground = ground_state(model, solve_ground(model))
     if isinstance(ground, str):
         raise InputError(ground, "lower the symmetry of the field")
     return ground.g_principal if isinstance(ground, SpinHamiltonian) else ground.principal

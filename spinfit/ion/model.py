@@ -243,7 +243,8 @@ def solve(model: IonModel, *, lowest: int | None = None) -> Levels:
     ----------
     lowest : int, optional
         How many states are wanted.  All of them by default, up to `DENSE` states; beyond that (f5 to f9
-        in the whole configuration) the 24 lowest, by Lanczos iteration on the sparse matrix.
+        in the whole configuration) as many as Hund's term has, at least 24, by Lanczos iteration on the
+        sparse matrix.
 
     Raises
     ------
@@ -264,8 +265,17 @@ def solve(model: IonModel, *, lowest: int | None = None) -> Levels:
         kept = size if lowest is None else lowest
         tolerance = max(_tolerance(float(np.abs(energies).max())), 1e-15 * abs(centre))
         return Levels(model, energies[:kept] + centre, states[:, :kept], kept == size, tolerance)
-    energies, states, largest = _lanczos(matrix, 24 if lowest is None else lowest)
+    if lowest is None:
+        S, L, _ = hund((model.shell,))
+        lowest = max(24, round(2 * S + 1) * (2 * L + 1))
+    energies, states, largest = _lanczos(matrix, lowest)
     return Levels(model, energies, states, False, _tolerance(largest))
+
+
+def solve_ground(model: IonModel) -> Levels:
+    """Find what the ground manifold needs: all levels of a small space, the 16 lowest of a large one."""
+    large = model.space == "configuration" and dimension(model.shell) > DENSE
+    return solve(model, lowest=16 if large else None)
 
 
 def _tolerance(largest: float) -> float:

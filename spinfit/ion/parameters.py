@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from spinfit.errors import InputError
 from spinfit.ion.defaults import default_model
-from spinfit.ion.model import IonModel, solve
+from spinfit.ion.model import IonModel, solve_ground
 from spinfit.ion.quench import ground_state
 from spinfit.ion.tensors import SpinHamiltonian, d_and_e
 from spinfit.species import Angles, Spin
@@ -90,7 +90,7 @@ def spin_parameters(model: IonModel) -> SpinParameters:
     InputError
         When the ground state is neither.
     """
-    ground = ground_state(model, solve(model))
+    ground = ground_state(model, solve_ground(model))
     if isinstance(ground, str):
         raise InputError(ground, "change the crystal field so that a spin or a doublet lies lowest")
     if isinstance(ground, SpinHamiltonian):

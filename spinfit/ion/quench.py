@@ -290,16 +290,19 @@ def _crystal_part(model: IonModel, level: IonLevel, notes: list[str]) -> dict[st
         row["g_first_order"] = tuple(np.einsum("ji,jk,ki->i", axes, simple.g, axes).tolist())
         row["mixing"] = simple.terms
     row["fraction"] = _model_fraction(ground, model, levels, level)
-    # Levels that were not computed matter neither thermally nor, for a half-filled shell, by mixing.
-    if levels.complete or levels.excitation[-1] > 20 * K_B_OVER_H * ROOM:
+    # L and S do not leave a term: levels above it matter neither thermally nor by mixing.
+    if levels.complete or levels.excitation[-1] > 12 * K_B_OVER_H * ROOM:
         row["moment_300K"] = float(susceptibility(levels, [ROOM]).moment[0])
-    if levels.complete and manifold < len(levels.energies):
-        row["independent"] = float(np.trace(independent_part(levels, manifold=manifold)) / 3)
+        if manifold < len(levels.energies):
+            row["independent"] = float(np.trace(independent_part(levels, manifold=manifold)) / 3)
     return row
 
 
 def ground_state(model: IonModel, levels: Levels) -> SpinHamiltonian | DoubletG | str:
-    """Return the spin Hamiltonian of the ground manifold, else its doublet's g, else why there is neither."""
+    """Return the spin Hamiltonian of the ground manifold, else its doublet's g, else why there is neither.
+
+    For f ions other than half-filled ones the doublet alone is asked for: their orbital moment is not quenched.
+    """
     reason = ""
     if model.space != "level" and (model.shell.l < 3 or model.shell.count == 7):
         try:

@@ -105,6 +105,8 @@ def quench_remarks(row: QuenchRow) -> list[str]:
         lines.append(f"{name}: crystal field: {row.crystal_field}")
     if row.kind == "doublet":
         lines.append(f"{name}: crystal-field g is that of the ground doublet, effective spin 1/2")
+    if row.mixing:
+        lines.append(f"{name}: first order, n and Delta: {_mixing_text(row)}")
     if row.D is not None and row.E is not None:
         D, E, error = (x / MHZ_PER_WAVENUMBER for x in (row.D, row.E, row.projection_error or 0.0))
         lines.append(
@@ -114,6 +116,18 @@ def quench_remarks(row: QuenchRow) -> list[str]:
     if row.independent is not None:
         lines.append(f"{name}: temperature-independent part of chi: {row.independent:.3g} cm^3/mol")
     return lines + [f"{name}: {note}" for note in row.notes]
+
+
+def _mixing_text(row: QuenchRow) -> str:
+    """Write the largest parts of n lambda/Delta by axis: "x,y: 2.000 over 14000 cm^-1; z: 8.000 over 13000 cm^-1"."""
+    groups: dict[str, list[str]] = {}
+    for axis in AXES:
+        own = sorted((m for m in row.mixing if m.axis == axis), key=lambda m: -abs(m.n / m.delta))[:3]
+        own = [m for m in own if abs(m.n / m.delta) > 0.01 * abs(own[0].n / own[0].delta)]
+        if own:
+            text = " and ".join(f"{m.n:.3f} over {m.delta / MHZ_PER_WAVENUMBER:.0f} cm^-1" for m in own)
+            groups.setdefault(text, []).append(axis)
+    return "; ".join(f"{','.join(axes)}: {text}" for text, axes in groups.items())
 
 
 def _energy(value: float) -> str:
