@@ -58,6 +58,26 @@ def test_field_and_frequency_combine_in_quadrature(outcome):
     assert width.uncertainty_field < 0.02 * width.uncertainty_noise
 
 
+def test_budget_sums_in_quadrature(outcome):
+    for name, parts in outcome.budget.items():
+        assert set(parts) == {"noise", "correlation and misfit", "field axis", "frequency"}
+        total = math.sqrt(sum(part**2 for part in parts.values()))
+        assert total == pytest.approx(outcome.parameters[name].uncertainty, rel=1e-9)
+    # u(g) = g u_B/B of the axis and g u_nu/nu of the frequency.
+    g = outcome.parameters["r.g_z"].value
+    assert outcome.budget["r.g_z"]["frequency"] == pytest.approx(g * 0.2 / jobs.FREQUENCY, rel=2e-3)
+    assert outcome.budget["r.g_z"]["field axis"] == pytest.approx(g * 0.02 / field_of(g, jobs.FREQUENCY), rel=2e-3)
+
+
+def test_conventional_setting_is_named():
+    model = (jobs.species(g=(2.02,), S=1.0, D=300.0, E=-50.0),)
+    signal = jobs.clean_signal(*model)
+    signal = signal + jobs.level(signal, 80) * np.random.default_rng(43).normal(size=signal.size)
+    outcome = fit(jobs.job(jobs.trace(signal), model=model, vary=("r.g", "r.D")))
+    note = next(n for n in outcome.warnings if n.code == "other_setting")
+    assert "E = 50 MHz" in note.text
+
+
 def test_curves_add_up(outcome):
     curves = outcome.curves[0]
     assert curves.fitted == pytest.approx(curves.parts["r"] + curves.baseline)

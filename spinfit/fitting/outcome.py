@@ -95,6 +95,9 @@ class Outcome:
         Of the varied parameters; shape (n, n); empty when there is no covariance.
     fractions : mapping of species name -> Value
         Relative numbers of spins, summing to 1.
+    budget : mapping of parameter -> {source: standard uncertainty}
+        What each uncertainty is made of: "noise", "correlation and misfit", "field axis",
+        "frequency"; in the unit of the job, summing in quadrature to the uncertainty.
     engine : mapping
         What accuracy was used: orientations, diagonalisations, estimated error, per trace.
     seconds : float
@@ -111,5 +114,6 @@ class Outcome:
     fractions: Mapping[str, Value] = field(default_factory=dict)
     provenance: Mapping[str, object] = field(default_factory=dict)
     engine: Mapping[str, object] = field(default_factory=dict)
+    budget: Mapping[str, Mapping[str, float]] = field(default_factory=dict)
     message: str = ""
     seconds: float = 0.0

@@ -16,7 +16,7 @@ from spinfit.fitting.outcome import Curves, Note, Outcome, Quality
 from spinfit.fitting.residuals import Point, Problem, Seen, View, known_columns
 from spinfit.fitting.signals import true_field
 from spinfit.fitting.solve import Descent
-from spinfit.fitting.uncertainty import Covariances, fractions_of, reported_values
+from spinfit.fitting.uncertainty import Covariances, budget_of, fractions_of, reported_values
 
 Array = NDArray[np.float64]
 
@@ -130,6 +130,7 @@ def outcome_of(
         fractions=fractions_of(amounts, problem, point.free, spread),
         provenance=provenance_of(problem),
         engine={"tolerance": view.stage.tolerance, "simulations": problem.signals.simulations, "reports": reports},
+        budget={} if spread is None else budget_of(problem, point.free, spread),
         message=descent.message,
         seconds=seconds,
     )

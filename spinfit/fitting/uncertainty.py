@@ -52,8 +52,12 @@ class Covariances:
         others are 0.
     noise, field : ndarray, shape (k, k)
         From the noise; from field axis and frequency.
+    white : ndarray, shape (k, k)
+        What `noise` would be without correlation of neighbours and without misfit.
     field_shifts : ndarray, shape (m, k)
         The parameters' response to each shared standard shift of an axis or a frequency.
+    shift_sources : tuple of str
+        What each of these is: "field axis" or "frequency".
     blind : tuple of tuple of str
         Sets of parameters of which only combinations are determined.
     traces : tuple of ResidualNoise
@@ -63,7 +67,9 @@ class Covariances:
     known: NDArray[np.bool_]
     noise: Array
     field: Array
+    white: Array
     field_shifts: Array
+    shift_sources: tuple[str, ...]
     blind: tuple[tuple[str, ...], ...]
     traces: tuple[ResidualNoise, ...]
 
@@ -92,19 +98,27 @@ def spread_of(problem: Problem, view: View, point: Point, jacobian: Array, at_li
     response = (right.T / singular) @ left.T / size[:, None]
     blocks = _blocks(view)
     linear = problem.fitted_basis(point, view)
-    traces, noise = [], np.zeros((used.shape[1],) * 2)
+    traces, noise, white = [], np.zeros((used.shape[1],) * 2), np.zeros((used.shape[1],) * 2)
     for rows, basis in zip(blocks, linear, strict=True):
         residual = point.residual[rows]
         one = residual_noise(residual, np.column_stack((basis, left[rows])))
         traces.append(one)
         columns = response[:, rows].T
+        white += one.variance * (columns.T @ columns)
         noise += _widened(columns.T @ one.applied(columns), one, residual, columns)
-    shifts = _axis_shifts(problem, view, point, response)
-    k = known.size
-    whole, moved = np.zeros((k, k)), np.zeros((shifts.shape[0], k))
-    whole[np.ix_(known, known)] = (noise + noise.T) / 2
+    shifts, sources = _axis_shifts(problem, view, point, response)
+    moved = np.zeros((shifts.shape[0], known.size))
     moved[:, known] = shifts
-    return Covariances(known, whole, moved.T @ moved, moved, blind, tuple(traces))
+    return Covariances(
+        known, _filled(noise, known), moved.T @ moved, _filled(white, known), moved, sources, blind, tuple(traces)
+    )
+
+
+def _filled(inner: Array, known: NDArray[np.bool_]) -> Array:
+    """Put a covariance of the known parameters into one of all, made symmetric to the last bit."""
+    out = np.zeros((known.size, known.size))
+    out[np.ix_(known, known)] = (inner + inner.T) / 2
+    return out
 
 
 def _nothing(used: Array) -> tuple[Array, Array, Array]:
@@ -145,15 +159,16 @@ def _seen_parameters(
     return known, tuple(blind)
 
 
-def _axis_shifts(problem: Problem, view: View, point: Point, response: Array) -> Array:
-    """Response of the parameters to each shared standard shift, shape (m, k)."""
-    rows = []
+def _axis_shifts(problem: Problem, view: View, point: Point, response: Array) -> tuple[Array, tuple[str, ...]]:
+    """Response of the parameters to each shared standard shift, shape (m, k), and what shifts."""
+    rows, sources = [], []
     for group in dict.fromkeys(trace.group for trace in point.traces):
-        for changes in (_field_changes, _frequency_changes):
+        for source, changes in (("field axis", _field_changes), ("frequency", _frequency_changes)):
             moved = changes(problem, view, point, group)
             if any(change is not None for change in moved):
                 rows.append(-response @ problem.projected_change(point, view, moved))
-    return np.array(rows).reshape(len(rows), response.shape[0])
+                sources.append(source)
+    return np.array(rows).reshape(len(rows), response.shape[0]), tuple(sources)
 
 
 def _field_changes(problem: Problem, view: View, point: Point, group: str | None) -> list[Array | None]:
@@ -192,23 +207,54 @@ def combined(noise: float, field: float) -> float:
     return math.hypot(noise, field)
 
 
+def tied_slopes(problem: Problem, free: Array) -> dict[str, Array]:
+    """Derivative of every varied or tied parameter by the varied ones, each of shape (k,)."""
+    order = {name: k for k, name in enumerate(problem.names)}
+    out = {name: row for name, row in zip(problem.names, np.eye(len(order)), strict=True)}
+    for name, partials in problem.ties.gradient(problem.values(free)).items():
+        out[name] = np.zeros(len(order))
+        for inner, part in partials.items():
+            if inner in order:
+                out[name][order[inner]] += part
+    return out
+
+
+def budget_of(problem: Problem, free: Array, spread: Covariances) -> dict[str, dict[str, float]]:
+    """How much of each uncertainty is what, in the units of the job.
+
+    Returns
+    -------
+    mapping of name -> {source: standard uncertainty}
+        "noise" as if it were white, "correlation and misfit" what widens it beyond that, "field
+        axis" and "frequency"; their quadrature sum is the parameter's uncertainty.
+    """
+    out = {}
+    for name, slope in tied_slopes(problem, free).items():
+        noise, _ = _parts(slope, spread)
+        if noise is None:
+            continue
+        white = float(slope @ spread.white @ slope)
+        # Correlation can narrow as well: then the noise part is what it is, and nothing is added.
+        parts = {"noise": min(math.sqrt(white), noise), "correlation and misfit": math.sqrt(max(noise**2 - white, 0.0))}
+        for source in ("field axis", "frequency"):
+            rows = [row for row, kind in zip(spread.field_shifts, spread.shift_sources, strict=True) if kind == source]
+            parts[source] = math.sqrt(sum(float(slope @ row) ** 2 for row in rows))
+        parameter = problem.parameters[name]
+        out[name] = {source: abs(parameter.to_job(value)) for source, value in parts.items()}
+    return out
+
+
 def reported_values(
     problem: Problem, free: Array, spread: Covariances | None, at_limit: NDArray[np.bool_]
 ) -> dict[str, Value]:
     """Every parameter of the model with its uncertainty, in the units of the job."""
     values = problem.values(free)
-    gradient = problem.ties.gradient(values)
+    slopes = tied_slopes(problem, free)
     order = {name: k for k, name in enumerate(problem.names)}
     out = {}
     for name, parameter in problem.parameters.items():
         value = values.get(name, parameter.value)
-        slope = np.zeros(len(order))
-        if name in order:
-            slope[order[name]] = 1.0
-        for inner, part in gradient.get(name, {}).items():
-            if inner in order:
-                slope[order[inner]] += part
-        parts = _parts(slope, spread)
+        parts = _parts(slopes.get(name, np.zeros(len(order))), spread)
         limited = name in order and bool(at_limit[order[name]])
         shown = [None if p is None else abs(parameter.to_job(p)) for p in parts]
         out[name] = Value(
@@ -219,7 +265,7 @@ def reported_values(
             unit=parameter.unit,
             varied=name in order,
             at_limit=limited,
-            tied=name in gradient,
+            tied=name in problem.ties.names,
             start=parameter.to_job(parameter.value),
         )
     return out
@@ -248,16 +294,8 @@ def fractions_of(
     total = sum(amount for _, amount in species)
     if total == 0:
         return {}
-    gradient = problem.ties.gradient(problem.values(free))
-    order = {name: k for k, name in enumerate(problem.names)}
-    slopes = []
-    for name, _ in species:
-        slope = np.zeros(len(order))
-        amount = f"{name}.amount"
-        for inner, part in gradient.get(amount, {amount: 1.0}).items():
-            if inner in order:
-                slope[order[inner]] += part
-        slopes.append(slope)
+    moving = tied_slopes(problem, free)
+    slopes = [moving.get(f"{name}.amount", np.zeros(len(problem.names))) for name, _ in species]
     whole = np.sum(slopes, axis=0)
     out = {}
     for (name, amount), slope in zip(species, slopes, strict=True):

@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spinfit.errors import InputError
+from spinfit.fitting.equivalent import AXES, conventional
 from spinfit.fitting.noise import autocorrelation, runs_test
 from spinfit.fitting.outcome import Note
 from spinfit.fitting.residuals import Point, Problem, View
@@ -110,6 +111,7 @@ def notes_after(
         notes += _residual_notes(point, view, spread)
         if descent.jacobian is not None:
             notes += _sign_notes(problem, view, point, descent.jacobian, spread)
+        notes += _setting_notes(problem, point)
     notes += _modulation_notes(point)
     notes += _beyond_notes(problem, view, point)
     return notes
@@ -236,6 +238,27 @@ def _as_good(
     after = residual - jacobian[:, known] @ step
     per_point = max(point.chi2 / max(view.points - view.linear - point.free.size, 1), 1e-12)
     return (float(after @ after) - point.chi2) / per_point < _SIGN_CHI2
+
+
+def _setting_notes(problem: Problem, point: Point) -> list[Note]:
+    """D and E in the conventional setting, where the fit ended in another."""
+    notes = []
+    for one in point.species:
+        name = f"{one.name}.D"
+        if len(one.spins) != 1 or name not in problem.parameters or one.spins[0].D == 0:
+            continue
+        spin = one.spins[0]
+        if 0 <= spin.zfs_E / spin.D <= 1 / 3:
+            continue
+        D, E, axes = conventional(spin.D, spin.zfs_E)
+        parameter = problem.parameters[name]
+        shown = [f"{parameter.to_job(v):.6g} {parameter.unit}" for v in (D, E)]
+        text = (
+            f"With axes x, y, z renamed {', '.join(AXES[k] for k in axes)}, {one.name} has D = {shown[0]} and "
+            f"E = {shown[1]} (0 <= E/D <= 1/3): the same tensor in the conventional setting."
+        )
+        notes.append(Note("other_setting", text))
+    return notes
 
 
 def _modulation_notes(point: Point) -> list[Note]:
