@@ -8,13 +8,12 @@ import pytest
 from spinfit.cli import main
 from spinfit.errors import InputError
 from spinfit.ion.defaults import default_model
-from spinfit.ion.free_levels import free_levels
 from spinfit.ion.lande import lookup
 from spinfit.ion.model import solve
 from spinfit.ion.quench import parse_measured, quench_row
 from spinfit.ion.tensors import doublet_g, principal_axes
 from spinfit.report.ion_plots import comparison_figure, doublets_figure, level_figure, stages, term_figure
-from spinfit.report.ion_tables import free_levels_table, levels_table, mixing_table, quench_table
+from spinfit.report.ion_tables import levels_table, mixing_table, quench_table
 from spinfit.units import MHZ_PER_WAVENUMBER as CM
 
 FIELD = """
@@ -155,11 +154,36 @@ def test_tables_of_levels():
     text = levels_table(lookup("Cu2+"))
     # 2D3/2 lies 5/2 |lambda| = 2072.5 cm^-1 above 2D5/2
     assert text.splitlines()[3].split() == ["2D3/2", "0.79954", "2072"]
-    model = default_model("Cr3+")
-    assert free_levels_table(free_levels(model, lowest=2)).splitlines()[2].startswith("4F3/2")
     assert "8.000" in mixing_table(quench_row("Cr3+"))
     assert "no level mixes" in mixing_table(quench_row("Eu3+"))
     assert "closed shells" in quench_table([quench_row("Zn2+")])
+
+
+def test_ion_lists_terms_and_levels(capsys, tmp_path):
+    picture = tmp_path / "co.png"
+    assert main(["ion", "Co2+", "--terms", "--levels", "--plot", str(picture), "--json"]) == 0
+    (record,) = json.loads(capsys.readouterr().out)
+    # d3 and d7 have 8 terms, 2D twice (E. U. Condon, G. H. Shortley (1935))
+    assert {t["term"]: t["count"] for t in record["terms"]} == {
+        "4F": 1, "4P": 1, "2H": 1, "2G": 1, "2F": 1, "2D": 2, "2P": 1
+    }  # fmt: skip
+    assert [level["J"] for level in record["levels"]] == ["9/2", "7/2", "5/2", "3/2"]
+    # Landé: E(7/2) - E(9/2) = 9/2 |lambda|, |lambda| = 177 cm^-1
+    assert record["levels"][1]["energy_cm1"] == pytest.approx(4.5 * 177)
+    # Co2+ 4F7/2 at 841, 4F3/2 at 1867 cm^-1 (C. E. Moore, Atomic Energy Levels, from memory)
+    found = {x["label"]: x["energy_cm1"] for x in record["intermediate"]}
+    assert found["4F7/2"] == pytest.approx(841, rel=0.05)
+    assert found["4F3/2"] == pytest.approx(1867, rel=0.05)
+    assert record["weak_field_limit_mT"] > 1e5
+    assert picture.read_bytes().startswith(b"\x89PNG")
+    assert main(["ion", "Co2+", "4F9/2", "--levels"]) == 0
+    text = capsys.readouterr().out
+    assert "by Landé's interval rule" in text
+    assert "from memory" in text
+    assert main(["ion", "4F9/2", "--terms"]) == 2
+    assert "without a configuration" in capsys.readouterr().err
+    assert main(["ion", "3d7", "--plot", str(tmp_path / "x.png")]) == 2
+    assert "no lambda of 3d7" in capsys.readouterr().err
 
 
 def test_axes_of_coinciding_values_are_straight():

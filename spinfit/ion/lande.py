@@ -194,3 +194,10 @@ def _note(S: float, L: int, J: float, shells: tuple) -> str:
     if len([s for s in shells if s.l > 0]) > 1:
         notes.append("two open shells: Hund's rules are less reliable here")
     return "; ".join(notes)
+
+
+def numbers_of(level: IonLevel) -> tuple[float, float, float]:
+    """Return (S, L, J) of a level as numbers."""
+    halves = (text.partition("/") for text in (level.S, level.L, level.J))
+    S, L, J = (int(whole) / int(under or 1) for whole, _, under in halves)
+    return S, L, J

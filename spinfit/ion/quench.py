@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 from spinfit.errors import InputError
 from spinfit.ion.defaults import default_model, default_space, default_zeta, open_shell
 from spinfit.ion.first_order import Mixing, first_order
-from spinfit.ion.lande import IonLevel, lookup, orbital_to_spin
+from spinfit.ion.lande import IonLevel, lookup, numbers_of, orbital_to_spin
 from spinfit.ion.magnetism import independent_part, susceptibility
 from spinfit.ion.model import IonModel, Levels, solve
 from spinfit.ion.tensors import DoubletG, SpinHamiltonian, doublet_g, spin_hamiltonian
@@ -203,13 +203,6 @@ def measured_from_parameters(parameters: Mapping[str, Mapping[str, object]], spe
 def free_ratio(level: IonLevel) -> float | None:
     """Return r = <L>/<S> of the free ground level, the yardstick of surviving orbital moment."""
     return orbital_to_spin(*numbers_of(level))
-
-
-def numbers_of(level: IonLevel) -> tuple[float, float, float]:
-    """Return (S, L, J) of a level as numbers."""
-    halves = (text.partition("/") for text in (level.S, level.L, level.J))
-    S, L, J = (int(whole) / int(under or 1) for whole, _, under in halves)
-    return S, L, J
 
 
 def surviving_fraction(

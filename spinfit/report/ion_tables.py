@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
+from typing import Any
 
 import numpy as np
 
 from spinfit.ion.assignment import Candidate
-from spinfit.ion.free_levels import FreeLevel
 from spinfit.ion.inverse import Needed
 from spinfit.ion.kramers import DoubletMatch, doublet_table
 from spinfit.ion.lande import IonLevel
@@ -205,20 +205,6 @@ def levels_table(level: IonLevel) -> str:
     return table(["level", "g_J", "E / cm^-1"], cells)
 
 
-def free_levels_table(levels: Sequence[FreeLevel]) -> str:
-    """Return levels of the whole configuration in intermediate coupling."""
-    cells = [
-        [
-            level.label,
-            f"{level.energy / MHZ_PER_WAVENUMBER:.0f}",
-            "-" if level.g is None else f"{level.g:.4f}",
-            f"{100 * level.share:.0f}",
-        ]
-        for level in levels
-    ]
-    return table(["level", "E / cm^-1", "g", "of that term / %"], cells)
-
-
 def matches_table(matches: Sequence[DoubletMatch]) -> str:
     """Return which doublets come nearest to a measured effective g, at which E/D."""
     cells = [
@@ -246,3 +232,29 @@ def doublet_lines(found: Sequence[tuple[str, str, DoubletG]]) -> str:
             cells.append([*head, *numbers, *axis, sign if k == 0 else ""])
         below.append(wrapped(f"{name}: crystal field: {remark}"))
     return "\n\n".join([table(headings, cells), "\n".join(below)])
+
+
+def details_text(level: IonLevel, details: Mapping[str, Any]) -> str:
+    """Return what `ion.details` found, as tables under the ion's name."""
+    parts = [f"{level.ion} {level.term}"]
+    if "terms" in details:
+        counted = [term["term"] + (f" x{term['count']}" if term["count"] > 1 else "") for term in details["terms"]]
+        parts.append(wrapped(f"terms ({sum(t['count'] for t in details['terms'])}): {', '.join(counted)}"))
+    if "levels" in details:
+        parts.append(f"by Landé's interval rule:\n{levels_table(level)}")
+        part = details["weak_field_limit_mT"]
+        if part is not None:
+            parts.append(f"Landé's lines miss the exact levels by 1 % at {part / 1e3:.3g} T")
+    if details.get("intermediate"):
+        rows = [
+            [
+                x["label"],
+                f"{x['energy_cm1']:.0f}",
+                "-" if x["g"] is None else f"{x['g']:.4f}",
+                f"{100 * x['share']:.0f}",
+            ]
+            for x in details["intermediate"]
+        ]
+        text = table(["level", "E / cm^-1", "g", "of that term / %"], rows)
+        parts.append(f"whole configuration, intermediate coupling:\n{text}\n{wrapped(details['source'])}")
+    return "\n\n".join(parts)
