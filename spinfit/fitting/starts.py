@@ -21,6 +21,7 @@ from scipy.stats import qmc
 
 from spinfit.errors import InputError
 from spinfit.fitting.data import Trace
+from spinfit.fitting.noise import residual_noise
 from spinfit.fitting.parameters import Parameter
 from spinfit.fitting.residuals import Point, Problem, Progress, View, broadened_view
 from spinfit.fitting.signals import narrowest_width
@@ -44,6 +45,7 @@ _SEED = 20240229
 # uncertain by some per cent, or when no more than this part of the trace's sum of squares is unexplained.
 _AT_NOISE = 1.2
 _NEXT_TO_NOTHING = 1e-3
+_LITTLE = 0.05
 # Parameters that shape lines and do not move them: held while the view is broader than the lines.
 _SHAPES = (".width.", ".spread.", ".phase")
 
@@ -258,17 +260,37 @@ class Search:
             self.best = descent
 
     def _done(self) -> bool:
-        return self._agreed or _good(self.best, self.view)
+        return self._agreed or _good(self.problem, self.best, self.view)
 
 
-def _good(descent: Descent | None, view: View) -> bool:
+def _good(problem: Problem, descent: Descent | None, view: View) -> bool:
     """Whether a descent ended where no other minimum need be looked for, its scale the right way up.
 
     That is at the noise, or, in a trace of little noise, where what is left above the noise is next
-    to nothing of the trace: then the model is the limit and not the start.
+    to nothing of the trace (then the model is the limit and not the start), or little and without
+    features (then the noise is correlated and larger than neighbouring points show).
     """
     if descent is None or not descent.converged or min(descent.point.scales) <= 0:
         return False
     freedom = max(view.points - view.linear - descent.point.free.size, 1)
     total = sum(float(seen.rest @ seen.rest) for seen in view.seen)
-    return descent.point.chi2 < max(_AT_NOISE * freedom, freedom + _NEXT_TO_NOTHING * (total - freedom))
+    chi2, beyond = descent.point.chi2, max(total - freedom, 0.0)
+    if chi2 < max(_AT_NOISE * freedom, freedom + _NEXT_TO_NOTHING * beyond):
+        return True
+    return chi2 < freedom + _LITTLE * beyond and _featureless(problem, descent.point, view)
+
+
+def _featureless(problem: Problem, point: Point, view: View) -> bool:
+    """Whether the residuals look like noise that is correlated, rather than like a line in a wrong place.
+
+    A missed line makes the residuals large where the model's lines are, or large in few places.
+    """
+    at = 0
+    for seen, basis in zip(view.seen, problem.fitted_basis(point, view), strict=True):
+        residual = point.residual[at : at + seen.field.size]
+        at += seen.field.size
+        spread = float(np.mean(residual**2))
+        tails = float(np.mean(residual**4)) / max(spread**2, 1e-300) - 3
+        if residual_noise(residual, basis).uneven > 4 or tails > 0.5 + 5 * math.sqrt(24 / residual.size):
+            return False
+    return True
