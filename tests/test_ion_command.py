@@ -77,6 +77,22 @@ def test_field_file_and_outcome(capsys, tmp_path):
     assert json.loads(out)[0]["g_measured"] == [2.06, 2.06, 2.3]
 
 
+def test_levels_and_moments_against_temperature(capsys):
+    code, out, _ = run(capsys, "Ni2+", "--temperatures", "2, 300 K", "--json")
+    (record,) = json.loads(out)
+    # 3A2 below 3T2 at 10Dq (8500 cm^-1 in the typical field), split by spin-orbit coupling of some 550 cm^-1
+    assert record["levels"][0] == {"energy_cm1": 0.0, "states": 3}
+    assert record["levels"][1]["energy_cm1"] == pytest.approx(8500, rel=0.05)
+    low, warm = (m["moment"] for m in record["moments"])
+    # g sqrt(S(S+1)) of S = 1 in the cold; the temperature-independent part adds a little at 300 K
+    assert low == pytest.approx(record["g_crystal_field"][0] * 2**0.5, rel=1e-3)
+    assert low < warm == record["moment_crystal_field_300K"]
+    code, out, _ = run(capsys, "Ni2+", "--temperatures", "2, 300 K")
+    assert "p(Ni2+)" in out
+    assert run(capsys, "Ni2+", "--temperatures", "0 K")[0] == 2
+    assert run(capsys, "Ni2+", "--temperatures", "300")[0] == 2
+
+
 def test_candidates_and_doublets(capsys):
     code, out, _ = run(capsys, "--measured", "2.05, 2.06, 2.33", "--candidates")
     assert code == 0

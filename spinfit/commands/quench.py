@@ -31,6 +31,7 @@ def options(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--candidates", action="store_true", help="list ions and states that could have the g")
     parser.add_argument("--doublet", metavar="N", help="g of the N-th Kramers doublet in place of the ground state's")
     parser.add_argument("--doublets", metavar="S", help="table of effective g of all doublets of a spin against E/D")
+    parser.add_argument("--temperatures", metavar="QUANTITY", help='effective moments too, such as "2, 77, 300 K"')
     parser.add_argument("--g-spin", metavar="G", help="g of the spin (default: the free electron's, CODATA)")
     parser.add_argument("--plot", metavar="FILE", help="draw it (.png, .svg or .pdf)")
     parser.add_argument("--levels", metavar="FILE", help="draw the levels of the one ion (.png, .svg or .pdf)")
@@ -183,11 +184,11 @@ def _table(
     args: argparse.Namespace, names: list[str], models: dict[str, Any], measured: list[Any], screen: Screen
 ) -> int:
     from spinfit.ion.quench import quench_row
-    from spinfit.report.ion_tables import needed_table, quench_table
+    from spinfit.report.ion_tables import moments_table, needed_table, quench_table
 
-    g_spin = number(args.g_spin, "--g-spin")
+    g_spin, temperatures = number(args.g_spin, "--g-spin"), _temperatures(args.temperatures)
     rows = [
-        quench_row(name, model=models.get(name), measured=m, g_spin=g_spin)
+        quench_row(name, model=models.get(name), measured=m, g_spin=g_spin, temperatures=temperatures)
         for name, m in zip(names, measured, strict=True)
     ]
     needs = [_needs(name, models.get(name), row) for name, row in zip(names, rows, strict=True)]
@@ -198,6 +199,8 @@ def _table(
     for name, need in zip(names, needs, strict=True):
         if need:
             screen.say(f"\n{name}: what would bring the model to the measurement\n{needed_table(need)}")
+    if temperatures:
+        screen.say(f"\n{moments_table(rows)}")
     if args.plot:
         from spinfit.commands.drawing import save_picture
         from spinfit.report.ion_plots import comparison_figure
@@ -212,6 +215,18 @@ def _table(
             raise InputError(f"{len(names)} ions", "name one ion to draw its levels", place="--levels")
         save_picture(args.levels, level_figure(models.get(names[0]) or default_model(names[0])))
     return 0
+
+
+def _temperatures(text: str | None) -> tuple[float, ...]:
+    """Read "2, 77, 300 K"."""
+    from spinfit.units import parse
+
+    if text is None:
+        return ()
+    values = parse(text, "temperature", "--temperatures", count=None)[0]
+    if min(values) <= 0:
+        raise InputError(f"{min(values):g} K", "write positive temperatures", place="--temperatures")
+    return values
 
 
 def _needs(name: str, model: Any, row: Any) -> tuple[Any, ...]:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 import re
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -21,6 +21,8 @@ from spinfit.units import K_B_OVER_H, MHZ_PER_WAVENUMBER
 
 ROOM = 300.0
 """Temperature of the tabulated effective moment, K."""
+SHOWN = 8
+"""How many levels are listed."""
 
 
 @dataclass(frozen=True)
@@ -78,6 +80,10 @@ class QuenchRow:
         The same from the measured g.
     moment_300K : float or None
         Effective moment in the crystal field at 300 K, Bohr magnetons.
+    levels : tuple of (energy, states)
+        Lowest crystal-field levels, MHz above the ground level, with how many states each has.
+    moments : tuple of (temperature, moment)
+        Effective moment at the temperatures asked for, K and Bohr magnetons.
     independent : float or None
         Powder average of van Vleck's temperature-independent susceptibility, cm^3/mol.
     notes : tuple of str
@@ -100,6 +106,8 @@ class QuenchRow:
     fraction_uncertainty: tuple[float, ...] | None = None
     moment_300K: float | None = None
     independent: float | None = None
+    levels: tuple[tuple[float, int], ...] = ()
+    moments: tuple[tuple[float, float], ...] = ()
     notes: tuple[str, ...] = ()
 
     def as_record(self) -> dict[str, object]:
@@ -128,7 +136,9 @@ class QuenchRow:
             "orbital_fraction_measured": _listed(self.fraction_measured),
             "orbital_fraction_uncertainty": _listed(self.fraction_uncertainty),
             "moment_crystal_field_300K": self.moment_300K,
+            "moments": [{"temperature_K": T, "moment": p} for T, p in self.moments],
             "chi_independent_cm3_per_mol": self.independent,
+            "levels": [{"energy_cm1": wavenumbers(e), "states": n} for e, n in self.levels],
             "notes": list(self.notes),
         }
 
@@ -228,7 +238,12 @@ def bare_model(name: str) -> IonModel:
 
 
 def quench_row(
-    name: str, *, model: IonModel | None = None, measured: MeasuredG | None = None, g_spin: float | None = None
+    name: str,
+    *,
+    model: IonModel | None = None,
+    measured: MeasuredG | None = None,
+    g_spin: float | None = None,
+    temperatures: Sequence[float] = (),
 ) -> QuenchRow:
     """Compare one ion, free, in a crystal field and measured.
 
@@ -241,6 +256,8 @@ def quench_row(
     measured : MeasuredG, optional
     g_spin : float, optional
         See `lande.lookup`.
+    temperatures : sequence of float
+        At which the effective moment is wanted as well, K.
     """
     level = lookup(name, g_spin=g_spin)
     notes = [level.note] if level.note else []
@@ -253,18 +270,20 @@ def quench_row(
         model = replace(model, g_spin=g_spin)
     row: dict[str, object] = {}
     if model is not None:
-        row = _crystal_part(model, level, notes)
+        row = _crystal_part(model, level, notes, temperatures)
     if measured is not None:
         row["measured"] = measured
         row |= _measured_part(measured, level, row, notes)
     return QuenchRow(level=level, spin_only=level.g_spin, notes=tuple(dict.fromkeys(notes)), **row)
 
 
-def _crystal_part(model: IonModel, level: IonLevel, notes: list[str]) -> dict[str, object]:
+def _crystal_part(
+    model: IonModel, level: IonLevel, notes: list[str], temperatures: Sequence[float]
+) -> dict[str, object]:
     """Fill what the crystal-field model says."""
     levels = solve(model)
     remark = model.crystal.remark or f"{model.crystal.form} field given"
-    row: dict[str, object] = {"crystal_field": remark}
+    row: dict[str, object] = {"crystal_field": remark, "levels": _lowest_levels(levels)}
     ground = ground_state(model, levels)
     if isinstance(ground, str):
         notes.append(ground)
@@ -285,10 +304,19 @@ def _crystal_part(model: IonModel, level: IonLevel, notes: list[str]) -> dict[st
     row["fraction"] = _model_fraction(ground, model, levels, level)
     # L and S do not leave a term: levels above it matter neither thermally nor by mixing.
     if levels.complete or levels.excitation[-1] > 12 * K_B_OVER_H * ROOM:
-        row["moment_300K"] = float(susceptibility(levels, [ROOM]).moment[0])
+        found = susceptibility(levels, [ROOM, *temperatures]).moment
+        row["moment_300K"] = float(found[0])
+        row["moments"] = tuple((float(T), float(p)) for T, p in zip(temperatures, found[1:], strict=True))
         if manifold < len(levels.energies):
             row["independent"] = float(np.trace(independent_part(levels, manifold=manifold)) / 3)
     return row
+
+
+def _lowest_levels(levels: Levels) -> tuple[tuple[float, int], ...]:
+    """Return energy and number of states of the lowest levels."""
+    sizes = levels.degeneracies()[:SHOWN]
+    first = np.cumsum((0, *sizes[:-1]))
+    return tuple((float(levels.excitation[i]), n) for i, n in zip(first, sizes, strict=True))
 
 
 def ground_state(model: IonModel, levels: Levels) -> SpinHamiltonian | DoubletG | str:

@@ -103,6 +103,9 @@ def quench_remarks(row: QuenchRow) -> list[str]:
     name, lines = row.level.ion, []
     if row.crystal_field:
         lines.append(f"{name}: crystal field: {row.crystal_field}")
+    if row.levels:
+        listed = ", ".join(f"{e / MHZ_PER_WAVENUMBER:.4g} ({n})" for e, n in row.levels)
+        lines.append(f"{name}: lowest levels / cm^-1 (states): {listed}")
     if row.kind == "doublet":
         lines.append(f"{name}: crystal-field g is that of the ground doublet, effective spin 1/2")
     if row.mixing:
@@ -116,6 +119,16 @@ def quench_remarks(row: QuenchRow) -> list[str]:
     if row.independent is not None:
         lines.append(f"{name}: temperature-independent part of chi: {row.independent:.3g} cm^3/mol")
     return lines + [f"{name}: {note}" for note in row.notes]
+
+
+def moments_table(rows: Sequence[QuenchRow]) -> str:
+    """Return effective moments against temperature, one column an ion."""
+    known = [row for row in rows if row.moments]
+    if not known:
+        return "no moment is known: no crystal field"
+    headings = ["T / K"] + [f"p({row.level.ion})" for row in known]
+    cells = [[f"{T:g}"] + [f"{row.moments[k][1]:.3f}" for row in known] for k, (T, _) in enumerate(known[0].moments)]
+    return table(headings, cells, left=())
 
 
 def _mixing_text(row: QuenchRow) -> str:
