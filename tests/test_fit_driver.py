@@ -371,3 +371,16 @@ def test_excluded_points_do_not_count():
     assert outcome.quality.points == signal.size - 30
     assert outcome.quality.chi2_reduced == pytest.approx(1, abs=0.2)
     assert outcome.curves[0].fitted.shape == signal.shape
+
+
+@pytest.mark.parametrize("g", [2.034, 2.048])
+def test_weak_line_that_starts_three_widths_away(g):
+    """A broadened view sees nothing of it: the scan of single parameters has to find it."""
+    strong = jobs.species()
+    signal = jobs.clean_signal(strong, jobs.species(g=(2.04,), width=0.3, name="b", amount=0.04))
+    signal = signal + jobs.level(signal, 150) * np.random.default_rng(44).normal(size=signal.size)
+    model = (jobs.species(g=(2.001, 2.021, 2.059)), jobs.species(g=(g,), width=0.3, name="b", amount=0.04))
+    outcome = fit(jobs.job(jobs.trace(signal), model=model, vary=("r.g", "r.width.gaussian", "b.g", "b.amount")))
+    found = outcome.parameters["b.g"]
+    assert abs(found.value - 2.04) < 4 * found.uncertainty_noise
+    assert outcome.quality.chi2_reduced == pytest.approx(1, abs=0.2)

@@ -44,8 +44,12 @@ _SEED = 20240229
 # A descent is good below this chi-squared per degree of freedom, which the estimate of the noise leaves
 # uncertain by some per cent, or when no more than this part of the trace's sum of squares is unexplained.
 _AT_NOISE = 1.2
-_NEXT_TO_NOTHING = 1e-3
 _LITTLE = 0.05
+# Scans of single parameters for another basin: points on either side, how far the promise must go
+# below the present chi-squared, and how many times in a row such a promise is followed.
+_SCAN_POINTS = 8
+_PROMISE = 0.98
+_MOST_MOVES = 4
 # Parameters that shape lines and do not move them: held while the view is broader than the lines.
 _SHAPES = (".width.", ".spread.", ".phase")
 
@@ -150,6 +154,48 @@ def candidates(problem: Problem, start: Array, *, wide: bool, keep: int = 4) -> 
     return kept
 
 
+def neighbours(problem: Problem, view: View, descent: Descent) -> list[Array]:
+    """Starts in other basins near a minimum, the most promising first.
+
+    A weak feature far from the strong lines leaves several minima in the one parameter it depends
+    on.  Each parameter that moves lines is scanned; all others follow to first order, by the Jacobian
+    at the minimum, which is what keeps the strong lines in their places.
+    """
+    if descent.jacobian is None:
+        return []
+    best, jacobian = descent.point, descent.jacobian
+    found: list[tuple[float, int, Array]] = []
+    for index in np.flatnonzero(~shapes_of(problem.names)):
+        others = np.arange(best.free.size) != index
+        follow = np.linalg.pinv(jacobian[:, others], rcond=1e-6)
+        for number, value in enumerate(_scan(problem, best.free[index], int(index))):
+            free = best.free.copy()
+            free[index] = value
+            slope = jacobian[:, index] * (value - best.free[index])
+            # First along the valley, then from where that leads.
+            free[others] -= follow @ (best.residual + slope)
+            free = np.clip(free, problem.lower, problem.upper)
+            try:
+                point = problem.evaluate(free, view)
+            except InputError:
+                continue
+            step = follow @ point.residual
+            chi2 = point.chi2 - float(np.sum((jacobian[:, others] @ step) ** 2))
+            if chi2 < _PROMISE * best.chi2:
+                free[others] -= step
+                found.append((chi2, 100 * int(index) + number, np.clip(free, problem.lower, problem.upper)))
+    found.sort(key=lambda item: item[:2])
+    return [free for _, _, free in found[:2]]
+
+
+def _scan(problem: Problem, value: float, index: int) -> Array:
+    """Values on either side of a best one, the reach of a rough start away at most."""
+    how, reach = reach_of(problem.parameters[problem.names[index]], wide=False)
+    unit = np.linspace(-1, 1, 2 * _SCAN_POINTS + 1)
+    unit = unit[unit != 0]
+    return value * reach**unit if how == "times" and value != 0 else value + reach * unit
+
+
 def _screens(problem: Problem, start: Array) -> list[View]:
     widths = broadenings(problem, start)
     out = []
@@ -234,6 +280,8 @@ class Search:
             self._follow(start)
         if not self._done():
             self._follow(coarse_to_fine(problem, start, progress=self.progress))
+        if not self._good():
+            self._leave_for_better_basins()
         if not self._done():
             for free in candidates(problem, start, wide=automatic):
                 near = _WIDEST / _NARROWING
@@ -259,25 +307,38 @@ class Search:
         if ratio < 1:
             self.best = descent
 
+    def _leave_for_better_basins(self) -> None:
+        """Try what a scan of single parameters promises, as long as it keeps its promise."""
+        for _ in range(_MOST_MOVES):
+            assert self.best is not None
+            before = self.best.point.chi2
+            for free in neighbours(self.problem, self.view, self.best):
+                self._follow(free)
+                if self.best.point.chi2 < before * (1 - _SAME):
+                    break
+            else:
+                return
+
+    def _good(self) -> bool:
+        return _good(self.problem, self.best, self.view)
+
     def _done(self) -> bool:
-        return self._agreed or _good(self.problem, self.best, self.view)
+        return self._agreed or self._good()
 
 
 def _good(problem: Problem, descent: Descent | None, view: View) -> bool:
     """Whether a descent ended where no other minimum need be looked for, its scale the right way up.
 
-    That is at the noise, or, in a trace of little noise, where what is left above the noise is next
-    to nothing of the trace (then the model is the limit and not the start), or little and without
-    features (then the noise is correlated and larger than neighbouring points show).
+    That is when what is left is at the noise, or little of the trace (noise that is correlated is
+    larger than neighbouring points show), and has no features of lines.
     """
     if descent is None or not descent.converged or min(descent.point.scales) <= 0:
         return False
     freedom = max(view.points - view.linear - descent.point.free.size, 1)
     total = sum(float(seen.rest @ seen.rest) for seen in view.seen)
-    chi2, beyond = descent.point.chi2, max(total - freedom, 0.0)
-    if chi2 < max(_AT_NOISE * freedom, freedom + _NEXT_TO_NOTHING * beyond):
-        return True
-    return chi2 < freedom + _LITTLE * beyond and _featureless(problem, descent.point, view)
+    if descent.point.chi2 > max(_AT_NOISE * freedom, freedom + _LITTLE * (total - freedom)):
+        return False
+    return _featureless(problem, descent.point, view)
 
 
 def _featureless(problem: Problem, point: Point, view: View) -> bool:
