@@ -215,6 +215,16 @@ def test_zeeman_slopes_tend_to_lande(count):
     assert errors[1] < errors[0] / 50 + 1e-12  # second order in zeta/B
 
 
+@pytest.mark.parametrize("count", range(1, 14))
+def test_ground_terms_of_f_shells_have_exactly_lande_slopes(count):
+    S, L, J = hund((Shell(4, 3, count),))
+    levels = solve(IonModel(Shell(4, 3, count), 1000 * CM, space="term"))
+    if S and L:
+        assert levels.degeneracies()[0] == 2 * J + 1
+    slopes = np.linalg.eigvalsh(levels.moments(slice(0, round(2 * J) + 1))[2])
+    np.testing.assert_allclose(slopes, (lande_g(S, L, J) or 0.0) * np.arange(-J, J + 1), atol=1e-10)
+
+
 def test_intermediate_coupling_of_d7():
     """d7 at zeta = 533 cm^-1 has 1.33285 against 4/3, with g_S = 2 (reference-value collection, computed)."""
     model = IonModel(Shell(3, 2, 7), 533 * CM, racah_to_slater(971 * CM, 4497 * CM), g_spin=2.0)
@@ -442,6 +452,9 @@ def test_what_has_no_meaning_is_refused():
     with pytest.raises(InputError, match="orbitally degenerate"):
         spin_hamiltonian(cobalt)
     chromium = IonModel(Shell(3, 2, 3), 0.0, racah_to_slater(900 * CM, 3600 * CM), octahedron)
+    cobalt_three = IonModel(Shell(3, 2, 6), 0.0, racah_to_slater(600 * CM, 3000 * CM), from_octahedral(23000 * CM))
+    with pytest.raises(InputError, match="no spin"):
+        spin_hamiltonian(cobalt_three)
     with pytest.raises(InputError, match="4-fold, not a doublet"):
         doublet_g(solve(chromium))
     with pytest.raises(InputError, match="metal's own place"):

@@ -83,6 +83,17 @@ def test_weak_field_of_hydrogen_like_doublet_is_closed():
     np.testing.assert_allclose(levels.exact[0], levels.first_order[0], atol=1e-9)
 
 
+@pytest.mark.parametrize(("S", "L"), [(0.5, 2), (1.5, 3), (2, 2), (2.5, 5), (1, 1)])
+@pytest.mark.parametrize("lam", [-100.0, 250.0])
+def test_low_field_slopes_are_lande(S, L, lam):
+    """Slope of the exact levels of lambda L.S + muB B (L_z + g_S S_z) at small field, every level of the term."""
+    b = 1e-5
+    levels = term_in_field(S, L, lam, np.array([0.0, b]))
+    slopes = (levels.exact[1] - levels.exact[0]) / (b * MU_B_OVER_H)
+    expected = [(lande_g(S, L, J) or 0.0) * M for J, M in zip(levels.J, levels.M, strict=True)]
+    np.testing.assert_allclose(slopes, expected, atol=1e-5)
+
+
 def test_parting_field_is_where_lines_part_by_one_percent():
     B = parting_field(1.5, 3, 4.5, -177 * CM)
     levels = term_in_field(1.5, 3, -177 * CM, np.array([B]))
@@ -311,6 +322,11 @@ def test_rows_without_a_doublet_say_why():
 def test_singly_charged_ions_put_all_electrons_into_d():
     assert str(open_shell("Fe+")) == "3d7"
     assert str(open_shell("Ni+")) == "3d9"
+    field = from_octahedral(9000 * CM, 300 * CM)
+    model = IonModel(Shell(3, 2, 7), 350 * CM, racah_to_slater(600 * CM, 3000 * CM), field, name="Fe+")
+    row = quench_row("Fe+", model=model)
+    assert row.level.term == "6D9/2"
+    assert any("3d7, free level 4F9/2" in note for note in row.notes)
     with pytest.raises(InputError, match="4f7 and 5d1"):
         open_shell("Gd")
     with pytest.raises(InputError, match="without a configuration"):

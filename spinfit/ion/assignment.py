@@ -148,18 +148,7 @@ def _formula(row: dict[str, str], measured: MeasuredG, order: tuple[int, ...]) -
         inside &= beyond <= 0.3
         label = "Delta/k^2" if isotropic else f"Delta_{end}/k^2"
         needs.append((f"{label} (g = {g:g})", apparent, "cm^-1"))
-    if isotropic:
-        spread = max(measured.values) - min(measured.values)
-        shift = abs(G_ELECTRON - sum(measured.values) / 3)
-        score += (spread / (0.15 * shift + _FORMULA_FLOOR)) ** 2
-    else:
-        pair = [measured.values[i] for i in order[:2]]
-        shift = max(abs(G_ELECTRON - g) for g in pair)
-        score += (abs(pair[0] - pair[1]) / (0.5 * shift + _FORMULA_FLOOR)) ** 2
-        # These ground states are never isotropic: equal components only when everything is averaged.
-        spread = max(measured.values) - min(measured.values)
-        overall = max(abs(G_ELECTRON - g) for g in measured.values)
-        score += 6.0 * max(0.0, 1 - spread / (0.3 * overall + 1e-12)) ** 2
+    score += _shape_misfit(measured.values, order, isotropic)
     return Candidate(
         row["name"],
         row["ion"],
@@ -171,6 +160,20 @@ def _formula(row: dict[str, str], measured: MeasuredG, order: tuple[int, ...]) -
         score,
         row["decide"],
     )
+
+
+def _shape_misfit(values: tuple[float, ...], order: tuple[int, ...], isotropic: bool) -> float:
+    """Return what speaks against a ground state that is isotropic, or axial with this order of components."""
+    spread = max(values) - min(values)
+    if isotropic:
+        shift = abs(G_ELECTRON - sum(values) / 3)
+        return (spread / (0.15 * shift + _FORMULA_FLOOR)) ** 2
+    pair = [values[i] for i in order[:2]]
+    shift = max(abs(G_ELECTRON - g) for g in pair)
+    rhombic = (abs(pair[0] - pair[1]) / (0.5 * shift + _FORMULA_FLOOR)) ** 2
+    # Such ground states are never isotropic: equal components only when everything is averaged.
+    overall = max(abs(G_ELECTRON - g) for g in values)
+    return rhombic + 6.0 * max(0.0, 1 - spread / (0.3 * overall + 1e-12)) ** 2
 
 
 def _range_text(row: dict[str, str]) -> str:

@@ -269,11 +269,15 @@ def quench_row(
     if model is not None and g_spin is not None:
         model = replace(model, g_spin=g_spin)
     row: dict[str, object] = {}
+    ruler = level  # the free level that surviving orbital moments are measured against
     if model is not None:
-        row = _crystal_part(model, level, notes, temperatures)
+        if str(model.shell) not in (level.configuration or "").split():
+            ruler = lookup(str(model.shell), g_spin=g_spin)
+            notes.append(f"in a crystal its configuration is {model.shell}, free level {ruler.term}")
+        row = _crystal_part(model, ruler, notes, temperatures)
     if measured is not None:
         row["measured"] = measured
-        row |= _measured_part(measured, level, row, notes)
+        row |= _measured_part(measured, ruler, row, notes)
     return QuenchRow(level=level, spin_only=level.g_spin, notes=tuple(dict.fromkeys(notes)), **row)
 
 
@@ -286,7 +290,7 @@ def _crystal_part(
     row: dict[str, object] = {"crystal_field": remark, "levels": _lowest_levels(levels)}
     ground = ground_state(model, levels)
     if isinstance(ground, str):
-        notes.append(ground)
+        notes.append(ground.removeprefix(f"{model.name}: "))
         manifold = levels.degeneracies()[0]
     elif isinstance(ground, SpinHamiltonian):
         manifold = round(2 * ground.S) + 1
@@ -366,7 +370,7 @@ def _measured_part(
     """Fill the surviving fraction of the measurement."""
     S, L, _ = numbers_of(level)
     if L == 0 or S == 0:
-        notes.append("no orbital moment in the free level: nothing to survive")
+        notes.append(f"the free level {level.term} has no orbital moment: the surviving fraction has no yardstick")
         return {}
     if row.get("kind") == "doublet":
         notes.append("orbital moment unquenched or strongly mixed: the surviving fraction is the model's <L>")

@@ -221,6 +221,10 @@ def spin_hamiltonian(model: IonModel, *, levels: Levels | None = None, spin: flo
     reference, S = spin_states(model, solve(replace(model, zeta=0.0), lowest=few))
     if spin is not None and spin != S:
         raise InputError(f"the ground state has S = {half(S)}, not {half(spin)}", "change the crystal field or S")
+    if S == 0:
+        raise InputError(
+            f"the ground state of {model.name or model.shell} has no spin (S = 0)", "there is nothing to resonate"
+        )
     size = round(2 * S) + 1
     if len(levels.energies) < size:
         raise InputError(f"{len(levels.energies)} levels", f"compute at least {size}", place="lowest")
