@@ -13,6 +13,8 @@ from stub_engine import simulate
 from spinfit.errors import InputError
 from spinfit.fitting.driver import fit as real_fit
 from spinfit.fitting.residuals import Problem, full_view
+from spinfit.fitting.solve import descend
+from spinfit.fitting.starts import neighbours
 from spinfit.species import Nucleus
 from spinfit.units import field_of
 
@@ -375,12 +377,18 @@ def test_excluded_points_do_not_count():
 
 @pytest.mark.parametrize("g", [2.034, 2.048])
 def test_weak_line_that_starts_three_widths_away(g):
-    """A broadened view sees nothing of it: the scan of single parameters has to find it."""
+    """A broadened view sees nothing of it; the scan from the minimum without it does."""
     strong = jobs.species()
     signal = jobs.clean_signal(strong, jobs.species(g=(2.04,), width=0.3, name="b", amount=0.04))
     signal = signal + jobs.level(signal, 150) * np.random.default_rng(44).normal(size=signal.size)
     model = (jobs.species(g=(2.001, 2.021, 2.059)), jobs.species(g=(g,), width=0.3, name="b", amount=0.04))
-    outcome = fit(jobs.job(jobs.trace(signal), model=model, vary=("r.g", "r.width.gaussian", "b.g", "b.amount")))
+    job = jobs.job(jobs.trace(signal), model=model, vary=("r.g", "r.width.gaussian", "b.g", "b.amount"))
+    problem = Problem(job, simulate)
+    view = full_view(job.traces, problem.noises, 1e-3)
+    stuck = descend(problem, view, problem.start)
+    assert stuck.point.chi2 > 1.5 * view.points
+    assert neighbours(problem, view, stuck)[0][problem.names.index("b.g")] == pytest.approx(2.04, abs=0.0025)
+    outcome = fit(job)
     found = outcome.parameters["b.g"]
     assert abs(found.value - 2.04) < 4 * found.uncertainty_noise
     assert outcome.quality.chi2_reduced == pytest.approx(1, abs=0.2)

@@ -279,6 +279,10 @@ class Problem:
         ]
         return np.stack(columns, axis=1) if columns else np.zeros((view.points, 0))
 
+    def column(self, point: Point, view: View, index: int) -> Array:
+        """One column of the projected Jacobian, by forward differences, shape (points,)."""
+        return self.projected_change(point, view, self._column(point, view, index, False))
+
     def projected_change(self, point: Point, view: View, changes: Sequence[Array | None]) -> Array:
         """Carry changes of the traces' signals to the change of the projected residual.
 

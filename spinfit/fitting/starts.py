@@ -47,7 +47,7 @@ _AT_NOISE = 1.2
 _LITTLE = 0.05
 # Scans of single parameters for another basin: points on either side, how far the promise must go
 # below the present chi-squared, and how many times in a row such a promise is followed.
-_SCAN_POINTS = 8
+_SCAN_POINTS = 12
 _PROMISE = 0.98
 _MOST_MOVES = 4
 # Parameters that shape lines and do not move them: held while the view is broader than the lines.
@@ -159,33 +159,56 @@ def neighbours(problem: Problem, view: View, descent: Descent) -> list[Array]:
 
     A weak feature far from the strong lines leaves several minima in the one parameter it depends
     on.  Each parameter that moves lines is scanned; all others follow to first order, by the Jacobian
-    at the minimum, which is what keeps the strong lines in their places.
+    at the minimum, which is what keeps the strong lines in their places, and amounts exactly, since a
+    species whose lines are misplaced may have lost all of its own.
     """
     if descent.jacobian is None:
         return []
-    best, jacobian = descent.point, descent.jacobian
+    best = descent.point
     found: list[tuple[float, int, Array]] = []
-    for index in np.flatnonzero(~shapes_of(problem.names)):
-        others = np.arange(best.free.size) != index
-        follow = np.linalg.pinv(jacobian[:, others], rcond=1e-6)
-        for number, value in enumerate(_scan(problem, best.free[index], int(index))):
-            free = best.free.copy()
-            free[index] = value
-            slope = jacobian[:, index] * (value - best.free[index])
-            # First along the valley, then from where that leads.
-            free[others] -= follow @ (best.residual + slope)
-            free = np.clip(free, problem.lower, problem.upper)
+    for index in map(int, np.flatnonzero(~shapes_of(problem.names) & ~_amounts(problem.names))):
+        for number, value in enumerate(_scan(problem, best.free[index], index)):
             try:
-                point = problem.evaluate(free, view)
-            except InputError:
+                chi2, free = _promise(problem, view, best, descent.jacobian, index, value)
+            except InputError:  # the model has no meaning there
                 continue
-            step = follow @ point.residual
-            chi2 = point.chi2 - float(np.sum((jacobian[:, others] @ step) ** 2))
             if chi2 < _PROMISE * best.chi2:
-                free[others] -= step
-                found.append((chi2, 100 * int(index) + number, np.clip(free, problem.lower, problem.upper)))
+                found.append((chi2, 100 * index + number, free))
     found.sort(key=lambda item: item[:2])
     return [free for _, _, free in found[:2]]
+
+
+def _amounts(names: Sequence[str]) -> NDArray[np.bool_]:
+    return np.array([name.endswith(".amount") for name in names], dtype=bool)
+
+
+def _promise(
+    problem: Problem, view: View, best: Point, jacobian: Array, index: int, value: float
+) -> tuple[float, Array]:
+    """Chi-squared, to first order, with one parameter moved and the others following; and where that is."""
+    others = np.arange(best.free.size) != index
+    furthest = 5 * np.array([problem.parameters[name].scale for name in problem.names])[others]
+    free = best.free.copy()
+    free[index] = value
+    moved = best.residual + jacobian[:, index] * (value - best.free[index])
+    free[others] += _followed(jacobian[:, others], moved, furthest)
+    free = np.clip(free, problem.lower, problem.upper)
+    point = problem.evaluate(free, view)
+    # Amounts enter linearly: their columns at the new place cost nothing and may differ altogether.
+    there = jacobian.copy()
+    for k in np.flatnonzero(_amounts(problem.names)):
+        there[:, k] = problem.column(point, view, int(k))
+    step = _followed(there[:, others], point.residual, furthest)
+    after = point.residual + there[:, others] @ step
+    free[others] += step
+    return float(after @ after), np.clip(free, problem.lower, problem.upper)
+
+
+def _followed(jacobian: Array, residual: Array, furthest: Array) -> Array:
+    """Least-squares step of bounded length in each parameter."""
+    if jacobian.shape[1] == 0:
+        return np.zeros(0)
+    return np.clip(np.linalg.lstsq(jacobian, -residual, rcond=1e-6)[0], -furthest, furthest)
 
 
 def _scan(problem: Problem, value: float, index: int) -> Array:
