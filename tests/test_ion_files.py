@@ -4,9 +4,11 @@ import math
 
 import numpy as np
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from spinfit.errors import InputError
-from spinfit.files.toml_crystal_field import model_from_table, parse_xyz, read_crystal_fields
+from spinfit.files.toml_crystal_field import BOND_KEYS, FIELD_KEYS, model_from_table, parse_xyz, read_crystal_fields
 from spinfit.ion.model import solve
 from spinfit.ion.tensors import doublet_g
 from spinfit.units import MHZ_PER_WAVENUMBER as CM
@@ -147,3 +149,34 @@ def test_no_ion_and_twice_the_same(tmp_path):
 
 def test_xyz_with_a_count():
     assert parse_xyz("2\ncomment\nCu 0 0 0\nO1 0 0 1.9")[1] == ("O1", (0.0, 0.0, 1.9))
+
+
+WRITTEN = ["900 cm^-1", "-3 eV", "0 MHz", "1 mT", "", "term", "configuration", True, 0, 1.5, math.nan, [0, 0, 1]]
+VALUES = st.one_of(st.sampled_from(WRITTEN), st.integers(-(10**30), 10**30), st.text(max_size=6))
+INNER = ["ten_Dq", "Ds", "B", "C", "F2", "F4", "F6", "B4_0", "B2_m1", "xyz", "bonds", "z2", "O"]
+KEYS = st.sampled_from([*FIELD_KEYS, *BOND_KEYS, *INNER])
+TABLES = st.dictionaries(KEYS, VALUES)
+
+
+@given(
+    table=st.dictionaries(KEYS, st.one_of(VALUES, TABLES, st.lists(TABLES))),
+    ion=st.sampled_from(["Cu2+", "Ni2+", "Er3+", "N", "Zn2+"]),
+)
+@settings(max_examples=150, derandomize=True, deadline=None)
+def test_any_table_is_read_or_refused(table, ion):
+    try:
+        model = model_from_table(table, ion)
+    except InputError:
+        return
+    assert np.all(np.isfinite(model.crystal.matrix()))
+
+
+@given(st.text(alphabet="CuO 0.1-\n2#e", max_size=40))
+@settings(max_examples=150, derandomize=True)
+def test_any_atom_list_is_read_or_refused(text):
+    try:
+        atoms = parse_xyz(text)
+    except InputError:
+        return
+    assert len(atoms) > 1
+    assert all(math.isfinite(v) for _, at in atoms for v in at)

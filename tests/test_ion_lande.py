@@ -2,6 +2,8 @@
 
 import json
 import math
+import subprocess
+import sys
 
 import pytest
 from hypothesis import given, settings
@@ -207,3 +209,12 @@ def test_any_text_is_read_or_refused(text):
 def test_g_must_be_finite():
     with pytest.raises(InputError, match="g_spin"):
         lookup("Er3+", g_spin=math.nan)
+
+
+def test_a_look_up_stays_light():
+    """`spinfit ion` has to answer at once: no optimiser, no sparse matrices, no pictures come with the look-up."""
+    code = "import sys; from spinfit.ion import lookup; lookup('Er3+'); print(*sys.modules)"
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
+    loaded = set(done.stdout.split())
+    heavy = {"scipy.optimize", "scipy.sparse", "scipy.spatial", "scipy.linalg", "pandas", "matplotlib", "lmfit"}
+    assert not heavy & loaded

@@ -319,6 +319,16 @@ def test_rows_without_a_doublet_say_why():
     assert any("no typical crystal field" in note for note in quench_row("Fe+").notes)
 
 
+def test_effective_g_of_a_high_spin_is_recognised():
+    """g' = 4.29 of Fe3+ is the middle doublet at E/D = 1/3 (T. Castner et al. (1960)), not a g of S = 5/2."""
+    row = quench_row("Fe3+", measured=parse_measured("4.29"))
+    assert any("doublet 2 at E/D = 0.33" in note for note in row.notes)
+    assert row.fraction_measured is None
+    chromium = quench_row("Cr3+", measured=parse_measured("4.0, 2.0"))
+    assert any("doublet 1 at E/D = 0.0" in note for note in chromium.notes)
+    assert chromium.fraction_measured is None
+
+
 def test_singly_charged_ions_put_all_electrons_into_d():
     assert str(open_shell("Fe+")) == "3d7"
     assert str(open_shell("Ni+")) == "3d9"

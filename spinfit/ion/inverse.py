@@ -17,6 +17,9 @@ from spinfit.ion.quench import MeasuredG, ground_state
 from spinfit.ion.tensors import SpinHamiltonian
 from spinfit.units import MHZ_PER_WAVENUMBER
 
+STEP = 0.2
+"""Step of the search for a root, in the logarithm of the scale."""
+
 
 @dataclass(frozen=True)
 class Needed:
@@ -179,22 +182,22 @@ def _needed_axis(
 
 
 def _nearest_root(function: Callable[[float], float], low: float, high: float, near: float) -> float | None:
-    """Return the sign change of a function nearest to `near` on a coarse grid, refined; None without one."""
-    grid = np.linspace(low, high, 25)
-    values = np.array([function(x) for x in grid])
-    crossings = [
-        i
-        for i in range(len(grid) - 1)
-        if np.isfinite(values[i])
-        and np.isfinite(values[i + 1])
-        and values[i] * values[i + 1] <= 0
-        # a jump from one ground state to another is not a root
-        and abs(values[i + 1] - values[i]) < 2.0
-    ]
-    for i in sorted(crossings, key=lambda i: abs((grid[i] + grid[i + 1]) / 2 - near)):
-        if values[i] == 0:
-            return float(grid[i])
-        root = float(brentq(function, grid[i], grid[i + 1], xtol=1e-10))
-        if abs(function(root)) < 1e-5:
-            return root
+    """Return the sign change of a function nearest to `near`, refined; None without one.
+
+    Intervals of a coarse grid are tried from `near` outwards, so that little is computed when the root is close.
+    """
+    below = np.linspace(near, low, max(2, math.ceil((near - low) / STEP) + 1)) if low < near else np.array([near])
+    above = np.linspace(near, high, max(2, math.ceil((high - near) / STEP) + 1)) if high > near else np.array([near])
+    for k in range(max(len(below), len(above)) - 1):
+        for side in (above, below):
+            if k + 1 >= len(side):
+                continue
+            a, b = float(side[k]), float(side[k + 1])
+            at_a, at_b = function(a), function(b)
+            # A jump from one ground state to another changes the sign as well but is no root.
+            if not (math.isfinite(at_a) and math.isfinite(at_b)) or at_a * at_b > 0 or abs(at_a - at_b) > 2.0:
+                continue
+            root = float(brentq(function, min(a, b), max(a, b), xtol=1e-10))
+            if abs(function(root)) < 1e-5:
+                return root
     return None

@@ -13,14 +13,18 @@ from numpy.typing import NDArray
 from spinfit.errors import InputError
 from spinfit.ion.defaults import default_model, default_space, default_zeta, open_shell
 from spinfit.ion.first_order import Mixing, first_order
+from spinfit.ion.kramers import doublet_matches
 from spinfit.ion.lande import IonLevel, lookup, numbers_of, orbital_to_spin
 from spinfit.ion.magnetism import independent_part, susceptibility
 from spinfit.ion.model import IonModel, Levels, solve
+from spinfit.ion.names import half
 from spinfit.ion.tensors import DoubletG, SpinHamiltonian, doublet_g, spin_hamiltonian
 from spinfit.units import K_B_OVER_H, MHZ_PER_WAVENUMBER
 
 ROOM = 300.0
 """Temperature of the tabulated effective moment, K."""
+FAR = 0.5
+"""A measured g farther than this from that of a high spin is taken for an effective one."""
 SHOWN = 8
 """How many levels are listed."""
 
@@ -370,12 +374,36 @@ def _measured_part(
     """Fill the surviving fraction of the measurement."""
     S, L, _ = numbers_of(level)
     if L == 0 or S == 0:
+        effective = _effective_g(measured, row)
+        if effective:
+            notes.append(effective)
         notes.append(f"the free level {level.term} has no orbital moment: the surviving fraction has no yardstick")
         return {}
-    if row.get("kind") == "doublet":
+    of_f = "f" in (level.configuration or "")
+    if row.get("kind") == "doublet" or (of_f and row.get("kind") != "spin Hamiltonian"):
         notes.append("orbital moment unquenched or strongly mixed: the surviving fraction is the model's <L>")
+        return {}
+    effective = _effective_g(measured, row)
+    if effective:
+        notes.append(effective)
         return {}
     result = surviving_fraction(measured.values, level, measured.uncertainties)
     if result is None:
         return {}
     return {"fraction_measured": result[0], "fraction_uncertainty": result[1]}
+
+
+def _effective_g(measured: MeasuredG, row: Mapping[str, object]) -> str:
+    """Say which doublet of a high spin the measurement looks like, where it is far from the spin's own g."""
+    S, own = row.get("effective_spin"), row.get("g_crystal")
+    if not isinstance(S, float) or own is None or S < 1.5 or round(2 * S) % 2 == 0:
+        return ""
+    if max(abs(a - b) for a, b in zip(measured.values, own, strict=True)) < FAR:
+        return ""
+    best = doublet_matches(measured.values, spins=(S,), g=float(np.mean(own)))[0]
+    if best.misfit > 0.1:
+        return ""
+    return (
+        f"measured is no g of S = {half(S)} but looks like the effective g of its doublet {best.doublet} "
+        f"at E/D = {best.rhombicity:.3f}"
+    )
