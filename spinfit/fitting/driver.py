@@ -70,12 +70,7 @@ def fit(job: Job, *, progress: Progress | None = None, simulate: Simulate = _eng
 
 def engine_tolerance(problem: Problem) -> float:
     """The tolerance that the noise of the traces allows, within a decade of the job's."""
-    allowed = problem.job.tolerance
-    for trace, noise in zip(problem.job.traces, problem.noises, strict=True):
-        kept = trace.signal[trace.used]
-        largest = float(np.abs(kept - np.median(kept)).max()) if kept.size else 0.0
-        if largest > 0:
-            allowed = min(allowed, _ERROR_TO_NOISE * noise / largest)
+    allowed = min(problem.tolerance(_ERROR_TO_NOISE), problem.job.tolerance)
     return max(allowed, _FINEST * problem.job.tolerance)
 
 

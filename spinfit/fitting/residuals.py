@@ -242,6 +242,16 @@ class Problem:
             )
         return max(low, parameter.hard_limits[0]), min(high, parameter.hard_limits[1])
 
+    def tolerance(self, error_to_noise: float) -> float:
+        """The engine's tolerance that keeps its error below a part of every trace's noise."""
+        allowed = 1.0
+        for trace, noise in zip(self.job.traces, self.noises, strict=True):
+            kept = trace.signal[trace.used]
+            largest = float(np.abs(kept - np.median(kept)).max()) if kept.size else 0.0
+            if largest > 0:
+                allowed = min(allowed, error_to_noise * noise / largest)
+        return allowed
+
     def values(self, free: Array) -> dict[str, float]:
         """Varied and tied parameters by name, internal units."""
         return self.ties.apply(dict(zip(self.names, map(float, free), strict=True)))

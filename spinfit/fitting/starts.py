@@ -45,6 +45,8 @@ _SEED = 20240229
 # uncertain by some per cent, or when no more than this part of the trace's sum of squares is unexplained.
 _AT_NOISE = 1.2
 _LITTLE = 0.05
+# Engine error of a scan, in units of the noise.
+_SCAN_ERROR = 0.3
 # Scans of single parameters for another basin: points on either side, how far the promise must go
 # below the present chi-squared, and how many times in a row such a promise is followed.
 _SCAN_POINTS = 12
@@ -164,7 +166,9 @@ def neighbours(problem: Problem, view: View, descent: Descent) -> list[Array]:
     """
     if descent.jacobian is None:
         return []
-    best = descent.point
+    tolerance = max(view.stage.tolerance, min(problem.tolerance(_SCAN_ERROR), _COARSE_TOLERANCE))
+    view = replace(view, stage=replace(view.stage, tolerance=tolerance))
+    best = problem.evaluate(descent.point.free, view)
     found: list[tuple[float, int, Array]] = []
     for index in map(int, np.flatnonzero(~shapes_of(problem.names) & ~_amounts(problem.names))):
         for number, value in enumerate(_scan(problem, best.free[index], index)):
