@@ -34,14 +34,14 @@ def _directions(args: argparse.Namespace, model: Any) -> tuple[Any, Any]:
     """Return field directions (theta, phi in rad), shape (d, 2), and microwave directions or None."""
     import numpy as np
 
-    from spinfit.spectrum import crystal_directions
+    from spinfit.crystal import site_directions
     from spinfit.units import parse
 
     if args.direction:
         angles = [parse(text, "angle", "--direction", count=2)[0] for text in args.direction]
         return np.array(angles), None
     if model.sample.form == "crystal":
-        field, microwave = crystal_directions(model.sample, model.sample.angles)
+        _, field, microwave, _ = site_directions(model.sample, model.sample.angles)
         theta = np.arccos(np.clip(field[:, 2], -1, 1))
         return np.stack([theta, np.arctan2(field[:, 1], field[:, 0]) + 0.0], axis=1), microwave
     half = np.pi / 2
