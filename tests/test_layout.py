@@ -43,6 +43,7 @@ ORDER = (
     "lineshape",
     "sheets",
     "branches",
+    "knots",
     "loops",
     "powder",
     "crystal",

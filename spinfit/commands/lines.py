@@ -25,7 +25,7 @@ def options(parser: argparse.ArgumentParser) -> None:
         action="append",
         metavar="QUANTITY",
         help='theta and phi of the field in molecular axes, such as "30, 0 deg"; may be repeated '
-        "(default: the angles of a crystal, else the axes x, y and z)",
+        "(default: the angles of a crystal, at every site, else the axes x, y and z)",
     )
     parser.add_argument("-o", "--output", metavar="FILE.csv", help="write there instead of to standard output")
 
@@ -44,6 +44,8 @@ def _directions(args: argparse.Namespace, model: Any) -> tuple[Any, Any]:
         _, field, microwave, _ = site_directions(model.sample, model.sample.angles)
         theta = np.arccos(np.clip(field[:, 2], -1, 1))
         return np.stack([theta, np.arctan2(field[:, 1], field[:, 0]) + 0.0], axis=1), microwave
+    if model.sample.form == "solution":
+        return np.zeros((1, 2)), None
     half = np.pi / 2
     return np.array([[half, 0.0], [half, half], [0.0, 0.0]]), None
 
@@ -60,6 +62,7 @@ def rows_of(model: Any, angles: Any, microwave: Any) -> list[dict[str, Any]]:
     import numpy as np
 
     from spinfit.hamiltonian import systems
+    from spinfit.isotropic import isotropic
     from spinfit.resonance import find
 
     sweep = model.sweep
@@ -67,7 +70,7 @@ def rows_of(model: Any, angles: Any, microwave: Any) -> list[dict[str, Any]]:
     degrees = np.rad2deg(angles)
     rows = []
     for one in model.species:
-        several = systems(one)
+        several = systems(isotropic(one) if model.sample.form == "solution" else one)
         for system in several:
             got = find(
                 system,
