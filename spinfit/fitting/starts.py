@@ -284,8 +284,8 @@ class Search:
     """The best minimum that can be reached from a start.
 
     A start that already explains half of the trace goes straight down.  Otherwise, or when that
-    ends short of the noise, the way over broadened views is taken, then candidates, until two ways
-    have ended at the same best minimum.
+    ends short of the noise, the way over broadened views is taken, then scans for other basins, then
+    candidates, until one of them has ended at the best minimum again.
 
     Attributes
     ----------
@@ -297,6 +297,7 @@ class Search:
         self.problem, self.view, self.goal, self.progress = problem, view, goal, progress
         self.best: Descent | None = None
         self._agreed = False
+        self._scanned: Descent | None = None
 
     def run(self, start: Array, *, automatic: bool = False) -> Descent:
         """Search from a start; with `automatic` the start counts as one candidate among many."""
@@ -305,15 +306,18 @@ class Search:
         self._try_steps(start)
         if not automatic and explained(problem.evaluate(start, self.view), self.view) > 0.5:
             self._follow(start)
-        if not self._done():
+        if not self._good():
             self._follow(coarse_to_fine(problem, start, progress=self.progress))
         if not self._good():
             self._leave_for_better_basins()
-        if not self._done():
+        self._agreed = False  # ways from one start that end together prove little
+        if not self._good():
             for free in candidates(problem, start, wide=automatic):
                 near = _WIDEST / _NARROWING
                 self._follow(coarse_to_fine(problem, free, progress=self.progress, widest=near))
-                if self._done():
+                if not self._good() and not self._agreed:
+                    self._leave_for_better_basins()
+                if self._good() or self._agreed:
                     break
         assert self.best is not None
         return self.best
@@ -337,7 +341,9 @@ class Search:
     def _leave_for_better_basins(self) -> None:
         """Try what a scan of single parameters promises, as long as it keeps its promise."""
         for _ in range(_MOST_MOVES):
-            assert self.best is not None
+            if self.best is None or self.best is self._scanned:
+                return
+            self._scanned = self.best
             before = self.best.point.chi2
             for free in neighbours(self.problem, self.view, self.best):
                 self._follow(free)
@@ -348,9 +354,6 @@ class Search:
 
     def _good(self) -> bool:
         return _good(self.problem, self.best, self.view)
-
-    def _done(self) -> bool:
-        return self._agreed or self._good()
 
 
 def _good(problem: Problem, descent: Descent | None, view: View) -> bool:
