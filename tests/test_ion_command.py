@@ -158,8 +158,9 @@ def test_what_the_pictures_hold():
     assert len({line.get_color() for line in axes.lines}) == 4
     model = default_model("Cr3+")
     terms = dict(stages(model))["free ion:\nterms"]
-    # 4P lies 15 B above 4F (E. U. Condon, G. H. Shortley), B = 680 cm^-1 in the typical field
-    assert np.isclose(terms / CM, 15 * 680, rtol=1e-9).sum() == 12
+    # 4P (12 states) lies 15 B above 4F (28) (E. U. Condon, G. H. Shortley), B = 680 cm^-1 in the typical field
+    assert terms[0] == (pytest.approx(0), 28)
+    assert (pytest.approx(15 * 680 * CM), 12) in terms
     figure = level_figure(model)
     assert len(figure.axes[1].lines) == 4  # S = 3/2
     assert len(doublets_figure(2.5).axes) == 3

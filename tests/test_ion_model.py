@@ -440,6 +440,29 @@ def test_half_filled_f_shell_by_sparse_methods():
     np.testing.assert_allclose(result.g_principal, 1.993, atol=2e-3)
 
 
+@pytest.mark.parametrize(("count", "zeta", "states"), [(5, 0.0, 66), (6, 1338.0, 10), (7, 0.0, 9)])
+def test_sparse_methods_find_every_state_of_a_degenerate_level(count, zeta, states):
+    """Free ions: 6H has 66 states at one energy, 7F0 1, 7F1 3, 7F2 5; 8S 8 states and then 6P."""
+    slater = {2: 83000 * CM, 4: 59000 * CM, 6: 42500 * CM}
+    levels = solve(IonModel(Shell(4, 3, count), zeta * CM, slater), lowest=states)
+    expected = {5: (66,), 6: (1, 3, 5, 1), 7: (8, 1)}[count]
+    assert levels.degeneracies() == expected
+    identity = levels.states.conj().T @ levels.states
+    np.testing.assert_allclose(identity, np.eye(states), atol=1e-9)
+
+
+def test_signs_of_determinants():
+    """Free 2P1/2: g = +2/3 (Landé); one hole in t2g without distortion: g = -2 (J. S. Griffith (1956))."""
+    p_one = IonModel(Shell(2, 1, 1), 100.0, g_spin=2.0)
+    doublet = doublet_g(solve(p_one))
+    np.testing.assert_allclose(doublet.principal, 2 / 3, rtol=1e-9)
+    assert doublet.determinant_sign == 1
+    t2g = IonModel(Shell(4, 2, 5), 1.0, racah_to_slater(1.0, 4.0), from_octahedral(1e5), g_spin=2.0)
+    doublet = doublet_g(solve(t2g))
+    np.testing.assert_allclose(doublet.principal, 2, atol=1e-3)
+    assert doublet.determinant_sign == -1
+
+
 # ---------------------------------------------------------------- bad input
 
 

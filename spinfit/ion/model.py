@@ -13,7 +13,7 @@ from functools import lru_cache
 import numpy as np
 from numpy.typing import NDArray
 from scipy import sparse
-from scipy.sparse.linalg import eigsh
+from scipy.sparse.linalg import LinearOperator, eigsh
 
 from spinfit.errors import InputError, nearest
 from spinfit.ion.crystal_field import CrystalField, no_field
@@ -286,19 +286,48 @@ def _tolerance(largest: float) -> float:
 def _lanczos(matrix: sparse.csr_array, count: int) -> tuple[NDArray, NDArray, float]:
     """Return the lowest energies and states of a large sparse Hermitian matrix, and a bound of all energies.
 
-    A few more states than wanted are found, so that a level is not cut in two unseen.
+    Lanczos iteration finds one state of a degenerate level at a time and may stop before the last one.  What
+    was found is therefore projected out and the rest searched again until nothing lower turns up.
     """
     size = matrix.shape[0]
     if not np.any(matrix.data.imag):
         matrix = matrix.real
-    start = np.random.default_rng(1).normal(size=size)  # fixed: the same bits on every run
+    # The largest row sum bounds the spread of the eigenvalues.
     largest = float(abs(matrix).sum(axis=1).max())
-    wanted = min(count, size - 2)
-    _, states = eigsh(matrix, k=wanted, which="SA", v0=start, ncv=min(size, max(4 * wanted, 60)), tol=0)
-    # For complex matrices the solver does not promise orthogonal states within a level.
-    states, _ = np.linalg.qr(states)
-    energies, turn = np.linalg.eigh(states.conj().T @ (matrix @ states))
-    return energies, states @ turn, largest
+    random = np.random.default_rng(1)  # fixed: the same bits on every run
+    states = np.zeros((size, 0), dtype=matrix.dtype)
+    wanted, energies = min(count, size - 2), np.zeros(0)
+    for _ in range(20):
+        more = 1 if len(energies) >= wanted else wanted - len(energies)
+        found = _lowest_beyond(matrix, states, largest, more, random.normal(size=size))
+        done = len(energies) >= wanted and _rayleigh(matrix, found)[0] > energies[-1] - _tolerance(largest)
+        if done:
+            break
+        # For complex matrices the solver does not promise orthogonal states within a level.
+        states, _ = np.linalg.qr(np.concatenate([states, found], axis=1))
+        energies, turn = np.linalg.eigh(states.conj().T @ (matrix @ states))
+        energies, states = energies[:wanted], (states @ turn)[:, :wanted]
+    return energies, states, largest
+
+
+def _rayleigh(matrix: sparse.csr_array, states: NDArray) -> NDArray[np.float64]:
+    """Return <v|H|v>/<v|v> of each column."""
+    return np.einsum("ai,ai->i", states.conj(), matrix @ states).real / np.linalg.norm(states, axis=0) ** 2
+
+
+def _lowest_beyond(
+    matrix: sparse.csr_array, known: NDArray, largest: float, count: int, start: NDArray
+) -> NDArray[np.complex128]:
+    """Return the lowest states of what is left when known states are lifted out of the way."""
+
+    def act(vector: NDArray) -> NDArray:
+        return matrix @ vector + 2 * largest * (known @ (known.conj().T @ vector))
+
+    size = matrix.shape[0]
+    operator = LinearOperator(matrix.shape, matvec=act, matmat=act, dtype=matrix.dtype) if known.size else matrix
+    vectors = min(size, max(4 * count, 60))
+    start = start.astype(matrix.dtype)
+    return eigsh(operator, k=count, which="SA", v0=start, ncv=vectors, tol=0, maxiter=50 * size)[1]
 
 
 def dimension(shell: Shell) -> int:

@@ -14,6 +14,7 @@ from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 from numpy.typing import NDArray
 
+from spinfit.ion.free_levels import free_levels, free_terms
 from spinfit.ion.kramers import doublet_table
 from spinfit.ion.model import IonModel, Levels, solve
 from spinfit.ion.names import half
@@ -71,16 +72,22 @@ def comparison_figure(rows: Sequence[QuenchRow]) -> Figure:
 # ---------------------------------------------------------------- from the free ion to the field
 
 
-def stages(model: IonModel) -> list[tuple[str, Array]]:
-    """Return level energies (MHz above each stage's lowest) as the parts of the Hamiltonian come in.
+def stages(model: IonModel) -> list[tuple[str, list[tuple[float, int]]]]:
+    """Return levels, (MHz above each stage's lowest, number of states), as the parts of the Hamiltonian come in.
 
     The terms of the free ion by repulsion, then spin-orbit coupling, then the crystal field.
     """
-    free = replace(model, crystal_field=None)
+    if model.space == "configuration":
+        terms = [(x.energy, round(2 * x.S + 1) * (2 * x.L + 1)) for x in free_terms(model)]
+        coupled = [(x.energy, round(2 * x.J + 1)) for x in free_levels(model)]
+    else:
+        free = replace(model, crystal_field=None)
+        terms = _grouped(solve(replace(free, zeta=0.0)).excitation)
+        coupled = _grouped(solve(free).excitation)
     return [
-        ("free ion:\nterms", solve(replace(free, zeta=0.0)).excitation),
-        ("spin-orbit\ncoupling", solve(free).excitation),
-        ("crystal\nfield", solve(model).excitation),
+        ("free ion:\nterms", terms),
+        ("spin-orbit\ncoupling", coupled),
+        ("crystal\nfield", _grouped(solve(model).excitation)),
     ]
 
 
@@ -108,13 +115,13 @@ def level_figure(
     if lowest is None:
         ground = ground_state(model, levels)
         lowest = round(2 * ground.S) + 1 if isinstance(ground, SpinHamiltonian) else 2
-    crystal = columns[2][1]
+    crystal = levels.excitation
     top = 1.3 * float(crystal[min(len(crystal) - 1, 24)]) if highest is None else highest
     with style.styled():
         figure = Figure(figsize=(style.PAGE_WIDTH, 3.3), layout="constrained")
         left, right = figure.subplots(1, 2, width_ratios=(1.4, 1))
-        for k, (_, energies) in enumerate(columns):
-            _draw_stage(left, k, _grouped(energies[energies <= top]), top)
+        for k, (_, stage) in enumerate(columns):
+            _draw_stage(left, k, [level for level in stage if level[0] <= top], top)
         left.set_xticks(range(3), [name for name, _ in columns])
         left.tick_params(axis="x", which="both", length=0)
         left.set_xlim(-0.6, 2.75)
