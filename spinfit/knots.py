@@ -28,6 +28,10 @@ MOST_KNOTS = 12_000
 """Directions at which refinement gives up and says so."""
 POOR = 0.02
 """Error of the coarse half of the first set above which drawing the rings together is tried."""
+FOLD_SLOPE = 14.0
+"""MHz/mT, half a free spin's: a level difference flatter than that moves intensity rather in direction."""
+MOST_LOOPING_KNOTS = 1200
+"""The same where looping pairs matter: their kinks on symmetry axes never quite vanish from the estimate."""
 MISTRUST = 2.0
 """Factor on the extrapolated error, unless it falls so fast that a power law is itself pessimistic."""
 
@@ -80,7 +84,7 @@ def settle(system: System, symmetry: Symmetry, request: Request) -> Knots:
         if size < SIZES[-1] and _hoped(history[-1], size) > request.tolerance:
             continue
         finer = _rings(symmetry.kind, size, trial.rings.stretch, harmonics)
-        if len(finer.angles()[0]) > MOST_KNOTS:
+        if len(finer.angles()[0]) > (MOST_LOOPING_KNOTS if trial.looping else MOST_KNOTS):
             break
         trial = _Trial(system, symmetry, request, finer, trial)
         spent += trial.count
@@ -205,6 +209,7 @@ class _Trial:
         self.single = (counts == 1).all(axis=1) if counts.size else np.zeros(len(counts), dtype=bool)
         self.other = ~self.single & (counts.any(axis=1) | _touches(self.data))
         self._by_knot: Array | None = None
+        self._loop_error = 0.0
 
     def error_by_knot(self) -> Array:
         """Return each knot's share of the error that the coarser half makes, shape (n,)."""
@@ -252,8 +257,15 @@ class _Trial:
         if self.other.any():
             amount, miss = self._compare_gaps(np.flatnonzero(self.other), coarse, kept)
             error += miss * solid
+            self._loop_error = float((miss * solid).sum())
             total += (amount * solid).sum()
+        self._loop_error /= total or 1.0
         return error / total if total else error
+
+    @property
+    def looping(self) -> bool:
+        """Whether pairs without single branches carry a notable share of the error."""
+        return self._loop_error > 0.3 * self.half_error()
 
     def weight_of_single(self) -> float:
         """Return the intensity in single branches."""
@@ -282,7 +294,7 @@ class _Trial:
             return np.zeros(n), np.zeros(n)
         values = np.concatenate([gap, self.data.strength[rows]]).reshape(2 * len(rows) * k, n)
         guess = coarse.to_finer(values[:, kept], self.rings).reshape(2, len(rows), k, n)
-        steep = np.maximum(np.abs(slope[p, node, knot]), 2.0)
+        steep = np.maximum(np.abs(slope[p, node, knot]), FOLD_SLOPE)
         weight = strength[p, node, knot] / steep
         shift = np.abs(guess[0] - gap)[p, node, knot] / steep / self.request.scale
         change = np.abs(guess[1] - self.data.strength[rows])[p, node, knot] / steep

@@ -34,6 +34,12 @@ Array = NDArray[np.float64]
 Index = NDArray[np.intp]
 
 
+SLICES = 12
+"""Fields at which a folded simplex is projected, at the least."""
+FOLDING = 1.5
+"""Ratio of slopes along the field between the corners of a simplex above which it counts as folded."""
+
+
 @dataclass(frozen=True, eq=False)
 class _Landscape:
     """One level difference over mesh points, as quintics along the field; arrays (nodes, points)."""
@@ -80,12 +86,13 @@ class _Roots:
     share: Array
     apart: Array
     extent: Array
+    steep: Array
 
 
 def add_looping(histograms: Histograms, rings: Rings, mesh: Mesh, data: KnotData, row: int, request: Request) -> int:
     """Add one pair of levels, row `row` of `data`; return the number of roots used."""
     k = len(data.fields)
-    values = rings.to_mesh(np.concatenate([data.gap[row], data.slope[row], data.strength[row]]), mesh)
+    values = rings.to_mesh_locally(np.concatenate([data.gap[row], data.slope[row], data.strength[row]]), mesh)
     gap, slope, strength = values.reshape(3, k, *values.shape[1:])
     steps = differences(gap, mesh).reshape(2, k, -1)
     land = _Landscape(
@@ -101,6 +108,9 @@ def add_looping(histograms: Histograms, rings: Rings, mesh: Mesh, data: KnotData
         corners, part = cells(mesh, stride)
         count = roots.count[corners]
         same = (count == count[0]).all(axis=0) & (roots.rising[corners] == roots.rising[corners[0]]).all(axis=0)
+        for rank in range(len(roots.field)):  # next to a fold the weight is far from linear
+            steep = roots.steep[rank][corners]
+            same &= (count[0] <= rank) | (steep.max(axis=0) <= FOLDING * steep.min(axis=0))
         for rank in range(len(roots.field)):
             whole = same & (count[0] > rank)
             add_spread(histograms, roots.field[rank], spread[rank], corners[:, whole], part[whole], factor)
@@ -126,7 +136,7 @@ def _solve(land: _Landscape, request: Request) -> _Roots:
         found.append((at[q], np.full(len(q), number), t))
     if not found:
         empty = np.zeros((0, points))
-        return _Roots(np.zeros(points, dtype=np.intp), np.zeros(points, dtype=bool), empty, empty, empty, empty, empty)
+        return _Roots(np.zeros(points, dtype=np.intp), np.zeros(points, dtype=bool), *([empty] * 6))
     point, leaf, t = (np.concatenate(c) for c in zip(*found, strict=True))
     c, half = land.quintic(leaf, point)
     slope = hermite.slope(c, t) / half
@@ -139,14 +149,14 @@ def _solve(land: _Landscape, request: Request) -> _Roots:
     bend = np.abs(hermite.curvature(c, t)) / half**2
     extent = 2 * np.minimum(distance, np.sqrt(2 * apart / np.maximum(bend, 1e-12)))
     order = np.lexsort((field, point))
-    columns = (point, field, strength / steep, share, distance, extent, slope)
-    point, field, weight, share, distance, extent, slope = (v[order] for v in columns)
+    columns = (point, field, strength / steep, share, distance, extent, steep, slope)
+    point, field, weight, share, distance, extent, steep, slope = (v[order] for v in columns)
     count = np.bincount(point, minlength=points)
     first = np.cumsum(count) - count
     rank = np.arange(len(point)) - first[point]
     shape = (int(count.max(initial=0)), points)
-    out = [np.zeros(shape) for _ in range(5)]
-    for into, values in zip(out, (field, weight, share, distance, extent), strict=True):
+    out = [np.zeros(shape) for _ in range(6)]
+    for into, values in zip(out, (field, weight, share, distance, extent, steep), strict=True):
         into[rank, point] = values
     rising = np.zeros(points, dtype=bool)
     rising[point[rank == 0]] = slope[rank == 0] > 0
@@ -161,21 +171,22 @@ def _add_folded(
     at_corners = roots.field[:, corners]
     low = np.where(present, at_corners, np.inf).min(axis=(0, 1))
     high = np.where(present, at_corners, -np.inf).max(axis=(0, 1))
-    step = request.grain.close / 3
-    reach = np.where(present, roots.extent[:, corners], 0.0).max(axis=(0, 1)) + 2 * request.grain.close
-    first = np.ceil(np.maximum(low - reach, request.low) / step).astype(np.intp)
-    last = np.floor(np.minimum(high + reach, request.high) / step).astype(np.intp)
-    number = np.maximum(last - first + 1, 0)
+    reach = np.where(present, roots.extent[:, corners], 0.0).max(axis=(0, 1)) + 0.1 * (high - low)
+    low, high = np.maximum(low - reach, request.low), np.minimum(high + reach, request.high)
+    # enough fields for every simplex on its own: its neighbours may be summed in another way
+    number = np.maximum(np.ceil((high - low) / (request.grain.close / 3)), SLICES).astype(np.intp)
+    step = (high - low) / number
     which = np.repeat(np.arange(len(number)), number)
     offset = np.arange(len(which)) - np.repeat(np.cumsum(number) - number, number)
-    fields = (first[which] + offset) * step
+    fields = low[which] + (offset + 0.5) * step[which]
     starts = land.fields[land.leaves[:, 0]]
     leaf = np.clip(np.searchsorted(starts, fields, side="right") - 1, 0, len(starts) - 1)
     inside = fields <= land.fields[land.leaves[leaf, 2]]
     which, fields, leaf = which[inside], fields[inside], leaf[inside]
+    part = part[which] * step[which]
     for start in range(0, len(which), 200_000):
         block = slice(start, start + 200_000)
-        _project(histograms, land, corners[:, which[block]], part[which[block]], fields[block], leaf[block], request)
+        _project(histograms, land, corners[:, which[block]], part[block], fields[block], leaf[block], request)
 
 
 def _project(
@@ -197,4 +208,4 @@ def _project(
     spread = strength * (1 - point_share(apart / steep, request.grain.far))
     density = fold_density(gap.reshape(corners.shape), spread.reshape(corners.shape), part)
     hit = density != 0
-    histograms.points(fields[hit], density[hit] * (request.grain.close / 3))
+    histograms.points(fields[hit], density[hit])

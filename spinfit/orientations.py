@@ -15,6 +15,7 @@ from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy import interpolate
 
 from spinfit.hamiltonian import System, rotation
 
@@ -343,6 +344,23 @@ class Rings:
             return columns.transpose(0, 2, 1) @ basis.T
         return even @ amplitude @ basis.T
 
+    def to_mesh_locally(self, values: Array, mesh: Mesh) -> Array:
+        """Continue values at the knots, shape (q, n), to a mesh by cubic splines: (q, thetas + 1, azimuths).
+
+        Splines converge slower than series on smooth functions, but a kink, such as sorted levels
+        have where they nearly cross, stays where it is.
+        """
+        around, even, odd = _local_matrices(self, mesh)
+        out, column = [], 0
+        for matrix in around:
+            out.append(values[:, column : column + matrix.shape[1]] @ matrix.T)
+            column += matrix.shape[1]
+        rows = np.stack(out, axis=1)
+        if self.kind != "half":
+            return even @ rows
+        opposite = np.roll(rows, mesh.phis // 2, axis=2)
+        return even @ (0.5 * (rows + opposite)) + odd @ (0.5 * (rows - opposite))
+
     def without_harmonics(self, values: Array, kept: int) -> Array:
         """Return values at the knots, shape (q, n), with azimuthal harmonics above `kept` removed.
 
@@ -403,6 +421,50 @@ def _analysis(rings: Rings) -> Array:
         out[i * count : (i + 1) * count, column : column + block.shape[1]] = block
         column += block.shape[1]
     return out
+
+
+def _spline_matrix(knots: Array, angles: Array, parity: int, period: float = 0.0) -> Array:
+    """Return the cubic spline through values at `knots` as a matrix, shape (len(angles), len(knots)).
+
+    Parameters
+    ----------
+    parity : int
+        1 or -1: even or odd about the first and the last knot; 0: periodic.
+    period : float
+        For parity 0, rad.
+    """
+    n = len(knots)
+    if n == 1:
+        return np.ones((len(angles), 1))
+    unit = np.eye(n)
+    if parity == 0:
+        # three periods are enough that the ends of the spline are not felt in the middle one
+        x = np.concatenate([knots - period, knots, knots + period])
+        y = np.concatenate([unit, unit, unit])
+    else:
+        low, high = knots[0], knots[-1]
+        x = np.concatenate([2 * low - knots[:0:-1], knots, 2 * high - knots[-2::-1]])
+        y = np.concatenate([parity * unit[:0:-1], unit, parity * unit[-2::-1]])
+        if parity < 0:
+            y[:, [0, -1]] = 0.0
+    return interpolate.make_interp_spline(x, y, k=min(3, len(x) - 1))(angles)
+
+
+@lru_cache(maxsize=32)
+def _local_matrices(rings: Rings, mesh: Mesh) -> tuple[list[Array], Array, Array]:
+    phi = mesh.phi()
+    around = []
+    for i in range(rings.rings + 1):
+        equator = i == rings.rings
+        azimuths = _ring_azimuths(rings.kind, rings._intervals(i), equator)
+        if rings.kind == "octant" or len(azimuths) == 1:
+            around.append(_spline_matrix(azimuths, phi, 1))
+            continue
+        period = np.pi if rings.kind == "quarter" or equator else 2 * np.pi
+        around.append(_spline_matrix(azimuths, np.mod(phi, period), 0, period))
+    s = stretched(np.linspace(0, 0.5 * np.pi, mesh.thetas + 1), rings.stretch)
+    knots = 0.5 * np.pi * np.arange(rings.rings + 1) / rings.rings
+    return around, _spline_matrix(knots, s, 1), _spline_matrix(knots, s, -1)
 
 
 @lru_cache(maxsize=64)
