@@ -85,9 +85,9 @@ def needed_reduction(model: IonModel, measured: MeasuredG) -> tuple[Needed, ...]
     """
     free = model.with_covalency(1 / model.reduction) if model.reduction else model
     curve = _Curve(free.with_covalency)
-    rows = tuple(
-        _needed_axis(curve, measured, axis, "reduction", (0.02, 1.6), (1.0, model.reduction)) for axis in range(3)
-    )
+    # f electrons hardly take part in bonds: far from k = 1 there is nothing to look for.
+    limits = (0.5, 1.3) if model.shell.l == 3 else (0.02, 1.6)
+    rows = tuple(_needed_axis(curve, measured, axis, "reduction", limits, (1.0, model.reduction)) for axis in range(3))
     return (*rows, _together(rows, measured, "reduction", model.reduction))
 
 
