@@ -32,9 +32,10 @@ from spinfit.branches import Request
 from spinfit.errors import InputError
 from spinfit.hamiltonian import System
 from spinfit.lineshape import FieldGrid, Shape
-from spinfit.orientations import Mesh, Symmetry, symmetry_of
+from spinfit.orientations import Mesh
 from spinfit.resonance import find
 from spinfit.sweep import Sample
+from spinfit.symmetry import Symmetry, symmetry_of
 
 Array = NDArray[np.float64]
 

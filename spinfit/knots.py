@@ -17,8 +17,9 @@ from numpy.typing import NDArray
 
 from spinfit.branches import FieldNodes, KnotData, Request, count_roots, trace_branches
 from spinfit.hamiltonian import System
-from spinfit.orientations import Rings, Symmetry, unstretched
+from spinfit.orientations import Rings, unstretched
 from spinfit.resonance import can_reach
+from spinfit.symmetry import Symmetry
 
 Array = NDArray[np.float64]
 

@@ -1,8 +1,6 @@
-"""Directions of the field: symmetry of a spin system, knots to diagonalise at, meshes to sum over.
+"""Directions of the field: knots to diagonalise at, meshes to sum over.
 
-A spectrum is even in the field direction, so the most general system needs half a sphere; rotation
-symmetry found by testing the matrices themselves reduces it to a quarter, an octant, one meridian
-or one point.  Knots lie on rings of constant theta with about as many azimuths as the ring is long;
+Knots lie on rings of constant theta with about as many azimuths as the ring is long;
 values at the knots are continued to any mesh by Fourier series in phi on each ring and cosine (or
 sine) series in theta, which respect parity at the pole and at the equator.  All continuation is
 linear, so it is a cached matrix.
@@ -17,103 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import interpolate
 
-from spinfit.hamiltonian import System, rotation
-
 Array = NDArray[np.float64]
-
-KINDS = ("point", "axial", "octant", "quarter", "half")
-"""Size of the domain, by symmetry: all rotations, any turn about z, three twofold axes, one, none."""
-
-
-@dataclass(frozen=True, eq=False)
-class Symmetry:
-    """What part of the sphere is enough for a system.
-
-    Attributes
-    ----------
-    kind : str
-        One of `KINDS`.
-    axes : ndarray, shape (3, 3)
-        The frame in which the domain stands, axes as columns in molecular components; z is the
-        rotation axis where there is one.
-    """
-
-    kind: str
-    axes: Array
-
-
-def _turn(axis: Array, angle: float) -> Array:
-    k = np.array([[0, -axis[2], axis[1]], [axis[2], 0, -axis[0]], [-axis[1], axis[0], 0]])
-    return np.eye(3) + np.sin(angle) * k + (1 - np.cos(angle)) * k @ k
-
-
-def _invariant(system: System, axis: Array, angle: float) -> bool:
-    """Whether turning every spin and the field about `axis` leaves H(B) as it is."""
-    u = rotation(system, axis, angle)
-    n = len(system.h0)
-    scale = 1e-9 * (np.abs(system.h0).max() + 1e3 * np.abs(system.zeeman).max())
-    if np.abs(u @ system.h0 @ u.conj().T - system.h0).max() > scale:
-        return False
-    turned = u @ system.zeeman @ u.conj().T
-    expected = np.dot(_turn(axis, angle).T, system.zeeman.reshape(3, -1)).reshape(3, n, n)
-    return np.abs(turned - expected).max() <= 1e-9 * np.abs(system.zeeman).max()
-
-
-def symmetry_of(system: System) -> Symmetry:
-    """Find the largest symmetry of a system among the frames of its tensors.
-
-    Each candidate is tested on the matrices: a rotation counts only if it turns H(B) into H(RB)
-    to 1e-9, whatever the terms of the Hamiltonian are.
-    """
-    frames = system.frames or (np.eye(3),)
-    any_angle = 1.0  # rad; an angle that is no fraction of a turn stands for all angles
-    axes = [frame[:, k] for frame in frames for k in (2, 0, 1)]
-    continuous = [axis for axis in axes if _invariant(system, axis, any_angle)]
-    if continuous:
-        z = continuous[0]
-        if any(abs(z @ axis) < 0.999 for axis in continuous):
-            return Symmetry("point", np.eye(3))
-        return Symmetry("axial", _frame_about(z))
-    best: Symmetry | None = None
-    for frame in frames:
-        twofold = [_invariant(system, frame[:, k], np.pi) for k in range(3)]
-        if all(twofold):
-            return Symmetry("octant", _with_unique_z(frame, _anisotropy(system)))
-        if any(twofold) and best is None:
-            k = twofold.index(True)
-            best = Symmetry("quarter", frame[:, [(k + 1) % 3, (k + 2) % 3, k]])
-    anisotropy = _anisotropy(system)
-    return best or Symmetry("half", _with_unique_z(np.linalg.eigh(anisotropy)[1], anisotropy))
-
-
-def _anisotropy(system: System) -> Array:
-    """Return a symmetric tensor, shape (3, 3), with the directions in which the spectrum differs most.
-
-    n.Q.n = Tr[(n.Z) H0 (n.Z) H0] sees D and A (to second order) and Tr[(n.Z)^2] sees g; which
-    combination does not matter, since it only places the grid.
-    """
-    z, h0 = system.zeeman, system.h0
-    zh = z @ h0
-    second = np.einsum("aij,bji->ab", zh, zh).real / max(np.abs(np.trace(h0 @ h0)), 1e-300)
-    return second + 1e-3 * np.einsum("aij,bji->ab", z, z).real / len(h0)
-
-
-def _with_unique_z(frame: Array, tensor: Array) -> Array:
-    """Return the frame with its axes turned round so that z is the one that differs from the other two."""
-    along = np.einsum("ak,ab,bk->k", frame, tensor, frame)
-    order = np.argsort(along)
-    low, middle, high = along[order]
-    if high - middle < middle - low:
-        order = order[::-1]
-    turned = frame[:, order]
-    return turned * np.array([1, 1, np.sign(np.linalg.det(turned))])
-
-
-def _frame_about(z: Array) -> Array:
-    x = np.eye(3)[np.argmin(np.abs(z))]
-    x = x - (x @ z) * z
-    x /= np.linalg.norm(x)
-    return np.column_stack([x, np.cross(z, x), z])
 
 
 def _phi_basis(kind: str, harmonics: int, phi: Array) -> Array:

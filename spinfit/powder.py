@@ -19,9 +19,10 @@ from spinfit.hamiltonian import System
 from spinfit.knots import continued, restored, settle
 from spinfit.lineshape import FieldGrid
 from spinfit.loops import add_looping
-from spinfit.orientations import Mesh, Rings, symmetry_of
+from spinfit.orientations import Mesh, Rings
 from spinfit.resonance import find
 from spinfit.sheets import Histograms, spacing
+from spinfit.symmetry import symmetry_of
 
 Array = NDArray[np.float64]
 

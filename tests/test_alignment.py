@@ -14,11 +14,11 @@ from scipy.special import eval_legendre
 from spinfit.alignment import Alignment, order_of, orientation_weight, ring_directions, strength_of
 from spinfit.errors import InputError
 from spinfit.hamiltonian import systems
-from spinfit.orientations import Symmetry, symmetry_of
 from spinfit.resonance import find
 from spinfit.species import Nucleus, Species, Spin, Width, tilt_matrix
 from spinfit.spectrum import simulate
 from spinfit.sweep import Sample, Sweep
+from spinfit.symmetry import Symmetry, symmetry_of
 from spinfit.units import MU_B_OVER_H
 
 ORDERS = (-0.49, -0.3, -0.01, 0.05, 0.4, 0.8, 0.97)

@@ -39,6 +39,7 @@ ORDER = (
     "hamiltonian",
     "levels",
     "resonance",
+    "symmetry",
     "orientations",
     "lineshape",
     "sheets",

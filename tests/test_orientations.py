@@ -7,8 +7,9 @@ import pytest
 from scipy.spatial.transform import Rotation
 
 from spinfit.hamiltonian import systems
-from spinfit.orientations import Mesh, Rings, symmetry_of
+from spinfit.orientations import Mesh, Rings
 from spinfit.species import Exchange, Nucleus, Species, Spin
+from spinfit.symmetry import symmetry_of
 
 TILT = (0.4, 0.9, -0.3)
 DOMAINS = ("axial", "octant", "quarter", "half")
