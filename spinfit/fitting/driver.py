@@ -40,7 +40,8 @@ def fit(job: Job, *, progress: Progress | None = None, simulate: Simulate = _eng
     job : Job
     progress : callable, optional
         Called after every evaluation with its number, the best chi-squared so far and the best
-        values by name in the units of the job.
+        values by name in the units of the job; best in the stage under way, since chi-squared of a
+        broadened trace is another quantity.
     simulate : callable, optional
         The engine, as `spinfit.spectrum.simulate`.
 

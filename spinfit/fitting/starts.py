@@ -131,7 +131,15 @@ def draws(problem: Problem, start: Array, count: int, *, wide: bool) -> Array:
     return np.clip(out, problem.lower, problem.upper)
 
 
-def candidates(problem: Problem, start: Array, *, wide: bool, keep: int = 4) -> list[Array]:
+def _tell(problem: Problem, best: Point, progress: Progress | None) -> None:
+    """Report that a scan is under way; the best values are those from before it."""
+    if progress is not None:
+        progress(problem.evaluations, best.chi2, problem.in_job_units(best.free))
+
+
+def candidates(
+    problem: Problem, start: Array, *, wide: bool, keep: int = 4, progress: Progress | None = None
+) -> list[Array]:
     """The best of many draws in a broadened view, each unlike the others, best first."""
     views = _screens(problem, start)
     if not views:
@@ -144,6 +152,7 @@ def candidates(problem: Problem, start: Array, *, wide: bool, keep: int = 4) -> 
                 point = problem.evaluate(free, view)
             except InputError:  # the draw stands where the model has no meaning
                 continue
+            _tell(problem, point, progress)
             found.append((point.chi2 / max(sum(float(s.rest @ s.rest) for s in view.seen), 1e-300), number, free))
     found.sort(key=lambda item: item[:2])
     spans = np.array([_span(problem.parameters[n], v) for n, v in zip(problem.names, start, strict=True)])
@@ -156,7 +165,7 @@ def candidates(problem: Problem, start: Array, *, wide: bool, keep: int = 4) -> 
     return kept
 
 
-def neighbours(problem: Problem, view: View, descent: Descent) -> list[Array]:
+def neighbours(problem: Problem, view: View, descent: Descent, *, progress: Progress | None = None) -> list[Array]:
     """Starts in other basins near a minimum, the most promising first.
 
     A weak feature far from the strong lines leaves several minima in the one parameter it depends
@@ -176,6 +185,7 @@ def neighbours(problem: Problem, view: View, descent: Descent) -> list[Array]:
                 chi2, free = _promise(problem, view, best, descent.jacobian, index, value)
             except InputError:  # the model has no meaning there
                 continue
+            _tell(problem, best, progress)
             if chi2 < _PROMISE * best.chi2:
                 found.append((chi2, 100 * index + number, free))
     found.sort(key=lambda item: item[:2])
@@ -195,7 +205,10 @@ def _promise(
     free = best.free.copy()
     free[index] = value
     moved = best.residual + jacobian[:, index] * (value - best.free[index])
-    free[others] += _followed(jacobian[:, others], moved, furthest)
+    step = _followed(jacobian[:, others], moved, furthest)
+    # Other species stay where they are, so that they need not be simulated again.
+    own = np.array([name.split(".")[0] == problem.names[index].split(".")[0] for name in problem.names])[others]
+    free[others] += np.where(own, step, 0.0)
     free = np.clip(free, problem.lower, problem.upper)
     point = problem.evaluate(free, view)
     # Amounts enter linearly: their columns at the new place cost nothing and may differ altogether.
@@ -312,7 +325,7 @@ class Search:
             self._leave_for_better_basins()
         self._agreed = False  # ways from one start that end together prove little
         if not self._good():
-            for free in candidates(problem, start, wide=automatic):
+            for free in candidates(problem, start, wide=automatic, progress=self.progress):
                 near = _WIDEST / _NARROWING
                 self._follow(coarse_to_fine(problem, free, progress=self.progress, widest=near))
                 if not self._good() and not self._agreed:
@@ -345,7 +358,7 @@ class Search:
                 return
             self._scanned = self.best
             before = self.best.point.chi2
-            for free in neighbours(self.problem, self.view, self.best):
+            for free in neighbours(self.problem, self.view, self.best, progress=self.progress):
                 self._follow(free)
                 if self.best.point.chi2 < before * (1 - _SAME):
                     break
