@@ -4,6 +4,7 @@ import json
 import math
 import subprocess
 import sys
+from pathlib import Path
 
 import pytest
 from hypothesis import given, settings
@@ -11,6 +12,7 @@ from hypothesis import strategies as st
 from sympy import Rational, S
 from sympy.physics.quantum.cg import CG
 
+import spinfit
 from spinfit.errors import InputError
 from spinfit.ion import lande_g, lookup, ls_terms, parse_name
 from spinfit.ion.names import Shell
@@ -102,6 +104,21 @@ def test_spellings_of_an_ion(name):
     assert (record["configuration"], record["S"], record["L"], record["J"]) == ("4f11", "3/2", "6", "15/2")
     # g_J(Er3+) with CODATA's g_S is 1.20046 (closed form)
     assert record["g_J"] == pytest.approx(1 + (G_ELECTRON - 1) / 5, rel=1e-14)
+
+
+def test_every_element_in_every_charge():
+    """Each of 118 elements, each charge down to one electron: as many electrons as there should be."""
+    with open(Path(spinfit.__file__).parent / "data" / "elements.csv", encoding="utf-8") as stream:
+        rows = [line.split(",") for line in stream if not line.startswith("#")][1:]
+    neutral = {row[1]: int(row[0]) for row in rows if row[2] == "0"}
+    assert sorted(neutral.values()) == list(range(1, 119))
+    assert len(neutral) == 118
+    for symbol, z in neutral.items():
+        for charge in range(min(z, 8)):
+            named = parse_name(f"{symbol}{charge or ''}{'+' if charge else ''}")
+            assert named.charge == charge
+            assert all(0 < shell.count <= shell.capacity for shell in named.shells)
+            lookup(named.name)
 
 
 def test_configurations_and_terms_alone():

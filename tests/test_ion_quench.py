@@ -142,6 +142,22 @@ def test_first_order_is_the_tangent_of_the_exact_model():
         assert errors[1] < max(errors[0] / 5, 1e-8)
 
 
+def test_first_order_of_low_spin_ions():
+    """Low-spin d7, the electron in z2: n = 0 and 6 as for a hole there (A. Abragam, B. Bleaney (1970))."""
+    energies = {"z2": 24000.0, "x2-y2": 30000.0, "xy": 0.0, "xz": 500.0, "yz": 500.0}
+    field, slater = from_orbitals(2, energies).scaled(CM), racah_to_slater(1.0 * CM, 4.5 * CM)
+    result = first_order(IonModel(Shell(3, 2, 7), 1.0 * CM, slater, field))
+    assert result.S == 0.5
+    n = {axis: sum(m.n for m in result.terms if m.axis == axis) for axis in "xyz"}
+    assert n["z"] == pytest.approx(0, abs=1e-6)
+    assert n["x"] == pytest.approx(6, rel=1e-2)
+    errors = []
+    for zeta in (1.0, 0.1):
+        model = IonModel(Shell(3, 2, 7), zeta * CM, slater, field)
+        errors.append(np.abs(principal_g(model) - np.diag(first_order(model).g)).max() / zeta)
+    assert errors[1] < errors[0] / 5
+
+
 # ---------------------------------------------------------------- moments
 
 

@@ -160,7 +160,7 @@ def _ion_shells(element: str, charge: int, name: str) -> tuple[Shell, ...]:
     if charge >= z:
         raise InputError(
             f'"{name}" has {"no electrons left" if charge == z else "more charge than electrons"}',
-            f"{element} has {z} electrons: write a charge below {z}",
+            f"{element} has {z} electron{'s' if z > 1 else ''}: write a charge below {z}",
         )
     known = _elements().get((element, charge))
     if known is not None:
