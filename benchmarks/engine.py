@@ -10,8 +10,8 @@ from scipy import constants
 
 from benchmarks.measure import Row, timed
 from benchmarks.plain import plain_way, reference
-from spinfit.spectrum import simulate
 from spinfit.species import Nucleus, Species, Spin, Width
+from spinfit.spectrum import simulate
 from spinfit.sweep import Sweep
 
 WAVENUMBER = constants.c * 1e-4

@@ -11,11 +11,12 @@ from __future__ import annotations
 import math
 from collections.abc import Callable
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit.branches import FieldNodes, KnotData, Request, count_roots, trace_branches
+from spinfit.branches import Branches, FieldNodes, KnotData, Request, count_roots, trace_branches
 from spinfit.hamiltonian import System
 from spinfit.orientations import Rings, unstretched
 from spinfit.resonance import can_reach
@@ -45,7 +46,7 @@ class Knots:
     ----------
     rings : Rings
     data : KnotData
-    single : ndarray of bool, shape (pairs,)
+    branches : Branches
         Pairs with exactly one resonance at every knot.
     other : ndarray of bool, shape (pairs,)
         Pairs with resonances at some knots, or more than one.
@@ -56,7 +57,7 @@ class Knots:
 
     rings: Rings
     data: KnotData
-    single: NDArray[np.bool_]
+    branches: Branches
     other: NDArray[np.bool_]
     error: float
     directions: int
@@ -237,9 +238,9 @@ class _Trial:
 
     def _miss(self, predict: Callable[[Array], Array]) -> Array:
         """Return the relative error, by knot, of single branches when continued values are replaced."""
-        rows = np.flatnonzero(self.single)
         solid = self.rings.knot_weights()
-        branches = trace_branches(self.data, rows)
+        branches = self.branches
+        rows = branches.pair
         x, y, inverse = continued(branches.field, branches.weight)
         guess = predict(np.concatenate([x, y]))
         field, weight = restored(guess[: len(rows)], guess[len(rows) :], inverse)
@@ -272,8 +273,12 @@ class _Trial:
         """Return the intensity in single branches."""
         if not self.single.any():
             return 0.0
-        branches = trace_branches(self.data, np.flatnonzero(self.single))
-        return float((np.abs(branches.weight) * self.rings.knot_weights()).sum())
+        return float((np.abs(self.branches.weight) * self.rings.knot_weights()).sum())
+
+    @cached_property
+    def branches(self) -> Branches:
+        """The pairs with exactly one resonance everywhere, solved at every knot."""
+        return trace_branches(self.data, np.flatnonzero(self.single))
 
     def _compare_gaps(self, rows: NDArray[np.intp], coarse: Rings, kept: NDArray[np.intp]) -> tuple[Array, Array]:
         """Return weight and weight in error of pairs without single branches, each of shape (n,).
@@ -306,7 +311,7 @@ class _Trial:
 
     def knots(self, error: float, spent: int) -> Knots:
         """Return the settled result."""
-        return Knots(self.rings, self.data, self.single, self.other, error, len(self.nodes.directions), spent)
+        return Knots(self.rings, self.data, self.branches, self.other, error, len(self.nodes.directions), spent)
 
 
 def node_accuracy(request: Request) -> float:
@@ -332,12 +337,18 @@ def continued(fields: Array, weights: Array) -> tuple[Array, Array, NDArray[np.b
     branches that come close to zero field are continued as they are.
     """
     inverse = fields.min(axis=1, keepdims=True) > 0.1 * fields.max(axis=1, keepdims=True)
+    if inverse.all():
+        square = 1 / (fields * fields)
+        return square, weights * square / fields, inverse
     safe = np.where(inverse, fields, 1.0)
-    return np.where(inverse, safe**-2, fields), np.where(inverse, weights * safe**-3, weights), inverse
+    square = 1 / (safe * safe)
+    return np.where(inverse, square, fields), np.where(inverse, weights * square / safe, weights), inverse
 
 
 def restored(x: Array, y: Array, inverse: NDArray[np.bool_]) -> tuple[Array, Array]:
     """Return fields and weights from what was continued; `inverse` broadcasts against x and y."""
-    safe = np.where(inverse, np.maximum(x, 1e-30), 1.0)
-    fields = np.where(inverse, safe**-0.5, x)
-    return fields, np.where(inverse, y * np.where(inverse, fields, 1.0) ** 3, y)
+    if inverse.all():
+        fields = 1 / np.sqrt(np.maximum(x, 1e-30))
+        return fields, y * (fields * fields * fields)
+    fields = np.where(inverse, 1 / np.sqrt(np.where(inverse, np.maximum(x, 1e-30), 1.0)), x)
+    return fields, np.where(inverse, y * (fields * fields * fields), y)

@@ -187,8 +187,14 @@ def rotation_matrix(spins: Sequence[float], axis: Sequence[float], angle: float)
         rad, right-handed about `axis`: U (v.s) U^+ = (R v).s for the matrix R of the same turn.
     """
     unit = np.asarray(axis, dtype=float) / np.linalg.norm(axis)
+    return _rotation_matrix(tuple(float(s) for s in spins), tuple(unit.tolist()), float(angle))
+
+
+@lru_cache(maxsize=256)
+def _rotation_matrix(spins: tuple[float, ...], unit: tuple[float, ...], angle: float) -> Matrix:
     total = np.ones((1, 1), dtype=complex)
     for spin in spins:
         values, vectors = np.linalg.eigh(np.tensordot(unit, spin_matrices(spin), 1))
         total = np.kron(total, (vectors * np.exp(-1j * angle * values)) @ vectors.conj().T)
+    total.flags.writeable = False
     return total

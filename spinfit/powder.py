@@ -14,7 +14,7 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit.branches import Branches, KnotData, Request, trace_branches
+from spinfit.branches import Branches, KnotData, Request
 from spinfit.hamiltonian import System
 from spinfit.knots import continued, restored, settle
 from spinfit.lineshape import FieldGrid
@@ -68,14 +68,13 @@ def powder(system: System, request: Request, grid: FieldGrid) -> tuple[Histogram
         return _one_direction(system, request, grid, report)
     knots = settle(system, symmetry, request)
     histograms = Histograms(grid, request.scale)
-    if knots.single.any():
-        branches = trace_branches(knots.data, np.flatnonzero(knots.single))
-        _sum_branches(knots.rings, branches, request, histograms, report)
+    if len(knots.branches.pair):
+        _sum_branches(knots.rings, knots.branches, request, histograms, report)
     if knots.other.any():
         _sum_loops(knots.rings, knots.data, np.flatnonzero(knots.other), request, histograms, report)
     report.rings, report.estimated_error = knots.rings.rings, knots.error
     report.directions, report.diagonalisations = knots.directions, knots.diagonalisations
-    report.pairs, report.looping = int(knots.single.sum()), int(knots.other.sum())
+    report.pairs, report.looping = len(knots.branches.pair), int(knots.other.sum())
     return histograms, report
 
 
