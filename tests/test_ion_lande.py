@@ -88,6 +88,7 @@ def test_iron_group_table(ion, term, p, spin_only):
         ("U", "5L6"),
         ("Tl", "2P1/2"),
         ("Ni+", "2D5/2"),
+        ("Ce", "1G4"),
         ("Fe+", "6D9/2"),
     ],
 )

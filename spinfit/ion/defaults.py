@@ -72,7 +72,7 @@ def open_shell(name: str) -> Shell:
         Where there is no such shell, or more than one.
     """
     named = parse_name(name)
-    if named.term is not None:
+    if not named.shells:
         raise InputError(
             f"{named.name} is a level without a configuration", 'name an ion such as "Cu2+" or a configuration "3d9"'
         )

@@ -9,7 +9,7 @@ import math
 from dataclasses import dataclass
 
 from spinfit.errors import InputError
-from spinfit.ion.names import half, parse_name, term_symbol
+from spinfit.ion.names import Named, half, parse_name, term_symbol
 from spinfit.ion.spin_orbit import SpinOrbit, spin_orbit_table
 from spinfit.ion.terms import check_level, hund, lande_intervals, level_js
 from spinfit.units import G_ELECTRON
@@ -160,7 +160,7 @@ def lookup(name: str, *, g_spin: float | None = None, g_orbital: float = 1.0) ->
         spin_only_moment=moment(g_spin, S),
         levels=_levels(S, L, J, constant, g_spin, g_orbital),
         spin_orbit=constant,
-        note=_note(S, L, J, named.open_shells),
+        note=_note(S, L, J, named),
         g_spin=g_spin,
         g_orbital=g_orbital,
     )
@@ -184,14 +184,16 @@ def _levels(
     )
 
 
-def _note(S: float, L: int, J: float, shells: tuple) -> str:
+def _note(S: float, L: int, J: float, named: Named) -> str:
     """Say what is special about the level."""
     notes = []
     if J == 0 and (S or L):
         notes.append(NO_SHIFT)
     elif J == 0:
         notes.append("closed shells: no moment, g_J has no meaning and nothing is lost")
-    if len([s for s in shells if s.l > 0]) > 1:
+    if named.shells and named.term is not None:
+        notes.append(f"observed ground level; Hund's rules would give {term_symbol(*hund(named.open_shells))}")
+    elif len([s for s in named.open_shells if s.l > 0]) > 1:
         notes.append("two open shells: Hund's rules are less reliable here")
     return "; ".join(notes)
 

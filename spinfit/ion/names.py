@@ -65,7 +65,7 @@ class Named:
     element : str or None
     charge : int or None
     term : (S, L, J) or None
-        For a term symbol alone.
+        For a term symbol alone, and for atoms whose ground level is not that of Hund's rules.
     """
 
     name: str
@@ -98,11 +98,11 @@ def term_symbol(S: float, L: int, J: float | None = None) -> str:
 
 
 @lru_cache(maxsize=1)
-def _elements() -> dict[tuple[str, int], tuple[int, str, str]]:
-    """Return (symbol, charge) -> (Z, noble-gas core, configuration outside it)."""
+def _elements() -> dict[tuple[str, int], tuple[int, str, str, str]]:
+    """Return (symbol, charge) -> (Z, noble-gas core, configuration outside it, level where Hund's rules fail)."""
     text = (Path(__file__).parents[1] / "data" / "elements.csv").read_text(encoding="utf-8")
     rows = csv.DictReader(line for line in text.splitlines() if not line.startswith("#"))
-    return {(r["symbol"], int(r["charge"])): (int(r["z"]), r["core"], r["configuration"]) for r in rows}
+    return {(r["symbol"], int(r["charge"])): (int(r["z"]), r["core"], r["configuration"], r["level"]) for r in rows}
 
 
 def _read_shells(words: list[str], text: str) -> tuple[Shell, ...]:
@@ -156,7 +156,7 @@ def _tidy(shells: list[Shell]) -> tuple[Shell, ...]:
 
 def _ion_shells(element: str, charge: int, name: str) -> tuple[Shell, ...]:
     """Return the valence shells of an element at a charge."""
-    z, core, outer = _elements()[element, 0]
+    z, core, outer, _ = _elements()[element, 0]
     if charge >= z:
         raise InputError(
             f'"{name}" has {"no electrons left" if charge == z else "more charge than electrons"}',
@@ -291,4 +291,7 @@ def parse_name(text: str) -> Named:
     if element not in known:
         raise InputError(f'there is no element "{symbol}" in "{plain}"', f"{nearest(symbol, known)} {HOW_TO_NAME}")
     name = _canonical_ion(element, charge)
-    return Named(name, shells=_ion_shells(element, charge, name), element=element, charge=charge)
+    shells = _ion_shells(element, charge, name)
+    exception = _elements().get((element, charge), ("",))[-1]
+    level = _parse_term(exception) if exception else None
+    return Named(name, shells, element, charge, None if level is None else level.term)

@@ -11,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spinfit.errors import InputError
-from spinfit.ion.defaults import default_model, default_space, default_zeta, open_shell
+from spinfit.ion.defaults import default_model
 from spinfit.ion.first_order import Mixing, first_order
 from spinfit.ion.kramers import doublet_matches
 from spinfit.ion.lande import IonLevel, lookup, numbers_of, orbital_to_spin
@@ -77,6 +77,8 @@ class QuenchRow:
         MHz.
     projection_error : float or None
         Of D and E, rms in MHz.
+    g_from_orbital : (3,) or None
+        Part of `g_crystal` that comes from k L (for a spin: g minus that of the spin).
     measured : MeasuredG or None
     fraction : (3,) or None
         Orbital moment that survives, from the model.
@@ -104,6 +106,7 @@ class QuenchRow:
     D: float | None = None
     E: float | None = None
     projection_error: float | None = None
+    g_from_orbital: tuple[float, ...] | None = None
     measured: MeasuredG | None = None
     fraction: tuple[float, ...] | None = None
     fraction_measured: tuple[float, ...] | None = None
@@ -127,6 +130,7 @@ class QuenchRow:
             "crystal_field": self.crystal_field or None,
             "effective_spin": self.effective_spin,
             "g_crystal_field": _listed(self.g_crystal),
+            "g_from_orbital": _listed(self.g_from_orbital),
             "g_first_order": _listed(self.g_first_order),
             "first_order_terms": [
                 {"axis": m.axis, "n": m.n, "delta_cm1": m.delta / MHZ_PER_WAVENUMBER} for m in self.mixing
@@ -230,17 +234,6 @@ def surviving_fraction(
     return fractions, tuple(u / abs(r) for u in uncertainties)
 
 
-def ion_model(name: str) -> IonModel:
-    """Return an ion in its typical field (see `defaults.default_model`)."""
-    return default_model(name)
-
-
-def bare_model(name: str) -> IonModel:
-    """Return an ion without a field, with zeta from the table."""
-    shell = open_shell(name)
-    return IonModel(shell, default_zeta(lookup(name).ion), {}, space=default_space(shell, {}), name=lookup(name).ion)
-
-
 def quench_row(
     name: str,
     *,
@@ -267,7 +260,7 @@ def quench_row(
     notes = [level.note] if level.note else []
     if model is None:
         try:
-            model = ion_model(name)
+            model = default_model(name)
         except InputError as error:
             notes.append(f"{error.found}; {error.right}")
     if model is not None and g_spin is not None:
@@ -300,10 +293,12 @@ def _crystal_part(
         manifold = round(2 * ground.S) + 1
         row |= {"kind": "spin Hamiltonian", "effective_spin": ground.S, "g_crystal": tuple(ground.g_principal.tolist())}
         row |= {"D": ground.D, "E": ground.E, "projection_error": ground.zfs_error} if ground.S >= 1 else {}
+        row["g_from_orbital"] = tuple((ground.g_principal - model.g_spin).tolist())
         axes = ground.g_axes
     else:
         manifold = 2
         row |= {"kind": "doublet", "effective_spin": 0.5, "g_crystal": tuple(ground.principal.tolist())}
+        row["g_from_orbital"] = tuple(ground.orbital.tolist())
         axes = ground.axes
     if isinstance(ground, SpinHamiltonian) and model.shell.l < 3:
         simple = first_order(model)
