@@ -35,7 +35,7 @@ def options(parser: argparse.ArgumentParser) -> None:
 def run(args: argparse.Namespace, screen: Screen) -> int:
     """Look the ions up and print them."""
     from spinfit.ion import lookup
-    from spinfit.report.tables import table, wrapped
+    from spinfit.report.layout import table, wrapped
 
     if args.plot is not None:
         from spinfit.commands.drawing import picture_kind

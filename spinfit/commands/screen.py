@@ -31,9 +31,9 @@ class Screen:
 
     def emit(self, content: Mapping[str, Any] | Sequence[Any]) -> None:
         """Write the JSON document; nothing without --json."""
-        from spinfit.report.outcome_json import clean
-
         if self.as_json:
+            from spinfit.report.outcome_json import clean
+
             print(json.dumps(clean(content), indent=2, ensure_ascii=False, allow_nan=False), file=self.out)
 
     def raw(self, text: str) -> None:

@@ -15,8 +15,8 @@ from spinfit.ion.lande import IonLevel
 from spinfit.ion.names import half
 from spinfit.ion.quench import QuenchRow
 from spinfit.ion.tensors import DoubletG
+from spinfit.report.layout import table, wrapped
 from spinfit.report.numbers import with_uncertainty
-from spinfit.report.tables import table, wrapped
 from spinfit.units import MHZ_PER_WAVENUMBER
 
 AXES = ("x", "y", "z")
