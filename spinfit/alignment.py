@@ -30,10 +30,12 @@ from scipy.optimize import brentq
 
 from spinfit.branches import Request
 from spinfit.errors import InputError
+from spinfit.exact import deposit
 from spinfit.hamiltonian import System
 from spinfit.lineshape import FieldGrid, Shape
 from spinfit.orientations import Mesh
 from spinfit.resonance import find
+from spinfit.sheets import Histograms
 from spinfit.sweep import Sample
 from spinfit.symmetry import Symmetry, symmetry_of
 
@@ -300,8 +302,8 @@ def mesh_directions(alignment: Alignment, symmetry: Symmetry, polar: int, azimut
 
 def aligned(
     system: System, request: Request, grid: FieldGrid, shape: Shape, sample: Sample, angle: float | None = None
-) -> tuple[Array, dict[str, object]]:
-    """Return the histogram of an aligned sample's resonance fields by plain sums, and what was used.
+) -> tuple[Histograms, dict[str, object]]:
+    """Return the histograms of an aligned sample's resonance fields by plain sums, and what was used.
 
     Exact resonances are summed over the domain of the system's symmetry or, where order makes the
     weight narrow, over rings about the director.  The numbers of polar angles and of azimuths are
@@ -309,8 +311,7 @@ def aligned(
 
     Returns
     -------
-    histogram : ndarray, shape (grid.count,)
-        See `FieldGrid.coefficients` (order 0).
+    histograms : Histograms
     report : dict
     """
     alignment, symmetry = Alignment.of(sample, angle), symmetry_of(system)
@@ -319,17 +320,17 @@ def aligned(
     fixed_polar = rings and len(alignment.polar(2)[0]) == 1
     fixed_azimuths = not rings and symmetry.kind in ("axial", "point")
 
-    def summed(polar: int, azimuths: int) -> tuple[Array, Array, int]:
+    def summed(polar: int, azimuths: int) -> tuple[Histograms, Array, int]:
         if rings:
             directions, share = ring_directions(alignment, polar, azimuths)
         else:
             directions, share = mesh_directions(alignment, symmetry, polar, azimuths)
-        histogram = _deposited(system, request, grid, directions, share)
-        return histogram, grid.coefficients({0: histogram}, shape), len(directions)
+        histograms = _deposited(system, request, grid, directions, share)
+        return histograms, grid.render(histograms.transform(), shape), len(directions)
 
     polar = 1 if fixed_polar else FIRST
     azimuths = 1 if fixed_azimuths else FIRST
-    histogram, spectrum, count = summed(polar, azimuths)
+    histograms, spectrum, count = summed(polar, azimuths)
     errors = {"polar": 0.0 if fixed_polar else math.inf, "azimuths": 0.0 if fixed_azimuths else math.inf}
     goal = 0.5 * request.tolerance
     while max(errors.values()) > goal and count < MOST:
@@ -337,7 +338,7 @@ def aligned(
         more = (2 * polar, azimuths) if which == "polar" else (polar, 2 * azimuths)
         finer, better, count = summed(*more)
         errors[which] = float(np.abs(spectrum - better).max() / max(np.abs(better).max(), 1e-300))
-        (polar, azimuths), histogram, spectrum = more, finer, better
+        (polar, azimuths), histograms, spectrum = more, finer, better
     report: dict[str, object] = {
         "label": system.label,
         "symmetry": "rings" if rings else symmetry.kind,
@@ -347,24 +348,22 @@ def aligned(
     }
     if max(errors.values()) > goal:
         report["notes"] = [f"{count} directions did not reach the tolerance"]
-    return histogram, report
+    return histograms, report
 
 
-def _deposited(system: System, request: Request, grid: FieldGrid, directions: Array, share: Array) -> Array:
+def _deposited(system: System, request: Request, grid: FieldGrid, directions: Array, share: Array) -> Histograms:
     """Find the resonances of many directions, in blocks, and deposit them with their shares."""
-    histogram = np.zeros(grid.count)
+    histograms = Histograms(grid, request.scale)
     step = max(16, 1_000_000 // len(system.h0) ** 2)
     for start in range(0, len(directions), step):
+        block = directions[start : start + step]
         got = find(
             system,
-            directions[start : start + step],
+            block,
             request.frequency,
             (request.low, request.high),
             microwave=request.microwave,
             temperature=request.temperature,
         )
-        weight = got.weight * share[start + got.direction]
-        histogram += grid.deposit(got.field, weight)
-        if grid.start < 0:
-            histogram += grid.deposit(-got.field, weight)
-    return histogram
+        deposit(histograms, system, request, got, block, got.weight * share[start + got.direction])
+    return histograms

@@ -8,12 +8,14 @@ numbers, `trace_branches` follows the pairs that have exactly one resonance ever
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
 from spinfit import hermite
+from spinfit.broadening import Broadening
 from spinfit.hamiltonian import System
 from spinfit.levels import population_difference, solve
 from spinfit.resonance import can_reach, level_pairs, midpoint_error
@@ -43,6 +45,8 @@ class Request:
         "perpendicular" or "parallel".
     temperature : float or None
         K.
+    broadening : Broadening or None
+        What makes the widths of resonances differ.
     """
 
     frequency: float
@@ -53,6 +57,7 @@ class Request:
     tolerance: float
     microwave: str = "perpendicular"
     temperature: float | None = None
+    broadening: Broadening | None = None
 
 
 @dataclass(frozen=True, eq=False)
@@ -71,6 +76,8 @@ class KnotData:
         E_upper - E_lower - h nu, MHz; its slope, MHz/mT.
     strength : ndarray, shape (p, k, n)
         Intensity times population difference.
+    variance : ndarray, shape (p, k, n), or None
+        Squared FWHM in frequency of each transition's own broadening, MHz^2.
     """
 
     fields: Array
@@ -79,11 +86,12 @@ class KnotData:
     gap: Array
     slope: Array
     strength: Array
+    variance: Array | None = None
 
-    def strength_at(self, leaf: int, row: Array | slice, knot: Array | slice, fields: Array) -> Array:
-        """Return the strength inside a leaf, by the polynomial through the nodes about it."""
+    def inside(self, values: Array, leaf: int, row: Array, knot: Array, fields: Array) -> Array:
+        """Return strengths or variances inside a leaf, by the polynomial through the nodes about it."""
         nodes, basis = stencil(self.fields, self.leaves[leaf, 1], fields)
-        return sum(basis[i] * self.strength[row, node, knot] for i, node in enumerate(nodes))
+        return sum(basis[i] * values[row, node, knot] for i, node in enumerate(nodes))
 
 
 def stencil(nodes: Array, middle: int, fields: Array, most: int = 5) -> tuple[range, Array]:
@@ -114,17 +122,19 @@ class FieldNodes:
     def __init__(self, system: System, request: Request, directions: Array) -> None:
         self.system, self.request, self.directions = system, request, directions
         self.lower, self.upper = level_pairs(len(system.h0))
-        self.solved: dict[float, tuple[Array, Array, Array]] = {}
+        self.solved: dict[float, tuple[Array, ...]] = {}
         self.leaves: list[tuple[float, float, float]] = []
         self.count = 0
 
-    def _solve(self, directions: Array, fields: list[float]) -> list[tuple[Array, Array, Array]]:
+    def _solve(self, directions: Array, fields: list[float]) -> list[tuple[Array, ...]]:
         n = len(directions)
+        broadening = self.request.broadening
         got = solve(
             self.system,
             np.tile(directions, (len(fields), 1)),
             np.repeat(fields, n),
             microwave=self.request.microwave,
+            operators=None if broadening is None else (broadening.h0, broadening.zeeman),
         )
         self.count += n * len(fields)
         shape = (len(fields), n)
@@ -133,6 +143,7 @@ class FieldNodes:
                 got.energy.reshape(*shape, -1),
                 got.slope.reshape(*shape, -1),
                 got.intensity.reshape(*shape, *got.intensity.shape[1:]),
+                got.shift.reshape(*shape, *got.shift.shape[1:]),
                 strict=True,
             )
         )
@@ -144,11 +155,17 @@ class FieldNodes:
 
     def _differences(self, field: float, pairs: Pairs) -> tuple[Array, Array, Array]:
         """Return gap, slope and strength at one node, each of shape (n, p)."""
-        energy, slope, intensity = self.solved[field]
+        energy, slope, intensity, _ = self.solved[field]
         lower, upper = pairs
         gap = energy[:, upper] - energy[:, lower] - self.request.frequency
         change = population_difference(energy, lower, upper, self.request.temperature)
         return gap, slope[:, upper] - slope[:, lower], intensity[:, lower, upper] * change
+
+    def _variance(self, field: float, pairs: Pairs) -> Array:
+        """Return the squared frequency width at one node, shape (n, p), MHz^2."""
+        shift = self.solved[field][3]
+        lower, upper = pairs
+        return self.request.broadening.variance(shift[:, :, upper] - shift[:, :, lower], self.directions)
 
     def choose(self, accuracy: float, deepest: int = 9) -> None:
         """Halve the field range until quintics follow every pair that can be resonant.
@@ -238,7 +255,10 @@ class FieldNodes:
             return KnotData(np.empty(0), leaves, pairs, empty, empty, empty)
         stacked = [np.stack(c).transpose(2, 0, 1) for c in zip(*columns, strict=True)]
         gap, slope, strength = (np.ascontiguousarray(c) for c in stacked)
-        return KnotData(np.array(fields), leaves, pairs, gap, slope, strength)
+        variance = None
+        if self.request.broadening is not None:
+            variance = np.ascontiguousarray(np.stack([self._variance(x, pairs) for x in fields]).transpose(2, 0, 1))
+        return KnotData(np.array(fields), leaves, pairs, gap, slope, strength, variance)
 
     def _relevant(self, fields: list[float]) -> Pairs:
         every = (self.lower, self.upper)
@@ -261,12 +281,19 @@ class FieldNodes:
 
 @dataclass(frozen=True, eq=False)
 class Branches:
-    """Pairs with exactly one resonance at every knot; arrays of shape (p, n)."""
+    """Pairs with exactly one resonance at every knot; arrays of shape (p, n).
+
+    `variance` is that of each resonance's own Gaussian broadening, mT^2, or None.
+    """
 
     pair: NDArray[np.intp]
     field: Array
     weight: Array
     slope: Array
+    variance: Array | None = None
+
+
+FWHM_PER_SIGMA = 2 * math.sqrt(2 * math.log(2))
 
 
 def count_roots(data: KnotData) -> NDArray[np.intp]:
@@ -293,7 +320,7 @@ def trace_branches(data: KnotData, chosen: NDArray[np.intp]) -> Branches:
     """
     n = data.gap.shape[2]
     gap = data.gap[chosen]
-    field, weight, slope = (np.zeros((len(chosen), n)) for _ in range(3))
+    field, weight, slope, variance = (np.zeros((len(chosen), n)) for _ in range(4))
     positive = gap >= 0
     for number, leaf in enumerate(data.leaves):
         first, middle, last = leaf
@@ -310,9 +337,12 @@ def trace_branches(data: KnotData, chosen: NDArray[np.intp]) -> Branches:
         t = hermite.refine(c, np.where(left, -1.0, 0.0), np.where(left, 0.0, 1.0), 4)
         field[row, knot] = data.fields[middle] + half * t
         slope[row, knot] = hermite.slope(c, t) / half
-        strength = data.strength_at(number, chosen[row], knot, field[row, knot])
-        weight[row, knot] = strength / np.maximum(np.abs(slope[row, knot]), 1e-300)
-    return Branches(chosen, field, weight, slope)
+        where = (number, chosen[row], knot, field[row, knot])
+        steep = np.maximum(np.abs(slope[row, knot]), 1e-300)
+        weight[row, knot] = data.inside(data.strength, *where) / steep
+        if data.variance is not None:
+            variance[row, knot] = data.inside(data.variance, *where) / (steep * FWHM_PER_SIGMA) ** 2
+    return Branches(chosen, field, weight, slope, None if data.variance is None else variance)
 
 
 def parabola(s: Array, t: Array) -> Array:

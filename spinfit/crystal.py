@@ -23,9 +23,11 @@ from numpy.typing import NDArray
 
 from spinfit.branches import Request
 from spinfit.errors import InputError
+from spinfit.exact import deposit
 from spinfit.hamiltonian import System
 from spinfit.lineshape import FieldGrid
 from spinfit.resonance import find
+from spinfit.sheets import Histograms
 from spinfit.sites import operations
 from spinfit.species import tilt_matrix
 from spinfit.sweep import Sample
@@ -123,7 +125,7 @@ def _same_line(vectors: Array, one: Array) -> NDArray[np.bool_]:
 
 def crystal(
     system: System, request: Request, grid: FieldGrid, sample: Sample, angles: Sequence[float]
-) -> tuple[list[Array], dict[str, object]]:
+) -> tuple[list[Histograms], dict[str, object]]:
     """Return one histogram of resonance fields for each angle, and what was used.
 
     Parameters
@@ -133,8 +135,7 @@ def crystal(
 
     Returns
     -------
-    histograms : list of ndarray, shape (grid.count,)
-        See `FieldGrid.coefficients` (order 0).
+    histograms : list of Histograms
     report : dict
         Label of the system, number of sites, of distinct directions and of resonances.
     """
@@ -153,10 +154,8 @@ def crystal(
     histograms = []
     for k in range(len(angles)):
         own = angle == k
-        histogram = grid.deposit(got.field[own], weight[own])
-        if grid.start < 0:
-            histogram += grid.deposit(-got.field[own], weight[own])
-        histograms.append(histogram)
+        histograms.append(Histograms(grid, request.scale))
+        deposit(histograms[-1], system, request, got.only(own), where.field, weight[own])
     report = {
         "label": system.label,
         "sites": len(operations(sample.point_group)),

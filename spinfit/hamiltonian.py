@@ -197,7 +197,7 @@ def _frames(species: Species) -> tuple[Tensor, ...]:
     """Return the molecular frame and the frames of all anisotropic tensors, without repeats."""
     tilts = [NO_TILT]
     for spin in species.spins:
-        tilts += [spin.g_tilt] * (len(set(spin.g)) > 1) + [spin.D_tilt] * (spin.D != 0 or spin.zfs_E != 0)
+        tilts += [spin.g_tilt] * bool(len(set(spin.g)) > 1) + [spin.D_tilt] * bool(spin.D != 0 or spin.zfs_E != 0)
     for exchange in species.exchange:
         tilts += [exchange.tilt] * (len(set(exchange.dipolar)) > 1)
     for nucleus in species.nuclei:

@@ -36,11 +36,18 @@ class Levels:
         dE/dB, MHz/mT.
     intensity : ndarray, shape (m, n, n), or None
         |M|^2 of each pair of levels in the chosen microwave direction, (MHz/mT)^2.
+    shift : ndarray, shape (m, k, n)
+        First-order shift of each level by each of k further operators, MHz.
     """
 
     energy: Array
     slope: Array
     intensity: Array | None
+    shift: Array
+
+
+Operators = tuple[NDArray[np.complex128], NDArray[np.complex128]]
+"""Operators linear in the field: zero-field parts, shape (k, n, n), and dH/dB parts, shape (k, 3, n, n)."""
 
 
 def solve(
@@ -50,6 +57,7 @@ def solve(
     *,
     microwave: str | Array = "perpendicular",
     intensities: bool = True,
+    operators: Operators | None = None,
 ) -> Levels:
     """Diagonalise at every (direction, field) of two equally long lists.
 
@@ -64,41 +72,65 @@ def solve(
         "parallel": along the field; an array: along these unit vectors (molecular axes).
     intensities : bool
         Whether intensities are wanted at all.
+    operators : (h0, zeeman), optional
+        Operators whose expectation values are wanted.
     """
     n = system.h0.shape[0]
     m = len(fields)
     block = max(1, BLOCK_BYTES // (160 * n * n))
     if m <= block:
-        return _solve_block(system, directions, fields, microwave, intensities)
-    energy = np.empty((m, n))
-    slope = np.empty((m, n))
-    intensity = np.empty((m, n, n)) if intensities else None
+        return _solve_block(system, directions, fields, microwave, intensities, operators)
+    parts = []
     for start in range(0, m, block):
         part = slice(start, start + block)
         along = microwave if isinstance(microwave, str) else microwave[part]
-        got = _solve_block(system, directions[part], fields[part], along, intensities)
-        energy[part], slope[part] = got.energy, got.slope
-        if intensity is not None:
-            intensity[part] = got.intensity
-    return Levels(energy, slope, intensity)
+        parts.append(_solve_block(system, directions[part], fields[part], along, intensities, operators))
+    return Levels(
+        np.concatenate([p.energy for p in parts]),
+        np.concatenate([p.slope for p in parts]),
+        np.concatenate([p.intensity for p in parts]) if intensities else None,
+        np.concatenate([p.shift for p in parts]),
+    )
 
 
-def _solve_block(system: System, directions: Array, fields: Array, microwave: str | Array, intensities: bool) -> Levels:
+def _solve_block(
+    system: System,
+    directions: Array,
+    fields: Array,
+    microwave: str | Array,
+    intensities: bool,
+    operators: Operators | None,
+) -> Levels:
     n = system.h0.shape[0]
     m = len(fields)
     h = np.dot(directions * fields[:, None], system.zeeman.reshape(3, n * n)).reshape(m, n, n)
     h += system.h0
     energy, vectors = np.linalg.eigh(h)
+    shift = _expectation(vectors, directions * fields[:, None], operators)
     # rows (i, a) of V+ Z_a, then times V: two matrix products a point give all three components
     side_by_side = np.ascontiguousarray(system.zeeman.transpose(1, 0, 2)).reshape(n, 3 * n)
     half = vectors.conj().transpose(0, 2, 1) @ side_by_side
     if not intensities:
         along = np.einsum("miak,ma->mik", half.reshape(m, n, 3, n), directions)
-        return Levels(energy, np.einsum("mik,mki->mi", along, vectors).real, None)
+        return Levels(energy, np.einsum("mik,mki->mi", along, vectors).real, None, shift)
     moment = (half.reshape(m, 3 * n, n) @ vectors).reshape(m, n, 3, n)
     parallel = np.einsum("miaj,ma->mij", moment, directions)
     slope = np.einsum("mii->mi", parallel).real.copy()
-    return Levels(energy, slope, _intensity(moment, parallel, microwave))
+    return Levels(energy, slope, _intensity(moment, parallel, microwave), shift)
+
+
+def _expectation(vectors: NDArray, fields: Array, operators: Operators | None) -> Array:
+    """Return <i|O|i> of each operator at each point, shape (m, k, n); `fields` are vectors, mT."""
+    m, n = vectors.shape[:2]
+    if operators is None:
+        return np.empty((m, 0, n))
+    out = np.empty((m, len(operators[0]), n))
+    for k, (h0, zeeman) in enumerate(zip(*operators, strict=True)):
+        operator = h0 + np.dot(fields, zeeman.reshape(3, n * n)).reshape(m, n, n) if zeeman.any() else h0
+        turned = operator @ vectors
+        out[:, k] = np.einsum("mai,mai->mi", vectors.real, turned.real)
+        out[:, k] += np.einsum("mai,mai->mi", vectors.imag, turned.imag)
+    return out
 
 
 def _intensity(moment: NDArray, parallel: NDArray, microwave: str | Array) -> Array:

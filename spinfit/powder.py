@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spinfit.branches import Branches, KnotData, Request
+from spinfit.exact import deposit
 from spinfit.hamiltonian import System
 from spinfit.knots import continued, restored, settle
 from spinfit.lineshape import FieldGrid
@@ -63,6 +64,8 @@ def powder(system: System, request: Request, grid: FieldGrid) -> tuple[Histogram
     report : Report
     """
     symmetry = symmetry_of(system)
+    if request.broadening is not None:
+        symmetry = request.broadening.lowered(symmetry, system)
     report = Report(symmetry.kind)
     if symmetry.kind == "point":
         return _one_direction(system, request, grid, report)
@@ -79,9 +82,10 @@ def powder(system: System, request: Request, grid: FieldGrid) -> tuple[Histogram
 
 
 def _one_direction(system: System, request: Request, grid: FieldGrid, report: Report) -> tuple[Histograms, Report]:
+    direction = np.array([[0.0, 0.0, 1.0]])
     got = find(
         system,
-        np.array([[0.0, 0.0, 1.0]]),
+        direction,
         request.frequency,
         (request.low, request.high),
         microwave=request.microwave,
@@ -89,7 +93,7 @@ def _one_direction(system: System, request: Request, grid: FieldGrid, report: Re
     )
     report.directions, report.diagonalisations, report.pairs = 1, 1, len(got.field)
     histograms = Histograms(grid, request.scale)
-    histograms.points(got.field, got.weight)
+    deposit(histograms, system, request, got, direction, got.weight)
     return histograms, report
 
 
@@ -99,14 +103,25 @@ def _ladder_size(wanted: float) -> int:
     return 2 * math.ceil(0.5 * 2 ** (math.ceil(4 * math.log2(wanted)) / 4))
 
 
-def _mesh_for(rings: Rings, fields: Array, request: Request) -> list[tuple[int, int]]:
+def _mesh_for(rings: Rings, branches: Branches, request: Request) -> list[tuple[int, int]]:
     """Return for each branch the mesh that its own spread over the sphere asks for.
 
     Neighbours lie within what the largest smear hides, and near turning points, where the line
     itself must hide the grain, the field curves by little more than the line within one step.
     """
     probe = Mesh(rings.kind, 2 * rings.rings, _probe_azimuths(rings))
-    values = rings.to_mesh(fields, probe)
+    values = rings.to_mesh(branches.field, probe)
+    if branches.variance is not None:
+        # where a line is broader, its neighbours may lie farther apart
+        own = np.maximum(rings.to_mesh(branches.variance, probe), 0.0)
+        wider = np.sqrt(1 + own / request.scale**2)
+        thetas = _widened_size(values, wider, 1, probe.thetas, request, even=True)
+        thetas = np.maximum(thetas, 2 * rings.rings)
+        if rings.kind == "axial":
+            return [(_ladder_size(t), 1) for t in thetas]
+        phis = _widened_size(values, wider, 2, probe.phis, request, even=rings.kind == "octant")
+        phis = np.maximum(phis, _probe_azimuths(rings))
+        return [(_ladder_size(t), _ladder_size(p)) for t, p in zip(thetas, phis, strict=True)]
     thetas = _sizes(values, 1, probe.thetas, request, even=True)
     thetas = np.maximum(thetas, 2 * rings.rings)
     if rings.kind == "axial":
@@ -115,8 +130,17 @@ def _mesh_for(rings: Rings, fields: Array, request: Request) -> list[tuple[int, 
     phis = np.maximum(phis, _probe_azimuths(rings))
     # smearing costs about three times as much a point
     choice = np.where(np.prod([thetas[0], phis[0]], axis=0) <= 3 * thetas[1] * phis[1], 0, 1)
-    row = np.arange(len(fields))
+    row = np.arange(len(values))
     return [(_ladder_size(t), _ladder_size(p)) for t, p in zip(thetas[choice, row], phis[choice, row], strict=True)]
+
+
+def _widened_size(values: Array, wider: Array, axis: int, intervals: int, request: Request, even: bool) -> Array:
+    """Return the intervals at which neighbours lie within the local line, shape (branches,)."""
+    if not even:
+        values, wider = (np.concatenate([v, np.take(v, [0], axis)], axis) for v in (values, wider))
+    ahead = np.take(wider, range(1, wider.shape[axis]), axis)
+    local = np.minimum(ahead, np.take(wider, range(wider.shape[axis] - 1), axis))
+    return (np.abs(np.diff(values, axis=axis)) / local).max(axis=(1, 2)) * intervals / request.grain.close
 
 
 def _sizes(values: Array, axis: int, intervals: int, request: Request, even: bool) -> Array:
@@ -145,7 +169,7 @@ def _probe_azimuths(rings: Rings) -> int:
 def _sum_branches(rings: Rings, branches: Branches, request: Request, histograms: Histograms, report: Report) -> None:
     """Add every branch, continued to a mesh fine enough for it."""
     x, y, inverse = continued(branches.field, branches.weight)
-    sizes = _mesh_for(rings, branches.field, request)
+    sizes = _mesh_for(rings, branches, request)
     for size in sorted(set(sizes)):
         rows = [i for i, s in enumerate(sizes) if s == size]
         mesh = Mesh(rings.kind, *size)
@@ -155,6 +179,10 @@ def _sum_branches(rings: Rings, branches: Branches, request: Request, histograms
             both = rings.to_mesh(np.concatenate([x[part], y[part]]), mesh)
             fields, weights = restored(both[: len(part)], both[len(part) :], inverse[part][:, :, None])
             report.mesh_points += fields.size
+            if branches.variance is not None:
+                own = np.maximum(rings.to_mesh(branches.variance[part], mesh), 0.0)
+                histograms.broadened(fields.ravel(), (weights * mesh.weights()).ravel(), own.ravel())
+                continue
             apart = spacing(fields, mesh)
             if apart.max() <= 1.05 * request.grain.close:
                 histograms.points(fields, weights * mesh.weights())

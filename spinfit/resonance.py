@@ -9,7 +9,7 @@ so anticrossings, crossings and looping transitions (several roots of one pair) 
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 
 import numpy as np
 from numpy.typing import NDArray
@@ -57,6 +57,10 @@ class Resonances:
     slope: Array
     intensity: Array
     weight: Array
+
+    def only(self, kept: NDArray[np.bool_]) -> Resonances:
+        """Return those that are marked, shape (r,)."""
+        return Resonances(**{f.name: getattr(self, f.name)[kept] for f in fields(self)})
 
 
 def level_pairs(n: int) -> tuple[NDArray[np.intp], NDArray[np.intp]]:

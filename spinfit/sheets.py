@@ -28,6 +28,8 @@ Cells = tuple[NDArray[np.intp], Array]
 
 SMEAR_LEAST, SMEAR_MOST, SMEAR_RATIO = 0.4, 10.0, 1.6
 """Smallest and largest smear in line widths, and the ratio from one class to the next."""
+VARIANCE_LEAST, VARIANCE_RATIO = 0.25, 1.16
+"""First rung of the ladder of Gaussian widths, in line widths, and the ratio of its variances."""
 SMEAR_REACH = 4.0
 """How far a smear reaches, in units of itself."""
 
@@ -60,6 +62,9 @@ class Histograms:
             self.sizes = scale * SMEAR_LEAST * SMEAR_RATIO ** np.arange(number)
         self.plain = np.zeros((1 + len(self.sizes), grid.count))
         self.integrated: dict[int, Array] = {}
+        self.scale = scale
+        self.variances = np.zeros(1)
+        self.widened = np.zeros((1, grid.count))
 
     def transform(self) -> NDArray[np.complex128]:
         """Return the Fourier transform of everything deposited."""
@@ -68,6 +73,9 @@ class Histograms:
         for size, histogram in zip(self.sizes, self.plain[1:], strict=True):
             if histogram.any():
                 total += self.grid.transform(histogram) * smear_kernel(k, size)
+        for variance, histogram in zip(self.variances, self.widened, strict=True):
+            if histogram.any():
+                total += self.grid.transform(histogram) * np.exp(-0.5 * variance * k**2)
         for order, histogram in self.integrated.items():
             total += self.grid.transform(histogram, order)
         return total
@@ -97,6 +105,42 @@ class Histograms:
         self.grid.deposit_rows(self.plain, rows, both, shares)
         if self.grid.start < 0:  # the spectrum is even in B
             self.grid.deposit_rows(self.plain, rows, -both, shares)
+
+    def broadened(self, fields: Array, weights: Array, variance: Array) -> None:
+        """Add resonances, each with its own further Gaussian variance, mT^2; arrays of shape (n,).
+
+        Each is shared among the four nearest of a ladder of variances by cubic interpolation,
+        which reproduces a Gaussian of any width in between to about 1e-4.
+        """
+        self._reach_variance(float(variance.max(initial=0.0)))
+        ladder = self.variances
+        variance = np.clip(variance, 0.0, ladder[-1])
+        first = np.clip(np.searchsorted(ladder, variance, side="right") - 2, 0, len(ladder) - 4)
+        nodes = ladder[first + np.arange(4)[:, None]]
+        rows, shares = [], []
+        for i in range(4):
+            share = weights.copy()
+            for j in range(4):
+                if i != j:
+                    share *= (variance - nodes[j]) / (nodes[i] - nodes[j])
+            rows.append(first + i)
+            shares.append(share)
+        columns = (np.concatenate(rows), np.concatenate([fields] * 4), np.concatenate(shares))
+        self.grid.deposit_rows(self.widened, *columns)
+        if self.grid.start < 0:  # the spectrum is even in B
+            self.grid.deposit_rows(self.widened, columns[0], -columns[1], columns[2])
+
+    def _reach_variance(self, largest: float) -> None:
+        """Lengthen the ladder of variances until it holds `largest`."""
+        ladder = list(self.variances)
+        if len(ladder) == 1:
+            ladder += [(VARIANCE_LEAST * self.scale) ** 2 * f for f in (1.0, 2.0, 3.0)]
+        while ladder[-1] < largest:
+            ladder.append(ladder[-1] * VARIANCE_RATIO)
+        if len(ladder) > len(self.variances):
+            self.variances = np.array(ladder)
+            extra = np.zeros((len(ladder) - len(self.widened), self.grid.count))
+            self.widened = np.concatenate([self.widened, extra])
 
     def _add(self, into: Array, fields: Array, weights: Array) -> None:
         into += self.grid.deposit(fields, weights)

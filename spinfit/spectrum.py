@@ -9,7 +9,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spinfit.alignment import aligned
-from spinfit.branches import Request
+from spinfit.branches import FWHM_PER_SIGMA, Request
+from spinfit.broadening import Broadening, broadening
 from spinfit.crystal import crystal, remarks
 from spinfit.errors import InputError
 from spinfit.hamiltonian import systems
@@ -120,6 +121,7 @@ def _part(
         raise InputError("has no width", 'give width.gaussian or width.lorentzian, e.g. "0.5 mT"', place=one.name)
     reach = shape.reach(tolerance)
     beyond = SMEAR_REACH * SMEAR_MOST * shape.scale if sample.form == "powder" else 0.0
+    beyond = max(beyond, WIDEST * _own_width(one))
     grid = FieldGrid.covering(*window, shape.scale, reach, tolerance, beyond)
     low, high = window[0] - reach - beyond, window[1] + reach + beyond
     if low < 0:
@@ -135,12 +137,13 @@ def _part(
         sweep.microwave,
         sweep.temperature,
     )
+    widths = broadening(one) or (None,) * len(systems(one))
     if sample.form != "powder":
-        return _oriented(one, request, grid, shape, sample, angles, fields)
+        return _oriented(one, request, widths, grid, shape, sample, angles, fields)
     total = 0.0
     reports = []
-    for system in systems(one):
-        histograms, report = powder(system, request, grid)
+    for system, own in zip(systems(one), widths, strict=True):
+        histograms, report = powder(system, replace(request, broadening=own), grid)
         reports.append({"label": system.label, **vars(report)})
         total = total + system.weight * histograms.transform()
     return grid.sample(grid.render(total, shape), fields)[None], {"systems": reports}, ()
@@ -149,6 +152,7 @@ def _part(
 def _oriented(
     one: Species,
     request: Request,
+    widths: tuple[Broadening | None, ...],
     grid: FieldGrid,
     shape: Shape,
     sample: Sample,
@@ -156,21 +160,33 @@ def _oriented(
     fields: Array,
 ) -> tuple[Array, dict[str, object], tuple[tuple[str, str], ...]]:
     """Return spectra of a crystal or an aligned sample, shape (angles, n), what was used, and warnings."""
-    totals = np.zeros((len(angles), grid.count))
+    totals = [0.0] * len(angles)
     reports, warnings = [], {}
     if sample.form == "crystal":
         warnings = dict.fromkeys(remarks(sample, angles, request.microwave))
-    for system in systems(one):
+    for system, own in zip(systems(one), widths, strict=True):
+        asked = replace(request, broadening=own)
         if sample.form == "crystal":
-            histograms, report = crystal(system, request, grid, sample, angles)
+            histograms, report = crystal(system, asked, grid, sample, angles)
         else:
-            histogram, report = aligned(system, request, grid, shape, sample, angles[0])
+            histogram, report = aligned(system, asked, grid, shape, sample, angles[0])
             histograms = [histogram]
             warnings |= dict.fromkeys(("directions", text) for text in report.get("notes", ()))
-        totals += system.weight * np.array(histograms)
+        totals = [t + system.weight * h.transform() for t, h in zip(totals, histograms, strict=True)]
         reports.append(report)
-    spectra = [grid.sample(grid.coefficients({0: total}, shape), fields) for total in totals]
+    spectra = [grid.sample(grid.render(total, shape), fields) for total in totals]
     return np.array(spectra), {"systems": reports}, tuple(warnings)
+
+
+WIDEST = 4.0
+"""Standard deviations beyond which a broadened line is not felt."""
+
+
+def _own_width(one: Species) -> float:
+    """Return a rough standard deviation, mT, of the widest line that spreads make."""
+    spread = one.spread
+    frequency = max(one.width.hidden_hyperfine) + max(spread.A) + one.spins[0].S * 2 * (spread.D + spread.E)
+    return frequency / (28.0 * FWHM_PER_SIGMA) + 0.2 * max(spread.g) * 340.0
 
 
 def with_angle(sample: Sample, angle: float) -> Sample:

@@ -53,8 +53,8 @@ def _invariant(system: System, axis: Array, angle: float) -> bool:
     return np.abs(turned - expected).max() <= 1e-9 * np.abs(system.zeeman).max()
 
 
-def symmetry_of(system: System) -> Symmetry:
-    """Find the largest symmetry of a system among the frames of its tensors.
+def symmetry_of(system: System, *others: System) -> Symmetry:
+    """Find the largest symmetry that a system, and others beside it, have among the frames of its tensors.
 
     Each candidate is tested on the matrices: a rotation counts only if it turns H(B) into H(RB)
     to 1e-9, whatever the terms of the Hamiltonian are.
@@ -62,7 +62,8 @@ def symmetry_of(system: System) -> Symmetry:
     frames = system.frames or (np.eye(3),)
     any_angle = 1.0  # rad; an angle that is no fraction of a turn stands for all angles
     axes = [frame[:, k] for frame in frames for k in (2, 0, 1)]
-    continuous = [axis for axis in axes if _invariant(system, axis, any_angle)]
+    every = (system, *others)
+    continuous = [axis for axis in axes if all(_invariant(one, axis, any_angle) for one in every)]
     if continuous:
         z = continuous[0]
         if any(abs(z @ axis) < 0.999 for axis in continuous):
@@ -70,7 +71,7 @@ def symmetry_of(system: System) -> Symmetry:
         return Symmetry("axial", _frame_about(z))
     best: Symmetry | None = None
     for frame in frames:
-        twofold = [_invariant(system, frame[:, k], np.pi) for k in range(3)]
+        twofold = [all(_invariant(one, frame[:, k], np.pi) for one in every) for k in range(3)]
         if all(twofold):
             return Symmetry("octant", _with_unique_z(frame, _anisotropy(system)))
         if any(twofold) and best is None:
