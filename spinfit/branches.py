@@ -20,6 +20,7 @@ from spinfit.hamiltonian import System
 from spinfit.levels import population_difference, solve
 from spinfit.resonance import can_reach, level_pairs, midpoint_error
 from spinfit.sheets import Grain
+from spinfit.weak import Felt, extent, node_slopes, pattern
 
 Array = NDArray[np.float64]
 Pairs = tuple[NDArray[np.intp], NDArray[np.intp]]
@@ -78,6 +79,8 @@ class KnotData:
         Intensity times population difference.
     variance : ndarray, shape (p, k, n), or None
         Squared FWHM in frequency of each transition's own broadening, MHz^2.
+    parents : (lower, upper), or None
+        The pairs before weak nuclei split them into the rows that stand here.
     """
 
     fields: Array
@@ -87,6 +90,7 @@ class KnotData:
     slope: Array
     strength: Array
     variance: Array | None = None
+    parents: Pairs | None = None
 
     def inside(self, values: Array, leaf: int, row: Array, knot: Array, fields: Array) -> Array:
         """Return strengths or variances inside a leaf, by the polynomial through the nodes about it."""
@@ -125,6 +129,7 @@ class FieldNodes:
         self.solved: dict[float, tuple[Array, ...]] = {}
         self.leaves: list[tuple[float, float, float]] = []
         self.count = 0
+        self.extent = extent(system, request.high)
 
     def _solve(self, directions: Array, fields: list[float]) -> list[tuple[Array, ...]]:
         n = len(directions)
@@ -135,6 +140,7 @@ class FieldNodes:
             np.repeat(fields, n),
             microwave=self.request.microwave,
             operators=None if broadening is None else (broadening.h0, broadening.zeeman),
+            weak=bool(self.system.weak),
         )
         self.count += n * len(fields)
         shape = (len(fields), n)
@@ -144,6 +150,7 @@ class FieldNodes:
                 got.slope.reshape(*shape, -1),
                 got.intensity.reshape(*shape, *got.intensity.shape[1:]),
                 got.shift.reshape(*shape, *got.shift.shape[1:]),
+                *(a.reshape(*shape, *a.shape[1:]) for seen in got.felt.values() for a in seen),
                 strict=True,
             )
         )
@@ -155,7 +162,7 @@ class FieldNodes:
 
     def _differences(self, field: float, pairs: Pairs) -> tuple[Array, Array, Array]:
         """Return gap, slope and strength at one node, each of shape (n, p)."""
-        energy, slope, intensity, _ = self.solved[field]
+        energy, slope, intensity = self.solved[field][:3]
         lower, upper = pairs
         gap = energy[:, upper] - energy[:, lower] - self.request.frequency
         change = population_difference(energy, lower, upper, self.request.temperature)
@@ -200,12 +207,16 @@ class FieldNodes:
             m, h = 0.5 * (a + b), b - a
             (f_a, g_a, s_a), (f_m, g_m, s_m), (f_b, g_b, s_b) = (self._differences(x, pairs) for x in (a, m, b))
             strength = np.maximum(np.maximum(s_a, s_m), s_b)
-            reach = can_reach(f_a, f_b, g_a * h, g_b * h) | ((f_m >= 0) != (f_a >= 0))
+            reach = can_reach(f_a, f_b, g_a * h, g_b * h, self.extent) | ((f_m >= 0) != (f_a >= 0))
             reach &= np.abs(strength) > 1e-3 * self.request.tolerance * np.abs(strength).max()
             if not reach.any():
                 continue
             error = np.where(reach, midpoint_error(f_a, f_m, f_b, g_a * h, g_m * h, g_b * h), 0.0).max(axis=1)
-            bad = error > accuracy
+            # strengths have no slopes to follow them by: their bend, squared, is what a polynomial may miss
+            bend = np.where(reach, np.abs(s_m - 0.5 * (s_a + s_b)), 0.0)
+            size = np.abs(strength)
+            missed = bend * bend / (np.maximum(size, 1e-300) * size.max(initial=1e-300, where=reach))
+            bad = (error > accuracy) | (missed.max(axis=1) > 0.5 * self.request.tolerance)
             # deep down only knots on symmetry axes are left, where a true crossing has no width
             if not bad.any() or last or (lenient and bad.mean() < 0.02):
                 self.leaves.append((a, m, b))
@@ -258,7 +269,43 @@ class FieldNodes:
         variance = None
         if self.request.broadening is not None:
             variance = np.ascontiguousarray(np.stack([self._variance(x, pairs) for x in fields]).transpose(2, 0, 1))
-        return KnotData(np.array(fields), leaves, pairs, gap, slope, strength, variance)
+        data = KnotData(np.array(fields), leaves, pairs, gap, slope, strength, variance, pairs)
+        return self._split(data) if self.system.weak else data
+
+    def _split(self, data: KnotData) -> KnotData:
+        """Return a row for each line into which weak nuclei split a pair."""
+        k, n = data.gap.shape[1:]
+        electrons = sorted({one.electron for one in self.system.weak})
+        arrays = [np.concatenate(c) for c in zip(*(self.solved[x][4:] for x in data.fields), strict=True)]
+        seen = {one: Felt(*arrays[3 * i : 3 * i + 3]) for i, one in enumerate(electrons)}
+        along = (data.fields[:, None, None] * self.directions).reshape(-1, 3)
+        top = np.abs(data.strength).max(axis=(1, 2))
+        found = pattern(
+            self.system,
+            seen,
+            along,
+            data.pairs,
+            scale=self.request.scale * _steepness(data),
+            tolerance=self.request.tolerance,
+            strength=top / max(top.max(initial=0.0), 1e-300),
+        )
+        row = found.pair
+        offset, share = found.offset.reshape(-1, k, n), found.share.reshape(-1, k, n)
+        slope = data.slope[row]
+        if not found.gridded:
+            slope = slope + node_slopes(data.fields, offset)
+        pairs = (data.pairs[0][row], data.pairs[1][row])
+        variance = None if data.variance is None else data.variance[row]
+        return KnotData(
+            data.fields,
+            data.leaves,
+            pairs,
+            data.gap[row] + offset,
+            slope,
+            data.strength[row] * share,
+            variance,
+            data.pairs,
+        )
 
     def _relevant(self, fields: list[float]) -> Pairs:
         every = (self.lower, self.upper)
@@ -272,7 +319,7 @@ class FieldNodes:
             top = size if top is None else np.maximum(top, size)
         if low is None:
             return self.lower[:0], self.upper[:0]
-        margin = 0.05 * (high - low)
+        margin = 0.05 * (high - low) + self.extent
         keep = (low - margin <= 0) & (high + margin >= 0)
         if keep.any():
             keep &= top > 1e-3 * self.request.tolerance * top[keep].max()
@@ -292,6 +339,17 @@ class Branches:
     slope: Array
     variance: Array | None = None
 
+
+def _steepness(data: KnotData) -> float:
+    """Return how steeply strong level differences rise at the least, MHz/mT; folds count as `FLAT`."""
+    if not data.slope.size:
+        return FLAT
+    strong = np.abs(data.strength) > 0.05 * np.abs(data.strength).max()
+    return max(FLAT, float(np.quantile(np.abs(data.slope[strong]), 0.05)))
+
+
+FLAT = 8.0
+"""MHz/mT, about a quarter of a free spin's slope."""
 
 FWHM_PER_SIGMA = 2 * math.sqrt(2 * math.log(2))
 
