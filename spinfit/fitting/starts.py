@@ -47,6 +47,9 @@ _AT_NOISE = 1.2
 _LITTLE = 0.05
 # Engine error of a scan, in units of the noise.
 _SCAN_ERROR = 0.3
+# Standard deviations from which something in the residuals is no chance: 1 in 10^7 of one place.
+_STANDS_OUT = 5.3
+_MEDIAN_OF_NORMAL = 0.6745
 # Scans of single parameters for another basin: points on either side, how far the promise must go
 # below the present chi-squared, and how many times in a row such a promise is followed.
 _SCAN_POINTS = 12
@@ -387,14 +390,20 @@ def _good(problem: Problem, descent: Descent | None, view: View) -> bool:
 def _featureless(problem: Problem, point: Point, view: View) -> bool:
     """Whether the residuals look like noise that is correlated, rather than like a line in a wrong place.
 
-    A missed line makes the residuals large where the model's lines are, or large in few places.
+    A missed line makes the residuals large where the model's lines are, or, averaged over about a line
+    width, larger in some place than the rest of the trace lets expect of noise, white or not.
     """
     at = 0
-    for seen, basis in zip(view.seen, problem.fitted_basis(point, view), strict=True):
+    for trace, seen, basis in zip(point.traces, view.seen, problem.fitted_basis(point, view), strict=True):
         residual = point.residual[at : at + seen.field.size]
         at += seen.field.size
-        spread = float(np.mean(residual**2))
-        tails = float(np.mean(residual**4)) / max(spread**2, 1e-300) - 3
-        if residual_noise(residual, basis).uneven > 4 or tails > 0.5 + 5 * math.sqrt(24 / residual.size):
+        if residual_noise(residual, basis).uneven > _STANDS_OUT:
             return False
+        spacing = float(np.median(np.diff(seen.field))) * trace.field_scale
+        width = narrowest_width(point.species) / spacing
+        for points in {int(np.clip(width * factor, 3, residual.size // 8 + 1)) for factor in (1, 2, 4)}:
+            averaged = np.convolve(residual, np.full(points, 1 / points), mode="valid")
+            usual = float(np.median(np.abs(averaged))) / _MEDIAN_OF_NORMAL
+            if float(np.abs(averaged).max()) > _STANDS_OUT * usual:
+                return False
     return True
