@@ -92,31 +92,35 @@ class KnotData:
     variance: Array | None = None
     parents: Pairs | None = None
 
-    def inside(self, values: Array, leaf: int, row: Array, knot: Array, fields: Array) -> Array:
-        """Return strengths or variances inside a leaf, by the polynomial through the nodes about it."""
-        nodes, basis = stencil(self.fields, self.leaves[leaf, 1], fields)
-        return sum(basis[i] * values[row, node, knot] for i, node in enumerate(nodes))
 
-
-def stencil(nodes: Array, middle: int, fields: Array, most: int = 5) -> tuple[range, Array]:
-    """Return up to `most` nodes about one of them and their Lagrange polynomials at some fields.
+def stencil(nodes: Array, middle: NDArray[np.intp], fields: Array, most: int = 5) -> tuple[NDArray[np.intp], Array]:
+    """Return up to `most` nodes about one node for each field, and their Lagrange polynomials there.
 
     Strengths have no slopes to go by, and a parabola through a leaf's own three nodes is what
     would limit the accuracy.
 
+    Parameters
+    ----------
+    nodes : ndarray, shape (k,)
+    middle : ndarray of int, shape (q,)
+        Node about which to interpolate.
+    fields : ndarray, shape (q,)
+
     Returns
     -------
-    indices : range
-    basis : ndarray, shape (len(indices), *fields.shape)
+    indices : ndarray of int, shape (s, q)
+    basis : ndarray, shape (s, q)
     """
-    first = max(0, min(middle - most // 2, len(nodes) - most))
-    indices = range(first, min(first + most, len(nodes)))
-    x = nodes[indices.start : indices.stop]
-    basis = np.ones((len(x), *fields.shape))
-    for i in range(len(x)):
-        for j in range(len(x)):
+    size = min(most, len(nodes))
+    first = np.clip(middle - most // 2, 0, len(nodes) - size)
+    indices = first + np.arange(size)[:, None]
+    x = nodes[indices]
+    away = fields - x
+    basis = np.ones(x.shape)
+    for i in range(size):
+        for j in range(size):
             if i != j:
-                basis[i] *= (fields - x[j]) / (x[i] - x[j])
+                basis[i] *= away[j] / (x[i] - x[j])
     return indices, basis
 
 
@@ -377,30 +381,27 @@ def trace_branches(data: KnotData, chosen: NDArray[np.intp]) -> Branches:
         Rows of `data` with exactly one sign change at every knot.
     """
     n = data.gap.shape[2]
-    gap = data.gap[chosen]
-    field, weight, slope, variance = (np.zeros((len(chosen), n)) for _ in range(4))
-    positive = gap >= 0
-    for number, leaf in enumerate(data.leaves):
-        first, middle, last = leaf
-        early = positive[:, first] != positive[:, middle]
-        here = early | (positive[:, middle] != positive[:, last])
-        if not here.any():
-            continue
-        row, knot = np.nonzero(here)
-        half = 0.5 * (data.fields[last] - data.fields[first])
-        f = gap[row[None], leaf[:, None], knot[None]]
-        g = data.slope[chosen[row][None], leaf[:, None], knot[None]]
-        c = hermite.quintic(f, g * half)
-        left = early[row, knot]
-        t = hermite.refine(c, np.where(left, -1.0, 0.0), np.where(left, 0.0, 1.0), 4)
-        field[row, knot] = data.fields[middle] + half * t
-        slope[row, knot] = hermite.slope(c, t) / half
-        where = (number, chosen[row], knot, field[row, knot])
-        steep = np.maximum(np.abs(slope[row, knot]), 1e-300)
-        weight[row, knot] = data.inside(data.strength, *where) / steep
-        if data.variance is not None:
-            variance[row, knot] = data.inside(data.variance, *where) / (steep * FWHM_PER_SIGMA) ** 2
-    return Branches(chosen, field, weight, slope, None if data.variance is None else variance)
+    shape = (len(chosen), n)
+    positive = data.gap[chosen] >= 0
+    first, middle, last = data.leaves.T
+    early = positive[:, first] != positive[:, middle]
+    number = np.argmax(early | (positive[:, middle] != positive[:, last]), axis=1).ravel()
+    row, knot = np.repeat(chosen, n), np.tile(np.arange(n), len(chosen))
+    left = np.take_along_axis(early, number.reshape(len(chosen), 1, n), axis=1).ravel()
+    leaf = data.leaves[number].T
+    half = 0.5 * (data.fields[leaf[2]] - data.fields[leaf[0]])
+    c = hermite.quintic(data.gap[row, leaf, knot], data.slope[row, leaf, knot] * half)
+    t = hermite.refine(c, np.where(left, -1.0, 0.0), np.where(left, 0.0, 1.0), 4)
+    field = data.fields[leaf[1]] + half * t
+    slope = hermite.slope(c, t) / half
+    steep = np.maximum(np.abs(slope), 1e-300)
+    nodes, basis = stencil(data.fields, leaf[1], field)
+    weight = (basis * data.strength[row, nodes, knot]).sum(axis=0) / steep
+    variance = None
+    if data.variance is not None:
+        variance = (basis * data.variance[row, nodes, knot]).sum(axis=0) / (steep * FWHM_PER_SIGMA) ** 2
+        variance = variance.reshape(shape)
+    return Branches(chosen, field.reshape(shape), weight.reshape(shape), slope.reshape(shape), variance)
 
 
 def parabola(s: Array, t: Array) -> Array:

@@ -62,13 +62,9 @@ class _Landscape:
         nodes = self.leaves[leaf].T
         steps = self.steps[:, nodes, point]
         apart = np.hypot(parabola(steps[0], t), parabola(steps[1], t))
-        strength = np.empty(len(t))
-        for number in np.unique(leaf):
-            here = np.flatnonzero(leaf == number)
-            first, middle, last = self.leaves[number]
-            half = 0.5 * (self.fields[last] - self.fields[first])
-            indices, basis = stencil(self.fields, middle, self.fields[middle] + half * t[here])
-            strength[here] = sum(basis[i] * self.strength[node, point[here]] for i, node in enumerate(indices))
+        half = 0.5 * (self.fields[nodes[2]] - self.fields[nodes[0]])
+        indices, basis = stencil(self.fields, nodes[1], self.fields[nodes[1]] + half * t)
+        strength = (basis * self.strength[indices, point]).sum(axis=0)
         return strength, apart
 
 

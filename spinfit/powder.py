@@ -128,8 +128,8 @@ def _mesh_for(rings: Rings, branches: Branches, request: Request) -> list[tuple[
         return [(_ladder_size(t[0] if t[0] <= 4 * t[1] else t[1]), 1) for t in thetas.T]
     phis = _sizes(values, 2, probe.phis, request, even=rings.kind == "octant")
     phis = np.maximum(phis, _probe_azimuths(rings))
-    # smearing costs about three times as much a point
-    choice = np.where(np.prod([thetas[0], phis[0]], axis=0) <= 3 * thetas[1] * phis[1], 0, 1)
+    # smearing costs about twice as much a point
+    choice = np.where(np.prod([thetas[0], phis[0]], axis=0) <= 2 * thetas[1] * phis[1], 0, 1)
     row = np.arange(len(values))
     return [(_ladder_size(t), _ladder_size(p)) for t, p in zip(thetas[choice, row], phis[choice, row], strict=True)]
 
