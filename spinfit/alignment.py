@@ -34,6 +34,7 @@ from spinfit.exact import deposit
 from spinfit.hamiltonian import System
 from spinfit.lineshape import FieldGrid, Shape
 from spinfit.orientations import Mesh
+from spinfit.powder import powder
 from spinfit.resonance import find
 from spinfit.sheets import Histograms
 from spinfit.sweep import Sample
@@ -300,12 +301,17 @@ def mesh_directions(alignment: Alignment, symmetry: Symmetry, polar: int, azimut
     return directions, mesh.weights().ravel() * alignment.weight(directions, symmetry)
 
 
+BROAD = 0.1
+"""rad: features of the weight at least as broad are left to the powder average, which knows fewer directions."""
+
+
 def aligned(
     system: System, request: Request, grid: FieldGrid, shape: Shape, sample: Sample, angle: float | None = None
 ) -> tuple[Histograms, dict[str, object]]:
-    """Return the histograms of an aligned sample's resonance fields by plain sums, and what was used.
+    """Return the histograms of an aligned sample's resonance fields, and what was used.
 
-    Exact resonances are summed over the domain of the system's symmetry or, where order makes the
+    Ordinary order is a powder average with a weight.  Near-complete order confines the directions
+    so much that exact resonances are summed over the domain of the system's symmetry or, where order makes the
     weight narrow, over rings about the director.  The numbers of polar angles and of azimuths are
     doubled in turn until neither moves the spectrum by more than half the tolerance.
 
@@ -315,6 +321,9 @@ def aligned(
     report : dict
     """
     alignment, symmetry = Alignment.of(sample, angle), symmetry_of(system)
+    if alignment.feature >= BROAD:
+        histograms, used = powder(system, request, grid, alignment.weight)
+        return histograms, {"label": system.label, **vars(used), "maier_saupe": alignment.strength}
     rings = alignment.feature < NARROW
     # a single ring has no polar angles to refine; where the domain is a meridian there are no azimuths
     fixed_polar = rings and len(alignment.polar(2)[0]) == 1

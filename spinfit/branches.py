@@ -9,6 +9,7 @@ numbers, `trace_branches` follows the pairs that have exactly one resonance ever
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -48,6 +49,8 @@ class Request:
         K.
     broadening : Broadening or None
         What makes the widths of resonances differ.
+    weigh : callable or None
+        From directions, shape (m, 3), to the share of each in an aligned sample, mean 1.
     """
 
     frequency: float
@@ -59,6 +62,7 @@ class Request:
     microwave: str = "perpendicular"
     temperature: float | None = None
     broadening: Broadening | None = None
+    weigh: Callable[[Array], Array] | None = None
 
 
 @dataclass(frozen=True, eq=False)
@@ -133,6 +137,7 @@ class FieldNodes:
         self.solved: dict[float, tuple[Array, ...]] = {}
         self.leaves: list[tuple[float, float, float]] = []
         self.count = 0
+        self.weights = None if request.weigh is None else request.weigh(directions)
         self.extent = extent(system, request.high)
 
     def _solve(self, directions: Array, fields: list[float]) -> list[tuple[Array, ...]]:
@@ -170,7 +175,10 @@ class FieldNodes:
         lower, upper = pairs
         gap = energy[:, upper] - energy[:, lower] - self.request.frequency
         change = population_difference(energy, lower, upper, self.request.temperature)
-        return gap, slope[:, upper] - slope[:, lower], intensity[:, lower, upper] * change
+        strength = intensity[:, lower, upper] * change
+        if self.request.weigh is not None:
+            strength = strength * self.weights[:, None]
+        return gap, slope[:, upper] - slope[:, lower], strength
 
     def _variance(self, field: float, pairs: Pairs) -> Array:
         """Return the squared frequency width at one node, shape (n, p), MHz^2."""

@@ -9,7 +9,8 @@ appear, vanish or loop are continued as level differences and solved on the mesh
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass, field
+from collections.abc import Callable
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -23,7 +24,7 @@ from spinfit.loops import add_looping
 from spinfit.orientations import Mesh, Rings
 from spinfit.resonance import find
 from spinfit.sheets import Histograms, spacing
-from spinfit.symmetry import symmetry_of
+from spinfit.symmetry import Symmetry, symmetry_of
 
 Array = NDArray[np.float64]
 
@@ -48,7 +49,12 @@ class Report:
     notes: list[str] = field(default_factory=list)
 
 
-def powder(system: System, request: Request, grid: FieldGrid) -> tuple[Histograms, Report]:
+def powder(
+    system: System,
+    request: Request,
+    grid: FieldGrid,
+    weigh: Callable[[Array, Symmetry], Array] | None = None,
+) -> tuple[Histograms, Report]:
     """Return the histograms of resonance fields averaged over all directions.
 
     Parameters
@@ -57,6 +63,9 @@ def powder(system: System, request: Request, grid: FieldGrid) -> tuple[Histogram
     request : Request
     grid : FieldGrid
         Where resonances are deposited.
+    weigh : callable, optional
+        From directions, shape (m, 3), and the symmetry over whose images it averages, to the
+        share of each direction in an aligned sample, mean 1.
 
     Returns
     -------
@@ -66,6 +75,8 @@ def powder(system: System, request: Request, grid: FieldGrid) -> tuple[Histogram
     symmetry = symmetry_of(system)
     if request.broadening is not None:
         symmetry = request.broadening.lowered(symmetry, system)
+    if weigh is not None:
+        request = replace(request, weigh=lambda directions: weigh(directions, symmetry))
     report = Report(symmetry.kind)
     if symmetry.kind == "point":
         return _one_direction(system, request, grid, report)
