@@ -187,7 +187,8 @@ def _number(value: int) -> str:
 
 def _axis_frame(axis: tuple[float, float, float]) -> Tensor:
     """Return a right-handed frame whose z is along `axis`, as columns."""
-    z = np.array(axis) / np.linalg.norm(axis)
+    z = np.array(axis) / np.abs(axis).max()  # first, lest the squares of tiny components underflow
+    z /= np.linalg.norm(z)
     x = np.cross(np.eye(3)[np.argmin(np.abs(z))], z)
     x /= np.linalg.norm(x)
     return np.column_stack([x, np.cross(z, x), z])

@@ -189,7 +189,7 @@ def test_missing_labels_fall_back():
 @pytest.mark.parametrize(
     ("label", "key", "value", "noted"),
     [
-        ("##.MICROWAVE FREQUENCY= 34.079168", "frequency", 34079.168, True),
+        ("##.MICROWAVE FREQUENCY= 34.079168", "frequency", 34079.168, False),
         ("##.MICROWAVE FREQUENCY= 9400.05", "frequency", 9400.05, True),
         ("##.MICROWAVE_FREQUENCY= 9.4 GHz", "frequency", 9400.0, False),
         ("##.MICROWAVE FREQUENCY= 9.4E+09", "frequency", 9400.0, True),

@@ -254,7 +254,10 @@ def _conditions(block: _Block, notes: list[Note]) -> dict[str, Any]:
             "ANGLE": "angle",
         }.get(bare)
         if key and number:
-            put(header, notes, key, number[1], number[2])
+            unit = number[2]
+            if bare == "MICROWAVEFREQUENCY" and unit is None and float(number[1].replace(",", ".")) < 1e3:
+                unit = "GHz"  # the label has no place for a unit, and a number below 1000 can be nothing else
+            put(header, notes, key, number[1], unit)
         elif bare in ("DETECT", "MICROWAVE"):
             understand(f"{bare.lower()} {text.lower()}", header, notes)
     for line in [*block.comments, *block.labels.get("COMMENTS", ("", 0))[0].split("\n")]:
