@@ -11,6 +11,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -260,6 +261,9 @@ class Species:
         Sublevels at zero field, low to high, in place of a temperature.
     ion : str or None
         Such as "Cu2+": used for starts and for the comparison with the free ion.
+    crystal_field : frozen data or None
+        What the one spin follows from, where it was given so; `spins` holds what it leads to.  Physics looks
+        at `spins` alone.
     """
 
     name: str = "species"
@@ -271,6 +275,7 @@ class Species:
     amount: float = 1.0
     populations: tuple[float, ...] | None = None
     ion: str | None = None
+    crystal_field: Any = None
 
     def __post_init__(self) -> None:
         if not self.spins:

@@ -26,7 +26,7 @@ from pathlib import Path
 from typing import Any
 
 from spinfit.errors import InputError, nearest
-from spinfit.files.toml_table import Table, load_toml
+from spinfit.files.toml_table import Given, Table, load_toml
 from spinfit.ion.crystal_field import (
     CrystalField,
     Ligand,
@@ -42,6 +42,7 @@ from spinfit.ion.model import SPACES, IonModel, racah_to_slater
 from spinfit.ion.names import Shell, parse_name
 from spinfit.ion.orbitals import REAL_ORBITALS
 from spinfit.ion.quench import MeasuredG, parse_measured
+from spinfit.ion.species_field import FACTORS, LARGEST_FACTOR, SpeciesField, species_field
 
 FORMS = ("orbitals", "octahedral", "ligand", "geometry", "wybourne", "stevens")
 FIELD_KEYS = (*FORMS, "zeta", "reduction", "covalency", "racah", "slater", "space", "source")
@@ -121,8 +122,59 @@ def model_from_table(data: Mapping[str, Any], ion: str, *, place: str = "crystal
     return _model(table, parse_name(ion).name, shell)
 
 
+def field_from_table(
+    data: object, ion: str, *, place: str, path: tuple[str | int, ...] = (), given: Given | None = None
+) -> SpeciesField:
+    """Return the crystal field of a species, and note the unit of each of its values.
+
+    Parameters
+    ----------
+    path : tuple
+        Where the field stands in the model.
+    given : dict, optional
+        Receives the units, by path.
+
+    Raises
+    ------
+    InputError
+    """
+    noted: Given = {}
+    table = Table(data, place, FIELD_KEYS, given=noted)
+    try:
+        shell = open_shell(ion)
+    except InputError as error:
+        raise InputError(error.found, error.right, place=place) from None
+    base, covalency = _bare_model(table, parse_name(ion).name, shell)
+    racah = None
+    if "racah" in table and base.slater:
+        F2, F4 = base.slater[2], base.slater[4]
+        racah = (F2 - 5 * F4 / 9) / 49, 5 * F4 / 63  # the inverse of racah_to_slater
+    field = species_field(base, covalency=covalency, racah=racah)
+    for k, name in enumerate(field.names):
+        unit = _unit_of(name, noted)
+        if given is not None:
+            given[(*path, "values", k)] = unit
+    return field
+
+
+def _unit_of(name: str, noted: Given) -> str:
+    """Return the unit in which the table gave a parameter, else that of wave numbers."""
+    if name in FACTORS:
+        return ""
+    # e_sigma_O stands under the key e_sigma, e_pi under e_pi or e_pi_x.
+    keys = sorted((path for path in noted if noted[path]), key=lambda path: path[-1] != name)
+    alike = [path for path in keys if name.startswith(str(path[-1])) or str(path[-1]).startswith(f"{name}_")]
+    return noted[alike[0]] if alike else "cm^-1"
+
+
 def _model(table: Table, name: str, shell: Shell) -> IonModel:
     """Build the model from a checked table."""
+    model, covalency = _bare_model(table, name, shell)
+    return model if covalency is None else model.with_covalency(covalency)
+
+
+def _bare_model(table: Table, name: str, shell: Shell) -> tuple[IonModel, float | None]:
+    """Build the model without its covalency, and return that beside it."""
     field = _field(table, shell)
     zeta = table.quantity("zeta", "energy")
     if zeta is None:
@@ -142,19 +194,22 @@ def _model(table: Table, name: str, shell: Shell) -> IonModel:
             f'write {form}, or space = "term" for its ground term alone',
             place=table.place,
         )
-    space = space or default_space(shell, slater)
-    model = IonModel(shell, zeta, slater, field, space=space, name=name)
-    for key in ("reduction", "covalency"):
-        value = table.number(key)
-        if value is not None and not 0 < value <= 2:
-            raise table.error(key, f"{value:g}", "write a factor above 0 and near 1")
-        if value is not None:
-            model = replace(model, reduction=value) if key == "reduction" else model.with_covalency(value)
-    if "reduction" in table and "covalency" in table:
+    model = IonModel(shell, zeta, slater, field, space=space or default_space(shell, slater), name=name)
+    factors = {key: _factor(table, key) for key in FACTORS}
+    if None not in factors.values():
         raise table.error(
             "covalency", "stands beside reduction", "write one: reduction acts on L, covalency on L and zeta"
         )
-    return model
+    if factors["reduction"] is not None:
+        model = replace(model, reduction=factors["reduction"])
+    return model, factors["covalency"]
+
+
+def _factor(table: Table, key: str) -> float | None:
+    value = table.number(key)
+    if value is not None and not 0 < value <= LARGEST_FACTOR:
+        raise table.error(key, f"{value:g}", "write a factor above 0 and near 1")
+    return value
 
 
 def _slater(table: Table, name: str, shell: Shell) -> dict[int, float]:
@@ -164,7 +219,7 @@ def _slater(table: Table, name: str, shell: Shell) -> dict[int, float]:
     if "racah" in table:
         if shell.l != 2:
             raise table.error("racah", f"does not belong to {shell}", "write slater = {F2 = ..., F4 = ..., F6 = ...}")
-        inner = Table(table.table("racah"), table.at("racah"), ("B", "C"))
+        inner = _inner(table, "racah", ("B", "C"))
         values = []
         for key in ("B", "C"):
             inner.require(key, '"900 cm^-1"')
@@ -172,7 +227,7 @@ def _slater(table: Table, name: str, shell: Shell) -> dict[int, float]:
         return racah_to_slater(*values)
     if "slater" in table:
         keys = tuple(f"F{k}" for k in range(2, 2 * shell.l + 1, 2))
-        inner = Table(table.table("slater"), table.at("slater"), keys)
+        inner = _inner(table, "slater", keys)
         for key in keys:
             inner.require(key, '"60000 cm^-1"')
         return {int(key[1:]): inner.quantity(key, "energy") or 0.0 for key in keys}
@@ -208,16 +263,21 @@ def _field(table: Table, shell: Shell) -> CrystalField:
         raise InputError(error.found, error.right, place=place) from None
 
 
+def _inner(table: Table, key: str, keys: tuple[str, ...]) -> Table:
+    """Return an inner table that notes its units beside the outer one's."""
+    return Table(table.table(key), table.at(key), keys, path=(*table.path, key), given=table.given)
+
+
 def _orbitals(table: Table, shell: Shell, form: str) -> CrystalField:
     known = tuple(REAL_ORBITALS[shell.l])
-    inner = Table(table.table(form), table.at(form), known)
+    inner = _inner(table, form, known)
     return from_orbitals(shell.l, {key: inner.quantity(key, "energy") or 0.0 for key in inner.data})
 
 
 def _octahedral(table: Table, shell: Shell, form: str) -> CrystalField:
     if shell.l != 2:
         raise table.error(form, f"is a form for d shells, not {shell}", "give wybourne or stevens coefficients")
-    inner = Table(table.table(form), table.at(form), ("ten_Dq", "Ds", "Dt"))
+    inner = _inner(table, form, ("ten_Dq", "Ds", "Dt"))
     inner.require("ten_Dq", '"12000 cm^-1"')
     values = [inner.quantity(key, "energy") or 0.0 for key in ("ten_Dq", "Ds", "Dt")]
     return from_octahedral(*values)
@@ -225,7 +285,7 @@ def _octahedral(table: Table, shell: Shell, form: str) -> CrystalField:
 
 def _coefficients(table: Table, shell: Shell, form: str) -> CrystalField:
     keys = {parameter_name(k, q): (k, q) for k in range(2, 2 * shell.l + 1, 2) for q in range(-k, k + 1)}
-    inner = Table(table.table(form), table.at(form), tuple(keys))
+    inner = _inner(table, form, tuple(keys))
     if not inner.data:
         raise table.error(form, "is empty", 'write coefficients such as B4_0 = "-1750 cm^-1"')
     values = {keys[key]: inner.quantity(key, "energy") or 0.0 for key in inner.data}
@@ -251,7 +311,7 @@ def _ligands(table: Table, shell: Shell, form: str) -> CrystalField:
     """Read [[ligand]] tables: a position or two angles, with e_sigma and e_pi."""
     ligands = []
     for place, entry in table.tables(form):
-        inner = Table(entry, place, LIGAND_KEYS)
+        inner = Table(entry, place, LIGAND_KEYS, path=(place,), given=table.given)
         if ("position" in inner) == ("angles" in inner):
             raise InputError(
                 "needs exactly one of position and angles",
@@ -270,7 +330,7 @@ def _ligands(table: Table, shell: Shell, form: str) -> CrystalField:
 
 def _geometry(table: Table, shell: Shell, form: str) -> CrystalField:
     """Read [geometry]: an xyz-style list (symbol x y z a line, the metal first) and bonds by symbol."""
-    inner = Table(table.table(form), table.at(form), ("xyz", "bonds"))
+    inner = _inner(table, form, ("xyz", "bonds"))
     inner.require("xyz", '"""\nCu 0 0 0\nO 0 0 2.1\n"""')
     text = inner.data["xyz"]
     if not isinstance(text, str):
@@ -287,7 +347,9 @@ def _geometry(table: Table, shell: Shell, form: str) -> CrystalField:
     for symbol, entry in bonds.items():
         if symbol not in known:
             raise InputError(f'no atom "{symbol}" in xyz', nearest(symbol, known), place=inner.at("bonds"))
-        energies[symbol] = _bond(Table(entry, f"{inner.at('bonds')}.{symbol}", BOND_KEYS))
+        energies[symbol] = _bond(
+            Table(entry, f"{inner.at('bonds')}.{symbol}", BOND_KEYS, path=(symbol,), given=table.given)
+        )
     missing = [symbol for symbol in known if symbol not in energies]
     if missing:
         raise InputError(

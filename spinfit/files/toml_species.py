@@ -9,8 +9,11 @@ from fractions import Fraction
 from typing import Any
 
 from spinfit.errors import InputError, nearest
+from spinfit.files.toml_crystal_field import field_from_table
 from spinfit.files.toml_table import Given, Table, describe, is_finite, is_number
 from spinfit.ion.lande import lookup
+from spinfit.ion.parameters import start_parameters
+from spinfit.ion.species_field import SpeciesField, spin_of
 from spinfit.isotopes import isotope, natural
 from spinfit.species import NO_TILT, Exchange, Nucleus, Species, Spin, Spread, Width
 from spinfit.units import G_ELECTRON
@@ -21,7 +24,7 @@ SPIN_KEYS = ("S", "g", "g_tilt", "D", "E", "rhombicity", "D_tilt", "stevens")
 SPECIES_KEYS = (
     *("name", "ion", "amount", "populations"),
     *SPIN_KEYS,
-    *("spin", "exchange", "nucleus", "width", "spread"),
+    *("crystal_field", "spin", "exchange", "nucleus", "width", "spread"),
 )
 NUCLEUS_KEYS = ("isotope", "element", "name", "A", "A_tilt", "P", "P_tilt", "count", "couples_to", "treat")
 EXCHANGE_KEYS = ("between", "J", "dipolar", "tilt", "antisymmetric")
@@ -34,6 +37,8 @@ TENSOR = (1, 2, 3)
 LARGEST_DIMENSION = 4096
 """One complex matrix of this size takes 0.27 GB; several are needed at once."""
 MOST_NUCLEI = 1000
+PARTED = 0.01
+"""Half the distance in g that is put between equal components of a start: about 1.5 mT at 9.5 GHz."""
 
 
 def read_species(tables: Sequence[tuple[str, Any]], given: Given, *, form: str, auto: bool) -> tuple[Species, ...]:
@@ -68,16 +73,12 @@ def read_species(tables: Sequence[tuple[str, Any]], given: Given, *, form: str, 
 
 
 def _species(table: Table, name: str, form: str, auto: bool) -> Species:
-    spins = _spins(table, auto)
+    ion = _ion(table)
+    crystal_field = _crystal_field(table, ion)
+    spins = _spins(table, auto, ion) if crystal_field is None else (_spin_of_field(table, crystal_field),)
     nuclei = _nuclei(table, len(spins))
     exchange = _exchange(table, len(spins))
     _check_dimension(table, spins, nuclei)
-    ion = table.text("ion")
-    if ion is not None:
-        try:
-            lookup(ion)
-        except InputError as error:
-            raise InputError(error.found, error.right, place=table.at("ion")) from None
     amount = table.number("amount")
     if amount is not None and amount < 0:
         raise table.error("amount", f"{amount:g}", "an amount is not negative")
@@ -94,7 +95,45 @@ def _species(table: Table, name: str, form: str, auto: bool) -> Species:
         amount=1.0 if amount is None else amount,
         populations=_populations(table, spins),
         ion=ion,
+        crystal_field=crystal_field,
     )
+
+
+def _ion(table: Table) -> str | None:
+    ion = table.text("ion")
+    if ion is not None:
+        try:
+            lookup(ion)
+        except InputError as error:
+            raise InputError(error.found, error.right, place=table.at("ion")) from None
+    return ion
+
+
+def _crystal_field(table: Table, ion: str | None) -> SpeciesField | None:
+    """Read ``[species.crystal_field]``, which stands in place of g, D and E."""
+    data = table.table("crystal_field")
+    if data is None:
+        return None
+    for key in SPIN_KEYS[1:] + ("spin",):
+        if key in table:
+            raise table.error(key, "stands beside crystal_field, from which it follows", "take one of the two out")
+    if ion is None:
+        table.require("ion", '"Cu2+" (the crystal field acts on it)')
+    where = (*table.path, "crystal_field")
+    return field_from_table(data, ion, place=table.at("crystal_field"), path=where, given=table.given)
+
+
+def _spin_of_field(table: Table, field: SpeciesField) -> Spin:
+    """Return the spin that a crystal field leads to; S may stand in the file and must then agree."""
+    place = table.at("crystal_field")
+    try:
+        spin = spin_of(field)
+    except InputError as error:
+        raise InputError(error.found, error.right, place=place) from None
+    if "S" in table and quantum_number(table, "S") != spin.S:
+        found = f"{describe(table.data['S'])}, but the ground state of this crystal field has S = {spin.S:g}"
+        raise table.error("S", found, "take S out, or change the field")
+    return spin
 
 
 def _build(table: Table, kind: Any, **values: Any) -> Any:
@@ -109,10 +148,10 @@ def _build(table: Table, kind: Any, **values: Any) -> Any:
 # Spins -------------------------------------------------------------------------------------------
 
 
-def _spins(table: Table, auto: bool) -> tuple[Spin, ...]:
+def _spins(table: Table, auto: bool, ion: str | None) -> tuple[Spin, ...]:
     inner = table.tables("spin")
     if not inner:
-        return (_spin(_moved(table, (*table.path, "spins", 0)), auto),)
+        return (_spin(_moved(table, (*table.path, "spins", 0)), auto, ion),)
     for key in SPIN_KEYS:
         if key in table:
             right = f"move {key} into one of the [[species.spin]] tables"
@@ -149,14 +188,28 @@ def quantum_number(table: Table, key: str) -> float:
     return number
 
 
-def _spin(table: Table, auto: bool) -> Spin:
+def _start_of_g(S: float, ion: str | None) -> tuple[float, ...]:
+    """Return g to begin with: that of the ion in its typical field, else the free electron's.
+
+    Three components where they can be told apart, one where D hides them.  Typical fields are axial, and
+    where two components coincide chi-squared has no slope that would part them: they are parted a little.
+    """
+    found = None if ion is None else start_parameters(ion, S)
+    if found is None:
+        return (G_ELECTRON,) * (3 if S == 0.5 else 1)
+    g = found.as_spin().g
+    if S != 0.5:
+        return (sum(g) / 3,)
+    return (g[0] - PARTED, g[1] + PARTED, g[2]) if abs(g[0] - g[1]) < PARTED else g
+
+
+def _spin(table: Table, auto: bool, ion: str | None = None) -> Spin:
     S = quantum_number(table, "S")
     if not auto:
         table.require("g", "2.0 (or [perpendicular, parallel] or [x, y, z])")
     g = table.numbers("g", TENSOR, "g = [2.05, 2.06, 2.25]")
     if g is None:
-        # To be guessed: three components where they can be told apart, one where D hides them.
-        g = (G_ELECTRON,) * 3 if S == 0.5 else (G_ELECTRON,)
+        g = _start_of_g(S, ion)
     if not any(g):
         raise table.error("g", "is 0 in every direction", "write g = 2.0 or the like")
     if max(abs(v) for v in g) > 1000:
@@ -269,7 +322,7 @@ def _nucleus(table: Table, spins: int) -> Nucleus:
     if P is not None and not any(P) and len(P) == 1:
         P = None
     label = table.name("name")
-    if label in ("width", "spread", "stevens") or (label or "x").isdigit():
+    if label in ("width", "spread", "stevens", "crystal_field") or (label or "x").isdigit():
         raise table.error("name", f'"{label}" means something else', "choose another name")
     couples_to = table.integer("couples_to", 1, 1000)
     if couples_to is not None and couples_to > spins:

@@ -10,10 +10,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spinfit.errors import InputError
+from spinfit.fitting.crystal_fields import FieldResponse, derived_values, field_notes, responses_of, sharpened
 from spinfit.fitting.data import Job
 from spinfit.fitting.outcome import Note, Outcome
 from spinfit.fitting.residuals import Problem, Progress, View, full_view
 from spinfit.fitting.signals import Simulate
+from spinfit.fitting.signs import restored
 from spinfit.fitting.solve import Descent, Goal, Interrupted, descend
 from spinfit.fitting.starts import Search
 from spinfit.fitting.summary import outcome_of
@@ -94,7 +96,7 @@ def _search(problem: Problem, rough: View, progress: Progress | None) -> tuple[D
         found = search.run(problem.start, automatic=automatic)
         view = full_view(problem.job.traces, problem.noises, engine_tolerance(problem))
         fine = descend(problem, view, found.point.free, goal=Goal(central=True), progress=progress)
-        return fine, view, True
+        return fine if automatic else restored(problem, view, fine, progress), view, True
     except Interrupted as stop:
         return _best_so_far(problem, rough, search.best, None if stop.point is None else stop.point.free), rough, False
     except KeyboardInterrupt:
@@ -114,11 +116,13 @@ def _conclude(problem: Problem, view: View, descent: Descent, *, finished: bool,
     """Uncertainties, notes and everything else at the end of a search."""
     at_limit = limits_reached(problem, descent.point.free)
     spread = None
+    responses, pure = _responses(problem, descent), np.zeros(len(problem.names), dtype=bool)
     if finished and problem.names:
         # A descent that converged computed its last Jacobian a few hundredths of an uncertainty away.
         jacobian = descent.jacobian if descent.converged else None
         if jacobian is None:
             jacobian = problem.jacobian(descent.point, view, central=True)
+        jacobian, pure = sharpened(problem, view, descent.point, jacobian, responses)
         descent = replace(descent, jacobian=jacobian)
         if np.all(np.isfinite(jacobian)):
             spread = spread_of(problem, view, descent.point, jacobian, at_limit)
@@ -127,6 +131,9 @@ def _conclude(problem: Problem, view: View, descent: Descent, *, finished: bool,
         notes.append(Note("unfinished", "The fit was stopped; the values are the best so far and have no uncertainty."))
         descent = replace(descent, converged=False)
     notes += notes_after(problem, view, descent, spread, at_limit)
+    if spread is not None and descent.jacobian is not None:
+        chi2 = descent.point.chi2 / max(view.points - view.linear - len(problem.names), 1)
+        notes += field_notes(problem, descent.jacobian, pure, at_limit, responses, chi2)
     notes += [_engine_note(warning) for warning in problem.signals.warnings]
     return outcome_of(
         problem,
@@ -137,7 +144,16 @@ def _conclude(problem: Problem, view: View, descent: Descent, *, finished: bool,
         notes,
         finished=finished,
         seconds=time.perf_counter() - begun,
+        derived=derived_values(problem, view, descent.point, spread, descent.jacobian, at_limit, responses),
     )
+
+
+def _responses(problem: Problem, descent: Descent) -> list[FieldResponse]:
+    """Derivatives of the crystal fields' models; none where a ground state is about to change its kind."""
+    try:
+        return responses_of(problem, descent.point)
+    except InputError:
+        return []
 
 
 def limits_reached(problem: Problem, free: Array) -> NDArray[np.bool_]:

@@ -20,7 +20,8 @@ class Value:
     `uncertainty` is one standard deviation, the quadrature sum of `uncertainty_noise` (from the
     covariance at the trace's noise) and `uncertainty_field` (from the stated uncertainties of the
     field axis and of the frequency); all None when the parameter was not varied or when no
-    covariance could be had.
+    covariance could be had.  A `derived` value follows from varied ones through a model and cannot be
+    varied itself (g of a species that is given by its crystal field); its uncertainty is propagated.
     """
 
     value: float
@@ -32,6 +33,7 @@ class Value:
     at_limit: bool = False
     tied: bool = False
     start: float | None = None
+    derived: bool = False
 
 
 @dataclass(frozen=True)
@@ -90,7 +92,8 @@ class Outcome:
     Attributes
     ----------
     parameters : mapping of name -> Value
-        All parameters of the model, in file order, varied or not.
+        All parameters of the model, in file order, varied or not; g, D and E that follow from a crystal
+        field stand after its parameters.
     correlation_names, correlation_matrix
         Of the varied parameters; shape (n, n); empty when there is no covariance.
     fractions : mapping of species name -> Value

@@ -21,6 +21,7 @@ from typing import Any
 from spinfit.errors import InputError, nearest
 from spinfit.fitting.data import Trace
 from spinfit.fitting.slots import CORRECTIONS, FREE, Path, Slot, sample_slots, species_slots, trace_slots
+from spinfit.ion.species_field import spin_of
 from spinfit.species import Species
 from spinfit.sweep import Sample
 from spinfit.units import from_unit, to_unit
@@ -30,6 +31,8 @@ DEFAULT_UNITS = {"energy": "MHz", "field": "mT", "angle": "deg", "number": ""}
 
 WORD = re.compile(r"[A-Za-z0-9_]+")
 """What a part of a name is made of."""
+
+_FROM_FIELD = re.compile(r"g(_x|_y|_z|_perp|_par)?|D|E|rhombicity|[gD]_tilt(_alpha|_beta|_gamma)?")
 
 
 @dataclass(frozen=True)
@@ -212,12 +215,25 @@ class Binding:
             else:
                 _put(tree, path, float(value))
         model = _rebuild(self._model, tree)
+        if any(one.crystal_field is not None for one in model.species):
+            model = replace(model, species=tuple(map(_resolved, model.species)))
         traces = list(model.traces)
         for (how, which, key), value in corrections:
             for n, trace in enumerate(traces):
                 if (n if how == "turn" else trace.group) == which:
                     traces[n] = _correct(trace, str(key), value)
         return model.species, model.sample, tuple(traces)
+
+
+def _resolved(species: Species) -> Species:
+    """Return a species with the spin that its crystal field leads to, if it has one."""
+    if species.crystal_field is None:
+        return species
+    try:
+        spin = spin_of(species.crystal_field, species.spins[0].S)
+    except InputError as error:
+        raise InputError(error.found, error.right, place=f"{species.name}.crystal_field") from None
+    return replace(species, spins=(spin,))
 
 
 def _correct(trace: Any, key: str, value: float) -> Any:
@@ -264,6 +280,8 @@ def unknown(name: str, parameters: Mapping[str, Parameter], *, place: str | None
         right = f"this tensor was given as {parts}"
     elif twin in parameters:
         right = f"the model was given {twin}"
+    elif _FROM_FIELD.fullmatch(last) and f"{head}.crystal_field" in groups:
+        right = f'it follows from the crystal field: vary "{head}.crystal_field", or single parameters of it'
     return InputError(f'"{name}" is no parameter of this model', right, place=place)
 
 

@@ -7,12 +7,14 @@ parameters themselves are made of them in `spinfit.fitting.parameters`.
 from __future__ import annotations
 
 import math
+import re
 from collections import Counter
 from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass, replace
 from typing import Any
 
 from spinfit.errors import InputError
+from spinfit.ion.species_field import FACTORS, LARGEST_FACTOR, SpeciesField
 from spinfit.species import Exchange, Nucleus, Species, Spin
 from spinfit.sweep import Sample
 
@@ -23,7 +25,7 @@ CORRECTIONS = {"field_offset": 0.0, "field_scale": 1.0, "phase": 0.0, "angle_zer
 """What a trace, or a group of traces, may have corrected, with the value that changes nothing."""
 
 # Parts that mean something else after a species' name.
-_RESERVED_FOR_NUCLEI = ("width", "spread", "stevens")
+_RESERVED_FOR_NUCLEI = ("width", "spread", "stevens", "crystal_field")
 
 Path = tuple[str | int, ...]
 
@@ -79,6 +81,23 @@ def _spin_slots(prefix: str, path: Path, spin: Spin) -> Iterator[Slot]:
         name = f"{prefix}.B{k}_{'m' if q < 0 else ''}{abs(q)}"
         where = (*path, "stevens", n, 1)
         yield Slot(name, where, "energy", 10.0 ** (1 - k / 2), relative=0.05, groups=(f"{prefix}.stevens",))
+
+
+def field_label(name: str) -> str:
+    """Return a crystal-field parameter's name as a part of a parameter's: "x2-y2" is "x2_y2", as - is a minus."""
+    return re.sub(r"\W+", "_", name).strip("_")
+
+
+def _field_slots(prefix: str, path: Path, field: SpeciesField) -> Iterator[Slot]:
+    """Yield the numbers of a crystal field; the group `prefix` is the field itself without zeta and the like."""
+    for k, name in enumerate(field.names):
+        where, label = (*path, "values", k), f"{prefix}.{field_label(name)}"
+        if name in FACTORS:
+            yield Slot(label, where, "number", 0.02, limits=(0.0, LARGEST_FACTOR))
+        else:
+            limits = NOT_NEGATIVE if name == "zeta" else FREE
+            groups = (prefix,) if name in field.own else ()
+            yield Slot(label, where, "energy", 0.05 * field.scale(name), limits=limits, groups=groups)
 
 
 def nucleus_labels(nuclei: Sequence[Nucleus]) -> tuple[str, ...]:
@@ -152,7 +171,10 @@ def _spread_slots(name: str, path: Path, species: Species) -> Iterator[Slot]:
 
 def species_slots(index: int, species: Species) -> Iterator[Slot]:
     name, path = species.name, ("species", index)
-    for n, spin in enumerate(species.spins):
+    field = species.crystal_field
+    if field is not None:
+        yield from _field_slots(f"{name}.crystal_field", (*path, "crystal_field"), field)
+    for n, spin in enumerate(() if field is not None else species.spins):
         prefix = name if len(species.spins) == 1 else f"{name}.{n + 1}"
         yield from _spin_slots(prefix, (*path, "spins", n), spin)
     for n, (label, nucleus) in enumerate(zip(nucleus_labels(species.nuclei), species.nuclei, strict=True)):

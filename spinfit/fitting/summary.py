@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 import platform
+from collections.abc import Mapping
 
 import lmfit
 import numpy as np
@@ -12,7 +13,7 @@ from numpy.typing import NDArray
 
 from spinfit import __version__
 from spinfit.fitting.data import Trace
-from spinfit.fitting.outcome import Curves, Note, Outcome, Quality
+from spinfit.fitting.outcome import Curves, Note, Outcome, Quality, Value
 from spinfit.fitting.residuals import Point, Problem, Seen, View, known_columns
 from spinfit.fitting.signals import true_field
 from spinfit.fitting.solve import Descent
@@ -101,6 +102,18 @@ def provenance_of(problem: Problem) -> dict[str, object]:
     return {"input": inputs, "versions": versions, "job": job.text}
 
 
+def _with_derived(values: Mapping[str, Value], derived: Mapping[str, Value]) -> dict[str, Value]:
+    """Put each species' derived values behind the last parameter of its crystal field."""
+    last = {name.split(".")[0]: name for name in values if ".crystal_field." in name}
+    out: dict[str, Value] = {}
+    for name, value in values.items():
+        out[name] = value
+        species = name.split(".")[0]
+        if last.get(species) == name:
+            out |= {key: one for key, one in derived.items() if key.split(".")[0] == species}
+    return out
+
+
 def outcome_of(
     problem: Problem,
     view: View,
@@ -111,10 +124,11 @@ def outcome_of(
     *,
     finished: bool,
     seconds: float,
+    derived: Mapping[str, Value] | None = None,
 ) -> Outcome:
-    """Put everything a fit found together."""
+    """Put everything a fit found together; `derived` values stand after their species' crystal field."""
     point = descent.point
-    parameters = reported_values(problem, point.free, spread, at_limit)
+    parameters = _with_derived(reported_values(problem, point.free, spread, at_limit), derived or {})
     known = np.zeros(len(problem.names), dtype=bool) if spread is None else spread.known
     names = tuple(name for name, ok in zip(problem.names, known, strict=True) if ok)
     amounts = [(one.name, one.amount) for one in point.species]

@@ -92,9 +92,30 @@ def spread_of(problem: Problem, view: View, point: Point, jacobian: Array, at_li
         Parameters on a limit: the others' uncertainties are those with these held there.
     """
     known, blind = _seen_parameters(problem, jacobian, at_limit)
+    return _covariances(problem, view, point, jacobian, known, blind)
+
+
+def _covariances(
+    problem: Problem,
+    view: View,
+    point: Point,
+    jacobian: Array,
+    known: NDArray[np.bool_],
+    blind: tuple[tuple[str, ...], ...] = (),
+    cut: float = 0.0,
+) -> Covariances:
+    """Carry noise, field axis and frequency to the parameters in `known`.
+
+    Parameters
+    ----------
+    cut : float
+        Directions whose singular value is at most this part of the largest are left where they are.
+    """
     used = jacobian[:, known]
     size = np.linalg.norm(used, axis=0)
     left, singular, right = np.linalg.svd(used / size, full_matrices=False) if used.shape[1] else _nothing(used)
+    kept = singular > cut * singular.max(initial=0.0)
+    left, singular, right = left[:, kept], singular[kept], right[kept]
     response = (right.T / singular) @ left.T / size[:, None]
     blocks = _blocks(view)
     linear = problem.fitted_basis(point, view)
@@ -112,6 +133,39 @@ def spread_of(problem: Problem, view: View, point: Point, jacobian: Array, at_li
     return Covariances(
         known, _filled(noise, known), moved.T @ moved, _filled(white, known), moved, sources, blind, tuple(traces)
     )
+
+
+def propagated_to(
+    problem: Problem,
+    view: View,
+    point: Point,
+    jacobian: Array,
+    used: NDArray[np.bool_],
+    slopes: Sequence[Array],
+    *,
+    cut: float,
+) -> list[tuple[float | None, float | None]]:
+    """Noise and field part of the uncertainty of quantities that follow from the parameters.
+
+    Parameters
+    ----------
+    used : ndarray of bool, shape (k,)
+        Parameters that are free; not each need be determined by itself.
+    slopes : sequence of ndarray, shape (k,)
+        Derivative of each quantity; none along directions that the data do not see.
+    cut : float
+        Such directions have singular values, relative to the largest, at most this large.
+
+    Returns
+    -------
+    list of (noise, field)
+        None where nothing moves a quantity.
+    """
+    used = used & (np.linalg.norm(jacobian, axis=0) > 0)
+    if not used.any():
+        return [(None, None)] * len(slopes)
+    spread = _covariances(problem, view, point, jacobian, used, cut=cut)
+    return [_parts(np.where(used, slope, 0.0), spread) for slope in slopes]
 
 
 def _filled(inner: Array, known: NDArray[np.bool_]) -> Array:

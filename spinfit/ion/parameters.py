@@ -17,7 +17,7 @@ from spinfit.errors import InputError
 from spinfit.ion.defaults import default_model
 from spinfit.ion.model import IonModel, solve_ground
 from spinfit.ion.quench import ground_state
-from spinfit.ion.tensors import SpinHamiltonian, d_and_e
+from spinfit.ion.tensors import SpinHamiltonian, d_and_e, principal_axes
 from spinfit.species import Angles, Spin
 
 
@@ -48,7 +48,7 @@ class SpinParameters:
     def as_spin(self) -> Spin:
         """Return a `species.Spin` with principal values and tilts."""
         values, axes = _principal(self.g)
-        D, E, D_axes = d_and_e(self.D) if self.S >= 1 else (0.0, 0.0, np.eye(3))
+        D, E, D_axes = _zero_field(self.D) if self.S >= 1 else (0.0, 0.0, np.eye(3))
         return Spin(
             S=self.S,
             g=(float(values[0]), float(values[1]), float(values[2])),
@@ -59,15 +59,30 @@ class SpinParameters:
         )
 
 
-def _principal(tensor: NDArray) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Return principal values and right-handed axes; a tensor that is diagonal already keeps its axes."""
+# Off-diagonal parts below this, relative to the tensor, are rounding of the diagonalisation: a tilt made of
+# them would only hide the symmetry.
+_STRAIGHT = 1e-9
+
+
+def _is_straight(tensor: NDArray) -> bool:
     off = tensor - np.diag(np.diag(tensor))
-    if np.abs(off).max() < 1e-12 * np.abs(tensor).max():
+    return bool(np.abs(off).max() <= _STRAIGHT * np.abs(tensor).max())
+
+
+def _principal(tensor: NDArray) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Return principal values and right-handed axes, as near as possible to x, y, z."""
+    if _is_straight(tensor):
         return np.diag(tensor).copy(), np.eye(3)
-    values, vectors = np.linalg.eigh(tensor)
-    if np.linalg.det(vectors) < 0:
-        vectors[:, 0] *= -1
-    return values, vectors
+    return principal_axes(tensor)
+
+
+def _zero_field(tensor: NDArray) -> tuple[float, float, NDArray[np.float64]]:
+    """Return D, E and axes, the molecular ones where D is diagonal there: E/D is then what it is."""
+    if _is_straight(tensor):
+        x, y, z = np.diag(tensor)
+        if abs(z) > _STRAIGHT * np.abs(tensor).max():
+            return float(1.5 * z), float((x - y) / 2), np.eye(3)
+    return d_and_e(tensor)
 
 
 def tilt_of(axes: NDArray[np.float64]) -> Angles:
@@ -202,7 +217,19 @@ def rank_check(
     rows = [jacobian.dg[:, six[0], six[1]] / g_uncertainty]
     if jacobian.value.S >= 1:
         rows.append(jacobian.dD[:, six[0], six[1]] / D_uncertainty)
-    matrix = np.concatenate(rows, axis=1).T * scales
+    return rank_of(np.concatenate(rows, axis=1).T * scales, names, scales)
+
+
+def rank_of(matrix: NDArray[np.float64], names: Sequence[str], scales: NDArray[np.float64]) -> RankReport:
+    """Say which parameters a linear response determines.
+
+    Parameters
+    ----------
+    matrix : ndarray, shape (m, n)
+        What a change of each parameter by its own size does, in standard deviations.
+    scales : ndarray, shape (n,)
+        Those sizes, in the unit of the reported uncertainties.
+    """
     _, singular, directions = np.linalg.svd(matrix, full_matrices=True)
     full = np.zeros(len(names))
     full[: len(singular)] = singular

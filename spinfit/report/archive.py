@@ -24,7 +24,7 @@ OUTCOME_GROUP = "spinfit.outcome"
 """Where the results stand; no trace can be called so, since names hold no dots."""
 
 _NUMBERS = ("value", "uncertainty", "uncertainty_noise", "uncertainty_field", "start")
-_FLAGS = ("varied", "at_limit", "tied")
+_FLAGS = ("varied", "at_limit", "tied", "derived")
 
 
 def _text(group: h5py.Group, name: str, text: str) -> None:

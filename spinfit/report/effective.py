@@ -40,7 +40,7 @@ def effective_rows(outcome: Outcome) -> list[dict[str, object]]:
     rows: list[dict[str, object]] = []
     for name, value in outcome.parameters.items():
         match = _ENERGY.fullmatch(name.rpartition(".")[2])
-        if match is None or not (value.varied or value.tied) or not _is_energy(value.unit):
+        if match is None or not (value.varied or value.tied or value.derived) or not _is_energy(value.unit):
             continue
         energy = from_unit(value.value, value.unit, "energy")
         ratio = None if value.uncertainty is None else from_unit(value.uncertainty, value.unit, "energy")

@@ -77,7 +77,7 @@ def _parameter_rows(values: Mapping[str, Value]) -> list[list[str]]:
 
 def _parameters(outcome: Outcome) -> str:
     headings = ["parameter", "value", "unit", "noise part", "field part", "start", ""]
-    varied = {name: v for name, v in outcome.parameters.items() if v.varied or v.tied}
+    varied = {name: v for name, v in outcome.parameters.items() if v.varied or v.tied or v.derived}
     fixed = {name: v for name, v in outcome.parameters.items() if name not in varied}
     text = _table(headings, _parameter_rows(varied), left=(0, 2, 6), bold=1) if varied else "<p>Nothing was varied.</p>"
     text += (

@@ -41,8 +41,9 @@ def clean(content: Any) -> Any:
 
 
 def value_record(value: Value) -> dict[str, Any]:
-    """Return one parameter's record."""
-    return {key: getattr(value, key) for key in VALUE_KEYS}
+    """Return one parameter's record; a value that follows from a crystal field says so by one more key."""
+    record = {key: getattr(value, key) for key in VALUE_KEYS}
+    return record | {"derived": True} if value.derived else record
 
 
 def outcome_record(outcome: Outcome) -> dict[str, Any]:

@@ -14,17 +14,19 @@ STRONG = 0.9
 
 
 def remark(value: Value) -> str:
-    """Return what is special about a parameter: at limit, tied, fixed."""
+    """Return what is special about a parameter: at limit, tied, derived, fixed."""
     if value.at_limit:
         return "at limit"
     if value.tied:
         return "tied"
+    if value.derived:
+        return "derived"
     return "" if value.varied else "fixed"
 
 
 def parameter_table(outcome: Outcome) -> str:
-    """Return the table of what was varied or tied: value, unit, noise and field part, start."""
-    shown = {name: value for name, value in outcome.parameters.items() if value.varied or value.tied}
+    """Return the table of what was varied, tied or derived: value, unit, noise and field part, start."""
+    shown = {name: value for name, value in outcome.parameters.items() if value.varied or value.tied or value.derived}
     values = aligned([with_uncertainty(value.value, value.uncertainty) for value in shown.values()])
     rows = [
         [
@@ -52,7 +54,8 @@ def fixed_line(outcome: Outcome) -> str:
     fixed = [
         f"{name} = {short(value.value)} {value.unit}".rstrip()
         for name, value in outcome.parameters.items()
-        if not (value.varied or value.tied) and value.value != _NEUTRAL.get(name.rpartition(".")[2], 0.0)
+        if not (value.varied or value.tied or value.derived)
+        and value.value != _NEUTRAL.get(name.rpartition(".")[2], 0.0)
     ]
     return wrapped("held fixed: " + ", ".join(fixed)) if fixed else ""
 
