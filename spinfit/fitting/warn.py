@@ -19,6 +19,7 @@ from spinfit.fitting.noise import autocorrelation, runs_test
 from spinfit.fitting.outcome import Note
 from spinfit.fitting.residuals import Point, Problem, View
 from spinfit.fitting.signals import Stage, narrowest_width
+from spinfit.fitting.signs import SIGN_CHI2, single_sign_notes
 from spinfit.fitting.solve import Descent
 from spinfit.fitting.turning import LARGEST_MODULATION
 from spinfit.fitting.uncertainty import Covariances
@@ -31,8 +32,6 @@ STRONG_CORRELATION = 0.9
 _NO_LINE = 1e-3
 # Signal outside the sweep, relative to the largest inside, that is worth a note.
 _BEYOND = 0.02
-# A flipped sign that lowers the fit by less than this (2 standard deviations) is not excluded.
-_SIGN_CHI2 = 4.0
 # Standardised runs and correlation of neighbours: less than 1 trace of white noise in 30 000 goes so far.
 _RUNS_Z = -4.0
 _NEIGHBOURS_Z = 4.5
@@ -111,6 +110,7 @@ def notes_after(
         notes += _residual_notes(point, view, spread)
         if descent.jacobian is not None:
             notes += _sign_notes(problem, view, point, descent.jacobian, spread)
+            notes += single_sign_notes(problem, view, point, descent.jacobian, spread.known)
         notes += _setting_notes(problem, point)
     notes += _modulation_notes(point)
     notes += _beyond_notes(problem, view, point)
@@ -237,7 +237,7 @@ def _as_good(
     step = np.linalg.lstsq(jacobian[:, known], residual, rcond=1e-6)[0]
     after = residual - jacobian[:, known] @ step
     per_point = max(point.chi2 / max(view.points - view.linear - point.free.size, 1), 1e-12)
-    return (float(after @ after) - point.chi2) / per_point < _SIGN_CHI2
+    return (float(after @ after) - point.chi2) / per_point < SIGN_CHI2
 
 
 def _setting_notes(problem: Problem, point: Point) -> list[Note]:
