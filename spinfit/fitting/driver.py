@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 from spinfit.errors import InputError
 from spinfit.fitting.crystal_fields import FieldResponse, derived_values, field_notes, responses_of, sharpened
 from spinfit.fitting.data import Job
+from spinfit.fitting.lines_outcome import fit_lines
 from spinfit.fitting.outcome import Note, Outcome
 from spinfit.fitting.residuals import Problem, Progress, View, full_view
 from spinfit.fitting.signals import Simulate
@@ -59,6 +60,11 @@ def fit(job: Job, *, progress: Progress | None = None, simulate: Simulate = _eng
         window, limits that exclude the start, names the model does not have.
     """
     begun = time.perf_counter()
+    if job.lines:
+        try:
+            return fit_lines(job, progress=progress, simulate=simulate)
+        except InputError as error:
+            raise error.at(file=job.path or None) from None
     if not job.traces:
         raise InputError("the job has no trace", "add a [[trace]] table", file=job.path or None)
     try:

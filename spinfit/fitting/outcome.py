@@ -86,6 +86,39 @@ class Curves:
 
 
 @dataclass(frozen=True, eq=False)
+class PositionTable:
+    """One table of line positions with its fit; arrays of shape (n,) unless said otherwise.
+
+    Attributes
+    ----------
+    frequency : float
+        MHz.
+    setting : ndarray, shape (n, 1) or (n, 2)
+        Angle of rotation as in the file, or theta and phi; rad.
+    measured, fitted, residual, uncertainty : ndarray
+        mT, true field (offset and scale applied).
+    lower, upper : ndarray of int
+        Levels of the assigned transition from 1 by energy; 0 where the line has none.
+    used : ndarray of bool
+        False for outliers.
+    drawn : ndarray, shape (m, 3)
+        Angle (rad), field (mT) and relative weight of calculated lines for a picture; empty without angles.
+    """
+
+    name: str
+    frequency: float
+    setting: NDArray[np.float64]
+    measured: NDArray[np.float64]
+    fitted: NDArray[np.float64]
+    residual: NDArray[np.float64]
+    uncertainty: NDArray[np.float64]
+    lower: NDArray[np.int64]
+    upper: NDArray[np.int64]
+    used: NDArray[np.bool_]
+    drawn: NDArray[np.float64]
+
+
+@dataclass(frozen=True, eq=False)
 class Outcome:
     """The result of one fit.
 
@@ -103,6 +136,8 @@ class Outcome:
         "frequency"; in the unit of the job, summing in quadrature to the uncertainty.
     engine : mapping
         What accuracy was used: orientations, diagonalisations, estimated error, per trace.
+    positions : tuple of PositionTable
+        Of a fit of line positions, which has no curves.
     seconds : float
         Wall time; kept out of files that must be bit-identical.
     """
@@ -118,5 +153,6 @@ class Outcome:
     provenance: Mapping[str, object] = field(default_factory=dict)
     engine: Mapping[str, object] = field(default_factory=dict)
     budget: Mapping[str, Mapping[str, float]] = field(default_factory=dict)
+    positions: tuple[PositionTable, ...] = ()
     message: str = ""
     seconds: float = 0.0

@@ -212,7 +212,7 @@ class Problem:
 
     def __init__(self, job: Job, simulate: Simulate) -> None:
         self.job = job
-        self.binding = Binding(job.species, job.sample, job.traces, units=job.units)
+        self.binding = Binding(job.species, job.sample, (*job.traces, *job.lines), units=job.units)
         self.parameters: dict[str, Parameter] = self.binding.parameters
         self.names = expand_vary(job.vary, self.parameters)
         self.ties = compile_ties(job.ties, self.parameters, varied=self.names)

@@ -1,0 +1,270 @@
+"""Fits of line positions: fields at which a crystal's lines stand against angle.
+
+Each residual is a measured field less the calculated resonance field it is assigned to
+(`spinfit.fitting.assignment`), divided by its uncertainty or, where the table gives none, by the
+scatter that the fit itself finds.  Lines are assigned anew at every evaluation, with a scatter that
+shrinks from descent to descent, so that a rough start first finds the pattern and then the lines.
+
+Derivatives: a resonance field follows a parameter p as dB/dp = -(dG/dp) / (dG/dB), with G the gap of
+the two levels; dG/dp at fixed field is taken by differences of exact eigenvalues.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import lmfit
+import numpy as np
+from numpy.typing import NDArray
+
+from spinfit.errors import InputError
+from spinfit.fitting.assignment import CAP, Calculated, assign, calculated, gaps
+from spinfit.fitting.data import Lines
+from spinfit.fitting.residuals import Problem, Progress
+from spinfit.fitting.signals import true_field
+from spinfit.species import Species
+from spinfit.sweep import Sample
+
+Array = NDArray[np.float64]
+Indices = NDArray[np.intp]
+
+# How far in typical steps a parameter is moved for a difference of eigenvalues.
+_STEP = 1e-2
+# Starts tried by their cost alone, and those of them that are descended from.
+_SEEDS, _DESCENTS = 60, 3
+# How far seeds lie from the start: numbers, fields and angles in typical steps, energies by a factor.
+_SPAN, _FACTOR = 8.0, 1.8
+# mT: scatter with which a search begins, and which it shrinks towards.
+_COARSE = 20.0
+_FINEST = 1e-6
+# A residual beyond this many times the scatter is an outlier: one normal line in 150 000.
+OUTLIER = 4.5
+_ROUNDS = 12
+
+
+@dataclass(frozen=True, eq=False)
+class State:
+    """The model at one set of values, with every line assigned.
+
+    Attributes
+    ----------
+    residual : ndarray, shape (lines,)
+        Measured less calculated, mT; of lines without a partner five times their scatter.
+    lines : tuple of Calculated
+        For each table the partner of each measured line (of a line without one, any).
+    free_lines : ndarray of bool, shape (lines,)
+        Lines without a partner.
+    cost : float
+        Sum of capped squares.
+    """
+
+    free: Array
+    species: tuple[Species, ...]
+    sample: Sample
+    tables: tuple[Lines, ...]
+    residual: Array
+    lines: tuple[Calculated, ...]
+    free_lines: NDArray[np.bool_]
+    cost: float
+
+
+class LineProblem:
+    """A job of line positions made ready for an optimiser."""
+
+    def __init__(self, problem: Problem, progress: Progress | None = None) -> None:
+        self.problem, self.progress = problem, progress
+        tables = problem.job.lines
+        self.given = np.concatenate(
+            [np.full(t.field.size, np.nan) if t.uncertainty is None else t.uncertainty for t in tables]
+        )
+        self.blocks = [
+            slice(b - t.field.size, b) for b, t in zip(np.cumsum([t.field.size for t in tables]), tables, strict=True)
+        ]
+        self.evaluations = 0
+        self.steps = np.array([problem.parameters[name].scale for name in problem.names])
+        self._best = math.inf
+
+    def scatter(self, common: float) -> Array:
+        """Uncertainty of each line, mT, when those not given have `common`."""
+        return np.where(np.isnan(self.given), common, np.maximum(self.given, 0.0))
+
+    def evaluate(self, free: Array, scatter: Array) -> State:
+        """Calculate every line and assign the measured ones."""
+        self.evaluations += 1
+        species, sample, tables = self.problem.binding.apply(self.problem.values(free))
+        state = self._assigned(np.array(free), species, sample, tables, scatter)
+        if self.progress is not None:
+            self._best = min(self._best, state.cost)
+            self.progress(self.evaluations, self._best, self.problem.in_job_units(state.free))
+        return state
+
+    def residual_of(self, species: tuple[Species, ...], state: State, scatter: Array) -> Array:
+        """Residuals, mT, of other species with the rest of a state, assigned anew."""
+        return self._assigned(state.free, species, state.sample, state.tables, scatter).residual
+
+    def _assigned(
+        self, free: Array, species: tuple[Species, ...], sample: Sample, tables: tuple[Lines, ...], scatter: Array
+    ) -> State:
+        residual, lines, lonely = np.empty(scatter.size), [], np.zeros(scatter.size, dtype=bool)
+        for table, block in zip(tables, self.blocks, strict=True):
+            found = calculated(species, sample, table)
+            which = assign(found, table, scatter[block])
+            lonely[block] = which < 0
+            if found.field.size == 0:
+                raise InputError(
+                    f"the model has no line below {1.25 * table.field.max():.4g} mT", "change g or D", place=table.name
+                )
+            lines.append(found.only(np.maximum(which, 0)))
+            distance = true_field(table, table.field) - lines[-1].field
+            residual[block] = np.where(which < 0, math.sqrt(CAP) * scatter[block], distance)
+        cost = float(np.minimum((residual / scatter) ** 2, CAP).sum())
+        return State(free, species, sample, tables, residual, tuple(lines), lonely, cost)
+
+    def jacobian(self, state: State) -> Array:
+        """Derivative of the residuals, mT over internal units, shape (lines, k)."""
+        out = np.zeros((state.residual.size, state.free.size))
+        for k in range(state.free.size):
+            step = _STEP * self.steps[k]
+            sides = []
+            for sign in (1, -1):
+                free = state.free.copy()
+                free[k] = np.clip(free[k] + sign * step, self.problem.lower[k], self.problem.upper[k])
+                sides.append((free[k], self._moved(state, free)))
+            (high, above), (low, below) = sides
+            out[:, k] = (above - below) / (high - low)
+        out[state.free_lines] = 0.0
+        return out
+
+    def _moved(self, state: State, free: Array) -> Array:
+        """Measured less calculated field at values close by, to first order in the field."""
+        species, sample, tables = self.problem.binding.apply(self.problem.values(free))
+        out = np.empty(state.residual.size)
+        for table, block, which in zip(tables, self.blocks, state.lines, strict=True):
+            gap = gaps(species, sample, table, which, np.arange(table.field.size))
+            slope = np.where(np.abs(which.slope) > 1e-3, which.slope, np.inf)
+            out[block] = true_field(table, table.field) - which.field + (gap - table.frequency) / slope
+        return out
+
+    def frequency_change(self, state: State) -> Array:
+        """d(residual)/d(frequency), mT/MHz."""
+        slopes = np.concatenate([which.slope for which in state.lines])
+        return np.where(np.abs(slopes) > 1e-3, -1 / np.where(slopes == 0, np.inf, slopes), 0.0)
+
+    def field_change(self, state: State) -> Array:
+        """d(residual)/d(shift of the field axis): 1 for every line that has a partner."""
+        return np.where(state.free_lines, 0.0, 1.0)
+
+    def descend(self, start: Array, scatter: Array, *, kept: NDArray[np.bool_] | None = None, loss: str = "soft_l1"):
+        """Minimise from a start with lmfit; lines that are not `kept` do not count."""
+        problem = self.problem
+        kept = np.ones(scatter.size, dtype=bool) if kept is None else kept
+        params = lmfit.Parameters()
+        for k in range(start.size):
+            low, high = ((limit - start[k]) / self.steps[k] for limit in (problem.lower[k], problem.upper[k]))
+            params.add(f"p{k}", value=0.0, min=low, max=high)
+        at: list[State] = []
+
+        def free_of(p: lmfit.Parameters) -> Array:
+            moved = start + np.array([p[f"p{k}"].value for k in range(start.size)]) * self.steps
+            return np.clip(moved, problem.lower, problem.upper)
+
+        def residual(p: lmfit.Parameters) -> Array:
+            try:
+                at[:] = [self.evaluate(free_of(p), scatter)]
+            except InputError:
+                if not at:
+                    raise
+                return np.full(int(kept.sum()), 10 * math.sqrt(CAP))
+            return (at[0].residual / scatter)[kept]
+
+        def jacobian(p: lmfit.Parameters) -> Array:
+            free = free_of(p)
+            if not np.array_equal(at[0].free, free):
+                at[:] = [self.evaluate(free, scatter)]
+            return (self.jacobian(at[0]) * self.steps / scatter[:, None])[kept]
+
+        minimizer = lmfit.Minimizer(residual, params, calc_covar=False)
+        result = minimizer.minimize(
+            method="least_squares", jac=jacobian, loss=loss, ftol=1e-10, xtol=1e-9, gtol=1e-12, max_nfev=60
+        )
+        return self.evaluate(free_of(result.params), scatter), bool(result.success)
+
+    def search(self, *, wide: bool) -> tuple[State, float, bool]:
+        """Find the pattern from a rough start.
+
+        Parameters
+        ----------
+        wide : bool
+            Whether other starts around the given one are tried as well.
+
+        Returns
+        -------
+        state : State
+        common : float
+            Robust scatter of the lines, mT.
+        converged : bool
+        """
+        starts = [self.problem.start]
+        if wide:
+            seeds = [self.problem.start, *self._seeds()]
+            coarse = np.full(self.given.size, _COARSE / 2)
+            costs = []
+            for seed in seeds:
+                try:
+                    costs.append(self.evaluate(seed, coarse).cost)
+                except InputError:
+                    costs.append(math.inf)
+            starts += [seeds[k] for k in np.argsort(costs, kind="stable")[:_DESCENTS] if k > 0]
+        best = None
+        for start in starts:
+            found = self._annealed(start)
+            if found is not None and (best is None or found[1] < best[1] * (1 - 1e-6)):
+                best = found
+        if best is None:
+            raise InputError("the model has no line at the start", "change g or D", place="species")
+        return best
+
+    def _seeds(self) -> list[Array]:
+        """Starts around the given one, always the same."""
+        rng = np.random.default_rng(1)
+        out = []
+        for draw in rng.uniform(-1, 1, size=(_SEEDS, self.problem.start.size)):
+            free = self.problem.start.copy()
+            for k, name in enumerate(self.problem.names):
+                energy = self.problem.parameters[name].kind == "energy" and free[k] != 0
+                free[k] = free[k] * _FACTOR ** draw[k] if energy else free[k] + _SPAN * self.steps[k] * draw[k]
+            out.append(np.clip(free, self.problem.lower, self.problem.upper))
+        return out
+
+    def _annealed(self, start: Array) -> tuple[State, float, bool] | None:
+        """Descend with a scatter that shrinks to what the lines themselves show."""
+        common, free, found = _COARSE, start, None
+        for _ in range(_ROUNDS):
+            try:
+                state, converged = self.descend(free, np.full(self.given.size, common))
+            except InputError:
+                return found
+            free = state.free
+            shown = max(robust_scatter(state.residual, free.size), _FINEST)
+            found = (state, shown, converged)
+            if shown > 0.7 * common:
+                break
+            common = max(shown, 0.2 * common)
+        return found
+
+
+def robust_scatter(residual: Array, varied: int) -> float:
+    """Standard deviation by the median size, which outliers do not move, with the degrees of freedom used up."""
+    share = max(residual.size - varied, 1) / residual.size
+    return float(1.4826 * np.median(np.abs(residual)) / math.sqrt(share))
+
+
+def kept_lines(state: State, scatter: Array) -> NDArray[np.bool_]:
+    """Lines that are no outliers."""
+    return ~state.free_lines & (np.abs(state.residual) <= OUTLIER * scatter)
+
+
+def standard_scatter(residual: Array, kept: NDArray[np.bool_], varied: int) -> float:
+    count = int(kept.sum())
+    return float(np.sqrt(np.sum(residual[kept] ** 2) / max(count - varied, 1)))
