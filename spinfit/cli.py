@@ -19,6 +19,8 @@ from spinfit.errors import InputError, SpinfitError, nearest
 
 COMMON = ("--json", "--debug")
 
+THREADS = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "VECLIB_MAXIMUM_THREADS")
+
 
 class _Parser(argparse.ArgumentParser):
     """An argument parser that raises `InputError` where argparse would print its usage and exit."""
@@ -131,8 +133,19 @@ def _leave_quietly() -> None:
         pass
 
 
+def one_thread() -> None:
+    """Keep linear algebra to one thread in this process, unless the user's environment says otherwise.
+
+    The matrices are small: threads would wait for each other more than they save, and several fits at once
+    would fight over the cores.  The libraries look when numpy is loaded, which only commands do.
+    """
+    for name in THREADS:
+        os.environ.setdefault(name, "1")
+
+
 def main(argv: Sequence[str] | None = None) -> int:
     """Run ``spinfit`` with `argv` (by default the process's own) and return the exit code."""
+    one_thread()
     arguments = list(sys.argv[1:] if argv is None else argv)
     debug = "--debug" in arguments
     for stream in (sys.stdout, sys.stderr):  # a terminal that cannot show a character shows "?" in its place

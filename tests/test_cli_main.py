@@ -10,7 +10,7 @@ import sys
 import pytest
 
 from spinfit import __version__, commands
-from spinfit.cli import build_parser, main
+from spinfit.cli import THREADS, build_parser, main
 from spinfit.errors import InputError
 
 
@@ -156,3 +156,16 @@ def test_help_and_refusals_import_nothing_heavy(argv):
     )
     done = subprocess.run([sys.executable, "-c", script], capture_output=True, text=True, timeout=60, check=True)
     assert done.stderr.rpartition("HEAVY ")[2].split() == []
+
+
+@pytest.mark.parametrize(("given", "kept"), [(None, "1"), ("3", "3")])
+def test_one_thread_unless_the_user_says_otherwise(given, kept):
+    """Set before numpy is loaded, since its libraries look only once."""
+    code = (
+        "import os, sys; import spinfit.cli as cli; assert 'numpy' not in sys.modules; "
+        "cli.main(['--version']); print([os.environ[name] for name in cli.THREADS])"
+    )
+    environment = {name: value for name, value in os.environ.items() if name not in THREADS}
+    environment |= {} if given is None else dict.fromkeys(THREADS, given)
+    done = subprocess.run([sys.executable, "-c", code], env=environment, capture_output=True, text=True, check=True)
+    assert done.stdout.splitlines()[-1] == str([kept] * len(THREADS))
