@@ -1,207 +1,387 @@
 """Pairs of levels whose resonances come and go over the sphere: looping transitions, swept edges.
 
 Between one pair of levels there may be none to several resonances, and their number changes with
-direction.  At such a fold the weight diverges as 1/sqrt(distance), so sums over directions and
-matching of roots both fail.  The level difference itself is smooth there.  It is continued from the
-knots to a mesh at shared fields; away from folds its roots form sheets (`spinfit.sheets`), and
-triangles at whose corners the number of roots differs are projected, field by field, onto the
-frequency axis.
+direction.  At such a fold the weight diverges as 1/sqrt(distance), so sums over roots and matching
+of roots both fail.  The spectrum is the integral over the sphere of strength x delta(gap), and a
+smoothed delta function has no singularity: at a fixed field the sum over a mesh of
+strength x K(gap / h) / h converges quickly once the kernel's width h is about the difference of the
+gap between neighbouring directions.  Where resonances are steep along the field, h is narrow in
+field, and there it is cheaper to solve for the field and smear that.  A smooth share divides every
+(direction, field) between the two sums; both smear by the same kernel of sixth order, and both
+leave turning points, where neighbours agree, sharp.
 """
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
 from spinfit import hermite
-from spinfit.branches import KnotData, Request, parabola, stencil
+from spinfit.branches import KnotData, Request, stencil
+from spinfit.lineshape import Shape
 from spinfit.orientations import Mesh, Rings
-from spinfit.resonance import can_reach
-from spinfit.sheets import (
-    RICHARDSON,
-    Histograms,
-    add_points,
-    add_spread,
-    cells,
-    differences,
-    fold_density,
-    point_share,
-)
+from spinfit.resonance import ZERO_FIELD, can_reach
+from spinfit.sheets import SMEAR_MOST, SMEAR_REACH, Histograms, differences, point_share
 
 Array = NDArray[np.float64]
 Index = NDArray[np.intp]
 
+STEP = 1.0
+"""Distance of the fields at which the sum in frequency is taken, in line widths.
 
-SLICES = 12
-"""Fields at which a folded simplex is projected, at the least."""
-FOLDING = 1.5
-"""Ratio of slopes along the field between the corners of a simplex above which it counts as folded."""
+That sum is smooth over several line widths: everything sharper is in the other one.
+"""
+KERNEL_REACH = 5.0
+"""Where the kernel is cut, in units of its width."""
+FOLD = 30.0
+"""How many times farther than its smear from a fold a resonance lies before it is solved for."""
+FLAT = 0.65
+"""Root of the curvature of a resonance field over one step of the first mesh, in line widths."""
+FOLD_SLOPE = 8.0
+"""MHz/mT below which a level difference counts as folding, about a quarter of a free spin's slope."""
+LARGEST = 40_000_000
+"""Numbers (nodes x points x 3) of one pair's mesh at which refinement gives up."""
+MOST_ROUNDS = 5
+POWER = 2.3
+"""Power of the step with which a mesh's error falls, until it has been measured."""
+SHARE = 0.4
+"""Part of the tolerance that the meshes of looping pairs may use up."""
+BLOCK = 100_000
+"""Numbers of points x fields handled at a time, so that they stay in the processor's cache."""
+
+
+def kernel(u: Array) -> Array:
+    """Return the kernel of unit area whose second and fourth moments vanish, see `sheets.smear_kernel`."""
+    square = u * u
+    return np.exp(-0.5 * square) * (1.875 - square * (1.25 - 0.125 * square)) * (1 / math.sqrt(2 * math.pi))
 
 
 @dataclass(frozen=True, eq=False)
-class _Landscape:
-    """One level difference over mesh points, as quintics along the field; arrays (nodes, points)."""
+class Landscape:
+    """One level difference over the points of a mesh.
+
+    Attributes
+    ----------
+    fields : ndarray, shape (k,)
+        Nodes, mT.
+    leaves : ndarray of int, shape (l, 3)
+    gap, slope, strength : ndarray, shape (k, points)
+        As in `KnotData`.
+    bend : ndarray, shape (k, points)
+        Change of the slope along the field, MHz/mT^2; continuous, unlike that of the quintics.
+    along, around : ndarray, shape (k, points)
+        Differences of the gap between neighbours along theta and phi, MHz.
+    weights : ndarray, shape (points,)
+        Shares of the solid angle.
+    """
 
     fields: Array
     leaves: Index
     gap: Array
     slope: Array
     strength: Array
-    steps: Array  # (2, nodes, points): differences of the gap to the neighbours along theta and phi
+    bend: Array
+    along: Array
+    around: Array
+    weights: Array
 
-    def quintic(self, leaf: Index, point: Index) -> tuple[Array, Array]:
-        """Return coefficients (6, n) and half lengths (n,) on the given leaf of each point."""
-        nodes = self.leaves[leaf].T
-        half = 0.5 * (self.fields[nodes[2]] - self.fields[nodes[0]])
-        return hermite.quintic(self.gap[nodes, point], self.slope[nodes, point] * half), half
-
-    def along(self, leaf: Index, point: Index, t: Array) -> tuple[Array, Array]:
-        """Return strength and step of the gap between neighbouring points, at t of each leaf."""
-        nodes = self.leaves[leaf].T
-        steps = self.steps[:, nodes, point]
-        apart = np.hypot(parabola(steps[0], t), parabola(steps[1], t))
-        half = 0.5 * (self.fields[nodes[2]] - self.fields[nodes[0]])
-        indices, basis = stencil(self.fields, nodes[1], self.fields[nodes[1]] + half * t)
-        strength = (basis * self.strength[indices, point]).sum(axis=0)
-        return strength, apart
+    @classmethod
+    def of(cls, fields: Array, leaves: Index, values: Array, mesh: Mesh) -> Landscape:
+        """Build from gap, slope and strength on a mesh, shape (3, k, thetas + 1, azimuths)."""
+        k = len(fields)
+        steps = differences(values[0], mesh).reshape(2, k, -1)
+        gap, slope, strength = values.reshape(3, k, -1)
+        bend = np.gradient(slope, fields, axis=0)
+        return cls(fields, leaves, gap, slope, strength, bend, *steps, mesh.weights().ravel())
 
 
-@dataclass(frozen=True, eq=False)
-class _Roots:
-    """Roots on the mesh by rank: arrays (ranks, points), zero where absent.
+class _Pair:
+    """One pair of levels on a growing mesh.
 
-    `extent` is how far in field the sheet can run within one step of the mesh, mT.
+    Attributes
+    ----------
+    size : (int, int)
+        Intervals of the mesh.
+    plain : ndarray
+        Its histograms, as `Histograms.plain`.
+    error : float
+        Estimated, relative to the top of the whole spectrum's derivative.
     """
 
-    count: Index
-    rising: NDArray[np.bool_]
-    field: Array
-    weight: Array
-    share: Array
-    apart: Array
-    extent: Array
-    steep: Array
+    def __init__(self, rings: Rings, data: KnotData, row: int, leaves: Index, request: Request) -> None:
+        first, last = data.leaves[leaves].min(), data.leaves[leaves].max() + 1
+        self.rings, self.request = rings, request
+        self.fields, self.leaves = data.fields[first:last], data.leaves[leaves] - first
+        gap, slope, strength = (v[row, first:last] for v in (data.gap, data.slope, data.strength))
+        self.knots = np.concatenate([gap, slope, strength])
+        self.size = _first_size(rings, self.fields, gap, slope, request)
+        self.power, self.missed = POWER, 0.0
+
+    def sum(self, look: _Look) -> int:
+        """Sum over the present mesh and over its every second point; return the number of points used."""
+        mesh = Mesh(self.rings.kind, *self.size)
+        values = self.rings.to_mesh_locally(self.knots, mesh)
+        self.values = values.reshape(3, len(self.fields), *values.shape[1:])
+        histograms = look.empty()
+        used = add_looping(histograms, Landscape.of(self.fields, self.leaves, self.values, mesh), self.request)
+        self.plain, self.transform = histograms.plain, histograms.transform()
+        before, self.missed = self.missed, self.coarser(look, 2, 2)
+        if before and self.missed:
+            self.power = min(5.0, max(1.5, math.log(before / self.missed) / math.log(self.grown)))
+        return used
+
+    def coarser(self, look: _Look, along: int, around: int) -> float:
+        """Return how much the spectrum changes when only every second point, along theta or phi, is used."""
+        around = 1 if self.rings.kind == "axial" else around
+        mesh = Mesh(self.rings.kind, self.size[0] // along, self.size[1] // around)
+        values = np.ascontiguousarray(self.values[:, :, ::along, ::around])
+        histograms = look.empty()
+        add_looping(histograms, Landscape.of(self.fields, self.leaves, values, mesh), self.request)
+        return look.height(histograms.transform() - self.transform)
+
+    @property
+    def error(self) -> float:
+        """The present mesh's own error, in the units of `_Look.height`."""
+        return self.missed * 2.0**-self.power
+
+    def refine(self, look: _Look, allowed: float) -> bool:
+        """Choose a finer mesh that should err by no more than `allowed`; return whether there is one."""
+        missed = [self.missed] if self.rings.kind == "axial" else [self.coarser(look, 2, 1), self.coarser(look, 1, 2)]
+        factors = [max(1.0, min(2.5, (m * 2.0**-self.power / allowed) ** (1 / self.power))) for m in missed]
+        widest = int(np.argmax(factors))
+        factors[widest] = max(factors[widest], 1.4)
+        size = tuple(ladder_size(f * n) if f > 1.1 else n for f, n in zip([*factors, 1.0], self.size, strict=False))
+        if 3 * len(self.fields) * math.prod(size) > LARGEST:
+            return False
+        self.size, self.grown = size, max(n / m for n, m in zip(size, self.size, strict=True))
+        return True
 
 
-def add_looping(histograms: Histograms, rings: Rings, mesh: Mesh, data: KnotData, row: int, request: Request) -> int:
-    """Add one pair of levels, row `row` of `data`; return the number of roots used."""
-    k = len(data.fields)
-    values = rings.to_mesh_locally(np.concatenate([data.gap[row], data.slope[row], data.strength[row]]), mesh)
-    gap, slope, strength = values.reshape(3, k, *values.shape[1:])
-    steps = differences(gap, mesh).reshape(2, k, -1)
-    land = _Landscape(
-        data.fields, data.leaves, gap.reshape(k, -1), slope.reshape(k, -1), strength.reshape(k, -1), steps
-    )
-    roots = _solve(land, request)
-    present = np.arange(len(roots.field))[:, None] < roots.count
-    for rank in range(len(roots.field)):
-        columns = (roots.field[rank], roots.weight[rank], roots.apart[rank], roots.share[rank])
-        add_points(histograms, mesh, *columns, request.grain)
-    spread = np.where(present, roots.weight * (1 - roots.share), 0.0)
-    for stride, factor in RICHARDSON:
-        corners, part = cells(mesh, stride)
-        count = roots.count[corners]
-        same = (count == count[0]).all(axis=0) & (roots.rising[corners] == roots.rising[corners[0]]).all(axis=0)
-        for rank in range(len(roots.field)):  # next to a fold the weight is far from linear
-            steep = roots.steep[rank][corners]
-            same &= (count[0] <= rank) | (steep.max(axis=0) <= FOLDING * steep.min(axis=0))
-        for rank in range(len(roots.field)):
-            whole = same & (count[0] > rank)
-            add_spread(histograms, roots.field[rank], spread[rank], corners[:, whole], part[whole], factor)
-        folded = np.flatnonzero(~same)
-        if len(folded):
-            _add_folded(histograms, land, roots, corners[:, folded], factor * part[folded], request)
-    return int(roots.count.sum())
+class _Look:
+    """How large a change of the histograms is in the spectrum."""
+
+    def __init__(self, histograms: Histograms, request: Request) -> None:
+        self.grid, self.scale = histograms.grid, request.scale
+        self.others = histograms.transform()
+        self.shape = Shape(request.scale, 0.0)
+        fields = self.grid.start + self.grid.step * np.arange(self.grid.count)
+        margin = SMEAR_REACH * SMEAR_MOST * request.scale  # past the window, where sums are cut off
+        low = request.low + margin if request.low > ZERO_FIELD else 0.0
+        self.window = (fields >= low) & (fields <= request.high - margin)
+
+    def empty(self) -> Histograms:
+        """Return histograms for one pair of levels."""
+        return Histograms(self.grid, self.scale)
+
+    def height(self, transform: NDArray[np.complex128]) -> float:
+        """Return the largest value in the window of the derivative of a histograms' transform."""
+        return float(np.abs(self.grid.render(transform, self.shape)[self.window]).max(initial=0.0))
 
 
-def _solve(land: _Landscape, request: Request) -> _Roots:
-    points = land.gap.shape[1]
-    found = []
-    for number, leaf in enumerate(land.leaves):
-        half = 0.5 * (land.fields[leaf[2]] - land.fields[leaf[0]])
+def ladder_size(wanted: float) -> int:
+    """Round a mesh size up to a short list of sizes divisible by 4, so that matrices and weights are shared."""
+    wanted = max(8.0, wanted)
+    return 4 * math.ceil(0.25 * 2 ** (math.ceil(4 * math.log2(wanted) - 1e-9) / 4))
+
+
+def _first_size(rings: Rings, fields: Array, gap: Array, slope: Array, request: Request) -> tuple[int, int]:
+    """Return the mesh to begin with, from how the resonance field bends over the sphere.
+
+    The curvature of the level difference at fixed field, over its slope along the field, is that
+    of the resonance field; at a fold, where the slope vanishes, what counts is the frequency.
+    """
+    azimuths = {"axial": 1, "octant": 2, "quarter": 4, "half": 8}[rings.kind] * min(rings.harmonics, 24)
+    probe = Mesh(rings.kind, 2 * rings.rings, azimuths)
+    k = len(fields)
+    gap, slope = rings.to_mesh_locally(np.concatenate([gap, slope]), probe).reshape(2, k, probe.thetas + 1, -1)
+    near = np.abs(gap) <= 1.5 * np.abs(slope) * np.gradient(fields)[:, None, None] + request.scale * FOLD_SLOPE
+    bend = np.where(near, 1.0 / np.maximum(np.abs(slope), FOLD_SLOPE), 0.0)
+    flat = FLAT * (request.tolerance / 1e-3) ** 0.17
+    sizes = []
+    for axis, even in ((1, True), (2, rings.kind == "octant")):
+        if axis == 2 and rings.kind == "axial":
+            sizes.append(1)
+            continue
+        mode = {"mode": "reflect"} if even else {"mode": "wrap"}
+        padded = np.pad(gap, [(1, 1) if a == axis else (0, 0) for a in range(3)], **mode)
+        second = np.abs(np.diff(padded, 2, axis=axis)) * bend
+        # the few sharpest spots, where levels cross on an axis, would size the mesh for everything
+        sharp = np.quantile(second[second > 0], 0.98) if (second > 0).any() else 0.0
+        least = (rings.rings, azimuths / 2)[axis - 1]
+        sizes.append(ladder_size(max(least, math.sqrt(sharp / request.scale) * (gap.shape[axis] - even) / flat)))
+    return sizes[0], sizes[1]
+
+
+def add_pairs(histograms: Histograms, rings: Rings, data: KnotData, rows: Index, request: Request) -> tuple[int, float]:
+    """Add pairs of levels whose resonances come and go, each on a mesh as fine as it needs.
+
+    A mesh is accepted when the spectrum of its every second point differs little enough from its
+    own: the error falls with a power of the step, which is measured once a mesh has been refined.
+
+    Parameters
+    ----------
+    histograms : Histograms
+        Those of all other resonances, to which these are added.
+    rows : ndarray of int
+        Rows of `data`.
+
+    Returns
+    -------
+    used : int
+        Points summed.
+    error : float
+        Estimated error from the meshes, relative to the top of the spectrum's derivative.
+    """
+    chosen = [(row, reachable(data, row)) for row in rows]
+    pairs = [_Pair(rings, data, row, leaves, request) for row, leaves in chosen if len(leaves)]
+    if not pairs:
+        return 0, 0.0
+    look = _Look(histograms, request)
+    used = 0
+    pending = pairs
+    for _ in range(MOST_ROUNDS):
+        used += sum(pair.sum(look) for pair in pending)
+        top = look.height(look.others + sum(pair.transform for pair in pairs)) or 1.0
+        allowed = SHARE * request.tolerance * top / math.sqrt(len(pairs))
+        pending = [pair for pair in pending if pair.error > allowed and pair.refine(look, allowed)]
+        if not pending:
+            break
+    for pair in pairs:
+        histograms.plain += pair.plain
+    return used, math.hypot(*(pair.error for pair in pairs)) / top
+
+
+def reachable(data: KnotData, row: int) -> Index:
+    """Return the leaves in which one pair of levels can be resonant somewhere between the knots."""
+    kept = []
+    for number, leaf in enumerate(data.leaves):
+        f = data.gap[row, leaf]
+        g = data.slope[row, leaf] * (0.5 * (data.fields[leaf[2]] - data.fields[leaf[0]]))
+        hull = np.concatenate([f, f[:2] + g[:2] / 3, f[1:] - g[1:] / 3])
+        low, high = hull.min(), hull.max()
+        margin = 0.15 * (high - low)
+        if low - margin <= 0 <= high + margin:
+            kept.append(number)
+    return np.array(kept, dtype=np.intp)
+
+
+def add_looping(histograms: Histograms, land: Landscape, request: Request) -> int:
+    """Add one pair of levels; return the number of points used."""
+    fields, density, used = _in_frequency(land, request)
+    some = density != 0
+    # hides the grain of the fields themselves
+    smear = np.full(int(some.sum()), request.grain.smear * STEP * request.scale)
+    histograms.smeared(fields[some], density[some], smear)
+    return used + _in_field(histograms, land, request)
+
+
+def _in_frequency(land: Landscape, request: Request) -> tuple[Array, Array, int]:
+    """Return fields, the flat resonances' share of the intensity at each, and the points summed."""
+    step = STEP * request.scale
+    first = 0.0 if request.low <= ZERO_FIELD else request.low  # the spectrum is even in B: half a step off zero
+    fields = first + step * (0.5 + np.arange(max(1, math.ceil((request.high - first) / step))))
+    density = np.zeros(len(fields))
+    used = 0
+    for leaf in land.leaves:
+        ends = land.fields[leaf]
+        here = slice(*np.searchsorted(fields, [ends[0], ends[2]]))
+        if here.start == here.stop:
+            continue
+        half = 0.5 * (ends[2] - ends[0])
+        f, g = land.gap[leaf], land.slope[leaf] * half
+        apart = _apart(land.along[leaf], land.around[leaf], np.abs(land.bend[leaf]), request)
+        steep = np.minimum(np.abs(land.slope[leaf]), np.abs(g + g[[1, 2, 0]]) / (2 * half))
+        flat = _nearness(apart.max(axis=0), steep.min(axis=0), np.abs(land.bend[leaf]).max(axis=0), request) > 0.25
+        apart = apart.max(axis=0)
+        hull = np.stack([*f, f[0] + g[0] / 3, f[1] - g[1] / 3, f[1] + g[1] / 3, f[2] - g[2] / 3])
+        low, high = hull.min(axis=0), hull.max(axis=0)
+        margin = KERNEL_REACH * request.grain.smear * apart + 0.25 * (high - low)
+        at = np.flatnonzero((low <= margin) & (high >= -margin) & flat)
+        used += len(at)
+        t = (fields[here] - ends[1]) / half
+        size = max(1, BLOCK // len(t))
+        for start in range(0, len(at), size):
+            density[here] += step * _density(land, leaf, half, t, fields[here], at[start : start + size], request)
+    return fields, density, used
+
+
+def _density(land: Landscape, leaf: Index, half: float, t: Array, fields: Array, at: Index, request: Request) -> Array:
+    """Return the sum over points of strength x kernel at the fields t of a leaf, shape of t."""
+    nodes = leaf[:, None], at
+    c = hermite.quintic(land.gap[nodes], land.slope[nodes] * half)
+    powers = t[:, None] ** np.arange(6)
+    indices, basis = stencil(land.fields, np.full(len(fields), leaf[1]), fields)
+    around = indices[:, :1], at
+    strength, bend, *steps = (basis.T @ v[around] for v in (land.strength, land.bend, land.along, land.around))
+    bend = np.abs(bend)
+    apart = _apart(*steps, bend, request)
+    gap = powers @ c
+    width = request.grain.smear * apart
+    u = gap / width
+    some = np.flatnonzero(np.abs(u) < KERNEL_REACH)
+    if not len(some):
+        return np.zeros(len(t))
+    slope = np.abs((powers[:, :5] * (np.arange(1, 6) / half)) @ c[1:])
+    apart, slope, bend, u, width = (v.ravel()[some] for v in (apart, slope, bend, u, width))
+    share = _share(apart, slope, bend, request)
+    part = strength.ravel()[some] * (1 - share) * kernel(u) / width * land.weights[at][some % len(at)]
+    return np.bincount(some // len(at), weights=part, minlength=len(t))
+
+
+def _apart(along: Array, around: Array, bend: Array, request: Request) -> Array:
+    """Return how far apart neighbours are in frequency, MHz, and no less than a step of the fields resolves.
+
+    A share near a fold ends where the smear is 1/FOLD of the distance; it must be as long as a step there.
+    """
+    least = bend * (FOLD * (0.9 * STEP * request.scale) ** 2 / request.grain.smear)
+    return np.sqrt(along * along + around * around + least * least) + 1e-9
+
+
+def _share(apart: Array, slope: Array, bend: Array, request: Request) -> Array:
+    """Return the share that is solved for: 1 where steep, 0 where flat or near a fold along the field.
+
+    A fold lies about slope/bend away, and a smear must be short beside that.
+    """
+    return point_share(_nearness(apart, slope, bend, request), 1.0)
+
+
+def _nearness(apart: Array, slope: Array, bend: Array, request: Request) -> Array:
+    grain = request.grain
+    return np.sqrt((apart / grain.far) ** 2 + FOLD * grain.smear * apart * bend) / np.maximum(slope, 1e-9)
+
+
+def _in_field(histograms: Histograms, land: Landscape, request: Request) -> int:
+    """Add the steep resonances' share; return their number."""
+    used = 0
+    grain = request.grain
+    for leaf in land.leaves:
+        ends = land.fields[leaf]
+        half = 0.5 * (ends[2] - ends[0])
         f, g = land.gap[leaf], land.slope[leaf] * half
         near = can_reach(f[0], f[1], g[0], g[1]) | can_reach(f[1], f[2], g[1], g[2])
-        at = np.flatnonzero(near)
+        steep = np.maximum(np.abs(g).max(axis=0), np.abs(np.diff(f, axis=0)).max(axis=0)) / half
+        apart = np.hypot(land.along[leaf], land.around[leaf]).min(axis=0)
+        at = np.flatnonzero(near & (apart < 1.5 * grain.far * steep))
         if not len(at):
             continue
         c = hermite.quintic(f[:, at], g[:, at])
         q, low, high = hermite.brackets(c, f[:, at])
-        t = hermite.refine(c[:, q], low, high)
-        found.append((at[q], np.full(len(q), number), t))
-    if not found:
-        empty = np.zeros((0, points))
-        return _Roots(np.zeros(points, dtype=np.intp), np.zeros(points, dtype=bool), *([empty] * 6))
-    point, leaf, t = (np.concatenate(c) for c in zip(*found, strict=True))
-    c, half = land.quintic(leaf, point)
-    slope = hermite.slope(c, t) / half
-    strength, apart = land.along(leaf, point, t)
-    field = land.fields[land.leaves[leaf, 1]] + half * t
-    steep = np.maximum(np.abs(slope), 1e-9)
-    distance = apart / steep
-    share = point_share(distance, request.grain.far)
-    # at a fold the slope vanishes and the curvature bounds how far the sheet runs
-    bend = np.abs(hermite.curvature(c, t)) / half**2
-    extent = 2 * np.minimum(distance, np.sqrt(2 * apart / np.maximum(bend, 1e-12)))
-    order = np.lexsort((field, point))
-    columns = (point, field, strength / steep, share, distance, extent, steep, slope)
-    point, field, weight, share, distance, extent, steep, slope = (v[order] for v in columns)
-    count = np.bincount(point, minlength=points)
-    first = np.cumsum(count) - count
-    rank = np.arange(len(point)) - first[point]
-    shape = (int(count.max(initial=0)), points)
-    out = [np.zeros(shape) for _ in range(6)]
-    for into, values in zip(out, (field, weight, share, distance, extent, steep), strict=True):
-        into[rank, point] = values
-    rising = np.zeros(points, dtype=bool)
-    rising[point[rank == 0]] = slope[rank == 0] > 0
-    return _Roots(count, rising, *out)
-
-
-def _add_folded(
-    histograms: Histograms, land: _Landscape, roots: _Roots, corners: Index, part: Array, request: Request
-) -> None:
-    """Project simplices at whose corners the number of roots differs, field by field."""
-    present = np.arange(len(roots.field))[:, None, None] < roots.count[corners]
-    at_corners = roots.field[:, corners]
-    low = np.where(present, at_corners, np.inf).min(axis=(0, 1))
-    high = np.where(present, at_corners, -np.inf).max(axis=(0, 1))
-    reach = np.where(present, roots.extent[:, corners], 0.0).max(axis=(0, 1)) + 0.1 * (high - low)
-    low, high = np.maximum(low - reach, request.low), np.minimum(high + reach, request.high)
-    # enough fields for every simplex on its own: its neighbours may be summed in another way
-    number = np.maximum(np.ceil((high - low) / (request.grain.close / 3)), SLICES).astype(np.intp)
-    step = (high - low) / number
-    which = np.repeat(np.arange(len(number)), number)
-    offset = np.arange(len(which)) - np.repeat(np.cumsum(number) - number, number)
-    fields = low[which] + (offset + 0.5) * step[which]
-    starts = land.fields[land.leaves[:, 0]]
-    leaf = np.clip(np.searchsorted(starts, fields, side="right") - 1, 0, len(starts) - 1)
-    inside = fields <= land.fields[land.leaves[leaf, 2]]
-    which, fields, leaf = which[inside], fields[inside], leaf[inside]
-    part = part[which] * step[which]
-    for start in range(0, len(which), 200_000):
-        block = slice(start, start + 200_000)
-        _project(histograms, land, corners[:, which[block]], part[block], fields[block], leaf[block], request)
-
-
-def _project(
-    histograms: Histograms,
-    land: _Landscape,
-    corners: Index,
-    part: Array,
-    fields: Array,
-    leaf: Index,
-    request: Request,
-) -> None:
-    many = np.broadcast_to(leaf, corners.shape).ravel()
-    flat = corners.ravel()
-    c, half = land.quintic(many, flat)
-    t = (np.broadcast_to(fields, corners.shape).ravel() - land.fields[land.leaves[many, 1]]) / half
-    gap = hermite.value(c, t)
-    steep = np.maximum(np.abs(hermite.slope(c, t)) / half, 1e-9)
-    strength, apart = land.along(many, flat, t)
-    spread = strength * (1 - point_share(apart / steep, request.grain.far))
-    density = fold_density(gap.reshape(corners.shape), spread.reshape(corners.shape), part)
-    hit = density != 0
-    histograms.points(fields[hit], density[hit])
+        c, point = c[:, q], at[q]
+        t = hermite.refine(c, low, high)
+        slope = np.maximum(np.abs(hermite.slope(c, t)) / half, 1e-9)
+        field = ends[1] + half * t
+        indices, basis = stencil(land.fields, np.full(len(field), leaf[1]), field)
+        nodes = indices, point
+        columns = (land.strength, land.bend, land.along, land.around)
+        strength, bend, *steps = ((basis * v[nodes]).sum(axis=0) for v in columns)
+        bend = np.abs(bend)
+        apart = _apart(*steps, bend, request)
+        share = _share(apart, slope, bend, request)
+        some = np.flatnonzero(share > 0)
+        weight = (strength / slope * share * land.weights[point])[some]
+        histograms.smeared(field[some], weight, grain.smear_for((apart / slope)[some]))
+        used += len(some)
+    return used

@@ -15,12 +15,12 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit.branches import Branches, KnotData, Request
+from spinfit.branches import Branches, Request
 from spinfit.exact import deposit
 from spinfit.hamiltonian import System
 from spinfit.knots import continued, restored, settle
 from spinfit.lineshape import FieldGrid
-from spinfit.loops import add_looping
+from spinfit.loops import add_pairs
 from spinfit.orientations import Mesh, Rings
 from spinfit.resonance import find
 from spinfit.sheets import Histograms, spacing
@@ -30,8 +30,6 @@ Array = NDArray[np.float64]
 
 FLATNESS = 0.23
 """Root of the curvature of a field over one step of the mesh, in line widths, at the default tolerance."""
-LARGEST_LINE = 200_000
-"""Points of a one-dimensional mesh."""
 
 
 @dataclass
@@ -84,9 +82,11 @@ def powder(
     histograms = Histograms(grid, request.scale)
     if len(knots.branches.pair):
         _sum_branches(knots.rings, knots.branches, request, histograms, report)
+    error = 0.0
     if knots.other.any():
-        _sum_loops(knots.rings, knots.data, np.flatnonzero(knots.other), request, histograms, report)
-    report.rings, report.estimated_error = knots.rings.rings, knots.error
+        points, error = add_pairs(histograms, knots.rings, knots.data, np.flatnonzero(knots.other), request)
+        report.mesh_points += points
+    report.rings, report.estimated_error = knots.rings.rings, math.hypot(knots.error, error)
     report.directions, report.diagonalisations = knots.directions, knots.diagonalisations
     report.pairs, report.looping = len(knots.branches.pair), int(knots.other.sum())
     return histograms, report
@@ -200,53 +200,3 @@ def _sum_branches(rings: Rings, branches: Branches, request: Request, histograms
             else:
                 weighted = (weights * mesh.weights()).ravel()
                 histograms.smeared(fields.ravel(), weighted, request.grain.smear_for(apart).ravel())
-
-
-def _sum_loops(
-    rings: Rings, data: KnotData, rows: NDArray[np.intp], request: Request, histograms: Histograms, report: Report
-) -> None:
-    """Add pairs whose resonances come and go."""
-    for row in rows:
-        mesh = Mesh(rings.kind, *_mesh_for_loop(rings, data, row, request))
-        report.mesh_points += add_looping(histograms, rings, mesh, data, row, request)
-
-
-def _mesh_for_loop(rings: Rings, data: KnotData, row: int, request: Request) -> tuple[int, int]:
-    """Return the mesh on which simplices are flat, judged where the pair is near resonance.
-
-    The curvature of the level difference at fixed field, over its slope along the field, is that
-    of the resonance field; at a fold, where the slope vanishes, what counts is the frequency.
-    """
-    probe = Mesh(rings.kind, 2 * rings.rings, _probe_azimuths(rings))
-    k = len(data.fields)
-    gap, slope = rings.to_mesh(np.concatenate([data.gap[row], data.slope[row]]), probe).reshape(
-        2, k, probe.thetas + 1, -1
-    )
-    step = np.gradient(data.fields) if k > 1 else np.ones(1)
-    near = np.abs(gap) <= 1.5 * np.abs(slope) * step[:, None, None] + request.scale * FOLD_SLOPE
-    if not near.any():
-        return _ladder_size(2 * rings.rings), _ladder_size(_probe_azimuths(rings))
-    bend = np.where(near, 1.0 / np.maximum(np.abs(slope), FOLD_SLOPE), 0.0)
-    flatness = FLATNESS * (request.tolerance / 1e-3) ** 0.17
-    thetas = _loop_size(gap, bend, 1, probe.thetas, request, flatness, even=True)
-    if rings.kind == "axial":
-        return min(_ladder_size(20 * thetas), LARGEST_LINE), 1
-    phis = _loop_size(gap, bend, 2, probe.phis, request, flatness, even=rings.kind == "octant")
-    return _ladder_size(max(thetas, 2 * rings.rings)), _ladder_size(max(phis, _probe_azimuths(rings)))
-
-
-FOLD_SLOPE = 8.0
-"""MHz/mT below which a level difference counts as folding, about a quarter of a free spin's slope."""
-
-
-def _loop_size(
-    gap: Array, bend: Array, axis: int, intervals: int, request: Request, flatness: float, even: bool
-) -> float:
-    before, after = (1, 1) if even else (intervals - 1, 0)
-    lower = np.take(gap, [before], axis + 0)
-    upper = np.take(gap, [-2 if even else after], axis + 0)
-    padded = np.concatenate([lower, gap, upper], axis)
-    second = np.abs(np.diff(padded, 2, axis=axis)) * bend
-    # the few sharpest spots, where levels cross on an axis, would size the mesh for everything
-    sharp = np.quantile(second[second > 0], 0.98) if (second > 0).any() else 0.0
-    return float(np.sqrt(sharp * intervals**2 / request.scale) / flatness)
