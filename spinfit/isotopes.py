@@ -82,6 +82,8 @@ def isotope(name: str) -> Isotope:
             right = f'did you mean "{mass}{symbol}"?'
         elif own:
             right = f"known of {symbol}: {', '.join(own)}"
+        elif (near := nearest(f"{mass}{symbol}", known)).startswith("did"):
+            right = near
     elif (near := nearest(name, known)).startswith("did"):
         right = near
     raise InputError(f'"{name}" is not a known isotope', right)

@@ -401,8 +401,8 @@ NUCLEUS = '[[species.nucleus]]\nisotope = "63Cu"\nA = "1 MHz"\n'
         ('A = "1 MHz"', 'A = "1 MHz"\ntreat = "exactly"', 'species.1.nucleus.1.treat: "exactly" is not known; did you mean "exact"'),
         ('A = "1 MHz"', 'A = "1 MHz"\nname = "width"', 'species.1.nucleus.1.name: "width" means something else'),
         ('A = "1 MHz"', 'A = "1 MHz"\nspin = 1', 'species.1.nucleus.1: unknown key "spin"'),
-        ('A = "1 MHz"', 'A = "1 MHz"\ncount = 9\ntreat = "exact"', "species.1: its spin space has 1048576 dimensions, one matrix"),
-        ('A = "1 MHz"', 'A = "1 MHz"\ncount = 900\ntreat = "exact"', "species.1: its spin space has 10^542 dimensions"),
+        ('A = "1 MHz"', 'A = "1 MHz"\nP = "1, 1, -2 MHz"\ncount = 9\ntreat = "exact"', "species.1: its spin space has 1048576 dimensions, one matrix"),
+        ('A = "1 MHz"', 'A = "1 MHz"\nP = "1, 1, -2 MHz"\ncount = 900\ntreat = "exact"', "species.1: its spin space has 10^542 dimensions"),
         ('isotope = "63Cu"', 'isotope = "1H"\nP = "-1, -1, 2 MHz"', "species.1.nucleus.1.P: 1H has no quadrupole moment (I < 1)"),
     ],
 )  # fmt: skip

@@ -246,7 +246,7 @@ def _stevens(table: Table, S: float) -> tuple[tuple[tuple[int, int], float], ...
     for key in data:
         match = re.fullmatch(r"B([0-9]{1,3})_(m?)([0-9]{1,3})", key, re.ASCII)
         if match is None:
-            right = nearest(key, known)
+            right = nearest(key.replace("-", "m"), known)
             right = right if right.startswith("did") else "write B2_0, B4_3, B4_m3 (q = -3), ..."
             raise InputError(f'"{key:.40}" is no operator', right, place=place)
         k, q = int(match[1]), int(match[3]) * (-1 if match[2] else 1)
@@ -263,20 +263,32 @@ def _stevens(table: Table, S: float) -> tuple[tuple[tuple[int, int], float], ...
 def _check_dimension(table: Table, spins: Sequence[Spin], nuclei: Sequence[Nucleus]) -> None:
     """Refuse a spin space that no memory holds: electrons, and nuclei that shall be exact."""
     log = sum(math.log10(2 * spin.S + 1) for spin in spins)
-    for nucleus in nuclei:
-        if nucleus.treat == "exact":
-            name = nucleus.isotope
-            own = isotope(name).spin if name else max(one.spin for one in natural(str(nucleus.element)))
-            log += nucleus.count * math.log10(2 * own + 1)
+    exact = [nucleus for nucleus in nuclei if nucleus.treat == "exact"]
+    log += sum(map(_log_states, exact))
     if log <= math.log10(LARGEST_DIMENSION) + 1e-9:
         return
     size = f"{10**log:.0f}" if log < 9 else f"10^{log:.0f}"
     gigabytes = f"{16e-9 * 10 ** (2 * log):.3g}" if log < 100 else f"10^{2 * log - 8:.0f}"
+    right = "use fewer or smaller spins"
+    if exact:
+        weakest = min(exact, key=lambda nucleus: max(map(abs, nucleus.A)))
+        which = f"nucleus {nuclei.index(weakest) + 1} ({weakest.isotope or weakest.element})"
+        right = f'drop the weakest coupled nuclei, {which} first, or write treat = "second order" for them'
     raise InputError(
         f"its spin space has {size} dimensions, one matrix of which takes {gigabytes} GB",
-        f'up to {LARGEST_DIMENSION} is taken: lower S, drop spins, or treat nuclei = "auto" or "first order"',
+        f"up to {LARGEST_DIMENSION} is taken: {right}",
         place=table.place,
     )
+
+
+def _log_states(nucleus: Nucleus) -> float:
+    """Return log10 of the states of one exact nucleus; equivalent ones without P count by their total spin."""
+    name = nucleus.isotope
+    spins = [isotope(name).spin] if name else [one.spin for one in natural(str(nucleus.element)) if one.spin]
+    if any(nucleus.P):
+        return nucleus.count * math.log10(2 * max(spins) + 1)
+    # a mixture of isotopes has one total spin for each kind
+    return sum(math.log10(2 * spin * nucleus.count / len(spins) + 1) for spin in spins)
 
 
 def _populations(table: Table, spins: Sequence[Spin]) -> tuple[float, ...] | None:
