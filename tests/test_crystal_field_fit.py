@@ -2,7 +2,9 @@
 
 import json
 import math
+import re
 from dataclasses import replace
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -363,6 +365,19 @@ def test_the_fit_command_reports_it(tmp_path, capsys):
     record = json.loads((tmp_path / "out" / "outcome.json").read_text(encoding="utf-8"))
     assert record["parameters"]["cu.g_z"]["uncertainty"] > 0
     assert record["parameters"]["cu.g_z"]["varied"] is False
+
+
+def test_the_job_of_the_documentation_runs(tmp_path):
+    """docs/ion.md, word for word, with the trace of the tests."""
+    page = (Path(__file__).resolve().parents[1] / "docs" / "ion.md").read_text(encoding="utf-8")
+    blocks = re.findall(r"```toml\n(.*?)```", page, flags=re.DOTALL)
+    (text,) = [block for block in blocks if "species.crystal_field" in block]
+    path = job_file(tmp_path, text)
+    (tmp_path / "t.csv").rename(tmp_path / "glass.csv")
+    outcome = fit(read_job(path))
+    for name in ("xy", "yz"):
+        found = outcome.parameters[f"cu.crystal_field.{name}"]
+        assert abs(found.value - ENERGIES[name]) < 4 * found.uncertainty
 
 
 def test_a_field_of_a_species_is_plain_data():

@@ -121,3 +121,15 @@ def test_starts():
     erbium = start_parameters("Er3+", 0.5)
     np.testing.assert_allclose(np.diag(erbium.g), 6.8, atol=0.1)  # cubic gamma 7, K. R. Lea et al. (1962)
     assert spin_parameters(copper(0.0)).g == pytest.approx(G_ELECTRON * np.eye(3))
+
+
+def test_rounding_makes_no_tilt():
+    """A cubic field has no D, and an axial one no E, whatever the diagonalisation rounds."""
+    racah = racah_to_slater(900 * CM, 3800 * CM)
+    cubic = IonModel(Shell(3, 2, 8), 600 * CM, racah, from_octahedral(9000 * CM))
+    spin = spin_parameters(cubic).as_spin()
+    assert (spin.D, spin.E) == (0.0, 0.0)
+    assert spin.g_tilt == spin.D_tilt == (0.0, 0.0, 0.0)
+    axial = spin_parameters(IonModel(Shell(3, 2, 8), 600 * CM, racah, from_octahedral(9000 * CM, 50 * CM))).as_spin()
+    assert axial.g_tilt == axial.D_tilt == (0.0, 0.0, 0.0)
+    assert abs(axial.E) < 1e-6 * abs(axial.D)

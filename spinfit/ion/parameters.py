@@ -48,7 +48,8 @@ class SpinParameters:
     def as_spin(self) -> Spin:
         """Return a `species.Spin` with principal values and tilts."""
         values, axes = _principal(self.g)
-        D, E, D_axes = _zero_field(self.D) if self.S >= 1 else (0.0, 0.0, np.eye(3))
+        split = self.S >= 1 and np.abs(self.D).max() > _NO_SPLITTING
+        D, E, D_axes = _zero_field(self.D) if split else (0.0, 0.0, np.eye(3))
         return Spin(
             S=self.S,
             g=(float(values[0]), float(values[1]), float(values[2])),
@@ -62,6 +63,8 @@ class SpinParameters:
 # Off-diagonal parts below this, relative to the tensor, are rounding of the diagonalisation: a tilt made of
 # them would only hide the symmetry.
 _STRAIGHT = 1e-9
+# A kilohertz: far above the rounding of a cubic field's D (about 1e-6 MHz), far below any line width.
+_NO_SPLITTING = 1e-3
 
 
 def _is_straight(tensor: NDArray) -> bool:
