@@ -13,6 +13,7 @@ from stub_engine import simulate
 from spinfit.errors import InputError
 from spinfit.fitting.driver import fit as real_fit
 from spinfit.fitting.residuals import Problem, full_view
+from spinfit.fitting.signs import restored
 from spinfit.fitting.solve import descend
 from spinfit.fitting.starts import neighbours
 from spinfit.species import Nucleus
@@ -274,6 +275,34 @@ def test_sign_of_A():
     outcome = fit(jobs.job(jobs.trace(signal), model=model, vary=("r.g", "r.1H.A")))
     note = next(n for n in outcome.warnings if n.code == "sign_of_A")
     assert "r.1H.A" in note.text
+
+
+def test_signs_that_do_not_matter_are_those_of_the_start():
+    """Without a temperature +D and -D have one trace: a descent that went through zero is turned back."""
+    model = (jobs.species(g=(2.02,), S=1.0, D=300.0),)
+    signal = jobs.clean_signal(*model)
+    signal = signal + jobs.level(signal, 80) * np.random.default_rng(36).normal(size=signal.size)
+    start = (jobs.species(g=(2.02,), S=1.0, D=280.0),)
+    problem = Problem(jobs.job(jobs.trace(signal), model=start, vary=("r.g", "r.D")), simulate)
+    view = full_view(problem.job.traces, problem.noises, 1e-4)
+    turned = descend(problem, view, np.array([2.02, -310.0]))
+    assert turned.point.free[1] < -290
+    back = restored(problem, view, turned)
+    assert back.point.free[1] == pytest.approx(-turned.point.free[1], rel=1e-3)
+    assert back.point.chi2 == pytest.approx(turned.point.chi2, rel=1e-4)
+
+
+def test_signs_that_matter_stay():
+    """At 1 K the trace tells the sign of D: the start's is not put back."""
+    model = (jobs.species(g=(2.02,), S=1.0, D=300.0),)
+    signal = jobs.clean_signal(*model, temperature=1.0)
+    signal = signal + jobs.level(signal, 80) * np.random.default_rng(37).normal(size=signal.size)
+    start = (jobs.species(g=(2.02,), S=1.0, D=-280.0),)
+    trace = jobs.trace(signal, temperature=1.0)
+    problem = Problem(jobs.job(trace, model=start, vary=("r.g", "r.D")), simulate)
+    view = full_view(problem.job.traces, problem.noises, 1e-4)
+    found = descend(problem, view, np.array([2.02, 290.0]))
+    assert restored(problem, view, found).point.free[1] == pytest.approx(300, abs=5)
 
 
 def test_limit_that_was_hit():

@@ -27,7 +27,7 @@ def no_constants(name):
 
 def test_keys_are_those_promised():
     record = outcome_record(outcome())
-    assert list(record) == ["parameters", "fractions", "quality", "correlations", "warnings", "provenance"]
+    assert list(record) == ["parameters", "fractions", "quality", "correlations", "budget", "warnings", "provenance"]
     for value in record["parameters"].values():
         assert list(value) == [
             "value", "uncertainty", "uncertainty_noise", "uncertainty_field", "unit", "varied", "at_limit",

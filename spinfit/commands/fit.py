@@ -14,49 +14,181 @@ from spinfit.errors import InputError
 
 NAME = "fit"
 SUMMARY = "fit a model to measured traces: values, uncertainties, pictures"
-EXAMPLES = ("spinfit fit kiln-07.toml", "spinfit fit kiln-07.toml --out kiln-07", "spinfit fit kiln-07.toml --json")
+EXAMPLES = (
+    "spinfit fit kiln-07.toml",
+    "spinfit fit kiln-07.toml --out kiln-07",
+    "spinfit fit kiln-07.toml --json",
+    "spinfit fit kiln-07.toml --out kiln-07 --profile cu.g_z --bootstrap 200",
+    "spinfit fit axial.toml rhombic.toml --compare",
+)
 # Seconds between lines of progress where nobody watches a terminal.
 PROGRESS_EVERY = 5.0
 
 
 def options(parser: argparse.ArgumentParser) -> None:
     """Add the command's arguments."""
-    parser.add_argument("job", metavar="JOB.toml", help="job file")
+    parser.add_argument("job", metavar="JOB.toml", nargs="+", help="job file; several with --compare")
     parser.add_argument(
         "--out",
         metavar="DIR",
         help="write outcome.json, curves.csv, fit.png, report.html and outcome.h5 there; without it nothing is written",
+    )
+    parser.add_argument(
+        "--profile",
+        metavar="NAME",
+        nargs="+",
+        action="extend",
+        default=[],
+        help="hold a varied parameter at values around the best and refit the others; give NAMEs after the job",
+    )
+    parser.add_argument(
+        "--bootstrap", metavar="N", help="refit N traces of resampled residuals; 200 give an uncertainty to 5 %%"
+    )
+    parser.add_argument(
+        "--compare", action="store_true", help="fit several jobs to the same data and say which model it supports"
     )
 
 
 def run(args: argparse.Namespace, screen: Screen) -> int:
     """Fit, print, write."""
     from spinfit.files.job import read_job
-    from spinfit.fitting.driver import fit
 
-    job = read_job(args.job)
+    resamples = _count(args.bootstrap)
+    if args.compare:
+        return _compare(args, screen)
+    if len(args.job) > 1:
+        raise InputError(
+            f'"{args.job[1]}" is one argument too many', "fit jobs one by one, or add --compare", place="fit"
+        )
+    job = read_job(args.job[0])
     is_new = args.out is not None and not Path(args.out).exists()
     folder = None if args.out is None else ready_folder(args.out)
-    points = max(1, sum(int(trace.used.sum()) for trace in job.traces) + sum(len(one.field) for one in job.lines))
+    _check_profiled(job, args.profile, resamples)
     try:
-        with shown_progress(screen, points) as progress:
-            outcome = fit(job, progress=progress)
-        written = [] if folder is None else write_outcome(folder, outcome)
+        outcome, profiles, resampled = _fitted(job, args.profile, resamples, screen)
+        written = [] if folder is None else write_outcome(folder, outcome, profiles=profiles, resampled=resampled)
     except BaseException:
         if is_new and folder is not None:  # a refused fit leaves no empty folder behind
             with suppress(OSError):
                 folder.rmdir()
         raise
-    _say(screen, outcome, folder, written)
+    _say(screen, outcome, folder, written, profiles=profiles, resampled=resampled)
+    return _code(outcome)
+
+
+def _code(outcome: Any) -> int:
     return 0 if outcome.quality.converged and outcome.quality.finished else 1
 
 
-def _say(screen: Screen, outcome: Any, folder: Path | None, written: list[str]) -> None:
+def _count(text: str | None) -> int:
+    """Return the number of resamples, 0 for none."""
+    if text is None:
+        return 0
+    if not text.isdigit() or not 2 <= int(text) <= 100_000:
+        raise InputError(f'"{text}"', "write a whole number from 2 to 100000, such as 200", place="--bootstrap")
+    return int(text)
+
+
+def _check_profiled(job: Any, names: list[str], resamples: int) -> None:
+    """Refuse names that cannot be profiled before the fit, not after it."""
+    from spinfit.fitting.parameters import Binding, expand_vary, members
+
+    if job.lines and (names or resamples):
+        option = "--profile" if names else "--bootstrap"
+        raise InputError("the job fits line positions", f"take {option} out: it is for traces", place=option)
+    if not names:
+        return
+    parameters = Binding(job.species, job.sample, job.traces).parameters
+    varied = expand_vary(job.vary, parameters)
+    for name in names:
+        if not any(member in varied for member in members(name, parameters, place="--profile")):
+            raise InputError(f'"{name}" is not varied', "name one of " + ", ".join(varied[:8]), place="--profile")
+
+
+def _fitted(job: Any, profiled: list[str], resamples: int, screen: Screen) -> tuple[Any, Any, Any]:
+    """Fit, then whatever was asked for beyond it."""
+    from spinfit.fitting.driver import fit
+    from spinfit.fitting.parameters import Binding, members
+    from spinfit.fitting.resample import bootstrap, profile
+
+    points = max(1, sum(int(trace.used.sum()) for trace in job.traces) + sum(len(one.field) for one in job.lines))
+    with shown_progress(screen, points) as progress:
+        outcome = fit(job, progress=progress)
+        profiles, resampled = (), None
+        if outcome.quality.finished and profiled:
+            every = Binding(job.species, job.sample, job.traces).parameters
+            asked = [m for name in profiled for m in members(name, every, place="--profile")]
+            known = [m for m in dict.fromkeys(asked) if outcome.parameters[m].uncertainty_noise is not None]
+            profiles = profile(job, outcome, known, progress=progress) if known else ()
+        if outcome.quality.finished and resamples:
+            resampled = bootstrap(job, outcome, resamples, progress=progress)
+    return outcome, profiles, resampled
+
+
+def _compare(args: argparse.Namespace, screen: Screen) -> int:
+    """Fit every job and rank the models; with --out each job has a folder of its own in it."""
+    from spinfit.files.job import read_job
+    from spinfit.fitting.comparison import compare
     from spinfit.report.outcome_json import outcome_record
     from spinfit.report.tables import outcome_lines
+    from spinfit.report.tried import comparison_lines
 
-    screen.emit(outcome_record(outcome))
-    screen.say(outcome_lines(outcome))
+    for option, given in (("--profile", args.profile), ("--bootstrap", args.bootstrap)):
+        if given:
+            raise InputError("does not go with --compare", f"take {option} out", place=option)
+    if len(args.job) < 2:
+        raise InputError("one job", "name two or more job files to compare", place="--compare")
+    jobs = [read_job(path) for path in args.job]
+    names = [job.name for job in jobs]
+    for name in names:
+        if names.count(name) > 1:
+            raise InputError(f'two jobs are called "{name}"', "give their files different names", place="--compare")
+    folders = [None if args.out is None else ready_folder(str(Path(args.out) / name)) for name in names]
+    outcomes = []
+    for job, folder in zip(jobs, folders, strict=True):
+        outcome, _, _ = _fitted(job, [], 0, screen)
+        if folder is not None:
+            write_outcome(folder, outcome)
+        outcomes.append(outcome)
+    found = compare(outcomes)
+    records = {one.name: outcome_record(one) for one in outcomes}
+    screen.emit({"comparison": found, "outcomes": records})
+    for outcome in outcomes:
+        screen.say(outcome_lines(outcome))
+        screen.say()
+    screen.say(comparison_lines(found))
+    if args.out is not None:
+        screen.say(f"\nwritten to {args.out}: {', '.join(names)}")
+    return max(map(_code, outcomes))
+
+
+def _more(profiles: Any, resampled: Any) -> dict[str, Any]:
+    """Return what outcome.json says of profiles and bootstrap."""
+    from spinfit.report.tried import bootstrap_record, profile_record
+
+    more: dict[str, Any] = {}
+    if profiles:
+        more["profiles"] = {one.name: profile_record(one) for one in profiles}
+    if resampled is not None:
+        more["bootstrap"] = bootstrap_record(resampled)
+    return more
+
+
+def _say(
+    screen: Screen, outcome: Any, folder: Path | None, written: list[str], *, profiles: Any = (), resampled: Any = None
+) -> None:
+    from spinfit.report.outcome_json import outcome_record
+    from spinfit.report.tables import outcome_lines
+    from spinfit.report.tried import bootstrap_table, budget_table, profile_table
+
+    screen.emit(outcome_record(outcome, _more(profiles, resampled)))
+    blocks = (
+        outcome_lines(outcome),
+        budget_table(outcome),
+        profile_table(profiles),
+        bootstrap_table(resampled, outcome),
+    )
+    screen.say("\n\n".join(block for block in blocks if block))
     screen.say()
     if folder is None:
         screen.say(f"{outcome.seconds:.1f} s; nothing was written: add --out DIR to keep curves, picture and report")
@@ -94,7 +226,7 @@ class _Tried(Exception):
     """Leaves a file that was only opened to see whether it can be."""
 
 
-def write_outcome(folder: Path, outcome: Any) -> list[str]:
+def write_outcome(folder: Path, outcome: Any, *, profiles: Any = (), resampled: Any = None) -> list[str]:
     """Write every file of an outcome, all or none: they are moved to their places when all are complete."""
     from contextlib import ExitStack
 
@@ -103,13 +235,19 @@ def write_outcome(folder: Path, outcome: Any) -> list[str]:
     from spinfit.report.html import report_text
     from spinfit.report.outcome_json import curves_text, outcome_text
     from spinfit.report.plots import fit_figure, picture_bytes
+    from spinfit.report.positions import positions_figure, positions_text
+    from spinfit.report.tried import profile_figure
 
-    picture = picture_bytes(fit_figure(outcome))
+    picture = picture_bytes(positions_figure(outcome) if outcome.positions else fit_figure(outcome))
+    curves = positions_text(outcome) if outcome.positions else curves_text(outcome)
+    drawn = picture_bytes(profile_figure(profiles)) if profiles else b""
     contents = {
-        "outcome.json": outcome_text(outcome).encode(),
-        "curves.csv": curves_text(outcome).encode(),
+        "outcome.json": outcome_text(outcome, _more(profiles, resampled)).encode(),
+        "curves.csv": curves.encode(),
         "fit.png": picture,
-        "report.html": report_text(outcome, picture).encode(),
+        "report.html": report_text(
+            outcome, picture, profiles=profiles, profile_picture=drawn, resampled=resampled
+        ).encode(),
         "outcome.h5": archive_bytes(outcome),
     }
     with ExitStack() as stack:

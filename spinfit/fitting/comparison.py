@@ -12,6 +12,7 @@ import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
+import numpy as np
 from scipy import special
 
 from spinfit.errors import InputError
@@ -101,7 +102,8 @@ def compare(outcomes: Sequence[Outcome]) -> Comparison:
 
 
 def _data(outcome: Outcome) -> tuple[object, ...]:
-    return tuple((c.measured.tobytes(), c.used.tobytes()) for c in outcome.curves)
+    lines = tuple((t.setting.tobytes(), np.float64(t.measured.size).tobytes()) for t in outcome.positions)
+    return tuple((c.measured.tobytes(), c.used.tobytes()) for c in outcome.curves) + lines
 
 
 def _ranked(outcomes: Sequence[Outcome]) -> tuple[Ranked, ...]:

@@ -84,6 +84,8 @@ class Bootstrap:
 
 def _at(job: Job, outcome: Outcome, simulate: Simulate) -> tuple[Problem, View, Array]:
     """Return the problem and where the finished fit ended."""
+    if job.lines:
+        raise InputError("the job fits line positions", "profile and bootstrap are for traces", place="lines")
     problem = Problem(job, simulate)
     free = np.array([problem.parameters[n].from_job(outcome.parameters[n].value) for n in problem.names])
     view = full_view(job.traces, problem.noises, engine_tolerance(problem))

@@ -14,7 +14,7 @@ import h5py
 import numpy as np
 
 from spinfit.files.curves import write_nxdata
-from spinfit.fitting.outcome import Curves, Outcome, Value
+from spinfit.fitting.outcome import Curves, Outcome, PositionTable, Value
 from spinfit.report.outcome_json import outcome_text
 
 FORMAT_VERSION = 1
@@ -73,6 +73,19 @@ def _trace(entry: h5py.Group, curves: Curves, name: str) -> None:
     _text(entry, "detect", curves.detect)
 
 
+def _positions(group: h5py.Group, table: PositionTable) -> None:
+    """Write one table of line positions as columns of one length."""
+    group.attrs["NX_class"] = "NXcollection"
+    names = ["angle"] if table.setting.shape[1] == 1 else ["theta", "phi"]
+    for name, column in zip(names, np.rad2deg(table.setting).T, strict=True):
+        _numbers(group, name, column, units="deg")
+    for name in ("measured", "fitted", "residual", "uncertainty"):
+        _numbers(group, name, getattr(table, name), units="mT")
+    for name in ("lower", "upper", "used"):
+        _numbers(group, name, getattr(table, name))
+    _numbers(group, "frequency", table.frequency, units="MHz")
+
+
 def _fill(root: h5py.File, outcome: Outcome) -> None:
     root.attrs["NX_class"] = "NXroot"
     root.attrs["spinfit_format"] = FORMAT_VERSION
@@ -80,6 +93,8 @@ def _fill(root: h5py.File, outcome: Outcome) -> None:
         _trace(root.create_group(curves.trace), curves, outcome.name)
     if outcome.curves:
         root.attrs["default"] = outcome.curves[0].trace
+    for table in outcome.positions:
+        _positions(root.create_group(table.name), table)
     fit = root.create_group(OUTCOME_GROUP)
     fit.attrs["NX_class"] = "NXcollection"
     _values(fit.create_group("parameters"), outcome.parameters)

@@ -8,10 +8,19 @@ from collections.abc import Mapping, Sequence
 from html import escape
 
 from spinfit.fitting.outcome import Outcome, Value
+from spinfit.fitting.resample import Bootstrap, Profile
 from spinfit.report.effective import effective_rows
 from spinfit.report.numbers import short, small, with_uncertainty
 from spinfit.report.outcome_json import clean
 from spinfit.report.tables import STRONG, remark, strong_correlations
+from spinfit.report.tried import (
+    BOOTSTRAP_HEADINGS,
+    PROFILE_HEADINGS,
+    SOURCES,
+    bootstrap_rows,
+    budget_rows,
+    profile_rows,
+)
 
 # A policy that lets the page load nothing at all: what it needs is in it.
 _POLICY = "default-src 'none'; img-src data:; style-src 'unsafe-inline'"
@@ -103,6 +112,31 @@ def _fractions(outcome: Outcome) -> str:
     return _table(["species", "fraction of spins"], rows)
 
 
+def _budget(outcome: Outcome) -> str:
+    rows = budget_rows(outcome)
+    if not rows:
+        return ""
+    note = (
+        '<p class="quiet">Standard uncertainties that add in quadrature. Field axis and frequency move all values '
+        "together: differences between components of g are better known than the components.</p>"
+    )
+    return _table(["uncertainty of", "unit", "in all", *SOURCES], rows, left=(0, 1)) + note
+
+
+def _tried(outcome: Outcome, profiles: Sequence[Profile], picture: bytes, resampled: Bootstrap | None) -> str:
+    """Return profiles of chi-squared and the bootstrap; empty when neither was asked for."""
+    text = ""
+    if profiles:
+        encoded = base64.b64encode(picture).decode()
+        alt = "rise of chi-squared against " + ", ".join(one.name for one in profiles)
+        text += _table(PROFILE_HEADINGS, profile_rows(profiles), left=(0, 1))
+        text += f'<figure><img alt="{escape(alt)}" src="data:image/png;base64,{encoded}"></figure>'
+    if resampled is not None and len(resampled.values) > 1:
+        text += _table(BOOTSTRAP_HEADINGS, bootstrap_rows(resampled, outcome), left=(0, 1))
+        text += f'<p class="quiet">{len(resampled.values)} refits; {resampled.failed} more did not converge.</p>'
+    return text
+
+
 def _correlations(outcome: Outcome) -> str:
     rows = [[one, two, f"{value:+.3f}"] for one, two, value in strong_correlations(outcome)]
     if not rows:
@@ -139,7 +173,14 @@ def _provenance(outcome: Outcome) -> str:
     return f"<details><summary>input hashes, versions, accuracy used</summary><pre>{escape(text)}</pre></details>"
 
 
-def report_text(outcome: Outcome, picture: bytes) -> str:
+def report_text(
+    outcome: Outcome,
+    picture: bytes,
+    *,
+    profiles: Sequence[Profile] = (),
+    profile_picture: bytes = b"",
+    resampled: Bootstrap | None = None,
+) -> str:
     """Return the page.
 
     Parameters
@@ -147,9 +188,14 @@ def report_text(outcome: Outcome, picture: bytes) -> str:
     outcome : Outcome
     picture : bytes
         PNG of the fit, put into the page.
+    profiles, profile_picture
+        Profiles of chi-squared and their PNG.
+    resampled : Bootstrap, optional
     """
-    names = ", ".join(curves.trace for curves in outcome.curves)
+    names = ", ".join([curves.trace for curves in outcome.curves] + [table.name for table in outcome.positions])
     alt = f"measured and fitted signal with residual against magnetic field: {names}"
+    if outcome.positions:
+        alt = f"measured and fitted fields of lines with residual against angle: {names}"
     warnings = "".join(f"<li>{escape(note.text)}</li>" for note in outcome.warnings)
     wide = "" if len(outcome.curves) > 1 else ' class="column"'
     encoded = base64.b64encode(picture).decode()
@@ -163,6 +209,8 @@ def report_text(outcome: Outcome, picture: bytes) -> str:
         _section("Parameters", _parameters(outcome)),
         _section("In other units", _effective(outcome)),
         _section("Fractions of spins", _fractions(outcome)),
+        _section("What the uncertainties are made of", _budget(outcome)),
+        _section("Tried beyond the fit", _tried(outcome, profiles, profile_picture, resampled)),
         _section("What the data cannot tell apart", _correlations(outcome)),
         _section("Quality", _quality(outcome)),
         _section("Job", f"<pre>{escape(job)}</pre>" if job else ""),
@@ -182,5 +230,6 @@ def _conditions(outcome: Outcome) -> str:
     shown = [
         f"{c.trace}: {c.frequency / 1e3:.6g} GHz, {c.field[0]:.5g} to {c.field[-1]:.5g} mT" for c in outcome.curves[:6]
     ]
+    shown += [f"{t.name}: {t.frequency / 1e3:.6g} GHz, {len(t.measured)} lines" for t in outcome.positions]
     more = f" and {len(outcome.curves) - 6} more traces" if len(outcome.curves) > 6 else ""
     return "; ".join(shown) + more

@@ -15,7 +15,7 @@ from typing import Any
 
 import numpy as np
 
-from spinfit.fitting.outcome import Curves, Outcome, Value
+from spinfit.fitting.outcome import Curves, Outcome, PositionTable, Value
 
 VALUE_KEYS = ("value", "uncertainty", "uncertainty_noise", "uncertainty_field", "unit", "varied", "at_limit")
 QUALITY_KEYS = ("converged", "finished", "chi2_reduced", "noise", "points", "free_parameters", "aicc", "bic")
@@ -46,12 +46,14 @@ def value_record(value: Value) -> dict[str, Any]:
     return record | {"derived": True} if value.derived else record
 
 
-def outcome_record(outcome: Outcome) -> dict[str, Any]:
+def outcome_record(outcome: Outcome, more: Mapping[str, Any] | None = None) -> dict[str, Any]:
     """Return an outcome as plain JSON types, without its curves.
 
-    Keys: ``parameters``, ``fractions``, ``quality``, ``correlations`` {names, matrix}, ``warnings``
-    [{code, text}] and ``provenance``, which holds the job's name, what the engine used and the
-    optimiser's message as well.
+    `more` is put behind it: what was tried beyond the fit (``profiles``, ``bootstrap``).
+
+    Keys: ``parameters``, ``fractions``, ``quality``, ``correlations`` {names, matrix}, ``budget`` {name:
+    {source: standard uncertainty}}, ``warnings`` [{code, text}] and ``provenance``, which holds the job's
+    name, what the engine used and the optimiser's message as well.
     """
     return clean(
         {
@@ -59,6 +61,7 @@ def outcome_record(outcome: Outcome) -> dict[str, Any]:
             "fractions": {name: value_record(value) for name, value in outcome.fractions.items()},
             "quality": {key: getattr(outcome.quality, key) for key in QUALITY_KEYS},
             "correlations": {"names": outcome.correlation_names, "matrix": outcome.correlation_matrix},
+            "budget": outcome.budget,
             "warnings": [{"code": note.code, "text": note.text} for note in outcome.warnings],
             "provenance": {
                 "name": outcome.name,
@@ -67,16 +70,27 @@ def outcome_record(outcome: Outcome) -> dict[str, Any]:
                     {"name": c.trace, "frequency_MHz": c.frequency, "scale": c.scale, "noise": c.noise}
                     for c in outcome.curves
                 ],
+                **({"lines": [_table_record(t) for t in outcome.positions]} if outcome.positions else {}),
                 "engine": outcome.engine,
                 "message": outcome.message,
             },
+            **(more or {}),
         }
     )
 
 
-def outcome_text(outcome: Outcome) -> str:
+def _table_record(table: PositionTable) -> dict[str, Any]:
+    return {
+        "name": table.name,
+        "frequency_MHz": table.frequency,
+        "lines": len(table.measured),
+        "left_out": int(np.sum(~table.used)),
+    }
+
+
+def outcome_text(outcome: Outcome, more: Mapping[str, Any] | None = None) -> str:
     """Return the text of `outcome.json`."""
-    return json.dumps(outcome_record(outcome), indent=2, ensure_ascii=False, allow_nan=False) + "\n"
+    return json.dumps(outcome_record(outcome, more), indent=2, ensure_ascii=False, allow_nan=False) + "\n"
 
 
 def _columns(curves: Curves, species: list[str]) -> list[np.ndarray]:

@@ -124,6 +124,10 @@ def outcome_lines(outcome: Outcome) -> str:
     """Return everything a person wants to see after a fit, as plain text."""
     traces = ", ".join(f"{c.trace} ({c.frequency / 1e3:.6g} GHz)" for c in outcome.curves[:6])
     traces += f" and {len(outcome.curves) - 6} more" if len(outcome.curves) > 6 else ""
+    if outcome.positions:
+        traces = ", ".join(
+            f"{t.name} ({len(t.measured)} lines at {t.frequency / 1e3:.6g} GHz)" for t in outcome.positions
+        )
     blocks = [
         f"{outcome.name}: {traces}" if traces else outcome.name,
         parameter_table(outcome),

@@ -1,0 +1,145 @@
+"""What was tried beyond the fit: profiles of chi-squared, bootstrap, and the budget of uncertainties."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Any
+
+from matplotlib.figure import Figure
+
+from spinfit.fitting.comparison import Comparison
+from spinfit.fitting.outcome import Outcome
+from spinfit.fitting.resample import Bootstrap, Profile
+from spinfit.report import style
+from spinfit.report.layout import table, wrapped
+from spinfit.report.numbers import short, small
+
+SOURCES = ("noise", "correlation and misfit", "field axis", "frequency")
+# An entry this small a part of the whole says nothing.
+_NEGLIGIBLE = 1e-2
+
+
+def budget_rows(outcome: Outcome) -> list[list[str]]:
+    """Return one row a parameter: name, unit, total, then each source; those that are next to nothing empty."""
+    rows = []
+    for name, parts in outcome.budget.items():
+        value = outcome.parameters[name]
+        total = value.uncertainty or 0.0
+        cells = [small(parts[s]) if parts.get(s, 0.0) > _NEGLIGIBLE * total else "" for s in SOURCES]
+        rows.append([name, value.unit, small(value.uncertainty), *cells])
+    return rows
+
+
+def budget_table(outcome: Outcome) -> str:
+    """Return what each uncertainty is made of, as text; empty when it is noise alone."""
+    if not any(parts.get(s, 0.0) > 0 for parts in outcome.budget.values() for s in SOURCES[1:]):
+        return ""
+    return table(["uncertainty of", "unit", "in all", *SOURCES], budget_rows(outcome), left=(0, 1))
+
+
+def profile_record(one: Profile) -> dict[str, Any]:
+    """Return a profile as plain types."""
+    return {
+        "unit": one.unit,
+        "values": one.values,
+        "rise": one.rise,
+        "interval_68": list(one.intervals[0]),
+        "interval_95": list(one.intervals[1]),
+    }
+
+
+def bootstrap_record(one: Bootstrap) -> dict[str, Any]:
+    """Return a bootstrap as plain types."""
+    spans = one.interval() if len(one.values) else [(None, None)] * len(one.names)
+    return {
+        "resamples": len(one.values),
+        "failed": one.failed,
+        "parameters": {
+            name: {"unit": unit, "uncertainty": sigma, "interval_68": list(span)}
+            for name, unit, sigma, span in zip(one.names, one.units, one.uncertainty, spans, strict=True)
+        },
+    }
+
+
+def profile_rows(profiles: Sequence[Profile]) -> list[list[str]]:
+    return [[one.name, one.unit, *(_span(pair) for pair in one.intervals)] for one in profiles]
+
+
+def _span(pair: tuple[float | None, float | None]) -> str:
+    low, high = ("beyond" if end is None else short(end, 7) for end in pair)
+    return f"{low} to {high}"
+
+
+PROFILE_HEADINGS = ("profile of", "unit", "68.3 %", "95.4 %")
+
+
+def profile_table(profiles: Sequence[Profile]) -> str:
+    return table(list(PROFILE_HEADINGS), profile_rows(profiles), left=(0, 1)) if profiles else ""
+
+
+BOOTSTRAP_HEADINGS = ("bootstrap of", "unit", "standard deviation", "noise part of the fit", "68.3 %")
+
+
+def bootstrap_rows(one: Bootstrap, outcome: Outcome) -> list[list[str]]:
+    spans = one.interval()
+    return [
+        [name, unit, small(float(sigma)), small(outcome.parameters[name].uncertainty_noise), _span(tuple(span))]
+        for name, unit, sigma, span in zip(one.names, one.units, one.uncertainty, spans, strict=True)
+    ]
+
+
+def bootstrap_table(one: Bootstrap | None, outcome: Outcome) -> str:
+    """Return the refits' spread beside what the fit said, as text."""
+    if one is None:
+        return ""
+    if len(one.values) < 2:
+        return f"bootstrap: none of {one.failed} refits converged"
+    text = table(list(BOOTSTRAP_HEADINGS), bootstrap_rows(one, outcome), left=(0, 1))
+    failed = f"; {one.failed} more did not converge" if one.failed else ""
+    return f"{text}\n{len(one.values)} refits to resampled residuals{failed}"
+
+
+def profile_figure(profiles: Sequence[Profile]) -> Figure:
+    """Return the rise of chi-squared against each profiled parameter, with the levels of 1 and 2 deviations."""
+    columns = min(len(profiles), 2)
+    rows = -(-len(profiles) // columns)
+    width = style.COLUMN_WIDTH if columns == 1 else style.PAGE_WIDTH
+    with style.styled():
+        figure = Figure(figsize=(width, 2.2 * rows), layout="constrained")
+        panels = figure.subplots(rows, columns, squeeze=False).ravel()
+        for axes, one in zip(panels, profiles, strict=False):
+            for level in (1.0, 4.0):
+                axes.axhline(level, color=style.GUIDE, lw=0.5)
+            axes.plot(one.values, one.rise, "o-", ms=2.5, color=style.FITTED)
+            axes.set_xlabel(f"{one.name} / {one.unit}" if one.unit else one.name)
+            axes.set_ylabel("rise of χ²")
+            axes.set_ylim(bottom=0)
+        for axes in panels[len(profiles) :]:
+            axes.set_visible(False)
+    return figure
+
+
+def comparison_lines(found: Comparison) -> str:
+    """Return the models by AICc, the tests of nested pairs and the verdict, as text."""
+    rows = [
+        [
+            one.name,
+            str(one.free_parameters),
+            short(one.chi2_reduced, 4),
+            f"{one.aicc_above_best:.1f}",
+            f"{one.bic_above_best:.1f}",
+            f"{one.weight:.3f}",
+        ]
+        for one in found.models
+    ]
+    blocks = [
+        table(["model", "free", "reduced chi-square", "AICc above best", "BIC above best", "weight"], rows, left=(0,))
+    ]
+    if found.tests:
+        rows = [
+            [t.smaller, t.larger, f"{t.F:.4g}", f"{t.freedom[0]}, {t.freedom[1]}", f"{t.probability:.2g}"]
+            for t in found.tests
+        ]
+        blocks.append(table(["model", "within", "F", "freedom", "by noise alone"], rows, left=(0, 1)))
+    blocks.append(wrapped(found.verdict))
+    return "\n\n".join(blocks)
