@@ -26,7 +26,7 @@ Array = NDArray[np.float64]
 
 SIZES = (8, 12, 16, 20, 24, 32, 40, 48, 64, 80, 96)
 """Numbers of rings that are tried in turn."""
-MOST_KNOTS = 12_000
+MOST_KNOTS = 5_000
 """Directions at which refinement gives up and says so."""
 POOR = 0.02
 """Error of the coarse half of the first set above which drawing the rings together is tried."""
@@ -53,6 +53,8 @@ class Knots:
     error : float
         Estimated error of the spectrum relative to its top.
     directions, diagonalisations : int
+    local : bool
+        Whether branches are better continued by splines than by series.
     """
 
     rings: Rings
@@ -62,6 +64,7 @@ class Knots:
     error: float
     directions: int
     diagonalisations: int
+    local: bool
 
 
 def settle(system: System, symmetry: Symmetry, request: Request) -> Knots:
@@ -173,7 +176,7 @@ def _along_meridian(trial: _Trial, symmetry: Symmetry, stretches: tuple[float, .
     sin = np.sin(theta)
     directions = np.column_stack([sin * math.cos(azimuth), sin * math.sin(azimuth), np.cos(theta)]) @ symmetry.axes.T
     nodes = trial.nodes.moved(directions, np.full(len(trial.nodes.directions), -1))
-    data = nodes.data(trial.data.pairs)
+    data = nodes.data(trial.data.parents)
     rows = np.flatnonzero((count_roots(data) == 1).all(axis=1))
     if not len(rows):
         return [0.0] * len(stretches), len(theta)
@@ -212,6 +215,7 @@ class _Trial:
         self.other = ~self.single & (counts.any(axis=1) | _touches(self.data))
         self._by_knot: Array | None = None
         self._loop_error = 0.0
+        self.local = False
 
     def error_by_knot(self) -> Array:
         """Return each knot's share of the error that the coarser half makes, shape (n,)."""
@@ -255,7 +259,13 @@ class _Trial:
         whole = self.weight_of_single()
         total = whole
         if self.single.any():
-            error += whole * self._miss(lambda values: coarse.to_finer(values[:, kept], self.rings))
+            miss = self._miss(lambda values: coarse.to_finer(values[:, kept], self.rings))
+            if miss.sum() > self.request.tolerance:
+                # where sorted levels nearly cross, branches have kinks, and splines may do better
+                local = self._miss(lambda values: coarse.to_finer_locally(values[:, kept], self.rings))
+                self.local = bool(local.sum() < miss.sum())
+                miss = local if self.local else miss
+            error += whole * miss
         if self.other.any():
             amount, miss = self._compare_gaps(np.flatnonzero(self.other), coarse, kept)
             error += miss * solid
@@ -311,7 +321,9 @@ class _Trial:
 
     def knots(self, error: float, spent: int) -> Knots:
         """Return the settled result."""
-        return Knots(self.rings, self.data, self.branches, self.other, error, len(self.nodes.directions), spent)
+        return Knots(
+            self.rings, self.data, self.branches, self.other, error, len(self.nodes.directions), spent, self.local
+        )
 
 
 def node_accuracy(request: Request) -> float:

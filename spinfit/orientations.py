@@ -263,6 +263,10 @@ class Rings:
         opposite = np.roll(rows, mesh.phis // 2, axis=2)
         return even @ (0.5 * (rows + opposite)) + odd @ (0.5 * (rows - opposite))
 
+    def to_finer_locally(self, values: Array, finer: Rings) -> Array:
+        """Continue values at the knots, shape (q, n), to the knots of another set by cubic splines."""
+        return values @ _knots_to_knots_locally(self, finer).T
+
     def without_harmonics(self, values: Array, kept: int) -> Array:
         """Return values at the knots, shape (q, n), with azimuthal harmonics above `kept` removed.
 
@@ -352,21 +356,44 @@ def _spline_matrix(knots: Array, angles: Array, parity: int, period: float = 0.0
     return interpolate.make_interp_spline(x, y, k=min(3, len(x) - 1))(angles)
 
 
-@lru_cache(maxsize=32)
-def _local_matrices(rings: Rings, mesh: Mesh) -> tuple[list[Array], Array, Array]:
-    phi = mesh.phi()
+def _splines_around(rings: Rings, phi: Array) -> list[Array]:
+    """Return for each ring the spline through its azimuths as a matrix, shape (len(phi), knots of the ring)."""
     around = []
     for i in range(rings.rings + 1):
         equator = i == rings.rings
         azimuths = _ring_azimuths(rings.kind, rings._intervals(i), equator)
-        if rings.kind == "octant" or len(azimuths) == 1:
+        if rings.kind in ("axial", "octant") or len(azimuths) == 1:
             around.append(_spline_matrix(azimuths, phi, 1))
             continue
         period = np.pi if rings.kind == "quarter" or equator else 2 * np.pi
         around.append(_spline_matrix(azimuths, np.mod(phi, period), 0, period))
-    s = stretched(np.linspace(0, 0.5 * np.pi, mesh.thetas + 1), rings.stretch)
+    return around
+
+
+def _splines_along(rings: Rings, theta: Array) -> tuple[Array, Array]:
+    """Return the even and the odd spline in theta as matrices, shape (len(theta), rings + 1)."""
+    s = stretched(theta, rings.stretch)
     knots = 0.5 * np.pi * np.arange(rings.rings + 1) / rings.rings
-    return around, _spline_matrix(knots, s, 1), _spline_matrix(knots, s, -1)
+    return _spline_matrix(knots, s, 1), _spline_matrix(knots, s, -1)
+
+
+@lru_cache(maxsize=32)
+def _local_matrices(rings: Rings, mesh: Mesh) -> tuple[list[Array], Array, Array]:
+    return _splines_around(rings, mesh.phi()), *_splines_along(rings, np.linspace(0, 0.5 * np.pi, mesh.thetas + 1))
+
+
+@lru_cache(maxsize=64)
+def _knots_to_knots_locally(coarse: Rings, fine: Rings) -> Array:
+    theta, phi = fine.angles()
+    even, odd = _splines_along(coarse, theta)
+    here = _splines_around(coarse, phi)
+    if coarse.kind != "half":
+        return np.concatenate([even[:, [i]] * m for i, m in enumerate(here)], axis=1)
+    there = _splines_around(coarse, phi + np.pi)
+    parts = zip(here, there, strict=True)
+    return np.concatenate(
+        [0.5 * (even[:, [i]] * (a + b) + odd[:, [i]] * (a - b)) for i, (a, b) in enumerate(parts)], axis=1
+    )
 
 
 @lru_cache(maxsize=64)

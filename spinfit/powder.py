@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 from spinfit.branches import Branches, Request
 from spinfit.exact import deposit
 from spinfit.hamiltonian import System
-from spinfit.knots import continued, restored, settle
+from spinfit.knots import Knots, continued, restored, settle
 from spinfit.lineshape import FieldGrid
 from spinfit.loops import add_pairs
 from spinfit.orientations import Mesh, Rings
@@ -81,7 +81,7 @@ def powder(
     knots = settle(system, symmetry, request)
     histograms = Histograms(grid, request.scale)
     if len(knots.branches.pair):
-        _sum_branches(knots.rings, knots.branches, request, histograms, report)
+        _sum_branches(knots, request, histograms, report)
     error = 0.0
     if knots.other.any():
         points, error = add_pairs(histograms, knots.rings, knots.data, np.flatnonzero(knots.other), request)
@@ -101,6 +101,7 @@ def _one_direction(system: System, request: Request, grid: FieldGrid, report: Re
         (request.low, request.high),
         microwave=request.microwave,
         temperature=request.temperature,
+        populations=request.populations,
     )
     report.directions, report.diagonalisations, report.pairs = 1, 1, len(got.field)
     histograms = Histograms(grid, request.scale)
@@ -177,8 +178,10 @@ def _probe_azimuths(rings: Rings) -> int:
     return {"axial": 1, "octant": 2, "quarter": 4, "half": 8}[rings.kind] * min(rings.harmonics, 24)
 
 
-def _sum_branches(rings: Rings, branches: Branches, request: Request, histograms: Histograms, report: Report) -> None:
+def _sum_branches(knots: Knots, request: Request, histograms: Histograms, report: Report) -> None:
     """Add every branch, continued to a mesh fine enough for it."""
+    rings, branches = knots.rings, knots.branches
+    to_mesh = rings.to_mesh_locally if knots.local else rings.to_mesh
     x, y, inverse = continued(branches.field, branches.weight)
     sizes = _mesh_for(rings, branches, request)
     for size in sorted(set(sizes)):
@@ -187,11 +190,11 @@ def _sum_branches(rings: Rings, branches: Branches, request: Request, histograms
         step = max(1, 2_000_000 // mesh.weights().size)
         for start in range(0, len(rows), step):
             part = rows[start : start + step]
-            both = rings.to_mesh(np.concatenate([x[part], y[part]]), mesh)
+            both = to_mesh(np.concatenate([x[part], y[part]]), mesh)
             fields, weights = restored(both[: len(part)], both[len(part) :], inverse[part][:, :, None])
             report.mesh_points += fields.size
             if branches.variance is not None:
-                own = np.maximum(rings.to_mesh(branches.variance[part], mesh), 0.0)
+                own = np.maximum(to_mesh(branches.variance[part], mesh), 0.0)
                 histograms.broadened(fields.ravel(), (weights * mesh.weights()).ravel(), own.ravel())
                 continue
             apart = spacing(fields, mesh)
