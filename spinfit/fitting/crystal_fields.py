@@ -32,8 +32,6 @@ _MODEL_STEP = 1e-4
 _TENSOR_STEP = 0.05
 # Components that move by less than this part of the largest do not move: rounding of the differences.
 _STILL = 1e-8
-# Singular values below this, relative, are directions in which the exact model does not move.
-_NOWHERE = 1e-7
 # Of derived quantities, which no job gives a unit.
 _UNITS = {"D": ("energy", "cm^-1"), "E": ("energy", "cm^-1"), "tilt": ("angle", "deg")}
 _EULER = ("alpha", "beta", "gamma")
@@ -130,8 +128,11 @@ def purely_of_fields(problem: Problem, point: Point) -> NDArray[np.bool_]:
 def sharpened(
     problem: Problem, view: View, point: Point, jacobian: Array, responses: list[FieldResponse]
 ) -> tuple[Array, NDArray[np.bool_]]:
-    """Return the Jacobian with the columns of crystal fields by way of g and D, and which columns those are."""
-    pure = purely_of_fields(problem, point)
+    """Return the Jacobian with the columns of crystal fields by way of g and D, and which columns those are.
+
+    Without responses (at a crossing of levels) it stays as it is.
+    """
+    pure = purely_of_fields(problem, point) if responses else np.zeros(len(problem.names), dtype=bool)
     if not pure.any():
         return jacobian, pure
     exact = np.zeros((view.points, len(problem.names)))
@@ -199,7 +200,7 @@ def derived_values(
             parts: list[tuple[float | None, float | None]] = [(None, None)] * len(rows)
         else:
             used = ~at_limit & (spread.known | purely_of_fields(problem, point))
-            parts = propagated_to(problem, view, point, jacobian, used, slopes, cut=_NOWHERE)
+            parts = propagated_to(problem, view, point, jacobian, used, slopes)
         for (name, value, _), (noise, field) in zip(rows, parts, strict=True):
             out[f"{one.name}.{name}"] = _value(name, value, noise, field)
     return out
@@ -232,33 +233,35 @@ def _value(name: str, value: float, noise: float | None, field: float | None) ->
     return Value(value * factor, both, *shown, unit=unit, derived=True)
 
 
-def field_notes(
+def field_rank(
     problem: Problem,
     jacobian: Array,
     pure: NDArray[np.bool_],
     at_limit: NDArray[np.bool_],
     responses: list[FieldResponse],
     chi2_reduced: float,
-) -> list[Note]:
-    """Say which crystal-field parameters the data determine, where that is not every one.
+) -> tuple[NDArray[np.bool_], list[Note]]:
+    """Say which crystal-field parameters the data leave open, shape (k,), and a note where there are any.
 
     All other varied parameters count as free.  A combination counts as undetermined when changing it by its
     own size (the whole field's for its energies) moves the trace by less than one standard deviation of the
     noise.
     """
+    left_open = np.zeros(pure.size, dtype=bool)
     chosen = np.flatnonzero(pure & ~at_limit)
     if not chosen.size:
-        return []
+        return left_open, []
     names = [problem.names[k] for k in chosen]
     scales = np.array([_scale(name, responses) for name in names])
     others = jacobian[:, ~pure & ~at_limit]
     others = others[:, np.linalg.norm(others, axis=0) > 0]
     basis = np.linalg.qr(others / np.linalg.norm(others, axis=0))[0] if others.size else others
     matrix = jacobian[:, chosen] * scales / max(chi2_reduced, 1.0) ** 0.5
-    # Names in directions are shortened where no two species can be confused.
+    # Names are shortened where no two species can be confused.
     labels = [name.removeprefix(responses[0].prefix) for name in names] if len(responses) == 1 else names
     report = rank_of(np.linalg.qr(matrix - basis @ (basis.T @ matrix), mode="r"), labels, scales)
-    return [Note("crystal_field_rank", _sentence(report))] if report.undetermined else []
+    left_open[chosen] = [label in report.undetermined for label in labels]
+    return left_open, [Note("crystal_field_rank", _sentence(report))] if report.undetermined else []
 
 
 def _scale(name: str, responses: list[FieldResponse]) -> float:

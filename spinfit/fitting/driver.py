@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spinfit.errors import InputError
-from spinfit.fitting.crystal_fields import FieldResponse, derived_values, field_notes, responses_of, sharpened
+from spinfit.fitting.crystal_fields import FieldResponse, derived_values, field_rank, responses_of, sharpened
 from spinfit.fitting.data import Job
 from spinfit.fitting.lines_outcome import fit_lines
 from spinfit.fitting.outcome import Note, Outcome
@@ -121,8 +121,8 @@ def _best_so_far(problem: Problem, view: View, best: Descent | None, free: Array
 def _conclude(problem: Problem, view: View, descent: Descent, *, finished: bool, begun: float) -> Outcome:
     """Uncertainties, notes and everything else at the end of a search."""
     at_limit = limits_reached(problem, descent.point.free)
-    spread = None
-    responses, pure = _responses(problem, descent), np.zeros(len(problem.names), dtype=bool)
+    spread, field_notes = None, []
+    responses = _responses(problem, descent)
     if finished and problem.names:
         # A descent that converged computed its last Jacobian a few hundredths of an uncertainty away.
         jacobian = descent.jacobian if descent.converged else None
@@ -131,15 +131,15 @@ def _conclude(problem: Problem, view: View, descent: Descent, *, finished: bool,
         jacobian, pure = sharpened(problem, view, descent.point, jacobian, responses)
         descent = replace(descent, jacobian=jacobian)
         if np.all(np.isfinite(jacobian)):
-            spread = spread_of(problem, view, descent.point, jacobian, at_limit)
+            chi2 = descent.point.chi2 / max(view.points - view.linear - len(problem.names), 1)
+            left_open, field_notes = field_rank(problem, jacobian, pure, at_limit, responses, chi2)
+            spread = spread_of(problem, view, descent.point, jacobian, at_limit, exact=pure, left_open=left_open)
     notes = [Note(code, f"{trace.name}: {text}") for trace in problem.job.traces for code, text in trace.notes]
     if not finished:
         notes.append(Note("unfinished", "The fit was stopped; the values are the best so far and have no uncertainty."))
         descent = replace(descent, converged=False)
     notes += notes_after(problem, view, descent, spread, at_limit)
-    if spread is not None and descent.jacobian is not None:
-        chi2 = descent.point.chi2 / max(view.points - view.linear - len(problem.names), 1)
-        notes += field_notes(problem, descent.jacobian, pure, at_limit, responses, chi2)
+    notes += field_notes
     notes += [_engine_note(warning) for warning in problem.signals.warnings]
     return outcome_of(
         problem,

@@ -35,6 +35,8 @@ Array = NDArray[np.float64]
 _BLIND = 3e-4
 # A column this small against the noise moves chi-squared by less than 1 over a hundred typical steps.
 _UNSEEN_STEPS = 100.0
+# Below this, columns that are exact relative to each other have no direction at all: rounding of the model.
+_NOWHERE = 1e-7
 # Standard deviations by which squared residuals on the lines may exceed those beside them.
 _UNEVEN = 4.5
 # Part of a line width by which the frequency is moved, as a field.
@@ -81,7 +83,16 @@ class Covariances:
         return inner / np.outer(sigma, sigma) if sigma.size and np.all(sigma > 0) else np.eye(sigma.size)
 
 
-def spread_of(problem: Problem, view: View, point: Point, jacobian: Array, at_limit: NDArray[np.bool_]) -> Covariances:
+def spread_of(
+    problem: Problem,
+    view: View,
+    point: Point,
+    jacobian: Array,
+    at_limit: NDArray[np.bool_],
+    *,
+    exact: NDArray[np.bool_] | None = None,
+    left_open: NDArray[np.bool_] | None = None,
+) -> Covariances:
     """Work out the covariances at the minimum.
 
     Parameters
@@ -90,9 +101,29 @@ def spread_of(problem: Problem, view: View, point: Point, jacobian: Array, at_li
         Projected, as `Problem.jacobian` gives it.
     at_limit : ndarray of bool, shape (k,)
         Parameters on a limit: the others' uncertainties are those with these held there.
+    exact : ndarray of bool, shape (k,), optional
+        Parameters whose columns are exact relative to each other, so that small differences count.
+    left_open : ndarray of bool, shape (k,), optional
+        Those of them that the data do not determine: they have no uncertainty, but the others' allow for
+        their freedom.
     """
     known, blind = _seen_parameters(problem, jacobian, at_limit)
-    return _covariances(problem, view, point, jacobian, known, blind)
+    if exact is None or left_open is None or not exact.any():
+        return _covariances(problem, view, point, jacobian, known, blind)
+    names = {name for name, is_exact in zip(problem.names, exact, strict=True) if is_exact}
+    blind = tuple(one for one in blind if not names.issuperset(one))
+    used = (known | exact) & ~at_limit & (np.linalg.norm(jacobian, axis=0) > 0)
+    found = _covariances(problem, view, point, jacobian, used, blind, _NOWHERE)
+    kept = used & ~left_open
+    both = np.outer(kept, kept)
+    return replace(
+        found,
+        known=kept,
+        noise=found.noise * both,
+        field=found.field * both,
+        white=found.white * both,
+        field_shifts=found.field_shifts * kept,
+    )
 
 
 def _covariances(
@@ -142,8 +173,6 @@ def propagated_to(
     jacobian: Array,
     used: NDArray[np.bool_],
     slopes: Sequence[Array],
-    *,
-    cut: float,
 ) -> list[tuple[float | None, float | None]]:
     """Noise and field part of the uncertainty of quantities that follow from the parameters.
 
@@ -152,9 +181,7 @@ def propagated_to(
     used : ndarray of bool, shape (k,)
         Parameters that are free; not each need be determined by itself.
     slopes : sequence of ndarray, shape (k,)
-        Derivative of each quantity; none along directions that the data do not see.
-    cut : float
-        Such directions have singular values, relative to the largest, at most this large.
+        Derivative of each quantity; none along directions in which no column moves.
 
     Returns
     -------
@@ -164,7 +191,7 @@ def propagated_to(
     used = used & (np.linalg.norm(jacobian, axis=0) > 0)
     if not used.any():
         return [(None, None)] * len(slopes)
-    spread = _covariances(problem, view, point, jacobian, used, cut=cut)
+    spread = _covariances(problem, view, point, jacobian, used, cut=_NOWHERE)
     return [_parts(np.where(used, slope, 0.0), spread) for slope in slopes]
 
 
