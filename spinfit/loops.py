@@ -30,7 +30,7 @@ Array = NDArray[np.float64]
 Index = NDArray[np.intp]
 
 STEP = 1.0
-"""Distance of the fields at which the sum in frequency is taken, in line widths.
+"""Distance of the fields at which the sum in frequency is taken, in line widths, at the default tolerance.
 
 That sum is smooth over several line widths: everything sharper is in the other one.
 """
@@ -38,7 +38,7 @@ KERNEL_REACH = 5.0
 """Where the kernel is cut, in units of its width."""
 FOLD = 30.0
 """How many times farther than its smear from a fold a resonance lies before it is solved for."""
-FLAT = 0.65
+FLAT = 0.5
 """Root of the curvature of a resonance field over one step of the first mesh, in line widths."""
 FOLD_SLOPE = 8.0
 """MHz/mT below which a level difference counts as folding, about a quarter of a free spin's slope."""
@@ -47,10 +47,10 @@ LARGEST = 40_000_000
 MOST_ROUNDS = 5
 POWER = 2.3
 """Power of the step with which a mesh's error falls, until it has been measured."""
-SHARE = 0.4
+SHARE = 0.5
 """Part of the tolerance that the meshes of looping pairs may use up."""
-BLOCK = 100_000
-"""Numbers of points x fields handled at a time, so that they stay in the processor's cache."""
+FIELDS, BLOCK = 12, 8000
+"""Numbers of fields and of points handled at a time, so that they stay in the processor's cache."""
 
 
 def kernel(u: Array) -> Array:
@@ -128,19 +128,20 @@ class _Pair:
         histograms = look.empty()
         used = add_looping(histograms, Landscape.of(self.fields, self.leaves, self.values, mesh), self.request)
         self.plain, self.transform = histograms.plain, histograms.transform()
-        before, self.missed = self.missed, self.coarser(look, 2, 2)
+        self.difference = self.coarser(look, 2, 2)
+        before, self.missed = self.missed, look.height(self.difference)
         if before and self.missed:
             self.power = min(5.0, max(1.5, math.log(before / self.missed) / math.log(self.grown)))
         return used
 
-    def coarser(self, look: _Look, along: int, around: int) -> float:
-        """Return how much the spectrum changes when only every second point, along theta or phi, is used."""
+    def coarser(self, look: _Look, along: int, around: int) -> NDArray[np.complex128]:
+        """Return how the transform changes when only every second point, along theta or phi, is used."""
         around = 1 if self.rings.kind == "axial" else around
         mesh = Mesh(self.rings.kind, self.size[0] // along, self.size[1] // around)
         values = np.ascontiguousarray(self.values[:, :, ::along, ::around])
         histograms = look.empty()
         add_looping(histograms, Landscape.of(self.fields, self.leaves, values, mesh), self.request)
-        return look.height(histograms.transform() - self.transform)
+        return histograms.transform() - self.transform
 
     @property
     def error(self) -> float:
@@ -149,8 +150,11 @@ class _Pair:
 
     def refine(self, look: _Look, allowed: float) -> bool:
         """Choose a finer mesh that should err by no more than `allowed`; return whether there is one."""
-        missed = [self.missed] if self.rings.kind == "axial" else [self.coarser(look, 2, 1), self.coarser(look, 1, 2)]
-        factors = [max(1.0, min(2.5, (m * 2.0**-self.power / allowed) ** (1 / self.power))) for m in missed]
+        missed = [self.missed]
+        if self.rings.kind != "axial":
+            missed = [look.height(self.coarser(look, *strides)) for strides in ((2, 1), (1, 2))]
+        power = max(POWER, self.power)
+        factors = [max(1.0, min(3.0, (m * 2.0**-self.power / (0.6 * allowed)) ** (1 / power))) for m in missed]
         widest = int(np.argmax(factors))
         factors[widest] = max(factors[widest], 1.4)
         size = tuple(ladder_size(f * n) if f > 1.1 else n for f, n in zip([*factors, 1.0], self.size, strict=False))
@@ -245,7 +249,10 @@ def add_pairs(histograms: Histograms, rings: Rings, data: KnotData, rows: Index,
     for _ in range(MOST_ROUNDS):
         used += sum(pair.sum(look) for pair in pending)
         top = look.height(look.others + sum(pair.transform for pair in pairs)) or 1.0
-        allowed = SHARE * request.tolerance * top / math.sqrt(len(pairs))
+        together = look.height(sum(pair.difference for pair in pairs))
+        largest = max(pair.missed for pair in pairs)
+        # errors of different pairs mostly lie at different fields
+        allowed = SHARE * request.tolerance * top * max(len(pairs) ** -0.5, min(1.0, largest / (together or 1.0)))
         pending = [pair for pair in pending if pair.error > allowed and pair.refine(look, allowed)]
         if not pending:
             break
@@ -273,14 +280,14 @@ def add_looping(histograms: Histograms, land: Landscape, request: Request) -> in
     fields, density, used = _in_frequency(land, request)
     some = density != 0
     # hides the grain of the fields themselves
-    smear = np.full(int(some.sum()), request.grain.smear * STEP * request.scale)
+    smear = np.full(int(some.sum()), request.grain.smear * _step(request))
     histograms.smeared(fields[some], density[some], smear)
     return used + _in_field(histograms, land, request)
 
 
 def _in_frequency(land: Landscape, request: Request) -> tuple[Array, Array, int]:
     """Return fields, the flat resonances' share of the intensity at each, and the points summed."""
-    step = STEP * request.scale
+    step = _step(request)
     first = 0.0 if request.low <= ZERO_FIELD else request.low  # the spectrum is even in B: half a step off zero
     fields = first + step * (0.5 + np.arange(max(1, math.ceil((request.high - first) / step))))
     density = np.zeros(len(fields))
@@ -295,40 +302,46 @@ def _in_frequency(land: Landscape, request: Request) -> tuple[Array, Array, int]
         apart = _apart(land.along[leaf], land.around[leaf], np.abs(land.bend[leaf]), request)
         steep = np.minimum(np.abs(land.slope[leaf]), np.abs(g + g[[1, 2, 0]]) / (2 * half))
         flat = _nearness(apart.max(axis=0), steep.min(axis=0), np.abs(land.bend[leaf]).max(axis=0), request) > 0.25
-        apart = apart.max(axis=0)
         hull = np.stack([*f, f[0] + g[0] / 3, f[1] - g[1] / 3, f[1] + g[1] / 3, f[2] - g[2] / 3])
         low, high = hull.min(axis=0), hull.max(axis=0)
-        margin = KERNEL_REACH * request.grain.smear * apart + 0.25 * (high - low)
+        widest = 1.2 * KERNEL_REACH * request.grain.smear * apart.max(axis=0)
+        margin = widest + 0.25 * (high - low)
         at = np.flatnonzero((low <= margin) & (high >= -margin) & flat)
-        used += len(at)
-        t = (fields[here] - ends[1]) / half
-        size = max(1, BLOCK // len(t))
-        for start in range(0, len(at), size):
-            density[here] += step * _density(land, leaf, half, t, fields[here], at[start : start + size], request)
+        c, widest = hermite.quintic(f[:, at], g[:, at]), widest[at]
+        # a few fields at a time: few of the points are near resonance at all of them
+        for start in range(here.start, here.stop, FIELDS):
+            some = slice(start, min(start + FIELDS, here.stop))
+            t = (fields[some] - ends[1]) / half
+            gap = (t[:, None] ** np.arange(6)) @ c
+            near = np.flatnonzero((np.abs(gap) < widest).any(axis=0))
+            used += len(near)
+            for first in range(0, len(near), BLOCK):
+                part = near[first : first + BLOCK]
+                slope = np.abs((t[:, None] ** np.arange(5) * (np.arange(1, 6) / half)) @ c[1:, part])
+                density[some] += step * _density(land, leaf[1], fields[some], at[part], gap[:, part], slope, request)
     return fields, density, used
 
 
-def _density(land: Landscape, leaf: Index, half: float, t: Array, fields: Array, at: Index, request: Request) -> Array:
-    """Return the sum over points of strength x kernel at the fields t of a leaf, shape of t."""
-    nodes = leaf[:, None], at
-    c = hermite.quintic(land.gap[nodes], land.slope[nodes] * half)
-    powers = t[:, None] ** np.arange(6)
-    indices, basis = stencil(land.fields, np.full(len(fields), leaf[1]), fields)
-    around = indices[:, :1], at
-    strength, bend, *steps = (basis.T @ v[around] for v in (land.strength, land.bend, land.along, land.around))
+def _density(
+    land: Landscape, middle: int, fields: Array, at: Index, gap: Array, slope: Array, request: Request
+) -> Array:
+    """Return the sum over points `at` of strength x kernel at each field, from gap and slope there."""
+    indices, basis = stencil(land.fields, np.full(len(fields), middle), fields)
+    nodes = indices[:, :1], at
+    strength, bend, *steps = (basis.T @ v[nodes] for v in (land.strength, land.bend, land.along, land.around))
     bend = np.abs(bend)
     apart = _apart(*steps, bend, request)
-    gap = powers @ c
     width = request.grain.smear * apart
     u = gap / width
     some = np.flatnonzero(np.abs(u) < KERNEL_REACH)
-    if not len(some):
-        return np.zeros(len(t))
-    slope = np.abs((powers[:, :5] * (np.arange(1, 6) / half)) @ c[1:])
-    apart, slope, bend, u, width = (v.ravel()[some] for v in (apart, slope, bend, u, width))
-    share = _share(apart, slope, bend, request)
-    part = strength.ravel()[some] * (1 - share) * kernel(u) / width * land.weights[at][some % len(at)]
-    return np.bincount(some // len(at), weights=part, minlength=len(t))
+    apart, slope, bend, u, width, strength = (v.ravel()[some] for v in (apart, slope, bend, u, width, strength))
+    rest = 1 - _share(apart, slope, bend, request)
+    part = strength * rest * kernel(u) / width * land.weights[at][some % len(at)]
+    return np.bincount(some // len(at), weights=part, minlength=len(fields))
+
+
+def _step(request: Request) -> float:
+    return STEP * request.scale * min(2.0, max(1.0, (request.tolerance / 1e-3) ** 0.3))
 
 
 def _apart(along: Array, around: Array, bend: Array, request: Request) -> Array:
@@ -336,7 +349,7 @@ def _apart(along: Array, around: Array, bend: Array, request: Request) -> Array:
 
     A share near a fold ends where the smear is 1/FOLD of the distance; it must be as long as a step there.
     """
-    least = bend * (FOLD * (0.9 * STEP * request.scale) ** 2 / request.grain.smear)
+    least = bend * (FOLD * (0.9 * _step(request)) ** 2 / request.grain.smear)
     return np.sqrt(along * along + around * around + least * least) + 1e-9
 
 
