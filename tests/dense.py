@@ -2,10 +2,10 @@
 
 Every direction of a product mesh is diagonalised; nothing is continued over the sphere.  Where the
 resonance field moves by less than about the line's sigma from one direction to the next, exact
-roots are added, which converges exponentially.  Elsewhere (near folds, where two roots of a pair
-meet and the weight diverges) the exact level differences at fixed fields are added through a
-Gaussian in frequency as wide as the step to the neighbouring directions: that errs as the square
-of the step, without any singularity.  `converged` compares meshes until they agree.
+roots are added, which converges exponentially.  Elsewhere, and within a few sigma of a fold, where
+two roots of a pair meet and the weight diverges, the exact level differences at fixed fields are
+added through a Gaussian in frequency as wide as the step to the neighbouring directions: that errs
+as the square of the step, without any singularity.  `converged` compares meshes until they agree.
 
 Fields in mT, energies and frequencies as E/h in MHz, widths peak to peak of the derivative in mT.
 """
@@ -99,8 +99,9 @@ class _Sum:
             self.bins += np.bincount(i, w * (1 - u), len(self.bins)) + np.bincount(i + 1, w * u, len(self.bins))
 
     def solve(self, frames: Array, fields: Array, i: NDArray, j: NDArray) -> tuple[Array, ...]:
-        """Return gap, slope, steps along theta and phi per rad, strength of the pair (i, j) at each point.
+        """Return gap, slope, curvature, steps along theta and phi per rad, strength of a pair at each point.
 
+        The curvature is of second order: E_i'' = 2 sum_k |<i|dH/dB|k>|^2 / (E_i - E_k).
         `frames` has shape (m, 3, 3): rows are the direction and its derivatives by theta and phi.
         """
         along = np.tensordot(frames, self.system.zeeman, 1)
@@ -119,7 +120,12 @@ class _Sum:
             p = populations(energy, self.scan.temperature)
             strength = strength * (p[rows, i] - p[rows, j])
         gap = energy[rows, j] - energy[rows, i] - self.scan.frequency
-        return gap, change[:, 0], fields * change[:, 1], fields * change[:, 2], strength
+        bend = 0.0
+        for z, level, sign in ((za, i, -1), (zb, j, 1)):
+            mixed = np.abs(np.einsum("mkl,mk->ml", v.conj(), np.einsum("mx,mxk->mk", frames[:, 0], z[..., 0]))) ** 2
+            apart = energy[rows, level][:, None] - energy
+            bend = bend + sign * 2 * np.where(apart == 0, 0.0, mixed / np.where(apart == 0, 1.0, apart)).sum(axis=1)
+        return gap, change[:, 0], np.abs(bend), fields * change[:, 1], fields * change[:, 2], strength
 
     def add(self, theta: Array, phi: Array, share: Array, h_theta: float, h_phi: float) -> None:
         """Add some directions."""
@@ -140,14 +146,26 @@ class _Sum:
         span = hull.max(axis=0) - hull.min(axis=0)
         near = (hull.min(axis=0) - 0.3 * span < 0) & (hull.max(axis=0) + 0.3 * span > 0)
         self._roots(frames, share, h_theta, h_phi, near, f, g)
-        slow = np.minimum(np.abs(g[0]), np.abs(g[1]))
-        turning = (g[0] * g[1] <= 0) | (slow * self.scan.scale < 1.5 * wide * length)
+        # the derivative's hull, and the largest bend of the cubic, on the safe side
+        inner = 3 * (f[1] - f[0]) - g[0] - g[1]
+        reach = np.stack([g[0], inner, g[1]])
+        slow = np.where((reach.min(axis=0) < 0) & (reach.max(axis=0) > 0), 0, np.abs(reach).min(axis=0))
+        bend = np.maximum(np.abs(inner - g[0]), np.abs(g[1] - inner)) * 2
+        turning = slow * length < 2.5 * self.slowest(2 * bend, wide * length**2) + 0.2 * length * np.ptp(reach, axis=0)
         least = np.maximum(np.maximum(hull.min(axis=0), -hull.max(axis=0)) - 0.3 * span, 0)
         self._folds(frames, share, h_theta, h_phi, turning & (least < 5 * wide), f, g, wide)
 
-    def share_of_roots(self, slope: Array, wide: Array) -> Array:
-        """Return 1 where roots alone converge, 0 near folds, smooth between."""
-        x = np.clip((np.abs(slope) * self.scan.scale / np.maximum(wide, 1e-9) - 0.5) / 0.5, 0, 1)
+    def slowest(self, bend: Array, wide: Array) -> Array:
+        """Return a slope below which roots alone do not converge: too close to a fold, or neighbours too far."""
+        return bend * self.scan.scale + wide / self.scan.scale
+
+    def share_of_roots(self, slope: Array, bend: Array, wide: Array) -> Array:
+        """Return 1 where roots alone converge, 0 near folds, smooth between.
+
+        Near a fold the weight diverges, so that a sum over roots would converge as the root of the
+        step only; a zone of fixed size in field leaves that to the sum over level differences.
+        """
+        x = np.clip(np.abs(slope) / np.maximum(self.slowest(bend, wide), 1e-9) - 1, 0, 1)
         return x**3 * (10 - 15 * x + 6 * x**2)
 
     def _roots(self, frames: Array, share: Array, h_theta: float, h_phi: float, near: NDArray, f: Array, g: Array):
@@ -166,13 +184,13 @@ class _Sum:
         field = self.nodes[cell] + t * length
         i, j = self.lower[pair], self.upper[pair]
         for turn in range(3):
-            gap, slope, by_theta, by_phi, strength = self.solve(frames[which], field, i, j)
+            gap, slope, bend, by_theta, by_phi, strength = self.solve(frames[which], field, i, j)
             step = -gap / np.where(slope == 0, 1e-12, slope)
             if turn < 2:
                 field = field + np.clip(step, -0.1 * length, 0.1 * length)
         good = np.abs(step) < 1e-3 * self.scan.scale
         wide = np.hypot(by_theta * h_theta, by_phi * h_phi)
-        weight = share[which] * self.share_of_roots(slope, wide) * strength / np.maximum(np.abs(slope), 1e-12)
+        weight = share[which] * self.share_of_roots(slope, bend, wide) * strength / np.maximum(np.abs(slope), 1e-12)
         self.deposit(field[good], weight[good])
 
     def _folds(self, frames: Array, share: Array, h_theta: float, h_phi: float, near: NDArray, f, g, wide):
@@ -195,11 +213,11 @@ class _Sum:
         for k in range(0, len(which), 20000):
             part = slice(k, k + 20000)
             at = which[part]
-            gap, slope, by_theta, by_phi, strength = self.solve(
+            gap, slope, bend, by_theta, by_phi, strength = self.solve(
                 frames[at], field[part], self.lower[pair[part]], self.upper[pair[part]]
             )
             wide_here = np.hypot(by_theta * h_theta, by_phi * h_phi)
-            rest = 1 - self.share_of_roots(slope, wide_here)
+            rest = 1 - self.share_of_roots(slope, bend, wide_here)
             narrow = np.maximum(0.7 * wide_here, 1e-6)
             bell = np.exp(-0.5 * np.minimum((gap / narrow) ** 2, 1400)) / (narrow * np.sqrt(2 * np.pi))
             self.deposit(field[part], share[at] * strength * rest * bell * step)
