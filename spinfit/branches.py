@@ -18,10 +18,11 @@ from numpy.typing import NDArray
 from spinfit import hermite
 from spinfit.broadening import Broadening
 from spinfit.hamiltonian import System
-from spinfit.levels import population_difference, solve
+from spinfit.levels import KELVIN_PER_MHZ, population_difference, solve, zero_field_state
+from spinfit.patterns import node_slopes, pattern
 from spinfit.resonance import can_reach, level_pairs, midpoint_error
 from spinfit.sheets import Grain
-from spinfit.weak import Felt, extent, node_slopes, pattern
+from spinfit.weak import Felt, extent
 
 Array = NDArray[np.float64]
 Pairs = tuple[NDArray[np.intp], NDArray[np.intp]]
@@ -47,6 +48,8 @@ class Request:
         "perpendicular" or "parallel".
     temperature : float or None
         K.
+    populations : tuple of float or None
+        Of the zero-field sublevels, in place of a temperature: strengths may then have either sign.
     broadening : Broadening or None
         What makes the widths of resonances differ.
     weigh : callable or None
@@ -63,6 +66,7 @@ class Request:
     temperature: float | None = None
     broadening: Broadening | None = None
     weigh: Callable[[Array], Array] | None = None
+    populations: tuple[float, ...] | None = None
 
 
 @dataclass(frozen=True, eq=False)
@@ -139,6 +143,7 @@ class FieldNodes:
         self.count = 0
         self.weights = None if request.weigh is None else request.weigh(directions)
         self.extent = extent(system, request.high)
+        self.state = None if request.populations is None else zero_field_state(system, request.populations)
 
     def _solve(self, directions: Array, fields: list[float]) -> list[tuple[Array, ...]]:
         n = len(directions)
@@ -150,14 +155,18 @@ class FieldNodes:
             microwave=self.request.microwave,
             operators=None if broadening is None else (broadening.h0, broadening.zeeman),
             weak=bool(self.system.weak),
+            state=self.state,
         )
+        strength = got.intensity
+        if got.population is not None:
+            strength = strength * (got.population[:, :, None] - got.population[:, None, :])
         self.count += n * len(fields)
         shape = (len(fields), n)
         return list(
             zip(
                 got.energy.reshape(*shape, -1),
                 got.slope.reshape(*shape, -1),
-                got.intensity.reshape(*shape, *got.intensity.shape[1:]),
+                strength.reshape(*shape, *strength.shape[1:]),
                 got.shift.reshape(*shape, *got.shift.shape[1:]),
                 *(a.reshape(*shape, *a.shape[1:]) for seen in got.felt.values() for a in seen),
                 strict=True,
@@ -171,11 +180,12 @@ class FieldNodes:
 
     def _differences(self, field: float, pairs: Pairs) -> tuple[Array, Array, Array]:
         """Return gap, slope and strength at one node, each of shape (n, p)."""
-        energy, slope, intensity = self.solved[field][:3]
+        energy, slope, strength = self.solved[field][:3]
         lower, upper = pairs
         gap = energy[:, upper] - energy[:, lower] - self.request.frequency
-        change = population_difference(energy, lower, upper, self.request.temperature)
-        strength = intensity[:, lower, upper] * change
+        strength = strength[:, lower, upper]
+        if self.state is None:
+            strength = strength * population_difference(energy, lower, upper, self.request.temperature)
         if self.request.weigh is not None:
             strength = strength * self.weights[:, None]
         return gap, slope[:, upper] - slope[:, lower], strength
@@ -218,19 +228,19 @@ class FieldNodes:
         for a, b in pending:
             m, h = 0.5 * (a + b), b - a
             (f_a, g_a, s_a), (f_m, g_m, s_m), (f_b, g_b, s_b) = (self._differences(x, pairs) for x in (a, m, b))
-            strength = np.maximum(np.maximum(s_a, s_m), s_b)
+            strength = np.maximum(np.maximum(np.abs(s_a), np.abs(s_m)), np.abs(s_b))
             reach = can_reach(f_a, f_b, g_a * h, g_b * h, self.extent) | ((f_m >= 0) != (f_a >= 0))
-            reach &= np.abs(strength) > 1e-3 * self.request.tolerance * np.abs(strength).max()
+            reach &= strength > 1e-3 * self.request.tolerance * strength.max()
             if not reach.any():
                 continue
             error = np.where(reach, midpoint_error(f_a, f_m, f_b, g_a * h, g_m * h, g_b * h), 0.0).max(axis=1)
             # strengths have no slopes to follow them by: their bend, squared, is what a polynomial may miss
             bend = np.where(reach, np.abs(s_m - 0.5 * (s_a + s_b)), 0.0)
-            size = np.abs(strength)
-            missed = bend * bend / (np.maximum(size, 1e-300) * size.max(initial=1e-300, where=reach))
-            bad = (error > accuracy) | (missed.max(axis=1) > 0.5 * self.request.tolerance)
+            missed = bend * bend / (np.maximum(strength, 1e-300) * strength.max(initial=1e-300, where=reach))
+            bad = error > accuracy
+            bent = missed.max(axis=1).mean() > 0.25 * self.request.tolerance
             # deep down only knots on symmetry axes are left, where a true crossing has no width
-            if not bad.any() or last or (lenient and bad.mean() < 0.02):
+            if last or not (bent or (bad.mean() >= 0.02 if lenient else bad.any())):
                 self.leaves.append((a, m, b))
             else:
                 halves += [(a, m), (m, b)]
@@ -307,6 +317,11 @@ class FieldNodes:
         if not found.gridded:
             slope = slope + node_slopes(data.fields, offset)
         pairs = (data.pairs[0][row], data.pairs[1][row])
+        if self.request.temperature is not None:
+            # populations are those of the whole energy difference, nuclear part and all
+            whole = np.maximum(data.gap[row] + self.request.frequency, 1.0)
+            beta = KELVIN_PER_MHZ / self.request.temperature
+            share = share * np.expm1(-beta * (whole + offset)) / np.expm1(-beta * whole)
         variance = None if data.variance is None else data.variance[row]
         return KnotData(
             data.fields,
@@ -390,6 +405,9 @@ def trace_branches(data: KnotData, chosen: NDArray[np.intp]) -> Branches:
     """
     n = data.gap.shape[2]
     shape = (len(chosen), n)
+    if not len(chosen):
+        empty = np.empty(shape)
+        return Branches(chosen, empty, empty, empty, None if data.variance is None else empty)
     positive = data.gap[chosen] >= 0
     first, middle, last = data.leaves.T
     early = positive[:, first] != positive[:, middle]
