@@ -290,15 +290,19 @@ def ring_directions(alignment: Alignment, polar: int, azimuths: int) -> tuple[Ar
     return own @ _frame(alignment.director).T, np.repeat(share / azimuths, azimuths)
 
 
-def mesh_directions(alignment: Alignment, symmetry: Symmetry, polar: int, azimuths: int) -> tuple[Array, Array]:
-    """Return the directions of the symmetry's domain, shape (m, 3), and their shares, summing to 1."""
+def mesh_directions(alignment: Alignment | None, symmetry: Symmetry, polar: int, azimuths: int) -> tuple[Array, Array]:
+    """Return the directions of the symmetry's domain, shape (m, 3), and their shares, summing to 1.
+
+    Without an alignment all directions are equally likely.
+    """
     mesh = Mesh(symmetry.kind, polar, azimuths)
     theta, phi = np.linspace(0, 0.5 * np.pi, polar + 1)[:, None], mesh.phi()
     across = np.sin(theta)
     height = np.broadcast_to(np.cos(theta), (polar + 1, len(phi)))
     own = np.stack([across * np.cos(phi), across * np.sin(phi), height], axis=-1).reshape(-1, 3)
     directions = own @ symmetry.axes.T
-    return directions, mesh.weights().ravel() * alignment.weight(directions, symmetry)
+    share = mesh.weights().ravel()
+    return directions, share if alignment is None else share * alignment.weight(directions, symmetry)
 
 
 BROAD = 0.1
@@ -373,6 +377,7 @@ def _deposited(system: System, request: Request, grid: FieldGrid, directions: Ar
             (request.low, request.high),
             microwave=request.microwave,
             temperature=request.temperature,
+            populations=request.populations,
         )
         deposit(histograms, system, request, got, block, got.weight * share[start + got.direction])
     return histograms

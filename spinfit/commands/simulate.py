@@ -14,6 +14,7 @@ SUMMARY = "the spectrum of a model file"
 EXAMPLES = (
     "spinfit simulate copper.toml > copper.csv",
     "spinfit simulate copper.toml -o copper.jdx --plot copper.png",
+    "spinfit simulate copper.toml --parts",
 )
 SUFFIXES = (".csv", ".jdx", ".h5")
 
@@ -29,6 +30,12 @@ def options(parser: argparse.ArgumentParser) -> None:
         "--angle", metavar="QUANTITY", help='crystal or aligned sample: this angle only, such as "30 deg"'
     )
     parser.add_argument("--species", action="store_true", help="csv: one more column for each species")
+    parser.add_argument(
+        "--parts",
+        action="store_true",
+        help="list the transitions: levels, fields, where on the sphere, share of the intensity, and what lies outside "
+        "the sweep (without -o in place of the csv)",
+    )
 
 
 def _check_names(args: argparse.Namespace) -> None:
@@ -58,7 +65,7 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
     angles = _angles(args, model)
     try:
         spectra = [
-            simulate(model.species, model.sweep, model.sample, tolerance=model.tolerance, angle=angle)
+            simulate(model.species, model.sweep, model.sample, tolerance=model.tolerance, angle=angle, parts=args.parts)
             for angle in angles
         ]
     except InputError as error:
@@ -77,13 +84,15 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
     names = [one.name for one in model.species]
     columns = {key: column for key, column in several.items() if args.species or key not in names}
     _write(args, screen, model, columns, angles)
+    if args.parts:
+        _say_parts(screen, model, spectra, angles)
     screen.emit(
         {
             "frequency_MHz": model.sweep.frequency,
             "file": args.output,
             "plot": args.plot,
             **({} if args.output else columns),
-            "report": [spectrum.report for spectrum in spectra],
+            "report": [_record(spectrum.report) for spectrum in spectra],
             "warnings": warnings,
         }
     )
@@ -129,8 +138,33 @@ def _write(
             "angle": angles[0],
         }
         write_spectrum(args.output, columns["field_mT"], columns["signal"], header=header)
-    elif not screen.as_json:
+    elif not (screen.as_json or args.parts):
         screen.raw(csv_text(columns))
+
+
+def _record(report: Any) -> dict[str, Any]:
+    """Return what an engine used, its transitions in the units of the JSON document."""
+    from spinfit.report.transitions import survey_record
+
+    return {
+        name: {key: survey_record(value) if key == "transitions" else value for key, value in used.items()}
+        for name, used in report.items()
+    }
+
+
+def _say_parts(screen: Screen, model: Any, spectra: list[Any], angles: list[float | None]) -> None:
+    """List the transitions of every species, angle by angle."""
+    import numpy as np
+
+    from spinfit.report.transitions import survey_text
+
+    texts = []
+    for angle, spectrum in zip(angles, spectra, strict=True):
+        at = f", {np.rad2deg(angle):.6g} deg" if angle is not None else ""
+        for one in model.species:
+            survey = spectrum.report[one.name]["transitions"]
+            texts.append(survey_text(one.name + at, survey, model.sweep.field, signs=one.populations is not None))
+    screen.say("\n\n".join(texts))
 
 
 def _draw(path: str, model: Any, tables: list[dict[str, Any]], angles: list[float | None]) -> None:
