@@ -258,7 +258,7 @@ class Species:
     amount : float
         Relative number of spins (of species, not of unpaired electrons).
     populations : tuple of float or None
-        Sublevels at zero field, low to high, in place of a temperature.
+        Sublevels at zero field, low to high, in place of a temperature; scaled to sum to 1.
     ion : str or None
         Such as "Cu2+": used for starts and for the comparison with the free ion.
     crystal_field : frozen data or None
@@ -282,6 +282,12 @@ class Species:
             raise InputError("has no spin", 'give S, e.g. S = "1/2"', place=self.name)
         if not math.isfinite(self.amount):
             raise InputError(f"amount = {self.amount}", "write a finite number", place="amount")
+        if self.populations is not None:
+            states = math.prod(round(2 * spin.S + 1) for spin in self.spins)
+            _finite(self.populations, "populations")
+            if len(self.populations) != states or min(self.populations) < 0 or sum(self.populations) <= 0:
+                found, right = f"{self.populations}", f"write {states} numbers, none negative, low to high"
+                raise InputError(found, right, place="populations")
         n = len(self.spins)
         for nucleus in self.nuclei:
             if not 1 <= nucleus.couples_to <= n:

@@ -79,6 +79,7 @@ def rows_of(model: Any, angles: Any, microwave: Any) -> list[dict[str, Any]]:
                 sweep.field,
                 microwave=along,
                 temperature=sweep.temperature,
+                populations=None if model.sample.form == "solution" else one.populations,
             )
             for k, which in enumerate(got.direction):
                 row = {
