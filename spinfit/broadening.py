@@ -92,8 +92,8 @@ def broadening(species: Species) -> tuple[Broadening, ...] | None:
     changes, covariance = _changes(species)
     if not changes and not hidden.any():
         return None
-    base = systems(species)
-    moved = [systems(change) for change in changes]
+    base = systems(species, perturb=True)
+    moved = [systems(change, perturb=True) for change in changes]
     spin = species.spins[0]
     out = []
     for number, system in enumerate(base):

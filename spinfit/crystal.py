@@ -148,6 +148,7 @@ def crystal(
         (request.low, request.high),
         microwave=along,
         temperature=request.temperature,
+        populations=request.populations,
     )
     weight = got.weight * where.share[got.direction]
     angle = where.angle[got.direction]
@@ -155,7 +156,7 @@ def crystal(
     for k in range(len(angles)):
         own = angle == k
         histograms.append(Histograms(grid, request.scale))
-        deposit(histograms[-1], system, request, got.only(own), where.field, weight[own])
+        deposit(histograms[-1], system, request, got.only(own), where.field, weight[own], along)
     report = {
         "label": system.label,
         "sites": len(operations(sample.point_group)),

@@ -7,13 +7,16 @@ eigenstates.  Energies are E/h in MHz, fields in mT.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy import constants
 
 from spinfit.hamiltonian import System
+from spinfit.weak import Felt, felt
 
 Array = NDArray[np.float64]
 
@@ -38,12 +41,18 @@ class Levels:
         |M|^2 of each pair of levels in the chosen microwave direction, (MHz/mT)^2.
     shift : ndarray, shape (m, k, n)
         First-order shift of each level by each of k further operators, MHz.
+    felt : dict
+        For each electron spin with weakly coupled nuclei, what they feel of it, if asked for.
+    population : ndarray, shape (m, n), or None
+        Of each level, when a `state` is given.
     """
 
     energy: Array
     slope: Array
     intensity: Array | None
     shift: Array
+    felt: dict[int, Felt] = field(default_factory=dict)
+    population: Array | None = None
 
 
 Operators = tuple[NDArray[np.complex128], NDArray[np.complex128]]
@@ -58,6 +67,8 @@ def solve(
     microwave: str | Array = "perpendicular",
     intensities: bool = True,
     operators: Operators | None = None,
+    weak: bool = False,
+    state: NDArray[np.complex128] | None = None,
 ) -> Levels:
     """Diagonalise at every (direction, field) of two equally long lists.
 
@@ -74,22 +85,28 @@ def solve(
         Whether intensities are wanted at all.
     operators : (h0, zeeman), optional
         Operators whose expectation values are wanted.
+    weak : bool
+        Whether weakly coupled nuclei are asked about.
+    state : ndarray, shape (n, n), optional
+        Density matrix whose diagonal between the eigenstates is wanted, such as `zero_field_state`.
     """
     n = system.h0.shape[0]
     m = len(fields)
     block = max(1, BLOCK_BYTES // (160 * n * n))
     if m <= block:
-        return _solve_block(system, directions, fields, microwave, intensities, operators)
+        return _solve_block(system, directions, fields, microwave, intensities, operators, weak, state)
     parts = []
     for start in range(0, m, block):
         part = slice(start, start + block)
         along = microwave if isinstance(microwave, str) else microwave[part]
-        parts.append(_solve_block(system, directions[part], fields[part], along, intensities, operators))
+        parts.append(_solve_block(system, directions[part], fields[part], along, intensities, operators, weak, state))
     return Levels(
         np.concatenate([p.energy for p in parts]),
         np.concatenate([p.slope for p in parts]),
         np.concatenate([p.intensity for p in parts]) if intensities else None,
         np.concatenate([p.shift for p in parts]),
+        {k: Felt(*map(np.concatenate, zip(*(p.felt[k] for p in parts), strict=True))) for k in parts[0].felt},
+        None if state is None else np.concatenate([p.population for p in parts]),
     )
 
 
@@ -100,6 +117,8 @@ def _solve_block(
     microwave: str | Array,
     intensities: bool,
     operators: Operators | None,
+    weak: bool,
+    state: NDArray[np.complex128] | None,
 ) -> Levels:
     n = system.h0.shape[0]
     m = len(fields)
@@ -107,16 +126,18 @@ def _solve_block(
     h += system.h0
     energy, vectors = np.linalg.eigh(h)
     shift = _expectation(vectors, directions * fields[:, None], operators)
+    seen = felt(system, energy, vectors) if weak else {}
+    population = None if state is None else np.einsum("mai,mai->mi", vectors.conj(), state @ vectors).real
     # rows (i, a) of V+ Z_a, then times V: two matrix products a point give all three components
     side_by_side = np.ascontiguousarray(system.zeeman.transpose(1, 0, 2)).reshape(n, 3 * n)
     half = vectors.conj().transpose(0, 2, 1) @ side_by_side
     if not intensities:
         along = np.einsum("miak,ma->mik", half.reshape(m, n, 3, n), directions)
-        return Levels(energy, np.einsum("mik,mki->mi", along, vectors).real, None, shift)
+        return Levels(energy, np.einsum("mik,mki->mi", along, vectors).real, None, shift, seen, population)
     moment = (half.reshape(m, 3 * n, n) @ vectors).reshape(m, n, 3, n)
     parallel = np.einsum("miaj,ma->mij", moment, directions)
     slope = np.einsum("mii->mi", parallel).real.copy()
-    return Levels(energy, slope, _intensity(moment, parallel, microwave), shift)
+    return Levels(energy, slope, _intensity(moment, parallel, microwave), shift, seen, population)
 
 
 def _expectation(vectors: NDArray, fields: Array, operators: Operators | None) -> Array:
@@ -150,6 +171,56 @@ def populations(energy: Array, temperature: float) -> Array:
     """Return Boltzmann's populations with the full partition function, same shape as `energy` (..., n), MHz."""
     p = np.exp((energy[..., :1] - energy) * (KELVIN_PER_MHZ / temperature))
     return p / p.sum(axis=-1, keepdims=True)
+
+
+def occupation(got: Levels, temperature: float | None) -> Array | None:
+    """Return the population of each level, shape (m, n): the state's, else Boltzmann's, else None for even ones."""
+    if got.population is not None or temperature is None:
+        return got.population
+    return populations(got.energy, temperature)
+
+
+def zero_field_state(system: System, populations: Sequence[float]) -> NDArray[np.complex128]:
+    """Return the density matrix of electron sublevels populated at zero field, shape (n, n), less its mean.
+
+    What populates the sublevels (intersystem crossing, say) knows the molecule, not the field.  The
+    coherences that the field makes of it average out, so that level i of the field is populated by
+    sum_k p_k |<i|k>|^2 over the zero-field states k (S. S. Kim, S. I. Weissman, J. Magn. Reson. 24,
+    167 (1976), from memory).  Nuclear states are populated evenly; what is equal for all states is
+    taken away, for it makes no signal.
+
+    Parameters
+    ----------
+    populations : sequence of float, length prod(2S + 1)
+        Of the electron's sublevels at zero field, from the lowest up; scaled to sum to 1.  Levels
+        that are degenerate share theirs evenly.
+    """
+    vectors, group, of_nuclei = _zero_field(system)
+    share = np.asarray(populations, dtype=float) / sum(populations)
+    share = (np.bincount(group, share) / np.bincount(group))[group] - 1 / len(group)
+    share[np.abs(share) < 1e-12] = 0.0
+    state = (vectors * share) @ vectors.conj().T
+    return np.kron(state, np.eye(of_nuclei)) / of_nuclei
+
+
+def shares_unevenly(system: System, populations: Sequence[float]) -> bool:
+    """Whether `zero_field_state` has to level out populations that differ between degenerate levels."""
+    _, group, _ = _zero_field(system)
+    p = np.asarray(populations, dtype=float)
+    mean = np.bincount(group, p) / np.bincount(group)
+    return bool(np.abs(p - mean[group]).max() > 1e-9 * p.sum())
+
+
+def _zero_field(system: System) -> tuple[NDArray[np.complex128], NDArray[np.intp], int]:
+    """Return the electron's zero-field states, the number of the level each belongs to, and how many nuclear states."""
+    n = len(system.h0)
+    of_nuclei = n // math.prod(round(2 * s + 1) for s in system.spins[: system.electrons])
+    of_electrons = n // of_nuclei
+    # hyperfine and quadrupole terms have no trace over the nuclei
+    alone = np.einsum("anbn->ab", system.h0.reshape(of_electrons, of_nuclei, of_electrons, of_nuclei)) / of_nuclei
+    energy, vectors = np.linalg.eigh(alone)
+    alike = 1e-8 * (np.abs(alone).max() + 1e3 * np.abs(system.zeeman).max())
+    return vectors, np.concatenate([[0], np.cumsum(np.diff(energy) > alike)]), of_nuclei
 
 
 def population_difference(

@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from spinfit import hermite
 from spinfit.hamiltonian import System
-from spinfit.levels import Levels, populations, solve
+from spinfit.levels import Levels, occupation, solve, zero_field_state
 
 Array = NDArray[np.float64]
 
@@ -68,8 +68,8 @@ def level_pairs(n: int) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
     return np.triu_indices(n, 1)
 
 
-def can_reach(f_a: Array, f_b: Array, d_a: Array, d_b: Array) -> NDArray[np.bool_]:
-    """Whether the cubic with end values f and end slopes d (per segment length) can reach zero.
+def can_reach(f_a: Array, f_b: Array, d_a: Array, d_b: Array, beyond: float = 0.0) -> NDArray[np.bool_]:
+    """Whether the cubic with end values f and end slopes d (per segment length) can come within `beyond` of zero.
 
     By the convex hull of its Bernstein coefficients, widened by `SAFETY`.
     """
@@ -77,7 +77,7 @@ def can_reach(f_a: Array, f_b: Array, d_a: Array, d_b: Array) -> NDArray[np.bool
     inner_b = f_b - d_b / 3
     low = np.minimum(np.minimum(f_a, f_b), np.minimum(inner_a, inner_b))
     high = np.maximum(np.maximum(f_a, f_b), np.maximum(inner_a, inner_b))
-    margin = SAFETY * (high - low)
+    margin = SAFETY * (high - low) + beyond
     return (low - margin <= 0) & (high + margin >= 0)
 
 
@@ -100,6 +100,7 @@ def find(
     *,
     microwave: str | Array = "perpendicular",
     temperature: float | None = None,
+    populations: tuple[float, ...] | None = None,
     accuracy: float = 0.5,
 ) -> Resonances:
     """Find every field in the range at which some pair of levels is h nu apart.
@@ -116,6 +117,9 @@ def find(
         See `spinfit.levels.solve`.
     temperature : float or None
         K.
+    populations : tuple of float, optional
+        Of the zero-field sublevels, in place of a temperature (`spinfit.levels.zero_field_state`);
+        weights are negative where the upper level holds more.
     accuracy : float
         MHz by which a cubic may miss its midpoint before the segment is halved; the quintic that
         is then used is some hundred times better, and roots are polished besides.
@@ -129,7 +133,9 @@ def find(
     leaf, pair, t = search.run(max(field_range[0], ZERO_FIELD), field_range[1])
     which = search.leaf_direction[leaf]
     start, length = search.leaf_start[leaf], search.leaf_length[leaf]
-    return _polish(system, directions, frequency, field_range, microwave, temperature, which, pair, start, length, t)
+    state = None if populations is None else zero_field_state(system, populations)
+    asked = (microwave, temperature, state)
+    return _polish(system, directions, frequency, field_range, asked, which, pair, start, length, t)
 
 
 class _Search:
@@ -209,8 +215,7 @@ def _polish(
     directions: Array,
     frequency: float,
     field_range: tuple[float, float],
-    microwave: str | Array,
-    temperature: float | None,
+    asked: tuple[str | Array, float | None, NDArray | None],
     which: NDArray,
     pair: NDArray,
     start: Array,
@@ -218,6 +223,7 @@ def _polish(
     t: Array,
 ) -> Resonances:
     """Exact Newton steps at the roots, then slopes and weights there."""
+    microwave, temperature, state = asked
     lower, upper = (side[pair] for side in level_pairs(system.h0.shape[0]))
     field = start + 0.5 * length * (t + 1)
     row = np.arange(len(field))
@@ -225,16 +231,13 @@ def _polish(
     # a fold has no slope to step along: there the quintic's root stands
     reach = np.minimum(0.02 * length, 0.05)
     for last in (False, True):
-        got = solve(system, directions[which], field, microwave=along, intensities=last)
+        got = solve(system, directions[which], field, microwave=along, intensities=last, state=state if last else None)
         slope = got.slope[row, upper] - got.slope[row, lower]
         step = (frequency - got.energy[row, upper] + got.energy[row, lower]) / np.where(slope != 0, slope, np.inf)
         field = np.where(np.abs(step) <= reach, field + step, field)
     intensity = got.intensity[row, lower, upper]
-    if temperature is None:
-        difference = 1.0 / got.energy.shape[1]
-    else:
-        p = populations(got.energy, temperature)
-        difference = p[row, lower] - p[row, upper]
+    p = occupation(got, temperature)
+    difference = 1.0 / got.energy.shape[1] if p is None else p[row, lower] - p[row, upper]
     weight = intensity * difference / np.maximum(np.abs(slope), 1e-300)
     inside = (field >= field_range[0]) & (field <= field_range[1])
     order = np.lexsort((upper, lower, field, which))

@@ -14,12 +14,14 @@ from spinfit.broadening import Broadening, broadening
 from spinfit.crystal import crystal, remarks
 from spinfit.errors import InputError
 from spinfit.hamiltonian import systems
+from spinfit.levels import shares_unevenly
 from spinfit.lineshape import FieldGrid, Shape
 from spinfit.powder import powder
 from spinfit.sheets import SMEAR_MOST, SMEAR_REACH, Grain
 from spinfit.solution import solution
 from spinfit.species import Species
 from spinfit.sweep import Sample, Sweep
+from spinfit.treatment import Treatment, decided
 
 Array = NDArray[np.float64]
 
@@ -88,13 +90,13 @@ def simulate(
     window = (float(where.min()), float(where.max()))
     angles = sample.angles if sample.form == "crystal" else (sample.angle,)
     angles = angles if angle is None else (angle,)
-    parts, report, warnings = [], {}, {}
+    spectra, report, warnings = [], {}, {}
     for one in several:
         part, report[one.name], said = _part(one, sweep, sample, tolerance, where, window, angles)
-        parts.append(part if len(part) > 1 else part[0])
+        spectra.append(part if len(part) > 1 else part[0])
         warnings |= dict.fromkeys(said)
     amounts = np.array([one.amount for one in several])
-    return Spectrum(where, np.tensordot(amounts, parts, 1), np.array(parts), report, tuple(warnings))
+    return Spectrum(where, np.tensordot(amounts, spectra, 1), np.array(spectra), report, tuple(warnings))
 
 
 def _part(
@@ -109,7 +111,7 @@ def _part(
     """Return spectra, shape (angles, n), what was used, and warnings."""
     if sample.form == "solution":
         signal, used, warnings = solution(one, sweep, fields, tolerance=tolerance)
-        return signal[None], used, warnings
+        return signal[None], used, (*warnings, *polarisation_remarks(one, sample))
     shape = Shape.from_widths(
         one.width.gaussian,
         one.width.lorentzian,
@@ -120,7 +122,7 @@ def _part(
     if shape.scale <= 0:
         raise InputError("has no width", 'give width.gaussian or width.lorentzian, e.g. "0.5 mT"', place=one.name)
     reach = shape.reach(tolerance)
-    beyond = SMEAR_REACH * SMEAR_MOST * shape.scale if sample.form == "powder" else 0.0
+    beyond = SMEAR_REACH * SMEAR_MOST * shape.scale if sample.form in ("powder", "aligned") else 0.0
     beyond = max(beyond, WIDEST * _own_width(one))
     grid = FieldGrid.covering(*window, shape.scale, reach, tolerance, beyond)
     low, high = window[0] - reach - beyond, window[1] + reach + beyond
@@ -136,21 +138,25 @@ def _part(
         tolerance,
         sweep.microwave,
         sweep.temperature,
+        populations=one.populations,
     )
-    widths = broadening(one) or (None,) * len(systems(one))
+    treatment = decided(one, sweep.frequency, window, shape.scale, tolerance, sweep.microwave)
+    treatment = replace(treatment, warnings=(*treatment.warnings, *polarisation_remarks(one, sample)))
+    one = treatment.species
+    widths = broadening(one) or (None,) * len(systems(one, perturb=True))
     if sample.form != "powder":
-        return _oriented(one, request, widths, grid, shape, sample, angles, fields)
+        return _oriented(treatment, request, widths, grid, shape, sample, angles, fields)
     total = 0.0
     reports = []
-    for system, own in zip(systems(one), widths, strict=True):
+    for system, own in zip(systems(one, perturb=True), widths, strict=True):
         histograms, report = powder(system, replace(request, broadening=own), grid)
         reports.append({"label": system.label, **vars(report)})
         total = total + system.weight * histograms.transform()
-    return grid.sample(grid.render(total, shape), fields)[None], {"systems": reports}, ()
+    return grid.sample(grid.render(total, shape), fields)[None], _used(reports, treatment), treatment.warnings
 
 
 def _oriented(
-    one: Species,
+    treatment: Treatment,
     request: Request,
     widths: tuple[Broadening | None, ...],
     grid: FieldGrid,
@@ -161,10 +167,10 @@ def _oriented(
 ) -> tuple[Array, dict[str, object], tuple[tuple[str, str], ...]]:
     """Return spectra of a crystal or an aligned sample, shape (angles, n), what was used, and warnings."""
     totals = [0.0] * len(angles)
-    reports, warnings = [], {}
+    reports, warnings = [], dict.fromkeys(treatment.warnings)
     if sample.form == "crystal":
-        warnings = dict.fromkeys(remarks(sample, angles, request.microwave))
-    for system, own in zip(systems(one), widths, strict=True):
+        warnings |= dict.fromkeys(remarks(sample, angles, request.microwave))
+    for system, own in zip(systems(treatment.species, perturb=True), widths, strict=True):
         asked = replace(request, broadening=own)
         if sample.form == "crystal":
             histograms, report = crystal(system, asked, grid, sample, angles)
@@ -175,7 +181,12 @@ def _oriented(
         totals = [t + system.weight * h.transform() for t, h in zip(totals, histograms, strict=True)]
         reports.append(report)
     spectra = [grid.sample(grid.render(total, shape), fields) for total in totals]
-    return np.array(spectra), {"systems": reports}, tuple(warnings)
+    return np.array(spectra), _used(reports, treatment), tuple(warnings)
+
+
+def _used(reports: list[dict[str, object]], treatment: Treatment) -> dict[str, object]:
+    """Return the report of one species: of each system, and how each nucleus was treated."""
+    return {"systems": reports} | ({"nuclei": list(treatment.nuclei)} if treatment.nuclei else {})
 
 
 WIDEST = 4.0
@@ -187,6 +198,19 @@ def _own_width(one: Species) -> float:
     spread = one.spread
     frequency = max(one.width.hidden_hyperfine) + max(spread.A) + one.spins[0].S * 2 * (spread.D + spread.E)
     return frequency / (28.0 * FWHM_PER_SIGMA) + 0.2 * max(spread.g) * 340.0
+
+
+def polarisation_remarks(one: Species, sample: Sample) -> tuple[tuple[str, str], ...]:
+    """Warn, as (code, text), where the populations of a species cannot be taken as they stand."""
+    if one.populations is None:
+        return ()
+    if sample.form == "solution":
+        text = f"{one.name}: populations of zero-field sublevels are not used: tumbling leaves no splitting to tell by"
+    elif shares_unevenly(systems(one, perturb=True)[0], one.populations):
+        text = f"{one.name}: populations of sublevels that are degenerate at zero field were shared evenly among them"
+    else:
+        return ()
+    return (("populations", text),)
 
 
 def with_angle(sample: Sample, angle: float) -> Sample:

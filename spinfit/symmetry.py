@@ -50,7 +50,11 @@ def _invariant(system: System, axis: Array, angle: float) -> bool:
         return False
     turned = u @ system.zeeman @ u.conj().T
     expected = np.dot(_turn(axis, angle).T, system.zeeman.reshape(3, -1)).reshape(3, n, n)
-    return np.abs(turned - expected).max() <= 1e-9 * np.abs(system.zeeman).max()
+    if np.abs(turned - expected).max() > 1e-9 * np.abs(system.zeeman).max():
+        return False
+    turn = _turn(axis, angle)
+    tensors = [t for one in system.weak for kind in one.kinds for t in (kind.hyperfine, kind.quadrupole)]
+    return all(np.abs(turn @ t @ turn.T - t).max() <= 1e-9 * np.abs(t).max() for t in tensors)
 
 
 def symmetry_of(system: System, *others: System) -> Symmetry:

@@ -13,24 +13,20 @@ W. B. Mims, Phys. Rev. 137, A61 (1965)): where the nuclear Zeeman term turns the
 quantisation, nuclear spins flip along and satellites appear.
 
 Equivalent nuclei without P enter by their total spin F, which holds their second-order cross terms;
-those between different nuclei, and those of equivalent nuclei with P, are left out.  Without P
-the second-order operator counts along the axis of the linear term only: it is smaller by A/E.
+those between different nuclei, and those of equivalent nuclei with P, are left out.
 
-Lines are merged and dropped by bounds on what that does to a spectrum (`Pattern`).  Energies are E/h in
-MHz, fields in mT.
+Energies are E/h in MHz, fields in mT.
 """
 
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from collections.abc import Iterator
 from functools import lru_cache
 from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import fft
 
 from spinfit.hamiltonian import System
 from spinfit.isotopes import mixtures
@@ -42,16 +38,8 @@ Index = NDArray[np.intp]
 
 MOST_COUPLED = 12
 """Largest 2F for which equivalent nuclei are coupled to total spins; larger sets are multiplied out."""
-MERGED = 0.06
-"""Lines closer than this everywhere, in line widths, are merged at the default tolerance."""
-KINK = 0.15
-"""Ratio of the smallest to the largest nuclear splitting below which eigenvalues are no smooth functions."""
-SPACING = 0.45
-"""Step of the grid of offsets in line widths."""
-TAPS, TAPER = 7, 2.0
-"""Reach of the grid's kernel to each side and the width of its Gaussian, in steps."""
-MOST_LINES = 64
-"""Lines of a pattern above which a grid of offsets takes their place, if it has fewer points."""
+OFF_AXIS = 0.02
+"""Second-order operator, relative to the linear term, above which its part off the axis counts."""
 
 
 class Felt(NamedTuple):
@@ -80,7 +68,7 @@ class Part(NamedTuple):
     kind: Kind
 
 
-class _Terms(NamedTuple):
+class Terms(NamedTuple):
     """Eigenvalues (m, n, d) of one part in every level, with axes (m, n, 3) or eigenvectors (m, n, d, d)."""
 
     energy: Array
@@ -187,7 +175,7 @@ def sets(one: Weak) -> Iterator[tuple[float, list[tuple[int, list[Part]]]]]:
         yield share, found
 
 
-def _terms(part: Part, order: int, seen: Felt, along: Array) -> _Terms:
+def terms(part: Part, order: int, seen: Felt, along: Array) -> Terms:
     """Solve the effective Hamiltonian of one part; `along` is the field as a vector, shape (m, 3), mT."""
     kind, spin = part.kind, part.spin
     linear = seen.mean @ kind.hyperfine + kind.zeeman * along[:, None, :]
@@ -195,7 +183,7 @@ def _terms(part: Part, order: int, seen: Felt, along: Array) -> _Terms:
     if order == 2 and kind.hyperfine.any():
         linear = linear - seen.axial @ _cofactors(kind.hyperfine)
         square = kind.hyperfine.T @ seen.square @ kind.hyperfine
-    if kind.quadrupole.any():
+    if kind.quadrupole.any() or _off_axis(linear, square, spin):
         i = spin_matrices(spin)
         tensor = kind.quadrupole if square is None else kind.quadrupole + square
         pairs = np.einsum("aij,bjk->abik", i, i).reshape(9, -1)
@@ -203,7 +191,7 @@ def _terms(part: Part, order: int, seen: Felt, along: Array) -> _Terms:
         d = multiplicity(spin)
         h = (linear @ i.reshape(3, -1) + flat @ pairs).reshape(*linear.shape[:2], d, d)
         energy, vectors = np.linalg.eigh(h)
-        return _Terms(energy, None, vectors)
+        return Terms(energy, None, vectors)
     length = np.linalg.norm(linear, axis=-1)
     axis = linear / np.maximum(length, 1e-12)[..., None]
     m = spin - np.arange(multiplicity(spin))
@@ -212,7 +200,14 @@ def _terms(part: Part, order: int, seen: Felt, along: Array) -> _Terms:
         own = np.einsum("mia,miab,mib->mi", axis, square, axis)[..., None]
         across = np.trace(square, axis1=-2, axis2=-1)[..., None] - own
         energy = energy + 0.5 * (spin * (spin + 1) - m**2) * across + m**2 * own
-    return _Terms(energy, axis, None)
+    return Terms(energy, axis, None)
+
+
+def _off_axis(linear: Array, square: Array | None, spin: float) -> bool:
+    """Whether the second-order operator turns states, as where hyperfine and Zeeman field cancel."""
+    if square is None or spin < 1:
+        return False
+    return bool(np.any(spin * np.linalg.norm(square, axis=(-2, -1)) > OFF_AXIS * np.linalg.norm(linear, axis=-1)))
 
 
 def _cofactors(a: Array) -> Array:
@@ -232,262 +227,17 @@ def _turning(spin: float) -> Array:
     return np.linalg.solve(np.vander(x, d, increasing=True), (np.abs(turned) ** 2).reshape(d, d * d))
 
 
-def _lines(terms: _Terms, lower: Index, upper: Index) -> tuple[Array, Array]:
+def split_by(solved: Terms, lower: Index, upper: Index) -> tuple[Array, Array]:
     """Return offsets and intensities of the lines of each pair of levels, shape (m, p, d*d)."""
-    low, high = terms.energy[:, lower], terms.energy[:, upper]
+    low, high = solved.energy[:, lower], solved.energy[:, upper]
     d = low.shape[-1]
     offset = high[..., None, :] - low[..., :, None]
-    if terms.axis is None:
-        overlap = terms.vectors[:, lower].conj().swapaxes(-1, -2) @ terms.vectors[:, upper]
+    if solved.axis is None:
+        overlap = solved.vectors[:, lower].conj().swapaxes(-1, -2) @ solved.vectors[:, upper]
         intensity = (overlap.real**2 + overlap.imag**2) / d
     else:
-        cos = np.einsum("mpa,mpa->mp", terms.axis[:, lower], terms.axis[:, upper])
+        cos = np.einsum("mpa,mpa->mp", solved.axis[:, lower], solved.axis[:, upper])
         powers = np.clip(cos, -1, 1)[..., None] ** np.arange(d)
         intensity = (powers @ _turning((d - 1) / 2)) / d
     shape = (*low.shape[:2], d * d)
     return offset.reshape(shape), intensity.reshape(shape)
-
-
-@dataclass(frozen=True, eq=False)
-class Pattern:
-    """Splitting patterns of pairs of levels at m points.
-
-    Attributes
-    ----------
-    pair : ndarray of int, shape (l,)
-        Which pair each line belongs to, rising.
-    offset, share : ndarray, shape (l, m)
-        Shift of the transition's frequency, MHz, and share of its intensity.
-    gridded : bool
-        Offsets are the same at all points, and shares may be negative: together they interpolate.
-    """
-
-    pair: Index
-    offset: Array
-    share: Array
-    gridded: bool
-
-
-def pattern(
-    system: System,
-    seen: dict[int, Felt],
-    along: Array,
-    pairs: tuple[Index, Index],
-    *,
-    scale: float,
-    tolerance: float,
-    strength: Array | None = None,
-) -> Pattern:
-    """Return the splitting pattern of each pair of levels, all weak nuclei together.
-
-    Parameters
-    ----------
-    seen : dict
-        From `felt`, for m points.
-    along : ndarray, shape (m, 3)
-        The field as a vector in molecular axes, mT.
-    pairs : (lower, upper), each shape (p,)
-    scale : float
-        Length over which lines are smooth in frequency, MHz.
-    tolerance : float
-    strength : ndarray, shape (p,), optional
-        Largest strength of each pair relative to the strongest: weak pairs need less.
-    """
-    lower, upper = pairs
-    m, p = len(along), len(lower)
-    strength = np.ones(p) if strength is None else strength
-    solved, smooth = _solve_sets(system, seen, along, pairs, scale)
-    limit = MERGED * scale * math.sqrt(tolerance / 1e-3)
-    drop = 0.05 * tolerance
-    offset, share = np.zeros((m, p, 1)), np.ones((m, p, 1))
-    if smooth:
-        for ways in solved:
-            mixed = [_product(sets_, limit, drop, strength) for _, sets_ in ways]
-            weights = [w for w, _ in ways]
-            one = _merged(
-                np.concatenate([o for o, _ in mixed], axis=2),
-                np.concatenate([w * s for w, (_, s) in zip(weights, mixed, strict=True)], axis=2),
-                limit,
-                drop,
-                strength,
-            )
-            if offset.shape[2] * one[0].shape[2] > 40 * MOST_LINES:
-                smooth = False
-                break
-            offset, share = _convolved((offset, share), one, limit, drop, strength)
-    if not smooth or offset.shape[2] > MOST_LINES:
-        grid = _gridded(solved, (m, p), scale * SPACING, drop, strength)
-        if not smooth or len(grid.pair) < offset.shape[2] * p:
-            return grid
-    lines = offset.shape[2]
-    kept = (share.max(axis=0) * strength[:, None] > drop / lines).ravel()
-    flat = [v.transpose(1, 2, 0).reshape(p * lines, m)[kept] for v in (offset, share)]
-    return Pattern(np.repeat(np.arange(p), lines)[kept], *flat, gridded=False)
-
-
-Ways = list[tuple[float, list[tuple[int, tuple[Array, Array]]]]]
-
-
-def _solve_sets(
-    system: System, seen: dict[int, Felt], along: Array, pairs: tuple[Index, Index], scale: float
-) -> tuple[list[Ways], bool]:
-    """Return, for each weak nucleus, the lines of its sets, and whether all are smooth functions."""
-    smooth, solved = True, []
-    used = np.unique(np.concatenate(pairs))
-    for one in system.weak:
-        ways: Ways = []
-        cache: dict[tuple[int, float], tuple[Array, Array]] = {}
-        for share, found in sets(one):
-            lines = []
-            for often, parts in found:
-                columns = []
-                for part in parts:
-                    key = (id(part.kind), part.spin)
-                    if key not in cache:
-                        terms = _terms(part, one.order, seen[one.electron], along)
-                        smooth &= _smooth(terms, used, scale)
-                        cache[key] = _lines(terms, *pairs)
-                    offset, intensity = cache[key]
-                    columns.append((offset, part.share * intensity))
-                joined = tuple(np.concatenate(c, axis=2) for c in zip(*columns, strict=True))
-                lines.append((often, joined))
-            ways.append((share, lines))
-        solved.append(ways)
-    return solved, smooth
-
-
-def _smooth(terms: _Terms, used: Index, scale: float) -> bool:
-    """Whether sorted eigenvalues are smooth: neighbours nowhere come much closer than elsewhere."""
-    if terms.energy.shape[-1] == 1:
-        return True
-    gap = np.abs(np.diff(terms.energy[:, used], axis=-1))
-    low, high = gap.min(axis=(0, 2)), gap.max(axis=(0, 2))
-    return bool(np.all((low >= KINK * high) | (high < 0.05 * scale)))
-
-
-def _product(
-    found: list[tuple[int, tuple[Array, Array]]], limit: float, drop: float, strength: Array
-) -> tuple[Array, Array]:
-    """Return the convolution of independent sets, shape (m, p, l)."""
-    out = None
-    for often, lines in found:
-        one = _merged(*lines, limit, drop, strength)
-        for _ in range(often):
-            out = one if out is None else _convolved(out, one, limit, drop, strength)
-    if out is None:  # spinless isotopes alone
-        return np.zeros((1, 1, 1)), np.ones((1, 1, 1))
-    return out
-
-
-def _convolved(
-    a: tuple[Array, Array], b: tuple[Array, Array], limit: float, drop: float, strength: Array
-) -> tuple[Array, Array]:
-    offset = a[0][..., :, None] + b[0][..., None, :]
-    share = a[1][..., :, None] * b[1][..., None, :]
-    flat = (*offset.shape[:2], -1)
-    return _merged(offset.reshape(flat), share.reshape(flat), limit, drop, strength)
-
-
-def _merged(offset: Array, share: Array, limit: float, drop: float, strength: Array) -> tuple[Array, Array]:
-    """Drop lines that matter nowhere; merge those that lie together everywhere, at their mean."""
-    share = np.broadcast_to(share, np.broadcast_shapes(offset.shape, share.shape))
-    offset = np.broadcast_to(offset, share.shape)
-    top = (share.max(axis=0) * strength[:, None]).max(axis=0) if share.shape[1] > 1 else share.max(axis=(0, 1))
-    keep = np.flatnonzero(top > drop / max(4, offset.shape[2]))
-    offset, share = offset[..., keep], share[..., keep]
-    order = np.argsort(offset.mean(axis=(0, 1)), kind="stable")
-    offset, share = offset[..., order], share[..., order]
-    apart = np.abs(np.diff(offset, axis=2)).max(axis=(0, 1))
-    edges, run = [0], 0.0
-    for k, step in enumerate(apart, start=1):
-        run += step
-        if run > limit:
-            edges.append(k)
-            run = 0.0
-    if len(edges) == offset.shape[2]:
-        return offset, share
-    total = np.add.reduceat(share, edges, axis=2)
-    mean = np.add.reduceat(share * offset, edges, axis=2) / np.maximum(total, 1e-300)
-    # where nothing is left a mean of shares says nothing
-    plain = np.add.reduceat(offset, edges, axis=2) / np.diff([*edges, offset.shape[2]])
-    return np.where(total > 1e-12, mean, plain), total
-
-
-def _gridded(solved: list[Ways], shape: tuple[int, int], step: float, drop: float, strength: Array) -> Pattern:
-    """Return the pattern on fixed offsets, by Fourier products.
-
-    Shares are those of a Gaussian-windowed sinc, which interpolates what is smooth over the line
-    width; as functions of direction they have no kinks where levels of a nucleus cross.
-    """
-    m, p = shape
-    reach = 0.0
-    for ways in solved:
-        reach += max(sum(n * float(np.abs(lines[0]).max()) for n, lines in found) for _, found in ways)
-    half = math.ceil(reach / step) + 2 * TAPS
-    size = fft.next_fast_len(2 * half + 1, real=True)
-    at = (np.arange(size) + size // 2) % size - size // 2
-    pairs, offsets, shares = [], [], []
-    block = max(1, 4_000_000 // (m * size))
-    for start in range(0, p, block):
-        part = slice(start, min(p, start + block))
-        total: NDArray | float = 1.0
-        for ways in solved:
-            mixed: NDArray | float = 0.0
-            for weight, found in ways:
-                product: NDArray | float = weight
-                for often, (offset, share) in found:
-                    one = _deposited(offset[:, part], share[:, part], step, size)
-                    product = product * fft.rfft(one, axis=-1) ** often
-                mixed = mixed + product
-            total = total * mixed
-        values = fft.irfft(total, size, axis=-1)
-        top = np.abs(values).max(axis=0) * strength[part, None]
-        row, place = np.nonzero(top > drop)
-        order = np.lexsort((at[place], row))
-        row, place = row[order], place[order]
-        pairs.append(start + row)
-        offsets.append(step * at[place])
-        shares.append(values[:, row, place].T)
-    offset = np.broadcast_to(np.concatenate(offsets)[:, None], (len(np.concatenate(offsets)), m))
-    return Pattern(np.concatenate(pairs), offset, np.concatenate(shares), gridded=True)
-
-
-def _deposited(offset: Array, share: Array, step: float, size: int) -> Array:
-    """Return shares on a periodic grid, shape (m, p, size)."""
-    m, p, lines = offset.shape
-    x = offset / step
-    first = np.floor(x)
-    u = x - first
-    base = np.arange(m * p).reshape(m, p, 1) * size
-    first = first.astype(np.intp)
-    flat = np.zeros(m * p * size)
-    kernel = [np.sinc(u - t) * np.exp(-0.5 * ((u - t) / TAPER) ** 2) for t in range(1 - TAPS, TAPS + 1)]
-    norm = sum(kernel)
-    for t, k in zip(range(1 - TAPS, TAPS + 1), kernel, strict=True):
-        place = (base + (first + t) % size).ravel()
-        flat += np.bincount(place, (share * k / norm).ravel(), minlength=flat.size)
-    return flat.reshape(m, p, size)
-
-
-def node_slopes(fields: Array, values: Array, most: int = 5) -> Array:
-    """Return derivatives along the field of values known at nodes, shape (l, k, n), by polynomials.
-
-    Through up to `most` nodes about each; offsets are small and vary slowly.
-    """
-    k = len(fields)
-    matrix = np.zeros((k, k))
-    for i in range(k):
-        first = max(0, min(i - most // 2, k - most))
-        near = np.arange(first, min(first + most, k))
-        if len(near) < 2:
-            continue
-        x = (fields[near] - fields[i]) / np.ptp(fields[near])
-        rows = np.linalg.solve(np.vander(x, increasing=True).T, np.eye(len(near))[1])
-        matrix[i, near] = rows / np.ptp(fields[near])
-    return np.einsum("ij,ljn->lin", matrix, values)
-
-
-def names(weak: Sequence[Weak]) -> list[dict[str, object]]:
-    """Return how weak nuclei are treated, for reports."""
-    order = {1: "first order", 2: "second order"}
-    return [{"nucleus": one.name, "count": one.count, "treat": order[one.order]} for one in weak]
