@@ -8,12 +8,14 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from stub_engine import Spectrum
 from toml_files import changed, refusal, write
 
 from spinfit.cli import main
 from spinfit.errors import InputError
 from spinfit.files.job import read_job, read_model
 from spinfit.fitting.crystal_fields import field_rank, responses_of, sharpened
+from spinfit.fitting.data import Job, Trace
 from spinfit.fitting.driver import fit
 from spinfit.fitting.parameters import Binding, parameters_of
 from spinfit.fitting.residuals import Problem, full_view
@@ -321,6 +323,36 @@ def test_a_field_that_changes_the_spin_is_refused(tmp_path):
             {"ni.crystal_field.Ds": 8000 * CM, "ni.crystal_field.ten_Dq": 25000 * CM}
         )
     assert "\n" not in str(caught.value)
+
+
+def test_derivatives_next_to_a_crossing_come_from_one_side(tmp_path):
+    """The last Ds, to 0.1 cm^-1, at which square-planar Ni2+ still is a spin 1."""
+    text = changed(NICKEL, "9000 cm^-1", "25000 cm^-1")
+    model = read_model(write(tmp_path, text + SWEEP))
+    binding = Binding(model.species, model.sample)
+    low, high = 10.0, 8000.0
+    while high - low > 0.1:
+        middle = (low + high) / 2
+        try:
+            binding.apply({"ni.crystal_field.Ds": middle * CM})
+            low = middle
+        except InputError:
+            high = middle
+    species, _, _ = binding.apply({"ni.crystal_field.Ds": low * CM})
+    fields = np.linspace(270.0, 360.0, 100)
+    trace = Trace("t", fields, np.sin(fields), np.ones(100, dtype=bool), frequency=9500.0)
+
+    def by_g(kinds, sweep, sample, *, tolerance, fields, angle):
+        """A signal that simply shows g_z and D."""
+        spin = kinds[0].spins[0]
+        return Spectrum(fields, None, [np.sin(fields * spin.g[2]) + 1e-9 * spin.D])
+
+    problem = Problem(Job(species, model.sample, (trace,), ("ni.crystal_field.Ds",)), by_g)
+    view = full_view(problem.job.traces, problem.noises, 1e-4)
+    for central in (False, True):
+        column = problem.jacobian(problem.evaluate(problem.start, view), view, central=central)
+        assert np.isfinite(column).all()
+        assert np.abs(column).max() > 0
 
 
 @pytest.mark.parametrize(

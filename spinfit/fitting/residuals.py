@@ -333,16 +333,28 @@ class Problem:
         for _ in range(4):
             step = float(np.clip(self._steps[index], 1e-7 * largest, largest))
             step = self._inside(point.free[index], step, index)
-            changes, effect = self._difference(point, view, index, step)
+            step, changes, effect = self._one_side(point, view, index, step)
             wanted = abs(step) * (_STEP_EFFECT / effect if effect > 0 else 100.0)
             self._steps[index] = float(np.clip(wanted, abs(step) / 100, min(abs(step) * 100, largest)))
             if _STEP_WINDOW[0] <= effect <= _STEP_WINDOW[1] or abs(step) == self._steps[index]:
                 break
         back = point.free[index] - step
         if central and self.lower[index] <= back <= self.upper[index]:
-            behind, _ = self._difference(point, view, index, -step)
+            try:
+                behind, _ = self._difference(point, view, index, -step)
+            except InputError:  # the model ends there: one side has to do
+                return changes
             changes = [a if a is None or b is None else (a + b) / 2 for a, b in zip(changes, behind, strict=True)]
         return changes
+
+    def _one_side(self, point: Point, view: View, index: int, step: float) -> tuple[float, list[Array | None], float]:
+        """Return the step and the difference over it, on the other side where the model ends on this one."""
+        try:
+            return step, *self._difference(point, view, index, step)
+        except InputError:
+            if not self.lower[index] <= point.free[index] - step <= self.upper[index]:
+                raise
+            return -step, *self._difference(point, view, index, -step)
 
     def _inside(self, value: float, step: float, index: int) -> float:
         """Turn or shorten a step that would leave the limits."""
