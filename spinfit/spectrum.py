@@ -21,6 +21,8 @@ from spinfit.sheets import SMEAR_MOST, SMEAR_REACH, Grain
 from spinfit.solution import solution
 from spinfit.species import Species
 from spinfit.sweep import Sample, Sweep
+from spinfit.transitions import remarks as outside_remarks
+from spinfit.transitions import transitions
 from spinfit.treatment import Treatment, decided
 
 Array = NDArray[np.float64]
@@ -58,6 +60,7 @@ def simulate(
     tolerance: float = 1e-3,
     fields: Array | None = None,
     angle: float | None = None,
+    parts: bool = False,
 ) -> Spectrum:
     """Compute a spectrum to a promised accuracy.
 
@@ -74,6 +77,9 @@ def simulate(
         Any fields, mT, in any order; the window then reaches from their smallest to their largest.
     angle : float, optional
         rad; crystal and aligned samples, in place of the sample's own (a crystal's may be several).
+    parts : bool
+        Whether the report holds each species' transitions too (`spinfit.transitions`, as
+        "transitions"), and warnings say how much intensity lies outside the sweep.
 
     Returns
     -------
@@ -94,6 +100,11 @@ def simulate(
     for one in several:
         part, report[one.name], said = _part(one, sweep, sample, tolerance, where, window, angles)
         spectra.append(part if len(part) > 1 else part[0])
+        if parts:
+            at = replace(sample, angles=angles, angle=angles[0])
+            survey = transitions(one, replace(sweep, field=window), at)
+            report[one.name] = {**report[one.name], "transitions": survey}
+            said = (*said, *outside_remarks(one.name, survey))
         warnings |= dict.fromkeys(said)
     amounts = np.array([one.amount for one in several])
     return Spectrum(where, np.tensordot(amounts, spectra, 1), np.array(spectra), report, tuple(warnings))

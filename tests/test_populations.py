@@ -165,6 +165,12 @@ def test_equal_populations_make_no_signal(sample: Sample) -> None:
     assert not got.signal.any()
 
 
+@pytest.mark.parametrize("populations", [None, (0.2, 0.3, 0.5)])
+def test_a_window_in_which_nothing_resonates_is_empty(populations: tuple[float, ...] | None) -> None:
+    got = simulate(triplet(100.0, 10.0, populations), Sweep(NU, (500.0, 550.0), 100))
+    assert not got.signal.any()
+
+
 def test_a_doublet_has_no_sublevels_at_zero_field() -> None:
     got = simulate(Species("r", populations=(0.9, 0.1)), Sweep(NU, (330.0, 350.0), 100))
     assert not got.signal.any()
