@@ -109,8 +109,8 @@ class Signals:
         How many times the engine was called.
     reports : dict of (trace name, species name) -> mapping
         The engine's last report of each.
-    warnings : dict of text -> None
-        What the engine warned of, in order.
+    warnings : tuple
+        What the engine warned of the last time it was asked about each trace and species, each once.
     """
 
     def __init__(self, simulate: Simulate) -> None:
@@ -118,7 +118,12 @@ class Signals:
         self._memory: OrderedDict[Any, Array] = OrderedDict()
         self.simulations = 0
         self.reports: dict[tuple[str, str], Any] = {}
-        self.warnings: dict[Any, None] = {}
+        self._warnings: dict[tuple[str, str], tuple[Any, ...]] = {}
+
+    @property
+    def warnings(self) -> tuple[Any, ...]:
+        """Those of earlier values of the parameters are of no interest at the end."""
+        return tuple(dict.fromkeys(one for several in self._warnings.values() for one in several))
 
     def part(self, species: Species, trace: Trace, sample: Sample, field: Array, stage: Stage) -> Array:
         """Signal of one species at unit amount, shape (n,).
@@ -149,7 +154,7 @@ class Signals:
         signal.setflags(write=False)
         if stage.broadening == 0:
             self.reports[trace.name, species.name] = getattr(spectrum, "report", {})
-            self.warnings.update(dict.fromkeys(getattr(spectrum, "warnings", ())))
+            self._warnings[trace.name, species.name] = tuple(getattr(spectrum, "warnings", ()))
         self._memory[key] = signal
         while len(self._memory) > _REMEMBERED:
             self._memory.popitem(last=False)

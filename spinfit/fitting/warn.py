@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 from spinfit.errors import InputError
 from spinfit.fitting.equivalent import AXES, conventional
 from spinfit.fitting.noise import autocorrelation, runs_test
+from spinfit.fitting.one_angle import one_angle_notes
 from spinfit.fitting.outcome import Note
 from spinfit.fitting.residuals import Point, Problem, View
 from spinfit.fitting.signals import Stage, narrowest_width
@@ -112,6 +113,7 @@ def notes_after(
             notes += _sign_notes(problem, view, point, descent.jacobian, spread)
             notes += single_sign_notes(problem, view, point, descent.jacobian, spread.known)
         notes += _setting_notes(problem, point)
+        notes += one_angle_notes(problem, view, point)
     notes += _modulation_notes(point)
     notes += _beyond_notes(problem, view, point)
     return notes
