@@ -244,3 +244,72 @@ def test_bad_traces_are_one_line_and_exit_2(case, folder, capsys):
     assert err.count("\n") == 1, err
     assert "trace" in err
     assert "a fault of spinfit" not in err
+
+
+def test_profile_and_bootstrap_agree_with_the_covariance(folder, capsys):
+    """One Gaussian line in white noise: chi-squared is nearly a parabola, so that all three are one number."""
+    argv = ["fit", "job.toml", "--out", "out", "--profile", "radical.g", "--bootstrap", "40"]
+    assert main(argv) == 0
+    shown = capsys.readouterr().out
+    assert "profile of" in shown
+    assert "bootstrap of" in shown
+    outcome = json.loads((folder / "out/outcome.json").read_text(encoding="utf-8"))
+    g = outcome["parameters"]["radical.g"]
+    low, high = outcome["profiles"]["radical.g"]["interval_68"]
+    assert (high - low) / 2 == pytest.approx(g["uncertainty_noise"], rel=0.05)
+    assert low < g["value"] < high
+    drawn = outcome["bootstrap"]
+    assert drawn["resamples"] + drawn["failed"] == 40
+    # A standard deviation from 40 values is known to 11 %: three times that.
+    assert drawn["parameters"]["radical.g"]["uncertainty"] == pytest.approx(g["uncertainty_noise"], rel=0.34)
+    page = (folder / "out/report.html").read_text(encoding="utf-8")
+    assert page.count("data:image/png") == 2
+    assert "What the uncertainties are made of" in page
+
+
+def test_the_budget_adds_up(folder, capsys):
+    assert main(["fit", "job.toml", "--json"]) == 0
+    outcome = json.loads(capsys.readouterr().out)
+    parts = outcome["budget"]["radical.g"]
+    g = outcome["parameters"]["radical.g"]
+    assert set(parts) == {"noise", "correlation and misfit", "field axis", "frequency"}
+    assert sum(v**2 for v in parts.values()) ** 0.5 == pytest.approx(g["uncertainty"], rel=1e-6)
+    assert parts["frequency"] == pytest.approx(G * 0.2 / FREQUENCY, rel=0.02)
+    assert parts["field axis"] == pytest.approx(G * 0.02 / CENTRE, rel=0.02)
+
+
+def test_comparing_a_model_with_a_needless_component(folder, capsys):
+    """The trace is one Gaussian: the isotropic model must not lose, and both have a folder of their own."""
+    (folder / "axial.toml").write_text(JOB.replace("g = 2.005", "g = [2.004, 2.008]"))
+    assert main(["fit", "job.toml", "axial.toml", "--compare", "--out", "both"]) == 0
+    shown = capsys.readouterr().out
+    assert "AICc above best" in shown
+    assert {path.name for path in (folder / "both").iterdir()} == {"job", "axial"}
+    assert main(["fit", "job.toml", "axial.toml", "--compare", "--json"]) == 0
+    found = json.loads(capsys.readouterr().out)["comparison"]
+    above = {model["name"]: model["aicc_above_best"] for model in found["models"]}
+    # One needless parameter costs 2 on average and gains a squared normal deviate: 3 standard deviations.
+    assert above["job"] < 9 - 2
+    (test,) = found["tests"]
+    assert (test["smaller"], test["larger"]) == ("job", "axial")
+
+
+@pytest.mark.parametrize(
+    ("argv", "says"),
+    [
+        (["job.toml", "--profile", "radical.h"], '"radical.h"'),
+        (["job.toml", "--profile", "radical.amount"], "is not varied"),
+        (["job.toml", "--bootstrap", "1"], "--bootstrap"),
+        (["job.toml", "--bootstrap", "many"], "--bootstrap"),
+        (["job.toml", "--compare"], "two or more"),
+        (["job.toml", "job.toml", "--compare"], 'two jobs are called "job"'),
+        (["job.toml", "other.toml", "--compare", "--bootstrap", "20"], "does not go with --compare"),
+    ],
+)
+def test_what_goes_beyond_the_fit_is_checked_first(folder, capsys, argv, says):
+    assert main(["fit", *argv, "--out", "out"]) == 2
+    out, err = capsys.readouterr()
+    assert out == ""
+    assert err.count("\n") == 1
+    assert says in err
+    assert not (folder / "out").exists()

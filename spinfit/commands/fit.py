@@ -61,9 +61,9 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
             f'"{args.job[1]}" is one argument too many', "fit jobs one by one, or add --compare", place="fit"
         )
     job = read_job(args.job[0])
+    _check_profiled(job, args.profile, resamples)
     is_new = args.out is not None and not Path(args.out).exists()
     folder = None if args.out is None else ready_folder(args.out)
-    _check_profiled(job, args.profile, resamples)
     try:
         outcome, profiles, resampled = _fitted(job, args.profile, resamples, screen)
         written = [] if folder is None else write_outcome(folder, outcome, profiles=profiles, resampled=resampled)
@@ -143,14 +143,22 @@ def _compare(args: argparse.Namespace, screen: Screen) -> int:
     for name in names:
         if names.count(name) > 1:
             raise InputError(f'two jobs are called "{name}"', "give their files different names", place="--compare")
+    paths = [] if args.out is None else [Path(args.out), *(Path(args.out) / name for name in names)]
+    fresh = [path for path in paths if not path.exists()]
     folders = [None if args.out is None else ready_folder(str(Path(args.out) / name)) for name in names]
     outcomes = []
-    for job, folder in zip(jobs, folders, strict=True):
-        outcome, _, _ = _fitted(job, [], 0, screen)
-        if folder is not None:
-            write_outcome(folder, outcome)
-        outcomes.append(outcome)
-    found = compare(outcomes)
+    try:
+        for job, folder in zip(jobs, folders, strict=True):
+            outcome, _, _ = _fitted(job, [], 0, screen)
+            if folder is not None:
+                write_outcome(folder, outcome)
+            outcomes.append(outcome)
+        found = compare(outcomes)
+    except BaseException:
+        for path in reversed(fresh):  # those that hold nothing go again
+            with suppress(OSError):
+                path.rmdir()
+        raise
     records = {one.name: outcome_record(one) for one in outcomes}
     screen.emit({"comparison": found, "outcomes": records})
     for outcome in outcomes:
