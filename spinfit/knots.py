@@ -36,6 +36,8 @@ MOST_LOOPING_KNOTS = 1200
 """The same where looping pairs matter: their kinks on symmetry axes never quite vanish from the estimate."""
 MISTRUST = 2.0
 """Factor on the extrapolated error, unless it falls so fast that a power law is itself pessimistic."""
+LOOPING_MISTRUST = 1.5
+"""The same where looping pairs matter."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -83,7 +85,7 @@ def settle(system: System, symmetry: Symmetry, request: Request) -> Knots:
         spent += extra
     history = [(trial.rings.rings // 2, trial.half_error())]
     for size in [s for s in SIZES if s > trial.rings.rings]:
-        error = _extrapolated(history, trial.rings.rings)
+        error = _extrapolated(history, trial)
         if error <= request.tolerance:
             break
         if size < SIZES[-1] and _hoped(history[-1], size) > request.tolerance:
@@ -94,7 +96,7 @@ def settle(system: System, symmetry: Symmetry, request: Request) -> Knots:
         trial = _Trial(system, symmetry, request, finer, trial)
         spent += trial.count
         history.append((size // 2, trial.half_error()))
-    return trial.knots(_extrapolated(history, trial.rings.rings), spent)
+    return trial.knots(_extrapolated(history, trial), spent)
 
 
 def _rings(kind: str, size: int, stretch: float = 1.0, harmonics: int | None = None) -> Rings:
@@ -110,12 +112,16 @@ def _hoped(last: tuple[int, float], size: int) -> float:
     return math.sqrt(geometric * error) * (rings / size) ** 2
 
 
-def _extrapolated(history: list[tuple[int, float]], rings: int) -> float:
-    """Return the error expected at `rings` from the errors measured at smaller numbers.
+def _extrapolated(history: list[tuple[int, float]], trial: _Trial) -> float:
+    """Return the error expected of a trial from the errors measured at smaller numbers of rings.
 
-    The power law through the last two; a first measurement alone is trusted to gain little.
+    The power law through the last two; a first measurement alone is trusted to gain little.  Level
+    differences are continued by cubic splines, whose error falls as the fourth power of the step.
     """
+    rings = trial.rings.rings
     size, error = history[-1]
+    if trial.looping:
+        return LOOPING_MISTRUST * error * (size / rings) ** 4
     power = 2.0
     if len(history) > 1:
         before, worse = history[-2]
@@ -309,7 +315,7 @@ class _Trial:
         if not len(p):
             return np.zeros(n), np.zeros(n)
         values = np.concatenate([gap, self.data.strength[rows]]).reshape(2 * len(rows) * k, n)
-        guess = coarse.to_finer(values[:, kept], self.rings).reshape(2, len(rows), k, n)
+        guess = coarse.to_finer_locally(values[:, kept], self.rings).reshape(2, len(rows), k, n)
         steep = np.maximum(np.abs(slope[p, node, knot]), FOLD_SLOPE)
         weight = strength[p, node, knot] / steep
         shift = np.abs(guess[0] - gap)[p, node, knot] / steep / self.request.scale
