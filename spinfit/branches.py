@@ -230,6 +230,7 @@ class FieldNodes:
             (f_a, g_a, s_a), (f_m, g_m, s_m), (f_b, g_b, s_b) = (self._differences(x, pairs) for x in (a, m, b))
             strength = np.maximum(np.maximum(np.abs(s_a), np.abs(s_m)), np.abs(s_b))
             reach = can_reach(f_a, f_b, g_a * h, g_b * h, self.extent) | ((f_m >= 0) != (f_a >= 0))
+            reach |= between_knots(np.stack([f_a, f_m, f_b]))
             reach &= strength > 1e-3 * self.request.tolerance * strength.max()
             if not reach.any():
                 continue
@@ -365,6 +366,28 @@ class Branches:
     weight: Array
     slope: Array
     variance: Array | None = None
+
+
+def between_knots(gap: Array) -> NDArray[np.bool_]:
+    """Mark the knots next to a resonance that only directions between the knots have.
+
+    A pair beyond resonance at one knot and short of it at another is resonant on the way from one
+    to the other.
+
+    Parameters
+    ----------
+    gap : ndarray, shape (nodes, n, p)
+
+    Returns
+    -------
+    ndarray of bool, shape (n, p)
+        The knot closest to resonance on either side, for pairs that change sign over the sphere.
+    """
+    low, high = gap.min(axis=0), gap.max(axis=0)
+    above, below = np.where(low > 0, low, np.inf), np.where(high < 0, -high, np.inf)
+    both = np.isfinite(above).any(axis=0) & np.isfinite(below).any(axis=0)
+    row = np.arange(len(low))[:, None]
+    return both & ((row == above.argmin(axis=0)) | (row == below.argmin(axis=0)))
 
 
 def _steepness(data: KnotData) -> float:
