@@ -163,7 +163,8 @@ def _part(
         histograms, report = powder(system, replace(request, broadening=own), grid)
         reports.append({"label": system.label, **vars(report)})
         total = total + system.weight * histograms.transform()
-    return grid.sample(grid.render(total, shape), fields)[None], _used(reports, treatment), treatment.warnings
+    said = (*treatment.warnings, *_misgivings(one, reports, tolerance))
+    return grid.sample(grid.render(total, shape), fields)[None], _used(reports, treatment), said
 
 
 def _oriented(
@@ -193,6 +194,19 @@ def _oriented(
         reports.append(report)
     spectra = [grid.sample(grid.render(total, shape), fields) for total in totals]
     return np.array(spectra), _used(reports, treatment), tuple(warnings)
+
+
+def _misgivings(one: Species, reports: list[dict[str, object]], tolerance: float) -> tuple[tuple[str, str], ...]:
+    """Return what a powder spectrum cannot promise."""
+    said = []
+    error = max(float(report["estimated_error"]) for report in reports)
+    if error > 1.5 * tolerance:
+        said.append(("accuracy", f"{one.name}: the spectrum may err by {error:.1g} of its top, not {tolerance:g}"))
+    distributed = one.spread.any or max(one.width.hidden_hyperfine) > 0
+    if distributed and any(report["looping"] for report in reports):
+        text = "resonances that come and go with direction are not broadened by spreads or hidden hyperfine"
+        said.append(("spread", f"{one.name}: {text}"))
+    return tuple(said)
 
 
 def _used(reports: list[dict[str, object]], treatment: Treatment) -> dict[str, object]:
