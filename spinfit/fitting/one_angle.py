@@ -32,7 +32,7 @@ def one_angle_notes(problem: Problem, view: View, point: Point) -> list[Note]:
     text = (
         f"The crystal was measured at one angle, with {lines} of the model in the fitted "
         f"range: that many fields determine at most {count} of the numbers that move lines. Varied are "
-        f"{_listed(moving)}; what is held fixed (other components of g, the plane of rotation, the zero of the field) "
+        f"{_listed(moving)}; what is held fixed (such as components of g and the plane of rotation) "
         "enters their values without uncertainty. Several angles in one job tell them apart."
     )
     notes = [Note("one_angle", text)]
