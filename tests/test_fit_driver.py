@@ -292,6 +292,17 @@ def test_signs_that_do_not_matter_are_those_of_the_start():
     assert back.point.chi2 == pytest.approx(turned.point.chi2, rel=1e-4)
 
 
+def test_single_signs_are_named():
+    """The stand-in splits by the size of A_x alone, so that its sign moves nothing."""
+    model = (replace(jobs.species(g=(2.02,)), nuclei=(Nucleus(isotope="1H", A=(80.0, 60.0, 50.0)),)),)
+    signal = jobs.clean_signal(*model)
+    signal = signal + jobs.level(signal, 80) * np.random.default_rng(38).normal(size=signal.size)
+    outcome = fit(jobs.job(jobs.trace(signal), model=model, vary=("r.g", "r.1H.A_x")))
+    (note,) = [n for n in outcome.warnings if n.code == "single_signs"]
+    assert "r.1H.A_x" in note.text
+    assert "r.1H.A_y" not in note.text
+
+
 def test_signs_that_matter_stay():
     """At 1 K the trace tells the sign of D: the start's is not put back."""
     model = (jobs.species(g=(2.02,), S=1.0, D=300.0),)
