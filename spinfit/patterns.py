@@ -82,12 +82,15 @@ def pattern(
     lower, upper = pairs
     m, p = len(along), len(lower)
     strength = np.ones(p) if strength is None else strength
-    solved, smooth = _solve_sets(system, seen, along, pairs, scale)
     limit = MERGED * scale * math.sqrt(tolerance / 1e-3)
     drop = 0.05 * tolerance
+    solved, smooth = _solve_sets(system, seen, along, pairs, scale, drop, strength)
     offset, share = np.zeros((m, p, 1)), np.ones((m, p, 1))
     if smooth:
         for ways in solved:
+            if max(_most_lines(sets_) for _, sets_ in ways) > 4 * MOST_LINES:
+                smooth = False
+                break
             mixed = [_product(sets_, limit, drop, strength) for _, sets_ in ways]
             weights = [w for w, _ in ways]
             one = _merged(
@@ -115,7 +118,13 @@ Ways = list[tuple[float, list[tuple[int, tuple[Array, Array]]]]]
 
 
 def _solve_sets(
-    system: System, seen: dict[int, Felt], along: Array, pairs: tuple[Index, Index], scale: float
+    system: System,
+    seen: dict[int, Felt],
+    along: Array,
+    pairs: tuple[Index, Index],
+    scale: float,
+    drop: float,
+    strength: Array,
 ) -> tuple[list[Ways], bool]:
     """Return, for each weak nucleus, the lines of its sets, and whether all are smooth functions."""
     smooth, solved = True, []
@@ -134,7 +143,10 @@ def _solve_sets(
                         smooth &= _smooth(solved_part, used, scale)
                         cache[key] = split_by(solved_part, *pairs)
                     offset, intensity = cache[key]
-                    columns.append((offset, part.share * intensity))
+                    # flips of several units are mostly nowhere
+                    felt = part.share * (intensity.max(axis=0) * strength[:, None]).max(axis=0)
+                    kept = felt > 0.1 * drop / offset.shape[2]
+                    columns.append((offset[..., kept], part.share * intensity[..., kept]))
                 both = tuple(np.concatenate(c, axis=2) for c in zip(*columns, strict=True))
                 joined.append((often, both))
             ways.append((share, joined))
@@ -149,6 +161,11 @@ def _smooth(one: Terms, used: Index, scale: float) -> bool:
     gap = np.abs(np.diff(one.energy[:, used], axis=-1))
     low, high = gap.min(axis=(0, 2)), gap.max(axis=(0, 2))
     return bool(np.all((low >= KINK * high) | (high < 0.05 * scale)))
+
+
+def _most_lines(found: list[tuple[int, tuple[Array, Array]]]) -> int:
+    """Return into how many lines a product may fall before any are merged, as a rough bound."""
+    return sum(often * lines[0].shape[2] ** min(often, 2) for often, lines in found)
 
 
 def _product(
@@ -213,7 +230,7 @@ def _gridded(solved: list[Ways], shape: tuple[int, int], step: float, drop: floa
     size = fft.next_fast_len(2 * half + 1, real=True)
     at = (np.arange(size) + size // 2) % size - size // 2
     pairs, offsets, shares = [], [], []
-    block = max(1, 4_000_000 // (m * size))
+    block = max(1, 500_000 // (m * size))
     for start in range(0, p, block):
         part = slice(start, min(p, start + block))
         total: NDArray | float = 1.0
@@ -222,7 +239,9 @@ def _gridded(solved: list[Ways], shape: tuple[int, int], step: float, drop: floa
             for weight, found in ways:
                 product: NDArray | float = weight
                 for often, (offset, share) in found:
-                    one = _deposited(offset[:, part], share[:, part], step, size)
+                    # total spins F differ by little in their lines: together they cost one deposit
+                    few = _merged(offset[:, part], share[:, part], MERGED * step, 0.3 * drop, strength[part])
+                    one = _deposited(*few, step, size)
                     product = product * fft.rfft(one, axis=-1) ** often
                 mixed = mixed + product
             total = total * mixed
@@ -246,12 +265,19 @@ def _deposited(offset: Array, share: Array, step: float, size: int) -> Array:
     u = x - first
     base = np.arange(m * p).reshape(m, p, 1) * size
     first = first.astype(np.intp)
-    flat = np.zeros(m * p * size)
-    kernel = [np.sinc(u - t) * np.exp(-0.5 * ((u - t) / TAPER) ** 2) for t in range(1 - TAPS, TAPS + 1)]
+    # sinc(u - t) = (-1)^t sin(pi u) / (pi (u - t)), and the Gaussian's mixed term is a power
+    taps = range(1 - TAPS, TAPS + 1)
+    u = np.clip(u, 1e-9, 1 - 1e-9)
+    wave, power = np.sin(np.pi * u), np.exp(u / TAPER**2)
+    damped = wave * power ** (1 - TAPS)
+    kernel = []
+    for t in taps:
+        kernel.append(damped / (u - t) * ((-1) ** t * math.exp(-0.5 * (t / TAPER) ** 2)))
+        damped = damped * power
     norm = sum(kernel)
-    for t, k in zip(range(1 - TAPS, TAPS + 1), kernel, strict=True):
-        place = (base + (first + t) % size).ravel()
-        flat += np.bincount(place, (share * k / norm).ravel(), minlength=flat.size)
+    scaled = share / norm
+    places = np.stack([base + (first + t) % size for t in taps])
+    flat = np.bincount(places.ravel(), np.stack([scaled * k for k in kernel]).ravel(), minlength=m * p * size)
     return flat.reshape(m, p, size)
 
 
