@@ -146,7 +146,7 @@ def _radicals() -> list[Case]:
         ),
         Case("S=1/2 window cuts", (Spin(g=rhombic),), Scan(X_BAND, (312, 329, 512), 1.0), "octant", (120, 120), 3),
         Case(
-            "S=1/2 wide window", (Spin(g=(1.2, 2.4, 5.5)),), Scan(X_BAND, (0, 800, 4096), 8.0), "octant", (180, 180), 3
+            "S=1/2 wide window", (Spin(g=(1.2, 2.4, 5.5)),), Scan(X_BAND, (0, 800, 4096), 8.0), "octant", (320, 320), 3
         ),
         Case(
             "Cu axial",
