@@ -277,17 +277,17 @@ def reachable(data: KnotData, row: int) -> Index:
 
 def add_looping(histograms: Histograms, land: Landscape, request: Request) -> int:
     """Add one pair of levels; return the number of points used."""
-    fields, density, used = _in_frequency(land, request)
+    step = _step(land, request)
+    fields, density, used = _in_frequency(land, request, step)
     some = density != 0
     # hides the grain of the fields themselves
-    smear = np.full(int(some.sum()), request.grain.smear * _step(request))
+    smear = np.full(int(some.sum()), request.grain.smear * step)
     histograms.smeared(fields[some], density[some], smear)
-    return used + _in_field(histograms, land, request)
+    return used + _in_field(histograms, land, request, step)
 
 
-def _in_frequency(land: Landscape, request: Request) -> tuple[Array, Array, int]:
+def _in_frequency(land: Landscape, request: Request, step: float) -> tuple[Array, Array, int]:
     """Return fields, the flat resonances' share of the intensity at each, and the points summed."""
-    step = _step(request)
     first = 0.0 if request.low <= ZERO_FIELD else request.low  # the spectrum is even in B: half a step off zero
     fields = first + step * (0.5 + np.arange(max(1, math.ceil((request.high - first) / step))))
     density = np.zeros(len(fields))
@@ -299,7 +299,7 @@ def _in_frequency(land: Landscape, request: Request) -> tuple[Array, Array, int]
             continue
         half = 0.5 * (ends[2] - ends[0])
         f, g = land.gap[leaf], land.slope[leaf] * half
-        apart = _apart(land.along[leaf], land.around[leaf], np.abs(land.bend[leaf]), request)
+        apart = _apart(land.along[leaf], land.around[leaf], np.abs(land.bend[leaf]), request, step)
         steep = np.minimum(np.abs(land.slope[leaf]), np.abs(g + g[[1, 2, 0]]) / (2 * half))
         flat = _nearness(apart.max(axis=0), steep.min(axis=0), np.abs(land.bend[leaf]).max(axis=0), request) > 0.25
         hull = np.stack([*f, f[0] + g[0] / 3, f[1] - g[1] / 3, f[1] + g[1] / 3, f[2] - g[2] / 3])
@@ -318,19 +318,21 @@ def _in_frequency(land: Landscape, request: Request) -> tuple[Array, Array, int]
             for first in range(0, len(near), BLOCK):
                 part = near[first : first + BLOCK]
                 slope = np.abs((t[:, None] ** np.arange(5) * (np.arange(1, 6) / half)) @ c[1:, part])
-                density[some] += step * _density(land, leaf[1], fields[some], at[part], gap[:, part], slope, request)
+                density[some] += step * _density(
+                    land, leaf[1], fields[some], at[part], gap[:, part], slope, request, step
+                )
     return fields, density, used
 
 
 def _density(
-    land: Landscape, middle: int, fields: Array, at: Index, gap: Array, slope: Array, request: Request
+    land: Landscape, middle: int, fields: Array, at: Index, gap: Array, slope: Array, request: Request, step: float
 ) -> Array:
     """Return the sum over points `at` of strength x kernel at each field, from gap and slope there."""
     indices, basis = stencil(land.fields, np.full(len(fields), middle), fields)
     nodes = indices[:, :1], at
     strength, bend, *steps = (basis.T @ v[nodes] for v in (land.strength, land.bend, land.along, land.around))
     bend = np.abs(bend)
-    apart = _apart(*steps, bend, request)
+    apart = _apart(*steps, bend, request, step)
     width = request.grain.smear * apart
     u = gap / width
     some = np.flatnonzero(np.abs(u) < KERNEL_REACH)
@@ -340,16 +342,28 @@ def _density(
     return np.bincount(some // len(at), weights=part, minlength=len(fields))
 
 
-def _step(request: Request) -> float:
-    return STEP * request.scale * min(2.0, max(1.0, (request.tolerance / 1e-3) ** 0.3))
+def _step(land: Landscape, request: Request) -> float:
+    """Return the distance of the fields at which the sum in frequency is taken, mT.
+
+    Short beside the line, and so short that at most folds a natural smear is as long.
+    """
+    longest = STEP * request.scale * min(2.0, max(1.0, (request.tolerance / 1e-3) ** 0.3))
+    some = slice(None, None, 1 + land.gap.shape[1] // 2000)
+    gap, slope, bend = (np.abs(v[:, some]) for v in (land.gap, land.slope, land.bend))
+    width = request.grain.smear * np.hypot(land.along[:, some], land.around[:, some])
+    near = gap <= 4 * width + 0.5 * slope * np.gradient(land.fields)[:, None]
+    if not near.any():
+        return longest
+    typical = np.quantile(width[near] / np.maximum(bend[near], 1e-12), 0.1)
+    return max(0.02 * request.scale, min(longest, math.sqrt(typical / FOLD) / 0.9))
 
 
-def _apart(along: Array, around: Array, bend: Array, request: Request) -> Array:
+def _apart(along: Array, around: Array, bend: Array, request: Request, step: float) -> Array:
     """Return how far apart neighbours are in frequency, MHz, and no less than a step of the fields resolves.
 
     A share near a fold ends where the smear is 1/FOLD of the distance; it must be as long as a step there.
     """
-    least = bend * (FOLD * (0.9 * _step(request)) ** 2 / request.grain.smear)
+    least = bend * (FOLD * (0.9 * step) ** 2 / request.grain.smear)
     return np.sqrt(along * along + around * around + least * least) + 1e-9
 
 
@@ -366,7 +380,7 @@ def _nearness(apart: Array, slope: Array, bend: Array, request: Request) -> Arra
     return np.sqrt((apart / grain.far) ** 2 + FOLD * grain.smear * apart * bend) / np.maximum(slope, 1e-9)
 
 
-def _in_field(histograms: Histograms, land: Landscape, request: Request) -> int:
+def _in_field(histograms: Histograms, land: Landscape, request: Request, step: float) -> int:
     """Add the steep resonances' share; return their number."""
     used = 0
     grain = request.grain
@@ -391,7 +405,7 @@ def _in_field(histograms: Histograms, land: Landscape, request: Request) -> int:
         columns = (land.strength, land.bend, land.along, land.around)
         strength, bend, *steps = ((basis * v[nodes]).sum(axis=0) for v in columns)
         bend = np.abs(bend)
-        apart = _apart(*steps, bend, request)
+        apart = _apart(*steps, bend, request, step)
         share = _share(apart, slope, bend, request)
         some = np.flatnonzero(share > 0)
         weight = (strength / slope * share * land.weights[point])[some]
