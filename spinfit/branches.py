@@ -2,8 +2,8 @@
 
 Levels, slopes and intensities are computed on knots (a few directions) times nodes (a few fields
 shared by all directions).  Along the field every level difference is a chain of quintics; over the
-sphere everything is continued from the knots.  `FieldNodes` grows the nodes, `knot_data` holds the
-numbers, `trace_branches` follows the pairs that have exactly one resonance everywhere.
+sphere everything is continued from the knots.  `KnotData` holds the numbers (`spinfit.nodes` makes
+them), `trace_branches` follows the pairs that have exactly one resonance everywhere.
 """
 
 from __future__ import annotations
@@ -17,12 +17,7 @@ from numpy.typing import NDArray
 
 from spinfit import hermite
 from spinfit.broadening import Broadening
-from spinfit.hamiltonian import System
-from spinfit.levels import KELVIN_PER_MHZ, population_difference, solve, zero_field_state
-from spinfit.patterns import node_slopes, pattern
-from spinfit.resonance import can_reach, level_pairs, midpoint_error
 from spinfit.sheets import Grain
-from spinfit.weak import Felt, extent
 
 Array = NDArray[np.float64]
 Pairs = tuple[NDArray[np.intp], NDArray[np.intp]]
@@ -132,228 +127,6 @@ def stencil(nodes: Array, middle: NDArray[np.intp], fields: Array, most: int = 5
     return indices, basis
 
 
-class FieldNodes:
-    """Solutions at shared fields for a growing set of directions."""
-
-    def __init__(self, system: System, request: Request, directions: Array) -> None:
-        self.system, self.request, self.directions = system, request, directions
-        self.lower, self.upper = level_pairs(len(system.h0))
-        self.solved: dict[float, tuple[Array, ...]] = {}
-        self.leaves: list[tuple[float, float, float]] = []
-        self.count = 0
-        self.weights = None if request.weigh is None else request.weigh(directions)
-        self.extent = extent(system, request.high)
-        self.state = None if request.populations is None else zero_field_state(system, request.populations)
-
-    def _solve(self, directions: Array, fields: list[float]) -> list[tuple[Array, ...]]:
-        n = len(directions)
-        broadening = self.request.broadening
-        got = solve(
-            self.system,
-            np.tile(directions, (len(fields), 1)),
-            np.repeat(fields, n),
-            microwave=self.request.microwave,
-            operators=None if broadening is None else (broadening.h0, broadening.zeeman),
-            weak=bool(self.system.weak),
-            state=self.state,
-        )
-        strength = got.intensity
-        if got.population is not None:
-            strength = strength * (got.population[:, :, None] - got.population[:, None, :])
-        self.count += n * len(fields)
-        shape = (len(fields), n)
-        return list(
-            zip(
-                got.energy.reshape(*shape, -1),
-                got.slope.reshape(*shape, -1),
-                strength.reshape(*shape, *strength.shape[1:]),
-                got.shift.reshape(*shape, *got.shift.shape[1:]),
-                *(a.reshape(*shape, *a.shape[1:]) for seen in got.felt.values() for a in seen),
-                strict=True,
-            )
-        )
-
-    def _ensure(self, fields: list[float]) -> None:
-        missing = [b for b in fields if b not in self.solved]
-        if missing:
-            self.solved.update(zip(missing, self._solve(self.directions, missing), strict=True))
-
-    def _differences(self, field: float, pairs: Pairs) -> tuple[Array, Array, Array]:
-        """Return gap, slope and strength at one node, each of shape (n, p)."""
-        energy, slope, strength = self.solved[field][:3]
-        lower, upper = pairs
-        gap = energy[:, upper] - energy[:, lower] - self.request.frequency
-        strength = strength[:, lower, upper]
-        if self.state is None:
-            strength = strength * population_difference(energy, lower, upper, self.request.temperature)
-        if self.request.weigh is not None:
-            strength = strength * self.weights[:, None]
-        return gap, slope[:, upper] - slope[:, lower], strength
-
-    def _variance(self, field: float, pairs: Pairs) -> Array:
-        """Return the squared frequency width at one node, shape (n, p), MHz^2."""
-        shift = self.solved[field][3]
-        lower, upper = pairs
-        return self.request.broadening.variance(shift[:, :, upper] - shift[:, :, lower], self.directions)
-
-    def choose(self, accuracy: float, deepest: int = 9) -> None:
-        """Halve the field range until quintics follow every pair that can be resonant.
-
-        Parameters
-        ----------
-        accuracy : float
-            MHz by which a cubic may miss the midpoint of its segment.
-        deepest : int
-            On symmetry axes levels truly cross: there halving ends at this depth.
-        """
-        low, high = self.request.low, self.request.high
-        # levels of one electron spin 1/2 hardly bend over a narrow range
-        narrow = high - low < 0.5 * high and self.system.electrons == 1 and self.system.spins[0] == 0.5
-        edges = [float(e) for e in np.linspace(low, high, 2 if narrow else 3)]
-        pending = list(zip(edges[:-1], edges[1:], strict=True))
-        for depth in range(deepest + 1):
-            middles = [0.5 * (a + b) for a, b in pending]
-            self._ensure(edges + middles if depth == 0 else middles)
-            pending = self._judge(pending, accuracy, depth == deepest, depth >= 3)
-            if not pending:
-                break
-        self.leaves.sort()
-
-    def _judge(
-        self, pending: list[tuple[float, float]], accuracy: float, last: bool, lenient: bool
-    ) -> list[tuple[float, float]]:
-        """Accept, drop or halve each pending segment; return the halves."""
-        pairs = (self.lower, self.upper)
-        halves = []
-        for a, b in pending:
-            m, h = 0.5 * (a + b), b - a
-            (f_a, g_a, s_a), (f_m, g_m, s_m), (f_b, g_b, s_b) = (self._differences(x, pairs) for x in (a, m, b))
-            strength = np.maximum(np.maximum(np.abs(s_a), np.abs(s_m)), np.abs(s_b))
-            reach = can_reach(f_a, f_b, g_a * h, g_b * h, self.extent) | ((f_m >= 0) != (f_a >= 0))
-            reach |= between_knots(np.stack([f_a, f_m, f_b]))
-            reach &= strength > 1e-3 * self.request.tolerance * strength.max()
-            if not reach.any():
-                continue
-            error = np.where(reach, midpoint_error(f_a, f_m, f_b, g_a * h, g_m * h, g_b * h), 0.0).max(axis=1)
-            # strengths have no slopes to follow them by: their bend, squared, is what a polynomial may miss
-            bend = np.where(reach, np.abs(s_m - 0.5 * (s_a + s_b)), 0.0)
-            missed = bend * bend / (np.maximum(strength, 1e-300) * strength.max(initial=1e-300, where=reach))
-            bad = error > accuracy
-            bent = missed.max(axis=1).mean() > 0.25 * self.request.tolerance
-            # deep down only knots on symmetry axes are left, where a true crossing has no width
-            if last or not (bent or (bad.mean() >= 0.02 if lenient else bad.any())):
-                self.leaves.append((a, m, b))
-            else:
-                halves += [(a, m), (m, b)]
-        return halves
-
-    def moved(self, directions: Array, known: NDArray[np.intp]) -> FieldNodes:
-        """Return the same nodes for another set of directions, reusing what is known.
-
-        Parameters
-        ----------
-        directions : ndarray, shape (n', 3)
-        known : ndarray of int, shape (n,)
-            Position of each present direction in the new set, -1 for none.
-        """
-        other = FieldNodes(self.system, self.request, directions)
-        other.leaves, other.count = self.leaves, self.count
-        fields = sorted({x for leaf in self.leaves for x in leaf})
-        kept = known >= 0
-        new = np.ones(len(directions), dtype=bool)
-        new[known[kept]] = False
-        for field, columns in zip(fields, other._solve(directions[new], fields), strict=True):
-            arrays = []
-            for old, added in zip(self.solved[field], columns, strict=True):
-                array = np.empty((len(directions), *added.shape[1:]))
-                array[new], array[known[kept]] = added, old[kept]
-                arrays.append(array)
-            other.solved[field] = tuple(arrays)
-        return other
-
-    def data(self, pairs: Pairs | None = None) -> KnotData:
-        """Return gap, slope and strength of every pair that can be resonant and is strong enough.
-
-        Parameters
-        ----------
-        pairs : (lower, upper), optional
-            Take these pairs in place of finding them.
-        """
-        fields = sorted({x for leaf in self.leaves for x in leaf})
-        index = {x: i for i, x in enumerate(fields)}
-        leaves = np.array([[index[x] for x in leaf] for leaf in self.leaves], dtype=np.intp).reshape(-1, 3)
-        pairs = self._relevant(fields) if pairs is None else pairs
-        columns = [self._differences(x, pairs) for x in fields]
-        if not columns:
-            empty = np.empty((0, 0, len(self.directions)))
-            return KnotData(np.empty(0), leaves, pairs, empty, empty, empty)
-        stacked = [np.stack(c).transpose(2, 0, 1) for c in zip(*columns, strict=True)]
-        gap, slope, strength = (np.ascontiguousarray(c) for c in stacked)
-        variance = None
-        if self.request.broadening is not None:
-            variance = np.ascontiguousarray(np.stack([self._variance(x, pairs) for x in fields]).transpose(2, 0, 1))
-        data = KnotData(np.array(fields), leaves, pairs, gap, slope, strength, variance, pairs)
-        return self._split(data) if self.system.weak else data
-
-    def _split(self, data: KnotData) -> KnotData:
-        """Return a row for each line into which weak nuclei split a pair."""
-        k, n = data.gap.shape[1:]
-        electrons = sorted({one.electron for one in self.system.weak})
-        arrays = [np.concatenate(c) for c in zip(*(self.solved[x][4:] for x in data.fields), strict=True)]
-        seen = {one: Felt(*arrays[3 * i : 3 * i + 3]) for i, one in enumerate(electrons)}
-        along = (data.fields[:, None, None] * self.directions).reshape(-1, 3)
-        top = np.abs(data.strength).max(axis=(1, 2))
-        found = pattern(
-            self.system,
-            seen,
-            along,
-            data.pairs,
-            scale=self.request.scale * _steepness(data),
-            tolerance=self.request.tolerance,
-            strength=top / max(top.max(initial=0.0), 1e-300),
-        )
-        row = found.pair
-        offset, share = found.offset.reshape(-1, k, n), found.share.reshape(-1, k, n)
-        slope = data.slope[row]
-        if not found.gridded:
-            slope = slope + node_slopes(data.fields, offset)
-        pairs = (data.pairs[0][row], data.pairs[1][row])
-        if self.request.temperature is not None:
-            # populations are those of the whole energy difference, nuclear part and all
-            whole = np.maximum(data.gap[row] + self.request.frequency, 1.0)
-            beta = KELVIN_PER_MHZ / self.request.temperature
-            share = share * np.expm1(-beta * (whole + offset)) / np.expm1(-beta * whole)
-        variance = None if data.variance is None else data.variance[row]
-        return KnotData(
-            data.fields,
-            data.leaves,
-            pairs,
-            data.gap[row] + offset,
-            slope,
-            data.strength[row] * share,
-            variance,
-            data.pairs,
-        )
-
-    def _relevant(self, fields: list[float]) -> Pairs:
-        every = (self.lower, self.upper)
-        low = high = top = None
-        for x in fields:
-            gap, slope, strength = self._differences(x, every)
-            size = np.abs(strength).max(axis=0)
-            lo, hi = gap.min(axis=0), gap.max(axis=0)
-            low = lo if low is None else np.minimum(low, lo)
-            high = hi if high is None else np.maximum(high, hi)
-            top = size if top is None else np.maximum(top, size)
-        if low is None:
-            return self.lower[:0], self.upper[:0]
-        margin = 0.05 * (high - low) + self.extent
-        keep = (low - margin <= 0) & (high + margin >= 0)
-        if keep.any():
-            keep &= top > 1e-3 * self.request.tolerance * top[keep].max()
-        return self.lower[keep], self.upper[keep]
-
-
 @dataclass(frozen=True, eq=False)
 class Branches:
     """Pairs with exactly one resonance at every knot; arrays of shape (p, n).
@@ -389,17 +162,6 @@ def between_knots(gap: Array) -> NDArray[np.bool_]:
     row = np.arange(len(low))[:, None]
     return both & ((row == above.argmin(axis=0)) | (row == below.argmin(axis=0)))
 
-
-def _steepness(data: KnotData) -> float:
-    """Return how steeply strong level differences rise at the least, MHz/mT; folds count as `FLAT`."""
-    if not data.slope.size:
-        return FLAT
-    strong = np.abs(data.strength) > 0.05 * np.abs(data.strength).max()
-    return max(FLAT, float(np.quantile(np.abs(data.slope[strong]), 0.05)))
-
-
-FLAT = 8.0
-"""MHz/mT, about a quarter of a free spin's slope."""
 
 FWHM_PER_SIGMA = 2 * math.sqrt(2 * math.log(2))
 

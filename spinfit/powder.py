@@ -28,7 +28,9 @@ from spinfit.symmetry import Symmetry, symmetry_of
 
 Array = NDArray[np.float64]
 
-FLATNESS = 0.23
+STEEPNESS = 0.1
+"""Relative change of a field's steepness within one step where it is smeared, at the most."""
+FLATNESS = 0.19
 """Root of the curvature of a field over one step of the mesh, in line widths, at the default tolerance."""
 
 
@@ -156,21 +158,26 @@ def _widened_size(values: Array, wider: Array, axis: int, intervals: int, reques
 
 
 def _sizes(values: Array, axis: int, intervals: int, request: Request, even: bool) -> Array:
-    """Return the intervals along one angle for close neighbours and for smeared ones, shape (2, branches)."""
-    if not even:
-        values = np.concatenate([values, np.take(values, [0, 1], axis)], axis)
-    first = np.diff(values, axis=axis)
-    second = np.diff(first, axis=axis)
-    slope = np.abs(first).max(axis=(1, 2)) * intervals
-    # even at the ends: there the second difference is twice the first
-    ends = np.maximum(
-        np.abs(first[:, :1] if axis == 1 else first[:, :, :1]).max(axis=(1, 2)),
-        np.abs(first[:, -1:] if axis == 1 else first[:, :, -1:]).max(axis=(1, 2)),
-    )
-    bend = np.maximum(np.abs(second).max(axis=(1, 2)), 2 * ends) * intervals**2
+    """Return the intervals along one angle for close neighbours and for smeared ones, shape (2, branches).
+
+    Where a field turns, it may curve by little more than the line within one step; where it is
+    steep and smeared, the smear must stay short of the distance over which the steepness changes.
+    Fields beyond the range do not count.
+    """
+    # even about both ends, or periodic: one more point on either side
+    count = values.shape[axis]
+    around = [1, *range(count), count - 2] if even else [count - 1, *range(count), 0]
+    padded = np.take(values, around, axis)
+    inside = (values >= request.low) & (values <= request.high)
+    first = np.diff(padded, axis=axis)
+    before, after = (np.take(first, range(k, count + k), axis) for k in (0, 1))
+    slope = np.where(inside, np.maximum(np.abs(before), np.abs(after)), 0.0) * intervals
+    bend = np.where(inside, np.abs(after - before), 0.0) * intervals**2
+    mean = np.maximum(0.5 * np.abs(before + after) * intervals, 1e-9)
     flatness = FLATNESS * (request.tolerance / 1e-3) ** 0.17
-    plain = slope / request.grain.close
-    smeared = np.maximum(slope / (0.4 * request.grain.far), np.sqrt(bend / request.scale) / flatness)
+    turning = np.minimum(np.sqrt(bend / request.scale) / flatness, bend / (STEEPNESS * mean))
+    smeared = np.maximum(slope.max(axis=(1, 2)) / (0.8 * request.grain.far), turning.max(axis=(1, 2)))
+    plain = slope.max(axis=(1, 2)) / request.grain.close
     return np.stack([plain, np.minimum(plain, smeared)])
 
 

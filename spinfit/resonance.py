@@ -71,12 +71,16 @@ def level_pairs(n: int) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
 def can_reach(f_a: Array, f_b: Array, d_a: Array, d_b: Array, beyond: float = 0.0) -> NDArray[np.bool_]:
     """Whether the cubic with end values f and end slopes d (per segment length) can come within `beyond` of zero.
 
-    By the convex hull of its Bernstein coefficients, widened by `SAFETY`.
+    By the convex hull of its Bernstein coefficients and of the point where the tangents at the ends
+    meet, which is the tip where levels nearly cross, widened by `SAFETY`.
     """
     inner_a = f_a + d_a / 3
     inner_b = f_b - d_b / 3
-    low = np.minimum(np.minimum(f_a, f_b), np.minimum(inner_a, inner_b))
-    high = np.maximum(np.maximum(f_a, f_b), np.maximum(inner_a, inner_b))
+    bend = d_a - d_b
+    meet = (f_b - d_b - f_a) / np.where(bend != 0, bend, np.inf)
+    tip = np.where((meet > 0) & (meet < 1), f_a + d_a * meet, f_a)
+    low = np.minimum(np.minimum(np.minimum(f_a, f_b), np.minimum(inner_a, inner_b)), tip)
+    high = np.maximum(np.maximum(np.maximum(f_a, f_b), np.maximum(inner_a, inner_b)), tip)
     margin = SAFETY * (high - low) + beyond
     return (low - margin <= 0) & (high + margin >= 0)
 

@@ -19,6 +19,7 @@ from functools import lru_cache
 import numpy as np
 from numpy.typing import NDArray
 
+from spinfit.errors import InputError
 from spinfit.lineshape import FieldGrid, Shape
 from spinfit.orientations import Mesh
 
@@ -30,6 +31,8 @@ SMEAR_LEAST, SMEAR_MOST, SMEAR_RATIO = 0.4, 10.0, 1.6
 """Smallest and largest smear in line widths, and the ratio from one class to the next."""
 VARIANCE_LEAST, VARIANCE_RATIO = 0.25, 1.16
 """First rung of the ladder of Gaussian widths, in line widths, and the ratio of its variances."""
+MOST_NUMBERS = 100_000_000
+"""Numbers in the histograms of one species, 0.8 GB."""
 SMEAR_REACH = 4.0
 """How far a smear reaches, in units of itself."""
 
@@ -137,6 +140,12 @@ class Histograms:
             ladder += [(VARIANCE_LEAST * self.scale) ** 2 * f for f in (1.0, 2.0, 3.0)]
         while ladder[-1] < largest:
             ladder.append(ladder[-1] * VARIANCE_RATIO)
+        if len(ladder) * self.grid.count > MOST_NUMBERS:
+            raise InputError(
+                f"{len(ladder)} classes of width on {self.grid.count} fields",
+                "give a wider gaussian or lorentzian width, or a narrower range of fields",
+                place="width",
+            )
         if len(ladder) > len(self.variances):
             self.variances = np.array(ladder)
             extra = np.zeros((len(ladder) - len(self.widened), self.grid.count))

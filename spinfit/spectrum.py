@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace
 
@@ -135,7 +136,8 @@ def _part(
     reach = shape.reach(tolerance)
     beyond = SMEAR_REACH * SMEAR_MOST * shape.scale if sample.form in ("powder", "aligned") else 0.0
     beyond = max(beyond, WIDEST * _own_width(one))
-    grid = FieldGrid.covering(*window, shape.scale, reach, tolerance, beyond)
+    scale = math.hypot(shape.scale, _least_own_width(one))
+    grid = FieldGrid.covering(*window, scale, reach, tolerance, beyond)
     low, high = window[0] - reach - beyond, window[1] + reach + beyond
     if low < 0:
         high = max(high, -low)
@@ -145,7 +147,7 @@ def _part(
         max(low, 1e-3),
         high,
         Grain.of(shape, tolerance),
-        shape.scale,
+        scale,
         tolerance,
         sweep.microwave,
         sweep.temperature,
@@ -236,6 +238,12 @@ def polarisation_remarks(one: Species, sample: Sample) -> tuple[tuple[str, str],
     else:
         return ()
     return (("populations", text),)
+
+
+def _least_own_width(one: Species) -> float:
+    """Return a standard deviation, mT, by which hidden hyperfine broadens every resonance at the least."""
+    steepest = 14.0 * max(max(spin.g) * spin.S * 2 for spin in one.spins)
+    return 0.8 * min(one.width.hidden_hyperfine) / (max(steepest, 28.0) * FWHM_PER_SIGMA)
 
 
 def with_angle(sample: Sample, angle: float) -> Sample:

@@ -5,9 +5,10 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from spinfit.branches import FieldNodes, Request, between_knots
+from spinfit.branches import Request, between_knots
 from spinfit.hamiltonian import systems
 from spinfit.lineshape import Shape
+from spinfit.nodes import FieldNodes
 from spinfit.resonance import find
 from spinfit.sheets import Grain
 from spinfit.species import Species, Spin

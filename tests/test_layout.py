@@ -49,6 +49,7 @@ ORDER = (
     "lineshape",
     "sheets",
     "branches",
+    "nodes",
     "knots",
     "exact",
     "loops",
