@@ -16,9 +16,8 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit.branches import Branches, KnotData, Request, count_roots, trace_branches
+from spinfit.branches import Branches, FieldNodes, KnotData, Request, count_roots, trace_branches
 from spinfit.hamiltonian import System
-from spinfit.nodes import FieldNodes
 from spinfit.orientations import Rings, unstretched
 from spinfit.resonance import can_reach
 from spinfit.symmetry import Symmetry
@@ -39,6 +38,8 @@ MISTRUST = 2.0
 """Factor on the extrapolated error, unless it falls so fast that a power law is itself pessimistic."""
 LOOPING_MISTRUST = 1.5
 """The same where looping pairs matter."""
+FEW_RINGS = 20
+"""Rings below which the error of looping pairs does not fall as that of splines yet."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -122,7 +123,7 @@ def _extrapolated(history: list[tuple[int, float]], trial: _Trial) -> float:
     rings = trial.rings.rings
     size, error = history[-1]
     if trial.looping:
-        return LOOPING_MISTRUST * error * (size / rings) ** 4
+        return LOOPING_MISTRUST * max(1.0, (FEW_RINGS / rings) ** 3) * error * (size / rings) ** 4
     power = 2.0
     if len(history) > 1:
         before, worse = history[-2]
@@ -255,11 +256,9 @@ class _Trial:
         x, y, inverse = continued(branches.field, branches.weight)
         guess = predict(np.concatenate([x, y]))
         field, weight = restored(guess[: len(rows)], guess[len(rows) :], inverse)
-        inside = (branches.field >= self.request.low) & (branches.field <= self.request.high)
-        size = np.abs(branches.weight) * inside
+        size = np.abs(branches.weight)
         shift = np.minimum(np.abs(field - branches.field) / self.request.scale, 1.0)
-        change = np.abs(weight - branches.weight) * inside
-        return ((size * shift + change) * solid).sum(axis=0) / max((size * solid).sum(), 1e-300)
+        return ((size * shift + np.abs(weight - branches.weight)) * solid).sum(axis=0) / (size * solid).sum()
 
     def _compare(self) -> Array:
         solid = self.rings.knot_weights()
@@ -292,8 +291,7 @@ class _Trial:
         """Return the intensity in single branches."""
         if not self.single.any():
             return 0.0
-        inside = (self.branches.field >= self.request.low) & (self.branches.field <= self.request.high)
-        return float((np.abs(self.branches.weight) * inside * self.rings.knot_weights()).sum())
+        return float((np.abs(self.branches.weight) * self.rings.knot_weights()).sum())
 
     @cached_property
     def branches(self) -> Branches:
