@@ -16,8 +16,9 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit.branches import Branches, FieldNodes, KnotData, Request, count_roots, trace_branches
+from spinfit.branches import Branches, KnotData, Request, count_roots, trace_branches
 from spinfit.hamiltonian import System
+from spinfit.nodes import FieldNodes
 from spinfit.orientations import Rings, unstretched
 from spinfit.resonance import can_reach
 from spinfit.symmetry import Symmetry
@@ -256,9 +257,11 @@ class _Trial:
         x, y, inverse = continued(branches.field, branches.weight)
         guess = predict(np.concatenate([x, y]))
         field, weight = restored(guess[: len(rows)], guess[len(rows) :], inverse)
-        size = np.abs(branches.weight)
+        inside = (branches.field >= self.request.low) & (branches.field <= self.request.high)
+        size = np.abs(branches.weight) * inside
         shift = np.minimum(np.abs(field - branches.field) / self.request.scale, 1.0)
-        return ((size * shift + np.abs(weight - branches.weight)) * solid).sum(axis=0) / (size * solid).sum()
+        change = np.abs(weight - branches.weight) * inside
+        return ((size * shift + change) * solid).sum(axis=0) / max((size * solid).sum(), 1e-300)
 
     def _compare(self) -> Array:
         solid = self.rings.knot_weights()
@@ -291,7 +294,8 @@ class _Trial:
         """Return the intensity in single branches."""
         if not self.single.any():
             return 0.0
-        return float((np.abs(self.branches.weight) * self.rings.knot_weights()).sum())
+        inside = (self.branches.field >= self.request.low) & (self.branches.field <= self.request.high)
+        return float((np.abs(self.branches.weight) * inside * self.rings.knot_weights()).sum())
 
     @cached_property
     def branches(self) -> Branches:
