@@ -91,7 +91,9 @@ def settle(system: System, symmetry: Symmetry, request: Request) -> Knots:
         error = _extrapolated(history, trial)
         if error <= request.tolerance:
             break
-        if size < SIZES[-1] and _hoped(history[-1], size) > request.tolerance:
+        fourth = error * (trial.rings.rings / size) ** 4  # splines converge as they promise: go there at once
+        hoped = fourth if trial.looping else _hoped(history[-1], size)
+        if size < min(SIZES[-1], 3 * trial.rings.rings) and hoped > request.tolerance:
             continue
         finer = _rings(symmetry.kind, size, trial.rings.stretch, harmonics)
         if len(finer.angles()[0]) > (MOST_LOOPING_KNOTS if trial.looping else MOST_KNOTS):
@@ -340,7 +342,7 @@ class _Trial:
 
 def node_accuracy(request: Request) -> float:
     """Return the MHz by which a cubic may miss; the quintic that is used errs some hundred times less."""
-    return 28.0 * request.scale * request.tolerance * 70
+    return min(28.0 * request.scale * request.tolerance * 70, 2e-3 * request.frequency)
 
 
 def _touches(data: KnotData) -> NDArray[np.bool_]:

@@ -20,6 +20,8 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import fft, special
 
+from spinfit import kernels
+
 Array = NDArray[np.float64]
 
 GAUSSIAN_FWHM = math.sqrt(2 * math.log(2))
@@ -145,17 +147,7 @@ class FieldGrid:
         rows : ndarray of int, shape (n,), or one int
         fields, weights : ndarray, shape (n,)
         """
-        x = (fields - self.start) / self.step
-        inside = (x >= 1) & (x < self.count - 3)
-        if not inside.all():
-            x, weights = x[inside], weights[inside]
-            rows = rows if np.ndim(rows) == 0 else rows[inside]
-        i = x.astype(np.intp)
-        taps = _taps(x - i)
-        i += rows * self.count
-        flat = into.reshape(-1)
-        for k in range(4):
-            flat += np.bincount(i + (k - 1), weights=weights * taps[k], minlength=flat.size)
+        kernels.deposit(into, rows, (fields - self.start) / self.step, weights)
 
     def wavenumbers(self) -> Array:
         """Return the non-negative wavenumbers of the real transform, shape (count//2 + 1,), rad/mT."""
@@ -190,15 +182,8 @@ class FieldGrid:
         """Return the spline's values at any fields, same shape as `fields`."""
         x = (fields - self.start) / self.step
         i = np.clip(x.astype(np.intp), 1, self.count - 3)
-        taps = _taps(x - i)
+        taps = kernels.taps(x - i)
         return sum(taps[k] * coefficients[i + (k - 1)] for k in range(4))
-
-
-def _taps(u: Array) -> tuple[Array, Array, Array, Array]:
-    """Return the four cubic B-spline weights of a point a fraction u past its left neighbour."""
-    v = 1 - u
-    u2, v2 = u * u, v * v
-    return v2 * v / 6, 2 / 3 - u2 + 0.5 * u2 * u, 2 / 3 - v2 + 0.5 * v2 * v, u2 * u / 6
 
 
 def _integration(k: Array, step: float) -> NDArray[np.complex128]:

@@ -121,15 +121,16 @@ class FieldNodes:
         and points than one whose resonances come and go.
         """
         counts = self._counts()
-        leaving = (counts <= 1).all(axis=0) & (counts == 1).any(axis=0) & (counts == 0).any(axis=0)
-        if not leaving.any():
+        partly = (counts >= 1).any(axis=0) & ~(counts == 1).all(axis=0)
+        leaving = partly & (counts <= 1).all(axis=0)
+        if 2 * leaving.sum() < max(1, partly.sum()):
             return
         inside = list(self.leaves)
         if low > ZERO_FIELD:
             self._halve([max(ZERO_FIELD, low / BEYOND), low], accuracy, deepest, leaving)
         self._halve([high, BEYOND * high], accuracy, deepest, leaving)
         whole = (self._counts() == 1).all(axis=0) & leaving
-        if not whole.any():
+        if 2 * whole.sum() < partly.sum():  # too few to make up for the further nodes
             self.leaves = inside
 
     def _counts(self) -> NDArray[np.intp]:

@@ -15,6 +15,7 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 from numpy.typing import NDArray
 
+from spinfit import kernels
 from spinfit.branches import Branches, Request
 from spinfit.exact import deposit
 from spinfit.hamiltonian import System
@@ -46,6 +47,7 @@ class Report:
     looping: int = 0
     mesh_points: int = 0
     estimated_error: float = 0.0
+    compiled: bool = kernels.COMPILED
     notes: list[str] = field(default_factory=list)
 
 

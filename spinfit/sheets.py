@@ -19,6 +19,7 @@ from functools import lru_cache
 import numpy as np
 from numpy.typing import NDArray
 
+from spinfit import kernels
 from spinfit.errors import InputError
 from spinfit.lineshape import FieldGrid, Shape
 from spinfit.orientations import Mesh
@@ -93,21 +94,10 @@ class Histograms:
         Each goes to the two classes next to its size, in smooth shares, so that no edge between
         classes shows.
         """
-        place = np.where(
-            smear < self.sizes[0],
-            smear / self.sizes[0],
-            1 + np.log(np.maximum(smear, self.sizes[0]) / self.sizes[0]) / math.log(SMEAR_RATIO),
-        )
-        place = np.minimum(place, len(self.sizes) - 1e-9)
-        lower = place.astype(np.intp)
-        x = place - lower
-        upper_share = x * x * (3 - 2 * x)
-        rows = np.concatenate([lower, lower + 1])
-        shares = np.concatenate([weights * (1 - upper_share), weights * upper_share])
-        both = np.concatenate([fields, fields])
-        self.grid.deposit_rows(self.plain, rows, both, shares)
-        if self.grid.start < 0:  # the spectrum is even in B
-            self.grid.deposit_rows(self.plain, rows, -both, shares)
+        grid = self.grid
+        for sign in (1, -1) if grid.start < 0 else (1,):  # the spectrum is even in B
+            x = (sign * fields - grid.start) / grid.step
+            kernels.deposit_smeared(self.plain, x, weights, smear, float(self.sizes[0]), SMEAR_RATIO)
 
     def broadened(self, fields: Array, weights: Array, variance: Array) -> None:
         """Add resonances, each with its own further Gaussian variance, mT^2; arrays of shape (n,).

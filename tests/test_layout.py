@@ -46,6 +46,7 @@ ORDER = (
     "symmetry",
     "broadening",
     "orientations",
+    "kernels",
     "lineshape",
     "sheets",
     "branches",

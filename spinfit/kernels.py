@@ -1,0 +1,146 @@
+"""The innermost sums: depositing weighted resonances on a grid by cubic B-splines.
+
+Each kernel exists twice, in numpy and, where the optional package numba is installed (extra
+``fast``), compiled; both give the same numbers to rounding and stand under the same tests.
+`COMPILED` says which are in use.
+"""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+from numpy.typing import NDArray
+
+try:
+    from numba import njit
+except ImportError:  # the extra is optional
+    njit = None
+
+Array = NDArray[np.float64]
+
+COMPILED = njit is not None
+"""Whether the compiled kernels are in use."""
+
+
+def taps(u: Array) -> tuple[Array, Array, Array, Array]:
+    """Return the four cubic B-spline weights of a point a fraction u past its left neighbour."""
+    v = 1 - u
+    u2, v2 = u * u, v * v
+    return v2 * v / 6, 2 / 3 - u2 + 0.5 * u2 * u, 2 / 3 - v2 + 0.5 * v2 * v, u2 * u / 6
+
+
+def deposit_numpy(into: Array, rows: NDArray[np.intp] | np.intp, x: Array, weights: Array) -> None:
+    """Add weights at places x, in grid steps, to one of several histograms each, in place.
+
+    Parameters
+    ----------
+    into : ndarray, shape (r, count), C-contiguous
+    rows : ndarray of int, shape (n,), or one int
+    x, weights : ndarray, shape (n,)
+        Points with x outside 1 to count - 3 are left out.
+    """
+    count = into.shape[1]
+    inside = (x >= 1) & (x < count - 3)
+    if not inside.all():
+        x, weights = x[inside], weights[inside]
+        rows = rows if np.ndim(rows) == 0 else rows[inside]
+    i = x.astype(np.intp)
+    shares = taps(x - i)
+    i += rows * count
+    flat = into.reshape(-1)
+    for k in range(4):
+        flat += np.bincount(i + (k - 1), weights=weights * shares[k], minlength=flat.size)
+
+
+def deposit_smeared_numpy(into: Array, x: Array, weights: Array, smear: Array, least: float, ratio: float) -> None:
+    """Add weights at places x, each shared smoothly between the two histograms next to its smear.
+
+    Parameters
+    ----------
+    into : ndarray, shape (r, count), C-contiguous
+        Row 0 is for no smear, row k for `least` x `ratio`^(k - 1).
+    x, weights, smear : ndarray, shape (n,)
+    """
+    place = np.where(smear < least, smear / least, 1 + np.log(np.maximum(smear, least) / least) / math.log(ratio))
+    place = np.minimum(place, len(into) - 1 - 1e-9)
+    lower = place.astype(np.intp)
+    part = place - lower
+    upper_share = part * part * (3 - 2 * part)
+    rows = np.concatenate([lower, lower + 1])
+    shares = np.concatenate([weights * (1 - upper_share), weights * upper_share])
+    deposit_numpy(into, rows, np.concatenate([x, x]), shares)
+
+
+def _compiled_deposit(into, rows, x, weights):
+    count = into.shape[1]
+    for n in range(x.size):
+        if x[n] >= 1.0 and x[n] < count - 3:
+            i = int(x[n])
+            u = x[n] - i
+            v = 1.0 - u
+            w = weights[n] / 6.0
+            row = rows[n] if rows.size > 1 else rows[0]
+            into[row, i - 1] += w * v * v * v
+            into[row, i] += w * (4.0 - 6.0 * u * u + 3.0 * u * u * u)
+            into[row, i + 1] += w * (4.0 - 6.0 * v * v + 3.0 * v * v * v)
+            into[row, i + 2] += w * u * u * u
+
+
+def _compiled_smeared(into, x, weights, smear, least, ratio):
+    rows, count = into.shape
+    scale = 1.0 / math.log(ratio)
+    for n in range(x.size):
+        if x[n] >= 1.0 and x[n] < count - 3:
+            place = smear[n] / least
+            if place >= 1.0:
+                place = 1.0 + math.log(place) * scale
+            place = min(place, rows - 1 - 1e-9)
+            row = int(place)
+            part = place - row
+            upper = part * part * (3.0 - 2.0 * part)
+            i = int(x[n])
+            u = x[n] - i
+            v = 1.0 - u
+            a = v * v * v / 6.0
+            b = (4.0 - 6.0 * u * u + 3.0 * u * u * u) / 6.0
+            c = (4.0 - 6.0 * v * v + 3.0 * v * v * v) / 6.0
+            d = u * u * u / 6.0
+            w = weights[n] * (1.0 - upper)
+            into[row, i - 1] += w * a
+            into[row, i] += w * b
+            into[row, i + 1] += w * c
+            into[row, i + 2] += w * d
+            w = weights[n] * upper
+            into[row + 1, i - 1] += w * a
+            into[row + 1, i] += w * b
+            into[row + 1, i + 1] += w * c
+            into[row + 1, i + 2] += w * d
+
+
+def _compile(function):
+    try:
+        return njit(cache=True)(function)
+    except RuntimeError:  # nowhere to keep the compiled code: compile anew in each process
+        return njit(function)
+
+
+if COMPILED:
+    _compiled_deposit = _compile(_compiled_deposit)
+    _compiled_smeared = _compile(_compiled_smeared)
+
+
+def deposit(into: Array, rows: NDArray[np.intp] | np.intp, x: Array, weights: Array) -> None:
+    """Do what `deposit_numpy` does, compiled where that is possible."""
+    if COMPILED:
+        _compiled_deposit(into, np.atleast_1d(np.asarray(rows, dtype=np.intp)), x, weights)
+    else:
+        deposit_numpy(into, rows, x, weights)
+
+
+def deposit_smeared(into: Array, x: Array, weights: Array, smear: Array, least: float, ratio: float) -> None:
+    """Do what `deposit_smeared_numpy` does, compiled where that is possible."""
+    if COMPILED:
+        _compiled_smeared(into, x, weights, smear, least, ratio)
+    else:
+        deposit_smeared_numpy(into, x, weights, smear, least, ratio)

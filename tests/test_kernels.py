@@ -1,0 +1,69 @@
+"""The compiled kernels give what their numpy twins give, and both what a plain loop gives."""
+
+import numpy as np
+import pytest
+from scipy.interpolate import BSpline
+
+from spinfit import kernels
+
+DEPOSITS = [kernels.deposit_numpy, kernels.deposit]
+SMEARED = [kernels.deposit_smeared_numpy, kernels.deposit_smeared]
+
+
+def points(count: int) -> tuple[np.ndarray, np.ndarray]:
+    rng = np.random.default_rng(7)
+    return rng.uniform(-3.0, count + 3.0, 500), rng.normal(size=500)
+
+
+def spline(x: float, i: int) -> float:
+    """Return the cubic B-spline centred on i at x, from scipy."""
+    return float(np.nan_to_num(BSpline.basis_element(np.arange(i - 2.0, i + 3.0), extrapolate=False)(x)))
+
+
+@pytest.mark.parametrize("deposit", DEPOSITS)
+def test_deposit(deposit) -> None:
+    x, w = points(40)
+    rows = np.arange(500) % 3
+    got = np.zeros((3, 40))
+    deposit(got, rows, x, w)
+    want = np.zeros((3, 40))
+    for row, place, weight in zip(rows, x, w, strict=True):
+        if 1 <= place < 37:
+            want[row] += [weight * spline(place, i) for i in range(40)]
+    assert got == pytest.approx(want, abs=1e-12)
+
+
+@pytest.mark.parametrize("deposit", DEPOSITS)
+def test_deposit_in_one_row(deposit) -> None:
+    x, w = points(30)
+    got, want = np.zeros((1, 30)), np.zeros((1, 30))
+    deposit(got, np.intp(0), x, w)
+    kernels.deposit_numpy(want, np.zeros(500, dtype=np.intp), x, w)
+    assert got == pytest.approx(want, abs=1e-12)
+
+
+@pytest.mark.parametrize("deposit", SMEARED)
+def test_smeared(deposit) -> None:
+    x, w = points(40)
+    smear = np.concatenate([np.zeros(50), np.geomspace(1e-3, 100.0, 450)])
+    got = np.zeros((6, 40))
+    deposit(got, x, w, smear, 0.4, 1.6)
+    want = np.zeros((6, 40))
+    for place, weight, size in zip(x, w, smear, strict=True):
+        if not 1 <= place < 37:
+            continue
+        rung = size / 0.4 if size < 0.4 else 1 + np.log(size / 0.4) / np.log(1.6)
+        rung = min(rung, 5 - 1e-9)
+        row, part = int(rung), rung - int(rung)
+        shares = np.array([weight * spline(place, i) for i in range(40)])
+        upper = part**2 * (3 - 2 * part)
+        want[row] += (1 - upper) * shares
+        want[row + 1] += upper * shares
+    assert got == pytest.approx(want, abs=1e-12)
+
+
+def test_nothing_is_lost() -> None:
+    got = np.zeros((4, 50))
+    rng = np.random.default_rng(3)
+    kernels.deposit_smeared(got, rng.uniform(5, 40, 100), np.ones(100), rng.uniform(0, 3, 100), 0.4, 1.6)
+    assert got.sum() == pytest.approx(100.0, rel=1e-12)
