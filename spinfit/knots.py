@@ -29,7 +29,7 @@ SIZES = (8, 12, 16, 20, 24, 32, 40, 48, 64, 80, 96)
 """Numbers of rings that are tried in turn."""
 MOST_KNOTS = 5_000
 """Directions at which refinement gives up and says so."""
-POOR = 0.02
+POOR = 0.1
 """Error of the coarse half of the first set above which drawing the rings together is tried."""
 FOLD_SLOPE = 14.0
 """MHz/mT, half a free spin's: a level difference flatter than that moves intensity rather in direction."""
@@ -145,9 +145,9 @@ def _drawn_together(
     solid = np.bincount(ring, trial.rings.knot_weights())
     # rings of even number are the coarse half's own and carry no error
     density = (np.bincount(ring, trial.error_by_knot()) / solid)[1::2]
-    if density[-1] > density[-2]:
+    if density[-1] > 1.3 * density[-2]:
         stretches = (1.0, 0.25, 0.08)
-    elif density[0] > density[1]:
+    elif density[0] > 1.3 * density[1]:
         stretches = (1.0, 4.0, 12.0)
     else:
         return trial, 0

@@ -23,8 +23,8 @@ from spinfit.knots import Knots, continued, restored, settle
 from spinfit.lineshape import FieldGrid
 from spinfit.loops import add_pairs
 from spinfit.orientations import Mesh, Rings
-from spinfit.resonance import find
-from spinfit.sheets import Histograms, spacing
+from spinfit.resonance import ZERO_FIELD, find
+from spinfit.sheets import SMEAR_MOST, SMEAR_REACH, Histograms, spacing
 from spinfit.symmetry import Symmetry, symmetry_of
 
 Array = NDArray[np.float64]
@@ -164,13 +164,15 @@ def _sizes(values: Array, axis: int, intervals: int, request: Request, even: boo
 
     Where a field turns, it may curve by little more than the line within one step; where it is
     steep and smeared, the smear must stay short of the distance over which the steepness changes.
-    Fields beyond the range do not count.
+    Fields well beyond the window do not count.
     """
     # even about both ends, or periodic: one more point on either side
     count = values.shape[axis]
     around = [1, *range(count), count - 2] if even else [count - 1, *range(count), 0]
     padded = np.take(values, around, axis)
-    inside = (values >= request.low) & (values <= request.high)
+    margin = 0.6 * SMEAR_REACH * SMEAR_MOST * request.scale  # most of what lies past the window for the smears' sake
+    low = request.low + margin if request.low > ZERO_FIELD else 0.0
+    inside = (values >= low) & (values <= request.high - margin)
     first = np.diff(padded, axis=axis)
     before, after = (np.take(first, range(k, count + k), axis) for k in (0, 1))
     slope = np.where(inside, np.maximum(np.abs(before), np.abs(after)), 0.0) * intervals
