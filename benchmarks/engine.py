@@ -22,12 +22,16 @@ LONGEST_PLAIN = 20.0
 
 @dataclass(frozen=True)
 class Case:
-    """One system: what is simulated, to which tolerance, and the mesh of its reference."""
+    """One system: what is simulated, to which tolerance, and the mesh of its reference.
+
+    Sums of roots do not converge for looping systems; they have no mesh, and no error here:
+    `scripts/campaign engine` holds them to a sum without roots.
+    """
 
     name: str
     species: Species
     sweep: Sweep
-    mesh: tuple[int, int]
+    mesh: tuple[int, int] | None
     tolerance: float = 1e-3
     goal: float | None = None
     goal_floor: float | None = None
@@ -92,6 +96,16 @@ CASES = (
         goal_floor=3.5,
     ),
     Case(
+        "D: S=5/2, D 0.3 cm^-1, E/D 0.1, 10 K, 2 mT, at 1e-2",
+        _one(Spin(S=2.5, g=(2.0,), D=0.3 * WAVENUMBER, E=0.03 * WAVENUMBER), 2.0),
+        Sweep(9500.0, (0.0, 800.0), 2048, temperature=10.0),
+        None,
+        tolerance=1e-2,
+        goal=100_000,
+        goal_floor=5,
+        plain=False,
+    ),
+    Case(
         "E: S=5/2, I=5/2, D 300 MHz, A -250 MHz, 0.3 mT",
         _one(Spin(S=2.5, g=(2.0,), D=300.0), 0.3, Nucleus(isotope="55Mn", A=(-250.0,))),
         Sweep(9500.0, (240.0, 430.0), 2048),
@@ -120,9 +134,11 @@ CASES = (
 
 
 def _row(case: Case) -> Row:
-    truth = reference(case.species, case.sweep, case.mesh)
     spectrum = simulate(case.species, case.sweep, tolerance=case.tolerance)
-    error = float(np.abs(spectrum.signal - truth).max() / np.abs(truth).max())
+    error = None
+    if case.mesh is not None:
+        truth = reference(case.species, case.sweep, case.mesh)
+        error = float(np.abs(spectrum.signal - truth).max() / np.abs(truth).max())
     (used,) = spectrum.report[case.species.name]["systems"]
     timing = timed(lambda: simulate(case.species, case.sweep, tolerance=case.tolerance))
     seconds, note = None, ""
