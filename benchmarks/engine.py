@@ -118,7 +118,7 @@ CASES = (
         "F: S=3/2, D 5 cm^-1, E/D 0.2, 2 mT",
         _one(Spin(S=1.5, g=(2.0,), D=5 * WAVENUMBER, E=WAVENUMBER), 2.0),
         Sweep(9500.0, (50.0, 450.0), 2048),
-        (1500, 700),
+        (3000, 1200),
         goal=4000,
         goal_floor=6,
     ),
