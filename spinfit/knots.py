@@ -83,7 +83,7 @@ def settle(system: System, symmetry: Symmetry, request: Request) -> Knots:
     harmonics = None
     if trial.half_error() > request.tolerance:
         harmonics = trial.harmonics_needed()
-    if trial.half_error() > max(POOR, request.tolerance):
+    if trial.half_error() > max(POOR, request.tolerance) and not trial.looping:
         trial, extra = _drawn_together(trial, system, symmetry, request, harmonics)
         spent += extra
     history = [(trial.rings.rings // 2, trial.half_error())]

@@ -47,7 +47,7 @@ LARGEST = 40_000_000
 MOST_ROUNDS = 5
 POWER = 2.3
 """Power of the step with which a mesh's error falls, until it has been measured."""
-SHARE = 0.5
+SHARE = 0.8
 """Part of the tolerance that the meshes of looping pairs may use up."""
 FIELDS, BLOCK = 12, 8000
 """Numbers of fields and of points handled at a time, so that they stay in the processor's cache."""
