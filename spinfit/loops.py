@@ -49,7 +49,7 @@ POWER = 2.3
 """Power of the step with which a mesh's error falls, until it has been measured."""
 SHARE = 0.8
 """Part of the tolerance that the meshes of looping pairs may use up."""
-FIELDS, BLOCK = 12, 8000
+FIELDS, BLOCK = 20, 6000
 """Numbers of fields and of points handled at a time, so that they stay in the processor's cache."""
 
 

@@ -18,6 +18,8 @@ from spinfit.weak import Felt, extent
 
 Array = NDArray[np.float64]
 
+KEPT_PAIRS = 120
+"""Pairs of levels up to which their differences at every node are kept."""
 BEYOND = 2.5
 """How many times the last field, and what part of the first, is searched for resonances that leave the range."""
 
@@ -31,6 +33,7 @@ class FieldNodes:
         self.solved: dict[float, tuple[Array, ...]] = {}
         self.leaves: list[tuple[float, float, float]] = []
         self.count = 0
+        self._kept: dict[float, tuple[Array, Array, Array]] = {}
         self.weights = None if request.weigh is None else request.weigh(directions)
         self.extent = extent(system, request.high)
         self.state = None if request.populations is None else zero_field_state(system, request.populations)
@@ -79,6 +82,15 @@ class FieldNodes:
         if self.request.weigh is not None:
             strength = strength * self.weights[:, None]
         return gap, slope[:, upper] - slope[:, lower], strength
+
+    def _every(self, field: float) -> tuple[Array, Array, Array]:
+        """Return `_differences` of all pairs; small systems keep them, since nodes are shared by segments."""
+        if field in self._kept:
+            return self._kept[field]
+        found = self._differences(field, (self.lower, self.upper))
+        if len(self.lower) <= KEPT_PAIRS:
+            self._kept[field] = found
+        return found
 
     def _variance(self, field: float, pairs: Pairs) -> Array:
         """Return the squared frequency width at one node, shape (n, p), MHz^2."""
@@ -135,10 +147,9 @@ class FieldNodes:
 
     def _counts(self) -> NDArray[np.intp]:
         """Return how often the gap of every pair changes sign along the nodes, shape (n, p)."""
-        pairs = (self.lower, self.upper)
         total = np.zeros((len(self.directions), len(self.lower)), dtype=np.intp)
         for leaf in self.leaves:
-            first, middle, last = (self._differences(x, pairs)[0] >= 0 for x in leaf)
+            first, middle, last = (self._every(x)[0] >= 0 for x in leaf)
             total += first != middle
             total += middle != last
         return total
@@ -152,11 +163,10 @@ class FieldNodes:
         only: NDArray[np.bool_],
     ) -> list[tuple[float, float]]:
         """Accept, drop or halve each pending segment; return the halves."""
-        pairs = (self.lower, self.upper)
         halves = []
         for a, b in pending:
             m, h = 0.5 * (a + b), b - a
-            (f_a, g_a, s_a), (f_m, g_m, s_m), (f_b, g_b, s_b) = (self._differences(x, pairs) for x in (a, m, b))
+            (f_a, g_a, s_a), (f_m, g_m, s_m), (f_b, g_b, s_b) = (self._every(x) for x in (a, m, b))
             strength = np.maximum(np.maximum(np.abs(s_a), np.abs(s_m)), np.abs(s_b))
             reach = can_reach(f_a, f_b, g_a * h, g_b * h, self.extent) | ((f_m >= 0) != (f_a >= 0))
             reach |= between_knots(np.stack([f_a, f_m, f_b]))
@@ -212,7 +222,8 @@ class FieldNodes:
         index = {x: i for i, x in enumerate(fields)}
         leaves = np.array([[index[x] for x in leaf] for leaf in self.leaves], dtype=np.intp).reshape(-1, 3)
         pairs = self._relevant(fields) if pairs is None else pairs
-        columns = [self._differences(x, pairs) for x in fields]
+        every = len(pairs[0]) == len(self.lower)
+        columns = [self._every(x) if every else self._differences(x, pairs) for x in fields]
         if not columns:
             empty = np.empty((0, 0, len(self.directions)))
             return KnotData(np.empty(0), leaves, pairs, empty, empty, empty)
@@ -265,10 +276,9 @@ class FieldNodes:
         )
 
     def _relevant(self, fields: list[float]) -> Pairs:
-        every = (self.lower, self.upper)
         low = high = top = None
         for x in fields:
-            gap, slope, strength = self._differences(x, every)
+            gap, slope, strength = self._every(x)
             size = np.abs(strength).max(axis=0)
             lo, hi = gap.min(axis=0), gap.max(axis=0)
             low = lo if low is None else np.minimum(low, lo)

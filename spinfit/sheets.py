@@ -284,9 +284,9 @@ class Grain:
         """Derive the distances from a line shape.
 
         A sum over points d apart aliases by the line's transform at k = 2 pi/d, which is set to
-        a twentieth of the tolerance (the derivative lifts it by about 2 pi sigma/d).
+        a tenth of the tolerance (the derivative lifts it by about 2 pi sigma/d).
         """
-        level = math.log(20 / tolerance)
+        level = math.log(10 / tolerance)
         a, b = 2 * (math.pi * shape.sigma) ** 2, 2 * math.pi * shape.gamma
         close = (b + math.sqrt(b * b + 4 * a * level)) / (2 * level)
         x = level
