@@ -244,8 +244,3 @@ def _least_own_width(one: Species) -> float:
     """Return a standard deviation, mT, by which hidden hyperfine broadens every resonance at the least."""
     steepest = 14.0 * max(max(spin.g) * spin.S * 2 for spin in one.spins)
     return 0.8 * min(one.width.hidden_hyperfine) / (max(steepest, 28.0) * FWHM_PER_SIGMA)
-
-
-def with_angle(sample: Sample, angle: float) -> Sample:
-    """Return the sample at one angle, rad."""
-    return replace(sample, angles=(angle,))
