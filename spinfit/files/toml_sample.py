@@ -8,6 +8,7 @@ import numpy as np
 
 from spinfit.errors import InputError, nearest
 from spinfit.files.toml_table import Given, Table, describe
+from spinfit.sites import POINT_GROUPS
 from spinfit.sweep import DETECT, FORMS, MICROWAVE, Sample, Sweep
 
 SWEEP_KEYS = ("frequency", "field", "points", "temperature", "microwave", "modulation", "detect", "phase")
@@ -22,28 +23,6 @@ FORM_KEYS = {
 """Which keys of ``[sample]`` go with which form."""
 SAMPLE_KEYS = ("form", *dict.fromkeys(key for keys in FORM_KEYS.values() for key in keys))
 
-POINT_GROUPS = (
-    *("1", "-1", "2", "m", "2/m", "222", "mm2", "mmm", "4", "-4", "4/m", "422", "4mm", "-42m", "4/mmm"),
-    *(
-        "3",
-        "-3",
-        "32",
-        "3m",
-        "-3m",
-        "6",
-        "-6",
-        "6/m",
-        "622",
-        "6mm",
-        "-6m2",
-        "6/mmm",
-        "23",
-        "m-3",
-        "432",
-        "-43m",
-        "m-3m",
-    ),
-)
 """The 32 crystallographic point groups by their short international symbols."""
 
 DEFAULT_TOLERANCE = 1e-3
