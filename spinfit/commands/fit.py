@@ -170,26 +170,15 @@ def _compare(args: argparse.Namespace, screen: Screen) -> int:
     return max(map(_code, outcomes))
 
 
-def _more(profiles: Any, resampled: Any) -> dict[str, Any]:
-    """Return what outcome.json says of profiles and bootstrap."""
-    from spinfit.report.tried import bootstrap_record, profile_record
-
-    more: dict[str, Any] = {}
-    if profiles:
-        more["profiles"] = {one.name: profile_record(one) for one in profiles}
-    if resampled is not None:
-        more["bootstrap"] = bootstrap_record(resampled)
-    return more
-
-
 def _say(
     screen: Screen, outcome: Any, folder: Path | None, written: list[str], *, profiles: Any = (), resampled: Any = None
 ) -> None:
+    from spinfit.report.outcome_files import more_record
     from spinfit.report.outcome_json import outcome_record
     from spinfit.report.tables import outcome_lines
     from spinfit.report.tried import bootstrap_table, budget_table, profile_table
 
-    screen.emit(outcome_record(outcome, _more(profiles, resampled)))
+    screen.emit(outcome_record(outcome, more_record(profiles, resampled)))
     blocks = (
         outcome_lines(outcome),
         budget_table(outcome),
@@ -239,25 +228,9 @@ def write_outcome(folder: Path, outcome: Any, *, profiles: Any = (), resampled: 
     from contextlib import ExitStack
 
     from spinfit.files.atomic import whole_file
-    from spinfit.report.archive import archive_bytes
-    from spinfit.report.html import report_text
-    from spinfit.report.outcome_json import curves_text, outcome_text
-    from spinfit.report.plots import fit_figure, picture_bytes
-    from spinfit.report.positions import positions_figure, positions_text
-    from spinfit.report.tried import profile_figure
+    from spinfit.report.outcome_files import outcome_files
 
-    picture = picture_bytes(positions_figure(outcome) if outcome.positions else fit_figure(outcome))
-    curves = positions_text(outcome) if outcome.positions else curves_text(outcome)
-    drawn = picture_bytes(profile_figure(profiles)) if profiles else b""
-    contents = {
-        "outcome.json": outcome_text(outcome, _more(profiles, resampled)).encode(),
-        "curves.csv": curves.encode(),
-        "fit.png": picture,
-        "report.html": report_text(
-            outcome, picture, profiles=profiles, profile_picture=drawn, resampled=resampled
-        ).encode(),
-        "outcome.h5": archive_bytes(outcome),
-    }
+    contents = outcome_files(outcome, profiles=profiles, resampled=resampled)
     with ExitStack() as stack:
         places = {name: stack.enter_context(whole_file(folder / name)) for name in contents}
         for name, content in contents.items():

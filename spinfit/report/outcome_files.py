@@ -1,0 +1,60 @@
+"""Everything that a fit leaves in its folder, as bytes under the names of the files."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Any
+
+from spinfit.fitting.outcome import Outcome
+from spinfit.fitting.resample import Bootstrap, Profile
+from spinfit.report.archive import archive_bytes
+from spinfit.report.html import report_text
+from spinfit.report.outcome_json import curves_text, outcome_text
+from spinfit.report.plots import fit_figure, picture_bytes
+from spinfit.report.positions import positions_figure, positions_text
+from spinfit.report.tried import bootstrap_record, profile_figure, profile_record
+
+NUMBERS = ("outcome.json", "curves.csv", "outcome.h5")
+"""Files without pictures."""
+DRAWN = ("fit.png", "report.html")
+"""Files that hold pictures, which take longer to draw than a short fit takes."""
+
+
+def more_record(profiles: Sequence[Profile] = (), resampled: Bootstrap | None = None) -> dict[str, Any]:
+    """Return what outcome.json says of profiles and bootstrap; empty when there are none."""
+    more: dict[str, Any] = {}
+    if profiles:
+        more["profiles"] = {one.name: profile_record(one) for one in profiles}
+    if resampled is not None:
+        more["bootstrap"] = bootstrap_record(resampled)
+    return more
+
+
+def outcome_files(
+    outcome: Outcome,
+    *,
+    profiles: Sequence[Profile] = (),
+    resampled: Bootstrap | None = None,
+    pictures: bool = True,
+) -> dict[str, bytes]:
+    """Return the content of every file of an outcome by name.
+
+    Parameters
+    ----------
+    outcome : Outcome
+    profiles : sequence of Profile
+    resampled : Bootstrap, optional
+    pictures : bool
+        Whether `DRAWN` is among them.
+    """
+    curves = positions_text(outcome) if outcome.positions else curves_text(outcome)
+    contents = {
+        "outcome.json": outcome_text(outcome, more_record(profiles, resampled)).encode(),
+        "curves.csv": curves.encode(),
+    }
+    if pictures:
+        picture = picture_bytes(positions_figure(outcome) if outcome.positions else fit_figure(outcome))
+        drawn = picture_bytes(profile_figure(profiles)) if profiles else b""
+        report = report_text(outcome, picture, profiles=profiles, profile_picture=drawn, resampled=resampled)
+        contents |= {"fit.png": picture, "report.html": report.encode()}
+    return contents | {"outcome.h5": archive_bytes(outcome)}
