@@ -9,15 +9,16 @@ right.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
 from spinfit.errors import InputError
+from spinfit.files.store import Folder, Kept, Store
 from spinfit.files.toml_fit import read_fit, start_of
 from spinfit.files.toml_sample import DEFAULT_TOLERANCE, read_sample, read_sweep, read_tolerance
 from spinfit.files.toml_species import read_species
-from spinfit.files.toml_table import Given, Table, load_toml
+from spinfit.files.toml_table import Given, Table, load_toml, parse_toml
 from spinfit.files.toml_trace import read_lines, read_trace
 from spinfit.fitting.data import Job, Lines, Trace
 from spinfit.fitting.parameters import Binding, expand_vary
@@ -106,19 +107,40 @@ def read_job(path: str | Path, *, tables: Mapping[str, Any] | None = None) -> Jo
     else:
         text = ""
     try:
-        return _job_from(tables, Path(path), text)
+        return _job_from(tables, Path(path), text, Folder(Path(path).parent))
     except InputError as error:
         raise error.at(file=path) from None
 
 
-def _job_from(data: Mapping[str, Any], path: Path, text: str) -> Job:
+def job_of(text: str, name: str, contents: Mapping[str, bytes]) -> Job:
+    """Read a job from its text, with data files that are in memory already (an archive's).
+
+    Parameters
+    ----------
+    text : str
+        TOML.
+    name : str
+        What the job is called: the stem of its file.
+    contents : mapping of name -> bytes
+        Data files by the names that the job writes; nothing else is opened.
+
+    Raises
+    ------
+    InputError
+        With the line or key.
+    """
+    job = _job_from(parse_toml(text), Path("job.toml"), text, Kept(contents))
+    return replace(job, name=name, path="")
+
+
+def _job_from(data: Mapping[str, Any], path: Path, text: str, store: Store) -> Job:
     root = Table(data, "", JOB_KEYS, elsewhere=_NOT_IN_JOBS)
     given: Given = {}
     start = start_of(root.data.get("fit"))
     sample = read_sample(root.data.get("sample"), given, job=True)
     species = read_species(root.tables("species"), given, form=sample.form, auto=start == "auto")
     tolerance = read_tolerance(root.data.get("accuracy"), given)
-    traces, lines = _data(root, path.parent, sample, species, given)
+    traces, lines = _data(root, store, sample, species, given)
     binding = Binding(species, sample, (*traces, *lines))
     units = binding.named(given)
     binding = Binding(species, sample, (*traces, *lines), units=units)
@@ -138,11 +160,12 @@ def _job_from(data: Mapping[str, Any], path: Path, text: str) -> Job:
         path=str(path),
         text=text,
         lines=lines,
+        files=store.taken,
     )
 
 
 def _data(
-    root: Table, folder: Path, sample: Sample, species: tuple[Species, ...], given: Given
+    root: Table, store: Store, sample: Sample, species: tuple[Species, ...], given: Given
 ) -> tuple[tuple[Trace, ...], tuple[Lines, ...]]:
     """Read traces and tables of lines, in this order, and see that nothing is called alike."""
     entries = [(place, entry, read_trace) for place, entry in root.tables("trace")]
@@ -154,7 +177,7 @@ def _data(
     names = {"sample": "the sample"} | {one.name: "a species" for one in species}
     found: list[Trace | Lines] = []
     for n, (place, entry, reader) in enumerate(entries):
-        one = reader(place, entry, n, folder=folder, sample=sample, given=given)
+        one = reader(place, entry, n, store=store, sample=sample, given=given)
         if one.name in names:
             text = f'"{one.name}" is the name of {names[one.name]} already'
             raise InputError(text, 'write another name = "..." here', place=f"{place}.name")

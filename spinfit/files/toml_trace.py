@@ -16,7 +16,8 @@ from numpy.typing import NDArray
 
 from spinfit.errors import InputError
 from spinfit.files.raw import RawTrace
-from spinfit.files.reading import Assembled, assemble, read
+from spinfit.files.reading import Assembled, assemble, read_content
+from spinfit.files.store import Store
 from spinfit.files.toml_sample import conditions, parallel, plane
 from spinfit.files.toml_table import Given, Table, describe
 from spinfit.fitting.data import Lines, Trace
@@ -59,14 +60,19 @@ def _same(first: Any, second: Any) -> bool:
     return bool(first == second)
 
 
+def _read(store: Store, written: str) -> RawTrace:
+    content, sha256, shown = store.load(written)
+    return read_content(content, shown, sha256)
+
+
 class _Source:
     """A data file's table in the job, its header, and the notes about both."""
 
-    def __init__(self, table: Table, folder: Path) -> None:
+    def __init__(self, table: Table, store: Store) -> None:
         self.table = table
         table.require("file", '"..." (relative to this file)')
         self.written = table.text("file") or ""
-        self.raw: RawTrace = read(folder / self.written)
+        self.raw = _read(store, self.written)
         self.name = table.name("name") or name_from(self.written)
         self.notes: list[tuple[str, str]] = list(self.raw.notes)
 
@@ -117,7 +123,7 @@ def _without_none(values: dict[str, Any]) -> dict[str, Any]:
     return {key: value for key, value in values.items() if value is not None}
 
 
-def read_trace(place: str, data: object, index: int, *, folder: Path, sample: Sample, given: Given) -> Trace:
+def read_trace(place: str, data: object, index: int, *, store: Store, sample: Sample, given: Given) -> Trace:
     """Read one ``[[trace]]`` and its data file.
 
     Parameters
@@ -126,8 +132,8 @@ def read_trace(place: str, data: object, index: int, *, folder: Path, sample: Sa
         ``"trace.1"``.
     index : int
         Position among the traces, from 0.
-    folder : Path
-        That of the job file.
+    store : Store
+        Where the data files come from.
 
     Raises
     ------
@@ -143,7 +149,7 @@ def read_trace(place: str, data: object, index: int, *, folder: Path, sample: Sa
         raise table.error("angle", f"means nothing for a {sample.form}", right)
     phase = table.quantity("phase", "angle")
     baseline = _baseline(table)
-    source = _Source(table, folder)
+    source = _Source(table, store)
     found = {key: source.merged(key, value) for key, value in own.items()}
     found["angle"] = _angle(source, sample, angle)
     found |= {"frequency": source.frequency(), "phase": phase, **source.shared(sample)}
@@ -152,7 +158,7 @@ def read_trace(place: str, data: object, index: int, *, folder: Path, sample: Sa
     under = None
     if background is not None:
         columns = {key: reading[key] for key in ("columns", "field_unit", "field_calibration")}
-        empty = _assemble(table, read(folder / background), **columns)
+        empty = _assemble(table, _read(store, background), **columns)
         under = _on_fields(table, empty, swept)
     return Trace(
         name=source.name,
@@ -239,7 +245,7 @@ def _angle(source: _Source, sample: Sample, own: float | None) -> float | None:
 # Tables of line positions ---------------------------------------------------------------------------
 
 
-def read_lines(place: str, data: object, index: int, *, folder: Path, sample: Sample, given: Given) -> Lines:
+def read_lines(place: str, data: object, index: int, *, store: Store, sample: Sample, given: Given) -> Lines:
     """Read one ``[[lines]]`` and its table of resonance fields.
 
     The columns go by their headings: ``angle_deg`` (or ``theta_deg, phi_deg``), ``field_mT``, and
@@ -255,7 +261,7 @@ def read_lines(place: str, data: object, index: int, *, folder: Path, sample: Sa
         found = f"line positions need a crystal and the sample is a {sample.form}"
         raise InputError(found, 'write [sample] form = "crystal"', place=place)
     own = {key: value for key, value in conditions(table).items() if key in ("temperature", "microwave")}
-    source = _Source(table, folder)
+    source = _Source(table, store)
     found_values = {key: source.merged(key, value) for key, value in own.items()}
     found_values |= {"frequency": source.frequency(), **source.shared(sample)}
     columns = _columns(source.raw)

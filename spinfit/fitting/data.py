@@ -139,6 +139,8 @@ class Job:
         The job file as it was read.
     lines : tuple of Lines
         Tables of line positions, fitted together with the traces.
+    files : mapping of name -> bytes
+        Every data file as it was read, by the name that the job writes.
     """
 
     species: tuple[Species, ...]
@@ -154,3 +156,4 @@ class Job:
     path: str = ""
     text: str = ""
     lines: tuple[Lines, ...] = ()
+    files: Mapping[str, bytes] = field(default_factory=dict)
