@@ -72,6 +72,43 @@ def deposit_smeared_numpy(into: Array, x: Array, weights: Array, smear: Array, l
     deposit_numpy(into, rows, np.concatenate([x, x]), shares)
 
 
+def slopes_of_taps(u: Array) -> tuple[Array, Array, Array, Array]:
+    """Return how the four weights of `taps` change with the place of the point."""
+    v = 1 - u
+    u2, v2 = u * u, v * v
+    return -0.5 * v2, 1.5 * u2 - 2 * u, 2 * v - 1.5 * v2, 0.5 * u2
+
+
+def deposit_changes_numpy(
+    into: Array, rows: NDArray[np.intp] | np.intp, x: Array, weights: Array, moves: Array
+) -> None:
+    """Add first-order changes of points at places x, in grid steps, in place.
+
+    Parameters
+    ----------
+    into : ndarray, shape (c, r, count), C-contiguous
+        Histograms of each of c changes.
+    rows : ndarray of int, shape (n,), or one int
+    x : ndarray, shape (n,)
+        Points with x outside 1 to count - 3 are left out.
+    weights : ndarray, shape (c, n)
+        Changes of weight.
+    moves : ndarray, shape (c, n)
+        Weight times change of place.
+    """
+    count = into.shape[2]
+    inside = (x >= 1) & (x < count - 3)
+    if not inside.all():
+        x, weights, moves = x[inside], weights[:, inside], moves[:, inside]
+        rows = rows if np.ndim(rows) == 0 else rows[inside]
+    i = x.astype(np.intp)
+    shares, slopes = taps(x - i), slopes_of_taps(x - i)
+    i += rows * count
+    for flat, weight, move in zip(into.reshape(len(into), -1), weights, moves, strict=True):
+        for k in range(4):
+            flat += np.bincount(i + (k - 1), weights=weight * shares[k] + move * slopes[k], minlength=flat.size)
+
+
 def _compiled_deposit(into, rows, x, weights):
     count = into.shape[1]
     for n in range(x.size):
@@ -118,6 +155,31 @@ def _compiled_smeared(into, x, weights, smear, least, ratio):
             into[row + 1, i + 2] += w * d
 
 
+def _compiled_changes(into, rows, x, weights, moves):
+    changes, _, count = into.shape
+    for n in range(x.size):
+        if x[n] >= 1.0 and x[n] < count - 3:
+            i = int(x[n])
+            u = x[n] - i
+            v = 1.0 - u
+            row = rows[n] if rows.size > 1 else rows[0]
+            a = v * v * v / 6.0
+            b = (4.0 - 6.0 * u * u + 3.0 * u * u * u) / 6.0
+            c = (4.0 - 6.0 * v * v + 3.0 * v * v * v) / 6.0
+            d = u * u * u / 6.0
+            da = -0.5 * v * v
+            db = 1.5 * u * u - 2.0 * u
+            dc = 2.0 * v - 1.5 * v * v
+            dd = 0.5 * u * u
+            for k in range(changes):
+                w = weights[k, n]
+                m = moves[k, n]
+                into[k, row, i - 1] += w * a + m * da
+                into[k, row, i] += w * b + m * db
+                into[k, row, i + 1] += w * c + m * dc
+                into[k, row, i + 2] += w * d + m * dd
+
+
 def _compile(function):
     try:
         return njit(cache=True)(function)
@@ -128,6 +190,7 @@ def _compile(function):
 if COMPILED:
     _compiled_deposit = _compile(_compiled_deposit)
     _compiled_smeared = _compile(_compiled_smeared)
+    _compiled_changes = _compile(_compiled_changes)
 
 
 def deposit(into: Array, rows: NDArray[np.intp] | np.intp, x: Array, weights: Array) -> None:
@@ -144,3 +207,11 @@ def deposit_smeared(into: Array, x: Array, weights: Array, smear: Array, least: 
         _compiled_smeared(into, x, weights, smear, least, ratio)
     else:
         deposit_smeared_numpy(into, x, weights, smear, least, ratio)
+
+
+def deposit_changes(into: Array, rows: NDArray[np.intp] | np.intp, x: Array, weights: Array, moves: Array) -> None:
+    """Do what `deposit_changes_numpy` does, compiled where that is possible."""
+    if COMPILED:
+        _compiled_changes(into, np.atleast_1d(np.asarray(rows, dtype=np.intp)), x, weights, moves)
+    else:
+        deposit_changes_numpy(into, rows, x, weights, moves)

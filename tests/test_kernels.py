@@ -67,3 +67,27 @@ def test_nothing_is_lost() -> None:
     rng = np.random.default_rng(3)
     kernels.deposit_smeared(got, rng.uniform(5, 40, 100), np.ones(100), rng.uniform(0, 3, 100), 0.4, 1.6)
     assert got.sum() == pytest.approx(100.0, rel=1e-12)
+
+
+@pytest.mark.parametrize("deposit", [kernels.deposit_changes_numpy, kernels.deposit_changes])
+def test_changes_of_a_deposit(deposit) -> None:
+    x, w = points(40)
+    rng = np.random.default_rng(8)
+    weights, moves = rng.normal(size=(2, 3, 500))
+    rows = np.arange(500) % 2
+    got = np.zeros((3, 2, 40))
+    deposit(got, rows, x, weights, moves)
+    for k in range(3):
+        # a quadratic in the step, whose central difference is exact to the third derivative of the spline
+        step = 1e-4
+        sides = np.zeros((2, 2, 40))
+        inside = (x >= 1.01) & (x < 36.99)
+        for side, sign in zip(sides, (1, -1), strict=True):
+            place = x + sign * step * moves[k] / w
+            kernels.deposit_numpy(side, rows[inside], place[inside], (w + sign * step * weights[k])[inside])
+        only = np.zeros((3, 2, 40))
+        deposit(only, rows[inside], x[inside], weights[:, inside], moves[:, inside])
+        assert only[k] == pytest.approx((sides[0] - sides[1]) / (2 * step), abs=2e-4 * np.abs(only[k]).max())
+    rest = np.zeros((3, 2, 40))
+    deposit(rest, rows, np.where((x >= 1) & (x < 37), x, 0.0), weights, moves)
+    assert got == pytest.approx(rest, abs=1e-12)
