@@ -16,10 +16,9 @@ from spinfit import __version__
 from spinfit.commands import TABLE
 from spinfit.commands.screen import Screen
 from spinfit.errors import InputError, SpinfitError, nearest
+from spinfit.threads import one_thread
 
 COMMON = ("--json", "--debug")
-
-THREADS = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "VECLIB_MAXIMUM_THREADS")
 
 
 class _Parser(argparse.ArgumentParser):
@@ -131,16 +130,6 @@ def _leave_quietly() -> None:
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
     except (OSError, ValueError, AttributeError):  # standard output has no file descriptor
         pass
-
-
-def one_thread() -> None:
-    """Keep linear algebra to one thread in this process, unless the user's environment says otherwise.
-
-    The matrices are small: threads would wait for each other more than they save, and several fits at once
-    would fight over the cores.  The libraries look when numpy is loaded, which only commands do.
-    """
-    for name in THREADS:
-        os.environ.setdefault(name, "1")
 
 
 def main(argv: Sequence[str] | None = None) -> int:

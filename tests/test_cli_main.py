@@ -10,7 +10,8 @@ import sys
 import pytest
 
 from spinfit import __version__, commands
-from spinfit.cli import THREADS, build_parser, main
+from spinfit.cli import build_parser, main
+from spinfit.threads import THREADS
 from spinfit.errors import InputError
 
 
@@ -162,8 +163,8 @@ def test_help_and_refusals_import_nothing_heavy(argv):
 def test_one_thread_unless_the_user_says_otherwise(given, kept):
     """Set before numpy is loaded, since its libraries look only once."""
     code = (
-        "import os, sys; import spinfit.cli as cli; assert 'numpy' not in sys.modules; "
-        "cli.main(['--version']); print([os.environ[name] for name in cli.THREADS])"
+        "import os, sys; from spinfit import cli, threads; assert 'numpy' not in sys.modules; "
+        "cli.main(['--version']); print([os.environ[name] for name in threads.THREADS])"
     )
     environment = {name: value for name, value in os.environ.items() if name not in THREADS}
     environment |= {} if given is None else dict.fromkeys(THREADS, given)
