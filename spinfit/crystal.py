@@ -23,7 +23,7 @@ from numpy.typing import NDArray
 
 from spinfit.branches import Request
 from spinfit.errors import InputError
-from spinfit.exact import deposit
+from spinfit.exact import Lines, deposit
 from spinfit.hamiltonian import System
 from spinfit.lineshape import FieldGrid
 from spinfit.resonance import find
@@ -51,12 +51,15 @@ class Directions(NamedTuple):
         Unit vectors in the molecular axes of a site.
     share : ndarray, shape (d,)
         Fraction of the sites; those of one angle sum to 1.
+    members : tuple of ndarray of int
+        The sites, in the order of `spinfit.sites.operations`.
     """
 
     angle: NDArray[np.intp]
     field: Array
     microwave: Array
     share: Array
+    members: tuple[NDArray[np.intp], ...]
 
 
 def _unit(vector: Sequence[float], key: str) -> Array:
@@ -100,12 +103,10 @@ def site_directions(sample: Sample, angles: Sequence[float]) -> Directions:
     InputError
         An unknown point group, or a vector without direction.
     """
-    frames = operations(sample.point_group) @ tilt_matrix(sample.tilt)
-    # (angles, sites, 3): T^T R_k^T v, written as v^T R_k T
-    field, microwave = (np.einsum("ai,kij->akj", v, frames) for v in laboratory_directions(sample, angles))
-    kept, sites, share = [], [], []
+    field, microwave = every_site(sample, angles)
+    kept, sites, share, members = [], [], [], []
     for row in range(len(field)):
-        left = np.arange(len(frames))
+        left = np.arange(field.shape[1])
         while len(left):
             first = left[0]
             alike = _same_line(field[row, left], field[row, first]) & _same_line(
@@ -113,9 +114,41 @@ def site_directions(sample: Sample, angles: Sequence[float]) -> Directions:
             )
             kept.append(row)
             sites.append(first)
-            share.append(alike.sum() / len(frames))
+            share.append(alike.sum() / field.shape[1])
+            members.append(left[alike])
             left = left[~alike]
-    return Directions(np.array(kept, dtype=np.intp), field[kept, sites], microwave[kept, sites], np.array(share))
+    row = np.array(kept, dtype=np.intp)
+    return Directions(row, field[row, sites], microwave[row, sites], np.array(share), tuple(members))
+
+
+def every_site(sample: Sample, angles: Sequence[float]) -> tuple[Array, Array]:
+    """Return static and microwave field in the molecular axes of every site, each of shape (angles, sites, 3)."""
+    frames = operations(sample.point_group) @ tilt_matrix(sample.tilt)
+    # T^T R_k^T v, written as v^T R_k T
+    field, microwave = (np.einsum("ai,kij->akj", v, frames) for v in laboratory_directions(sample, angles))
+    return field, microwave
+
+
+def moved_directions(lines: Lines, sample: Sample, angles: Sequence[float]) -> tuple[Array, Array]:
+    """Return where the directions of `lines` are in a sample that is a little different.
+
+    Of equivalent sites, whose lines may part then, the mean is taken: to first order that is what
+    their common line does.
+
+    Returns
+    -------
+    field, microwave : ndarray, shape (d, 3)
+    """
+    moved = every_site(sample, angles)
+    out = []
+    for now, before in zip(moved, (lines.field, lines.wave), strict=True):
+        rows = []
+        for angle, sites, known in zip(lines.angle, lines.members, before, strict=True):
+            vectors = now[angle, sites]
+            mean = (vectors * np.sign(vectors @ known)[:, None]).mean(axis=0)
+            rows.append(mean / np.linalg.norm(mean))
+        out.append(np.array(rows))
+    return out[0], out[1]
 
 
 def _same_line(vectors: Array, one: Array) -> NDArray[np.bool_]:
@@ -124,7 +157,12 @@ def _same_line(vectors: Array, one: Array) -> NDArray[np.bool_]:
 
 
 def crystal(
-    system: System, request: Request, grid: FieldGrid, sample: Sample, angles: Sequence[float]
+    system: System,
+    request: Request,
+    grid: FieldGrid,
+    sample: Sample,
+    angles: Sequence[float],
+    keep: list[Lines] | None = None,
 ) -> tuple[list[Histograms], dict[str, object]]:
     """Return one histogram of resonance fields for each angle, and what was used.
 
@@ -132,6 +170,8 @@ def crystal(
     ----------
     angles : sequence of float
         rad.
+    keep : list, optional
+        Gets the resonances appended.
 
     Returns
     -------
@@ -150,6 +190,8 @@ def crystal(
         temperature=request.temperature,
         populations=request.populations,
     )
+    if keep is not None:
+        keep.append(Lines(request, got, where.field, where.microwave, where.share, where.angle, where.members))
     weight = got.weight * where.share[got.direction]
     angle = where.angle[got.direction]
     histograms = []

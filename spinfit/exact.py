@@ -6,6 +6,8 @@ B0 - h, B0 and B0 + h, where levels are solved again, and h holds the whole patt
 
 from __future__ import annotations
 
+from typing import NamedTuple
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -24,6 +26,33 @@ BLOCK = 4000
 """Resonances that are split at once."""
 ROOM = 1.15
 """Half length, in units of the pattern's reach, over which levels are solved again."""
+
+
+class Lines(NamedTuple):
+    """Exact resonances along given directions, as they were found.
+
+    Attributes
+    ----------
+    request : Request
+    found : Resonances
+    field, wave : ndarray, shape (d, 3)
+        Static and microwave field in the molecular axes; the latter counts where the request's
+        microwave field is perpendicular and `members` are given.
+    share : ndarray, shape (d,)
+        Of each direction.
+    angle : ndarray of int, shape (d,)
+        Which of the sample's angles a direction belongs to.
+    members : tuple of ndarray of int
+        A crystal's sites of each direction; empty where there are no sites.
+    """
+
+    request: Request
+    found: Resonances
+    field: Array
+    wave: Array
+    share: Array
+    angle: NDArray[np.intp]
+    members: tuple[NDArray[np.intp], ...] = ()
 
 
 def deposit(

@@ -109,6 +109,48 @@ def deposit_changes_numpy(
             flat += np.bincount(i + (k - 1), weights=weight * shares[k] + move * slopes[k], minlength=flat.size)
 
 
+def deposit_sheet_changes_numpy(
+    into: Array,
+    place: tuple[float, float],
+    sheet: tuple[Array, Array, Array, Array],
+    changes: tuple[Array, Array],
+    inverse: bool,
+    least: float,
+    ratio: float,
+) -> None:
+    """Add first-order changes of one branch over a mesh, each point smeared as in `deposit_smeared_numpy`, in place.
+
+    Parameters
+    ----------
+    into : ndarray, shape (c, r, count), C-contiguous
+        Histograms of each of c changes.
+    place : (float, float)
+        Places in grid steps are field x the first + the second.
+    sheet : (field, weight, share, smear), ndarrays of shape (n,)
+        Weight and share of the solid angle multiply; a smear of shape (0,) is none at all.
+    changes : (of field, of weight), ndarrays of shape (c, n)
+        Of B^-2 and W B^-3 when `inverse`.
+    """
+    field, weight, share, smear = sheet
+    change_b, change_w = changes
+    if inverse:
+        cube = field * field * field
+        change_b = -0.5 * cube * change_b
+        change_w = cube * change_w + (3 * weight / field) * change_b
+    moves, weights = change_b * (weight * share * place[0]), change_w * share
+    x = field * place[0] + place[1]
+    if not len(smear):
+        deposit_changes_numpy(into, np.intp(0), x, weights, moves)
+        return
+    rung = np.where(smear < least, smear / least, 1 + np.log(np.maximum(smear, least) / least) / math.log(ratio))
+    rung = np.minimum(rung, into.shape[1] - 1 - 1e-9)
+    lower = rung.astype(np.intp)
+    part = rung - lower
+    upper = part * part * (3 - 2 * part)
+    deposit_changes_numpy(into, lower, x, weights * (1 - upper), moves * (1 - upper))
+    deposit_changes_numpy(into, lower + 1, x, weights * upper, moves * upper)
+
+
 def _compiled_deposit(into, rows, x, weights):
     count = into.shape[1]
     for n in range(x.size):
@@ -180,6 +222,63 @@ def _compiled_changes(into, rows, x, weights, moves):
                 into[k, row, i + 2] += w * d + m * dd
 
 
+def _compiled_sheet_changes(
+    into, factor, origin, field, weight, share, smear, by_field, by_weight, inverse, least, ratio
+):
+    changes, rows, count = into.shape
+    scale = 1.0 / math.log(ratio)
+    for n in range(field.size):
+        b = field[n]
+        x = b * factor + origin
+        if x >= 1.0 and x < count - 3:
+            i = int(x)
+            u = x - i
+            v = 1.0 - u
+            a0 = v * v * v / 6.0
+            a1 = (4.0 - 6.0 * u * u + 3.0 * u * u * u) / 6.0
+            a2 = (4.0 - 6.0 * v * v + 3.0 * v * v * v) / 6.0
+            a3 = u * u * u / 6.0
+            d0 = -0.5 * v * v
+            d1 = 1.5 * u * u - 2.0 * u
+            d2 = 2.0 * v - 1.5 * v * v
+            d3 = 0.5 * u * u
+            row = 0
+            upper = 0.0
+            if smear.size:
+                rung = smear[n] / least
+                if rung >= 1.0:
+                    rung = 1.0 + math.log(rung) * scale
+                rung = min(rung, rows - 1 - 1e-9)
+                row = int(rung)
+                part = rung - row
+                upper = part * part * (3.0 - 2.0 * part)
+            cube = b * b * b
+            third = 3.0 * weight[n] / b
+            whole = weight[n] * share[n] * factor
+            for k in range(changes):
+                m = by_field[k, n]
+                w = by_weight[k, n]
+                if inverse:
+                    m = -0.5 * cube * m
+                    w = cube * w + third * m
+                m = m * whole
+                w = w * share[n]
+                t0 = w * a0 + m * d0
+                t1 = w * a1 + m * d1
+                t2 = w * a2 + m * d2
+                t3 = w * a3 + m * d3
+                if upper > 0.0:
+                    into[k, row + 1, i - 1] += upper * t0
+                    into[k, row + 1, i] += upper * t1
+                    into[k, row + 1, i + 1] += upper * t2
+                    into[k, row + 1, i + 2] += upper * t3
+                lower = 1.0 - upper
+                into[k, row, i - 1] += lower * t0
+                into[k, row, i] += lower * t1
+                into[k, row, i + 1] += lower * t2
+                into[k, row, i + 2] += lower * t3
+
+
 def _compile(function):
     try:
         return njit(cache=True)(function)
@@ -191,6 +290,7 @@ if COMPILED:
     _compiled_deposit = _compile(_compiled_deposit)
     _compiled_smeared = _compile(_compiled_smeared)
     _compiled_changes = _compile(_compiled_changes)
+    _compiled_sheet_changes = _compile(_compiled_sheet_changes)
 
 
 def deposit(into: Array, rows: NDArray[np.intp] | np.intp, x: Array, weights: Array) -> None:
@@ -215,3 +315,19 @@ def deposit_changes(into: Array, rows: NDArray[np.intp] | np.intp, x: Array, wei
         _compiled_changes(into, np.atleast_1d(np.asarray(rows, dtype=np.intp)), x, weights, moves)
     else:
         deposit_changes_numpy(into, rows, x, weights, moves)
+
+
+def deposit_sheet_changes(
+    into: Array,
+    place: tuple[float, float],
+    sheet: tuple[Array, Array, Array, Array],
+    changes: tuple[Array, Array],
+    inverse: bool,
+    least: float,
+    ratio: float,
+) -> None:
+    """Do what `deposit_sheet_changes_numpy` does, compiled where that is possible."""
+    if COMPILED:
+        _compiled_sheet_changes(into, *place, *sheet, *changes, inverse, least, ratio)
+    else:
+        deposit_sheet_changes_numpy(into, place, sheet, changes, inverse, least, ratio)

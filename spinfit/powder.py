@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 
 from spinfit import kernels
 from spinfit.branches import Branches, Request
-from spinfit.exact import deposit
+from spinfit.exact import Lines, deposit
 from spinfit.hamiltonian import System
 from spinfit.knots import Knots, continued, restored, settle
 from spinfit.lineshape import FieldGrid
@@ -51,11 +51,35 @@ class Report:
     notes: list[str] = field(default_factory=list)
 
 
+@dataclass(frozen=True, eq=False)
+class Average:
+    """A powder average as it was done, for whoever wants to know how it changes.
+
+    Attributes
+    ----------
+    symmetry : Symmetry
+    request : Request
+        With the weight of an aligned sample, where there is one.
+    knots : Knots or Lines
+        Lines where one direction stands for all.
+    meshes : list of (int, int)
+        Of each branch.
+    histograms : Histograms
+    """
+
+    symmetry: Symmetry
+    request: Request
+    knots: Knots | Lines
+    meshes: list[tuple[int, int]]
+    histograms: Histograms
+
+
 def powder(
     system: System,
     request: Request,
     grid: FieldGrid,
     weigh: Callable[[Array, Symmetry], Array] | None = None,
+    keep: list[Average] | None = None,
 ) -> tuple[Histograms, Report]:
     """Return the histograms of resonance fields averaged over all directions.
 
@@ -68,6 +92,8 @@ def powder(
     weigh : callable, optional
         From directions, shape (m, 3), and the symmetry over whose images it averages, to the
         share of each direction in an aligned sample, mean 1.
+    keep : list, optional
+        Gets the average itself appended.
 
     Returns
     -------
@@ -81,11 +107,13 @@ def powder(
         request = replace(request, weigh=lambda directions: weigh(directions, symmetry))
     report = Report(symmetry.kind)
     if symmetry.kind == "point":
-        return _one_direction(system, request, grid, report)
+        histograms, report, lines = _one_direction(system, request, grid, report)
+        if keep is not None:
+            keep.append(Average(symmetry, request, lines, [], histograms))
+        return histograms, report
     knots = settle(system, symmetry, request)
     histograms = Histograms(grid, request.scale)
-    if len(knots.branches.pair):
-        _sum_branches(knots, request, histograms, report)
+    meshes = _sum_branches(knots, request, histograms, report) if len(knots.branches.pair) else []
     error = 0.0
     if knots.other.any():
         points, error = add_pairs(histograms, knots.rings, knots.data, np.flatnonzero(knots.other), request)
@@ -93,10 +121,14 @@ def powder(
     report.rings, report.estimated_error = knots.rings.rings, math.hypot(knots.error, error)
     report.directions, report.diagonalisations = knots.directions, knots.diagonalisations
     report.pairs, report.looping = len(knots.branches.pair), int(knots.other.sum())
+    if keep is not None:
+        keep.append(Average(symmetry, request, knots, meshes, histograms))
     return histograms, report
 
 
-def _one_direction(system: System, request: Request, grid: FieldGrid, report: Report) -> tuple[Histograms, Report]:
+def _one_direction(
+    system: System, request: Request, grid: FieldGrid, report: Report
+) -> tuple[Histograms, Report, Lines]:
     direction = np.array([[0.0, 0.0, 1.0]])
     got = find(
         system,
@@ -110,7 +142,7 @@ def _one_direction(system: System, request: Request, grid: FieldGrid, report: Re
     report.directions, report.diagonalisations, report.pairs = 1, 1, len(got.field)
     histograms = Histograms(grid, request.scale)
     deposit(histograms, system, request, got, direction, got.weight)
-    return histograms, report
+    return histograms, report, Lines(request, got, direction, direction, np.ones(1), np.zeros(1, dtype=np.intp))
 
 
 def _ladder_size(wanted: float) -> int:
@@ -189,8 +221,10 @@ def _probe_azimuths(rings: Rings) -> int:
     return {"axial": 1, "octant": 2, "quarter": 4, "half": 8}[rings.kind] * min(rings.harmonics, 24)
 
 
-def _sum_branches(knots: Knots, request: Request, histograms: Histograms, report: Report) -> None:
-    """Add every branch, continued to a mesh fine enough for it."""
+def _sum_branches(
+    knots: Knots, request: Request, histograms: Histograms, report: Report
+) -> list[tuple[int, int]]:
+    """Add every branch, continued to a mesh fine enough for it; return the meshes."""
     rings, branches = knots.rings, knots.branches
     to_mesh = rings.to_mesh_locally if knots.local else rings.to_mesh
     x, y, inverse = continued(branches.field, branches.weight)
@@ -214,3 +248,4 @@ def _sum_branches(knots: Knots, request: Request, histograms: Histograms, report
             else:
                 weighted = (weights * mesh.weights()).ravel()
                 histograms.smeared(fields.ravel(), weighted, request.grain.smear_for(apart).ravel())
+    return sizes

@@ -97,7 +97,7 @@ class Histograms:
         Each is shared among the four nearest of a ladder of variances by cubic interpolation,
         which reproduces a Gaussian of any width in between to about 1e-4.
         """
-        self._reach_variance(float(variance.max(initial=0.0)))
+        self.reach_variance(float(variance.max(initial=0.0)))
         ladder = self.variances
         variance = np.clip(variance, 0.0, ladder[-1])
         first = np.clip(np.searchsorted(ladder, variance, side="right") - 2, 0, len(ladder) - 4)
@@ -115,7 +115,7 @@ class Histograms:
         if self.grid.start < 0:  # the spectrum is even in B
             self.grid.deposit_rows(self.widened, columns[0], -columns[1], columns[2])
 
-    def _reach_variance(self, largest: float) -> None:
+    def reach_variance(self, largest: float) -> None:
         """Lengthen the ladder of variances until it holds `largest`."""
         ladder = list(self.variances)
         if len(ladder) == 1:

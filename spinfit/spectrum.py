@@ -14,10 +14,11 @@ from spinfit.branches import FWHM_PER_SIGMA, Request
 from spinfit.broadening import Broadening, broadening
 from spinfit.crystal import crystal, remarks
 from spinfit.errors import InputError
-from spinfit.hamiltonian import systems
+from spinfit.exact import Lines
+from spinfit.hamiltonian import System, systems
 from spinfit.levels import shares_unevenly
 from spinfit.lineshape import FieldGrid, Shape
-from spinfit.powder import powder
+from spinfit.powder import Average, powder
 from spinfit.sheets import SMEAR_MOST, SMEAR_REACH, Grain
 from spinfit.solution import solution
 from spinfit.species import Species
@@ -51,6 +52,43 @@ class Spectrum:
     parts: Array
     report: Mapping[str, object] = field(default_factory=dict)
     warnings: tuple[tuple[str, str], ...] = ()
+    kept: tuple[Kept, ...] = ()
+
+
+@dataclass(frozen=True, eq=False)
+class Kept:
+    """How the spectrum of one species was made: what its derivatives start from (`spinfit.derivatives`).
+
+    Attributes
+    ----------
+    species : Species
+        With the treatment of every nucleus decided.
+    sweep, sample : Sweep, Sample
+    angles : tuple of float
+        rad.
+    request : Request
+    shape : Shape
+    grid : FieldGrid
+    fields : ndarray, shape (n,)
+        mT.
+    systems : tuple of System
+    averages : list
+        Of each system: `spinfit.powder.Average`, or a crystal's `spinfit.exact.Lines`; empty for other samples.
+    totals : list of ndarray
+        Transform of the resonances, weighted over the systems, one for each angle.
+    """
+
+    species: Species
+    sweep: Sweep
+    sample: Sample
+    angles: tuple[float, ...]
+    request: Request
+    shape: Shape
+    grid: FieldGrid
+    fields: Array
+    systems: tuple[System, ...]
+    averages: list[Average | Lines]
+    totals: list[NDArray[np.complex128]]
 
 
 def simulate(
@@ -62,6 +100,7 @@ def simulate(
     fields: Array | None = None,
     angle: float | None = None,
     parts: bool = False,
+    keep: bool = False,
 ) -> Spectrum:
     """Compute a spectrum to a promised accuracy.
 
@@ -81,6 +120,8 @@ def simulate(
     parts : bool
         Whether the report holds each species' transitions too (`spinfit.transitions`, as
         "transitions"), and warnings say how much intensity lies outside the sweep.
+    keep : bool
+        Whether the spectrum's derivatives will be asked for: `Spectrum.kept` then holds what they need.
 
     Returns
     -------
@@ -98,8 +139,9 @@ def simulate(
     angles = sample.angles if sample.form == "crystal" else (sample.angle,)
     angles = angles if angle is None else (angle,)
     spectra, report, warnings = [], {}, {}
+    kept: list[Kept] | None = [] if keep else None
     for one in several:
-        part, report[one.name], said = _part(one, sweep, sample, tolerance, where, window, angles)
+        part, report[one.name], said = _part(one, sweep, sample, tolerance, where, window, angles, kept)
         spectra.append(part if len(part) > 1 else part[0])
         if parts:
             at = replace(sample, angles=angles, angle=angles[0])
@@ -108,7 +150,8 @@ def simulate(
             said = (*said, *outside_remarks(one.name, survey))
         warnings |= dict.fromkeys(said)
     amounts = np.array([one.amount for one in several])
-    return Spectrum(where, np.tensordot(amounts, spectra, 1), np.array(spectra), report, tuple(warnings))
+    signal = np.tensordot(amounts, spectra, 1)
+    return Spectrum(where, signal, np.array(spectra), report, tuple(warnings), tuple(kept or ()))
 
 
 def _part(
@@ -119,6 +162,7 @@ def _part(
     fields: Array,
     window: tuple[float, float],
     angles: tuple[float, ...],
+    kept: list[Kept] | None,
 ) -> tuple[Array, dict[str, object], tuple[tuple[str, str], ...]]:
     """Return spectra, shape (angles, n), what was used, and warnings."""
     if sample.form == "solution":
@@ -156,15 +200,22 @@ def _part(
     treatment = decided(one, sweep.frequency, window, shape.scale, tolerance, sweep.microwave)
     treatment = replace(treatment, warnings=(*treatment.warnings, *polarisation_remarks(one, sample)))
     one = treatment.species
-    widths = broadening(one) or (None,) * len(systems(one, perturb=True))
+    every = systems(one, perturb=True)
+    widths = broadening(one) or (None,) * len(every)
+    averages: list[Average | Lines] = []
     if sample.form != "powder":
-        return _oriented(treatment, request, widths, grid, shape, sample, angles, fields)
+        totals, used, said = _oriented(treatment, request, widths, grid, shape, sample, angles, averages)
+        if kept is not None:
+            kept.append(Kept(one, sweep, sample, angles, request, shape, grid, fields, every, averages, totals))
+        return np.array([grid.sample(grid.render(t, shape), fields) for t in totals]), used, said
     total = 0.0
     reports = []
-    for system, own in zip(systems(one, perturb=True), widths, strict=True):
-        histograms, report = powder(system, replace(request, broadening=own), grid)
+    for system, own in zip(every, widths, strict=True):
+        histograms, report = powder(system, replace(request, broadening=own), grid, keep=averages)
         reports.append({"label": system.label, **vars(report)})
         total = total + system.weight * histograms.transform()
+    if kept is not None:
+        kept.append(Kept(one, sweep, sample, angles, request, shape, grid, fields, every, averages, [total]))
     said = (*treatment.warnings, *_misgivings(one, reports, tolerance))
     return grid.sample(grid.render(total, shape), fields)[None], _used(reports, treatment), said
 
@@ -177,9 +228,9 @@ def _oriented(
     shape: Shape,
     sample: Sample,
     angles: tuple[float, ...],
-    fields: Array,
-) -> tuple[Array, dict[str, object], tuple[tuple[str, str], ...]]:
-    """Return spectra of a crystal or an aligned sample, shape (angles, n), what was used, and warnings."""
+    averages: list[Average | Lines],
+) -> tuple[list[NDArray[np.complex128]], dict[str, object], tuple[tuple[str, str], ...]]:
+    """Return transforms of a crystal or an aligned sample, one for each angle, what was used, and warnings."""
     totals = [0.0] * len(angles)
     reports, warnings = [], dict.fromkeys(treatment.warnings)
     if sample.form == "crystal":
@@ -187,15 +238,14 @@ def _oriented(
     for system, own in zip(systems(treatment.species, perturb=True), widths, strict=True):
         asked = replace(request, broadening=own)
         if sample.form == "crystal":
-            histograms, report = crystal(system, asked, grid, sample, angles)
+            histograms, report = crystal(system, asked, grid, sample, angles, averages)
         else:
             histogram, report = aligned(system, asked, grid, shape, sample, angles[0])
             histograms = [histogram]
             warnings |= dict.fromkeys(("directions", text) for text in report.get("notes", ()))
         totals = [t + system.weight * h.transform() for t, h in zip(totals, histograms, strict=True)]
         reports.append(report)
-    spectra = [grid.sample(grid.render(total, shape), fields) for total in totals]
-    return np.array(spectra), _used(reports, treatment), tuple(warnings)
+    return totals, _used(reports, treatment), tuple(warnings)
 
 
 def _misgivings(one: Species, reports: list[dict[str, object]], tolerance: float) -> tuple[tuple[str, str], ...]:

@@ -96,7 +96,7 @@ def _direction(args: argparse.Namespace, model: Any) -> tuple[Any, Any, tuple[fl
     if args.direction is not None:
         theta, phi = parse(args.direction, "angle", "--direction", count=2)[0]
     elif model.sample.form == "crystal":
-        _, field, wave, _ = site_directions(model.sample, model.sample.angles)
+        _, field, wave, *_ = site_directions(model.sample, model.sample.angles)
         theta, phi = math.acos(max(-1.0, min(1.0, field[0, 2]))), math.atan2(field[0, 1], field[0, 0]) + 0.0
         microwave = microwave if microwave == "parallel" else wave[:1]
     else:

@@ -41,7 +41,7 @@ def _directions(args: argparse.Namespace, model: Any) -> tuple[Any, Any]:
         angles = [parse(text, "angle", "--direction", count=2)[0] for text in args.direction]
         return np.array(angles), None
     if model.sample.form == "crystal":
-        _, field, microwave, _ = site_directions(model.sample, model.sample.angles)
+        _, field, microwave, *_ = site_directions(model.sample, model.sample.angles)
         theta = np.arccos(np.clip(field[:, 2], -1, 1))
         return np.stack([theta, np.arctan2(field[:, 1], field[:, 0]) + 0.0], axis=1), microwave
     if model.sample.form == "solution":
