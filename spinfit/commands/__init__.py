@@ -15,8 +15,8 @@ from __future__ import annotations
 
 from types import ModuleType
 
-from spinfit.commands import calibrate, convert, diagram, fit, inspect, ion, lines, quench, simulate
+from spinfit.commands import batch, calibrate, convert, diagram, fit, inspect, ion, lines, quench, simulate
 
 TABLE: dict[str, ModuleType] = {
-    module.NAME: module for module in (fit, simulate, inspect, calibrate, convert, ion, quench, lines, diagram)
+    module.NAME: module for module in (fit, batch, simulate, inspect, calibrate, convert, ion, quench, lines, diagram)
 }

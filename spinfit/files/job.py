@@ -87,7 +87,9 @@ def model_from(data: Mapping[str, Any], *, name: str = "model", path: str = "", 
     return Model(species, sweep, sample, tolerance, units, name, path, text)
 
 
-def read_job(path: str | Path, *, tables: Mapping[str, Any] | None = None) -> Job:
+def read_job(
+    path: str | Path, *, tables: Mapping[str, Any] | None = None, text: str = "", store: Store | None = None
+) -> Job:
     """Read a job file with all its data files.
 
     Parameters
@@ -96,6 +98,10 @@ def read_job(path: str | Path, *, tables: Mapping[str, Any] | None = None) -> Jo
         The job file; its folder is where data files are looked for.
     tables : mapping, optional
         Parsed TOML to use in place of the file's content (a template with its traces put in).
+    text : str, optional
+        What `tables` were parsed from.
+    store : Store, optional
+        Where data files come from, when it is not the job file's folder.
 
     Raises
     ------
@@ -104,10 +110,8 @@ def read_job(path: str | Path, *, tables: Mapping[str, Any] | None = None) -> Jo
     """
     if tables is None:
         tables, text = load_toml(path)
-    else:
-        text = ""
     try:
-        return _job_from(tables, Path(path), text, Folder(Path(path).parent))
+        return _job_from(tables, Path(path), text, store or Folder(Path(path).parent))
     except InputError as error:
         raise error.at(file=path) from None
 

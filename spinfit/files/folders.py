@@ -1,0 +1,82 @@
+"""A folder of files that appears whole: written beside its place, then moved there."""
+
+from __future__ import annotations
+
+import os
+import shutil
+import tempfile
+from collections.abc import Collection, Mapping
+from contextlib import suppress
+from pathlib import Path
+
+BESIDE = ".spinfit-"
+"""How the names of unfinished folders begin."""
+
+
+def sync_folder(folder: Path) -> None:
+    """Wait until the names in a folder are on the disk, where the system can do that."""
+    with suppress(OSError):  # some systems do not open folders, some file systems do not sync them
+        number = os.open(folder, os.O_RDONLY)
+        try:
+            os.fsync(number)
+        finally:
+            os.close(number)
+
+
+def _write(path: Path, content: bytes) -> None:
+    with open(path, "wb") as stream:
+        stream.write(content)
+        stream.flush()
+        os.fsync(stream.fileno())
+
+
+def write_folder(folder: Path, contents: Mapping[str, bytes], *, stale: Collection[str] = ()) -> None:
+    """Write files into a folder.
+
+    A folder that is not there yet appears whole under its name.  Into one that is there each file is moved whole,
+    and what else stands in it stays, but for `stale`.
+
+    Parameters
+    ----------
+    contents : mapping of file name -> bytes
+    stale : collection of str
+        Files that are removed unless they are among `contents`.
+
+    Raises
+    ------
+    OSError
+        When there is no room or no permission; no file is then half-written.
+    """
+    beside = Path(tempfile.mkdtemp(prefix=BESIDE, dir=folder.parent))
+    try:
+        for name, content in contents.items():
+            _write(beside / name, content)
+        mask = os.umask(0)
+        os.umask(mask)
+        os.chmod(beside, 0o777 & ~mask)
+        sync_folder(beside)
+        if not folder.exists():
+            os.rename(beside, folder)
+        else:
+            for name in contents:
+                os.replace(beside / name, folder / name)
+            remove_files(folder, set(stale) - set(contents))
+            sync_folder(folder)
+    finally:
+        shutil.rmtree(beside, ignore_errors=True)
+    sync_folder(folder.parent)
+
+
+def remove_files(folder: Path, names: Collection[str]) -> None:
+    """Remove files from a folder where they are, and the folder when nothing is left in it."""
+    for name in names:
+        with suppress(FileNotFoundError, NotADirectoryError):
+            (folder / name).unlink()
+    with suppress(OSError):
+        folder.rmdir()
+
+
+def clear_unfinished(folder: Path) -> None:
+    """Remove what killed processes left behind in a folder."""
+    for path in folder.glob(f"{BESIDE}*"):
+        shutil.rmtree(path, ignore_errors=True)
