@@ -1,6 +1,6 @@
 """Quantities in and out of text, and the physical constants everything else uses.
 
-Internal units: E/h in MHz, fields in mT, angles in rad, temperatures in K, times in s, voltages in V,
+Internal units: E/h in MHz, fields in mT, angles in rad, temperatures in K, times in s, voltages in V, powers in mW,
 slopes of a field calibration in mT/V.  All constants are CODATA's as `scipy.constants` has them.
 """
 
@@ -36,6 +36,7 @@ UNITS: dict[str, dict[str, float]] = {
     "temperature": {"K": 1.0},
     "time": {"s": 1.0, "ms": 1e-3},
     "voltage": {"V": 1.0, "mV": 1e-3},
+    "power": {"W": 1e3, "mW": 1.0, "uW": 1e-3},
     "field per voltage": {"mT/V": 1.0, "T/V": 1e3, "G/V": 0.1, "mT/mV": 1e3, "T/mV": 1e6, "G/mV": 100.0},
 }
 """Units of each kind, with the factor that carries a value into internal units."""
@@ -51,6 +52,7 @@ _EXAMPLES = {
     "temperature": "77 K",
     "time": "0.5 s",
     "voltage": "1.2 V",
+    "power": "2 mW",
     "field per voltage": "216 mT/V",
 }
 

@@ -98,7 +98,16 @@ def provenance_of(problem: Problem) -> dict[str, object]:
         "scipy": scipy.__version__,
         "lmfit": lmfit.__version__,
     }
-    inputs = {trace.name: {"file": trace.file, "sha256": trace.sha256} for trace in job.traces}
+    inputs = {
+        trace.name: {
+            "file": trace.file,
+            "sha256": trace.sha256,
+            "temperature_K": trace.temperature,
+            "modulation_mT": trace.modulation,
+            "detect": trace.detect,
+        }
+        for trace in job.traces
+    }
     return {"input": inputs, "versions": versions, "job": job.text}
 
 
