@@ -1,12 +1,10 @@
-"""Files of an outcome: JSON without NaN, csv that adds up, HDF5 that a generic viewer opens, a page that is safe."""
+"""Files of an outcome: JSON without NaN, csv that adds up, HDF5 that a generic viewer opens."""
 
 from __future__ import annotations
 
-import base64
 import csv
 import io
 import json
-from html.parser import HTMLParser
 
 import h5py
 import numpy as np
@@ -15,9 +13,8 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from outcomes import curves, outcome
 
-from spinfit.fitting.outcome import Note, Quality, Value
+from spinfit.fitting.outcome import Quality, Value
 from spinfit.report.archive import archive_bytes
-from spinfit.report.html import report_text
 from spinfit.report.outcome_json import clean, curves_text, outcome_record, outcome_text
 
 
@@ -115,66 +112,3 @@ def test_archive_holds_everything():
         assert fit["job"].asstr()[()] == found.provenance["job"]
         assert fit["outcome_json"].asstr()[()] == outcome_text(found)
         assert root.attrs["spinfit_format"] == 1
-
-
-class Page(HTMLParser):
-    """Tags, what they load, and the text of a page."""
-
-    def __init__(self, text):
-        super().__init__()
-        self.open, self.seen, self.loads, self.text = [], [], [], []
-        self.feed(text)
-        self.close()
-
-    def handle_starttag(self, tag, attrs):
-        self.seen.append(tag)
-        self.loads += [value for key, value in attrs if key in ("src", "href", "action", "data")]
-        if tag not in ("meta", "img", "br"):
-            self.open.append(tag)
-
-    def handle_endtag(self, tag):
-        assert self.open.pop() == tag
-
-    def handle_data(self, data):
-        self.text.append(data)
-
-
-def test_report_is_whole_and_loads_nothing():
-    page = Page(report_text(outcome(), b"\x89PNG"))
-    assert page.open == []
-    assert page.loads == ["data:image/png;base64," + base64.b64encode(b"\x89PNG").decode()]
-    text = " ".join(" ".join(page.text).split())
-    for word in (
-        "kiln-07",
-        "2.0412(3)",
-        "-540(2)",
-        "held fixed",
-        "lower limit of 0.8 mT",
-        'file = "kiln-07.csv"',
-        "-0.950",
-    ):
-        assert word in text
-    assert "script" not in page.seen
-
-
-def test_texts_from_users_are_escaped():
-    evil = "<script>alert(1)</script>\"'&"
-    page = Page(
-        report_text(
-            outcome(
-                curves(evil),
-                name=evil,
-                parameters={evil: Value(1.0, 0.1, unit=evil, varied=True), evil + "2": Value(1.0, unit=evil)},
-                fractions={evil: Value(0.5), "b": Value(0.5)},
-                correlation_names=(evil, "b"),
-                warnings=(Note(evil, evil),),
-                provenance={"job": evil, evil: evil},
-                message=evil,
-                quality=Quality(False, True, 1.0, 1.0, 1, 1, 1.0, 1.0),
-            ),
-            b"",
-        )
-    )
-    assert page.open == []
-    assert "script" not in page.seen
-    assert evil in "".join(page.text)

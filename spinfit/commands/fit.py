@@ -31,7 +31,8 @@ def options(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--out",
         metavar="DIR",
-        help="write outcome.json, curves.csv, fit.png, report.html and outcome.h5 there; without it nothing is written",
+        help="write outcome.json, curves.csv, fit.png, fit.svg, report.html and outcome.h5 there; "
+        "without it nothing is written",
     )
     parser.add_argument(
         "--profile",
@@ -66,7 +67,7 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
     folder = None if args.out is None else ready_folder(args.out)
     try:
         outcome, profiles, resampled = _fitted(job, args.profile, resamples, screen)
-        written = [] if folder is None else write_outcome(folder, outcome, profiles=profiles, resampled=resampled)
+        written = [] if folder is None else write_outcome(folder, job, outcome, profiles=profiles, resampled=resampled)
     except BaseException:
         if is_new and folder is not None:  # a refused fit leaves no empty folder behind
             with suppress(OSError):
@@ -151,7 +152,7 @@ def _compare(args: argparse.Namespace, screen: Screen) -> int:
         for job, folder in zip(jobs, folders, strict=True):
             outcome, _, _ = _fitted(job, [], 0, screen)
             if folder is not None:
-                write_outcome(folder, outcome)
+                write_outcome(folder, job, outcome)
             outcomes.append(outcome)
         found = compare(outcomes)
     except BaseException:
@@ -223,14 +224,14 @@ class _Tried(Exception):
     """Leaves a file that was only opened to see whether it can be."""
 
 
-def write_outcome(folder: Path, outcome: Any, *, profiles: Any = (), resampled: Any = None) -> list[str]:
+def write_outcome(folder: Path, job: Any, outcome: Any, *, profiles: Any = (), resampled: Any = None) -> list[str]:
     """Write every file of an outcome, all or none: they are moved to their places when all are complete."""
     from contextlib import ExitStack
 
     from spinfit.files.atomic import whole_file
     from spinfit.report.outcome_files import outcome_files
 
-    contents = outcome_files(outcome, profiles=profiles, resampled=resampled)
+    contents = outcome_files(outcome, job=job, profiles=profiles, resampled=resampled)
     with ExitStack() as stack:
         places = {name: stack.enter_context(whole_file(folder / name)) for name in contents}
         for name, content in contents.items():

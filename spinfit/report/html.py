@@ -2,147 +2,207 @@
 
 from __future__ import annotations
 
-import base64
 import json
 from collections.abc import Mapping, Sequence
 from html import escape
 
+import numpy as np
+
+from spinfit.fitting.data import Job
 from spinfit.fitting.outcome import Outcome, Value
 from spinfit.fitting.resample import Bootstrap, Profile
+from spinfit.report.beside import SETTING_HEADINGS, ion_rows, setting_rows
 from spinfit.report.effective import effective_rows
+from spinfit.report.ion_tables import AXES, g_values, percent, quench_remarks
 from spinfit.report.numbers import short, small, with_uncertainty
 from spinfit.report.outcome_json import clean
+from spinfit.report.page import Raw, document, listed, paragraph, section, table
+from spinfit.report.svg_figures import (
+    bootstrap_drawing,
+    fit_drawing,
+    g_drawing,
+    heat_map,
+    positions_drawing,
+    profile_drawing,
+)
 from spinfit.report.tables import STRONG, remark, strong_correlations
 from spinfit.report.tried import (
     BOOTSTRAP_HEADINGS,
     PROFILE_HEADINGS,
     SOURCES,
     bootstrap_rows,
-    budget_rows,
+    budget_cells,
     profile_rows,
 )
 
-# A policy that lets the page load nothing at all: what it needs is in it.
-_POLICY = "default-src 'none'; img-src data:; style-src 'unsafe-inline'"
+MOST_TRACES = 12
+"""Traces that are drawn; a page with more would be slow and nobody would look at them."""
+MOST_CORRELATED = 24
+"""Parameters in the map of correlations."""
+MOST_HISTOGRAMS = 24
 
-_CSS = """
-:root { --ink: #20242b; --quiet: #666d78; --line: #d9dce2; --mark: #b23a16; --paper: #fff; --tint: #f6f7f9 }
-* { box-sizing: border-box }
-body { margin: 0; background: var(--tint); color: var(--ink); font: 15px/1.5 "DejaVu Sans", "Segoe UI", sans-serif }
-main { max-width: 60rem; margin: 0 auto; padding: 2rem 1.5rem 4rem; background: var(--paper) }
-h1 { font-size: 1.5rem; margin: 0 0 .25rem } h2 { font-size: 1.05rem; margin: 2.2rem 0 .6rem }
-p { margin: .4rem 0 } .quiet { color: var(--quiet) }
-.state { font-weight: 600 } .bad { color: var(--mark) }
-figure { margin: 1.2rem 0 0 } img { width: 100%; height: auto; display: block }
-img.column { max-width: 36rem }
-.wide { overflow-x: auto }
-table { border-collapse: collapse; font-variant-numeric: tabular-nums }
-th, td { padding: .25rem .9rem .25rem 0; text-align: right; border-bottom: 1px solid var(--line); white-space: nowrap }
-th { font-weight: 600; color: var(--quiet); font-size: .85rem }
-th:first-child, td:first-child, .l { text-align: left }
-td.value { font-weight: 600 }
-ul.warnings { padding-left: 1.2rem } ul.warnings li { margin: .3rem 0 }
-pre { background: var(--tint); border: 1px solid var(--line); padding: .8rem; overflow-x: auto; font-size: .82rem }
-details summary { cursor: pointer; color: var(--quiet) }
-@media print { body, main { background: none } main { max-width: none; padding: 0 } }
-"""
+# Warnings that tell what the data leave open, by their codes; all others are about the measurement or the fit.
+LEFT_OPEN = (
+    "at_limit", "undetermined", "single_signs", "sign_of_D", "sign_of_A", "other_setting", "one_angle", "few_lines",
+    "crystal_field_rank", "lines_beyond_sweep",
+)  # fmt: skip
 
 
-def _table(
-    headings: Sequence[str], rows: Sequence[Sequence[str]], *, left: Sequence[int] = (0,), bold: int = -1
-) -> str:
-    """Return a table; every cell is escaped."""
-
-    def cell(tag: str, k: int, text: str) -> str:
-        kind = " ".join(["l"] * (k in left) + ["value"] * (k == bold and tag == "td"))
-        named = f' class="{kind}"' if kind else ""
-        return f"<{tag}{named}>{escape(str(text))}</{tag}>"
-
-    lines = [
-        "<tr>" + "".join(cell(tag, k, text) for k, text in enumerate(row)) + "</tr>"
-        for tag, row in [("th", headings), *(("td", row) for row in rows)]
-    ]
-    return f'<div class="wide"><table>{lines[0]}\n' + "\n".join(lines[1:]) + "</table></div>"
-
-
-def _section(title: str, body: str) -> str:
-    return f"<section><h2>{escape(title)}</h2>\n{body}\n</section>" if body else ""
-
-
-def _parameter_rows(values: Mapping[str, Value]) -> list[list[str]]:
-    return [
-        [
-            name,
-            with_uncertainty(v.value, v.uncertainty),
-            v.unit,
-            small(v.uncertainty_noise),
-            small(v.uncertainty_field),
-            short(v.start),
-            remark(v),
-        ]
-        for name, v in values.items()
-    ]
+def _share_bar(parts: Mapping[str, float]) -> Raw:
+    """Return how much of the variance each source has, as a bar; the numbers stand beside it."""
+    squares = [max(parts.get(source, 0.0), 0.0) ** 2 for source in SOURCES]
+    whole = sum(squares)
+    if not (np.isfinite(whole) and whole > 0):
+        return Raw("")
+    at, words = 0.0, []
+    for n, square in enumerate(squares):
+        width = 130 * square / whole
+        words.append(f'<rect class="share-{n}" x="{at:.1f}" y="0" width="{width:.1f}" height="10"/>')
+        at += width
+    return Raw(f'<svg class="shares" viewBox="0 0 130 10" aria-hidden="true">{"".join(words)}</svg>')
 
 
 def _parameters(outcome: Outcome) -> str:
-    headings = ["parameter", "value", "unit", "noise part", "field part", "start", ""]
-    varied = {name: v for name, v in outcome.parameters.items() if v.varied or v.tied or v.derived}
-    fixed = {name: v for name, v in outcome.parameters.items() if name not in varied}
-    text = _table(headings, _parameter_rows(varied), left=(0, 2, 6), bold=1) if varied else "<p>Nothing was varied.</p>"
-    text += (
-        '<p class="quiet">One standard uncertainty in parentheses, in units of the last digit: the noise part from the '
-        "trace, the field part from the stated uncertainties of the field axis and of the frequency, in quadrature.</p>"
+    """Return the table of what was found, each uncertainty with what it is made of."""
+    headings = ["parameter", "value", "unit", *SOURCES, "shares of variance", "start", ""]
+    found = {name: v for name, v in outcome.parameters.items() if v.varied or v.tied or v.derived}
+    rows = []
+    for name, v in found.items():
+        parts = outcome.budget.get(name, {})
+        rows.append(
+            [
+                name,
+                with_uncertainty(v.value, v.uncertainty),
+                v.unit,
+                *budget_cells(parts, v.uncertainty),
+                _share_bar(parts),
+                short(v.start),
+                remark(v),
+            ]
+        )
+    if not rows:
+        return paragraph("Nothing was varied.")
+    key = "".join(
+        f'<span class="key"><svg class="swatch" viewBox="0 0 30 10" aria-hidden="true">'
+        f'<rect class="share-{n}" width="30" height="10"/></svg>{escape(source)}</span>'
+        for n, source in enumerate(SOURCES)
     )
-    if fixed:
-        rows = [[name, short(v.value), v.unit] for name, v in fixed.items()]
-        inner = _table(["parameter", "value", "unit"], rows, left=(0, 2))
-        text += f"<details><summary>{len(fixed)} held fixed</summary>{inner}</details>"
-    return text
+    return (
+        table(headings, rows, left=(0, 2, 7, 9), bold=1)
+        + f'<p class="legend">{key}</p>'
+        + paragraph(
+            "In parentheses one standard uncertainty, in units of the last digit. Its sources add in quadrature: the "
+            "noise of the trace; what the correlation of neighbouring points and a systematic residual add to it; and "
+            "the stated uncertainties of field axis and frequency, which move all values together: differences "
+            "between components of g are better known than the components.",
+            "quiet",
+        )
+    )
+
+
+def _held(outcome: Outcome) -> str:
+    fixed = {name: v for name, v in outcome.parameters.items() if not (v.varied or v.tied or v.derived)}
+    if not fixed:
+        return ""
+    inner = table(["parameter", "value", "unit"], [[n, short(v.value), v.unit] for n, v in fixed.items()], left=(0, 2))
+    return f"<details><summary>{len(fixed)} held fixed</summary>{inner}</details>"
 
 
 def _effective(outcome: Outcome) -> str:
     rows = [[r["name"], with_uncertainty(r["value"], r["uncertainty"]), r["unit"]] for r in effective_rows(outcome)]
-    return _table(["quantity", "value", "unit"], rows, left=(0, 2)) if rows else ""
+    return table(["quantity", "value", "unit"], rows, left=(0, 2)) if rows else ""
 
 
-def _fractions(outcome: Outcome) -> str:
-    if len(outcome.fractions) < 2:
+def _fractions(fractions: Mapping[str, Value]) -> str:
+    if len(fractions) < 2:
         return ""
-    rows = [[name, with_uncertainty(v.value, v.uncertainty)] for name, v in outcome.fractions.items()]
-    return _table(["species", "fraction of spins"], rows)
-
-
-def _budget(outcome: Outcome) -> str:
-    rows = budget_rows(outcome)
-    if not rows:
-        return ""
-    note = (
-        '<p class="quiet">Standard uncertainties that add in quadrature. Field axis and frequency move all values '
-        "together: differences between components of g are better known than the components.</p>"
+    return table(
+        ["species", "fraction of spins"], [[n, with_uncertainty(v.value, v.uncertainty)] for n, v in fractions.items()]
     )
-    return _table(["uncertainty of", "unit", "in all", *SOURCES], rows, left=(0, 1)) + note
 
 
-def _tried(outcome: Outcome, profiles: Sequence[Profile], picture: bytes, resampled: Bootstrap | None) -> str:
-    """Return profiles of chi-squared and the bootstrap; empty when neither was asked for."""
-    text = ""
-    if profiles:
-        encoded = base64.b64encode(picture).decode()
-        alt = "rise of chi-squared against " + ", ".join(one.name for one in profiles)
-        text += _table(PROFILE_HEADINGS, profile_rows(profiles), left=(0, 1))
-        text += f'<figure><img alt="{escape(alt)}" src="data:image/png;base64,{encoded}"></figure>'
-    if resampled is not None and len(resampled.values) > 1:
-        text += _table(BOOTSTRAP_HEADINGS, bootstrap_rows(resampled, outcome), left=(0, 1))
-        text += f'<p class="quiet">{len(resampled.values)} refits; {resampled.failed} more did not converge.</p>'
-    return text
+def _ions(job: Job | None, outcome: Outcome) -> str:
+    """Return free-ion, spin-only, crystal-field and measured g of each species that names its ion."""
+    found = () if job is None else ion_rows(job, outcome)
+    if not found:
+        return ""
+    headings = ["species", "ion", "level", "free ion g_J", "spin only", "axis", "crystal field", "measured"]
+    headings += ["orbital moment left / %: field", "measured"]
+    rows: list[list[str]] = []
+    remarks: list[str] = []
+    for name, row in found:
+        head = [name, row.level.ion, row.level.term, short(row.level.g_J, 5), f"{row.spin_only:.4f}"]
+        field = g_values(row.g_crystal)
+        given = g_values(*((None,) if row.measured is None else (row.measured.values, row.measured.uncertainties)))
+        left = [percent(value) for value in row.fraction or (None,) * 3]
+        pairs = zip(row.fraction_measured or (None,) * 3, row.fraction_uncertainty or (None,) * 3, strict=True)
+        known = [percent(*pair) for pair in pairs]
+        groups: dict[tuple[str, ...], list[str]] = {}
+        for k, axis in enumerate(AXES):
+            groups.setdefault((field[k], given[k], left[k], known[k]), []).append(axis)
+        for n, (cells, axes) in enumerate(groups.items()):
+            rows.append([*(head if n == 0 else [""] * 5), ", ".join(axes) if len(groups) > 1 else "", *cells])
+        remarks += quench_remarks(row)
+        if row.measured is None and not row.kind == "":
+            remarks.append(f"{name}: its g was not fitted freely, so that there is no measured one to compare")
+    note = paragraph(
+        "The free ion's g is Landé's; the crystal field is the typical one that is named above, or the job's own. The "
+        "part of the orbital moment that is left is (g - g_e) relative to the free ion's <L>/<S>; 0 is quenched.",
+        "quiet",
+    )
+    picture = f"<figure>{g_drawing(found)}</figure>"
+    return picture + table(headings, rows, left=(0, 1, 2, 5)) + listed(list(dict.fromkeys(remarks))) + note
+
+
+def _left_open(job: Job | None, outcome: Outcome) -> str:
+    """Return what the data cannot tell: signs, limits, combinations, equal settings, correlations."""
+    said = [note.text for note in outcome.warnings if note.code in LEFT_OPEN]
+    text = listed(said)
+    for name, rows in () if job is None else setting_rows(job, outcome):
+        text += f"<h3>{escape(name)}: six namings of the axes, one and the same tensor</h3>"
+        text += table(SETTING_HEADINGS, rows, left=(0, 3, 5, 6))
+    return text + _correlations(outcome)
 
 
 def _correlations(outcome: Outcome) -> str:
-    rows = [[one, two, f"{value:+.3f}"] for one, two, value in strong_correlations(outcome)]
-    if not rows:
+    names, matrix = outcome.correlation_names, np.asarray(outcome.correlation_matrix, dtype=float)
+    if len(names) < 2 or matrix.shape != (len(names), len(names)):
         return ""
-    note = f'<p class="quiet">Beyond {STRONG:g}: the data hardly tell these values apart.</p>'
-    return _table(["parameter", "with", "correlation"], rows, left=(0, 1)) + note
+    text = "<h3>Correlations</h3>"
+    strong = strong_correlations(outcome)
+    pairs = [f"{one} and {two}: {value:+.3f}" for one, two, value in strong]
+    if pairs:
+        text += paragraph(f"Beyond {STRONG:g}, where the data know a combination of the two better than either:")
+        text += listed(pairs)
+    else:
+        text += paragraph(f"None is beyond {STRONG:g}.")
+    shown = np.arange(len(names))
+    if len(names) > MOST_CORRELATED:
+        largest = np.nanmax(np.abs(matrix - np.eye(len(names))), axis=1)
+        shown = np.sort(np.argsort(-largest, kind="stable")[:MOST_CORRELATED])
+        text += paragraph(
+            f"The map shows the {MOST_CORRELATED} of {len(names)} parameters with the strongest.", "quiet"
+        )
+    return text + f'<div class="wide">{heat_map([names[k] for k in shown], matrix[np.ix_(shown, shown)])}</div>'
+
+
+def _tried(outcome: Outcome, profiles: Sequence[Profile], resampled: Bootstrap | None) -> str:
+    """Return profiles of chi-squared and the bootstrap; empty when neither was asked for."""
+    text = ""
+    if profiles:
+        text += "<h3>Profiles of chi-squared</h3>"
+        text += table(PROFILE_HEADINGS, profile_rows(profiles), left=(0, 1))
+        text += f'<div class="several">{"".join(f"<figure>{profile_drawing(one)}</figure>" for one in profiles)}</div>'
+    if resampled is None:
+        return text
+    text += "<h3>Bootstrap</h3>"
+    if len(resampled.values) < 2:
+        return text + paragraph(f"None of {resampled.failed} refits converged.", "bad")
+    text += table(BOOTSTRAP_HEADINGS, bootstrap_rows(resampled, outcome), left=(0, 1))
+    text += paragraph(f"{len(resampled.values)} refits; {resampled.failed} more did not converge.", "quiet")
+    drawn = range(min(len(resampled.names), MOST_HISTOGRAMS))
+    figures = "".join(f"<figure>{bootstrap_drawing(resampled, k)}</figure>" for k in drawn)
+    return text + f'<div class="several">{figures}</div>'
 
 
 def _quality(outcome: Outcome) -> str:
@@ -150,21 +210,45 @@ def _quality(outcome: Outcome) -> str:
     rows = [
         ["points", str(q.points)],
         ["free parameters (scales and baselines included)", str(q.free_parameters)],
-        ["reduced chi-square", short(q.chi2_reduced, 4)],
+        ["reduced chi-square (1 for a right model and right noise)", short(q.chi2_reduced, 4)],
         ["noise of the first trace", small(q.noise)],
         ["AICc", short(q.aicc, 6)],
         ["BIC", short(q.bic, 6)],
     ]
-    return _table(["", "value"], rows)
+    return table(["", "value"], rows)
 
 
 def _state(outcome: Outcome) -> str:
     q = outcome.quality
     if not q.finished:
-        return '<p class="state bad">Stopped before the end: these are the best values so far.</p>'
+        return paragraph("Stopped before the end: these are the best values so far.", "state bad")
     if not q.converged:
-        return f'<p class="state bad">Not converged: {escape(outcome.message)}</p>'
-    return '<p class="state">Converged.</p>'
+        return paragraph(f"Not converged: {outcome.message}", "state bad")
+    return paragraph(f"Converged; reduced chi-square {short(q.chi2_reduced, 4)}.", "state")
+
+
+def _warnings(outcome: Outcome) -> str:
+    if not outcome.warnings:
+        return ""
+    count = len(outcome.warnings)
+    head = "A warning" if count == 1 else f"{count} warnings"
+    return f'<section class="warnings"><h2>{head}</h2>{listed([note.text for note in outcome.warnings])}</section>'
+
+
+def _pictures(outcome: Outcome) -> str:
+    """Return a figure for each trace and each table of lines."""
+    several = len(outcome.curves) + len(outcome.positions) > 1
+    figures = []
+    for name, drawn in [
+        *((curves.trace, fit_drawing(curves)) for curves in outcome.curves[:MOST_TRACES]),
+        *((one.name, positions_drawing(one)) for one in outcome.positions),
+    ]:
+        head = f"<h3>{escape(name)}</h3>" if several else ""
+        figures.append(f'<figure class="fit">{head}{drawn}</figure>')
+    more = len(outcome.curves) - MOST_TRACES
+    if more > 0:
+        figures.append(paragraph(f"{more} more traces are in curves.csv and outcome.h5.", "quiet"))
+    return "\n".join(figures)
 
 
 def _provenance(outcome: Outcome) -> str:
@@ -174,56 +258,37 @@ def _provenance(outcome: Outcome) -> str:
 
 
 def report_text(
-    outcome: Outcome,
-    picture: bytes,
-    *,
-    profiles: Sequence[Profile] = (),
-    profile_picture: bytes = b"",
-    resampled: Bootstrap | None = None,
+    outcome: Outcome, *, job: Job | None = None, profiles: Sequence[Profile] = (), resampled: Bootstrap | None = None
 ) -> str:
     """Return the page.
 
     Parameters
     ----------
     outcome : Outcome
-    picture : bytes
-        PNG of the fit, put into the page.
-    profiles, profile_picture
-        Profiles of chi-squared and their PNG.
-    resampled : Bootstrap, optional
+    job : Job, optional
+        What was fitted; with it the page compares ions that the job names with the free ion, and lists
+        equivalent settings of zero-field tensors.
+    profiles, resampled
+        What was tried beyond the fit.
     """
-    names = ", ".join([curves.trace for curves in outcome.curves] + [table.name for table in outcome.positions])
-    alt = f"measured and fitted signal with residual against magnetic field: {names}"
-    if outcome.positions:
-        alt = f"measured and fitted fields of lines with residual against angle: {names}"
-    warnings = "".join(f"<li>{escape(note.text)}</li>" for note in outcome.warnings)
-    wide = "" if len(outcome.curves) > 1 else ' class="column"'
-    encoded = base64.b64encode(picture).decode()
-    job = str(outcome.provenance.get("job", ""))
+    text = str(outcome.provenance.get("job", ""))
     body = [
         f"<h1>{escape(outcome.name)}</h1>",
-        f'<p class="quiet">{escape(_conditions(outcome))}</p>',
+        paragraph(_conditions(outcome), "quiet"),
         _state(outcome),
-        f'<figure><img{wide} alt="{escape(alt)}" src="data:image/png;base64,{encoded}"></figure>',
-        _section("Warnings", f'<ul class="warnings">{warnings}</ul>' if warnings else ""),
-        _section("Parameters", _parameters(outcome)),
-        _section("In other units", _effective(outcome)),
-        _section("Fractions of spins", _fractions(outcome)),
-        _section("What the uncertainties are made of", _budget(outcome)),
-        _section("Tried beyond the fit", _tried(outcome, profiles, profile_picture, resampled)),
-        _section("What the data cannot tell apart", _correlations(outcome)),
-        _section("Quality", _quality(outcome)),
-        _section("Job", f"<pre>{escape(job)}</pre>" if job else ""),
-        _section("Provenance", _provenance(outcome)),
+        _warnings(outcome),
+        _pictures(outcome),
+        section("Parameters", _parameters(outcome) + _held(outcome)),
+        section("In other units", _effective(outcome)),
+        section("Fractions of spins", _fractions(outcome.fractions)),
+        section("Free ion, crystal field, measurement", _ions(job, outcome)),
+        section("What the data cannot tell", _left_open(job, outcome)),
+        section("Tried beyond the fit", _tried(outcome, profiles, resampled)),
+        section("Quality", _quality(outcome)),
+        section("Job", f"<pre>{escape(text)}</pre>" if text else ""),
+        section("Provenance", _provenance(outcome)),
     ]
-    return (
-        '<!DOCTYPE html>\n<html lang="en"><head><meta charset="utf-8">\n'
-        f'<meta http-equiv="Content-Security-Policy" content="{_POLICY}">\n'
-        '<meta name="viewport" content="width=device-width, initial-scale=1">\n'
-        f"<title>{escape(outcome.name)}: fit</title>\n<style>{_CSS}</style></head>\n<body><main>\n"
-        + "\n".join(part for part in body if part)
-        + "\n</main></body></html>\n"
-    )
+    return document(f"{outcome.name}: fit", body, scripts=("page.js",))
 
 
 def _conditions(outcome: Outcome) -> str:

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from typing import Any
 
+from spinfit.fitting.data import Job
 from spinfit.fitting.outcome import Outcome
 from spinfit.fitting.resample import Bootstrap, Profile
 from spinfit.report.archive import archive_bytes
@@ -12,11 +13,11 @@ from spinfit.report.html import report_text
 from spinfit.report.outcome_json import curves_text, outcome_text
 from spinfit.report.plots import fit_figure, picture_bytes
 from spinfit.report.positions import positions_figure, positions_text
-from spinfit.report.tried import bootstrap_record, profile_figure, profile_record
+from spinfit.report.tried import bootstrap_record, profile_record
 
 NUMBERS = ("outcome.json", "curves.csv", "outcome.h5")
 """Files without pictures."""
-DRAWN = ("fit.png", "report.html")
+DRAWN = ("fit.png", "fit.svg", "report.html")
 """Files that hold pictures, which take longer to draw than a short fit takes."""
 
 
@@ -33,6 +34,7 @@ def more_record(profiles: Sequence[Profile] = (), resampled: Bootstrap | None = 
 def outcome_files(
     outcome: Outcome,
     *,
+    job: Job | None = None,
     profiles: Sequence[Profile] = (),
     resampled: Bootstrap | None = None,
     pictures: bool = True,
@@ -42,6 +44,8 @@ def outcome_files(
     Parameters
     ----------
     outcome : Outcome
+    job : Job, optional
+        What was fitted: the page then compares its ions with free ones.
     profiles : sequence of Profile
     resampled : Bootstrap, optional
     pictures : bool
@@ -53,8 +57,8 @@ def outcome_files(
         "curves.csv": curves.encode(),
     }
     if pictures:
-        picture = picture_bytes(positions_figure(outcome) if outcome.positions else fit_figure(outcome))
-        drawn = picture_bytes(profile_figure(profiles)) if profiles else b""
-        report = report_text(outcome, picture, profiles=profiles, profile_picture=drawn, resampled=resampled)
-        contents |= {"fit.png": picture, "report.html": report.encode()}
+        figure = positions_figure(outcome) if outcome.positions else fit_figure(outcome)
+        report = report_text(outcome, job=job, profiles=profiles, resampled=resampled)
+        contents |= {"fit.png": picture_bytes(figure), "fit.svg": picture_bytes(figure, "svg")}
+        contents["report.html"] = report.encode()
     return contents | {"outcome.h5": archive_bytes(outcome)}

@@ -54,21 +54,26 @@ def g_ticks(first: float, last: float, frequency: float, *, most: int = 6) -> li
     return sorted(taken, reverse=True)
 
 
+def g_texts(ticks: Sequence[float]) -> list[str]:
+    """Write g ticks: an even row with as many decimals as its finest, a wide one as short as can be."""
+    decimals = max((len(f"{g:.10g}".partition(".")[2]) for g in ticks), default=0)
+    even = len(ticks) > 1 and max(ticks) / min(ticks) < EVEN_TICKS
+    return [f"{g:.{decimals}f}" if even else f"{g:.6g}" for g in ticks]
+
+
 def add_g_axis(axes: Axes, frequency: float, *, label: bool = True, most: int = 6) -> None:
     """Put g on the top of a panel whose abscissa is the field in mT."""
     first, last = axes.get_xlim()
     ticks = g_ticks(first, last, frequency, most=most)
     top = axes.secondary_xaxis("top")
     top.xaxis.set_major_locator(FixedLocator([field_of(g, frequency) for g in ticks]))
-    decimals = max((len(f"{g:.10g}".partition(".")[2]) for g in ticks), default=0)
-    even = len(ticks) > 1 and max(ticks) / min(ticks) < EVEN_TICKS
-    top.xaxis.set_major_formatter(FixedFormatter([f"{g:.{decimals}f}" if even else f"{g:.6g}" for g in ticks]))
+    top.xaxis.set_major_formatter(FixedFormatter(g_texts(ticks)))
     top.xaxis.set_minor_locator(NullLocator())
     if label:
         top.set_xlabel(f"g at {frequency / 1e3:.6g} GHz")
 
 
-def _power(values: Array) -> tuple[float, str]:
+def power_of_unit(values: Array) -> tuple[float, str]:
     """Return a power of 1000 to divide by and how the unit is then written."""
     largest = float(np.nanmax(np.abs(values))) if values.size else 0.0
     if not (math.isfinite(largest) and largest > 0):
@@ -95,7 +100,7 @@ def _field_axis(axes: Axes) -> None:
 
 def _draw_fit(axes: Axes, curves: Curves) -> None:
     """Draw measured and fitted signal."""
-    factor, unit = _power(curves.measured)
+    factor, unit = power_of_unit(curves.measured)
     y = curves.measured / factor
     axes.plot(curves.field, np.where(curves.used, np.nan, y), color=style.UNUSED, lw=0.7)
     axes.plot(curves.field, np.where(curves.used, y, np.nan), color=style.MEASURED, lw=0.7, label="measured")
@@ -216,7 +221,7 @@ def trace_figure(
     field: Array, signal: Array, found: Analysis, *, frequency: float | None = None, detect: str = "derivative"
 ) -> Figure:
     """Return the picture of a measured trace with its turning points marked."""
-    factor, unit = _power(signal)
+    factor, unit = power_of_unit(signal)
     marks = {"maximum": "v", "minimum": "^", "crossing": "o"}
     with style.styled():
         figure = Figure(figsize=(style.COLUMN_WIDTH, 2.3), layout="constrained")

@@ -8,6 +8,7 @@ import math
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
+from matplotlib.ticker import MaxNLocator
 
 from spinfit.fitting.outcome import Outcome, PositionTable
 from spinfit.report import style
@@ -55,7 +56,19 @@ def positions_figure(outcome: Outcome) -> Figure:
     return figure
 
 
-def _abscissa(table: PositionTable) -> tuple[np.ndarray, str]:
+def angle_locator() -> MaxNLocator:
+    """Return a locator of ticks 15, 30, 45 or 90 degrees apart where the range is wide enough."""
+    return MaxNLocator(7, steps=[1, 1.5, 3, 4.5, 9, 10])
+
+
+def angle_ticks(first: float, last: float) -> list[float]:
+    """Return the ticks of an axis in degrees."""
+    values = angle_locator().tick_values(first, last)
+    return [float(value) for value in values if first <= value <= last]
+
+
+def abscissa(table: PositionTable) -> tuple[np.ndarray, str]:
+    """Return where the lines of a table stand on the axis, degrees or their number, and the axis's title."""
     if table.setting.shape[1] == 1:
         return np.rad2deg(table.setting[:, 0]), "angle / deg"
     return np.arange(1, len(table.measured) + 1, dtype=float), "line of the table"
@@ -63,7 +76,7 @@ def _abscissa(table: PositionTable) -> tuple[np.ndarray, str]:
 
 def _draw_fields(axes: Axes, table: PositionTable) -> None:
     """Draw measured fields over all calculated lines, strong ones darker than weak ones."""
-    x, _ = _abscissa(table)
+    x, _ = abscissa(table)
     if len(table.drawn):
         angle, field, weight = table.drawn.T
         strength = np.clip(1 + np.log10(weight) / 3, 0.12, 1.0)
@@ -82,9 +95,11 @@ def _draw_fields(axes: Axes, table: PositionTable) -> None:
 
 def _draw_residuals(axes: Axes, table: PositionTable) -> None:
     """Draw measured less fitted in mT with bars of one standard uncertainty."""
-    x, label = _abscissa(table)
+    x, label = abscissa(table)
     used = table.used
     axes.axhline(0, color=style.GUIDE, lw=0.5)
     axes.errorbar(x[used], table.residual[used], table.uncertainty[used], fmt="o", ms=1.8, color=style.MEASURED, lw=0.5)
     axes.set_ylabel("residual\n/ mT")
     axes.set_xlabel(label)
+    if table.setting.shape[1] == 1:
+        axes.xaxis.set_major_locator(angle_locator())

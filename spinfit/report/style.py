@@ -15,6 +15,10 @@ GUIDE = "#8a909b"
 PARTS = ("#23149a", "#1fc7ae", "#dc8a22", "#7b0a5a", "#8d86f5", "#7a673f")
 DASHES = ((None, None), (5, 1.5), (2, 1.2), (6, 1.5, 1.5, 1.5), (1, 1), (8, 2))
 
+ON_DARK = {"paper": "#15181d", "ink": "#e3e6eb", "measured": "#d4d9e2", "fitted": "#ff7f50", "unused": "#646b78"}
+"""Colours of pages on a dark screen."""
+PARTS_ON_DARK = ("#8ca0ea", "#2cffe6", "#ab6900", "#e8156e", "#a042ff", "#f3ed6a")
+
 COLUMN_WIDTH = 86 / 25.4
 """Width of one journal column, inches (86 mm)."""
 PAGE_WIDTH = 178 / 25.4

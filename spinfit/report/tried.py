@@ -2,15 +2,12 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from typing import Any
-
-from matplotlib.figure import Figure
 
 from spinfit.fitting.comparison import Comparison
 from spinfit.fitting.outcome import Outcome
 from spinfit.fitting.resample import Bootstrap, Profile
-from spinfit.report import style
 from spinfit.report.layout import table, wrapped
 from spinfit.report.numbers import short, small
 
@@ -19,14 +16,17 @@ SOURCES = ("noise", "correlation and misfit", "field axis", "frequency")
 _NEGLIGIBLE = 1e-2
 
 
+def budget_cells(parts: Mapping[str, float], whole: float | None) -> list[str]:
+    """Return what each source gives to an uncertainty; those that are next to nothing stay empty."""
+    return [small(parts[s]) if parts.get(s, 0.0) > _NEGLIGIBLE * (whole or 0.0) else "" for s in SOURCES]
+
+
 def budget_rows(outcome: Outcome) -> list[list[str]]:
     """Return one row a parameter: name, unit, total, then each source; those that are next to nothing empty."""
     rows = []
     for name, parts in outcome.budget.items():
         value = outcome.parameters[name]
-        total = value.uncertainty or 0.0
-        cells = [small(parts[s]) if parts.get(s, 0.0) > _NEGLIGIBLE * total else "" for s in SOURCES]
-        rows.append([name, value.unit, small(value.uncertainty), *cells])
+        rows.append([name, value.unit, small(value.uncertainty), *budget_cells(parts, value.uncertainty)])
     return rows
 
 
@@ -97,26 +97,6 @@ def bootstrap_table(one: Bootstrap | None, outcome: Outcome) -> str:
     text = table(list(BOOTSTRAP_HEADINGS), bootstrap_rows(one, outcome), left=(0, 1))
     failed = f"; {one.failed} more did not converge" if one.failed else ""
     return f"{text}\n{len(one.values)} refits to resampled residuals{failed}"
-
-
-def profile_figure(profiles: Sequence[Profile]) -> Figure:
-    """Return the rise of chi-squared against each profiled parameter, with the levels of 1 and 2 deviations."""
-    columns = min(len(profiles), 2)
-    rows = -(-len(profiles) // columns)
-    width = style.COLUMN_WIDTH if columns == 1 else style.PAGE_WIDTH
-    with style.styled():
-        figure = Figure(figsize=(width, 2.2 * rows), layout="constrained")
-        panels = figure.subplots(rows, columns, squeeze=False).ravel()
-        for axes, one in zip(panels, profiles, strict=False):
-            for level in (1.0, 4.0):
-                axes.axhline(level, color=style.GUIDE, lw=0.5)
-            axes.plot(one.values, one.rise, "o-", ms=2.5, color=style.FITTED)
-            axes.set_xlabel(f"{one.name} / {one.unit}" if one.unit else one.name)
-            axes.set_ylabel("rise of χ²")
-            axes.set_ylim(bottom=0)
-        for axes in panels[len(profiles) :]:
-            axes.set_visible(False)
-    return figure
 
 
 def comparison_lines(found: Comparison) -> str:
