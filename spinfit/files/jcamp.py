@@ -108,8 +108,14 @@ def _affn(line: str) -> list[float] | None:
     return [float(number) for number in re.findall(_AFFN, line)]
 
 
-def _squeezed(line: str, place: str, file: str) -> tuple[float, list[float], bool]:
-    """Decode one line of compressed ordinates.
+# A repeat count of six digits would make a megabyte of a line.  Real tables hold few points a character, but a sweep
+# over nothing at all may be one ordinate, repeated.
+_FREE_POINTS = 200_000
+_POINTS_PER_CHARACTER = 100
+
+
+def _squeezed(line: str, place: str, file: str, room: int = MAX_POINTS) -> tuple[float, list[float], bool]:
+    """Decode one line of compressed ordinates, at most `room` of them.
 
     Returns
     -------
@@ -138,6 +144,9 @@ def _squeezed(line: str, place: str, file: str) -> tuple[float, list[float], boo
             count = float(text)
             if not values or count != int(count) or count < 1 or count > MAX_POINTS:
                 raise InputError(f"{quote(token[0])} repeats nothing", "repeat an ordinate", place=place, file=file)
+            if len(values) + count > room:
+                right = "a table this short holds fewer points"
+                raise InputError(f"{quote(token[0])} repeats an ordinate too often", right, place=place, file=file)
             for _ in range(int(count) - 1):
                 values.append(values[-1] + step if step is not None else values[-1])
         elif dif:
@@ -168,9 +177,12 @@ def _ordinates(block: _Block, notes: list[Note], file: str) -> _Ordinates:
     lines = [(number, line) for number, line in block.lines if line.strip()]
     plain = all(_AFFN_LINE.fullmatch(line) for _, line in lines)
     check, failed = False, 0
+    most = min(MAX_POINTS, max(_FREE_POINTS, _POINTS_PER_CHARACTER * sum(len(line) for _, line in lines)))
     for number, line in lines:
         row = _affn(line) if plain else None
-        x, new, difference = (row[0], row[1:], False) if row else _squeezed(line, f"line {number}", file)
+        x, new, difference = (
+            (row[0], row[1:], False) if row else _squeezed(line, f"line {number}", file, most - len(values))
+        )
         if check and new:
             failed += new[0] != values[-1]
             values.pop()  # the check is an ordinate of its own and stands for the one computed
@@ -179,8 +191,8 @@ def _ordinates(block: _Block, notes: list[Note], file: str) -> _Ordinates:
         out.numbers.append(number)
         values.extend(new)
         check = difference
-        if len(values) > MAX_POINTS:
-            raise InputError("has too many points", f"at most {MAX_POINTS:.3g} are read", file=file)
+        if len(values) > most:
+            raise InputError("has too many points", f"at most {most:.3g} are read", file=file)
     if failed:
         notes.append(("jcamp_check", f"{failed} of the ordinate checks of the compressed table fail"))
     out.values = np.array(values)

@@ -74,19 +74,24 @@ def read_crystal_fields(path: str | Path) -> dict[str, GivenIon]:
     """
     data, _ = load_toml(path)
     try:
-        table = Table(data, "", ("ion",))
-        found: dict[str, GivenIon] = {}
-        entries = table.tables("ion")
-        if not entries:
-            raise InputError("has no ion", 'write [[ion]] with name = "Cu2+" and a crystal field')
-        for place, entry in entries:
-            given = _read_ion(entry, place)
-            if given.name in found:
-                raise InputError(f"{given.name} stands there twice", "take one of the two out", place=place)
-            found[given.name] = given
-        return found
+        return crystal_fields_of(data)
     except InputError as error:
         raise error.at(file=path) from None
+
+
+def crystal_fields_of(data: Mapping[str, Any]) -> dict[str, GivenIon]:
+    """Make the ions of parsed TOML (see `read_crystal_fields`)."""
+    table = Table(data, "", ("ion",))
+    found: dict[str, GivenIon] = {}
+    entries = table.tables("ion")
+    if not entries:
+        raise InputError("has no ion", 'write [[ion]] with name = "Cu2+" and a crystal field')
+    for place, entry in entries:
+        given = _read_ion(entry, place)
+        if given.name in found:
+            raise InputError(f"{given.name} stands there twice", "take one of the two out", place=place)
+        found[given.name] = given
+    return found
 
 
 def _read_ion(entry: object, place: str) -> GivenIon:

@@ -1,0 +1,228 @@
+"""Read HDF5 in a child process, because a damaged file can crash or hang the HDF5 library.
+
+One changed byte in a thousand files does: a walk along a damaged tree that never ends, or an access outside the
+memory.  Neither can be caught inside a process.  The child is started at the first HDF5 file (0.2 s) and kept for
+the next ones (a few ms each); it has a limit on its time and on its memory, and what it answers are numbers and
+texts, never objects.
+"""
+
+from __future__ import annotations
+
+import atexit
+import json
+import os
+import select
+import subprocess
+import sys
+import threading
+import time
+from collections.abc import Sequence
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from spinfit.errors import InputError
+
+SECONDS = 4.0
+"""Processor time that a file may take, and what each byte adds; seconds."""
+SECONDS_PER_BYTE = 2e-7
+MEMORY = 2**30
+"""Memory that a file may take beyond the child's own, and what each of its bytes adds at most; bytes."""
+MEMORY_PER_BYTE = 8
+MEMORY_CEILING = 2**32
+# A machine busy with other work gives the child a part of a processor.
+_PATIENCE = 20.0
+# The library may leak what a damaged file left half open.
+_MOST_FAILURES = 200
+_LONGEST_ANSWER = 2**28
+_START = (
+    "import json, sys; sys.path[:] = json.loads(sys.argv[1]); from spinfit.files.hdf5_child import serve; "
+    "serve(int(sys.argv[2]), int(sys.argv[3]))"
+)
+
+Arrays = list[NDArray[Any]]
+
+
+def cpu_limit(size: int) -> float:
+    """Return the processor time that a file of some size may take, seconds."""
+    return SECONDS + SECONDS_PER_BYTE * size
+
+
+def memory_limit(size: int) -> int:
+    """Return the memory that a file of some size may take, bytes."""
+    return min(MEMORY + MEMORY_PER_BYTE * size, MEMORY_CEILING)
+
+
+class _Broken(Exception):
+    """The child ended or was given up, with why."""
+
+
+class _Child:
+    """The process that reads, started when it is first needed."""
+
+    def __init__(self) -> None:
+        self.lock = threading.Lock()
+        self.process: subprocess.Popen[bytes] | None = None
+        self.failures = 0
+        atexit.register(self.stop)
+
+    def start(self) -> subprocess.Popen[bytes]:
+        """Return the running child."""
+        if self.process is not None and self.process.poll() is None and self.failures < _MOST_FAILURES:
+            return self.process
+        self.stop()
+        # -P: the folder where the user stands is no place to import from.
+        command = [sys.executable, "-P", "-c", _START, json.dumps(sys.path), "0", "1"]
+        self.failures = 0
+        self.process = subprocess.Popen(
+            command,
+            stdin=subprocess.PIPE,
+            stdout=subprocess.PIPE,
+            stderr=subprocess.DEVNULL,
+            bufsize=0,
+            start_new_session=True,  # Ctrl-C is for the parent, which ends the child when it ends
+            env=os.environ | {"OMP_NUM_THREADS": "1", "OPENBLAS_NUM_THREADS": "1"},
+        )
+        return self.process
+
+    def stop(self) -> None:
+        """End the child."""
+        process, self.process = self.process, None
+        if process is not None:
+            process.kill()
+            process.wait()
+            for stream in (process.stdin, process.stdout):
+                if stream is not None:
+                    stream.close()
+
+    def forget(self) -> None:
+        """Leave the child to the process from which this one was forked."""
+        process, self.process = self.process, None
+        self.lock = threading.Lock()
+        if process is not None:
+            process.returncode = 0  # not ours to wait for
+            for stream in (process.stdin, process.stdout):
+                if stream is not None:
+                    stream.close()
+
+    def ask(self, header: bytes, content: bytes, wait: float) -> tuple[dict[str, Any], Arrays]:
+        """Send a question and return the answer.
+
+        Raises
+        ------
+        _Broken
+        """
+        process = self.start()
+        until = time.monotonic() + wait
+        try:
+            _write(process, header + b"\n", until)
+            _write(process, content, until)
+            size = int.from_bytes(_read(process, 8, until), "little")
+            if size > _LONGEST_ANSWER:
+                raise _Broken("its answer is too long")
+            answer = json.loads(_read(process, size, until))
+            arrays = []
+            for kind, shape in answer.get("arrays", []):
+                dtype = np.dtype(kind)
+                length = int(np.prod(shape, dtype=np.int64)) * dtype.itemsize
+                arrays.append(np.frombuffer(_read(process, length, until), dtype=dtype).reshape(shape))
+        except _Broken as broken:
+            code = process.poll() if str(broken) else process.wait()
+            self.stop()
+            raise _Broken(str(broken) or _ending(code)) from None
+        except BaseException:  # stopped by the user half-way: what the child still says answers nothing
+            self.stop()
+            raise
+        self.failures += "arrays" not in answer
+        return answer, arrays
+
+
+def _ending(code: int | None) -> str:
+    """Say how the child ended."""
+    if code is not None and -code in _LIMIT_SIGNALS:
+        return "reading it does not end"
+    return "the HDF5 library crashes on it"
+
+
+_LIMIT_SIGNALS = (24,)  # SIGXCPU, which not every system has by name
+
+
+def _write(process: subprocess.Popen[bytes], content: bytes, until: float) -> None:
+    """Write to the child, which may have died or stopped to listen."""
+    left = memoryview(content)
+    stream = process.stdin
+    assert stream is not None
+    try:
+        while left:
+            if not select.select([], [stream], [], max(0.0, until - time.monotonic()))[1]:
+                raise _Broken("reading it does not end")
+            left = left[os.write(stream.fileno(), left[: 2**16]) :]
+    except BrokenPipeError:
+        raise _Broken("") from None
+
+
+def _read(process: subprocess.Popen[bytes], size: int, until: float) -> bytearray:
+    """Read from the child."""
+    content = bytearray(size)
+    view, at = memoryview(content), 0
+    stream = process.stdout
+    assert stream is not None
+    while at < size:
+        if not select.select([stream], [], [], max(0.0, until - time.monotonic()))[0]:
+            raise _Broken("reading it does not end")
+        got = os.readv(stream.fileno(), [view[at:]])
+        if not got:
+            raise _Broken("")
+        at += got
+    return content
+
+
+_child = _Child()
+os.register_at_fork(after_in_child=_child.forget)
+
+
+def ask(
+    what: str, *, file: str, content: bytes = b"", path: str = "", size: int | None = None, under: Sequence[str] = ()
+) -> tuple[dict[str, Any], Arrays]:
+    """Have the child read an HDF5 file.
+
+    Parameters
+    ----------
+    what : str
+        "trace", "tree", "names" (see `spinfit.files.hdf5_child`).
+    file : str
+        What to call the file in errors.
+    content : bytes
+        The file itself, or
+    path : str
+        where it stands.
+    size : int, optional
+        Of the file at `path`.
+    under : sequence of str
+        Names that lead from the root to the group that is wanted.
+
+    Raises
+    ------
+    InputError
+        What the child refused, and when it crashed or did not end.
+    """
+    size = len(content) if size is None else size
+    seconds = cpu_limit(size)
+    header = {
+        "what": what, "file": file, "path": path, "under": list(under), "length": len(content),
+        "seconds": seconds, "memory": memory_limit(size),
+    }  # fmt: skip
+    with _child.lock:
+        try:
+            answer, arrays = _child.ask(json.dumps(header).encode(), content, _PATIENCE * seconds)
+        except _Broken as broken:
+            raise InputError(f"is a damaged HDF5 file ({broken})", "take an undamaged copy", file=file) from None
+        except OSError as error:
+            reason = error.strerror or error
+            right = "free memory or processes: HDF5 files are read in a second process"
+            raise InputError(f"cannot be read ({reason})", right, file=file) from error
+    if "refused" in answer:
+        found, right, place = answer["refused"]
+        raise InputError(found, right, place=place, file=file)
+    return answer["found"], arrays
