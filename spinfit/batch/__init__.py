@@ -1,10 +1,10 @@
 """Many fits side by side, whatever happens to single ones and whenever the run is cut short.
 
-tasks
-    What is to be fitted: job files, or a template with traces and a table of values.
+tasks, template
+    What is to be fitted: job files, or a template with traces.
 values
     The table of values, one row a trace.
-journal, lock, folders
+journal, lock
     What is kept on the disk, and how it gets there whole.
 workers, child
     Processes that may hang or die without costing more than the fit they were at.
@@ -12,6 +12,6 @@ work
     One fit from job to folder, in whatever process.
 run
     The batch itself.
-table, outliers, columns
+table, outliers, query
     The table of everything, and questions to it.
 """

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import csv
+import json
 import math
 from array import array
 from collections.abc import Iterator
@@ -13,13 +14,15 @@ from spinfit.batch.journal import Journal, Record
 from spinfit.batch.outliers import outlying, robust_z
 from spinfit.batch.tasks import Plan
 from spinfit.batch.work import FAILED, GOOD, WAITING
-from spinfit.files.atomic import whole_file
+from spinfit.files.atomic import whole_file, write_text
 from spinfit.units import from_unit, kind_of, to_unit
 
 SUMMARY = "summary.csv"
+UNITS = "units.json"
+"""The unit of each column that has one: a row of units would keep others from reading the table."""
 FIRST = ("trace", "status", "outlier")
-CONDITIONS = ("frequency", "temperature", "angle")
-"""In GHz, K and deg."""
+CONDITION_UNITS = {"frequency": "GHz", "temperature": "K", "angle": "deg"}
+CONDITIONS = tuple(CONDITION_UNITS)
 QUALITY = ("chi2_reduced", "converged", "noise", "points", "free_parameters")
 LAST = (*QUALITY, "warnings", "seconds", "hash", "reason")
 FIXED = (*FIRST, *CONDITIONS, *LAST)
@@ -161,4 +164,6 @@ def write_summary(folder: Path, journal: Journal, plan: Plan) -> tuple[dict[str,
         for number, record in enumerate(_records(folder, journal, plan)):
             named = [name for name, which in outliers.items() if which[number] and record["status"] != FAILED]
             writer.writerow(_row(record, columns, named))
+    known = {name: unit for name, unit in CONDITION_UNITS.items() if name in columns.conditions} | {"seconds": "s"} | columns.units
+    write_text(folder / UNITS, json.dumps(known, indent=1, ensure_ascii=False) + "\n")
     return counts, path

@@ -23,7 +23,7 @@ from spinfit.files.toml_table import load_toml, parse_toml
 from spinfit.files.toml_trace import name_from
 from spinfit.files.toml_writing import toml_text
 
-RESERVED = ("summary.csv", "summary.parquet", "journal.jsonl", "batch.h5", "report.html")
+RESERVED = ("summary.csv", "summary.parquet", "units.json", "journal.jsonl", "batch.h5", "report.html")
 """Names in the batch's folder that no trace can have for its own folder."""
 _PIECE = 1 << 20
 

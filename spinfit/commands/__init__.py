@@ -15,8 +15,20 @@ from __future__ import annotations
 
 from types import ModuleType
 
-from spinfit.commands import batch, calibrate, convert, diagram, fit, inspect, ion, lines, quench, simulate
+from spinfit.commands import (
+    batch,
+    calibrate,
+    completion,
+    convert,
+    diagram,
+    fit,
+    inspect,
+    ion,
+    lines,
+    quench,
+    simulate,
+    summary,
+)
 
-TABLE: dict[str, ModuleType] = {
-    module.NAME: module for module in (fit, batch, simulate, inspect, calibrate, convert, ion, quench, lines, diagram)
-}
+_MODULES = (fit, batch, summary, simulate, inspect, calibrate, convert, ion, quench, lines, diagram, completion)
+TABLE: dict[str, ModuleType] = {module.NAME: module for module in _MODULES}
