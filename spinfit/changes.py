@@ -1,240 +1,40 @@
-"""First-order changes of a powder average when its Hamiltonian changes a little.
+"""First-order changes of the average over directions when its Hamiltonian changes a little.
 
 Knots, nodes, meshes and smears stay those of the average itself, so that a change is smooth in the
-parameter.  A few further diagonalisations at the nodes that resonances touch give the change of
-every level difference, slope and strength there, without sums over states, so that degenerate levels
-need no care.  At a resonance the level difference stays h nu, hence
-
-    dB = -d(gap)/(d gap/dB),     W = strength/|d gap/dB| taken at the moved resonance.
-
-B^-2 and W B^-3 are continued over the sphere like the average's own; their changes are linear in
-them.  What a parameter does that breaks the symmetry of the average cancels between the images of
-each direction; it is taken out of the matrices beforehand.
+parameter.  B^-2 and W B^-3 are continued over the sphere like the average's own; their changes are
+linear in them, and smooth enough for every second ring of knots.
 """
 
 from __future__ import annotations
 
-import math
 from collections.abc import Sequence
-from dataclasses import replace
-from functools import lru_cache
-from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.spatial.transform import Rotation
 
-from spinfit import hermite, kernels
-from spinfit.branches import FWHM_PER_SIGMA, Request, stencil
+from spinfit import kernels
+from spinfit.branches import FWHM_PER_SIGMA, KnotData
 from spinfit.exact import Lines
-from spinfit.hamiltonian import System, rotation
+from spinfit.hamiltonian import System
 from spinfit.knots import continued, restored
-from spinfit.levels import Levels, occupation, solve, zero_field_state
+from spinfit.levels import occupation, solve, zero_field_state
 from spinfit.lineshape import FieldGrid
-from spinfit.orientations import Mesh
+from spinfit.loops import Landscape, Summed, add_looping, field_step
+from spinfit.moves import Move, Moved, Places, symmetrised
+from spinfit.nodes import FLAT
+from spinfit.orientations import Mesh, Rings
 from spinfit.powder import Average
 from spinfit.sheets import SMEAR_RATIO, Histograms, spacing
-from spinfit.symmetry import KINDS, Symmetry
+from spinfit.symmetry import KINDS
 
 Array = NDArray[np.float64]
 
-TURNS = 7
-"""Turns about an axis that average out every harmonic that operators of sixth rank hold."""
+GOOD_HALF = 0.05
+"""Error of the spectrum by every second ring up to which its changes are taken from these alone."""
+LOOP_SHIFT = 1e-3
+"""Line widths by which pairs of levels without a branch are moved for a difference."""
 LARGEST = 2_000_000
 """Numbers held for a block of branches."""
-
-
-class Move(NamedTuple):
-    """A small change of what is averaged.
-
-    Attributes
-    ----------
-    system : System
-    request : Request
-        With the broadening that goes with the system.
-    field, wave : ndarray, shape (d, 3), or None
-        Of a crystal: the moved directions of both fields in molecular axes.
-    """
-
-    system: System
-    request: Request
-    field: Array | None = None
-    wave: Array | None = None
-
-
-class Moved(NamedTuple):
-    """Changes of branches at the knots, each of shape (changes, branches, knots); variance may be None."""
-
-    field: Array
-    weight: Array
-    variance: Array | None
-
-
-@lru_cache(maxsize=32)
-def _group(kind: str) -> tuple[tuple[tuple[float, float, float], float], ...]:
-    """Return turns (axis in the domain's frame, angle) over whose images an average of this kind is even."""
-    z = (0.0, 0.0, 1.0)
-    if kind == "half":
-        return ((z, 0.0),)
-    if kind == "quarter":
-        return ((z, 0.0), (z, math.pi))
-    if kind == "octant":
-        return ((z, 0.0), (z, math.pi), ((1.0, 0.0, 0.0), math.pi), ((0.0, 1.0, 0.0), math.pi))
-    if kind == "axial":
-        return tuple((z, 2 * math.pi * k / TURNS) for k in range(TURNS))
-    vectors = Rotation.create_group("I").as_rotvec()
-    angles = np.linalg.norm(vectors, axis=1)
-    axes = np.where(angles[:, None] > 1e-9, vectors / np.maximum(angles, 1e-9)[:, None], z)
-    return tuple((tuple(map(float, axis)), float(angle)) for axis, angle in zip(axes, angles, strict=True))
-
-
-def symmetrised(base: System, moved: System, symmetry: Symmetry) -> System:
-    """Return a moved system without what of the move the images of each direction cancel.
-
-    Parameters
-    ----------
-    base : System
-        Which has the symmetry.
-    moved : System
-        A little different.
-
-    Returns
-    -------
-    System
-        `base` plus the mean of the difference over the turns of the symmetry.
-    """
-    turns = _group(symmetry.kind)
-    if len(turns) == 1:
-        return moved
-    n = len(base.h0)
-    h0, zeeman = moved.h0 - base.h0, moved.zeeman - base.zeeman
-    mean_h0, mean_zeeman = np.zeros_like(h0), np.zeros_like(zeeman)
-    for axis, angle in turns:
-        along = symmetry.axes @ np.array(axis)
-        u = rotation(base, tuple(along), angle)
-        matrix = Rotation.from_rotvec(angle * along).as_matrix()
-        mean_h0 += u @ h0 @ u.conj().T
-        mean_zeeman += u @ np.dot(matrix, zeeman.reshape(3, -1)).reshape(3, n, n) @ u.conj().T
-    return replace(moved, h0=base.h0 + mean_h0 / len(turns), zeeman=base.zeeman + mean_zeeman / len(turns))
-
-
-class _Places:
-    """Where the resonances of an average lie among its nodes, and the (node, knot) points they touch."""
-
-    def __init__(self, average: Average) -> None:
-        knots = average.knots
-        data, branches = knots.data, knots.branches
-        self.average, self.shape = average, branches.field.shape
-        self.field, self.slope = branches.field.ravel(), branches.slope.ravel()
-        n = self.shape[1]
-        self.row, self.knot = np.repeat(branches.pair, n), np.tile(np.arange(n), len(branches.pair))
-        self.lower, self.upper = data.pairs[0][self.row], data.pairs[1][self.row]
-        first = data.fields[data.leaves[:, 0]]
-        leaf = data.leaves[np.clip(np.searchsorted(first, self.field, side="right") - 1, 0, len(first) - 1)].T
-        self.half = 0.5 * (data.fields[leaf[2]] - data.fields[leaf[0]])
-        self.t = (self.field - data.fields[leaf[1]]) / self.half
-        self.leaf, self.middle = leaf, data.fields[leaf[1]]
-        self.nodes, _ = stencil(data.fields, leaf[1], self.field)
-        touched = np.zeros((len(data.fields), n), dtype=bool)
-        touched[leaf, self.knot] = True
-        touched[self.nodes, self.knot] = True
-        self.node, self.direction = np.nonzero(touched)
-        self.position = np.cumsum(touched.ravel()).reshape(touched.shape) - 1
-        self.directions = knots.rings.directions(average.symmetry.axes)
-
-    def changes(self, base: System, moved: Sequence[Move]) -> Moved:
-        """Return the first-order changes of every branch at every knot.
-
-        By the levels at the resonances themselves, or at the nodes about them, whichever are fewer.
-        """
-        at_resonances = self.field.size <= self.node.size
-        look = self._at_resonances if at_resonances else self._at_nodes
-        here = look(base, self.average.request)
-        of_field, of_weight, of_variance = [], [], []
-        by_field = self._along_field() if at_resonances else (0.0, 0.0)
-        for one in moved:
-            there = look(one.system, one.request)
-            shift = there[0] - here[0]
-            of_field.append(shift)
-            of_weight.append(there[1] - here[1] + by_field[0] * shift)
-            if here[2] is not None:
-                of_variance.append(there[2] - here[2] + by_field[1] * shift)
-        shape = (len(moved), *self.shape)
-        variance = np.reshape(of_variance, shape) if of_variance else None
-        return Moved(np.reshape(of_field, shape), np.reshape(of_weight, shape), variance)
-
-    def _at_resonances(self, system: System, request: Request) -> tuple[Array, Array, Array | None]:
-        """Return the resonance field, and weight and variance at the known field, each of shape (q,)."""
-        row = np.arange(len(self.field))
-        got = self._solved(system, request, self.directions[self.knot], self.field)
-        gap = got.energy[row, self.upper] - got.energy[row, self.lower] - request.frequency
-        steep = got.slope[row, self.upper] - got.slope[row, self.lower]
-        weight, own = self._strength(got, row, request)
-        variance = None if own is None else own / (np.abs(steep) * FWHM_PER_SIGMA) ** 2
-        return self.field - gap / self.slope, weight / np.abs(steep), variance
-
-    def _at_nodes(self, system: System, request: Request) -> tuple[Array, Array, Array | None]:
-        """Return field, weight and variance of every resonance, each of shape (q,)."""
-        fields = self.average.knots.data.fields
-        got = self._solved(system, request, self.directions[self.direction], fields[self.node])
-        at = self.position[self.leaf, self.knot]
-        gap = got.energy[at, self.upper] - got.energy[at, self.lower] - request.frequency
-        c = hermite.quintic(gap, (got.slope[at, self.upper] - got.slope[at, self.lower]) * self.half)
-        # one Newton step from the known resonance: the move is small
-        t = self.t - hermite.value(c, self.t) / (self.slope * self.half)
-        field = self.middle + self.half * t
-        steep = np.maximum(np.abs(hermite.slope(c, t) / self.half), 1e-300)
-        nodes, basis = stencil(fields, self.leaf[1], field)
-        strength, own = self._strength(got, self.position[nodes, self.knot], request)
-        variance = None if own is None else (basis * own).sum(axis=0) / (steep * FWHM_PER_SIGMA) ** 2
-        return field, (basis * strength).sum(axis=0) / steep, variance
-
-    def _along_field(self) -> tuple[Array, Array]:
-        """Return how weight and variance of every resonance change along the field, each of shape (q,), 1/mT."""
-        data = self.average.knots.data
-        gap, slope = data.gap[self.row, self.leaf, self.knot], data.slope[self.row, self.leaf, self.knot]
-        c = hermite.quintic(gap, slope * self.half)
-        step = 1e-3 * self.half
-        sides = []
-        for sign in (1, -1):
-            t = self.t + sign * step / self.half
-            steep = np.maximum(np.abs(hermite.slope(c, t) / self.half), 1e-300)
-            nodes, basis = stencil(data.fields, self.leaf[1], self.field + sign * step)
-            weight = (basis * data.strength[self.row, nodes, self.knot]).sum(axis=0) / steep
-            variance = 0.0
-            if data.variance is not None:
-                variance = (basis * data.variance[self.row, nodes, self.knot]).sum(axis=0)
-                variance = variance / (steep * FWHM_PER_SIGMA) ** 2
-            sides.append((weight, variance))
-        return tuple((above - below) / (2 * step) for above, below in zip(*sides, strict=True))
-
-    def _solved(self, system: System, request: Request, unit: Array, fields: Array) -> Levels:
-        broadening = request.broadening
-        return solve(
-            system,
-            unit,
-            fields,
-            microwave=request.microwave,
-            operators=None if broadening is None else (broadening.h0, broadening.zeeman),
-            state=None if request.populations is None else zero_field_state(system, request.populations),
-        )
-
-    def _strength(self, got: Levels, at: NDArray[np.intp], request: Request) -> tuple[Array, Array | None]:
-        """Return strength, and squared width in frequency, of the resonances at points of a batch, shape of `at`."""
-        strength = got.intensity[at, self.lower, self.upper]
-        p = occupation(got, request.temperature)
-        if p is None:
-            strength = strength / got.energy.shape[1]
-        else:
-            strength = strength * (p[at, self.lower] - p[at, self.upper])
-        if request.weigh is not None:
-            strength = strength * request.weigh(self.directions)[self.knot]
-        broadening = request.broadening
-        if broadening is None:
-            return strength, None
-        shift = got.shift[at, :, self.upper] - got.shift[at, :, self.lower]
-        own = np.einsum("...k,kl,...l->...", shift, broadening.covariance, shift)
-        return strength, own + broadening.hidden_variance(self.directions)[self.knot]
 
 
 def average_changes(average: Average, base: System, moved: Sequence[Move]) -> list[NDArray[np.complex128]] | None:
@@ -260,12 +60,73 @@ def average_changes(average: Average, base: System, moved: Sequence[Move]) -> li
         ]
         got = line_changes(knots, base, moves, average.histograms.grid, 1)
         return None if got is None else [one[0] for one in got]
-    if base.weak or knots.other.any():
-        return None
     if any(_singles_out(one, base, average) for one in moved):
         return None
     even = [one._replace(system=symmetrised(base, one.system, average.symmetry)) for one in moved]
-    return _transforms(average, _Places(average).changes(base, even))
+    coarse = knots.half_error <= GOOD_HALF
+    rings = knots.rings.halved() if coarse else knots.rings
+    places = Places(average, rings.within(knots.rings))
+    if places.few and not base.weak:
+        return _transforms(average, rings, places.by_resonances(base, even))
+    before, after = places.before(), [places.after(one) for one in even]
+    if any(one.gap.shape != before.gap.shape for one in after):
+        return None
+    totals = [np.zeros(len(average.histograms.grid.wavenumbers()), dtype=complex) for _ in moved]
+    if len(knots.branches.pair):
+        here, there = places.by_nodes(before), [places.by_nodes(one) for one in after]
+        shape = (len(moved), *places.shape)
+        found = Moved(*(h if h is None else np.reshape([t[k] - h for t in there], shape) for k, h in enumerate(here)))
+        totals = _transforms(average, rings, found)
+    for one in average.loops:
+        changes = _loop_changes(average, rings, one, before, after)
+        totals = [a + b for a, b in zip(totals, changes, strict=True)]
+    return totals
+
+
+def _loop_changes(
+    average: Average, rings: Rings, summed: Summed, before: KnotData, after: Sequence[KnotData]
+) -> list[NDArray[np.complex128]]:
+    """Return how the transform of a pair of levels without a branch changes, to first order.
+
+    Its sums are smooth in the level difference, so that the difference of two of them on one mesh is a
+    derivative.  The mesh is every second point of the spectrum's own.
+
+    Parameters
+    ----------
+    rings : Rings
+        Of the knots in `before` and `after`.
+    """
+    request, data, row = average.request, average.knots.data, summed.row
+    first, last = data.leaves[summed.leaves].min(), data.leaves[summed.leaves].max() + 1
+    mesh = Mesh(rings.kind, summed.size[0] // 2, max(1, summed.size[1] // 2))
+    fields, leaves = data.fields[first:last], data.leaves[summed.leaves] - first
+
+    def numbers(of: KnotData) -> Array:
+        return np.stack([one[row, first:last] for one in (of.gap, of.slope, of.strength)])
+
+    own = numbers(data).reshape(3 * len(fields), -1)
+    values = average.knots.rings.to_mesh_locally(own, mesh).reshape(3, len(fields), mesh.thetas + 1, -1)
+    land = Landscape.of(fields, leaves, values, mesh)
+    step = field_step(land, request)
+
+    def transform(land: Landscape) -> NDArray[np.complex128]:
+        histograms = Histograms(average.histograms.grid, request.scale)
+        add_looping(histograms, land, request, step)
+        return histograms.transform()
+
+    here = transform(land)
+    out = []
+    for one in after:
+        change = numbers(one) - numbers(before)
+        largest = np.abs(change[0]).max()
+        if not change.any():
+            out.append(np.zeros_like(here))
+            continue
+        # so far that rounding does not matter, and so little that it is a derivative
+        factor = LOOP_SHIFT * FLAT * request.scale / largest if largest > 0 else 1.0
+        moved = rings.to_mesh_locally(factor * change.reshape(3 * len(fields), -1), mesh).reshape(values.shape)
+        out.append((transform(Landscape.of(fields, leaves, values + moved, mesh)) - here) / factor)
+    return out
 
 
 def _singles_out(move: Move, base: System, average: Average) -> bool:
@@ -352,30 +213,36 @@ def _line(lines: Lines, move: Move) -> tuple[Array, Array, Array | None]:
     return field, weight, variance
 
 
-def _transforms(average: Average, moved: Moved) -> list[NDArray[np.complex128]]:
-    """Carry changes at the knots to the mesh and to transforms of histograms."""
+def _transforms(average: Average, coarse: Rings, moved: Moved) -> list[NDArray[np.complex128]]:
+    """Carry changes at the knots of `coarse` to the mesh and to transforms of histograms."""
     knots, request = average.knots, average.request
-    rings, branches = knots.rings, knots.branches
-    to_mesh = rings.to_mesh_locally if knots.local else rings.to_mesh
+    branches = knots.branches
+    to_mesh, changes_to_mesh = (one.to_mesh_locally if knots.local else one.to_mesh for one in (knots.rings, coarse))
     x, y, inverse = continued(branches.field, branches.weight)
-    by_field = np.where(inverse, x / branches.field, 1.0)
+    kept = coarse.within(knots.rings)
+    by_field = np.where(inverse, (x / branches.field)[:, kept], 1.0)
     change_x = moved.field * np.where(inverse, -2 * by_field, 1.0)
-    change_y = np.where(inverse, moved.weight * by_field - 3 * moved.field * y / branches.field, moved.weight)
+    change_y = moved.weight
+    if inverse.any():
+        bend = 3 * moved.field * (y / branches.field)[:, kept]
+        change_y = np.where(inverse, moved.weight * by_field - bend, moved.weight)
     count = len(moved.field)
     into = _Deposit(average.histograms, count)
     for size in sorted(set(average.meshes)):
         rows = [i for i, s in enumerate(average.meshes) if s == size]
-        mesh = Mesh(rings.kind, *size)
+        mesh = Mesh(knots.rings.kind, *size)
         weights = mesh.weights()
         step = max(1, LARGEST // (weights.size * (1 + count)))
         for start in range(0, len(rows), step):
             part = rows[start : start + step]
-            stack = [x[part], y[part], *change_x[:, part], *change_y[:, part]]
-            if branches.variance is not None:
-                stack += [branches.variance[part], *moved.variance[:, part]]
+            stack = [x[part], y[part]]
+            stack += [branches.variance[part]] if branches.variance is not None else []
             on_mesh = to_mesh(np.concatenate(stack), mesh).reshape(-1, len(part), *weights.shape)
+            stack = [change_x[:, part], change_y[:, part]]
+            stack += [moved.variance[:, part]] if branches.variance is not None else []
+            changes = changes_to_mesh(np.concatenate(stack).reshape(-1, len(kept)), mesh)
+            changes = changes.reshape(-1, count, len(part), *weights.shape)
             field, weight = restored(on_mesh[0], on_mesh[1], inverse[part][:, :, None])
-            changes = on_mesh[2 : 2 + count], on_mesh[2 + count : 2 + 2 * count]
             smear = None
             if branches.variance is None:
                 apart = spacing(field, mesh)
@@ -389,9 +256,7 @@ def _transforms(average: Average, moved: Moved) -> list[NDArray[np.complex128]]:
                         *sheet, np.empty(0) if smear is None else smear[k].ravel(), of_sheet, bool(inverse[row, 0])
                     )
                 else:
-                    own = np.maximum(on_mesh[2 + 2 * count, k], 0.0).ravel()
-                    widths = on_mesh[3 + 2 * count :, k].reshape(count, -1)
-                    into.broadened(*sheet, own, (*of_sheet, widths), bool(inverse[row, 0]))
+                    into.broadened(*sheet, np.maximum(on_mesh[2, k], 0.0).ravel(), of_sheet, bool(inverse[row, 0]))
     return into.transforms()
 
 

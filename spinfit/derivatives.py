@@ -18,12 +18,13 @@ from numpy.typing import NDArray
 
 from spinfit.branches import Request
 from spinfit.broadening import Broadening, broadening
-from spinfit.changes import Move, average_changes, line_changes
+from spinfit.changes import average_changes, line_changes
 from spinfit.crystal import moved_directions
 from spinfit.errors import InputError
 from spinfit.exact import Lines
 from spinfit.hamiltonian import System, systems
 from spinfit.lineshape import Shape
+from spinfit.moves import Move
 from spinfit.species import Species
 from spinfit.spectrum import Kept
 from spinfit.sweep import Sample

@@ -60,6 +60,8 @@ class Knots:
     directions, diagonalisations : int
     local : bool
         Whether branches are better continued by splines than by series.
+    half_error : float
+        The error that every second ring alone would make.
     """
 
     rings: Rings
@@ -70,6 +72,7 @@ class Knots:
     directions: int
     diagonalisations: int
     local: bool
+    half_error: float
 
 
 def settle(system: System, symmetry: Symmetry, request: Request) -> Knots:
@@ -335,8 +338,9 @@ class _Trial:
 
     def knots(self, error: float, spent: int) -> Knots:
         """Return the settled result."""
+        directions, half = len(self.nodes.directions), self.half_error()
         return Knots(
-            self.rings, self.data, self.branches, self.other, error, len(self.nodes.directions), spent, self.local
+            self.rings, self.data, self.branches, self.other, error, directions, spent, self.local, half
         )
 
 

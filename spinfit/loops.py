@@ -15,6 +15,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -219,7 +220,32 @@ def _first_size(rings: Rings, fields: Array, gap: Array, slope: Array, request: 
     return sizes[0], sizes[1]
 
 
-def add_pairs(histograms: Histograms, rings: Rings, data: KnotData, rows: Index, request: Request) -> tuple[int, float]:
+class Summed(NamedTuple):
+    """How one pair of levels was summed.
+
+    Attributes
+    ----------
+    row : int
+        Of the data.
+    leaves : ndarray of int
+        Those in which it can be resonant.
+    size : (int, int)
+        Intervals of its mesh.
+    """
+
+    row: int
+    leaves: Index
+    size: tuple[int, int]
+
+
+def add_pairs(
+    histograms: Histograms,
+    rings: Rings,
+    data: KnotData,
+    rows: Index,
+    request: Request,
+    keep: list[Summed] | None = None,
+) -> tuple[int, float]:
     """Add pairs of levels whose resonances come and go, each on a mesh as fine as it needs.
 
     A mesh is accepted when the spectrum of its every second point differs little enough from its
@@ -231,6 +257,8 @@ def add_pairs(histograms: Histograms, rings: Rings, data: KnotData, rows: Index,
         Those of all other resonances, to which these are added.
     rows : ndarray of int
         Rows of `data`.
+    keep : list, optional
+        Gets it appended how each pair was summed.
 
     Returns
     -------
@@ -239,8 +267,8 @@ def add_pairs(histograms: Histograms, rings: Rings, data: KnotData, rows: Index,
     error : float
         Estimated error from the meshes, relative to the top of the spectrum's derivative.
     """
-    chosen = [(row, reachable(data, row)) for row in rows]
-    pairs = [_Pair(rings, data, row, leaves, request) for row, leaves in chosen if len(leaves)]
+    chosen = [(row, leaves) for row in rows if len(leaves := reachable(data, row))]
+    pairs = [_Pair(rings, data, row, leaves, request) for row, leaves in chosen]
     if not pairs:
         return 0, 0.0
     look = _Look(histograms, request)
@@ -258,6 +286,8 @@ def add_pairs(histograms: Histograms, rings: Rings, data: KnotData, rows: Index,
             break
     for pair in pairs:
         histograms.plain += pair.plain
+    if keep is not None:
+        keep += [Summed(row, leaves, pair.size) for (row, leaves), pair in zip(chosen, pairs, strict=True)]
     return used, math.hypot(*(pair.error for pair in pairs)) / top
 
 
@@ -275,9 +305,13 @@ def reachable(data: KnotData, row: int) -> Index:
     return np.array(kept, dtype=np.intp)
 
 
-def add_looping(histograms: Histograms, land: Landscape, request: Request) -> int:
-    """Add one pair of levels; return the number of points used."""
-    step = _step(land, request)
+def add_looping(histograms: Histograms, land: Landscape, request: Request, step: float | None = None) -> int:
+    """Add one pair of levels; return the number of points used.
+
+    `step` is the distance of the fields of the sum in frequency, mT, by default what the pair asks for
+    (`field_step`).
+    """
+    step = field_step(land, request) if step is None else step
     fields, density, used = _in_frequency(land, request, step)
     some = density != 0
     # hides the grain of the fields themselves
@@ -342,7 +376,7 @@ def _density(
     return np.bincount(some // len(at), weights=part, minlength=len(fields))
 
 
-def _step(land: Landscape, request: Request) -> float:
+def field_step(land: Landscape, request: Request) -> float:
     """Return the distance of the fields at which the sum in frequency is taken, mT.
 
     Short beside the line, and so short that at most folds a natural smear is as long.

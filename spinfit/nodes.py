@@ -145,6 +145,11 @@ class FieldNodes:
         if 2 * whole.sum() < partly.sum():  # too few to make up for the further nodes
             self.leaves = inside
 
+    def settle_on(self, fields: Array, leaves: NDArray[np.intp]) -> None:
+        """Take the nodes that were chosen for another system, as in `KnotData`, in place of choosing them."""
+        self.leaves = [tuple(float(fields[i]) for i in leaf) for leaf in leaves]
+        self._ensure([float(x) for x in fields])
+
     def _counts(self) -> NDArray[np.intp]:
         """Return how often the gap of every pair changes sign along the nodes, shape (n, p)."""
         total = np.zeros((len(self.directions), len(self.lower)), dtype=np.intp)

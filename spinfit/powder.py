@@ -21,7 +21,7 @@ from spinfit.exact import Lines, deposit
 from spinfit.hamiltonian import System
 from spinfit.knots import Knots, continued, restored, settle
 from spinfit.lineshape import FieldGrid
-from spinfit.loops import add_pairs
+from spinfit.loops import Summed, add_pairs
 from spinfit.orientations import Mesh, Rings
 from spinfit.resonance import ZERO_FIELD, find
 from spinfit.sheets import SMEAR_MOST, SMEAR_REACH, Histograms, spacing
@@ -64,6 +64,8 @@ class Average:
         Lines where one direction stands for all.
     meshes : list of (int, int)
         Of each branch.
+    loops : list of Summed
+        How pairs of levels without a branch were summed.
     histograms : Histograms
     """
 
@@ -71,6 +73,7 @@ class Average:
     request: Request
     knots: Knots | Lines
     meshes: list[tuple[int, int]]
+    loops: list[Summed]
     histograms: Histograms
 
 
@@ -109,20 +112,22 @@ def powder(
     if symmetry.kind == "point":
         histograms, report, lines = _one_direction(system, request, grid, report)
         if keep is not None:
-            keep.append(Average(symmetry, request, lines, [], histograms))
+            keep.append(Average(symmetry, request, lines, [], [], histograms))
         return histograms, report
     knots = settle(system, symmetry, request)
     histograms = Histograms(grid, request.scale)
     meshes = _sum_branches(knots, request, histograms, report) if len(knots.branches.pair) else []
     error = 0.0
+    loops: list[Summed] = []
     if knots.other.any():
-        points, error = add_pairs(histograms, knots.rings, knots.data, np.flatnonzero(knots.other), request)
+        rows = np.flatnonzero(knots.other)
+        points, error = add_pairs(histograms, knots.rings, knots.data, rows, request, loops)
         report.mesh_points += points
     report.rings, report.estimated_error = knots.rings.rings, math.hypot(knots.error, error)
     report.directions, report.diagonalisations = knots.directions, knots.diagonalisations
     report.pairs, report.looping = len(knots.branches.pair), int(knots.other.sum())
     if keep is not None:
-        keep.append(Average(symmetry, request, knots, meshes, histograms))
+        keep.append(Average(symmetry, request, knots, meshes, loops, histograms))
     return histograms, report
 
 

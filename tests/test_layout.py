@@ -56,6 +56,7 @@ ORDER = (
     "exact",
     "loops",
     "powder",
+    "moves",
     "changes",
     "crystal",
     "alignment",
