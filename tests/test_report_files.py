@@ -6,7 +6,6 @@ import csv
 import io
 import json
 
-import h5py
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -80,35 +79,3 @@ def test_curves_of_one_and_of_several_traces():
     assert several[1][0] == "a"
     assert several[-1][0] == "b"
     assert several[-1][-1] == ""  # this trace has no such species
-
-
-def test_archive_opens_on_the_picture_of_the_fit():
-    """The path a generic viewer follows: NXroot's default, NXentry's default, NXdata's signal and axes."""
-    with h5py.File(io.BytesIO(archive_bytes(outcome(curves("a"), curves("b")))), "r") as root:
-        entry = root[root.attrs["default"]]
-        assert entry.attrs["NX_class"] == "NXentry"
-        data = entry[entry.attrs["default"]]
-        assert data.attrs["NX_class"] == "NXdata"
-        field, measured = data[data.attrs["axes"]], data[data.attrs["signal"]]
-        assert field.attrs["units"] == "mT"
-        np.testing.assert_array_equal(field[()], curves("a").field)
-        np.testing.assert_array_equal(measured[()], curves("a").measured)
-        assert list(data.attrs["auxiliary_signals"]) == ["fitted"]
-        assert {"a", "b", "spinfit.outcome"} == set(root)
-        assert root["b/frequency"].attrs["units"] == "MHz"
-        assert root["b/frequency"][()] == 9432.1
-
-
-def test_archive_holds_everything():
-    found = outcome()
-    with h5py.File(io.BytesIO(archive_bytes(found)), "r") as root:
-        fit = root["spinfit.outcome"]
-        names = fit["parameters/name"].asstr()[()].tolist()
-        assert names == list(found.parameters)
-        np.testing.assert_array_equal(fit["parameters/value"][()], [v.value for v in found.parameters.values()])
-        assert np.isnan(fit["parameters/uncertainty"][names.index("cu.amount")])
-        assert fit["parameters/varied"][names.index("cu.g_par")]
-        assert fit["correlations/matrix"][()].tolist() == found.correlation_matrix.tolist()
-        assert fit["job"].asstr()[()] == found.provenance["job"]
-        assert fit["outcome_json"].asstr()[()] == outcome_text(found)
-        assert root.attrs["spinfit_format"] == 1

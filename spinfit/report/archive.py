@@ -1,115 +1,256 @@
-"""`outcome.h5`: one fit in one file that a generic viewer of HDF5 opens on the picture of the fit.
+"""`outcome.h5`: one fit in one file, with all that it takes to look at it and to repeat it.
 
-Each trace is a NeXus NXentry whose default NXdata is measured and fitted against the field; the
-parameters, the correlations, the job's text and `outcome.json` stand beside them.  Nothing in the
-file depends on when or where it was written.
+Groups, classes and default attributes are those of the open NeXus standard, so that a generic viewer of HDF5 opens
+the file on the plot of the measured and the fitted signal::
+
+    kiln_07                   NXentry, one for each trace (or table of line positions)
+        fit                   NXdata: measured, fitted against the true field
+        residual, parts       NXdata: residual; baseline and each species
+        as_read               NXcollection: field before offset and scale, background
+        frequency, detect ... conditions
+    spinfit.outcome           NXentry
+        fit                   NXprocess: parameters, fractions, correlations, budget, quality, warnings, versions
+        outcome_json, job     NXnote: the texts of outcome.json and of the job
+        input                 NXcollection: NXnote file_1, file_2, ...: the bytes of every file that the job names
+
+Nothing in it depends on when or where it was written, and a digest over the whole content stands at the root.
 """
 
 from __future__ import annotations
 
+import hashlib
 import io
 from collections.abc import Mapping
+from dataclasses import replace
+from typing import Any
 
 import h5py
 import numpy as np
+from numpy.typing import NDArray
 
-from spinfit.files.curves import write_nxdata
+from spinfit import __version__
+from spinfit.files.tree import Attribute, Data, Group, sealed, write_tree
+from spinfit.fitting.data import Job, Lines, Trace
 from spinfit.fitting.outcome import Curves, Outcome, PositionTable, Value
-from spinfit.report.outcome_json import outcome_text
+from spinfit.report.outcome_json import QUALITY_KEYS, outcome_text
 
-FORMAT_VERSION = 1
-"""Of the layout below; readers accept this and every older one."""
+FORMAT_VERSION = 2
+"""Of the layout; readers accept this and every older one.  1 held no input files and no digest."""
+
+FORMAT, KIND = "spinfit_format", "spinfit_kind"
+"""Attributes of the root: the layout's version, and "fit" or "batch"."""
 
 OUTCOME_GROUP = "spinfit.outcome"
 """Where the results stand; no trace can be called so, since names hold no dots."""
 
-_NUMBERS = ("value", "uncertainty", "uncertainty_noise", "uncertainty_field", "start")
-_FLAGS = ("varied", "at_limit", "tied", "derived")
+NUMBERS = ("value", "uncertainty", "uncertainty_noise", "uncertainty_field", "start")
+FLAGS = ("varied", "at_limit", "tied", "derived")
 
 
-def _text(group: h5py.Group, name: str, text: str) -> None:
-    group.create_dataset(name, data=text, dtype=h5py.string_dtype("utf-8"), track_times=False)
+def collection(members: Mapping[str, Group | Data], kind: str = "NXcollection", **attrs: Attribute) -> Group:
+    """Return a group of a NeXus class."""
+    return Group(members, {"NX_class": kind, **attrs})
 
 
-def _texts(group: h5py.Group, name: str, texts: list[str]) -> None:
-    group.create_dataset(name, data=np.array(texts, dtype=object), dtype=h5py.string_dtype("utf-8"), track_times=False)
+def note(content: str | bytes, kind: str, **texts: str) -> Group:
+    """Return an NXnote: a text or bytes with its type of content."""
+    data = content if isinstance(content, str) else np.frombuffer(content, dtype=np.uint8)
+    return collection({"type": Data(kind), **{k: Data(v) for k, v in texts.items()}, "data": Data(data)}, "NXnote")
 
 
-def _numbers(group: h5py.Group, name: str, values: object, *, units: str = "") -> None:
-    data = group.create_dataset(name, data=np.asarray(values), track_times=False)
-    if units:
-        data.attrs["units"] = units
+def _array(values: Any, unit: str = "", **attrs: Attribute) -> Data:
+    return Data(np.asarray(values), {**({"units": unit} if unit else {}), **attrs})
 
 
-def _values(group: h5py.Group, values: Mapping[str, Value]) -> None:
-    """Write parameters as columns of one length; what is missing is NaN."""
-    group.attrs["NX_class"] = "NXcollection"
-    _texts(group, "name", list(values))
-    _texts(group, "unit", [value.unit for value in values.values()])
-    for key in _NUMBERS:
-        column = [getattr(value, key) for value in values.values()]
-        _numbers(group, key, np.array([np.nan if v is None else v for v in column], dtype=float))
-    for key in _FLAGS:
-        _numbers(group, key, np.array([getattr(value, key) for value in values.values()], dtype=bool))
+def nxdata(
+    axis: str, values: NDArray[Any], signals: Mapping[str, Any], *, unit: str, title: str, signal_unit: str = ""
+) -> Group:
+    """Return an NXdata group: the first of `signals` is what a generic viewer plots, the others beside it."""
+    names = list(signals)
+    more: dict[str, Attribute] = {"auxiliary_signals": names[1:]} if len(names) > 1 else {}
+    label = f"{axis.replace('_', ' ')} / {unit}" if unit else axis.replace("_", " ")
+    members: dict[str, Group | Data] = {axis: _array(np.asarray(values, dtype=float), unit, long_name=label)}
+    members |= {name: _array(np.asarray(one, dtype=float), signal_unit) for name, one in signals.items()}
+    members["title"] = Data(title)
+    return collection(members, "NXdata", signal=names[0], axes=[axis], **more)
 
 
-def _trace(entry: h5py.Group, curves: Curves, name: str) -> None:
-    """Write one trace as NXentry: measured and fitted first, then the rest on the same axis."""
-    entry.attrs["NX_class"] = "NXentry"
-    entry.attrs["default"] = "fit"
-    _text(entry, "title", f"{name}: {curves.trace}")
-    signals = {
-        "measured": curves.measured,
-        "fitted": curves.fitted,
+def values_group(values: Mapping[str, Value]) -> Group:
+    """Return parameters as columns of one length; what is missing is NaN."""
+    columns: dict[str, Group | Data] = {
+        "name": Data(list(values)),
+        "unit": Data([value.unit for value in values.values()]),
     }
-    write_nxdata(entry.create_group("fit"), curves.field, signals)
-    write_nxdata(entry.create_group("residual"), curves.field, {"residual": curves.residual})
+    for key in NUMBERS:
+        column = [getattr(value, key) for value in values.values()]
+        columns[key] = _array(np.array([np.nan if v is None else v for v in column], dtype=float))
+    for key in FLAGS:
+        columns[key] = _array(np.array([getattr(value, key) for value in values.values()], dtype=bool))
+    return collection(columns)
+
+
+def _conditions(one: Trace | Lines | None) -> dict[str, Group | Data]:
+    """Return the measuring conditions that the results do not hold."""
+    if one is None:
+        return {}
+    found: dict[str, Group | Data] = {"microwave": Data(one.microwave)}
+    for key, unit in (
+        ("temperature", "K"), ("modulation", "mT"), ("phase", "rad"), ("field_uncertainty", "mT"),
+        ("frequency_uncertainty", "MHz"), ("baseline", ""),
+    ):  # fmt: skip
+        value = getattr(one, key, None)
+        if value is not None:
+            found[key] = _array(value, unit)
+    if isinstance(one, Trace) and one.angle is not None:
+        found["angle"] = _array(one.angle, "rad")
+    return found
+
+
+def _trace(curves: Curves, name: str, trace: Trace | None) -> Group:
+    """Return one trace: measured and fitted first, then the rest on the same axis."""
+
+    def drawn(title: str, signals: Mapping[str, Any]) -> Group:
+        return nxdata("field", curves.field, signals, unit="mT", title=f"{curves.trace}: {title}")
+
     parts = {f"species_{key}": part for key, part in curves.parts.items()}
-    write_nxdata(entry.create_group("parts"), curves.field, {"baseline": curves.baseline, **parts})
-    _numbers(entry, "used", curves.used)
-    _numbers(entry, "frequency", curves.frequency, units="MHz")
-    _numbers(entry, "noise", curves.noise)
-    _numbers(entry, "scale", curves.scale)
-    _text(entry, "detect", curves.detect)
+    members: dict[str, Group | Data] = {
+        "title": Data(f"{name}: {curves.trace}"),
+        "fit": drawn("measured and fitted", {"measured": curves.measured, "fitted": curves.fitted}),
+        "residual": drawn("measured less fitted", {"residual": curves.residual}),
+        "parts": drawn("baseline and species", {"baseline": curves.baseline, **parts}),
+        "used": _array(curves.used),
+        "frequency": _array(float(curves.frequency), "MHz"),
+        "noise": _array(float(curves.noise)),
+        "scale": _array(float(curves.scale)),
+        "detect": Data(curves.detect),
+        **_conditions(trace),
+    }
+    if trace is not None:
+        as_read: dict[str, Group | Data] = {"field": _array(trace.field, "mT")}
+        if trace.background is not None:
+            as_read["background"] = _array(trace.background)
+        members["as_read"] = collection(as_read)
+    weight = getattr(curves, "weight", None)
+    if weight is not None:
+        members["weight"] = _array(weight)
+    return collection(members, "NXentry", default="fit")
 
 
-def _positions(group: h5py.Group, table: PositionTable) -> None:
-    """Write one table of line positions as columns of one length."""
-    group.attrs["NX_class"] = "NXcollection"
-    names = ["angle"] if table.setting.shape[1] == 1 else ["theta", "phi"]
-    for name, column in zip(names, np.rad2deg(table.setting).T, strict=True):
-        _numbers(group, name, column, units="deg")
-    for name in ("measured", "fitted", "residual", "uncertainty"):
-        _numbers(group, name, getattr(table, name), units="mT")
-    for name in ("lower", "upper", "used"):
-        _numbers(group, name, getattr(table, name))
-    _numbers(group, "frequency", table.frequency, units="MHz")
+def _positions(table: PositionTable, name: str, lines: Lines | None) -> Group:
+    """Return one table of line positions; where no single angle tells the lines apart, they are counted."""
+    title = f"{table.name}: measured and fitted fields of lines"
+    signals = {"measured": table.measured, "fitted": table.fitted}
+    if table.setting.shape[1] == 1:
+        degrees = np.rad2deg(table.setting[:, 0])
+        drawn = nxdata("angle", degrees, signals, unit="deg", signal_unit="mT", title=title)
+    else:
+        drawn = nxdata("line", np.arange(1, len(table.measured) + 1), signals, unit="", signal_unit="mT", title=title)
+    members: dict[str, Group | Data] = {"title": Data(f"{name}: {table.name}"), "fit": drawn}
+    members |= {key: _array(getattr(table, key), "mT") for key in ("residual", "uncertainty")}
+    members |= {key: _array(getattr(table, key)) for key in ("lower", "upper", "used")}
+    members |= {"setting": _array(table.setting, "rad"), "drawn": _array(table.drawn)}
+    members |= {"frequency": _array(float(table.frequency), "MHz"), **_conditions(lines)}
+    return collection(members, "NXentry", default="fit")
 
 
-def _fill(root: h5py.File, outcome: Outcome) -> None:
-    root.attrs["NX_class"] = "NXroot"
-    root.attrs["spinfit_format"] = FORMAT_VERSION
-    for curves in outcome.curves:
-        _trace(root.create_group(curves.trace), curves, outcome.name)
-    if outcome.curves:
-        root.attrs["default"] = outcome.curves[0].trace
-    for table in outcome.positions:
-        _positions(root.create_group(table.name), table)
-    fit = root.create_group(OUTCOME_GROUP)
-    fit.attrs["NX_class"] = "NXcollection"
-    _values(fit.create_group("parameters"), outcome.parameters)
-    _values(fit.create_group("fractions"), outcome.fractions)
-    correlations = fit.create_group("correlations")
-    correlations.attrs["NX_class"] = "NXcollection"
-    _texts(correlations, "names", list(outcome.correlation_names))
-    _numbers(correlations, "matrix", np.asarray(outcome.correlation_matrix, dtype=float))
-    _text(fit, "outcome_json", outcome_text(outcome))
-    _text(fit, "job", str(outcome.provenance.get("job", "")))
+def _process(outcome: Outcome) -> Group:
+    """Return what the fit found, in columns."""
+    sources = list(dict.fromkeys(source for parts in outcome.budget.values() for source in parts))
+    budget = [[parts.get(source, np.nan) for source in sources] for parts in outcome.budget.values()]
+    versions = outcome.provenance.get("versions")
+    named = versions if isinstance(versions, Mapping) else {}
+    members: dict[str, Group | Data] = {
+        "program": Data("spinfit"),
+        "version": Data(__version__),
+        "sequence_index": _array(1),
+        "parameters": values_group(outcome.parameters),
+        "fractions": values_group(outcome.fractions),
+        "correlations": collection(
+            {
+                "names": Data(list(outcome.correlation_names)),
+                "matrix": _array(np.asarray(outcome.correlation_matrix, dtype=float)),
+            }
+        ),
+        "budget": collection(
+            {
+                "names": Data(list(outcome.budget)),
+                "sources": Data(sources),
+                "matrix": _array(np.array(budget, dtype=float).reshape(len(outcome.budget), len(sources))),
+            }
+        ),
+        "quality": collection({key: _array(getattr(outcome.quality, key)) for key in QUALITY_KEYS}),
+        "warnings": collection(
+            {
+                "code": Data([one.code for one in outcome.warnings]),
+                "text": Data([one.text for one in outcome.warnings]),
+            }
+        ),
+        "message": Data(outcome.message),
+        "versions": collection({key: Data(str(value)) for key, value in named.items()}),
+    }
+    return collection(members, "NXprocess")
 
 
-def archive_bytes(outcome: Outcome) -> bytes:
-    """Return the bytes of `outcome.h5`; the same outcome gives the same bytes."""
+def _input(files: Mapping[str, bytes]) -> Group:
+    """Return every input file; names are data here, never names of groups."""
+    return collection(
+        {
+            f"file_{number}": note(
+                content, "application/octet-stream", file_name=name, sha256=hashlib.sha256(content).hexdigest()
+            )
+            for number, (name, content) in enumerate(files.items(), 1)
+        }
+    )
+
+
+def archive_tree(outcome: Outcome, job: Job | None = None, more: Mapping[str, Any] | None = None) -> Group:
+    """Return everything on a fit as one tree.
+
+    Parameters
+    ----------
+    outcome : Outcome
+    job : Job, optional
+        What was fitted: its files and conditions are kept, without which the fit cannot be repeated.
+    more : mapping, optional
+        What else stands in outcome.json (profiles, bootstrap).
+    """
+    traces = {one.name: one for one in job.traces} if job else {}
+    lines = {one.name: one for one in job.lines} if job else {}
+    entries: dict[str, Group | Data] = {
+        one.trace: _trace(one, outcome.name, traces.get(one.trace)) for one in outcome.curves
+    }
+    entries |= {one.name: _positions(one, outcome.name, lines.get(one.name)) for one in outcome.positions}
+    first = next(iter(entries), OUTCOME_GROUP)
+    text = str(outcome.provenance.get("job", ""))
+    results: dict[str, Group | Data] = {
+        "title": Data(outcome.name),
+        "traces": Data([one.trace for one in outcome.curves]),
+        "lines": Data([one.name for one in outcome.positions]),
+        "fit": _process(outcome),
+        "outcome_json": note(outcome_text(outcome, more), "application/json", file_name="outcome.json"),
+        "job": note(text, "application/toml", file_name=f"{outcome.name}.toml"),
+        "input": _input(job.files if job else {}),
+    }
+    entries[OUTCOME_GROUP] = collection(results, "NXentry")
+    attrs: dict[str, Attribute] = {"NX_class": "NXroot", "default": first, FORMAT: FORMAT_VERSION, KIND: "fit"}
+    return Group(entries, attrs)
+
+
+def as_entry(root: Group) -> Group:
+    """Return a fit's tree as one entry of a larger archive: what were entries in it become subentries."""
+
+    def lowered(node: Group | Data) -> Group | Data:
+        if isinstance(node, Group) and node.attrs.get("NX_class") == "NXentry":
+            return replace(node, attrs={**node.attrs, "NX_class": "NXsubentry"})
+        return node
+
+    members = {name: lowered(node) for name, node in root.members.items()}
+    return Group(members, {**root.attrs, "NX_class": "NXentry"})
+
+
+def archive_bytes(outcome: Outcome, job: Job | None = None, more: Mapping[str, Any] | None = None) -> bytes:
+    """Return the bytes of `outcome.h5`; the same outcome gives the same bytes (see `archive_tree`)."""
     buffer = io.BytesIO()
     with h5py.File(buffer, "w") as root:
-        _fill(root, outcome)
+        write_tree(root, sealed(archive_tree(outcome, job, more)))
     return buffer.getvalue()

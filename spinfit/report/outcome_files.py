@@ -45,15 +45,16 @@ def outcome_files(
     ----------
     outcome : Outcome
     job : Job, optional
-        What was fitted: the page then compares its ions with free ones.
+        What was fitted: the page then compares its ions with free ones, and the archive keeps its files.
     profiles : sequence of Profile
     resampled : Bootstrap, optional
     pictures : bool
         Whether `DRAWN` is among them.
     """
     curves = positions_text(outcome) if outcome.positions else curves_text(outcome)
+    more = more_record(profiles, resampled)
     contents = {
-        "outcome.json": outcome_text(outcome, more_record(profiles, resampled)).encode(),
+        "outcome.json": outcome_text(outcome, more).encode(),
         "curves.csv": curves.encode(),
     }
     if pictures:
@@ -61,4 +62,4 @@ def outcome_files(
         report = report_text(outcome, job=job, profiles=profiles, resampled=resampled)
         contents |= {"fit.png": picture_bytes(figure), "fit.svg": picture_bytes(figure, "svg")}
         contents["report.html"] = report.encode()
-    return contents | {"outcome.h5": archive_bytes(outcome)}
+    return contents | {"outcome.h5": archive_bytes(outcome, job, more)}

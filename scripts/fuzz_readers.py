@@ -1,0 +1,214 @@
+"""Feed junk to every reader, guided by coverage, and keep whatever breaks their contract.
+
+The contract: a reader returns a valid object or raises one of `spinfit.errors`, on one line; never another exception,
+never a hang, within bounded memory.  Atheris (libFuzzer) makes the input.  Each target runs in a process of its own,
+which is started again when it ends early: the HDF5 library may crash or hang in it, and `spinfit.files.guard` is
+what stands between that and a user.  Such an input counts as a finding unless the guarded reader refuses it.
+
+    python scripts/fuzz_readers.py text jcamp --seconds 600
+"""
+
+from __future__ import annotations
+
+import argparse
+import json
+import re
+import subprocess
+import sys
+import time
+import traceback
+from collections.abc import Callable
+from pathlib import Path
+
+from fuzz_seeds import DICTIONARIES, TABLE, TRACE, seeds_of
+
+from spinfit.errors import SpinfitError
+
+ROOT = Path(__file__).resolve().parents[1]
+TARGETS = ("text", "jcamp", "toml", "ties", "ligands", "hdf5", "archive")
+LONGEST = {"text": 3000, "jcamp": 3000, "toml": 3000, "ties": 300, "ligands": 2000, "hdf5": 16000, "archive": 64000}
+IN_LIBRARY = ("hdf5", "archive")
+"""Targets whose inputs reach a C library."""
+SLOW = 2.0
+"""Seconds of processor time beyond which an input counts as a finding."""
+
+# ---------------------------------------------------------------- the targets
+
+
+def reader_of(name: str) -> Callable[[bytes], object]:
+    """Return a reader, instrumented; it takes the bytes of a file."""
+    import atheris
+
+    with atheris.instrument_imports(include=["spinfit"]):
+        if name == "archive":
+            from spinfit.report.archive_reading import archive_from
+        from spinfit.files.hdf5_child import answer_to
+        from spinfit.files.jcamp import read_jcamp
+        from spinfit.files.job import _job_from, model_from
+        from spinfit.files.reading import assemble
+        from spinfit.files.store import Kept
+        from spinfit.files.text import read_text
+        from spinfit.files.toml_crystal_field import crystal_fields_of
+        from spinfit.files.toml_table import parse_toml
+        from spinfit.files.tree import tree_from
+        from spinfit.fitting.parameters import Binding
+        from spinfit.fitting.ties import compile_ties, evaluate, names_in, parse_tie, slopes
+    from spinfit.files.job import read_model
+
+    kept = {"t.csv": TRACE, "l.csv": TABLE}
+    model = read_model(ROOT / "demo_spectra/models/honey_glass_iron.toml")
+    known = Binding(model.species, model.sample).parameters
+
+    def toml(data: bytes) -> None:
+        tables = parse_toml(data.decode("utf-8", "replace"))
+        if "fit" in tables or "trace" in tables:
+            _job_from(tables, Path("job.toml"), "", Kept(kept))
+        else:
+            model_from(tables)
+
+    def ties(data: bytes) -> None:
+        lines = data.decode("utf-8", "replace").split("\n")
+        tree = parse_tie(lines[0])
+        values = {name: 0.5 for name in names_in(tree)}
+        evaluate(tree, values)
+        slopes(tree, values)
+        compiled = compile_ties(dict(zip(known, lines, strict=False)), known)
+        start = {name: one.value for name, one in known.items()}
+        compiled.apply(start)
+        compiled.gradient(start)
+
+    def question(what: str) -> dict[str, object]:
+        return {"what": what, "file": "f.h5", "path": "", "under": []}
+
+    readers: dict[str, Callable[[bytes], object]] = {
+        "text": lambda data: assemble(read_text(data, "f.csv"), field_unit="mT"),
+        "jcamp": lambda data: assemble(read_jcamp(data, "f.jdx"), field_unit="mT"),
+        "toml": toml,
+        "ties": ties,
+        "ligands": lambda data: crystal_fields_of(parse_toml(data.decode("utf-8", "replace"))),
+        "hdf5": lambda data: answer_to(question("trace"), data),
+        "archive": lambda data: archive_from(tree_from(*answer_to(question("tree"), data)), "f.h5"),
+    }
+    return readers[name]
+
+
+def fault_of(error: BaseException) -> str:
+    """Name a breach by the kind of exception and the last line of the project that it passed."""
+    frames = [f for f in traceback.extract_tb(error.__traceback__) if "spinfit" in f.filename]
+    where = f"{Path(frames[-1].filename).name}:{frames[-1].lineno}" if frames else "?"
+    return f"{type(error).__name__} at {where}"
+
+
+def inside(name: str, folder: Path, flags: list[str]) -> None:
+    """Fuzz one target in this process until libFuzzer ends it."""
+    import atheris
+
+    reader = reader_of(name)
+    seen: set[str] = set()
+
+    def keep(fault: str, data: bytes) -> None:
+        if fault not in seen:
+            seen.add(fault)
+            file = folder / f"{re.sub(r'[^A-Za-z0-9]+', '_', fault)}.bin"
+            if not file.exists():
+                file.write_bytes(data)
+                print(f"FINDING {fault}: {file}", file=sys.stderr, flush=True)
+
+    def one(data: bytes) -> None:
+        begun = time.process_time()
+        try:
+            reader(data)
+        except SpinfitError as error:
+            if "\n" in str(error) or not str(error).strip():
+                keep("a message that is not one line", data)
+        except Exception as error:
+            keep(fault_of(error), data)
+        if time.process_time() - begun > SLOW:
+            keep("slow", data)
+
+    atheris.Setup([sys.argv[0], *flags], one)
+    atheris.Fuzz()
+
+
+# ---------------------------------------------------------------- the driver
+
+_STATUS = re.compile(r"#(\d+)\s+(\w+)\s+cov: (\d+) ft: (\d+)")
+
+
+def fuzz(name: str, folder: Path, seconds: float, runs: int) -> dict[str, object]:
+    """Run one target until its time or its number of inputs is over; return what happened."""
+    corpus, findings = folder / "corpus" / name, folder / "findings" / name
+    for place in (corpus, findings):
+        place.mkdir(parents=True, exist_ok=True)
+    for number, seed in enumerate(seeds_of(name)):
+        (corpus / f"seed_{number:02d}").write_bytes(seed[: LONGEST[name]])
+    words = folder / f"{name}.dict"
+    words.write_text("".join(f'"{word}"\n' for word in DICTIONARIES.get(name, ())), encoding="utf-8")
+    until = time.monotonic() + seconds
+    done, last_new, restarts, coverage = 0, 0, 0, 0
+    while done < runs and (left := until - time.monotonic()) > 1:
+        flags = [
+            f"-max_total_time={int(left)}", f"-runs={runs - done}", f"-max_len={LONGEST[name]}", f"-dict={words}",
+            f"-timeout={3 if name in IN_LIBRARY else 30}", "-rss_limit_mb=3000", f"-artifact_prefix={findings}/",
+            f"-seed={1 + restarts}", "-reload=0", "-len_control=0", str(corpus),
+        ]  # fmt: skip
+        command = [sys.executable, "-W", "ignore", __file__, "--inside", name, "--folder", str(findings), *flags]
+        here = 0
+        with subprocess.Popen(command, cwd=ROOT, stderr=subprocess.PIPE, text=True, errors="replace") as process:
+            assert process.stderr is not None
+            for line in process.stderr:
+                if match := _STATUS.match(line):
+                    here = int(match[1])
+                    if int(match[3]) > coverage and match[2] in ("NEW", "REDUCE", "INITED"):
+                        coverage, last_new = int(match[3]), done + here
+                elif line.startswith(("FINDING", "Traceback", "ERROR", "==")) or "Error" in line:
+                    print(line.rstrip(), flush=True)
+        done += here
+        restarts += 1
+        if here == 0 and process.returncode:
+            print(f"{name}: ended with {process.returncode} before it began", flush=True)
+            break
+    return {
+        "target": name, "inputs": done, "seconds": round(seconds - (until - time.monotonic())), "edges": coverage,
+        "edges last grew at input": last_new, "processes": restarts, "findings": judged(name, findings),
+    }  # fmt: skip
+
+
+def judged(name: str, findings: Path) -> list[str]:
+    """Return the findings that count; what ended the process counts unless the guarded reader refuses it."""
+    counted = []
+    for file in sorted(findings.iterdir()):
+        if file.name.startswith(("crash-", "timeout-", "oom-", "leak-")) and name in IN_LIBRARY:
+            check = f"from spinfit.{'files.reading' if name == 'hdf5' else 'report.archive_reading'} import *\n"
+            check += f"from spinfit.errors import InputError\ntry: {'read' if name == 'hdf5' else 'read_archive'}"
+            check += f"({str(file)!r})\nexcept InputError as e: print(e)\n"
+            done = subprocess.run([sys.executable, "-c", check], capture_output=True, text=True, timeout=600, cwd=ROOT)
+            if done.returncode == 0:
+                continue
+        counted.append(str(file))
+    return counted
+
+
+def main() -> None:
+    """Read the command line."""
+    parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
+    parser.add_argument("targets", nargs="*", metavar="TARGET", help=" ".join(TARGETS))
+    parser.add_argument("--seconds", type=float, default=600, help="for each target (600)")
+    parser.add_argument("--runs", type=int, default=10_000_000, help="inputs for each target at most")
+    parser.add_argument("--folder", type=Path, default=ROOT / "build" / "fuzz", help="corpus and findings stay there")
+    args = parser.parse_args()
+    for name in args.targets:
+        if name not in TARGETS:
+            parser.error(f'there is no target "{name}"; known: {", ".join(TARGETS)}')
+    results = []
+    for name in args.targets or TARGETS:
+        results.append(fuzz(name, args.folder.resolve(), args.seconds, args.runs))
+        print(json.dumps(results[-1]), flush=True)
+    sys.exit(1 if any(result["findings"] for result in results) else 0)
+
+
+if __name__ == "__main__":
+    if sys.argv[1:2] == ["--inside"]:
+        inside(sys.argv[2], Path(sys.argv[4]), sys.argv[5:])
+    else:
+        main()
