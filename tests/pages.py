@@ -29,6 +29,7 @@ class Page(HTMLParser):
         self.open: list[str] = []
         self.seen: list[str] = []
         self.loads: list[str] = []
+        self.links: list[str] = []
         self.texts: list[str] = []
         self.scripts: list[str] = []
         self.attributes: list[tuple[str, str]] = []
@@ -37,9 +38,9 @@ class Page(HTMLParser):
 
     def handle_starttag(self, tag, attrs):
         self.seen.append(tag)
-        self.loads += [
-            value for key, value in attrs if key in ("src", "href", "xlink:href", "action", "data", "srcset")
-        ]
+        wanted = ("src", "xlink:href", "action", "data", "srcset", *(("href",) if tag != "a" else ()))
+        self.loads += [value for key, value in attrs if key in wanted]
+        self.links += [value for key, value in attrs if tag == "a" and key == "href"]
         self.attributes += [(key, value or "") for key, value in attrs]
         if tag == "script":
             self.scripts.append("")
@@ -95,7 +96,7 @@ def browse(page: Path, *, width: int = 1200, height: int = 1600, act: str = "", 
     measure = "document.body.dataset.wider = document.documentElement.scrollWidth - window.innerWidth;"
     if act:
         text = re.sub(r"<meta http-equiv=[^>]*>", "", text)
-        text = text.replace("</body>", f"<script>{act}\n{measure}</script></body>")
+        text = text.replace("</body>", f"<script>{{ {act}\n{measure} }}</script></body>")
     with tempfile.TemporaryDirectory(prefix="browser-") as folder:
         shown = page
         if act:

@@ -288,7 +288,7 @@ def report_text(
         section("Job", f"<pre>{escape(text)}</pre>" if text else ""),
         section("Provenance", _provenance(outcome)),
     ]
-    return document(f"{outcome.name}: fit", body, scripts=("page.js",))
+    return document(f"{outcome.name}: fit", body, scripts=("drawing.js", "page.js"))
 
 
 def _conditions(outcome: Outcome) -> str:

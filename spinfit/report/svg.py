@@ -150,24 +150,26 @@ class Panel:
                 pen = "M"
         self._path("".join(words), kind, curve)
 
-    def _path(self, path: str, kind: str, curve: str = "") -> None:
-        if path:
+    def _path(self, path: str, kind: str, curve: str = "", *, always: bool = False) -> None:
+        if path or always:
             named = f' data-curve="{escape(curve)}"' if curve else ""
             self.shapes.append(f'<path class="{kind}"{named} d="{path}"/>')
 
-    def dots(self, x: ArrayLike, y: ArrayLike, kind: str, *, curve: str = "") -> None:
-        """Draw points, all in one path: their size is the style sheet's stroke width."""
+    def dots(self, x: ArrayLike, y: ArrayLike, kind: str, *, curve: str = "", always: bool = False) -> None:
+        """Draw points, all in one path: their size is the style sheet's stroke width; `always` even if it is empty."""
         pairs = zip(self.across(x), self.down(y), strict=True)
         path = "".join(f"M{coordinate(a)} {coordinate(b)}h0" for a, b in pairs if math.isfinite(a) and math.isfinite(b))
-        self._path(path, f"dots {kind}", curve)
+        self._path(path, f"dots {kind}", curve, always=always)
 
-    def bars(self, x: ArrayLike, low: ArrayLike, high: ArrayLike, kind: str, *, curve: str = "") -> None:
+    def bars(
+        self, x: ArrayLike, low: ArrayLike, high: ArrayLike, kind: str, *, curve: str = "", always: bool = False
+    ) -> None:
         """Draw upright bars from `low` to `high`."""
         triples = zip(self.across(x), self.down(low), self.down(high), strict=True)
         path = "".join(
             f"M{coordinate(a)} {coordinate(b)}V{coordinate(c)}" for a, b, c in triples if math.isfinite(a + b + c)
         )
-        self._path(path, kind, curve)
+        self._path(path, kind, curve, always=always)
 
     def across_line(self, y: float, kind: str) -> None:
         """Draw a level line from edge to edge."""
@@ -187,9 +189,9 @@ class Panel:
             f'height="{coordinate(bottom - top)}"/>'
         )
 
-    def x_axis(self, title: str, *, labels: bool = True, values: Sequence[float] | None = None) -> None:
+    def x_axis(self, title: str, *, labels: bool = True, values: Sequence[float] | None = None, most: int = 7) -> None:
         """Put ticks below; `labels` False leaves their numbers out."""
-        at = ticks(*self.x) if values is None else list(values)
+        at = ticks(*self.x, most) if values is None else list(values)
         bottom = self.top + self.height
         words = [f'<g class="ticks" data-axis="{"x" if labels else "bare"}">']
         for value, written in zip(at, tick_texts(at), strict=True):
@@ -252,4 +254,5 @@ def drawing(width: float, height: float, panels: Sequence[Panel], alt: str, more
     size = f"0 0 {coordinate(width)} {coordinate(height)}"
     inner = "\n".join(panel.drawn() for panel in panels)
     attributes = f" {more}" if more else ""
-    return f'<svg class="drawing" viewBox="{size}" role="img" aria-label="{escape(alt)}"{attributes}>\n{inner}\n</svg>'
+    kind = "drawing trend" if "data-column" in more else "drawing"
+    return f'<svg class="{kind}" viewBox="{size}" role="img" aria-label="{escape(alt)}"{attributes}>\n{inner}\n</svg>'
