@@ -25,10 +25,25 @@ from spinfit.commands import (
     inspect,
     ion,
     lines,
+    quantify,
     quench,
     simulate,
     summary,
 )
 
-_MODULES = (fit, batch, summary, simulate, inspect, calibrate, convert, ion, quench, lines, diagram, completion)
+_MODULES = (
+    fit,
+    batch,
+    summary,
+    simulate,
+    inspect,
+    calibrate,
+    quantify,
+    convert,
+    ion,
+    quench,
+    lines,
+    diagram,
+    completion,
+)
 TABLE: dict[str, ModuleType] = {module.NAME: module for module in _MODULES}

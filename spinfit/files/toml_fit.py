@@ -9,9 +9,10 @@ from typing import Any
 from spinfit.errors import InputError
 from spinfit.files.toml_table import LARGEST_NUMBER, Table, describe, flatten, is_finite, quantity_of
 from spinfit.fitting.parameters import Parameter, expand_vary, members
+from spinfit.fitting.robust import LOSSES
 from spinfit.fitting.ties import compile_ties
 
-FIT_KEYS = ("vary", "start", "limits", "tie")
+FIT_KEYS = ("vary", "start", "limits", "tie", "loss", "loss_scale")
 STARTS = ("given", "auto")
 _EXAMPLE = 'vary = ["cu.g", "cu.width.gaussian"]'
 
@@ -24,6 +25,8 @@ class FitTable:
     start: str = "given"
     limits: Mapping[str, tuple[float, float]] = field(default_factory=dict)
     ties: Mapping[str, str] = field(default_factory=dict)
+    loss: str = "linear"
+    loss_scale: float | None = None
 
 
 def start_of(data: object) -> str:
@@ -54,7 +57,13 @@ def read_fit(data: object, parameters: Mapping[str, Parameter]) -> FitTable:
             found = f'"{name}" is tied and cannot have limits of its own'
             raise InputError(found, "limit what it is tied to", place=f"fit.limits.{name}")
     compiled.apply({name: parameter.value for name, parameter in parameters.items()})
-    return FitTable(vary, start, limits, ties)
+    loss = table.choice("loss", LOSSES) or "linear"
+    scale = table.number("loss_scale")
+    if scale is not None and loss == "linear":
+        raise table.error("loss_scale", "means nothing for least squares", 'write loss = "huber", or take it out')
+    if scale is not None and scale <= 0:
+        raise table.error("loss_scale", f"{scale:g}", "write a positive number of standard deviations, such as 1.345")
+    return FitTable(vary, start, limits, ties, loss, scale)
 
 
 def _vary(table: Table) -> tuple[str, ...]:

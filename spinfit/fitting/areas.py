@@ -17,6 +17,7 @@ from spinfit.fitting.noise import residual_noise
 from spinfit.fitting.outcome import Outcome
 from spinfit.fitting.quantify import FittedArea
 from spinfit.fitting.residuals import Problem, full_view
+from spinfit.fitting.robust import settled_at
 from spinfit.fitting.signals import Simulate
 from spinfit.fitting.uncertainty import tied_slopes
 from spinfit.spectrum import simulate as _engine
@@ -38,6 +39,7 @@ def fitted_area(job: Job, outcome: Outcome, index: int = 0, *, simulate: Simulat
     view = full_view(job.traces, problem.noises, engine_tolerance(problem))
     free = np.array([problem.parameters[n].from_job(outcome.parameters[n].value) for n in problem.names])
     free = np.clip(free, problem.lower, problem.upper)
+    view = settled_at(problem, view, free)
     point = problem.evaluate(free, view)
     total = sum(one.amount for one in point.species)
     known = [name for name in outcome.correlation_names if name in problem.names]

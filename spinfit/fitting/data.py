@@ -38,9 +38,14 @@ class Trace:
     background : ndarray, shape (n,), or None
         Empty-tube signal at `field`.
     baseline : int or None
-        Polynomial order; None for no baseline.
-    group : str or None
-        Traces that share a correction.
+        Polynomial order; None for no baseline, or for a smooth one.
+    smoothness : float or None
+        Of a smooth baseline, mT: of waves of that period it takes half.
+    asymmetry : float or None
+        Of a smooth baseline under an absorption: weight of points above it, 1 - asymmetry of those below.
+    group : str, tuple of str, or None
+        Names of what this trace shares corrections with: of a day, a direction of sweep, an angle read
+        once.  Traces of one first group share a field axis and its uncertainty.
     field_offset, field_scale : float
         mT and 1.
     field_uncertainty, frequency_uncertainty : float
@@ -66,7 +71,9 @@ class Trace:
     start: tuple[float, float, float] | None = None
     background: NDArray[np.float64] | None = None
     baseline: int | None = 1
-    group: str | None = None
+    smoothness: float | None = None
+    asymmetry: float | None = None
+    group: str | tuple[str, ...] | None = None
     field_offset: float = 0.0
     field_scale: float = 1.0
     field_uncertainty: float = 0.0
@@ -109,7 +116,7 @@ class Lines:
     microwave: str = "perpendicular"
     axis: tuple[float, float, float] | None = None
     start: tuple[float, float, float] | None = None
-    group: str | None = None
+    group: str | tuple[str, ...] | None = None
     field_offset: float = 0.0
     field_scale: float = 1.0
     field_uncertainty: float = 0.0
@@ -117,6 +124,18 @@ class Lines:
     file: str = ""
     sha256: str = ""
     notes: tuple[tuple[str, str], ...] = ()
+
+
+def groups_of(one: Trace | Lines) -> tuple[str, ...]:
+    """Every group that a trace or a table of lines belongs to; the first is that of its field axis."""
+    if one.group is None:
+        return ()
+    return (one.group,) if isinstance(one.group, str) else one.group
+
+
+def axis_group(one: Trace | Lines) -> str | None:
+    """The group with which a trace or a table of lines shares its field axis."""
+    return next(iter(groups_of(one)), None)
 
 
 @dataclass(frozen=True, eq=False)
@@ -156,4 +175,6 @@ class Job:
     path: str = ""
     text: str = ""
     lines: tuple[Lines, ...] = ()
+    loss: str = "linear"
+    loss_scale: float | None = None
     files: Mapping[str, bytes] = field(default_factory=dict)

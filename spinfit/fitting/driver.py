@@ -15,6 +15,7 @@ from spinfit.fitting.data import Job
 from spinfit.fitting.lines_outcome import fit_lines
 from spinfit.fitting.outcome import Note, Outcome
 from spinfit.fitting.residuals import Problem, Progress, View, full_view
+from spinfit.fitting.robust import forgiving, is_robust, robust_notes, settle
 from spinfit.fitting.signals import Simulate
 from spinfit.fitting.signs import restored
 from spinfit.fitting.solve import Descent, Goal, Interrupted, descend
@@ -99,10 +100,16 @@ def _search(problem: Problem, rough: View, progress: Progress | None) -> tuple[D
     try:
         if not automatic:
             check_lines(problem, problem.evaluate(problem.start, rough), rough)
+            if is_robust(problem):
+                search.view = forgiving(problem, rough, search.goal, progress)
         found = search.run(problem.start, automatic=automatic)
         view = full_view(problem.job.traces, problem.noises, engine_tolerance(problem))
         fine = descend(problem, view, found.point.free, goal=Goal(central=True), progress=progress)
-        return fine if automatic else restored(problem, view, fine, progress), view, True
+        if not automatic:
+            fine = restored(problem, view, fine, progress)
+        if is_robust(problem):
+            fine, view = settle(problem, view, fine, goal=Goal(), progress=progress)
+        return fine, view, True
     except Interrupted as stop:
         return _best_so_far(problem, rough, search.best, None if stop.point is None else stop.point.free), rough, False
     except KeyboardInterrupt:
@@ -139,6 +146,7 @@ def _conclude(problem: Problem, view: View, descent: Descent, *, finished: bool,
         notes.append(Note("unfinished", "The fit was stopped; the values are the best so far and have no uncertainty."))
         descent = replace(descent, converged=False)
     notes += notes_after(problem, view, descent, spread, at_limit)
+    notes += robust_notes(problem, view)
     notes += field_notes
     notes += [_engine_note(warning) for warning in problem.signals.warnings]
     return outcome_of(

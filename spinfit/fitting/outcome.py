@@ -68,7 +68,7 @@ class Curves:
 
     `field` is the true field (offset and scale applied), mT.  `fitted` includes `baseline`;
     `parts` maps species name to its scaled signal without the baseline; `used` marks the points
-    that were fitted.
+    that were fitted.  `weight` is there after a robust fit only: what each point counted, 0 where not used.
     """
 
     trace: str
@@ -83,6 +83,7 @@ class Curves:
     noise: float
     scale: float
     detect: str = "derivative"
+    weight: NDArray[np.float64] | None = None
 
 
 @dataclass(frozen=True, eq=False)

@@ -19,6 +19,7 @@ from spinfit.fitting.noise import residual_noise
 from spinfit.fitting.outcome import Outcome
 from spinfit.fitting.parameters import members
 from spinfit.fitting.residuals import Point, Problem, Progress, View, full_view
+from spinfit.fitting.robust import settled_at
 from spinfit.fitting.signals import Simulate
 from spinfit.fitting.solve import Goal, descend
 from spinfit.spectrum import simulate as _engine
@@ -88,8 +89,10 @@ def _at(job: Job, outcome: Outcome, simulate: Simulate) -> tuple[Problem, View, 
         raise InputError("the job fits line positions", "profile and bootstrap are for traces", place="lines")
     problem = Problem(job, simulate)
     free = np.array([problem.parameters[n].from_job(outcome.parameters[n].value) for n in problem.names])
-    view = full_view(job.traces, problem.noises, engine_tolerance(problem))
-    return problem, view, np.clip(free, problem.lower, problem.upper)
+    free = np.clip(free, problem.lower, problem.upper)
+    # A robust fit is the least-squares fit of its pseudo-values, which is what is profiled or resampled.
+    view = settled_at(problem, full_view(job.traces, problem.noises, engine_tolerance(problem)), free)
+    return problem, view, free
 
 
 def profile(

@@ -22,6 +22,7 @@ from numpy.typing import NDArray
 from scipy import ndimage
 
 from spinfit.errors import InputError
+from spinfit.fitting.baseline import known_columns, penalty_rows, removing
 from spinfit.fitting.data import Job, Trace
 from spinfit.fitting.noise import noise_level
 from spinfit.fitting.parameters import Binding, Parameter, expand_vary
@@ -53,20 +54,31 @@ class Seen:
         As in the file, mT.
     signal : ndarray, shape (n,)
         Weighted: divided by `noise`.
-    noise : float
-        Of one point, in the signal's unit.
+    noise : float, or ndarray of shape (n,)
+        Of one point, in the signal's unit; of each point where a robust loss weighs them.
     known : ndarray, shape (n, q)
-        Weighted background and baseline columns; `basis` is orthonormal and spans the same.
+        Weighted background and baseline columns.
+    penalty : ndarray, shape (m, q)
+        Of a smooth baseline, weighted; no rows otherwise.
+    basis : ndarray, shape (n, q')
+        1 - basis basis' takes the known columns away: orthonormal where they have no penalty.
     rest : ndarray, shape (n,)
-        The signal less its projection on `basis`.
+        The signal without what `basis` takes away.
+    weight : ndarray, shape (n,), or None
+        Of each point, from a robust loss; None when all count alike.
+    deviation : ndarray, shape (n,), or None
+        Standardised residuals of a robust fit whose pseudo-values the signal holds; else None.
     """
 
     field: Array
     signal: Array
-    noise: float
+    noise: float | Array
     known: Array
+    penalty: Array
     basis: Array
     rest: Array
+    weight: Array | None = None
+    deviation: Array | None = None
 
 
 @dataclass(frozen=True, eq=False)
@@ -82,8 +94,8 @@ class View:
 
     @property
     def linear(self) -> int:
-        """Number of linear coefficients: a scale for each trace, backgrounds and baselines."""
-        return sum(1 + one.basis.shape[1] for one in self.seen)
+        """Number of linear coefficients: a scale for each trace, backgrounds, what baselines amount to."""
+        return sum(1 + round(float(np.sum(one.basis**2))) for one in self.seen)
 
 
 @dataclass(frozen=True, eq=False)
@@ -112,22 +124,14 @@ class Point:
     chi2: float
 
 
-def known_columns(trace: Trace, field: Array, background: Array | None) -> Array:
-    """Background and baseline columns, shape (n, q); Legendre polynomials over the used range."""
-    columns = [] if background is None else [background]
-    if trace.baseline is not None:
-        first, last = trace.field[trace.used][[0, -1]]
-        x = (2 * field - first - last) / max(last - first, np.finfo(float).tiny)
-        columns.extend(np.polynomial.legendre.legvander(x, trace.baseline).T)
-    return np.stack(columns, axis=1) if columns else np.zeros((field.size, 0))
-
-
-def _seen(trace: Trace, field: Array, signal: Array, background: Array | None, noise: float) -> Seen:
-    known = known_columns(trace, field, background) / noise
-    left, singular, _ = np.linalg.svd(known, full_matrices=False)
-    basis = left[:, singular > 1e-10 * singular.max(initial=0.0)]
+def seen_of(trace: Trace, field: Array, signal: Array, background: Array | None, noise: float | Array) -> Seen:
+    """One trace, or what a stage has made of it, with its weights (see `Seen` for the shapes)."""
+    known = known_columns(trace, field, background) / np.reshape(noise, (-1, 1))
+    # What the penalty lets expect of a background does not depend on what becomes of single points.
+    penalty = penalty_rows(trace, field.size) / float(np.min(noise))
+    basis = removing(known, penalty)
     weighted = signal / noise
-    return Seen(field, weighted, noise, known, basis, weighted - basis @ (basis.T @ weighted))
+    return Seen(field, weighted, noise, known, penalty, basis, weighted - basis @ (basis.T @ weighted))
 
 
 def full_view(traces: Sequence[Trace], noises: Sequence[float], tolerance: float) -> View:
@@ -135,7 +139,7 @@ def full_view(traces: Sequence[Trace], noises: Sequence[float], tolerance: float
     seen = []
     for trace, noise in zip(traces, noises, strict=True):
         background = None if trace.background is None else trace.background[trace.used]
-        seen.append(_seen(trace, trace.field[trace.used], trace.signal[trace.used], background, noise))
+        seen.append(seen_of(trace, trace.field[trace.used], trace.signal[trace.used], background, noise))
     return View(tuple(seen), Stage(0.0, tolerance))
 
 
@@ -168,7 +172,7 @@ def broadened_view(traces: Sequence[Trace], noises: Sequence[float], broadening:
 
         background = None if trace.background is None else smooth(trace.background[trace.used])
         averaged = noise / math.sqrt(max(2 * math.sqrt(math.pi) * sigma, 1.0))
-        seen.append(_seen(trace, kept, smooth(signal), background, averaged))
+        seen.append(seen_of(trace, kept, smooth(signal), background, averaged))
     return View(tuple(seen), Stage(broadening, tolerance))
 
 

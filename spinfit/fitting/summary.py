@@ -12,9 +12,11 @@ import scipy
 from numpy.typing import NDArray
 
 from spinfit import __version__
+from spinfit.fitting.baseline import coefficients, known_columns
 from spinfit.fitting.data import Trace
 from spinfit.fitting.outcome import Curves, Note, Outcome, Quality, Value
-from spinfit.fitting.residuals import Point, Problem, Seen, View, known_columns
+from spinfit.fitting.residuals import Point, Problem, Seen, View
+from spinfit.fitting.robust import weights_of
 from spinfit.fitting.signals import true_field
 from spinfit.fitting.solve import Descent
 from spinfit.fitting.uncertainty import Covariances, budget_of, fractions_of, reported_values
@@ -51,8 +53,9 @@ def quality_of(problem: Problem, view: View, descent: Descent, finished: bool) -
 def curves_of(problem: Problem, view: View, point: Point) -> tuple[Curves, ...]:
     """Every trace with its fit, over all its points, used or not."""
     out = []
-    for trace, seen, scale, noise, signal in zip(
-        point.traces, view.seen, point.scales, problem.noises, point.signals, strict=True
+    weights = weights_of(problem, view)
+    for trace, seen, scale, noise, signal, weight in zip(
+        point.traces, view.seen, point.scales, problem.noises, point.signals, weights, strict=True
     ):
         parts = {
             one.name: scale * one.amount * problem.signals.part(one, trace, point.sample, trace.field, view.stage)
@@ -74,9 +77,17 @@ def curves_of(problem: Problem, view: View, point: Point) -> tuple[Curves, ...]:
                 noise=noise,
                 scale=scale,
                 detect=trace.detect,
+                weight=None if weight is None else _laid_out(weight, trace.used),
             )
         )
     return tuple(out)
+
+
+def _laid_out(weight: Array, used: NDArray[np.bool_]) -> Array:
+    """Weights of the used points over all points."""
+    out = np.zeros(used.size)
+    out[used] = weight
+    return out
 
 
 def _baseline(trace: Trace, seen: Seen, scale: float, signal: Array) -> Array:
@@ -84,8 +95,7 @@ def _baseline(trace: Trace, seen: Seen, scale: float, signal: Array) -> Array:
     if seen.known.shape[1] == 0:
         return np.zeros(trace.field.size)
     rest = seen.signal - scale * signal / seen.noise
-    coefficients = np.linalg.lstsq(seen.known, rest, rcond=1e-10)[0]
-    return known_columns(trace, trace.field, trace.background) @ coefficients
+    return known_columns(trace, trace.field, trace.background) @ coefficients(seen.known, seen.penalty, rest)
 
 
 def provenance_of(problem: Problem) -> dict[str, object]:

@@ -96,7 +96,8 @@ def outcome_text(outcome: Outcome, more: Mapping[str, Any] | None = None) -> str
 def _columns(curves: Curves, species: list[str]) -> list[np.ndarray]:
     missing = np.full(curves.field.shape, np.nan)
     parts = [curves.parts.get(name, missing) for name in species]
-    return [curves.field, curves.measured, curves.fitted, curves.residual, *parts]
+    weight = [] if curves.weight is None else [curves.weight]
+    return [curves.field, curves.measured, curves.fitted, curves.residual, *parts, *weight]
 
 
 def _quoted(name: str) -> str:
@@ -107,12 +108,14 @@ def curves_text(outcome: Outcome) -> str:
     """Return the text of `curves.csv`: field_mT, measured, fitted, residual, one column a species.
 
     With more than one trace a column ``trace`` stands in front.  Nine digits keep a field of 400 mT
-    to a millionth of a mT.  A curve that is not there (a fit that was stopped) leaves its cells empty.
+    to a millionth of a mT.  After a robust fit a column ``weight`` stands last: what each point counted.  A
+    curve that is not there (a fit that was stopped) leaves its cells empty.
     """
     species = list(dict.fromkeys(name for curves in outcome.curves for name in curves.parts))
     several = len(outcome.curves) > 1
     out = io.StringIO()
     header = [*(["trace"] if several else []), "field_mT", "measured", "fitted", "residual", *species]
+    header += ["weight"] if any(curves.weight is not None for curves in outcome.curves) else []
     out.write(",".join(map(_quoted, header)) + "\n")
     for curves in outcome.curves:
         front = _quoted(curves.trace) + "," if several else ""
