@@ -27,6 +27,7 @@ LARGEST = {
     "temperature": 1e5,
     "field per voltage": 1e9,
     "voltage": 1e6,
+    "power": 1e9,
 }
 """Sizes in internal units beyond which a quantity is a slip of the pen (40 eV, 1 PHz, 1 kT, ...)."""
 LARGEST_NUMBER = 1e9
@@ -154,7 +155,7 @@ def quantity_of(
 def check_size(values: Iterable[float], kind: str, place: str) -> None:
     """Refuse quantities beyond all reason, which would only overflow later."""
     limit = LARGEST[kind]
-    internal = {"energy": "MHz", "frequency": "MHz", "field": "mT", "angle": "rad", "temperature": "K"}
+    internal = {"energy": "MHz", "frequency": "MHz", "field": "mT", "angle": "rad", "temperature": "K", "power": "mW"}
     for value in values:
         if abs(value) > limit:
             unit = internal.get(kind, "")
@@ -344,6 +345,19 @@ class Table:
         if value is not None and not re.fullmatch(r"[A-Za-z0-9_]+", value, re.ASCII):
             raise self.error(key, f"{describe(value)} cannot be a name", "use letters, digits and _ only")
         return value
+
+    def names(self, key: str) -> str | tuple[str, ...] | None:
+        """Return one text fit for parameter names or, of a list, several; None when the key is missing."""
+        value = self.data.get(key)
+        if not isinstance(value, list):
+            return self.name(key)
+        for entry in value:
+            if not isinstance(entry, str) or not re.fullmatch(r"[A-Za-z0-9_]+", entry, re.ASCII):
+                raise self.error(key, f"{describe(entry)} cannot be a name", "use letters, digits and _ only")
+        if not value or len(set(value)) < len(value):
+            found = "is an empty list" if not value else "names one thing twice"
+            raise self.error(key, found, 'write names such as ["day_2", "down"]')
+        return tuple(value)
 
     def choice(self, key: str, known: Sequence[str]) -> str | None:
         """Return one of the known words, or None when the key is missing."""
