@@ -8,6 +8,7 @@ Each kernel exists twice, in numpy and, where the optional package numba is inst
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 
 import numpy as np
 from numpy.typing import NDArray
@@ -279,18 +280,20 @@ def _compiled_sheet_changes(
                 into[k, row, i + 2] += lower * t3
 
 
-def _compile(function):
+def compiled(function: Callable) -> Callable:
+    """Compile a kernel where numba is installed; return it as it is otherwise."""
+    if njit is None:
+        return function
     try:
         return njit(cache=True)(function)
     except RuntimeError:  # nowhere to keep the compiled code: compile anew in each process
         return njit(function)
 
 
-if COMPILED:
-    _compiled_deposit = _compile(_compiled_deposit)
-    _compiled_smeared = _compile(_compiled_smeared)
-    _compiled_changes = _compile(_compiled_changes)
-    _compiled_sheet_changes = _compile(_compiled_sheet_changes)
+_compiled_deposit = compiled(_compiled_deposit)
+_compiled_smeared = compiled(_compiled_smeared)
+_compiled_changes = compiled(_compiled_changes)
+_compiled_sheet_changes = compiled(_compiled_sheet_changes)
 
 
 def deposit(into: Array, rows: NDArray[np.intp] | np.intp, x: Array, weights: Array) -> None:

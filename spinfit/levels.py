@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 from scipy import constants
 
 from spinfit.hamiltonian import System
+from spinfit.moments import moments
 from spinfit.weak import Felt, felt
 
 Array = NDArray[np.float64]
@@ -122,22 +123,16 @@ def _solve_block(
 ) -> Levels:
     n = system.h0.shape[0]
     m = len(fields)
-    h = np.dot(directions * fields[:, None], system.zeeman.reshape(3, n * n)).reshape(m, n, n)
+    along = directions * fields[:, None]
+    # real times real: half the work of a product of complex matrices
+    h = (along @ np.ascontiguousarray(system.zeeman).view(float).reshape(3, -1)).view(complex).reshape(m, n, n)
     h += system.h0
     energy, vectors = np.linalg.eigh(h)
-    shift = _expectation(vectors, directions * fields[:, None], operators)
+    shift = _expectation(vectors, along, operators)
     seen = felt(system, energy, vectors) if weak else {}
     population = None if state is None else np.einsum("mai,mai->mi", vectors.conj(), state @ vectors).real
-    # rows (i, a) of V+ Z_a, then times V: two matrix products a point give all three components
-    side_by_side = np.ascontiguousarray(system.zeeman.transpose(1, 0, 2)).reshape(n, 3 * n)
-    half = vectors.conj().transpose(0, 2, 1) @ side_by_side
-    if not intensities:
-        along = np.einsum("miak,ma->mik", half.reshape(m, n, 3, n), directions)
-        return Levels(energy, np.einsum("mik,mki->mi", along, vectors).real, None, shift, seen, population)
-    moment = (half.reshape(m, 3 * n, n) @ vectors).reshape(m, n, 3, n)
-    parallel = np.einsum("miaj,ma->mij", moment, directions)
-    slope = np.einsum("mii->mi", parallel).real.copy()
-    return Levels(energy, slope, _intensity(moment, parallel, microwave), shift, seen, population)
+    slope, intensity = moments(vectors, system.zeeman, directions, microwave if intensities else None)
+    return Levels(energy, slope, intensity, shift, seen, population)
 
 
 def _expectation(vectors: NDArray, fields: Array, operators: Operators | None) -> Array:
@@ -152,19 +147,6 @@ def _expectation(vectors: NDArray, fields: Array, operators: Operators | None) -
         out[:, k] = np.einsum("mai,mai->mi", vectors.real, turned.real)
         out[:, k] += np.einsum("mai,mai->mi", vectors.imag, turned.imag)
     return out
-
-
-def _intensity(moment: NDArray, parallel: NDArray, microwave: str | Array) -> Array:
-    if isinstance(microwave, str):
-        along = _square(parallel)
-        if microwave == "parallel":
-            return along
-        return 0.5 * (_square(moment).sum(axis=2) - along)
-    return _square(np.einsum("miaj,ma->mij", moment, microwave))
-
-
-def _square(z: NDArray) -> Array:
-    return z.real**2 + z.imag**2
 
 
 def populations(energy: Array, temperature: float) -> Array:
