@@ -8,6 +8,8 @@ journal, lock
     What is kept on the disk, and how it gets there whole.
 workers, child
     Processes that may hang or die without costing more than the fit they were at.
+records
+    What is put down of each fit.
 work
     One fit from job to folder, in whatever process.
 run

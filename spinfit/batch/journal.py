@@ -50,12 +50,15 @@ class Journal:
             raise InputError(f"cannot be written ({error.strerror or error})", file=self.path) from error
         self._places: dict[str, int] = {}
         self._end = 0
-        self._open()
+        self.catch_up()
 
-    def _open(self) -> None:
-        """Find the last line of each trace, and cut off what was never finished."""
-        self._stream.seek(0)
+    def catch_up(self) -> None:
+        """Take in what is in the file and not yet known, and cut off what was never finished.
+
+        That is everything when the file is opened, and what Ctrl-C kept `append` from noting.
+        """
         with open(self.path, "rb") as stream:
+            stream.seek(self._end)
             for line in stream:
                 if not line.endswith(b"\n"):
                     break
@@ -83,6 +86,8 @@ class Journal:
         lines = [(str(one["trace"]), _line(one)) for one in records]
         if not lines:
             return
+        if self._stream.seek(0, os.SEEK_END) != self._end:
+            self.catch_up()
         content = b"".join(line for _, line in lines)
         try:
             rest = memoryview(content)

@@ -17,10 +17,10 @@ from typing import Any
 
 from spinfit.batch.journal import Journal, Record
 from spinfit.batch.lock import locked
+from spinfit.batch.records import FAILED, GOOD, LATE, POOR, READING, WORK, NoRoom, call, failed, grace
 from spinfit.batch.table import SUMMARY, write_summary
 from spinfit.batch.tasks import Order, Plan, Task
-from spinfit.batch.work import FAILED, GOOD, LATE, POOR, READING, NoRoom, do, failed, grace
-from spinfit.batch.workers import Overrun, WorkerDied, Workers, process_pool
+from spinfit.batch.workers import NoWorkers, Overrun, WorkerDied, Workers, process_pool
 from spinfit.errors import InputError
 from spinfit.files.folders import clear_unfinished
 
@@ -167,6 +167,7 @@ def _make(folder: Path) -> None:
 
 def _table(batch: _Batch) -> tuple[Mapping[str, int], Path]:
     """Write the table; where there is no room for it, the journal still has everything."""
+    batch.journal.catch_up()
     try:
         return write_summary(batch.folder, batch.journal, batch.plan)
     except InputError as error:
@@ -192,7 +193,7 @@ class _Supply:
     def get(self) -> Executor:
         if self.current is None:
             cores = len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count() or 1
-            make = self.given or (lambda: process_pool(cores, preload=("spinfit.batch.work",)))
+            make = self.given or (lambda: process_pool(cores, preload=(WORK,)))
             self.current = make()  # type: ignore[operator]
         return self.current
 
@@ -201,8 +202,6 @@ class _Supply:
 
     def broken(self) -> bool:
         """Drop an executor that takes no more work; say whether there can be another."""
-        if isinstance(self.current, Workers):
-            return True
         if self.is_own and self.current is not None:
             self.current.shutdown(wait=False, cancel_futures=True)
             self.current = None
@@ -279,7 +278,7 @@ class _Batch:
 
     def _hand_out(self, order: Order, supply: _Supply) -> None:
         try:
-            future = supply.get().submit(do, order)
+            future = supply.get().submit(call, order)
         except (BrokenExecutor, RuntimeError) as error:  # broken, or shut down by someone else
             self.again.append(order)
             if not isinstance(error, BrokenExecutor) or not supply.broken():
@@ -326,7 +325,7 @@ class _Batch:
         records: list[Record] = []
         broken = False
         no_room = ""
-        for future in list(futures):
+        for future in [one for one in self.pending if one in futures]:  # in the order of handing out
             order = self.pending.pop(future)
             try:
                 records.append(future.result())
@@ -336,8 +335,10 @@ class _Batch:
                 records.append(self._overrun(order, float(error.args[0])))
             except CancelledError:
                 raise self._stop("the executor dropped its work") from None
+            except NoWorkers as error:
+                raise self._stop(str(error)) from None
             except BrokenExecutor as error:
-                broken = True
+                broken = broken or not isinstance(error, WorkerDied)
                 records += self._died(order, error)
             except Exception as error:  # what an executor makes of a process that died at a call, among others
                 reason = f"the executor gave it up: {type(error).__name__}: {error}"

@@ -12,8 +12,8 @@ from typing import Any
 
 from spinfit.batch.journal import Journal, Record
 from spinfit.batch.outliers import outlying, robust_z
+from spinfit.batch.records import FAILED, GOOD, WAITING
 from spinfit.batch.tasks import Plan
-from spinfit.batch.work import FAILED, GOOD, WAITING
 from spinfit.files.atomic import whole_file, write_text
 from spinfit.units import from_unit, kind_of, to_unit
 
@@ -119,7 +119,7 @@ def _row(record: Record, columns: _Columns, outliers: list[str]) -> dict[str, st
 
 def _names(folder: Path, journal: Journal, plan: Plan) -> Iterator[str]:
     """Names of all rows: those of earlier batches in this folder that are still there, then the plan's."""
-    for name in journal:
+    for name in sorted(journal):
         if plan.get(name) is None and (folder / name).is_dir():
             yield name
     for task in plan:
@@ -164,6 +164,10 @@ def write_summary(folder: Path, journal: Journal, plan: Plan) -> tuple[dict[str,
         for number, record in enumerate(_records(folder, journal, plan)):
             named = [name for name, which in outliers.items() if which[number] and record["status"] != FAILED]
             writer.writerow(_row(record, columns, named))
-    known = {name: unit for name, unit in CONDITION_UNITS.items() if name in columns.conditions} | {"seconds": "s"} | columns.units
+    known = (
+        {name: unit for name, unit in CONDITION_UNITS.items() if name in columns.conditions}
+        | {"seconds": "s"}
+        | columns.units
+    )
     write_text(folder / UNITS, json.dumps(known, indent=1, ensure_ascii=False) + "\n")
     return counts, path

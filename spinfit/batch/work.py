@@ -15,6 +15,7 @@ from typing import Any
 
 from spinfit import __version__
 from spinfit.batch.child import allow, stop_after
+from spinfit.batch.records import GOOD, LATE, POOR, READING, NoRoom, failed, grace
 from spinfit.batch.tasks import Order
 from spinfit.errors import InputError
 from spinfit.files.folders import remove_files, write_folder
@@ -27,27 +28,13 @@ from spinfit.fitting.outcome import Outcome
 from spinfit.report.outcome_files import DRAWN, NUMBERS, outcome_files
 from spinfit.report.outcome_json import clean
 
-READING = 120.0
-"""Seconds after which reading a job's files is given up: a damaged HDF5 file can hang its library for good."""
 JOB = "job.toml"
 OWN = (*NUMBERS, *DRAWN, JOB)
 """Every file that a fit may leave in its folder."""
 
-GOOD, POOR, LATE, FAILED, WAITING = "good", "not converged", "time limit", "failed", "not run"
-"""What can have become of a trace."""
-
 _NO_ROOM = (errno.ENOSPC, errno.EDQUOT, errno.EROFS, errno.EFBIG)
 # matplotlib and h5py are not made for several threads at once; fits on a cluster may share a process.
 _drawing = threading.Lock()
-
-
-class NoRoom(Exception):
-    """There is no room to write to: no later fit of the batch could be kept either."""
-
-
-def grace(limit: float) -> float:
-    """Return the seconds after which a fit that does not stop by itself at its time limit is killed."""
-    return limit + max(5.0, 0.5 * limit)
 
 
 class _Shown(Folder):
@@ -81,21 +68,6 @@ class _Best:
         self.values = dict(values)
         if time.monotonic() > self.end:
             raise KeyboardInterrupt
-
-
-def failed(name: str, free: Mapping[str, str], digest: str, kind: str, reason: str) -> dict[str, Any]:
-    """Return the record of a fit that came to nothing.
-
-    `kind` is "input" where the same files would fail again; anything else is worth another try.
-    """
-    return {
-        "trace": name,
-        "hash": digest,
-        "status": FAILED,
-        "kind": kind,
-        "reason": " ".join(reason.split())[:500],
-        "free": dict(free),
-    }
 
 
 def do(order: Order) -> dict[str, Any]:
@@ -148,7 +120,7 @@ def _done(order: Order) -> dict[str, Any]:
         return lost("fault", f"a fault of spinfit: {type(error).__name__}: {error}")
     try:
         with _drawing:
-            contents = outcome_files(outcome, pictures=order.pictures)
+            contents = outcome_files(outcome, job=job, pictures=order.pictures)
     except Exception as error:
         return lost("fault", f"a fault of spinfit: {type(error).__name__}: {error}")
     try:

@@ -36,6 +36,10 @@ class WorkerDied(BrokenExecutor):
     """The process that was at this call ended: a crash, or somebody or something killed it."""
 
 
+class NoWorkers(BrokenExecutor):
+    """No process can be had: the call was not begun, and no other will be."""
+
+
 class Overrun(Exception):
     """The call took longer than it had asked for and its process was killed; the argument is those seconds."""
 
@@ -168,7 +172,7 @@ class Workers(Executor):
             for one in self._processes:
                 one.end(patience=0.0 if self._killing else _LEAVE)
             self._processes.clear()
-            self._fail_waiting(WorkerDied("ended with the batch"))
+            self._fail_waiting(NoWorkers("ended with the batch"))
 
     def _step(self) -> bool:
         """Hand out calls, wait for something to happen, see to it; False when all is done."""
@@ -209,7 +213,7 @@ class Workers(Executor):
             except OSError as error:  # no more processes or memory: those that run have to do
                 if self._processes:
                     return
-                self._fail_waiting(WorkerDied(f"no process can be started ({error.strerror or error})"))
+                self._fail_waiting(NoWorkers(f"no process can be started ({error.strerror or error})"))
             starting += 1
 
     def _give(self, one: _Process, call: _Call) -> None:
@@ -256,7 +260,7 @@ class Workers(Executor):
             self._false_starts += 1
             if self._false_starts >= _MOST_FALSE_STARTS:
                 why = self._complaint or described(code)
-                self._fail_waiting(WorkerDied(f"processes end before they begin to work ({why})"))
+                self._fail_waiting(NoWorkers(f"processes end before they begin to work ({why})"))
 
     def _fail_waiting(self, why: BaseException) -> None:
         with self._lock:

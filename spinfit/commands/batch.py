@@ -124,10 +124,11 @@ def _workers(text: str | None) -> int:
 def _executor(args: argparse.Namespace) -> Iterator[tuple[Any, int | None]]:
     """Give where the fits run, and how many are handed out at a time."""
     if args.cluster is None:
+        from spinfit.batch.records import WORK
         from spinfit.batch.workers import process_pool
 
         count = _workers(args.workers)
-        yield lambda: process_pool(count, preload=("spinfit.batch.work",)), None
+        yield lambda: process_pool(count, preload=(WORK,)), None
         return
     from spinfit.commands.cluster import connected
 

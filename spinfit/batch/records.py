@@ -1,0 +1,49 @@
+"""What is put down of each fit, and the call that a worker gets; light, so that the parent of a batch stays small.
+
+What fits, draws and writes (`spinfit.batch.work`) is loaded in the workers alone.
+"""
+
+from __future__ import annotations
+
+import importlib
+from collections.abc import Mapping
+from typing import Any
+
+from spinfit.batch.tasks import Order
+
+WORK = "spinfit.batch.work"
+
+READING = 120.0
+"""Seconds after which reading a job's files is given up: a damaged HDF5 file can hang its library for good."""
+
+GOOD, POOR, LATE, FAILED, WAITING = "good", "not converged", "time limit", "failed", "not run"
+"""What can have become of a trace."""
+
+
+class NoRoom(Exception):
+    """There is no room to write to: no later fit of the batch could be kept either."""
+
+
+def grace(limit: float) -> float:
+    """Return the seconds after which a fit that does not stop by itself at its time limit is killed."""
+    return limit + max(5.0, 0.5 * limit)
+
+
+def failed(name: str, free: Mapping[str, str], digest: str, kind: str, reason: str) -> dict[str, Any]:
+    """Return the record of a fit that came to nothing.
+
+    `kind` is "input" where the same files would fail again; anything else is worth another try.
+    """
+    return {
+        "trace": name,
+        "hash": digest,
+        "status": FAILED,
+        "kind": kind,
+        "reason": " ".join(reason.split())[:500],
+        "free": dict(free),
+    }
+
+
+def call(order: Order) -> dict[str, Any]:
+    """Do an order in the process where this is called (see `spinfit.batch.work.do`)."""
+    return importlib.import_module(WORK).do(order)
