@@ -20,7 +20,7 @@ from spinfit.files.toml_sample import DEFAULT_TOLERANCE, read_sample, read_sweep
 from spinfit.files.toml_species import read_species
 from spinfit.files.toml_table import Given, Table, load_toml, parse_toml
 from spinfit.files.toml_trace import read_lines, read_trace
-from spinfit.fitting.data import Job, Lines, Trace
+from spinfit.fitting.data import Job, Lines, Trace, groups_of
 from spinfit.fitting.parameters import Binding, expand_vary
 from spinfit.species import Species
 from spinfit.sweep import Sample, Sweep
@@ -188,8 +188,9 @@ def _data(
         names[one.name] = "a trace"
         found.append(one)
     for one, (place, _, _) in zip(found, entries, strict=True):
-        if one.group in names:
-            text = f'"{one.group}" is the name of {names[one.group]} already'
+        taken = next((group for group in groups_of(one) if group in names), None)
+        if taken is not None:
+            text = f'"{taken}" is the name of {names[taken]} already'
             raise InputError(text, "choose another name for the group", place=f"{place}.group")
     traces = tuple(one for one in found if isinstance(one, Trace))
     return traces, tuple(one for one in found if isinstance(one, Lines))

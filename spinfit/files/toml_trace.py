@@ -20,6 +20,7 @@ from spinfit.files.reading import Assembled, assemble, read_content
 from spinfit.files.store import Store
 from spinfit.files.toml_sample import conditions, parallel, plane
 from spinfit.files.toml_table import Given, Table, describe
+from spinfit.fitting.baseline import shortest_smoothness
 from spinfit.fitting.data import Lines, Trace
 from spinfit.sweep import Sample
 from spinfit.units import UNITS, from_unit, to_unit
@@ -31,12 +32,14 @@ SHARED_KEYS = (
 TRACE_KEYS = (
     *SHARED_KEYS,
     *("field_unit", "modulation", "detect", "angle", "direction", "fit_range", "exclude", "background"),
-    *("baseline", "columns", "field_calibration", "phase"),
+    *("baseline", "smoothness", "asymmetry", "columns", "field_calibration", "phase"),
 )
 LINES_KEYS = SHARED_KEYS
 DIRECTIONS = ("both", "up", "down")
 FIELD_UNITS = (*UNITS["field"], *UNITS["voltage"])
 HIGHEST_ORDER = 20
+SMOOTH = ("smooth", "asymmetric")
+_ASYMMETRY = 0.05
 
 _SHOWN = {"frequency": "GHz", "temperature": "K", "modulation": "mT", "angle": "deg"}
 _KIND = {"frequency": "frequency", "temperature": "temperature", "modulation": "field", "angle": "angle"}
@@ -111,7 +114,7 @@ class _Source:
             raise table.error("field_scale", f"{scale:g}", "a scale is positive, near 1")
         return {
             **turning,
-            "group": table.name("group"),
+            "group": table.names("group"),
             "field_offset": table.quantity("field_offset", "field"),
             "field_scale": scale,
             "field_uncertainty": table.positive("field_uncertainty", "field", zero=True),
@@ -148,7 +151,7 @@ def read_trace(place: str, data: object, index: int, *, store: Store, sample: Sa
         right = 'it needs [sample] form = "crystal" or "aligned": take angle out'
         raise table.error("angle", f"means nothing for a {sample.form}", right)
     phase = table.quantity("phase", "angle")
-    baseline = _baseline(table)
+    under_it = _baseline(table)
     source = _Source(table, store)
     found = {key: source.merged(key, value) for key, value in own.items()}
     found["angle"] = _angle(source, sample, angle)
@@ -166,7 +169,7 @@ def read_trace(place: str, data: object, index: int, *, store: Store, sample: Sa
         signal=swept.signal,
         used=swept.used,
         background=under,
-        baseline=baseline,
+        **_baseline_on(table, under_it, swept, found["detect"] or "derivative"),
         file=source.written,
         sha256=source.raw.sha256,
         notes=tuple(dict.fromkeys((*source.notes, *swept.notes))),
@@ -222,14 +225,41 @@ def _reading(table: Table) -> dict[str, Any]:
     }
 
 
-def _baseline(table: Table) -> int | None:
-    """Return the order of the baseline's polynomial; None for no baseline."""
+def _baseline(table: Table) -> int | str | None:
+    """Return the order of the baseline's polynomial, "smooth" or "asymmetric"; None for no baseline."""
     value = table.data.get("baseline", 1)
+    for key, kinds in (("smoothness", SMOOTH), ("asymmetry", SMOOTH[1:])):
+        if key in table and value not in kinds:
+            raise table.error(key, f"means nothing without a {kinds[-1]} baseline", f'write baseline = "{kinds[0]}"')
     if value == "none":
         return None
+    if value in SMOOTH:
+        return str(value)
     if isinstance(value, str):
-        raise table.error("baseline", describe(value), 'write the order of a polynomial, such as 1, or "none"')
+        right = 'write the order of a polynomial, such as 1, or "none", "smooth", "asymmetric"'
+        raise table.error("baseline", describe(value), right)
     return table.integer("baseline", 0, HIGHEST_ORDER) if "baseline" in table else 1
+
+
+def _baseline_on(table: Table, kind: int | str | None, swept: Assembled, detect: str) -> dict[str, Any]:
+    """Return what a `Trace` holds of its baseline; a smooth one is looked at where the sweep is."""
+    if kind not in SMOOTH:
+        return {"baseline": kind}
+    used = swept.field[swept.used]
+    length = float(used[-1] - used[0])
+    smoothness = table.positive("smoothness", "field") or length
+    if kind == "asymmetric" and detect != "absorption":
+        found = f"a {detect} has lines on both sides of its baseline"
+        raise table.error("baseline", found, 'write baseline = "smooth"; asymmetric is for detect = "absorption"')
+    least = shortest_smoothness(length, used.size)
+    if smoothness < least:
+        found = f"{smoothness:g} mT is too short for {used.size} points over {length:g} mT"
+        raise table.error("smoothness", found, f"write {least:.2g} mT or more, and more than the lines are wide")
+    asymmetry = table.number("asymmetry")
+    if asymmetry is not None and not 0.001 <= asymmetry <= 0.5:
+        raise table.error("asymmetry", f"{asymmetry:g}", "write 0.001 to 0.5, the weight of points above the baseline")
+    weight = (asymmetry or _ASYMMETRY) if kind == "asymmetric" else None
+    return {"baseline": None, "smoothness": smoothness, "asymmetry": weight}
 
 
 def _angle(source: _Source, sample: Sample, own: float | None) -> float | None:

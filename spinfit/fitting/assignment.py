@@ -37,6 +37,8 @@ _WEAKNESS = 1.0
 _FORBIDDEN = 1e6
 # How far above the highest measured field resonances are looked for.
 _BEYOND = 1.25
+# MHz/mT: a gap that changes less is not followed to a resonance.
+_FLAT = 1.0
 # mT: lines of two sites this close are one.
 _SAME = 1e-6
 
@@ -182,6 +184,39 @@ def assign(found: Calculated, table: Lines, scatter: Array) -> Indices:
         good = cost[taken, given] < _FORBIDDEN
         out[rows[taken[good]]] = columns[given[good]]
     return out
+
+
+def distances(species: Sequence[Species], sample: Sample, table: Lines) -> tuple[Array, Array]:
+    """How far each measured field is from a resonance of each pair of levels, to first order.
+
+    Returns
+    -------
+    distance : ndarray, shape (lines, pairs)
+        (gap - h nu) / slope at the measured field, mT, for the pairs of every site, system and species.
+    cost : ndarray, shape (lines, pairs)
+        In squared scatters: what a weak transition costs.
+    """
+    field, wave = directions(sample, table)
+    count, sites = field.shape[:2]
+    measured = np.abs(true_field(table, table.field))
+    distance, weight = [], []
+    for one, several in zip(species, systems_of(species), strict=True):
+        for system in several:
+            lower, upper = np.triu_indices(len(system.h0), 1)
+            along = wave if isinstance(wave, str) else wave.reshape(-1, 3)
+            got = solve(system, field.reshape(-1, 3), np.repeat(measured, sites), microwave=along)
+            gap = got.energy[:, upper] - got.energy[:, lower] - table.frequency
+            slope = np.maximum(np.abs(got.slope[:, upper] - got.slope[:, lower]), _FLAT)
+            distance.append((gap / slope).reshape(count, -1))
+            strength = got.intensity[:, lower, upper] / slope * system.weight * abs(one.amount)
+            if table.levels is not None:
+                for side, own in ((0, lower), (1, upper)):
+                    label = np.repeat(table.levels[:, side], sites)[:, None]
+                    strength = np.where((label > 0) & (label != own + 1), 0.0, strength)
+            weight.append(strength.reshape(count, -1))
+    all_weights = np.concatenate(weight, axis=1)
+    relative = all_weights / np.maximum(all_weights.max(axis=1, keepdims=True), 1e-300)
+    return np.concatenate(distance, axis=1), -_WEAKNESS * np.log(np.maximum(relative, _WEAKEST))
 
 
 def gaps(species: Sequence[Species], sample: Sample, table: Lines, which: Calculated, rows: Indices) -> Array:

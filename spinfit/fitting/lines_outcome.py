@@ -11,7 +11,8 @@ from numpy.typing import NDArray
 
 from spinfit.errors import InputError
 from spinfit.fitting.assignment import at_settings, calculated, settings
-from spinfit.fitting.data import Job
+from spinfit.fitting.data import Job, axis_group
+from spinfit.fitting.line_search import LineSearch
 from spinfit.fitting.outcome import Note, Outcome, PositionTable, Quality
 from spinfit.fitting.positions import OUTLIER, LineProblem, State, kept_lines, standard_scatter
 from spinfit.fitting.residuals import Problem, Progress
@@ -55,7 +56,7 @@ def fit_lines(job: Job, *, progress: Progress | None, simulate: Simulate, wide: 
     problem = Problem(job, simulate)
     lines = LineProblem(problem, progress)
     try:
-        state, common, converged = lines.search(wide=wide)
+        state, common, converged = LineSearch(lines).run(wide=wide)
         finished = True
         state, kept, scatter, converged = _polished(lines, state, common, converged)
     except KeyboardInterrupt:
@@ -147,14 +148,14 @@ def _spread(
     factor = excess if excess > 1 + _EXCESS * math.sqrt(2 / freedom) else 1.0
     rows, sources = [], []
     whole = np.cumsum([0] + [table.field.size for table in state.tables])
-    for group in dict.fromkeys(table.group for table in state.tables):
+    for group in dict.fromkeys(map(axis_group, state.tables)):
         for source, change, key in (
             ("field axis", lines.field_change(state), "field_uncertainty"),
             ("frequency", lines.frequency_change(state), "frequency_uncertainty"),
         ):
             shift = np.zeros(state.residual.size)
             for n, table in enumerate(state.tables):
-                if table.group == group:
+                if axis_group(table) == group:
                     shift[whole[n] : whole[n + 1]] = getattr(table, key)
             if shift.any():
                 row = np.zeros(count)

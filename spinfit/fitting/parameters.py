@@ -19,7 +19,7 @@ from dataclasses import dataclass, replace
 from typing import Any
 
 from spinfit.errors import InputError, nearest
-from spinfit.fitting.data import Trace
+from spinfit.fitting.data import Trace, groups_of
 from spinfit.fitting.slots import CORRECTIONS, FREE, Path, Slot, sample_slots, species_slots, trace_slots
 from spinfit.ion.species_field import spin_of
 from spinfit.species import Species
@@ -114,7 +114,7 @@ def _changed(child: Any, change: Any) -> Any:
 def _check_names(model: _Model) -> None:
     """Refuse things of the same name, and names that could not stand in a parameter's."""
     kinds = [(s.name, "a species") for s in model.species] + [(t.name, "a trace") for t in model.traces]
-    groups = dict.fromkeys(t.group for t in model.traces if t.group is not None)
+    groups = dict.fromkeys(group for trace in model.traces for group in groups_of(trace))
     known = {"sample": "the sample"}
     for name, what in kinds + [(group, "a group of traces") for group in groups]:
         if not WORD.fullmatch(name):
@@ -220,7 +220,7 @@ class Binding:
         traces = list(model.traces)
         for (how, which, key), value in corrections:
             for n, trace in enumerate(traces):
-                if (n if how == "turn" else trace.group) == which:
+                if n == which if how == "turn" else which in groups_of(trace):
                     traces[n] = _correct(trace, str(key), value)
         return model.species, model.sample, tuple(traces)
 

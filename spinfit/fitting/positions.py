@@ -2,8 +2,8 @@
 
 Each residual is a measured field less the calculated resonance field it is assigned to
 (`spinfit.fitting.assignment`), divided by its uncertainty or, where the table gives none, by the
-scatter that the fit itself finds.  Lines are assigned anew at every evaluation, with a scatter that
-shrinks from descent to descent, so that a rough start first finds the pattern and then the lines.
+scatter that the fit itself finds.  Lines are assigned anew at every evaluation; how a rough start finds
+the pattern is in `spinfit.fitting.line_search`.
 
 Derivatives: a resonance field follows a parameter p as dB/dp = -(dG/dp) / (dG/dB), with G the gap of
 the two levels; dG/dp at fixed field is taken by differences of exact eigenvalues.
@@ -31,16 +31,8 @@ Indices = NDArray[np.intp]
 
 # How far in typical steps a parameter is moved for a difference of eigenvalues.
 _STEP = 1e-2
-# Starts tried by their cost alone, and those of them that are descended from.
-_SEEDS, _DESCENTS = 60, 3
-# How far seeds lie from the start: numbers, fields and angles in typical steps, energies by a factor.
-_SPAN, _FACTOR = 8.0, 1.8
-# mT: scatter with which a search begins, and which it shrinks towards.
-_COARSE = 20.0
-_FINEST = 1e-6
 # A residual beyond this many times the scatter is an outlier: one normal line in 150 000.
 OUTLIER = 4.5
-_ROUNDS = 12
 
 
 @dataclass(frozen=True, eq=False)
@@ -155,7 +147,7 @@ class LineProblem:
         """d(residual)/d(shift of the field axis): 1 for every line that has a partner."""
         return np.where(state.free_lines, 0.0, 1.0)
 
-    def descend(self, start: Array, scatter: Array, *, kept: NDArray[np.bool_] | None = None, loss: str = "soft_l1"):
+    def descend(self, start: Array, scatter: Array, *, kept: NDArray[np.bool_] | None = None, loss: str = "cauchy"):
         """Minimise from a start with lmfit; lines that are not `kept` do not count."""
         problem = self.problem
         kept = np.ones(scatter.size, dtype=bool) if kept is None else kept
@@ -189,75 +181,6 @@ class LineProblem:
             method="least_squares", jac=jacobian, loss=loss, ftol=1e-10, xtol=1e-9, gtol=1e-12, max_nfev=60
         )
         return self.evaluate(free_of(result.params), scatter), bool(result.success)
-
-    def search(self, *, wide: bool) -> tuple[State, float, bool]:
-        """Find the pattern from a rough start.
-
-        Parameters
-        ----------
-        wide : bool
-            Whether other starts around the given one are tried as well.
-
-        Returns
-        -------
-        state : State
-        common : float
-            Robust scatter of the lines, mT.
-        converged : bool
-        """
-        starts = [self.problem.start]
-        if wide:
-            seeds = [self.problem.start, *self._seeds()]
-            coarse = np.full(self.given.size, _COARSE / 2)
-            costs = []
-            for seed in seeds:
-                try:
-                    costs.append(self.evaluate(seed, coarse).cost)
-                except InputError:
-                    costs.append(math.inf)
-            starts += [seeds[k] for k in np.argsort(costs, kind="stable")[:_DESCENTS] if k > 0]
-        best = None
-        for start in starts:
-            found = self._annealed(start)
-            if found is not None and (best is None or found[1] < best[1] * (1 - 1e-6)):
-                best = found
-        if best is None:
-            raise InputError("the model has no line at the start", "change g or D", place="species")
-        return best
-
-    def _seeds(self) -> list[Array]:
-        """Starts around the given one, always the same."""
-        rng = np.random.default_rng(1)
-        out = []
-        for draw in rng.uniform(-1, 1, size=(_SEEDS, self.problem.start.size)):
-            free = self.problem.start.copy()
-            for k, name in enumerate(self.problem.names):
-                energy = self.problem.parameters[name].kind == "energy" and free[k] != 0
-                free[k] = free[k] * _FACTOR ** draw[k] if energy else free[k] + _SPAN * self.steps[k] * draw[k]
-            out.append(np.clip(free, self.problem.lower, self.problem.upper))
-        return out
-
-    def _annealed(self, start: Array) -> tuple[State, float, bool] | None:
-        """Descend with a scatter that shrinks to what the lines themselves show."""
-        common, free, found = _COARSE, start, None
-        for _ in range(_ROUNDS):
-            try:
-                state, converged = self.descend(free, np.full(self.given.size, common))
-            except InputError:
-                return found
-            free = state.free
-            shown = max(robust_scatter(state.residual, free.size), _FINEST)
-            found = (state, shown, converged)
-            if shown > 0.7 * common:
-                break
-            common = max(shown, 0.2 * common)
-        return found
-
-
-def robust_scatter(residual: Array, varied: int) -> float:
-    """Standard deviation by the median size, which outliers do not move, with the degrees of freedom used up."""
-    share = max(residual.size - varied, 1) / residual.size
-    return float(1.4826 * np.median(np.abs(residual)) / math.sqrt(share))
 
 
 def kept_lines(state: State, scatter: Array) -> NDArray[np.bool_]:

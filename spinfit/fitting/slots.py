@@ -14,6 +14,7 @@ from dataclasses import dataclass, replace
 from typing import Any
 
 from spinfit.errors import InputError
+from spinfit.fitting.data import groups_of
 from spinfit.ion.species_field import FACTORS, LARGEST_FACTOR, SpeciesField
 from spinfit.species import Exchange, Nucleus, Species, Spin
 from spinfit.sweep import Sample
@@ -195,9 +196,19 @@ def sample_slots(sample: Sample) -> Iterator[Slot]:
     if sample.form == "crystal":
         yield from _tilt("sample.tilt", ("sample", "tilt"))
         yield Slot("sample.angle_zero", ("sample", "angle_zero"), "angle", math.radians(1))
+        for k, ending in enumerate("xyz" if sample.microwave_axis is not None else ""):
+            name = f"sample.microwave_axis_{ending}"
+            yield Slot(name, ("sample", "microwave_axis", k), "number", 0.05, refused=_only_direction(sample, k))
     if sample.form == "aligned":
         yield Slot("sample.order", ("sample", "order"), "number", 0.05, limits=(-0.5, 1.0))
         yield Slot("sample.angle", ("sample", "angle"), "angle", math.radians(3))
+
+
+def _only_direction(sample: Sample, component: int) -> str:
+    """Say why the largest component of a vector whose length means nothing cannot vary."""
+    if component != max(range(3), key=lambda k: abs(sample.microwave_axis[k])):
+        return ""
+    return "only the direction of microwave_axis counts: vary its two smaller components"
 
 
 def _correction_slots(name: str, path: Path, keys: Iterable[str]) -> Iterator[Slot]:
@@ -220,8 +231,8 @@ def trace_slots(traces: Sequence[Any]) -> Iterator[Slot]:
         yield from _correction_slots(trace.name, ("traces", n), own)
         if trace.angle is not None:
             yield from _correction_slots(trace.name, ("turn", n), ["angle_zero"])
-    for group in dict.fromkeys(trace.group for trace in traces if trace.group is not None):
-        members = [trace for trace in traces if trace.group == group]
+    for group in dict.fromkeys(group for trace in traces for group in groups_of(trace)):
+        members = [trace for trace in traces if group in groups_of(trace)]
         keys = [key for key in CORRECTIONS if all(hasattr(t, key) for t in members)]
         keys += ["angle_zero"] if all(t.angle is not None for t in members) else []
         yield from _correction_slots(group, ("group", group), keys)

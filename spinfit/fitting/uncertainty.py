@@ -23,6 +23,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
+from spinfit.fitting.data import axis_group
 from spinfit.fitting.noise import ResidualNoise, local_covariance, residual_noise
 from spinfit.fitting.outcome import Value
 from spinfit.fitting.residuals import Point, Problem, View
@@ -243,7 +244,7 @@ def _seen_parameters(
 def _axis_shifts(problem: Problem, view: View, point: Point, response: Array) -> tuple[Array, tuple[str, ...]]:
     """Response of the parameters to each shared standard shift, shape (m, k), and what shifts."""
     rows, sources = [], []
-    for group in dict.fromkeys(trace.group for trace in point.traces):
+    for group in dict.fromkeys(map(axis_group, point.traces)):
         for source, changes in (("field axis", _field_changes), ("frequency", _frequency_changes)):
             moved = changes(problem, view, point, group)
             if any(change is not None for change in moved):
@@ -256,7 +257,7 @@ def _field_changes(problem: Problem, view: View, point: Point, group: str | None
     """Change of each trace's signal when its axis is off by one standard uncertainty."""
     out: list[Array | None] = []
     for trace, seen in zip(point.traces, view.seen, strict=True):
-        if trace.group != group or trace.field_uncertainty == 0:
+        if axis_group(trace) != group or trace.field_uncertainty == 0:
             out.append(None)
         else:
             out.append(problem.slope(point, trace, seen, view.stage) * trace.field_uncertainty)
@@ -267,7 +268,7 @@ def _frequency_changes(problem: Problem, view: View, point: Point, group: str | 
     """Change of each trace's signal when its frequency is off by one standard uncertainty."""
     out: list[Array | None] = []
     for trace, seen in zip(point.traces, view.seen, strict=True):
-        if trace.group != group or trace.frequency_uncertainty == 0:
+        if axis_group(trace) != group or trace.frequency_uncertainty == 0:
             out.append(None)
             continue
         highest = max(abs(float(seen.field[-1])), abs(float(seen.field[0])), np.finfo(float).tiny)
