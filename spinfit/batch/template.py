@@ -42,6 +42,7 @@ class Template:
         self.folder = os.path.realpath(Path(path).parent)
         self.tables, text = load_toml(path)
         try:
+            Table(self.tables, "", JOB_KEYS)
             self.kind = self._only()
             self._check()
         except InputError as error:
