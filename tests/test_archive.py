@@ -406,13 +406,8 @@ def test_the_digest_is_over_everything():
     others = [
         put(tree, "title", value=Data("x")),
         put(tree, *fit, "title", value=Data("x")),
-        put(
-            tree,
-            *fit,
-            "measured",
-            value=Data(-np.asarray(tree.members["kiln_07"].members["fit"].members["measured"].values)),
-        ),
-        put(tree, *fit, value=Group(tree.members["kiln_07"].members["fit"].members, {"NX_class": "NXdata"})),
+        put(tree, *fit, "measured", value=Data(-np.asarray(drawn.members["measured"].values))),
+        put(tree, *fit, value=Group(drawn.members, {"NX_class": "NXdata"})),
         put(tree, "kiln_07", "detect", value=Data(["derivative"])),
         Group(tree.members, {**tree.attrs, "default": "x"}),
     ]

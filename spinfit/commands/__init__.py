@@ -27,6 +27,7 @@ from spinfit.commands import (
     lines,
     quantify,
     quench,
+    rerun,
     simulate,
     summary,
 )
@@ -35,6 +36,7 @@ _MODULES = (
     fit,
     batch,
     summary,
+    rerun,
     simulate,
     inspect,
     calibrate,

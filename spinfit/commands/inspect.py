@@ -7,18 +7,20 @@ from typing import Any
 
 from spinfit.commands.measured import Measured, add_reading_options, read_measured
 from spinfit.commands.screen import Screen
+from spinfit.errors import InputError
 
 NAME = "inspect"
 SUMMARY = "what is in a data file: range, points, noise, turning points and their g"
 EXAMPLES = (
     "spinfit inspect kiln-07.csv",
+    "spinfit inspect kiln-07/outcome.h5",
     'spinfit inspect home-built.txt --columns 2,1 --field-slope "216 mT/V" --frequency "9.43 GHz" --plot look.png',
 )
 
 
 def options(parser: argparse.ArgumentParser) -> None:
     """Add the command's arguments."""
-    parser.add_argument("file", metavar="FILE", help="delimited text, JCAMP-DX or HDF5")
+    parser.add_argument("file", metavar="FILE", help="delimited text, JCAMP-DX or HDF5; outcome.h5, batch.h5")
     parser.add_argument("--plot", metavar="FILE", help="draw it, turning points marked (.png, .svg or .pdf)")
     add_reading_options(parser)
 
@@ -47,6 +49,8 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
         from spinfit.commands.drawing import picture_kind
 
         picture_kind(args.plot)
+    if _is_archive(args.file):
+        return _archive(args, screen)
     trace = read_measured(args.file, args)
     codes = {code for code, _ in trace.notes}
     if args.direction == "both" and "sweeps" in codes:
@@ -63,6 +67,47 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
 
         figure = trace_figure(trace.field, trace.signal, found, frequency=trace.frequency, detect=trace.detect)
         save_picture(args.plot, figure)
+        screen.say(f"\npicture: {args.plot}")
+    return 0
+
+
+def _is_archive(file: str) -> bool:
+    """Whether a file is an archive of ours; what is wrong with it otherwise is for its reader to say."""
+    from spinfit.files.guard import SIGNATURE
+    from spinfit.report.archive_reading import kind_of_archive
+
+    try:
+        with open(file, "rb") as stream:
+            if stream.read(len(SIGNATURE)) != SIGNATURE:
+                return False
+    except (OSError, ValueError):
+        return False
+    return kind_of_archive(file) is not None
+
+
+def _archive(args: argparse.Namespace, screen: Screen) -> int:
+    """Say what is in an archive."""
+    from spinfit.report.archive_reading import kind_of_archive, read_archive
+    from spinfit.report.archive_text import batch_record, batch_text, fit_record, fit_text
+    from spinfit.report.batch_archive import read_batch_summary
+
+    if kind_of_archive(args.file) == "batch":
+        if args.plot:
+            raise InputError("does not go with the archive of a batch", "use spinfit summary", place="--plot")
+        summary = read_batch_summary(args.file)
+        screen.emit({"file": args.file, **batch_record(summary)})
+        screen.say(batch_text(summary, args.file))
+        return 0
+    archive = read_archive(args.file)
+    screen.emit({"file": args.file, **fit_record(archive)})
+    screen.say(fit_text(archive, args.file))
+    if args.plot:
+        from spinfit.commands.drawing import save_picture
+        from spinfit.report.plots import fit_figure
+        from spinfit.report.positions import positions_figure
+
+        outcome = archive.outcome
+        save_picture(args.plot, positions_figure(outcome) if outcome.positions else fit_figure(outcome))
         screen.say(f"\npicture: {args.plot}")
     return 0
 

@@ -24,6 +24,8 @@ from numpy.typing import NDArray
 
 from spinfit.errors import InputError
 
+SIGNATURE = b"\x89HDF\r\n\x1a\n"
+"""How an HDF5 file begins (or goes on after 512, 1024, ... bytes of something else)."""
 SECONDS = 4.0
 """Processor time that a file may take, and what each byte adds; seconds."""
 SECONDS_PER_BYTE = 2e-7

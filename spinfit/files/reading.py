@@ -7,6 +7,7 @@ from pathlib import Path, PurePath
 
 from spinfit.errors import InputError
 from spinfit.files.assembling import Assembled, assemble
+from spinfit.files.guard import SIGNATURE
 from spinfit.files.hdf5 import read_hdf5
 from spinfit.files.jcamp import read_jcamp
 from spinfit.files.raw import RawTrace, decode, load
@@ -14,7 +15,6 @@ from spinfit.files.text import read_text
 
 __all__ = ["Assembled", "RawTrace", "assemble", "read", "read_content"]
 
-_HDF5 = b"\x89HDF\r\n\x1a\n"
 _JCAMP = re.compile(r"(?:\s|\$\$[^\n]*\n)*##\s*[A-Za-z.$][^=\n]*=")
 
 
@@ -39,7 +39,7 @@ def read_content(content: bytes, file: str, sha256: str = "") -> RawTrace:
         As `read`.
     """
     suffix = PurePath(file).suffix.lower()
-    if _HDF5 in (content[:8], content[512:520], content[1024:1032], content[2048:2056]):
+    if SIGNATURE in (content[:8], content[512:520], content[1024:1032], content[2048:2056]):
         return read_hdf5(content, file, sha256)
     if suffix in (".h5", ".hdf5", ".hdf", ".nxs"):
         raise InputError(f"is not HDF5 though its name ends in {suffix}", "check where it comes from", file=file)

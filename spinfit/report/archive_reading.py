@@ -18,7 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spinfit.errors import InputError, nearest
-from spinfit.files.guard import ask
+from spinfit.files.guard import SIGNATURE, ask
 from spinfit.files.tree import DIGEST, Data, Group, is_intact, tree_from
 from spinfit.fitting.outcome import Curves, Note, Outcome, PositionTable, Quality, Value
 from spinfit.report.archive import FLAGS, FORMAT, FORMAT_VERSION, KIND, NUMBERS, OUTCOME_GROUP
@@ -353,7 +353,7 @@ def _size(path: str | Path) -> int:
     except (OSError, ValueError) as error:
         reason = getattr(error, "strerror", None) or error
         raise InputError(f"cannot be read ({reason})", "check the name and the permissions", file=path) from error
-    if start != b"\x89HDF\r\n\x1a\n":
+    if start != SIGNATURE:
         raise InputError("is not HDF5", "give the outcome.h5 of a fit, or a batch.h5", file=path)
     if size > LARGEST:
         raise InputError(f"has {size:.3g} bytes", f"an archive has at most {LARGEST:.3g}", file=path)
