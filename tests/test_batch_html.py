@@ -136,7 +136,7 @@ def test_a_folder_without_a_table_is_refused(tmp_path):
 ACT = """
 const say = (key, value) => { document.body.dataset[key] = value; };
 const table = document.querySelector("table.rows"), head = [...table.tHead.rows[0].cells];
-const names = () => [...table.tBodies[0].rows].filter((row) => !row.hidden).map((row) => row.cells[0].textContent);
+const names = () => [...table.tBodies[0].rows].map((row) => row.cells[0].textContent);
 const heading = (name) => head.find((one) => one.dataset.title === name);
 heading("r.g").click(); say("up", names().join(" "));
 heading("r.g").click(); say("down", names().join(" "));
@@ -170,3 +170,25 @@ def test_the_table_sorts_filters_and_draws_in_a_browser(tmp_path):
     assert (got["first"], got["second"], got["third"]) == ("temperature / K", "dose", "row of the table")
     assert got["before"] == "27"  # 30 less one failed, one outlier, one not converged
     assert got["places"] == "7"
+
+
+LONG = """
+const rows = () => document.querySelector("table.rows").tBodies[0].rows;
+document.body.dataset.first = rows().length;
+document.querySelector(".tools button").click();
+document.body.dataset.more = rows().length;
+const first = document.querySelector("table.rows th");
+first.click(); first.click();
+document.body.dataset.sorted = `${rows()[0].cells[0].textContent} ${rows().length}`;
+document.body.dataset.drawn = document.querySelector('path[data-curve="good"]').getAttribute("d").split("M").length - 1;
+"""
+
+
+@needs_browser
+def test_of_a_long_table_a_part_is_laid_out(tmp_path):
+    page = write_batch_report(folder_of(tmp_path / "k", rows(1200), drawn=5))
+    shown = browse(page, act=LONG)
+    got = dict(re.findall(r'data-(\w+)="([^"]*)"', re.search(r"<body[^>]*>", shown)[0]))
+    assert (got["first"], got["more"]) == ("500", "1000")
+    assert got["sorted"] == "k_1199 500"
+    assert got["drawn"] == "1197"  # all rows are in the trends

@@ -5,13 +5,41 @@
   const table = document.querySelector("table.rows");
   if (!table) return;
   const body = table.tBodies[0], heads = [...table.tHead.rows[0].cells], rows = [...body.rows];
-  const order = new Intl.Collator("en", { numeric: true });
   const number = (row, k) => {
     const text = row.cells[k].dataset.v;
     return text === undefined || text === "" ? NaN : Number(text);
   };
 
+  // Of a long table only so many rows are laid out at a time: browsers are slow with more.
+  const PAGE = 500;
+  const tools = document.querySelector(".tools"), wanted = document.createElement("input");
+  const count = document.createElement("span"), more = document.createElement("button");
+  let order = rows, limit = PAGE, plain = null;
+  const show = () => {
+    const words = wanted.value.toLowerCase().split(/\s+/).filter(Boolean);
+    if (words.length && !plain) plain = new Map(rows.map((row) => [row, `${row.textContent} ${row.dataset.kind}`.toLowerCase()]));
+    const found = words.length ? order.filter((row) => words.every((word) => plain.get(row).includes(word))) : order;
+    body.replaceChildren(...found.slice(0, limit));
+    more.hidden = found.length <= limit;
+    const shown = Math.min(found.length, limit), part = shown < found.length ? `the first ${shown} of ` : "";
+    count.textContent = words.length ? `${part}${found.length} of ${rows.length} rows` : `${part}${rows.length} rows; a heading sorts`;
+  };
+  wanted.type = "search";
+  wanted.placeholder = "show rows with these words";
+  wanted.setAttribute("aria-label", wanted.placeholder);
+  count.className = "quiet";
+  more.type = "button";
+  more.textContent = `show ${PAGE} more`;
+  more.addEventListener("click", () => { limit += PAGE; show(); });
+  let waiting = 0;
+  const search = () => { limit = PAGE; show(); };
+  wanted.addEventListener("input", () => { clearTimeout(waiting); waiting = setTimeout(search, 150); });
+  wanted.addEventListener("change", search);
+  tools.append(wanted, count, more);
+  show();
+
   // Sorting: numbers by value, what is missing last, texts as people sort them.
+  const words = new Intl.Collator("en", { numeric: true });
   heads.forEach((head, k) => {
     const numeric = head.dataset.kind === "number";
     const sort = () => {
@@ -21,11 +49,13 @@
       const sign = down ? -1 : 1;
       const keyed = rows.map((row) => [numeric ? number(row, k) : row.cells[k].textContent, row]);
       keyed.sort(([a], [b]) => {
-        if (!numeric) return sign * order.compare(a, b);
+        if (!numeric) return sign * words.compare(a, b);
         if (Number.isNaN(a) || Number.isNaN(b)) return Number.isNaN(a) - Number.isNaN(b);
         return sign * (a - b);
       });
-      body.append(...keyed.map(([, row]) => row));
+      order = keyed.map(([, row]) => row);
+      limit = PAGE;
+      show();
     };
     head.setAttribute("role", "button");
     head.setAttribute("tabindex", "0");
@@ -34,28 +64,6 @@
       if (event.key === "Enter" || event.key === " ") { event.preventDefault(); sort(); }
     });
   });
-
-  // Filtering.
-  const tools = document.querySelector(".tools"), wanted = document.createElement("input"), count = document.createElement("span");
-  wanted.type = "search";
-  wanted.placeholder = "show rows with these words";
-  wanted.setAttribute("aria-label", wanted.placeholder);
-  count.className = "quiet";
-  const plain = new Map(rows.map((row) => [row, `${row.textContent} ${row.dataset.kind}`.toLowerCase()]));
-  const filter = () => {
-    const words = wanted.value.toLowerCase().split(/\s+/).filter(Boolean);
-    let shown = 0;
-    for (const row of rows) {
-      row.hidden = !words.every((word) => plain.get(row).includes(word));
-      shown += !row.hidden;
-    }
-    count.textContent = words.length ? `${shown} of ${rows.length} rows` : `${rows.length} rows; a heading sorts`;
-  };
-  let waiting = 0;
-  wanted.addEventListener("input", () => { clearTimeout(waiting); waiting = setTimeout(filter, 150); });
-  wanted.addEventListener("change", filter);
-  tools.append(wanted, count);
-  filter();
 
   // Trends: every parameter against one column.
   const trends = [...document.querySelectorAll("svg.trend")];
