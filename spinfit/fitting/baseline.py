@@ -24,7 +24,6 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.interpolate import BSpline
 
-from spinfit.errors import InputError
 from spinfit.fitting.data import Trace
 
 Array = NDArray[np.float64]
@@ -32,7 +31,9 @@ Array = NDArray[np.float64]
 # Pieces of the spline to a smoothness: the penalty, not the pieces, sets what it can follow.
 _PIECES = 6
 _FEWEST_PIECES = 8
-MOST_PIECES = 300
+_MOST_PIECES = 300
+# Points that a piece must have at least.
+_POINTS_TO_A_PIECE = 4
 # Singular values of the known columns below this part of the largest are the same column twice.
 _SAME_COLUMN = 1e-10
 
@@ -66,25 +67,23 @@ def penalty_rows(trace: Trace, points: int) -> Array:
     # The second derivative of a cubic spline is straight between knots: two Gauss points are exact.
     half = np.diff(inner) / 2
     middle = (inner[:-1] + inner[1:]) / 2
-    points = np.concatenate([middle - half / math.sqrt(3), middle + half / math.sqrt(3)])
-    curvature = np.stack([BSpline(knots, one, 3)(points, nu=2) for one in np.eye(knots.size - 4)], axis=1)
+    nodes = np.concatenate([middle - half / math.sqrt(3), middle + half / math.sqrt(3)])
+    curvature = np.stack([BSpline(knots, one, 3)(nodes, nu=2) for one in np.eye(knots.size - 4)], axis=1)
     density = points / (inner[-1] - inner[0])
     strength = density * (trace.smoothness / (2 * math.pi)) ** 4
     rows = np.sqrt(strength * np.tile(half, 2))[:, None] * curvature
     return np.column_stack((np.zeros((rows.shape[0], known)), rows))
 
 
+def shortest_smoothness(length: float, points: int) -> float:
+    """The shortest smoothness, mT, of a baseline over a length of `points` points."""
+    return _PIECES * length / min(_MOST_PIECES, max(points // _POINTS_TO_A_PIECE, 1))
+
+
 def _knots(trace: Trace) -> Array:
     first, last = trace.field[trace.used][[0, -1]]
     assert trace.smoothness is not None
     pieces = max(_FEWEST_PIECES, math.ceil(_PIECES * (last - first) / trace.smoothness))
-    if pieces > MOST_PIECES:
-        least = _PIECES * (last - first) / MOST_PIECES
-        raise InputError(
-            f"smoothness {trace.smoothness:g} mT of {trace.name} is too short for {last - first:g} mT",
-            f"write {least:.2g} mT or more",
-            place="smoothness",
-        )
     step = (last - first) / pieces
     return first + step * np.arange(-3, pieces + 4)
 
@@ -128,3 +127,10 @@ def coefficients(known: Array, penalty: Array, rest: Array) -> Array:
     """Coefficients of the known columns that leave the least, penalty included, shape (q,)."""
     longer = np.concatenate((rest, np.zeros(penalty.shape[0])))
     return np.linalg.lstsq(np.vstack((known, penalty)), longer, rcond=_SAME_COLUMN)[0]
+
+
+def taken(basis: Array, shape: Array) -> float:
+    """Part of a shape's sum of squares that the known columns take away, 0 to 1."""
+    size = float(shape @ shape)
+    left = shape - basis @ (basis.T @ shape)
+    return 1 - float(left @ left) / size if size > 0 else 0.0

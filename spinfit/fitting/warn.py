@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spinfit.errors import InputError
+from spinfit.fitting.baseline import taken
 from spinfit.fitting.equivalent import AXES, conventional
 from spinfit.fitting.noise import autocorrelation, runs_test
 from spinfit.fitting.one_angle import one_angle_notes
@@ -37,6 +38,8 @@ _BEYOND = 0.02
 _RUNS_Z = -4.0
 _NEIGHBOURS_Z = 4.5
 _LOOK_POINTS = 1024
+# Part of a model's sum of squares that a smooth baseline may take over before that is worth a note.
+_TAKEN = 0.2
 
 
 def check_before(problem: Problem, view: View) -> None:
@@ -48,7 +51,7 @@ def check_before(problem: Problem, view: View) -> None:
     """
     free = len(problem.names)
     for trace, seen in zip(problem.job.traces, view.seen, strict=True):
-        linear = 1 + seen.basis.shape[1]
+        linear = 1 + round(float(np.sum(seen.basis**2)))
         if seen.field.size <= linear:
             raise _too_few(trace.name, trace.file, seen.field.size, linear)
     if view.points <= free + view.linear:
@@ -114,6 +117,7 @@ def notes_after(
             notes += single_sign_notes(problem, view, point, descent.jacobian, spread.known)
         notes += _setting_notes(problem, point)
         notes += one_angle_notes(problem, view, point)
+    notes += _background_notes(view, point)
     notes += _modulation_notes(point)
     notes += _beyond_notes(problem, view, point)
     return notes
@@ -260,6 +264,20 @@ def _setting_notes(problem: Problem, point: Point) -> list[Note]:
             f"E = {shown[1]} (0 <= E/D <= 1/3): the same tensor in the conventional setting."
         )
         notes.append(Note("other_setting", text))
+    return notes
+
+
+def _background_notes(view: View, point: Point) -> list[Note]:
+    """Say where a smooth baseline could stand in for the lines themselves."""
+    notes = []
+    for trace, seen, signal in zip(point.traces, view.seen, point.signals, strict=True):
+        share = taken(seen.basis, signal / seen.noise) if trace.smoothness is not None else 0.0
+        if share > _TAKEN:
+            text = (
+                f"The smooth baseline of {trace.name} could take over {100 * share:.0f} % of the model's signal: "
+                f"what is broader than {trace.smoothness:g} mT is not told from background. A longer one would tell."
+            )
+            notes.append(Note("baseline_takes_lines", text))
     return notes
 
 
