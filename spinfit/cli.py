@@ -15,7 +15,7 @@ from collections.abc import Sequence
 from spinfit import __version__
 from spinfit.commands import TABLE
 from spinfit.commands.screen import Screen
-from spinfit.errors import InputError, SpinfitError, nearest
+from spinfit.errors import InputError, SpinfitError, nearest, on_one_line
 from spinfit.threads import one_thread
 
 COMMON = ("--json", "--debug")
@@ -105,7 +105,7 @@ def _run(argv: list[str]) -> int:
 
 
 def _one_line(text: object) -> str:
-    return " ".join(str(text).split())
+    return on_one_line(str(text))
 
 
 def _verdict(error: BaseException) -> tuple[str, int]:

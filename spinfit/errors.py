@@ -59,9 +59,26 @@ class InputError(SpinfitError):
         )
 
     def __str__(self) -> str:
-        text = ": ".join(part for part in (self.file, self.place, self.found) if part)
+        place, found = _cut(self.place or "", LONGEST_PLACE), _cut(self.found, LONGEST_FOUND)
+        text = ": ".join(part for part in (self.file, place, found) if part)
         text = f"{text}; {self.right}" if self.right else text
-        return " ".join(text.split())
+        return on_one_line(text)
+
+
+MOST_LISTED = 60
+"""Words that are listed in an error at most."""
+LONGEST_PLACE, LONGEST_FOUND = 200, 1000
+"""Characters of what an error quotes from a file, whose keys and texts may be of any length."""
+
+
+def _cut(text: str, longest: int) -> str:
+    return text if len(text) <= longest else text[: longest - 3] + "..."
+
+
+def on_one_line(text: str) -> str:
+    """Return a text on one line without what a terminal would take for a command: it may quote a file."""
+    words = " ".join(text.split())
+    return words if words.isprintable() else "".join(c if c.isprintable() else "\ufffd" for c in words)
 
 
 def nearest(word: str, known: Iterable[str]) -> str:
@@ -78,4 +95,5 @@ def nearest(word: str, known: Iterable[str]) -> str:
     close = difflib.get_close_matches(word, known, n=1, cutoff=0.5)
     if close:
         return f'did you mean "{close[0]}"?'
-    return "known: " + ", ".join(known)
+    more = ", ..." if len(known) > MOST_LISTED else ""
+    return "known: " + ", ".join(known[:MOST_LISTED]) + more

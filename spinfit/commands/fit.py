@@ -144,6 +144,8 @@ def _compare(args: argparse.Namespace, screen: Screen) -> int:
     for name in names:
         if names.count(name) > 1:
             raise InputError(f'two jobs are called "{name}"', "give their files different names", place="--compare")
+        if name.startswith("."):  # the stem of "...toml" is ".."
+            raise InputError(f'"{name}" cannot be the name of a folder', "give the file another name", place="--compare")
     paths = [] if args.out is None else [Path(args.out), *(Path(args.out) / name for name in names)]
     fresh = [path for path in paths if not path.exists()]
     folders = [None if args.out is None else ready_folder(str(Path(args.out) / name)) for name in names]

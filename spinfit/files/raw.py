@@ -12,7 +12,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit.errors import InputError
+from spinfit.errors import InputError, on_one_line
 
 Note = tuple[str, str]
 MAX_BYTES = 2**30
@@ -53,6 +53,15 @@ class RawTrace:
     file: str = ""
     notes: tuple[Note, ...] = ()
     format: str = "text"
+
+    def __post_init__(self) -> None:
+        """Take out of every text what a terminal would take for a command."""
+        set_field = object.__setattr__  # the instance is not yet anybody's
+        texts = {key: on_one_line(v) if isinstance(v, str) else v for key, v in self.header.items()}
+        set_field(self, "header", texts)
+        set_field(self, "names", tuple(map(on_one_line, self.names)))
+        set_field(self, "units", tuple(map(on_one_line, self.units)))
+        set_field(self, "notes", tuple((code, on_one_line(text)) for code, text in self.notes))
 
 
 def load(path: str | Path) -> tuple[bytes, str]:

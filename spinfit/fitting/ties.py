@@ -60,10 +60,15 @@ def _tokens(text: str) -> list[tuple[str, str]]:
         kind = max(ends, key=lambda k: -1 if ends[k] is None else ends[k].end())
         match = ends[kind]
         if match is None:
-            raise InputError(f'"{text[at]}" at character {at + 1} of "{text}"', ARITHMETIC)
+            raise InputError(f'"{text[at]}" at character {at + 1} of "{_shown(text)}"', ARITHMETIC)
         found.append((kind, match.group()))
         at = match.end()
     return found
+
+
+def _shown(text: str) -> str:
+    """Return a tie for a message: the beginning of a long one."""
+    return text if len(text) <= 60 else text[:57] + "..."
 
 
 class _Parser:
@@ -82,7 +87,7 @@ class _Parser:
     def whole(self) -> Node:
         node = self.sum()
         if self.at < len(self.tokens):
-            raise self.wrong(f'"{self.tokens[self.at][1]}" cannot stand there in "{self.text}"')
+            raise self.wrong(f'"{_shown(self.tokens[self.at][1])}" cannot stand there in "{_shown(self.text)}"')
         return node
 
     def wrong(self, found: str) -> InputError:
@@ -122,29 +127,29 @@ class _Parser:
             self.at += 1
             exponent = self.signed()
             if names_in(exponent):
-                raise InputError(f'a parameter in the exponent of "{self.text}"', "write a number there")
+                raise InputError(f'a parameter in the exponent of "{_shown(self.text)}"', "write a number there")
             value = evaluate(exponent, {})
             if abs(value) > HIGHEST_POWER:
-                raise InputError(f'the power {value:g} in "{self.text}"', f"powers go up to {HIGHEST_POWER:g}")
+                raise InputError(f'the power {value:g} in "{_shown(self.text)}"', f"powers go up to {HIGHEST_POWER:g}")
             node = Node("**", of=(node, Node("number", value)))
         return node
 
     def atom(self) -> Node:
         if self.at >= len(self.tokens):
-            raise self.wrong(f'"{self.text}" ends too early')
+            raise self.wrong(f'"{_shown(self.text)}" ends too early')
         kind, text = self.tokens[self.at]
         self.at += 1
         if kind == "number":
             return Node("number", float(text))
         if kind == "name":
             if self.peek() == "(":
-                raise self.wrong(f'"{text}(" calls a function')
+                raise self.wrong(f'"{_shown(text)}(" calls a function')
             return Node("name", name=text)
         if text != "(":
-            raise self.wrong(f'"{text}" cannot stand there in "{self.text}"')
+            raise self.wrong(f'"{_shown(text)}" cannot stand there in "{_shown(self.text)}"')
         node = self.sum()
         if self.peek() != ")":
-            raise self.wrong(f'a bracket is not closed in "{self.text}"')
+            raise self.wrong(f'a bracket is not closed in "{_shown(self.text)}"')
         self.at += 1
         return node
 
