@@ -282,7 +282,7 @@ def unknown(name: str, parameters: Mapping[str, Parameter], *, place: str | None
         right = f"the model was given {twin}"
     elif _FROM_FIELD.fullmatch(last) and f"{head}.crystal_field" in groups:
         right = f'it follows from the crystal field: vary "{head}.crystal_field", or single parameters of it'
-    return InputError(f'"{name}" is no parameter of this model', right, place=place)
+    return InputError(f'"{name:.60}" is no parameter of this model', right, place=place)
 
 
 def members(name: str, parameters: Mapping[str, Parameter], *, place: str | None = None) -> tuple[str, ...]:
