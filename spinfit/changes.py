@@ -16,7 +16,6 @@ from spinfit import kernels
 from spinfit.branches import FWHM_PER_SIGMA, KnotData
 from spinfit.exact import Lines
 from spinfit.hamiltonian import System
-from spinfit.knots import continued, restored
 from spinfit.levels import occupation, solve, zero_field_state
 from spinfit.lineshape import FieldGrid
 from spinfit.loops import Landscape, Summed, add_looping, field_step
@@ -24,7 +23,7 @@ from spinfit.moves import Move, Moved, Places, symmetrised
 from spinfit.nodes import FLAT
 from spinfit.orientations import Mesh, Rings
 from spinfit.powder import Average
-from spinfit.sheets import SMEAR_RATIO, Histograms, spacing
+from spinfit.sheets import HIDDEN, SMEAR_RATIO, Histograms, continued, restored, spacing
 from spinfit.symmetry import KINDS
 
 Array = NDArray[np.float64]
@@ -243,18 +242,15 @@ def _transforms(average: Average, coarse: Rings, moved: Moved) -> list[NDArray[n
             changes = changes_to_mesh(np.concatenate(stack).reshape(-1, len(kept)), mesh)
             changes = changes.reshape(-1, count, len(part), *weights.shape)
             field, weight = restored(on_mesh[0], on_mesh[1], inverse[part][:, :, None])
-            smear = None
-            if branches.variance is None:
-                apart = spacing(field, mesh)
-                if apart.max() > 1.05 * request.grain.close:
-                    smear = request.grain.smear_for(apart)
+            apart = spacing(field, mesh) if branches.variance is None else None
             for k, row in enumerate(part):
                 sheet = field[k].ravel(), weight[k].ravel(), weights.ravel()
                 of_sheet = tuple(one[:, k].reshape(count, -1) for one in changes)
                 if branches.variance is None:
-                    into.sheet(
-                        *sheet, np.empty(0) if smear is None else smear[k].ravel(), of_sheet, bool(inverse[row, 0])
-                    )
+                    smear = np.empty(0)
+                    if apart[k].max() > HIDDEN * request.grain.close:
+                        smear = request.grain.smear_for(apart[k]).ravel()
+                    into.sheet(*sheet, smear, of_sheet, bool(inverse[row, 0]))
                 else:
                     into.broadened(*sheet, np.maximum(on_mesh[2, k], 0.0).ravel(), of_sheet, bool(inverse[row, 0]))
     return into.transforms()

@@ -21,6 +21,7 @@ from spinfit.hamiltonian import System
 from spinfit.nodes import FieldNodes
 from spinfit.orientations import Rings, unstretched
 from spinfit.resonance import can_reach
+from spinfit.sheets import continued, restored
 from spinfit.symmetry import Symmetry
 
 Array = NDArray[np.float64]
@@ -358,27 +359,3 @@ def _touches(data: KnotData) -> NDArray[np.bool_]:
             reach = can_reach(data.gap[:, a], data.gap[:, b], data.slope[:, a] * h, data.slope[:, b] * h)
             out |= reach.any(axis=1)
     return out
-
-
-def continued(fields: Array, weights: Array) -> tuple[Array, Array, NDArray[np.bool_]]:
-    """Return what is continued in place of fields and weights, shape (p, n), and which rows are inverse.
-
-    B^-2 and W B^-3 are polynomials of second degree in the direction for a pure Zeeman doublet;
-    branches that come close to zero field are continued as they are.
-    """
-    inverse = fields.min(axis=1, keepdims=True) > 0.1 * fields.max(axis=1, keepdims=True)
-    if inverse.all():
-        square = 1 / (fields * fields)
-        return square, weights * square / fields, inverse
-    safe = np.where(inverse, fields, 1.0)
-    square = 1 / (safe * safe)
-    return np.where(inverse, square, fields), np.where(inverse, weights * square / safe, weights), inverse
-
-
-def restored(x: Array, y: Array, inverse: NDArray[np.bool_]) -> tuple[Array, Array]:
-    """Return fields and weights from what was continued; `inverse` broadcasts against x and y."""
-    if inverse.all():
-        fields = 1 / np.sqrt(np.maximum(x, 1e-30))
-        return fields, y * (fields * fields * fields)
-    fields = np.where(inverse, 1 / np.sqrt(np.where(inverse, np.maximum(x, 1e-30), 1.0)), x)
-    return fields, np.where(inverse, y * (fields * fields * fields), y)

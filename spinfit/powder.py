@@ -19,12 +19,12 @@ from spinfit import kernels
 from spinfit.branches import Branches, Request
 from spinfit.exact import Lines, deposit
 from spinfit.hamiltonian import System
-from spinfit.knots import Knots, continued, restored, settle
+from spinfit.knots import Knots, settle
 from spinfit.lineshape import FieldGrid
 from spinfit.loops import Summed, add_pairs
 from spinfit.orientations import Mesh, Rings
 from spinfit.resonance import ZERO_FIELD, find
-from spinfit.sheets import SMEAR_MOST, SMEAR_REACH, Histograms, spacing
+from spinfit.sheets import SMEAR_MOST, SMEAR_REACH, Histograms, continued, restored
 from spinfit.symmetry import Symmetry, symmetry_of
 
 Array = NDArray[np.float64]
@@ -226,9 +226,7 @@ def _probe_azimuths(rings: Rings) -> int:
     return {"axial": 1, "octant": 2, "quarter": 4, "half": 8}[rings.kind] * min(rings.harmonics, 24)
 
 
-def _sum_branches(
-    knots: Knots, request: Request, histograms: Histograms, report: Report
-) -> list[tuple[int, int]]:
+def _sum_branches(knots: Knots, request: Request, histograms: Histograms, report: Report) -> list[tuple[int, int]]:
     """Add every branch, continued to a mesh fine enough for it; return the meshes."""
     rings, branches = knots.rings, knots.branches
     to_mesh = rings.to_mesh_locally if knots.local else rings.to_mesh
@@ -241,16 +239,12 @@ def _sum_branches(
         for start in range(0, len(rows), step):
             part = rows[start : start + step]
             both = to_mesh(np.concatenate([x[part], y[part]]), mesh)
-            fields, weights = restored(both[: len(part)], both[len(part) :], inverse[part][:, :, None])
-            report.mesh_points += fields.size
-            if branches.variance is not None:
-                own = np.maximum(to_mesh(branches.variance[part], mesh), 0.0)
-                histograms.broadened(fields.ravel(), (weights * mesh.weights()).ravel(), own.ravel())
+            here, there = both[: len(part)], both[len(part) :]
+            report.mesh_points += here.size
+            if branches.variance is None:
+                histograms.sheets(here, there, inverse[part, 0], mesh, request.grain)
                 continue
-            apart = spacing(fields, mesh)
-            if apart.max() <= 1.05 * request.grain.close:
-                histograms.points(fields, weights * mesh.weights())
-            else:
-                weighted = (weights * mesh.weights()).ravel()
-                histograms.smeared(fields.ravel(), weighted, request.grain.smear_for(apart).ravel())
+            fields, weights = restored(here, there, inverse[part][:, :, None])
+            own = np.maximum(to_mesh(branches.variance[part], mesh), 0.0)
+            histograms.broadened(fields.ravel(), (weights * mesh.weights()).ravel(), own.ravel())
     return sizes

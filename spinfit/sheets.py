@@ -29,8 +29,18 @@ VARIANCE_LEAST, VARIANCE_RATIO = 0.25, 1.16
 """First rung of the ladder of Gaussian widths, in line widths, and the ratio of its variances."""
 MOST_NUMBERS = 100_000_000
 """Numbers in the histograms of one species, 0.8 GB."""
+HIDDEN = 1.05
+"""How many times `Grain.close` the points of a branch may lie apart before they are smeared."""
+ONSET = 0.3
+"""Square of the distance, in units of `Grain.close`, at which half of the smear is in force."""
 SMEAR_REACH = 4.0
 """How far a smear reaches, in units of itself."""
+
+
+def smear_for(apart: Array, close: float, smear: float) -> Array:
+    """Return the smear of points that lie `apart`; see `Grain.smear_for`."""
+    ratio = (apart / close) ** 2
+    return smear * apart * ratio / (ratio + ONSET)
 
 
 def smear_kernel(k: Array, size: float) -> Array:
@@ -75,6 +85,22 @@ class Histograms:
             if histogram.any():
                 total += self.grid.transform(histogram) * np.exp(-0.5 * variance * k**2)
         return total
+
+    def sheets(self, x: Array, y: Array, inverse: NDArray[np.bool_], mesh: Mesh, grain: Grain) -> None:
+        """Add branches continued to a mesh, smeared where their points lie too far apart for the line to hide it.
+
+        Parameters
+        ----------
+        x, y : ndarray, shape (q, thetas + 1, azimuths)
+            As in `continued`.
+        inverse : ndarray of bool, shape (q,)
+        """
+        grid = self.grid
+        classes = (grain.close, grain.smear, float(self.sizes[0]), SMEAR_RATIO)
+        around = {"axial": ALONE, "octant": CLOSED}.get(mesh.kind, PERIODIC)
+        for sign in (1, -1) if grid.start < 0 else (1,):  # the spectrum is even in B
+            place = (sign / grid.step, -grid.start / grid.step)
+            deposit_sheets(self.plain, place, x, y, inverse, mesh.weights(), around, classes)
 
     def points(self, fields: Array, weights: Array) -> None:
         """Add resonances at `fields` with `weights`, both of one shape."""
@@ -137,6 +163,160 @@ class Histograms:
         into += self.grid.deposit(fields, weights)
         if self.grid.start < 0:  # the spectrum is even in B
             into += self.grid.deposit(-fields, weights)
+
+
+def continued(fields: Array, weights: Array) -> tuple[Array, Array, NDArray[np.bool_]]:
+    """Return what is continued in place of fields and weights, shape (p, n), and which rows are inverse.
+
+    B^-2 and W B^-3 are polynomials of second degree in the direction for a pure Zeeman doublet;
+    branches that come close to zero field are continued as they are.
+    """
+    inverse = fields.min(axis=1, keepdims=True) > 0.1 * fields.max(axis=1, keepdims=True)
+    if inverse.all():
+        square = 1 / (fields * fields)
+        return square, weights * square / fields, inverse
+    safe = np.where(inverse, fields, 1.0)
+    square = 1 / (safe * safe)
+    return np.where(inverse, square, fields), np.where(inverse, weights * square / safe, weights), inverse
+
+
+def restored(x: Array, y: Array, inverse: NDArray[np.bool_]) -> tuple[Array, Array]:
+    """Return fields and weights from what was continued; `inverse` broadcasts against x and y."""
+    if inverse.all():
+        fields = 1 / np.sqrt(np.maximum(x, 1e-30))
+        return fields, y * (fields * fields * fields)
+    fields = np.where(inverse, 1 / np.sqrt(np.where(inverse, np.maximum(x, 1e-30), 1.0)), x)
+    return fields, np.where(inverse, y * (fields * fields * fields), y)
+
+
+ALONE, CLOSED, PERIODIC = range(3)
+"""What follows the last azimuth of a mesh: nothing at all, a mirror, or the first."""
+
+
+def deposit_sheets_numpy(
+    into: Array,
+    place: tuple[float, float],
+    x: Array,
+    y: Array,
+    inverse: NDArray[np.bool_],
+    shares: Array,
+    around: int,
+    classes: tuple[float, float, float, float],
+) -> None:
+    """Add branches over a mesh to histograms by size of smear, in place.
+
+    Parameters
+    ----------
+    into : ndarray, shape (r, count), C-contiguous
+        As for `kernels.deposit_smeared`.
+    place : (float, float)
+        Places in grid steps are field x the first + the second.
+    x, y : ndarray, shape (q, thetas + 1, azimuths), and inverse : ndarray of bool, shape (q,)
+        As in `restored`.
+    shares : ndarray, shape (thetas + 1, azimuths)
+        Of the solid angle.
+    around : int
+        `ALONE`, `CLOSED` or `PERIODIC`.
+    classes : (close, smear, least, ratio)
+        Of `Grain`, and of the classes of size.
+    """
+    close, smear, least, ratio = classes
+    for k in range(len(x)):
+        fields, weights = restored(x[k], y[k], inverse[k : k + 1])
+        apart = np.abs(_central(fields, -2, False))
+        if around != ALONE:
+            apart = np.hypot(apart, _central(fields, -1, around == PERIODIC))
+        at, weights = (fields * place[0] + place[1]).ravel(), (weights * shares).ravel()
+        if apart.max() <= HIDDEN * close:
+            kernels.deposit_numpy(into[:1], np.intp(0), at, weights)
+        else:
+            kernels.deposit_smeared_numpy(into, at, weights, smear_for(apart, close, smear).ravel(), least, ratio)
+
+
+def _compiled_sheets(into, factor, origin, x, y, inverse, shares, around, close, smear, least, ratio):
+    rows, count = into.shape
+    branches, thetas, phis = x.shape
+    scale = 1.0 / math.log(ratio)
+    field = np.empty((thetas, phis))
+    apart = np.empty((thetas, phis))
+    for k in range(branches):
+        for i in range(thetas):
+            for j in range(phis):
+                field[i, j] = 1.0 / math.sqrt(max(x[k, i, j], 1e-30)) if inverse[k] else x[k, i, j]
+        widest = 0.0
+        for i in range(thetas):
+            before, after = max(i - 1, 0), min(i + 1, thetas - 1)
+            for j in range(phis):
+                along = 0.5 * (field[after, j] - field[before, j])
+                if around == ALONE:
+                    square = along * along
+                else:
+                    left, right = j - 1, j + 1
+                    if around == CLOSED:
+                        left, right = max(left, 0), min(right, phis - 1)
+                    else:
+                        left, right = (phis - 1 if j == 0 else left), (0 if j == phis - 1 else right)
+                    across = 0.5 * (field[i, right] - field[i, left])
+                    square = along * along + across * across
+                apart[i, j] = square
+                widest = max(widest, square)
+        plain = widest <= (HIDDEN * close) ** 2
+        for i in range(thetas):
+            for j in range(phis):
+                b = field[i, j]
+                at = b * factor + origin
+                if not (at >= 1.0 and at < count - 3):
+                    continue
+                w = y[k, i, j] * shares[i, j]
+                if inverse[k]:
+                    w *= b * b * b
+                n = int(at)
+                u = at - n
+                v = 1.0 - u
+                t0 = v * v * v / 6.0
+                t1 = (4.0 - 6.0 * u * u + 3.0 * u * u * u) / 6.0
+                t2 = (4.0 - 6.0 * v * v + 3.0 * v * v * v) / 6.0
+                t3 = u * u * u / 6.0
+                row = 0
+                if not plain:
+                    share = apart[i, j] / (close * close)
+                    rung = smear * math.sqrt(apart[i, j]) * share / (share + ONSET) / least
+                    if rung >= 1.0:
+                        rung = 1.0 + math.log(rung) * scale
+                    rung = min(rung, rows - 1 - 1e-9)
+                    row = int(rung)
+                    part = rung - row
+                    upper = w * part * part * (3.0 - 2.0 * part)
+                    into[row + 1, n - 1] += upper * t0
+                    into[row + 1, n] += upper * t1
+                    into[row + 1, n + 1] += upper * t2
+                    into[row + 1, n + 2] += upper * t3
+                    w -= upper
+                into[row, n - 1] += w * t0
+                into[row, n] += w * t1
+                into[row, n + 1] += w * t2
+                into[row, n + 2] += w * t3
+
+
+_compiled_sheets = kernels.compiled(_compiled_sheets)
+
+
+def deposit_sheets(
+    into: Array,
+    place: tuple[float, float],
+    x: Array,
+    y: Array,
+    inverse: NDArray[np.bool_],
+    shares: Array,
+    around: int,
+    classes: tuple[float, float, float, float],
+) -> None:
+    """Do what `deposit_sheets_numpy` does, compiled where that is possible."""
+    if not kernels.COMPILED:
+        deposit_sheets_numpy(into, place, x, y, inverse, shares, around, classes)
+        return
+    x, y = np.ascontiguousarray(x), np.ascontiguousarray(y)
+    _compiled_sheets(into, *place, x, y, inverse, shares, around, *classes)
 
 
 def spacing(values: Array, mesh: Mesh) -> Array:
@@ -221,5 +401,4 @@ class Grain:
         It sets in slowly: what a varying smear does to a density is the sixth derivative of the
         density times the sixth power of the smear, so a quick onset would be a feature itself.
         """
-        ratio = (apart / self.close) ** 2
-        return self.smear * apart * ratio / (ratio + 0.3)
+        return smear_for(apart, self.close, self.smear)

@@ -4,7 +4,8 @@ import numpy as np
 import pytest
 from scipy.interpolate import BSpline
 
-from spinfit import kernels
+from spinfit import kernels, sheets
+from spinfit.orientations import Mesh
 
 DEPOSITS = [kernels.deposit_numpy, kernels.deposit]
 SMEARED = [kernels.deposit_smeared_numpy, kernels.deposit_smeared]
@@ -91,3 +92,28 @@ def test_changes_of_a_deposit(deposit) -> None:
     rest = np.zeros((3, 2, 40))
     deposit(rest, rows, np.where((x >= 1) & (x < 37), x, 0.0), weights, moves)
     assert got == pytest.approx(rest, abs=1e-12)
+
+
+@pytest.mark.parametrize("kind", ["axial", "octant", "quarter", "half"])
+@pytest.mark.parametrize("close", [0.05, 5.0])
+def test_branches_over_a_mesh(kind: str, close: float) -> None:
+    """Both twins, against one point after the other of the fields that the branches stand for."""
+    mesh = Mesh(kind, 6, 1 if kind == "axial" else 5)
+    shape = (3, *mesh.weights().shape)
+    rng = np.random.default_rng(3)
+    fields, weights = 20.0 + 0.5 * rng.normal(size=shape), rng.normal(size=shape)
+    inverse = np.array([True, False, True])
+    x = np.where(inverse[:, None, None], fields**-2, fields)
+    y = np.where(inverse[:, None, None], weights * fields**-3, weights)
+    around = {"axial": sheets.ALONE, "octant": sheets.CLOSED}.get(kind, sheets.PERIODIC)
+    want = np.zeros((5, 60))
+    apart = sheets.spacing(fields, mesh)
+    ratio = (apart / close) ** 2
+    smear = np.where(apart.max(axis=(1, 2), keepdims=True) > 1.05 * close, 0.6 * apart * ratio / (ratio + 0.3), 0.0)
+    share = (weights * mesh.weights()).ravel()
+    kernels.deposit_smeared_numpy(want, (2.0 * fields - 10.0).ravel(), share, smear.ravel(), 0.1, 1.6)
+    for deposit in (sheets.deposit_sheets_numpy, sheets.deposit_sheets):
+        got = np.zeros((5, 60))
+        deposit(got, (2.0, -10.0), x, y, inverse, mesh.weights(), around, (close, 0.6, 0.1, 1.6))
+        assert got == pytest.approx(want, abs=1e-12)
+    assert want[1:].any() == (close < 1)
