@@ -159,6 +159,8 @@ def fuzz(name: str, folder: Path, seconds: float, runs: int) -> dict[str, object
             for line in process.stderr:
                 if match := _STATUS.match(line):
                     here = int(match[1])
+                    if match[2] == "pulse":
+                        print(f"{name}: {done + here} inputs, {match[3]} edges", flush=True)
                     if int(match[3]) > coverage and match[2] in ("NEW", "REDUCE", "INITED"):
                         coverage, last_new = int(match[3]), done + here
                 elif line.startswith(("FINDING", "Traceback", "ERROR", "==")) or "Error" in line:

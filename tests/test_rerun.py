@@ -264,7 +264,7 @@ def batch(fitted, tmp_path) -> Path:
     rows = []
     for name, status in (("b", "good"), ("a", "good"), ("torn", "good"), ("none", "failed"), ("lost", "good")):
         value = "2.0061" if status == "good" else ""
-        rows.append({"trace": name, "status": status, "note": "x,\n\"", "radical.g": value,
+        rows.append({"trace": name, "status": status, "note": "x,\n\"", "jar": "007", "hash": "1e5", "radical.g": value,
                      "radical.g_uncertainty": value and "0.0001", "warnings": "", "seconds": "1.5"})  # fmt: skip
         if name not in ("none", "lost"):
             (folder / name).mkdir(parents=True)
@@ -274,6 +274,7 @@ def batch(fitted, tmp_path) -> Path:
         writer = csv.DictWriter(stream, rows[0])
         writer.writeheader()
         writer.writerows(rows)
+    (folder / "units.json").write_text('{"radical.g_uncertainty": "", "chi2": "mT", "jar": "l"}')
     return folder
 
 
@@ -329,7 +330,7 @@ def test_names_in_a_table_stay_in_the_folder(batch, name, fitted):
     shutil.copy(fitted, batch.parent / "out" / "outcome.h5")
     shutil.copy(fitted, batch / "outcome.h5")
     with open(batch / "summary.csv", "a", encoding="utf-8", newline="") as stream:
-        csv.writer(stream).writerow([name, "good", "", "", "", "", ""])
+        csv.writer(stream).writerow([name, "good", "", "", "", "", "", "", ""])
     path, skipped = build_batch_archive(batch)
     assert read_batch_summary(path).fits == ("b", "a")
     assert len(skipped) == 3
@@ -369,7 +370,7 @@ def test_a_damaged_batch_is_told(batch, capsys):
     with h5py.File(path, "r+") as root:
         (trace,) = root["a/spinfit.outcome/traces"].asstr()[()]
         root[f"a/{trace}/frequency"][...] = 1.0
-        root["spinfit.summary/table/column_4/values"][0] = 2.1
+        root["spinfit.summary/table/column_6/values"][0] = 2.1
     with pytest.raises(InputError, match="is damaged or was changed"):
         read_archive(path, "a")
     assert read_archive(path, "b").outcome.name == "j\u00f6b"

@@ -8,7 +8,9 @@ at a time, and the file can be made again at any time.
 from __future__ import annotations
 
 import csv
+import json
 import math
+import re
 from collections.abc import Iterator, Mapping
 from contextlib import suppress
 from dataclasses import dataclass
@@ -27,12 +29,16 @@ from spinfit.report.archive_reading import archive_from, kind_of_archive, read_g
 
 ARCHIVE = "batch.h5"
 SUMMARY = "summary.csv"
+UNITS = "units.json"
 SINGLE = "outcome.h5"
 SUMMARY_GROUP = "spinfit.summary"
 
 # Of the run itself: they would change the file from one run to the next.
 _NOT_KEPT = ("seconds",)
+_TEXTS = ("trace", "status", "outlier", "warnings", "hash", "reason")
+_NUMBER = re.compile(r"[+-]?(0|[1-9][0-9]*)(\.[0-9]*)?(?:[eE][+-]?[0-9]+)?")
 _LONGEST_CELL = 2**16
+_LONGEST_UNITS = 2**24
 _MOST_ROWS = 1_000_000
 
 
@@ -85,10 +91,23 @@ def _rows(folder: Path) -> list[dict[str, str]] | None:
 
 
 def _number(cell: str) -> float | None:
-    try:
-        return float(cell) if cell else math.nan
-    except ValueError:
+    """Return what a cell says as a number; None where a number would not keep it ("007", a long whole number)."""
+    if not cell:
+        return math.nan
+    digits = _NUMBER.fullmatch(cell)
+    if digits is None or (len(digits[1]) > 15 and not digits[2]):
         return None
+    value = float(cell)
+    return value if math.isfinite(value) else None
+
+
+def _units(folder: Path) -> dict[str, str]:
+    """Return the units of the table's columns; none where they are not stated."""
+    try:
+        found = json.loads((folder / UNITS).read_bytes()[:_LONGEST_UNITS])
+    except (OSError, ValueError, RecursionError):  # the table is complete without them
+        return {}
+    return {k: v for k, v in found.items() if isinstance(v, str)} if isinstance(found, dict) else {}
 
 
 def _columns(rows: list[dict[str, str]]) -> dict[str, list[Any]]:
@@ -98,13 +117,13 @@ def _columns(rows: list[dict[str, str]]) -> dict[str, list[Any]]:
         if name in _NOT_KEPT:
             continue
         cells = [row[name] for row in rows]
-        numbers = [_number(cell) for cell in cells]
+        numbers = [None] if name in _TEXTS else [_number(cell) for cell in cells]
         whole = None not in numbers and any(cells)
         found[name] = numbers if whole else [cell.replace("\x00", " ")[:_LONGEST_CELL] for cell in cells]
     return found
 
 
-def _overview(table: Mapping[str, list[Any]]) -> Group | None:
+def _overview(table: Mapping[str, list[Any]], units: Mapping[str, str]) -> Group | None:
     """Return what a viewer of the batch opens on: the first g (else the first value) that has an uncertainty."""
     fitted = [
         name
@@ -121,32 +140,34 @@ def _overview(table: Mapping[str, list[Any]]) -> Group | None:
         np.arange(1, len(table[name]) + 1),
         {"value": table[name], "value_errors": table[f"{name}_uncertainty"]},
         unit="",
+        signal_unit=units.get(name, ""),
         title=f"{name} of every trace, in the order of the table",
     )
     attrs = {key: value for key, value in drawn.attrs.items() if key != "auxiliary_signals"}
     return Group({**drawn.members, "name": Data(name)}, attrs)
 
 
-def _summary_tree(table: Mapping[str, list[Any]], fits: list[str], skipped: Mapping[str, str]) -> Group:
+def _summary_tree(
+    table: Mapping[str, list[Any]], units: Mapping[str, str], fits: list[str], skipped: Mapping[str, str]
+) -> Group:
     """Return the entry with the table."""
     columns: dict[str, Group | Data] = {}
     for number, (name, cells) in enumerate(table.items(), 1):
         numeric = all(isinstance(cell, float) for cell in cells)
         values = np.array(cells, dtype=float) if numeric else list(cells)
         # A heading is data: a name of the user's own column may hold anything.
-        columns[f"column_{number}"] = collection({"name": Data(name), "values": Data(values)})
+        attrs: dict[str, Attribute] = {"units": units[name]} if units.get(name) else {}
+        columns[f"column_{number}"] = collection({"name": Data(name), "values": Data(values, attrs)})
     members: dict[str, Group | Data] = {
         "title": Data("all fits of a batch"),
         "table": collection(columns),
         "fits": Data(fits),
         "skipped": collection({"name": Data(list(skipped)), "reason": Data(list(skipped.values()))}),
     }
-    overview = _overview(table)
-    attrs: dict[str, Attribute] = {}
-    if overview is not None:
-        members["overview"] = overview
-        attrs["default"] = "overview"
-    return sealed(collection(members, "NXentry", **attrs))
+    overview = _overview(table, units)
+    if overview is None:
+        return sealed(collection(members, "NXentry"))
+    return sealed(collection({**members, "overview": overview}, "NXentry", default="overview"))
 
 
 def _names(folder: Path, rows: list[dict[str, str]] | None) -> Iterator[tuple[str, str]]:
@@ -223,7 +244,7 @@ def build_batch_archive(folder: Path) -> tuple[Path, dict[str, str]]:
             fits[name] = None
         if not fits:
             raise InputError("holds no fit that could be kept", "run spinfit batch --out here first", file=folder)
-        summary = _summary_tree(_columns(rows or []), list(fits), skipped)
+        summary = _summary_tree(_columns(rows or []), _units(folder), list(fits), skipped)
         write_tree(root.create_group(SUMMARY_GROUP), summary)
         first = SUMMARY_GROUP if "default" in summary.attrs else next(iter(fits))
         for key, value in (("NX_class", "NXroot"), ("default", first), (FORMAT, FORMAT_VERSION), (KIND, "batch")):
