@@ -41,16 +41,20 @@ class Journal:
 
     def __init__(self, folder: Path) -> None:
         self.path = folder / JOURNAL
-        try:
-            is_new = not self.path.exists()
-            self._stream: BinaryIO = open(self.path, "a+b", buffering=0)
-            if is_new:
-                sync_folder(folder)
-        except OSError as error:
-            raise InputError(f"cannot be written ({error.strerror or error})", file=self.path) from error
         self._places: dict[str, int] = {}
         self._end = 0
-        self.catch_up()
+        is_new = not self.path.exists()
+        try:
+            self._stream: BinaryIO = open(self.path, "a+b", buffering=0)
+        except OSError as error:
+            raise InputError(f"cannot be written ({error.strerror or error})", file=self.path) from error
+        try:
+            if is_new:
+                sync_folder(folder)
+            self.catch_up()
+        except BaseException:
+            self._stream.close()
+            raise
 
     def catch_up(self) -> None:
         """Take in what is in the file and not yet known, and cut off what was never finished.

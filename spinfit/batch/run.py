@@ -19,7 +19,7 @@ from spinfit.batch.journal import Journal, Record
 from spinfit.batch.lock import locked
 from spinfit.batch.records import FAILED, GOOD, LATE, POOR, READING, WORK, NoRoom, call, failed, grace
 from spinfit.batch.table import SUMMARY, write_summary
-from spinfit.batch.tasks import Order, Plan, Task
+from spinfit.batch.tasks import RESERVED, Order, Plan, Task
 from spinfit.batch.workers import NoWorkers, Overrun, WorkerDied, Workers, process_pool
 from spinfit.errors import InputError
 from spinfit.files.folders import clear_unfinished
@@ -145,7 +145,7 @@ def run_batch(
     folder = Path(folder)
     _make(folder)
     with locked(folder):
-        clear_unfinished(folder)
+        clear_unfinished(folder, RESERVED)
         with Journal(folder) as journal:
             batch = _Batch(plan, folder, journal, time_limit, pictures, retry, listener)
             with suppress(_Stop):

@@ -76,7 +76,11 @@ def remove_files(folder: Path, names: Collection[str]) -> None:
         folder.rmdir()
 
 
-def clear_unfinished(folder: Path) -> None:
-    """Remove what killed processes left behind in a folder."""
+def clear_unfinished(folder: Path, names: Collection[str]) -> None:
+    """Remove what killed processes left behind in a folder: unfinished folders, and the beginnings of named files."""
     for path in folder.glob(f"{BESIDE}*"):
         shutil.rmtree(path, ignore_errors=True)
+    for name in map(Path, names):  # as `spinfit.files.atomic.whole_file` calls them
+        for path in folder.glob(f".{name.stem}.*{name.suffix}"):
+            with suppress(OSError):
+                path.unlink()
