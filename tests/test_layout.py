@@ -63,6 +63,7 @@ ORDER = (
     "alignment",
     "isotropic",
     "transitions",
+    "dependence",
     "solution",
     "spectrum",
     "derivatives",

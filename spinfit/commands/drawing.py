@@ -10,8 +10,8 @@ from spinfit.errors import InputError
 KINDS = (".png", ".svg", ".pdf")
 
 
-def picture_kind(path: str) -> str:
-    """Return "png", "svg" or "pdf" from a file's name.
+def picture_kind(path: str, option: str = "--plot") -> str:
+    """Return "png", "svg" or "pdf" from a file's name, which `option` gave.
 
     Raises
     ------
@@ -21,7 +21,7 @@ def picture_kind(path: str) -> str:
     suffix = Path(path).suffix.lower()
     if suffix not in KINDS:
         found = f'"{suffix}" is not a format of pictures' if suffix else "the name has no suffix"
-        raise InputError(found, "end the name in " + ", ".join(KINDS), place="--plot", file=path)
+        raise InputError(found, "end the name in " + ", ".join(KINDS), place=option, file=path)
     return suffix[1:]
 
 

@@ -5,21 +5,27 @@ from __future__ import annotations
 import argparse
 from typing import Any
 
-from spinfit.commands.screen import Screen
+from spinfit.commands.screen import Screen, quantity
 from spinfit.errors import InputError
 
 NAME = "lines"
-SUMMARY = "resonance fields of a model at chosen directions, as csv"
+SUMMARY = "resonance fields of a model at chosen directions, as csv; against direction, as pictures"
 EXAMPLES = (
     'spinfit lines chromium.toml --direction "30, 0 deg"',
     'spinfit lines chromium.toml --direction "0, 0 deg" --direction "90, 0 deg" --json',
+    "spinfit lines crystal.toml -o lines.csv --plot rotation.png",
+    'spinfit lines chromium.toml -o lines.csv --map where.png --at "282 mT"',
 )
+STEPS = 90
+"""Directions from one axis to the next in the picture of a powder."""
 COLUMNS = ("theta_deg", "phi_deg", "field_mT", "weight", "lower", "upper", "slope_MHz_per_mT")
 
 
 def options(parser: argparse.ArgumentParser) -> None:
     """Add the command's arguments."""
-    parser.add_argument("model", metavar="MODEL.toml", help="model file")
+    parser.add_argument(
+        "model", metavar="MODEL.toml", help="model file; or a job that fits line positions, whose start is then shown"
+    )
     parser.add_argument(
         "--direction",
         action="append",
@@ -28,6 +34,22 @@ def options(parser: argparse.ArgumentParser) -> None:
         "(default: the angles of a crystal, at every site, else the axes x, y and z)",
     )
     parser.add_argument("-o", "--output", metavar="FILE.csv", help="write there instead of to standard output")
+    parser.add_argument(
+        "--plot",
+        metavar="FILE",
+        help="draw resonance fields as the crystal turns, else on circles between the molecular axes "
+        "(.png, .svg or .pdf)",
+    )
+    parser.add_argument(
+        "--map",
+        metavar="FILE",
+        help="draw where on the sphere each transition of the first species has its field (.png, .svg or .pdf)",
+    )
+    parser.add_argument(
+        "--at",
+        metavar="QUANTITY",
+        help='with --map: at this field, such as "335 mT", draw which directions of each species absorb',
+    )
 
 
 def _directions(args: argparse.Namespace, model: Any) -> tuple[Any, Any]:
@@ -100,12 +122,13 @@ def rows_of(model: Any, angles: Any, microwave: Any) -> list[dict[str, Any]]:
 def run(args: argparse.Namespace, screen: Screen) -> int:
     """Find the resonances and print them."""
     from spinfit.files.atomic import write_text
-    from spinfit.files.job import read_model
 
-    model = read_model(args.model)
+    at = _checked_pictures(args)
+    model, measured = _read(args, screen)
     angles, microwave = _directions(args, model)
     try:
         rows = rows_of(model, angles, microwave)
+        _draw(args, model, at, measured)
     except InputError as error:
         raise error.at(file=args.model) from error
     extra = [key for key in ("species", "system") if any(key in row for row in rows)]
@@ -117,6 +140,103 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
         screen.raw(text)
     screen.emit(rows)
     return 0
+
+
+def _read(args: argparse.Namespace, screen: Screen) -> tuple[Any, Any]:
+    """Read a model; of a job that fits line positions, its start and the first table that was turned."""
+    from dataclasses import replace
+
+    from spinfit.files.job import Model, read_job, read_model
+    from spinfit.files.toml_table import load_toml
+    from spinfit.sweep import Sweep
+
+    tables, _ = load_toml(args.model)
+    if "lines" not in tables or "sweep" in tables:
+        return read_model(args.model), None
+    job = read_job(args.model)
+    turned = [table for table in job.lines if table.angle is not None]
+    if not turned:
+        right = "give angle_deg in the table, or write a model with [sweep]"
+        raise InputError("no table of lines has angles of rotation", right, place="lines", file=args.model)
+    table = turned[0]
+    if len(turned) > 1:
+        screen.aside(f"{table.name} is shown, the first of {len(turned)} tables of lines")
+    field = table.field * table.field_scale + table.field_offset
+    room = 0.1 * float(field.max() - field.min()) or 10.0
+    window = (max(float(field.min()) - room, 0.0), float(field.max()) + room)
+    sweep = Sweep(table.frequency, window, temperature=table.temperature, microwave=table.microwave)
+    angles = tuple(sorted({float(angle) for angle in table.angle}))
+    sample = replace(job.sample, angles=angles)
+    if table.axis is not None:
+        sample = replace(sample, axis=table.axis)
+    if table.start is not None:
+        sample = replace(sample, start=table.start)
+    return Model(job.species, sweep, sample, name=job.name, path=job.path), table
+
+
+def _checked_pictures(args: argparse.Namespace) -> float | None:
+    """Refuse pictures that cannot be drawn; return the field of --at, mT."""
+    from spinfit.commands.drawing import picture_kind
+
+    for option, path in (("--plot", args.plot), ("--map", args.map)):
+        if path is not None:
+            picture_kind(path, option)
+    at = quantity(args.at, "field", "--at")
+    if at is not None and args.map is None:
+        raise InputError("says at which field to draw a map", "add --map FILE.png", place="--at")
+    if at is not None and at <= 0:
+        raise InputError(f"{at:g} mT", "write a positive field", place="--at")
+    return at
+
+
+def _draw(args: argparse.Namespace, model: Any, at: float | None, measured: Any) -> None:
+    """Draw what is asked for."""
+    from spinfit.commands.drawing import save_picture
+
+    if model.sample.form == "solution" and (args.plot or args.map):
+        right = "leave it out, or take the sample as a powder"
+        raise InputError("a solution has no directions", right, place="--plot" if args.plot else "--map")
+    if args.plot:
+        save_picture(args.plot, _dependence(model, measured))
+    if args.map:
+        save_picture(args.map, _map(model, at))
+
+
+def _dependence(model: Any, measured: Any) -> Any:
+    """Return resonance fields as the crystal turns, or along circles between the molecular axes."""
+    import numpy as np
+
+    from spinfit.dependence import great_circles, path, rotation
+    from spinfit.report.dependence_plots import path_figure, rotation_figure
+
+    sweep, names = model.sweep, [one.name for one in model.species]
+    if model.sample.form != "crystal":
+        strands = path(model.species, sweep, model.sample, great_circles(STEPS))
+        return path_figure(strands, names, steps=STEPS, frequency=sweep.frequency, window=sweep.field)
+    angles = model.sample.angles
+    first, last = (min(angles), max(angles)) if len(angles) > 1 else (angles[0], angles[0] + np.pi)
+    turned = np.linspace(first, last, max(181, round(float(np.rad2deg(last - first))) + 1))
+    strands = rotation(model.species, sweep, model.sample, turned)
+    marked = angles if measured is None and len(angles) < 40 else ()
+    return rotation_figure(
+        strands, turned, names, frequency=sweep.frequency, window=sweep.field, measured=measured, marked=marked
+    )
+
+
+def _map(model: Any, at: float | None) -> Any:
+    """Return maps on the sphere: of fields for each transition, or of what absorbs at one field."""
+    from spinfit.dependence import over_sphere
+    from spinfit.report.dependence_plots import absorption_figure, fields_figure
+
+    sweep = model.sweep
+    if at is None:
+        one = model.species[0]
+        return fields_figure(over_sphere(one, sweep, model.sample), one.name, frequency=sweep.frequency)
+    found = []
+    for one in model.species:
+        width = max(one.width.gaussian, one.width.lorentzian) or 1.0
+        found.append((one.name, over_sphere(one, sweep, model.sample), width))
+    return absorption_figure(found, at, frequency=sweep.frequency)
 
 
 def _cell(value: Any) -> str:
