@@ -223,6 +223,31 @@ def test_attributes_of_any_kind_are_no_trouble():
     assert read_hdf5(file_bytes(fill), "f.h5").columns.shape == (16, 2)
 
 
+def test_datasets_in_other_files_are_not_even_looked_at(tmp_path, monkeypatch):
+    """Opening a pipe waits for whoever writes into it: a reader that looked would hang."""
+    os.mkfifo(tmp_path / "pipe.h5")
+    monkeypatch.setattr(guard, "_PATIENCE", 0.5)
+    layout = h5py.VirtualLayout((16,), "f8", maxshape=(None,))
+    source = h5py.VirtualSource(str(tmp_path / "pipe.h5"), "x", (16,), maxshape=(None,))
+    layout[: h5py.h5s.UNLIMITED] = source[: h5py.h5s.UNLIMITED]
+
+    def virtual(group):
+        group.create_virtual_dataset("signal", layout)
+
+    def beside(group):
+        group["signal"] = np.sin(X)
+        group.create_virtual_dataset("frequency", layout)
+
+    def unnamed(group):
+        group.create_virtual_dataset("signal", layout)
+        for key in list(group.attrs):
+            del group.attrs[key]
+
+    assert "another file" in refusal(replaced(virtual))
+    assert "another file" in refusal(replaced(unnamed))
+    assert read_hdf5(replaced(beside), "f.h5").header == {}
+
+
 # Damage ---------------------------------------------------------------------------------------------
 
 

@@ -11,11 +11,9 @@ from __future__ import annotations
 import atexit
 import json
 import os
-import select
 import subprocess
 import sys
 import threading
-import time
 from collections.abc import Sequence
 from typing import Any
 
@@ -116,64 +114,68 @@ class _Child:
         _Broken
         """
         process = self.start()
-        until = time.monotonic() + wait
+        late = threading.Event()
+
+        def give_up() -> None:
+            late.set()
+            process.kill()
+
+        timer = threading.Timer(wait, give_up)
+        timer.daemon = True
+        timer.start()
         try:
-            _write(process, header + b"\n", until)
-            _write(process, content, until)
-            size = int.from_bytes(_read(process, 8, until), "little")
-            if size > _LONGEST_ANSWER:
-                raise _Broken("its answer is too long")
-            answer = json.loads(_read(process, size, until))
-            arrays = []
-            for kind, shape in answer.get("arrays", []):
-                dtype = np.dtype(kind)
-                length = int(np.prod(shape, dtype=np.int64)) * dtype.itemsize
-                arrays.append(np.frombuffer(_read(process, length, until), dtype=dtype).reshape(shape))
+            answer, arrays = _exchanged(process, header, content)
         except _Broken as broken:
             code = process.poll() if str(broken) else process.wait()
             self.stop()
-            raise _Broken(str(broken) or _ending(code)) from None
+            raise _Broken(_ENDLESS if late.is_set() else str(broken) or _ending(code)) from None
         except BaseException:  # stopped by the user half-way: what the child still says answers nothing
             self.stop()
             raise
+        finally:
+            timer.cancel()
         self.failures += "arrays" not in answer
         return answer, arrays
 
 
-def _ending(code: int | None) -> str:
-    """Say how the child ended."""
-    if code is not None and -code in _LIMIT_SIGNALS:
-        return "reading it does not end"
-    return "the HDF5 library crashes on it"
-
-
+_ENDLESS = "reading it does not end"
 _LIMIT_SIGNALS = (24,)  # SIGXCPU, which not every system has by name
 
 
-def _write(process: subprocess.Popen[bytes], content: bytes, until: float) -> None:
-    """Write to the child, which may have died or stopped to listen."""
-    left = memoryview(content)
-    stream = process.stdin
-    assert stream is not None
+def _ending(code: int | None) -> str:
+    """Say how the child ended."""
+    return _ENDLESS if code is not None and -code in _LIMIT_SIGNALS else "the HDF5 library crashes on it"
+
+
+def _exchanged(process: subprocess.Popen[bytes], header: bytes, content: bytes) -> tuple[dict[str, Any], Arrays]:
+    """Write the question and read the answer."""
+    assert process.stdin is not None
     try:
-        while left:
-            if not select.select([], [stream], [], max(0.0, until - time.monotonic()))[1]:
-                raise _Broken("reading it does not end")
-            left = left[os.write(stream.fileno(), left[: 2**16]) :]
-    except BrokenPipeError:
+        for part in (header + b"\n", content):
+            left = memoryview(part)
+            while left:
+                left = left[process.stdin.write(left) :]
+    except OSError:  # it is gone
         raise _Broken("") from None
+    size = int.from_bytes(_read(process, 8), "little")
+    if size > _LONGEST_ANSWER:
+        raise _Broken("its answer is too long")
+    answer = json.loads(_read(process, size))
+    arrays = []
+    for kind, shape in answer.get("arrays", []):
+        dtype = np.dtype(kind)
+        length = int(np.prod(shape, dtype=np.int64)) * dtype.itemsize
+        arrays.append(np.frombuffer(_read(process, length), dtype=dtype).reshape(shape))
+    return answer, arrays
 
 
-def _read(process: subprocess.Popen[bytes], size: int, until: float) -> bytearray:
+def _read(process: subprocess.Popen[bytes], size: int) -> bytearray:
     """Read from the child."""
     content = bytearray(size)
     view, at = memoryview(content), 0
-    stream = process.stdout
-    assert stream is not None
+    assert process.stdout is not None
     while at < size:
-        if not select.select([stream], [], [], max(0.0, until - time.monotonic()))[0]:
-            raise _Broken("reading it does not end")
-        got = os.readv(stream.fileno(), [view[at:]])
+        got = process.stdout.readinto(view[at:])  # type: ignore[attr-defined]  # a raw stream, as bufsize is 0
         if not got:
             raise _Broken("")
         at += got
@@ -181,7 +183,8 @@ def _read(process: subprocess.Popen[bytes], size: int, until: float) -> bytearra
 
 
 _child = _Child()
-os.register_at_fork(after_in_child=_child.forget)
+if hasattr(os, "register_at_fork"):
+    os.register_at_fork(after_in_child=lambda: _child.forget())
 
 
 def ask(

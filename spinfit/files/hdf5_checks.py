@@ -21,6 +21,14 @@ _HARMLESS = 2**25
 _LONGEST_TEXT = 2**16
 
 
+def is_elsewhere(data: h5py.Dataset) -> bool:
+    """Whether a dataset's numbers lie in other files.
+
+    To be asked first: the library opens the other files to tell the shape of a virtual dataset.
+    """
+    return bool(data.is_virtual or data.external)
+
+
 def check_dataset(data: h5py.Dataset, place: str, file: str) -> None:
     """Refuse a dataset that lies in another file, needs a plugin, or unpacks to far more than is stored of it.
 
@@ -28,7 +36,7 @@ def check_dataset(data: h5py.Dataset, place: str, file: str) -> None:
     ------
     InputError
     """
-    if data.external or data.is_virtual:
+    if is_elsewhere(data):
         raise InputError("is stored in another file", "copy the data into the file", place=place, file=file)
     if data.shape is None:
         raise InputError("is empty", "give at least one number", place=place, file=file)
@@ -48,7 +56,7 @@ def check_dataset(data: h5py.Dataset, place: str, file: str) -> None:
 
 def is_small_scalar(data: h5py.Dataset) -> bool:
     """Whether a dataset is one number or text of ordinary size that stands in the file itself."""
-    if data.shape is None or math.prod(data.shape) != 1 or data.external or data.is_virtual:
+    if is_elsewhere(data) or data.shape is None or math.prod(data.shape) != 1:
         return False
     is_text = h5py.check_string_dtype(data.dtype) is not None
     return (data.dtype.kind in "iuf" or is_text) and data.dtype.itemsize <= _LONGEST_TEXT

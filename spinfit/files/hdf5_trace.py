@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from spinfit.errors import InputError
 from spinfit.files.conditions import is_field, put, tidy_unit
-from spinfit.files.hdf5_checks import check_dataset, is_small_scalar
+from spinfit.files.hdf5_checks import check_dataset, is_elsewhere, is_small_scalar
 from spinfit.files.raw import MAX_POINTS, Note, RawTrace
 
 _MAX_NODES = 2000
@@ -153,7 +153,7 @@ def _columns_by_name(group: h5py.Group, file: str) -> tuple[str, str] | None:
         for name in group
         if isinstance(group.get(name, getlink=True), h5py.HardLink)
         and isinstance(group.get(name), h5py.Dataset)
-        and group[name].ndim == 1
+        and (is_elsewhere(group[name]) or group[name].ndim == 1)
     ]
     fields = [name for name in flat if is_field(name.removesuffix("_mT").removesuffix("_G").removesuffix("_T"))]
     others = [name for name in flat if name not in fields]
@@ -168,7 +168,7 @@ def _read(group: h5py.Group, name: str, file: str) -> tuple[NDArray[np.float64],
         raise InputError(
             "there is no such dataset", "name it by the attributes signal and axes", place=place, file=file
         )
-    if (data.size or 0) > MAX_POINTS:
+    if not is_elsewhere(data) and (data.size or 0) > MAX_POINTS:
         found = f"holds {data.size:.3g} numbers"
         raise InputError(found, f"at most {MAX_POINTS:.3g} are read", place=place, file=file)
     check_dataset(data, place, file)
