@@ -15,6 +15,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -162,17 +163,35 @@ class FieldGrid:
         order : int
             0 as it stands, 1 integrated once over the field, 2 twice.
         """
-        k = self.wavenumbers()
         running = histogram
         for _ in range(order):
             running = np.cumsum(running)
-        return fft.rfft(running) * _integration(k, self.step) ** order / np.sinc(0.5 * k * self.step / np.pi) ** 4
+        out = fft.rfft(running) * _of_splines(self.count)[0]
+        return out * _integration(self.wavenumbers(), self.step) ** order if order else out
+
+    def transform_of_smeared(self, histograms: Array, sizes: Array) -> NDArray[np.complex128]:
+        """Return the transform, shape (count//2 + 1,), of the sum of deposits, each smeared by its size.
+
+        Parameters
+        ----------
+        histograms : ndarray, shape (r, count)
+        sizes : ndarray, shape (r,)
+            mT; see `smear_kernel`.
+        """
+        rows = np.flatnonzero(histograms.any(axis=1))
+        if not len(rows):
+            return np.zeros(self.count // 2 + 1, dtype=complex)
+        found = fft.rfft(histograms[rows])
+        for row, size in enumerate(sizes[rows]):
+            if size > 0:
+                found[row] *= _of_smear(self.count, float(size / self.step))
+        return found.sum(axis=0) * _of_splines(self.count)[0]
 
     def render(self, transform: NDArray[np.complex128], shape: Shape) -> Array:
         """Return the spline coefficients, shape (count,), of a transform broadened by a shape."""
-        k = self.wavenumbers()
-        own_value = (2 + np.cos(k * self.step)) / 3  # of the sampling spline at the grid points
-        return fft.irfft(transform * shape.transform(k) / (own_value * self.step), self.count)
+        return fft.irfft(
+            transform * shape.transform(self.wavenumbers()) * (_of_splines(self.count)[1] / self.step), self.count
+        )
 
     def coefficients(self, histograms: dict[int, Array], shape: Shape) -> Array:
         """Return the spline coefficients, shape (count,), of the spectrum of deposits by order."""
@@ -184,6 +203,29 @@ class FieldGrid:
         i = np.clip(x.astype(np.intp), 1, self.count - 3)
         taps = kernels.taps(x - i)
         return sum(taps[k] * coefficients[i + (k - 1)] for k in range(4))
+
+
+def smear_kernel(k: Array, size: float) -> Array:
+    """Return the transform of a smoothing kernel whose second and fourth moments vanish.
+
+    exp(-x)(1 + x + x^2/2) with x = (k size)^2/2 differs from 1 by x^3/6: what is smooth over `size`
+    passes unchanged, while the grain of points up to about `size` apart is gone.
+    """
+    x = 0.5 * (k * size) ** 2
+    return np.exp(-x) * (1 + x * (1 + 0.5 * x))
+
+
+@lru_cache(maxsize=32)
+def _of_splines(count: int) -> tuple[Array, Array]:
+    """Return what divides out the transform of depositing splines, and of the values of sampling ones."""
+    turn = fft.rfftfreq(count)  # k step / 2 pi
+    return np.sinc(turn) ** -4, 3 / (2 + np.cos(2 * np.pi * turn))
+
+
+@lru_cache(maxsize=64)
+def _of_smear(count: int, size: float) -> Array:
+    """Return `smear_kernel` on a grid; `size` in steps, so that grids of one tolerance share it."""
+    return smear_kernel(2 * np.pi * fft.rfftfreq(count), size)
 
 
 def _integration(k: Array, step: float) -> NDArray[np.complex128]:

@@ -55,7 +55,7 @@ FIELDS, BLOCK = 20, 6000
 
 
 def kernel(u: Array) -> Array:
-    """Return the kernel of unit area whose second and fourth moments vanish, see `sheets.smear_kernel`."""
+    """Return the kernel of unit area whose second and fourth moments vanish, see `lineshape.smear_kernel`."""
     square = u * u
     return np.exp(-0.5 * square) * (1.875 - square * (1.25 - 0.125 * square)) * (1 / math.sqrt(2 * math.pi))
 

@@ -43,16 +43,6 @@ def smear_for(apart: Array, close: float, smear: float) -> Array:
     return smear * apart * ratio / (ratio + ONSET)
 
 
-def smear_kernel(k: Array, size: float) -> Array:
-    """Return the transform of a smoothing kernel whose second and fourth moments vanish.
-
-    exp(-x)(1 + x + x^2/2) with x = (k size)^2/2 differs from 1 by x^3/6: what is smooth over `size`
-    passes unchanged, while the grain of points up to about `size` apart is gone.
-    """
-    x = 0.5 * (k * size) ** 2
-    return np.exp(-x) * (1 + x * (1 + 0.5 * x))
-
-
 class Histograms:
     """Deposits on one grid: plain, smeared by classes of size, and broadened by classes of width.
 
@@ -76,14 +66,10 @@ class Histograms:
 
     def transform(self) -> NDArray[np.complex128]:
         """Return the Fourier transform of everything deposited."""
-        k = self.grid.wavenumbers()
-        total = self.grid.transform(self.plain[0])
-        for size, histogram in zip(self.sizes, self.plain[1:], strict=True):
-            if histogram.any():
-                total += self.grid.transform(histogram) * smear_kernel(k, size)
+        total = self.grid.transform_of_smeared(self.plain, np.concatenate([[0.0], self.sizes]))
         for variance, histogram in zip(self.variances, self.widened, strict=True):
             if histogram.any():
-                total += self.grid.transform(histogram) * np.exp(-0.5 * variance * k**2)
+                total += self.grid.transform(histogram) * np.exp(-0.5 * variance * self.grid.wavenumbers() ** 2)
         return total
 
     def sheets(self, x: Array, y: Array, inverse: NDArray[np.bool_], mesh: Mesh, grain: Grain) -> None:

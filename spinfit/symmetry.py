@@ -7,6 +7,7 @@ symmetry reduces it to a quarter, an octant, one meridian or one point.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -36,25 +37,35 @@ class Symmetry:
     axes: Array
 
 
-def _turn(axis: Array, angle: float) -> Array:
+@lru_cache(maxsize=256)
+def _turn(axis: tuple[float, float, float], angle: float) -> Array:
     k = np.array([[0, -axis[2], axis[1]], [axis[2], 0, -axis[0]], [-axis[1], axis[0], 0]])
     return np.eye(3) + np.sin(angle) * k + (1 - np.cos(angle)) * k @ k
 
 
-def _invariant(system: System, axis: Array, angle: float) -> bool:
-    """Whether turning every spin and the field about `axis` leaves H(B) as it is."""
-    u = rotation(system, axis, angle)
-    n = len(system.h0)
-    scale = 1e-9 * (np.abs(system.h0).max() + 1e3 * np.abs(system.zeeman).max())
-    if np.abs(u @ system.h0 @ u.conj().T - system.h0).max() > scale:
-        return False
-    turned = u @ system.zeeman @ u.conj().T
-    expected = np.dot(_turn(axis, angle).T, system.zeeman.reshape(3, -1)).reshape(3, n, n)
-    if np.abs(turned - expected).max() > 1e-9 * np.abs(system.zeeman).max():
-        return False
-    turn = _turn(axis, angle)
-    tensors = [t for one in system.weak for kind in one.kinds for t in (kind.hyperfine, kind.quadrupole)]
-    return all(np.abs(turn @ t @ turn.T - t).max() <= 1e-9 * np.abs(t).max() for t in tensors)
+class _Tested:
+    """A system whose symmetry is asked for: its matrices side by side, and what counts as no change of them."""
+
+    def __init__(self, system: System) -> None:
+        self.system = system
+        n = len(system.h0)
+        self.matrices = np.concatenate([system.h0[None], system.zeeman])
+        largest = np.abs(self.matrices).reshape(4, n * n).max(axis=1)
+        zeeman = max(largest[1:])
+        self.scale = 1e-9 * np.array([largest[0] + 1e3 * zeeman, zeeman, zeeman, zeeman])
+        self.tensors = [t for one in system.weak for kind in one.kinds for t in (kind.hyperfine, kind.quadrupole)]
+
+    def invariant(self, axis: Array, angle: float) -> bool:
+        """Whether turning every spin and the field about `axis` leaves H(B) as it is."""
+        axis = tuple(axis.tolist())
+        turn = _turn(axis, angle)
+        u = rotation(self.system, axis, angle)
+        expected = self.matrices.copy()
+        expected[1:] = np.dot(turn.T, self.matrices[1:].reshape(3, -1)).reshape(expected[1:].shape)
+        miss = np.abs(u @ self.matrices @ u.conj().T - expected)
+        if (miss.reshape(4, -1).max(axis=1) > self.scale).any():
+            return False
+        return all(np.abs(turn @ t @ turn.T - t).max() <= 1e-9 * np.abs(t).max() for t in self.tensors)
 
 
 def symmetry_of(system: System, *others: System) -> Symmetry:
@@ -66,8 +77,8 @@ def symmetry_of(system: System, *others: System) -> Symmetry:
     frames = system.frames or (np.eye(3),)
     any_angle = 1.0  # rad; an angle that is no fraction of a turn stands for all angles
     axes = [frame[:, k] for frame in frames for k in (2, 0, 1)]
-    every = (system, *others)
-    continuous = [axis for axis in axes if all(_invariant(one, axis, any_angle) for one in every)]
+    every = [_Tested(one) for one in (system, *others)]
+    continuous = [axis for axis in axes if all(one.invariant(axis, any_angle) for one in every)]
     if continuous:
         z = continuous[0]
         if any(abs(z @ axis) < 0.999 for axis in continuous):
@@ -75,7 +86,9 @@ def symmetry_of(system: System, *others: System) -> Symmetry:
         return Symmetry("axial", _frame_about(z))
     best: Symmetry | None = None
     for frame in frames:
-        twofold = [all(_invariant(one, frame[:, k], np.pi) for one in every) for k in range(3)]
+        twofold = [all(one.invariant(frame[:, k], np.pi) for one in every) for k in range(2)]
+        # two such turns make the third, and one of them forbids it
+        twofold.append(all(twofold) or (not any(twofold) and all(one.invariant(frame[:, 2], np.pi) for one in every)))
         if all(twofold):
             return Symmetry("octant", _with_unique_z(frame, _anisotropy(system)))
         if any(twofold) and best is None:
