@@ -17,12 +17,7 @@ import subprocess
 import sys
 import time
 import traceback
-from collections.abc import Callable
 from pathlib import Path
-
-from fuzz_seeds import DICTIONARIES, TABLE, TRACE, seeds_of
-
-from spinfit.errors import SpinfitError
 
 ROOT = Path(__file__).resolve().parents[1]
 TARGETS = ("text", "jcamp", "toml", "ties", "ligands", "hdf5", "archive")
@@ -32,64 +27,7 @@ IN_LIBRARY = ("hdf5", "archive")
 SLOW = 2.0
 """Seconds of processor time beyond which an input counts as a finding."""
 
-# ---------------------------------------------------------------- the targets
-
-
-def reader_of(name: str) -> Callable[[bytes], object]:
-    """Return a reader, instrumented; it takes the bytes of a file."""
-    import atheris
-
-    with atheris.instrument_imports(include=["spinfit"]):
-        if name == "archive":
-            from spinfit.report.archive_reading import archive_from
-        from spinfit.files.hdf5_child import answer_to
-        from spinfit.files.jcamp import read_jcamp
-        from spinfit.files.job import _job_from, model_from
-        from spinfit.files.reading import assemble
-        from spinfit.files.store import Kept
-        from spinfit.files.text import read_text
-        from spinfit.files.toml_crystal_field import crystal_fields_of
-        from spinfit.files.toml_table import parse_toml
-        from spinfit.files.tree import tree_from
-        from spinfit.fitting.parameters import Binding
-        from spinfit.fitting.ties import compile_ties, evaluate, names_in, parse_tie, slopes
-    from spinfit.files.job import read_model
-
-    kept = {"t.csv": TRACE, "l.csv": TABLE}
-    model = read_model(ROOT / "demo_spectra/models/honey_glass_iron.toml")
-    known = Binding(model.species, model.sample).parameters
-
-    def toml(data: bytes) -> None:
-        tables = parse_toml(data.decode("utf-8", "replace"))
-        if "fit" in tables or "trace" in tables:
-            _job_from(tables, Path("job.toml"), "", Kept(kept))
-        else:
-            model_from(tables)
-
-    def ties(data: bytes) -> None:
-        lines = data.decode("utf-8", "replace").split("\n")
-        tree = parse_tie(lines[0])
-        values = {name: 0.5 for name in names_in(tree)}
-        evaluate(tree, values)
-        slopes(tree, values)
-        compiled = compile_ties(dict(zip(known, lines, strict=False)), known)
-        start = {name: one.value for name, one in known.items()}
-        compiled.apply(start)
-        compiled.gradient(start)
-
-    def question(what: str) -> dict[str, object]:
-        return {"what": what, "file": "f.h5", "path": "", "under": []}
-
-    readers: dict[str, Callable[[bytes], object]] = {
-        "text": lambda data: assemble(read_text(data, "f.csv"), field_unit="mT"),
-        "jcamp": lambda data: assemble(read_jcamp(data, "f.jdx"), field_unit="mT"),
-        "toml": toml,
-        "ties": ties,
-        "ligands": lambda data: crystal_fields_of(parse_toml(data.decode("utf-8", "replace"))),
-        "hdf5": lambda data: answer_to(question("trace"), data),
-        "archive": lambda data: archive_from(tree_from(*answer_to(question("tree"), data)), "f.h5"),
-    }
-    return readers[name]
+# ---------------------------------------------------------------- inside the fuzzer
 
 
 def fault_of(error: BaseException) -> str:
@@ -103,7 +41,11 @@ def inside(name: str, folder: Path, flags: list[str]) -> None:
     """Fuzz one target in this process until libFuzzer ends it."""
     import atheris
 
-    reader = reader_of(name)
+    with atheris.instrument_imports(include=["spinfit"]):
+        from fuzz_targets import READERS
+
+        from spinfit.errors import SpinfitError
+    reader = READERS[name]
     seen: set[str] = set()
 
     def keep(fault: str, data: bytes) -> None:
@@ -137,6 +79,8 @@ _STATUS = re.compile(r"#(\d+)\s+(\w+)\s+cov: (\d+) ft: (\d+)")
 
 def fuzz(name: str, folder: Path, seconds: float, runs: int) -> dict[str, object]:
     """Run one target until its time or its number of inputs is over; return what happened."""
+    from fuzz_seeds import DICTIONARIES, seeds_of  # not in the fuzzer, where nothing may be imported before it
+
     corpus, findings = folder / "corpus" / name, folder / "findings" / name
     for place in (corpus, findings):
         place.mkdir(parents=True, exist_ok=True)

@@ -20,6 +20,8 @@ TABLE = b"""# frequency 9.4 GHz
 angle_deg,field_mT,uncertainty_mT,lower,upper
 0,335,0.1,1,2
 30,330,0.1,1,2
+60,325,0.1,1,2
+75,322,0.1,1,2
 90,320,0.1,0,0
 """
 """A table of line positions for the jobs."""
@@ -31,8 +33,6 @@ S = "1/2"
 g = [2.05, 2.25]
 g_tilt = "0, 10, 0 deg"
 amount = 1.0
-[species.stevens]
-B2_0 = "1 MHz"
 [[species.nucleus]]
 isotope = "63Cu"
 A = "-35, -540 MHz"
@@ -64,6 +64,20 @@ between = [1, 2]
 J = "60 cm^-1"
 dipolar = "900, 900, -1800 MHz"
 antisymmetric = "0, 0, 1 MHz"
+[species.width]
+gaussian = "1 mT"
+[[species]]
+name = "fe"
+S = "5/2"
+g = [2.0, 2.0, 2.1]
+populations = [0.1, 0.2, 0.3, 0.2, 0.1, 0.1]
+[species.stevens]
+B2_0 = "300 MHz"
+B4_m3 = "2 MHz"
+[species.width]
+gaussian = "1 mT"
+[species.spread]
+D = "300 MHz"
 """
 _SWEEP = b"""[sweep]
 frequency = "9.5 GHz"
@@ -121,6 +135,8 @@ measured = "2.05, 2.33(1)"
 "x2-y2" = "15000 cm^-1"
 z2 = "7000 cm^-1"
 xy = "0 cm^-1"
+xz = "-0.06 eV"
+yz = "-500 cm^-1"
 """,
     b"""[[ion]]
 name = "Ni2+"
@@ -183,12 +199,13 @@ def seeds_of(name: str) -> list[bytes]:
         models = [_SPECIES + _SWEEP, _PAIR + _SWEEP, _SPECIES + _SWEEP + _CRYSTAL, _SPECIES + _SWEEP + _ALIGNED]
         jobs = [_SPECIES + _JOB, _SPECIES + _CRYSTAL.replace(b"angles", b"#angles") + _LINES]
         field = b'[[species]]\nname = "f"\nion = "Cu2+"\n[species.crystal_field]\nzeta = "829 cm^-1"\n'
-        field += b'[species.crystal_field.octahedral]\nten_Dq = "12000 cm^-1"\nDs = "900 cm^-1"\n' + _SWEEP
+        field += b'[species.crystal_field.octahedral]\nten_Dq = "12000 cm^-1"\nDs = "900 cm^-1"\n'
+        field += b'Dt = "300 cm^-1"\n[species.width]\ngaussian = "1 mT"\n' + _SWEEP
         return [*models, *jobs, field]
     if name == "ties":
         return [
             b"fe.D / 3\n1",
-            b"2*(fe.g + 1)**2 - 3e-2\nrad.g\nfe.D*2",
+            b"2*(rad.g + 1)**2 - 3e-2\nrad.amount * 100\n0.1",
             b"-(-(1.5))**-2",
             b"rad.width.lorentzian**0.5",
         ]
