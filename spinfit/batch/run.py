@@ -17,7 +17,7 @@ from typing import Any
 
 from spinfit.batch.journal import Journal, Record
 from spinfit.batch.lock import locked
-from spinfit.batch.records import FAILED, GOOD, LATE, POOR, READING, WORK, NoRoom, call, failed, grace
+from spinfit.batch.records import FAILED, GOOD, LATE, POOR, WORK, NoRoom, call, failed, grace
 from spinfit.batch.table import SUMMARY, write_summary
 from spinfit.batch.tasks import RESERVED, Order, Plan, Task
 from spinfit.batch.workers import NoWorkers, Overrun, WorkerDied, Workers, process_pool
@@ -355,7 +355,7 @@ class _Batch:
         if limit is not None and seconds == grace(limit):
             record = failed(order.name, order.free, order.hash, "time", f"did not stop at {limit:g} s and was ended")
             return record | {"status": LATE, "limit": limit, "seconds": seconds}
-        reason = f"its files could not be read in {READING:g} s"
+        reason = f"its files could not be read in {seconds:g} s"
         return failed(order.name, order.free, order.hash, "input", reason) | {"seconds": seconds}
 
     def _died(self, order: Order, error: BrokenExecutor) -> list[Record]:

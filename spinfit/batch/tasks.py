@@ -218,9 +218,11 @@ def _renamed(entries: Any, new: Mapping[str, str]) -> Any:
 
 
 def file_hash(path: str) -> str:
-    """Return the SHA-256 of a file's content; what hinders when it cannot be read."""
+    """Return the SHA-256 of a file's content, or what hinders."""
     digest = hashlib.sha256()
     try:
+        if not os.path.isfile(path):  # a pipe would be waited for, and emptied
+            return "not a file"
         with open(path, "rb") as stream:
             while piece := stream.read(_PIECE):
                 digest.update(piece)
