@@ -26,6 +26,8 @@ CONDITIONS = tuple(CONDITION_UNITS)
 QUALITY = ("chi2_reduced", "converged", "noise", "points", "free_parameters")
 LAST = (*QUALITY, "warnings", "seconds", "hash", "reason")
 FIXED = (*FIRST, *CONDITIONS, *LAST)
+TEXTS = ("trace", "status", "outlier", "warnings", "hash", "reason")
+"""Columns that hold texts, even where every cell is empty."""
 UNCERTAINTY = "_uncertainty"
 
 

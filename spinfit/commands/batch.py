@@ -5,7 +5,7 @@ from __future__ import annotations
 import argparse
 import os
 import signal
-from collections.abc import Callable, Iterator
+from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
@@ -165,33 +165,26 @@ def _pyarrow() -> Any:
 
 def _write_parquet(summary: Path) -> str:
     """Write the table once more as parquet; pyarrow tells numbers from words as pandas does."""
+    from spinfit.batch.table import TEXTS
     from spinfit.files.atomic import whole_file
 
     pyarrow = _pyarrow()
-    table = pyarrow.csv.read_csv(summary)
+    # Said for the columns of texts, so that tables of several batches fit together where one has no text.
+    types = pyarrow.csv.ConvertOptions(column_types=dict.fromkeys(TEXTS, pyarrow.string()))
+    table = pyarrow.csv.read_csv(summary, convert_options=types)
     path = summary.with_suffix(".parquet")
     with whole_file(path) as beside:
         pyarrow.parquet.write_table(table, beside)
     return path.name
 
 
-def _makers() -> Iterator[tuple[str, Callable[[Path], Path]]]:
-    """Yield what is made of a finished batch beyond its table."""
-    import importlib
-    import importlib.util
-
-    for module, function, name in (
-        ("spinfit.report.batch_archive", "write_batch_archive", "batch.h5"),
-        ("spinfit.report.batch_html", "write_batch_report", "report.html"),
-    ):
-        if importlib.util.find_spec(module) is not None:
-            yield name, getattr(importlib.import_module(module), function)
-
-
 def _more(folder: Path, written: list[str]) -> list[str]:
     """Make archive and report; what goes wrong there costs nothing of what is written already."""
+    from spinfit.report.batch_archive import write_batch_archive
+    from spinfit.report.batch_html import write_batch_report
+
     wrong = []
-    for name, make in _makers():
+    for name, make in (("batch.h5", write_batch_archive), ("report.html", write_batch_report)):
         try:
             written.append(make(folder).name)
         except (InputError, OSError, MemoryError) as error:

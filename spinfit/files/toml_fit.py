@@ -8,8 +8,8 @@ from typing import Any
 
 from spinfit.errors import InputError
 from spinfit.files.toml_table import LARGEST_NUMBER, Table, describe, flatten, is_finite, quantity_of
+from spinfit.fitting.data import LOSSES
 from spinfit.fitting.parameters import Parameter, expand_vary, members
-from spinfit.fitting.robust import LOSSES
 from spinfit.fitting.ties import compile_ties
 
 FIT_KEYS = ("vary", "start", "limits", "tie", "loss", "loss_scale")

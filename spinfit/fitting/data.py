@@ -14,6 +14,9 @@ from numpy.typing import NDArray
 from spinfit.species import Species
 from spinfit.sweep import Sample
 
+LOSSES = ("linear", "soft_l1", "huber", "cauchy")
+"""What a job may ask for (`spinfit.fitting.robust`); here, so that reading a job loads nothing that fits."""
+
 
 @dataclass(frozen=True, eq=False)
 class Trace:

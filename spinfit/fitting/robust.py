@@ -36,7 +36,6 @@ from spinfit.fitting.solve import Descent, Goal, descend
 
 Array = NDArray[np.float64]
 
-LOSSES = ("linear", "soft_l1", "huber", "cauchy")
 # 95 % efficient for Gaussian noise: huber and cauchy by Holland and Welsch (1977); soft_l1 by the same integral,
 # mean(psi')^2 / mean(psi^2), which a test does again.
 SCALES = {"huber": 1.345, "cauchy": 2.385, "soft_l1": 1.287}
