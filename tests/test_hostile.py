@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import io
 import re
+import signal
 from pathlib import Path
 
 import h5py
@@ -219,6 +220,40 @@ def test_any_crystal_field_file_is_read_or_refused(changes):
 def test_huge_and_deep_toml_is_refused(text):
     refused(lambda: model_from(parse_toml(text)))
     refused(lambda: job_of(text, "j", {}))
+
+
+@pytest.fixture
+def processor_time():
+    """End a test after 30 s of processor time: what is tried here would otherwise run for hours."""
+
+    def give_up(number, frame):
+        raise AssertionError("does not end")
+
+    before = signal.signal(signal.SIGPROF, give_up)
+    signal.setitimer(signal.ITIMER_PROF, 30)
+    yield
+    signal.setitimer(signal.ITIMER_PROF, 0)
+    signal.signal(signal.SIGPROF, before)
+
+
+@pytest.mark.parametrize(
+    ("file", "text"),
+    [
+        ("a.csv", "# frequency" + " " * 1900 + "x\n1,2\n2,3\n"),
+        ("a.csv", ("# modulation" + "\t" * 1900 + "amp\n") * 20 + "1,2\n2,3\n"),
+        ("a.csv", "# microwave" + " " * 1900 + "frequency (" + " " * 1900 + "\n1,2\n2,3\n"),
+        ("a.csv", "1" * 1_000_000 + "x\n"),
+        ("a.csv", "1,2\n" + "1" * 1_000_000 + "x,1\n"),
+        ("a.csv", "field (" + "(" * 300_000 + ",signal\n1,2\n2,3\n"),
+        ("a.csv", "field [" + "[" * 300_000 + "\tsignal\n1\t2\n2\t3\n"),
+        ("a.jdx", "##TITLE= a\n##COMMENTS= frequency" + " " * 100_000 + "x\n##END=\n"),
+        ("a.jdx", "##TITLE= a\n##FIRSTX= 1\n##LASTX= 2\n##NPOINTS= 2\n##XYDATA= (X++(Y..Y))\n" + "1" * 300_000 + "x\n"),
+    ],
+    ids=range(9),
+)
+def test_long_rows_of_one_character_are_read_in_one_go(processor_time, file, text):
+    """Patterns that could split a row of blanks, digits or brackets in several ways would try them all."""
+    answered(lambda: assemble(read_content(text.encode(), file), field_unit="mT"))
 
 
 # Output ---------------------------------------------------------------------------------------------

@@ -118,7 +118,8 @@ def understand(line: str, header: dict[str, Any], notes: list[Note]) -> bool:
     A modulation frequency is not the microwave frequency, and a word before the name that is not known to belong to
     it ("helium temperature") makes the line prose, which is left alone.
     """
-    line = re.sub(r"[_\-](?=[A-Za-z])", " ", line[:2000])
+    # One blank where there were many: the patterns allow blanks in several places, and would try every split of a run.
+    line = " ".join(re.sub(r"[_\-](?=[A-Za-z])", " ", line[:2000]).split())
     line = re.sub(r"[\[(]?\b(?:p\s?p|peak\s+to\s+peak)\b[\])]?", " ", line, flags=re.IGNORECASE)
     found = False
     for key, pattern in _VALUE.items():
@@ -136,6 +137,7 @@ def understand(line: str, header: dict[str, Any], notes: list[Note]) -> bool:
 
 
 _FIELD_NAME = re.compile(r"(?:b|b0|b_0|h|field|magnetic field|magnetfeld|b field|field axis)", re.IGNORECASE)
+_LONGEST_HEADING = 200
 _COLUMN = re.compile(
     r"(?P<name>.*?)\s*(?:/\s*(?P<slash>\S+)|\[(?P<square>[^\]]*)\]|\((?P<round>[^)]*)\)|[_ ](?P<tail>[^\s_]+))\s*"
 )
@@ -143,7 +145,7 @@ _COLUMN = re.compile(
 
 def column_name(text: str) -> tuple[str, str]:
     """Split a column's heading into its name and unit: "field/mT", "field (G)", "Field [T]", "field_mT", "B in mT"."""
-    text = text.strip().strip("\"'").strip()
+    text = text[:_LONGEST_HEADING].strip().strip("\"'").strip()
     match = _COLUMN.fullmatch(text)
     if match is None:
         return text, ""

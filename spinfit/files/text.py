@@ -21,7 +21,8 @@ from spinfit.files.conditions import column_name, is_field, understand
 from spinfit.files.raw import MAX_POINTS, Note, RawTrace, decode, quote
 
 _COMMENT = ("#", ";", "%")
-_NUMBER = re.compile(r"[+-]?(?:\d+\.?\d*|\.\d+)(?:[eEdD][+-]?\d+)?", re.ASCII)
+# Possessive: a long row of digits before something else would be split in every way.
+_NUMBER = re.compile(r"[+-]?(?:\d++(?:\.\d*+)?|\.\d++)(?:[eEdD][+-]?\d++)?", re.ASCII)
 _NOT_FINITE = re.compile(r"[+-]?(?:nan|inf|infinity)", re.IGNORECASE)
 _UNCLEAN = re.compile(r"[^0-9eE+\-.,; \t\n]")
 _MINUS = str.maketrans({"\u2212": "-", "\u00a0": " "})
