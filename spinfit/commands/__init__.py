@@ -30,10 +30,12 @@ from spinfit.commands import (
     rerun,
     simulate,
     summary,
+    tune,
 )
 
 _MODULES = (
     fit,
+    tune,
     batch,
     summary,
     rerun,

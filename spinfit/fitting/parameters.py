@@ -184,6 +184,10 @@ class Binding:
             slot.refused,
         )
 
+    def path(self, name: str) -> Path:
+        """Return where a parameter stands in the tree of species, sample and traces (see `slots`)."""
+        return self._paths[name]
+
     def named(self, given: Mapping[Path, str]) -> dict[str, str]:
         """Return the unit of each parameter that a file gives, from the units by path in the model.
 
