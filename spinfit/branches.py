@@ -84,6 +84,8 @@ class KnotData:
         Squared FWHM in frequency of each transition's own broadening, MHz^2.
     parents : (lower, upper), or None
         The pairs before weak nuclei split them into the rows that stand here.
+    order : ndarray of int, shape (k, n, levels), or None
+        The place by energy of each level, where levels are ordered by character.
     """
 
     fields: Array
@@ -94,6 +96,7 @@ class KnotData:
     strength: Array
     variance: Array | None = None
     parents: Pairs | None = None
+    order: NDArray[np.intp] | None = None
 
 
 def stencil(nodes: Array, middle: NDArray[np.intp], fields: Array, most: int = 5) -> tuple[NDArray[np.intp], Array]:

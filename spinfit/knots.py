@@ -2,7 +2,9 @@
 
 Every second ring of a set of knots is a set of its own.  What it predicts at the knots it does not
 hold, against what was computed there, is its error; from two such errors the error of the full set
-is extrapolated.  When the error sits near the equator or the pole, as with a hyperfine tensor much
+is extrapolated.  Where many levels cross, field by field these errors are far larger than what is left of
+them in the spectrum, which does not ask which of two close resonances is which: there the spectra
+themselves are compared (`Compare`).  When the error sits near the equator or the pole, as with a hyperfine tensor much
 larger along z, the rings are drawn together there.
 """
 
@@ -36,12 +38,21 @@ FOLD_SLOPE = 14.0
 """MHz/mT, half a free spin's: a level difference flatter than that moves intensity rather in direction."""
 MOST_LOOPING_KNOTS = 1200
 """The same where looping pairs matter: their kinks on symmetry axes never quite vanish from the estimate."""
+CROSSING_STATES = 8
+"""Levels from which on so many of them may cross that errors are measured on spectra."""
+STEEPEST_SEEN = 3.0
+"""Power of the step with which errors measured on spectra are trusted to fall: near crossings leave kinks."""
 MISTRUST = 2.0
 """Factor on the extrapolated error, unless it falls so fast that a power law is itself pessimistic."""
 LOOPING_MISTRUST = 1.5
 """The same where looping pairs matter."""
 FEW_RINGS = 20
 """Rings below which the error of looping pairs does not fall as that of splines yet."""
+
+
+Compare = Callable[[Rings, Branches, bool, Callable[[Array], Array]], float]
+"""From rings, branches on them, whether splines continue them, and a prediction of what is continued, shape
+(q, n) to (q, n), to the largest change of the branches' spectrum, relative to its top."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -76,13 +87,17 @@ class Knots:
     half_error: float
 
 
-def settle(system: System, symmetry: Symmetry, request: Request) -> Knots:
-    """Refine knots for a system until the tolerance is met or `MOST_KNOTS` is reached."""
+def settle(system: System, symmetry: Symmetry, request: Request, compare: Compare | None = None) -> Knots:
+    """Refine knots for a system until the tolerance is met or `MOST_KNOTS` is reached.
+
+    `compare` is used for systems from `CROSSING_STATES` up.
+    """
     if len(system.h0) == 2:  # B^-2 of a doublet holds no harmonics above l = 2
         trial = _Trial(system, symmetry, request, Rings(symmetry.kind, 4, 4))
         if trial.half_error() <= request.tolerance:
             return trial.knots(trial.half_error(), trial.count)
-    trial = _Trial(system, symmetry, request, _rings(symmetry.kind, SIZES[0]))
+    compare = compare if len(system.h0) >= CROSSING_STATES else None
+    trial = _Trial(system, symmetry, request, _rings(symmetry.kind, SIZES[0]), compare=compare)
     spent = trial.count
     harmonics = None
     if trial.half_error() > request.tolerance:
@@ -136,7 +151,8 @@ def _extrapolated(history: list[tuple[int, float]], trial: _Trial) -> float:
         before, worse = history[-2]
         if error <= 0:
             return 0.0
-        power = min(8.0, max(0.5, math.log(max(worse, error) / error) / math.log(size / before)))
+        steepest = 8.0 if trial.compare is None else STEEPEST_SEEN
+        power = min(steepest, max(0.5, math.log(max(worse, error) / error) / math.log(size / before)))
     return (1.0 if power > 4.5 else MISTRUST) * error * (size / rings) ** power
 
 
@@ -155,6 +171,8 @@ def _drawn_together(
         stretches = (1.0, 4.0, 12.0)
     else:
         return trial, 0
+    if trial.data.order is not None:  # where the rings lie far apart, levels may nearly cross
+        stretches = stretches[:2]
     along, count = _along_meridian(trial, symmetry, stretches)
     stretch = stretches[int(np.argmin(along))]
     if stretch == 1.0:
@@ -213,9 +231,16 @@ class _Trial:
     """One set of knots with its numbers and the error of its coarser half."""
 
     def __init__(
-        self, system: System, symmetry: Symmetry, request: Request, rings: Rings, before: _Trial | None = None
+        self,
+        system: System,
+        symmetry: Symmetry,
+        request: Request,
+        rings: Rings,
+        before: _Trial | None = None,
+        compare: Compare | None = None,
     ) -> None:
         self.rings, self.request = rings, request
+        self.compare = compare if before is None else before.compare
         directions = rings.directions(symmetry.axes)
         if before is None:
             self.nodes = FieldNodes(system, request, directions)
@@ -240,7 +265,22 @@ class _Trial:
 
     def half_error(self) -> float:
         """Return the spectrum's relative error as the coarser half would make it."""
-        return float(self.error_by_knot().sum())
+        return self._half_error
+
+    @cached_property
+    def _half_error(self) -> float:
+        error = float(self.error_by_knot().sum())
+        others = self._loop_error
+        if self.compare is None or error <= self.request.tolerance or error - others < 0.5 * error:
+            return error
+        coarse, kept = self.rings.halved(), self.rings.halved_knots()
+        to_finer = coarse.to_finer_locally if self.local else coarse.to_finer
+        seen = self._compared(lambda values: to_finer(values[:, kept], self.rings))
+        return seen + others
+
+    def _compared(self, predict: Callable[[Array], Array]) -> float:
+        """Return the error of the spectrum when continued values of single branches are replaced."""
+        return self.compare(self.rings, self.branches, self.local, predict)
 
     def harmonics_needed(self) -> int | None:
         """Return how many azimuth intervals a right angle are enough, None where these are too few.
@@ -251,7 +291,12 @@ class _Trial:
             return None
         for kept in (1, 2, 3, 4):
             miss = self._miss(lambda values, k=kept: self.rings.without_harmonics(values, k))
-            if miss.sum() <= 0.2 * self.request.tolerance:
+            enough = 0.2 * self.request.tolerance
+            if miss.sum() <= enough:
+                return 2 * kept
+            if self.compare is None:
+                continue
+            if self._compared(lambda values, k=kept: self.rings.without_harmonics(values, k)) <= enough:
                 return 2 * kept
         return None
 
@@ -340,9 +385,7 @@ class _Trial:
     def knots(self, error: float, spent: int) -> Knots:
         """Return the settled result."""
         directions, half = len(self.nodes.directions), self.half_error()
-        return Knots(
-            self.rings, self.data, self.branches, self.other, error, directions, spent, self.local, half
-        )
+        return Knots(self.rings, self.data, self.branches, self.other, error, directions, spent, self.local, half)
 
 
 def node_accuracy(request: Request) -> float:

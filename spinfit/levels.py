@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import constants
 
+from spinfit.characters import Characters
 from spinfit.hamiltonian import System
 from spinfit.moments import moments
 from spinfit.weak import Felt, felt
@@ -35,7 +36,7 @@ class Levels:
     Attributes
     ----------
     energy : ndarray, shape (m, n)
-        Sorted, MHz.
+        Sorted, MHz; by character where that is asked for.
     slope : ndarray, shape (m, n)
         dE/dB, MHz/mT.
     intensity : ndarray, shape (m, n, n), or None
@@ -46,6 +47,8 @@ class Levels:
         For each electron spin with weakly coupled nuclei, what they feel of it, if asked for.
     population : ndarray, shape (m, n), or None
         Of each level, when a `state` is given.
+    order : ndarray of int, shape (m, n), or None
+        The place by energy of each level, where levels are ordered by character.
     """
 
     energy: Array
@@ -54,6 +57,7 @@ class Levels:
     shift: Array
     felt: dict[int, Felt] = field(default_factory=dict)
     population: Array | None = None
+    order: NDArray[np.intp] | None = None
 
 
 Operators = tuple[NDArray[np.complex128], NDArray[np.complex128]]
@@ -70,6 +74,9 @@ def solve(
     operators: Operators | None = None,
     weak: bool = False,
     state: NDArray[np.complex128] | None = None,
+    characters: Characters | None = None,
+    order: NDArray[np.intp] | None = None,
+    near: NDArray[np.intp] | None = None,
 ) -> Levels:
     """Diagonalise at every (direction, field) of two equally long lists.
 
@@ -90,17 +97,26 @@ def solve(
         Whether weakly coupled nuclei are asked about.
     state : ndarray, shape (n, n), optional
         Density matrix whose diagonal between the eigenstates is wanted, such as `zero_field_state`.
+    characters : Characters, optional
+        Orders levels by character.
+    order : ndarray of int, shape (m, n), optional
+        The order found before, to be kept.
+    near : ndarray of int, shape (m, n), optional
+        The order at a neighbouring field, to be preferred.
     """
     n = system.h0.shape[0]
     m = len(fields)
     block = max(1, BLOCK_BYTES // (160 * n * n))
     if m <= block:
-        return _solve_block(system, directions, fields, microwave, intensities, operators, weak, state)
+        how = intensities, operators, weak, state, characters
+        return _solve_block(system, directions, fields, microwave, *how, order, near)
     parts = []
     for start in range(0, m, block):
         part = slice(start, start + block)
         along = microwave if isinstance(microwave, str) else microwave[part]
-        parts.append(_solve_block(system, directions[part], fields[part], along, intensities, operators, weak, state))
+        how = intensities, operators, weak, state, characters
+        known = (None if one is None else one[part] for one in (order, near))
+        parts.append(_solve_block(system, directions[part], fields[part], along, *how, *known))
     return Levels(
         np.concatenate([p.energy for p in parts]),
         np.concatenate([p.slope for p in parts]),
@@ -108,6 +124,7 @@ def solve(
         np.concatenate([p.shift for p in parts]),
         {k: Felt(*map(np.concatenate, zip(*(p.felt[k] for p in parts), strict=True))) for k in parts[0].felt},
         None if state is None else np.concatenate([p.population for p in parts]),
+        None if characters is None else np.concatenate([p.order for p in parts]),
     )
 
 
@@ -120,6 +137,9 @@ def _solve_block(
     operators: Operators | None,
     weak: bool,
     state: NDArray[np.complex128] | None,
+    characters: Characters | None,
+    order: NDArray[np.intp] | None,
+    near: NDArray[np.intp] | None,
 ) -> Levels:
     n = system.h0.shape[0]
     m = len(fields)
@@ -128,11 +148,13 @@ def _solve_block(
     h = (along @ np.ascontiguousarray(system.zeeman).view(float).reshape(3, -1)).view(complex).reshape(m, n, n)
     h += system.h0
     energy, vectors = np.linalg.eigh(h)
+    if characters is not None:
+        energy, vectors, order = characters.arranged(along, energy, vectors, order, near)
     shift = _expectation(vectors, along, operators)
     seen = felt(system, energy, vectors) if weak else {}
     population = None if state is None else np.einsum("mai,mai->mi", vectors.conj(), state @ vectors).real
     slope, intensity = moments(vectors, system.zeeman, directions, microwave if intensities else None)
-    return Levels(energy, slope, intensity, shift, seen, population)
+    return Levels(energy, slope, intensity, shift, seen, population, order)
 
 
 def _expectation(vectors: NDArray, fields: Array, operators: Operators | None) -> Array:

@@ -132,8 +132,8 @@ class Places:
     @property
     def few(self) -> bool:
         """Whether there are fewer resonances than nodes, and no pair of levels that needs the nodes."""
-        nodes = len(self.average.knots.data.fields) * len(self.kept)
-        return not self.average.loops and self.field.size <= nodes
+        data = self.average.knots.data
+        return not self.average.loops and data.order is None and self.field.size <= len(data.fields) * len(self.kept)
 
     def before(self) -> KnotData:
         """Return the average's own numbers at the kept knots."""
@@ -147,7 +147,8 @@ class Places:
         data = self.average.knots.data
         request = replace(move.request, weigh=self.average.request.weigh)
         nodes = FieldNodes(move.system, request, self.directions)
-        nodes.settle_on(data.fields, data.leaves)
+        order = None if data.order is None else data.order[:, self.kept]
+        nodes.settle_on(data.fields, data.leaves, order)
         return nodes.data(data.parents)
 
     def by_nodes(self, data: KnotData) -> tuple[Array, Array, Array | None]:

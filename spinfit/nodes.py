@@ -6,10 +6,13 @@ levels that can be resonant, and goes over to finer sets of directions with the 
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 from numpy.typing import NDArray
 
 from spinfit.branches import KnotData, Pairs, Request, between_knots
+from spinfit.characters import Characters
 from spinfit.hamiltonian import System
 from spinfit.levels import KELVIN_PER_MHZ, population_difference, solve, zero_field_state
 from spinfit.patterns import node_slopes, pattern
@@ -37,10 +40,17 @@ class FieldNodes:
         self.weights = None if request.weigh is None else request.weigh(directions)
         self.extent = extent(system, request.high)
         self.state = None if request.populations is None else zero_field_state(system, request.populations)
+        self.characters = Characters.of(system, request.frequency, blur(request))
+        self.middle: NDArray[np.intp] | None = None
 
-    def _solve(self, directions: Array, fields: list[float]) -> list[tuple[Array, ...]]:
+    def _solve(
+        self, directions: Array, fields: list[float], order: NDArray[np.intp] | None = None
+    ) -> list[tuple[Array, ...]]:
         n = len(directions)
         broadening = self.request.broadening
+        near = None
+        if self.characters is not None and order is None:
+            near = self._near(directions)
         got = solve(
             self.system,
             np.tile(directions, (len(fields), 1)),
@@ -49,22 +59,44 @@ class FieldNodes:
             operators=None if broadening is None else (broadening.h0, broadening.zeeman),
             weak=bool(self.system.weak),
             state=self.state,
+            characters=self.characters,
+            order=None if order is None else order.reshape(len(fields) * n, -1),
+            near=None if near is None else np.tile(near, (len(fields), 1)),
         )
         strength = got.intensity
         if got.population is not None:
             strength = strength * (got.population[:, :, None] - got.population[:, None, :])
         self.count += n * len(fields)
         shape = (len(fields), n)
+        order = np.empty((len(strength), 0), dtype=np.intp) if got.order is None else got.order
         return list(
             zip(
                 got.energy.reshape(*shape, -1),
                 got.slope.reshape(*shape, -1),
                 strength.reshape(*shape, *strength.shape[1:]),
                 got.shift.reshape(*shape, *got.shift.shape[1:]),
+                order.reshape(*shape, -1),
                 *(a.reshape(*shape, *a.shape[1:]) for seen in got.felt.values() for a in seen),
                 strict=True,
             )
         )
+
+    def _near(self, directions: Array) -> NDArray[np.intp] | None:
+        """Return the order of levels in the middle of the range, shape (n, levels), where it is kept to.
+
+        Sublevels of nuclei hardly move along the field, so that one order suits a narrow range; levels
+        of larger spins cross there.
+        """
+        if self.system.electrons > 1 or self.system.spins[0] > 0.5:
+            return None
+        if directions is self.directions and self.middle is not None:
+            return self.middle
+        fields = np.full(len(directions), 0.5 * (self.request.low + self.request.high))
+        order = solve(self.system, directions, fields, intensities=False, characters=self.characters).order
+        self.count += len(directions)
+        if directions is self.directions:
+            self.middle = order
+        return order
 
     def _ensure(self, fields: list[float]) -> None:
         missing = [b for b in fields if b not in self.solved]
@@ -145,10 +177,11 @@ class FieldNodes:
         if 2 * whole.sum() < partly.sum():  # too few to make up for the further nodes
             self.leaves = inside
 
-    def settle_on(self, fields: Array, leaves: NDArray[np.intp]) -> None:
-        """Take the nodes that were chosen for another system, as in `KnotData`, in place of choosing them."""
+    def settle_on(self, fields: Array, leaves: NDArray[np.intp], order: NDArray[np.intp] | None = None) -> None:
+        """Take nodes, and the order of levels, that were chosen for another system, as in `KnotData`."""
         self.leaves = [tuple(float(fields[i]) for i in leaf) for leaf in leaves]
-        self._ensure([float(x) for x in fields])
+        at = [float(x) for x in fields]
+        self.solved.update(zip(at, self._solve(self.directions, at, order), strict=True))
 
     def _counts(self) -> NDArray[np.intp]:
         """Return how often the gap of every pair changes sign along the nodes, shape (n, p)."""
@@ -209,7 +242,7 @@ class FieldNodes:
         for field, columns in zip(fields, other._solve(directions[new], fields), strict=True):
             arrays = []
             for old, added in zip(self.solved[field], columns, strict=True):
-                array = np.empty((len(directions), *added.shape[1:]))
+                array = np.empty((len(directions), *added.shape[1:]), dtype=added.dtype)
                 array[new], array[known[kept]] = added, old[kept]
                 arrays.append(array)
             other.solved[field] = tuple(arrays)
@@ -237,14 +270,15 @@ class FieldNodes:
         variance = None
         if self.request.broadening is not None:
             variance = np.ascontiguousarray(np.stack([self._variance(x, pairs) for x in fields]).transpose(2, 0, 1))
-        data = KnotData(np.array(fields), leaves, pairs, gap, slope, strength, variance, pairs)
+        order = None if self.characters is None else np.stack([self.solved[x][4] for x in fields])
+        data = KnotData(np.array(fields), leaves, pairs, gap, slope, strength, variance, pairs, order=order)
         return self._split(data) if self.system.weak else data
 
     def _split(self, data: KnotData) -> KnotData:
         """Return a row for each line into which weak nuclei split a pair."""
         k, n = data.gap.shape[1:]
         electrons = sorted({one.electron for one in self.system.weak})
-        arrays = [np.concatenate(c) for c in zip(*(self.solved[x][4:] for x in data.fields), strict=True)]
+        arrays = [np.concatenate(c) for c in zip(*(self.solved[x][5:] for x in data.fields), strict=True)]
         seen = {one: Felt(*arrays[3 * i : 3 * i + 3]) for i, one in enumerate(electrons)}
         along = (data.fields[:, None, None] * self.directions).reshape(-1, 3)
         top = np.abs(data.strength).max(axis=(1, 2))
@@ -278,6 +312,7 @@ class FieldNodes:
             data.strength[row] * share,
             variance,
             data.pairs,
+            order=data.order,
         )
 
     def _relevant(self, fields: list[float]) -> Pairs:
@@ -306,5 +341,14 @@ def _steepness(data: KnotData) -> float:
     return max(FLAT, float(np.quantile(np.abs(data.slope[strong]), 0.05)))
 
 
+def blur(request: Request) -> float:
+    """Return by how much levels may be moved in narrow anticrossings, MHz: few directions have any."""
+    return BLUR * FREE_SLOPE * request.scale * math.sqrt(request.tolerance / 1e-3)
+
+
+FREE_SLOPE = 28.0
+"""MHz/mT, a free spin's."""
+BLUR = 0.1
+"""Distance of levels, in line widths, that is not seen at the default tolerance."""
 FLAT = 8.0
 """MHz/mT, about a quarter of a free spin's slope."""

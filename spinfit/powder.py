@@ -20,7 +20,7 @@ from spinfit.branches import Branches, Request
 from spinfit.exact import Lines, deposit
 from spinfit.hamiltonian import System
 from spinfit.knots import Knots, settle
-from spinfit.lineshape import FieldGrid
+from spinfit.lineshape import FieldGrid, Shape
 from spinfit.loops import Summed, add_pairs
 from spinfit.orientations import Mesh, Rings
 from spinfit.resonance import ZERO_FIELD, find
@@ -114,9 +114,15 @@ def powder(
         if keep is not None:
             keep.append(Average(symmetry, request, lines, [], [], histograms))
         return histograms, report
-    knots = settle(system, symmetry, request)
+    def compare(rings: Rings, branches: Branches, local: bool, predict: Callable[[Array], Array]) -> float:
+        return _changed(rings, branches, local, predict, request, grid)
+
+    knots = settle(system, symmetry, request, compare)
     histograms = Histograms(grid, request.scale)
-    meshes = _sum_branches(knots, request, histograms, report) if len(knots.branches.pair) else []
+    meshes = []
+    if len(knots.branches.pair):
+        meshes = _sum_branches(knots.rings, knots.branches, knots.local, request, histograms)
+        report.mesh_points += sum(Mesh(knots.rings.kind, *size).weights().size for size in meshes)
     error = 0.0
     loops: list[Summed] = []
     if knots.other.any():
@@ -226,12 +232,43 @@ def _probe_azimuths(rings: Rings) -> int:
     return {"axial": 1, "octant": 2, "quarter": 4, "half": 8}[rings.kind] * min(rings.harmonics, 24)
 
 
-def _sum_branches(knots: Knots, request: Request, histograms: Histograms, report: Report) -> list[tuple[int, int]]:
-    """Add every branch, continued to a mesh fine enough for it; return the meshes."""
-    rings, branches = knots.rings, knots.branches
-    to_mesh = rings.to_mesh_locally if knots.local else rings.to_mesh
+def _changed(
+    rings: Rings,
+    branches: Branches,
+    local: bool,
+    predict: Callable[[Array], Array],
+    request: Request,
+    grid: FieldGrid,
+) -> float:
+    """Return by how much a prediction of continued values changes the spectrum, relative to its top."""
     x, y, inverse = continued(branches.field, branches.weight)
-    sizes = _mesh_for(rings, branches, request)
+    guess = predict(np.concatenate([x, y]))
+    field, weight = restored(guess[: len(x)], guess[len(x) :], inverse)
+    here, there = Histograms(grid, request.scale), Histograms(grid, request.scale)
+    sizes = _sum_branches(rings, branches, local, request, here)
+    _sum_branches(rings, replace(branches, field=field, weight=weight), local, request, there, sizes)
+    shape, before = Shape(request.scale, 0.0), here.transform()
+    fields = grid.start + grid.step * np.arange(grid.count)
+    margin = SMEAR_REACH * SMEAR_MOST * request.scale  # past the window, where sums are cut off
+    inside = (fields >= (request.low + margin if request.low > ZERO_FIELD else 0.0)) & (fields <= request.high - margin)
+    top, change = (
+        np.abs(grid.render(one, shape)[inside]).max(initial=0.0) for one in (before, there.transform() - before)
+    )
+    return float(change / top) if top else 0.0
+
+
+def _sum_branches(
+    rings: Rings,
+    branches: Branches,
+    local: bool,
+    request: Request,
+    histograms: Histograms,
+    sizes: list[tuple[int, int]] | None = None,
+) -> list[tuple[int, int]]:
+    """Add every branch, continued to a mesh fine enough for it; return the meshes."""
+    to_mesh = rings.to_mesh_locally if local else rings.to_mesh
+    x, y, inverse = continued(branches.field, branches.weight)
+    sizes = _mesh_for(rings, branches, request) if sizes is None else sizes
     for size in sorted(set(sizes)):
         rows = [i for i, s in enumerate(sizes) if s == size]
         mesh = Mesh(rings.kind, *size)
@@ -240,7 +277,6 @@ def _sum_branches(knots: Knots, request: Request, histograms: Histograms, report
             part = rows[start : start + step]
             both = to_mesh(np.concatenate([x[part], y[part]]), mesh)
             here, there = both[: len(part)], both[len(part) :]
-            report.mesh_points += here.size
             if branches.variance is None:
                 histograms.sheets(here, there, inverse[part, 0], mesh, request.grain)
                 continue

@@ -42,6 +42,7 @@ ORDER = (
     "hamiltonian",
     "weak",
     "patterns",
+    "characters",
     "levels",
     "resonance",
     "diagram",
