@@ -9,6 +9,11 @@ import h5py
 import numpy as np
 
 from spinfit.files.curves import write_nxdata
+from spinfit.fitting.data import Job, Trace
+from spinfit.fitting.outcome import Curves, Note, Outcome, PositionTable, Quality, Value
+from spinfit.report.archive import archive_bytes
+from spinfit.species import Species, Spin
+from spinfit.sweep import Sample
 
 DEMOS = Path(__file__).resolve().parents[1] / "demo_spectra"
 
@@ -180,6 +185,32 @@ def _hdf5(**options: object) -> bytes:
     return buffer.getvalue()
 
 
+def _archive() -> bytes:
+    """Return a small archive with everything in it."""
+    x = np.linspace(330.0, 340.0, 6)
+    used = x > 0
+    curves = Curves("t", 9400.0, x, x, x, 0 * x, 0 * x, used, {"r": x}, noise=1.0, scale=2.0)
+    column = x[:, None]
+    levels = np.arange(6)
+    table = PositionTable("l", 9400.0, column, x, x, 0 * x, x, levels, levels + 1, used, np.zeros((2, 3)))
+    outcome = Outcome(
+        name="seed",
+        parameters={"r.g": Value(2.0, 0.1, 0.1, 0.0, varied=True, start=2.1), "r.D": Value(1.0, unit="MHz")},
+        quality=Quality(True, True, 1.0, 1.0, 6, 2, 3.0, 4.0),
+        correlation_names=("r.g",),
+        correlation_matrix=np.eye(1),
+        warnings=(Note("code", "text"),),
+        curves=(curves,),
+        positions=(table,),
+        fractions={"r": Value(1.0)},
+        budget={"r.g": {"noise": 0.1}},
+        provenance={"job": "text", "versions": {"spinfit": "0"}},
+    )
+    trace = Trace("t", x, x, used, 9400.0, background=x)
+    job = Job((Species("r", (Spin(),)),), Sample(), (trace,), (), files={"t.csv": b"1,2"})
+    return archive_bytes(outcome, job)
+
+
 def seeds_of(name: str) -> list[bytes]:
     """Return the files to begin with."""
     if name == "text":
@@ -214,7 +245,7 @@ def seeds_of(name: str) -> list[bytes]:
     if name == "hdf5":
         return [_hdf5(), _hdf5(libver="latest"), _hdf5(libver="v110", track_order=True)]
     archives = Path(__file__).resolve().parents[1] / "tests" / "archives"
-    return [file.read_bytes() for file in sorted(archives.glob("*.h5"))]
+    return [_archive(), *(file.read_bytes() for file in sorted(archives.glob("*.h5")))]
 
 
 _KEYS = (

@@ -14,7 +14,7 @@ from spinfit.files.reading import assemble
 from spinfit.files.text import read_text
 from spinfit.files.toml_crystal_field import crystal_fields_of
 from spinfit.files.toml_table import parse_toml
-from spinfit.files.tree import tree_from
+from spinfit.files.tree import sealed, tree_from
 from spinfit.fitting.parameters import Binding
 from spinfit.fitting.ties import compile_ties, evaluate, names_in, parse_tie, slopes
 from spinfit.report.archive_reading import archive_from
@@ -53,5 +53,6 @@ READERS: Mapping[str, Callable[[bytes], object]] = {
     "ties": _ties,
     "ligands": lambda data: crystal_fields_of(parse_toml(data.decode("utf-8", "replace"))),
     "hdf5": lambda data: answer_to(_question("trace"), data),
-    "archive": lambda data: archive_from(tree_from(*answer_to(_question("tree"), data)), "f.h5"),
+    # With a fresh digest, as somebody who means harm would give it: the digest alone would stop all else.
+    "archive": lambda data: archive_from(sealed(tree_from(*answer_to(_question("tree"), data))), "f.h5"),
 }
