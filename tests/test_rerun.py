@@ -21,6 +21,7 @@ from spinfit.errors import InputError
 from spinfit.files.tree import Data, Group, sealed, write_tree
 from spinfit.fitting.agreement import compare_outcomes
 from spinfit.fitting.outcome import Value
+from spinfit.kernels import COMPILED
 from spinfit.report.archive_reading import read_archive, read_group
 from spinfit.report.batch_archive import build_batch_archive, read_batch_summary, write_batch_archive
 
@@ -187,6 +188,9 @@ def test_what_is_in_an_archive(fitted, tmp_path, capsys):
     assert record["parameters"]["radical.g"]["value"] == pytest.approx(G, abs=1e-3)
     assert [one["name"] for one in record["files"]] == ["../data/trace \u00fc.csv", "../data/empty.csv"]
     assert record["job"] == JOB
+    assert set(record["versions"]) == {"spinfit", "python", "numpy", "scipy", "lmfit"} | (
+        {"numba"} if COMPILED else set()
+    )
     assert main(["inspect", str(Path(__file__).parent / "archives" / "format_1.h5")]) == 0
     assert "it cannot be rerun" in capsys.readouterr().out
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 import platform
 from collections.abc import Mapping
+from importlib.metadata import version
 
 import lmfit
 import numpy as np
@@ -20,6 +21,7 @@ from spinfit.fitting.robust import weights_of
 from spinfit.fitting.signals import true_field
 from spinfit.fitting.solve import Descent
 from spinfit.fitting.uncertainty import Covariances, budget_of, fractions_of, reported_values
+from spinfit.kernels import COMPILED
 
 Array = NDArray[np.float64]
 
@@ -108,6 +110,8 @@ def provenance_of(problem: Problem) -> dict[str, object]:
         "scipy": scipy.__version__,
         "lmfit": lmfit.__version__,
     }
+    if COMPILED:  # compiled sums may differ from numpy's in the last digit
+        versions["numba"] = version("numba")
     inputs = {
         trace.name: {
             "file": trace.file,
