@@ -10,6 +10,7 @@ from numpy.typing import ArrayLike, NDArray
 from spinfit.errors import InputError
 from spinfit.hamiltonian import System
 from spinfit.levels import solve
+from spinfit.markup import html_table
 from spinfit.resonance import Resonances, find
 
 Array = NDArray[np.float64]
@@ -38,6 +39,17 @@ class Diagram:
     energies: Array
     resonances: Resonances
     ends: Array
+
+    def _repr_html_(self) -> str:
+        """Show the transitions, for a notebook."""
+        got = self.resonances
+        rows = [
+            [f"{got.lower[k] + 1}-{got.upper[k] + 1}", f"{got.field[k]:.4f}", f"{got.weight[k]:.4g}"]
+            for k in range(len(got.field))
+        ]
+        n = self.energies.shape[1]
+        caption = f"{n} levels, {self.fields[0]:.6g} to {self.fields[-1]:.6g} mT"
+        return html_table(["levels", "field / mT", "weight"], rows, caption=caption)
 
 
 def diagram(

@@ -18,6 +18,7 @@ from spinfit.exact import Lines
 from spinfit.hamiltonian import System, systems
 from spinfit.levels import shares_unevenly
 from spinfit.lineshape import FieldGrid, Shape
+from spinfit.markup import html_table
 from spinfit.powder import Average, powder
 from spinfit.sheets import SMEAR_MOST, SMEAR_REACH, Grain
 from spinfit.solution import solution

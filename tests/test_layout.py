@@ -28,6 +28,7 @@ PACKAGE = ROOT / "spinfit"
 # entry freely but without a cycle.
 ORDER = (
     "errors",
+    "markup",
     "threads",
     "units",
     "hermite",

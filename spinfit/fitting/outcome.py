@@ -12,6 +12,8 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from spinfit.markup import html_table
+
 
 @dataclass(frozen=True)
 class Value:
@@ -157,3 +159,15 @@ class Outcome:
     positions: tuple[PositionTable, ...] = ()
     message: str = ""
     seconds: float = 0.0
+
+    def _repr_html_(self) -> str:
+        """Show what was varied, tied or derived, and the warnings, for a notebook."""
+        shown = {name: v for name, v in self.parameters.items() if v.varied or v.tied or v.derived}
+        rows = [
+            [name, f"{v.value:.8g}", "" if v.uncertainty is None else f"{v.uncertainty:.2g}", v.unit]
+            for name, v in shown.items()
+        ]
+        state = "converged" if self.quality.converged and self.quality.finished else "NOT converged"
+        caption = f"{self.name}: {state}, reduced chi-square {self.quality.chi2_reduced:.4g}"
+        said = html_table(["warnings"], [[note.text] for note in self.warnings]) if self.warnings else ""
+        return html_table(["parameter", "value", "standard uncertainty", "unit"], rows, caption=caption) + said

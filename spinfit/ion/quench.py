@@ -19,6 +19,7 @@ from spinfit.ion.magnetism import independent_part, susceptibility
 from spinfit.ion.model import IonModel, Levels, solve
 from spinfit.ion.names import half
 from spinfit.ion.tensors import DoubletG, SpinHamiltonian, doublet_g, spin_hamiltonian
+from spinfit.markup import html_table
 from spinfit.units import K_B_OVER_H, MHZ_PER_WAVENUMBER
 
 ROOM = 300.0
@@ -117,6 +118,20 @@ class QuenchRow:
     moments: tuple[tuple[float, float], ...] = ()
     notes: tuple[str, ...] = ()
 
+    def _repr_html_(self) -> str:
+        """Show free-ion, spin-only, crystal-field and measured g, for a notebook."""
+        g_J, measured = self.level.g_J, self.measured
+        rows = [
+            ["free ion", *["-" if g_J is None else f"{g_J:.5g}"] * 3],
+            ["spin only", *[f"{self.spin_only:.5g}"] * 3],
+            ["crystal field", *_shown(self.g_crystal)],
+            ["measured", *_shown(measured and measured.values, measured and measured.uncertainties)],
+            ["orbital moment left, field", *_shown(self.fraction)],
+            ["orbital moment left, measured", *_shown(self.fraction_measured, self.fraction_uncertainty)],
+        ]
+        caption = "; ".join([f"{self.level.ion} {self.level.term}", self.crystal_field, *self.notes])
+        return html_table(["g", "x", "y", "z"], rows, caption=caption)
+
     def as_record(self) -> dict[str, object]:
         """Return the machine-readable form; energies in cm^-1."""
         measured = self.measured
@@ -149,6 +164,14 @@ class QuenchRow:
             "levels": [{"energy_cm1": wavenumbers(e), "states": n} for e, n in self.levels],
             "notes": list(self.notes),
         }
+
+
+def _shown(values: tuple[float, ...] | None, uncertainties: tuple[float, ...] | None = None) -> list[str]:
+    """Write three numbers, with their uncertainties where there are any."""
+    if values is None:
+        return ["-"] * 3
+    sigma = uncertainties or (0.0,) * 3
+    return [f"{v:.5g}" + (f" ± {u:.2g}" if u else "") for v, u in zip(values, sigma, strict=True)]
 
 
 def _listed(values: tuple[float, ...] | None) -> list[float | None] | None:

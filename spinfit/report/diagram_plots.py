@@ -16,9 +16,10 @@ LABELLED = 16
 """Transitions up to which each is labelled with its levels."""
 
 
-def diagram_figure(found: Diagram, *, frequency: float) -> Figure:
+def diagram_figure(found: Diagram, *, frequency: float | None) -> Figure:
     """Return levels against field, with the transitions at h nu between them and their weights below.
 
+    g stands on top where the frequency, MHz, is known.
     Emission is dashed, in another colour, and points down.
     """
     weight = found.resonances.weight
@@ -47,7 +48,8 @@ def diagram_figure(found: Diagram, *, frequency: float) -> Figure:
         _number(upper, found)
         upper.set_xlim(found.fields[0], found.fields[-1])
         figure.align_ylabels([upper, lower])
-        add_g_axis(upper, frequency)
+        if frequency is not None:
+            add_g_axis(upper, frequency)
     return figure
 
 

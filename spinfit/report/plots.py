@@ -174,11 +174,14 @@ def spectrum_figure(
     fields: Array,
     signal: Array,
     *,
-    frequency: float,
+    frequency: float | None,
     detect: str = "derivative",
     parts: Mapping[str, Array] | None = None,
 ) -> Figure:
-    """Return the picture of a simulated spectrum, relative to its largest value, with its species below."""
+    """Return the picture of a simulated spectrum, relative to its largest value, with its species below.
+
+    g stands on top where the frequency, MHz, is known.
+    """
     largest = float(np.max(np.abs(signal))) or 1.0
     several = parts is not None and len(parts) > 1
     with style.styled():
@@ -193,7 +196,8 @@ def spectrum_figure(
             _draw_parts(panels[1], fields, parts)
         panels[0].set_xlim(fields[0], fields[-1])
         _field_axis(panels[-1])
-        add_g_axis(panels[0], frequency)
+        if frequency is not None:
+            add_g_axis(panels[0], frequency)
     return figure
 
 
