@@ -55,6 +55,18 @@ class Spectrum:
     warnings: tuple[tuple[str, str], ...] = ()
     kept: tuple[Kept, ...] = ()
 
+    def _repr_html_(self) -> str:
+        """Show ten fields with the signal and each species, for a notebook."""
+        signals = [("signal", self.signal)]
+        signals += [(name, part) for name, part in zip(self.report, self.parts, strict=False)]
+        one = [(name, np.atleast_2d(column)[0]) for name, column in signals]
+        at = np.unique(np.linspace(0, len(self.fields) - 1, 10).round().astype(int))
+        rows = [[f"{self.fields[k]:.6g}", *(f"{column[k]:.4g}" for _, column in one)] for k in at]
+        several = f", the first of {len(self.signal)} angles" if self.signal.ndim > 1 else ""
+        caption = f"{len(self.fields)} points, {self.fields.min():.6g} to {self.fields.max():.6g} mT{several}"
+        said = "".join(f"; warning: {text}" for _, text in self.warnings)
+        return html_table(["field / mT", *(name for name, _ in one)], rows, caption=caption + said)
+
 
 @dataclass(frozen=True, eq=False)
 class Kept:
