@@ -65,6 +65,30 @@ class Request:
 
 
 @dataclass(frozen=True, eq=False)
+class Ladder:
+    """All levels on nodes x knots, and the strengths of what stands beside the pairs that matter.
+
+    Attributes
+    ----------
+    energy, slope : ndarray, shape (k, levels, n)
+        MHz; MHz/mT.
+    partner : callable
+        From a row of the data, a number and nodes, shape (q,), to strengths, shape (q, n): of the pair
+        whose lower level is one less (0) or more (1), or whose upper level is one less (2) or more (3).
+    """
+
+    energy: Array
+    slope: Array
+    partner: Callable[[int, int, NDArray[np.intp]], Array]
+
+    def only(self, kept: NDArray[np.intp]) -> Ladder:
+        """Return the same at some of the knots."""
+        return Ladder(
+            self.energy[:, :, kept], self.slope[:, :, kept], lambda *where: self.partner(*where)[:, kept]
+        )
+
+
+@dataclass(frozen=True, eq=False)
 class KnotData:
     """Numbers on nodes x knots.
 
@@ -84,6 +108,8 @@ class KnotData:
         Squared FWHM in frequency of each transition's own broadening, MHz^2.
     parents : (lower, upper), or None
         The pairs before weak nuclei split them into the rows that stand here.
+    ladder : callable or None
+        Makes the levels behind the differences, where rows are pairs of levels.
     order : ndarray of int, shape (k, n, levels), or None
         The place by energy of each level, where levels are ordered by character.
     """
@@ -96,6 +122,7 @@ class KnotData:
     strength: Array
     variance: Array | None = None
     parents: Pairs | None = None
+    ladder: Callable[[], Ladder] | None = None
     order: NDArray[np.intp] | None = None
 
 

@@ -14,11 +14,12 @@ from numpy.typing import NDArray
 
 from spinfit import kernels
 from spinfit.branches import FWHM_PER_SIGMA, KnotData
+from spinfit.crossings import Crossings
 from spinfit.exact import Lines
 from spinfit.hamiltonian import System
 from spinfit.levels import occupation, solve, zero_field_state
 from spinfit.lineshape import FieldGrid
-from spinfit.loops import Landscape, Summed, add_looping, field_step
+from spinfit.loops import Landscape, Summed, add_looping, field_step, nodes_of
 from spinfit.moves import Move, Moved, Places, symmetrised
 from spinfit.nodes import FLAT
 from spinfit.orientations import Mesh, Rings
@@ -28,8 +29,10 @@ from spinfit.symmetry import KINDS
 
 Array = NDArray[np.float64]
 
-GOOD_HALF = 0.05
+GOOD_HALF = 1.5e-3
 """Error of the spectrum by every second ring up to which its changes are taken from these alone."""
+GOOD_HALF_LOOPING = 2.5e-4
+"""The same where there are pairs of levels without a branch."""
 LOOP_SHIFT = 1e-3
 """Line widths by which pairs of levels without a branch are moved for a difference."""
 LARGEST = 2_000_000
@@ -62,7 +65,7 @@ def average_changes(average: Average, base: System, moved: Sequence[Move]) -> li
     if any(_singles_out(one, base, average) for one in moved):
         return None
     even = [one._replace(system=symmetrised(base, one.system, average.symmetry)) for one in moved]
-    coarse = knots.half_error <= GOOD_HALF
+    coarse = knots.half_error <= (GOOD_HALF_LOOPING if average.loops else GOOD_HALF)
     rings = knots.rings.halved() if coarse else knots.rings
     places = Places(average, rings.within(knots.rings))
     if places.few and not base.weak:
@@ -95,16 +98,14 @@ def _loop_changes(
     rings : Rings
         Of the knots in `before` and `after`.
     """
-    request, data, row = average.request, average.knots.data, summed.row
-    first, last = data.leaves[summed.leaves].min(), data.leaves[summed.leaves].max() + 1
+    request, row, crossings = average.request, summed.row, average.knots.crossings
+    part, fields, leaves = nodes_of(average.knots.data, summed.leaves)
     mesh = Mesh(rings.kind, summed.size[0] // 2, max(1, summed.size[1] // 2))
-    fields, leaves = data.fields[first:last], data.leaves[summed.leaves] - first
 
-    def numbers(of: KnotData) -> Array:
-        return np.stack([one[row, first:last] for one in (of.gap, of.slope, of.strength)])
+    def on_mesh(of: Crossings, rings: Rings) -> Array:
+        return of.continued(row, part, lambda values: rings.to_mesh_locally(values, mesh))
 
-    own = numbers(data).reshape(3 * len(fields), -1)
-    values = average.knots.rings.to_mesh_locally(own, mesh).reshape(3, len(fields), mesh.thetas + 1, -1)
+    values = on_mesh(crossings, average.knots.rings)
     land = Landscape.of(fields, leaves, values, mesh)
     step = field_step(land, request)
 
@@ -113,18 +114,17 @@ def _loop_changes(
         add_looping(histograms, land, request, step)
         return histograms.transform()
 
-    here = transform(land)
+    here, start = transform(land), on_mesh(crossings.like(before), rings)
     out = []
     for one in after:
-        change = numbers(one) - numbers(before)
+        change = on_mesh(crossings.like(one), rings) - start
         largest = np.abs(change[0]).max()
         if not change.any():
             out.append(np.zeros_like(here))
             continue
         # so far that rounding does not matter, and so little that it is a derivative
         factor = LOOP_SHIFT * FLAT * request.scale / largest if largest > 0 else 1.0
-        moved = rings.to_mesh_locally(factor * change.reshape(3 * len(fields), -1), mesh).reshape(values.shape)
-        out.append((transform(Landscape.of(fields, leaves, values + moved, mesh)) - here) / factor)
+        out.append((transform(Landscape.of(fields, leaves, values + factor * change, mesh)) - here) / factor)
     return out
 
 
@@ -263,6 +263,7 @@ class _Deposit:
         self.grid, self.scale, self.sizes, self.variances = like.grid, like.scale, like.sizes, like.variances
         self.near = np.zeros((count, *like.plain.shape))
         self.wide = np.zeros((count, *like.widened.shape))
+        self.wider = np.zeros((count, *like.widened.shape))
 
     def _add(self, into: Array, rows: NDArray[np.intp] | np.intp, field: Array, moves: Array, weights: Array) -> None:
         for sign in (1, -1) if self.grid.start < 0 else (1,):  # the spectrum is even in B
@@ -293,17 +294,25 @@ class _Deposit:
         first = np.clip(np.searchsorted(ladder, variance, side="right") - 2, 0, len(ladder) - 4)
         nodes = ladder[first + np.arange(4)[:, None]]
         for i in range(4):
-            others = [j for j in range(4) if j != i]
-            factors = [(variance - nodes[j]) / (nodes[i] - nodes[j]) for j in others]
-            part = factors[0] * factors[1] * factors[2]
-            slope = sum(factors[(k + 1) % 3] * factors[(k + 2) % 3] / (nodes[i] - nodes[others[k]]) for k in range(3))
-            self._add(self.wide, first + i, field, moves * part, weights * part + widths * slope)
+            part = np.ones_like(variance)
+            for j in range(4):
+                if i != j:
+                    part *= (variance - nodes[j]) / (nodes[i] - nodes[j])
+            self._add(self.wide, first + i, field, moves * part, weights * part)
+            self._add(self.wider, first + i, field, np.zeros_like(widths), widths * part)
 
     def transforms(self) -> list[NDArray[np.complex128]]:
         """Return the transform of each change."""
         out = []
-        for near, wide in zip(self.near, self.wide, strict=True):
-            one = Histograms(self.grid, self.scale)
-            one.plain, one.widened, one.variances = near, wide, self.variances
-            out.append(one.transform())
+        nothing = np.zeros_like(self.near[0])
+        for near, wide, wider in zip(self.near, self.wide, self.wider, strict=True):
+            total = self._transform(near, wide)
+            if wider.any():  # the derivative of exp(-v k^2/2) by v
+                total = total - 0.5 * self.grid.wavenumbers() ** 2 * self._transform(nothing, wider)
+            out.append(total)
         return out
+
+    def _transform(self, near: Array, wide: Array) -> NDArray[np.complex128]:
+        one = Histograms(self.grid, self.scale)
+        one.plain, one.widened, one.variances = near, wide, self.variances
+        return one.transform()

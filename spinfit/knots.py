@@ -19,6 +19,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spinfit.branches import Branches, KnotData, Request, count_roots, trace_branches
+from spinfit.crossings import Crossings, misses
 from spinfit.hamiltonian import System
 from spinfit.nodes import FieldNodes
 from spinfit.orientations import Rings, unstretched
@@ -34,8 +35,8 @@ MOST_KNOTS = 5_000
 """Directions at which refinement gives up and says so."""
 POOR = 0.1
 """Error of the coarse half of the first set above which drawing the rings together is tried."""
-FOLD_SLOPE = 14.0
-"""MHz/mT, half a free spin's: a level difference flatter than that moves intensity rather in direction."""
+LEAST_MISS = 0.05
+"""Line widths times tolerance by which continued levels may miss before near crossings are looked for."""
 MOST_LOOPING_KNOTS = 1200
 """The same where looping pairs matter: their kinks on symmetry axes never quite vanish from the estimate."""
 CROSSING_STATES = 8
@@ -48,6 +49,14 @@ LOOPING_MISTRUST = 1.5
 """The same where looping pairs matter."""
 FEW_RINGS = 20
 """Rings below which the error of looping pairs does not fall as that of splines yet."""
+SPLINE_POWER = 5.0
+"""Power of the step with which the error of splines falls at least, where levels have no kinks."""
+CLUSTER = 6.0
+"""Line widths over which errors of looping pairs count together: the promise is about the worst place."""
+HELPFUL = 3.0
+"""Power of the number of rings with which the error of single branches falls where finer rings are worth it."""
+KINKED = 0.3
+"""Part of a single branch's error to which continuing its levels must bring it to be worth its greater cost."""
 
 
 Compare = Callable[[Rings, Branches, bool, Callable[[Array], Array]], float]
@@ -74,6 +83,8 @@ class Knots:
         Whether branches are better continued by splines than by series.
     half_error : float
         The error that every second ring alone would make.
+    crossings : Crossings or None
+        How pairs without single branches are continued where levels nearly cross.
     """
 
     rings: Rings
@@ -85,6 +96,7 @@ class Knots:
     diagonalisations: int
     local: bool
     half_error: float
+    crossings: Crossings | None
 
 
 def settle(system: System, symmetry: Symmetry, request: Request, compare: Compare | None = None) -> Knots:
@@ -110,8 +122,8 @@ def settle(system: System, symmetry: Symmetry, request: Request, compare: Compar
         error = _extrapolated(history, trial)
         if error <= request.tolerance:
             break
-        fourth = error * (trial.rings.rings / size) ** 4  # splines converge as they promise: go there at once
-        hoped = fourth if trial.looping else _hoped(history[-1], size)
+        # splines converge as they promise: go there at once
+        hoped = error * (trial.rings.rings / size) ** SPLINE_POWER if trial.looping else _hoped(history[-1], size)
         if size < min(SIZES[-1], 3 * trial.rings.rings) and hoped > request.tolerance:
             continue
         finer = _rings(symmetry.kind, size, trial.rings.stretch, harmonics)
@@ -140,12 +152,17 @@ def _extrapolated(history: list[tuple[int, float]], trial: _Trial) -> float:
     """Return the error expected of a trial from the errors measured at smaller numbers of rings.
 
     The power law through the last two; a first measurement alone is trusted to gain little.  Level
-    differences are continued by cubic splines, whose error falls as the fourth power of the step.
+    differences are continued by splines, whose error falls quickly unless there are kinks left.
     """
     rings = trial.rings.rings
     size, error = history[-1]
     if trial.looping:
-        return LOOPING_MISTRUST * max(1.0, (FEW_RINGS / rings) ** 3) * error * (size / rings) ** 4
+        power = SPLINE_POWER
+        known = [one for one in history if FEW_RINGS // 3 <= one[0] <= size / 1.3 and one[1] > 0]
+        if known and error > 0:
+            before, worse = known[-1]
+            power = min(power, max(1.0, math.log(max(worse, error) / error) / math.log(size / before)))
+        return LOOPING_MISTRUST * max(1.0, (FEW_RINGS / rings) ** 3) * error * (size / rings) ** power
     power = 2.0
     if len(history) > 1:
         before, worse = history[-2]
@@ -249,6 +266,8 @@ class _Trial:
         else:
             self.nodes = before.nodes.moved(directions, before.rings.within(rings))
             self.count = self.nodes.count - before.nodes.count
+        self.before = None if before is None else (before.rings.rings, before.single_miss)
+        self.single_miss = 0.0
         self.data = self.nodes.data()
         counts = count_roots(self.data)
         self.single = (counts == 1).all(axis=1) if counts.size else np.zeros(len(counts), dtype=bool)
@@ -301,25 +320,57 @@ class _Trial:
         return None
 
     def _miss(self, predict: Callable[[Array], Array]) -> Array:
-        """Return the relative error, by knot, of single branches when continued values are replaced."""
-        solid = self.rings.knot_weights()
+        """Return the relative error, by branch and knot, of single branches when continued values are replaced."""
         branches = self.branches
         rows = branches.pair
         x, y, inverse = continued(branches.field, branches.weight)
         guess = predict(np.concatenate([x, y]))
         field, weight = restored(guess[: len(rows)], guess[len(rows) :], inverse)
-        inside = (branches.field >= self.request.low) & (branches.field <= self.request.high)
-        size = np.abs(branches.weight) * inside
+        size = self._sizes()
         shift = np.minimum(np.abs(field - branches.field) / self.request.scale, 1.0)
-        change = np.abs(weight - branches.weight) * inside
-        return ((size * shift + change) * solid).sum(axis=0) / max((size * solid).sum(), 1e-300)
+        change = np.abs(weight - branches.weight) * self.rings.knot_weights() * (size > 0)
+        return (size * shift + change) / max(size.sum(), 1e-300)
+
+    def _sizes(self) -> Array:
+        """Return the intensity of single branches inside the range, by branch and knot."""
+        field = self.branches.field
+        inside = (field >= self.request.low) & (field <= self.request.high)
+        return np.abs(self.branches.weight) * inside * self.rings.knot_weights()
+
+    def _release(self, miss: Array) -> Array:
+        """Take pairs whose one resonance bends too sharply out of the single branches; return what of `miss` stays.
+
+        Where levels nearly cross, a pair is better continued as a level difference, if finer rings
+        do not help soon.
+        """
+        by_branch = miss.sum(axis=1)
+        self.single_miss = float(by_branch.sum())
+        if self.before is None or self.before[1] <= 0:
+            return miss
+        rings, worse = self.before
+        if worse / self.single_miss > (self.rings.rings / rings) ** HELPFUL:
+            return miss
+        rows = np.flatnonzero(by_branch > 0.3 * self.request.tolerance)
+        if not len(rows) or self.crossings.ladder is None:
+            return miss
+        pairs, whole = self.branches.pair[rows], self._sizes().sum()
+        found = misses(self.crossings, pairs, self._from_half, self.request.scale)
+        inside = (found.field >= self.request.low) & (found.field <= self.request.high)
+        again = np.bincount(
+            found.row[inside], (found.miss * self.rings.knot_weights()[found.knot])[inside], minlength=len(rows)
+        )
+        kinked = again < KINKED * by_branch[rows] * whole
+        if not kinked.any():
+            return miss
+        self.single[pairs[kinked]], self.other[pairs[kinked]] = False, True
+        del self.branches
+        return np.delete(miss, rows[kinked], axis=0) * (whole / max(self._sizes().sum(), 1e-300))
 
     def _compare(self) -> Array:
         solid = self.rings.knot_weights()
         coarse, kept = self.rings.halved(), self.rings.halved_knots()
         error = np.zeros(len(solid))
-        whole = self.weight_of_single()
-        total = whole
+        whole = total = 0.0
         if self.single.any():
             miss = self._miss(lambda values: coarse.to_finer(values[:, kept], self.rings))
             if miss.sum() > self.request.tolerance:
@@ -327,12 +378,14 @@ class _Trial:
                 local = self._miss(lambda values: coarse.to_finer_locally(values[:, kept], self.rings))
                 self.local = bool(local.sum() < miss.sum())
                 miss = local if self.local else miss
-            error += whole * miss
+                miss = self._release(miss)
+            whole = total = self.weight_of_single()
+            error += whole * miss.sum(axis=0) * self._concentration(self.branches.field, self._sizes(), miss)
         if self.other.any():
-            amount, miss = self._compare_gaps(np.flatnonzero(self.other), coarse, kept)
-            error += miss * solid
-            self._loop_error = float((miss * solid).sum())
-            total += (amount * solid).sum()
+            amount, miss = self._compare_gaps(np.flatnonzero(self.other), solid)
+            error += miss
+            self._loop_error = float(miss.sum())
+            total += amount
         self._loop_error /= total or 1.0
         return error / total if total else error
 
@@ -345,47 +398,51 @@ class _Trial:
         """Return the intensity in single branches."""
         if not self.single.any():
             return 0.0
-        inside = (self.branches.field >= self.request.low) & (self.branches.field <= self.request.high)
-        return float((np.abs(self.branches.weight) * inside * self.rings.knot_weights()).sum())
+        return float(self._sizes().sum())
 
     @cached_property
     def branches(self) -> Branches:
         """The pairs with exactly one resonance everywhere, solved at every knot."""
         return trace_branches(self.data, np.flatnonzero(self.single))
 
-    def _compare_gaps(self, rows: NDArray[np.intp], coarse: Rings, kept: NDArray[np.intp]) -> tuple[Array, Array]:
-        """Return weight and weight in error of pairs without single branches, each of shape (n,).
+    @cached_property
+    def crossings(self) -> Crossings:
+        """How pairs are continued where levels nearly cross."""
+        least = LEAST_MISS * 28.0 * self.request.scale * self.request.tolerance
+        return Crossings(self.data, self._from_half, self.rings.knot_weights(), least)
 
-        A miss of the level difference is a shift of field by its slope; nodes farther from
-        resonance than a leaf's reach do not count.
-        """
-        gap, slope, strength = self.data.gap[rows], self.data.slope[rows], np.abs(self.data.strength[rows])
-        k, n = gap.shape[1:]
-        near = np.zeros((len(rows), k, n), dtype=bool)
-        for leaf in self.data.leaves:
-            for a, b in ((leaf[0], leaf[1]), (leaf[1], leaf[2])):
-                h = self.data.fields[b] - self.data.fields[a]
-                reach = can_reach(gap[:, a], gap[:, b], slope[:, a] * h, slope[:, b] * h)
-                near[:, a] |= reach
-                near[:, b] |= reach
-        p, node, knot = np.nonzero(near)
-        if not len(p):
-            return np.zeros(n), np.zeros(n)
-        values = np.concatenate([gap, self.data.strength[rows]]).reshape(2 * len(rows) * k, n)
-        guess = coarse.to_finer_locally(values[:, kept], self.rings).reshape(2, len(rows), k, n)
-        steep = np.maximum(np.abs(slope[p, node, knot]), FOLD_SLOPE)
-        weight = strength[p, node, knot] / steep
-        shift = np.abs(guess[0] - gap)[p, node, knot] / steep / self.request.scale
-        change = np.abs(guess[1] - self.data.strength[rows])[p, node, knot] / steep
-        share = 1.0 / near.sum(axis=1)[p, knot]
-        amount = np.bincount(knot, weights=weight * share, minlength=n)
-        miss = np.bincount(knot, weights=(weight * np.minimum(shift, 1.0) + change) * share, minlength=n)
-        return amount, miss
+    def _from_half(self, values: Array) -> Array:
+        """Return what every second ring predicts at all knots, by splines; shapes (q, n)."""
+        return self.rings.halved().to_finer_locally(values[:, self.rings.halved_knots()], self.rings)
+
+    def _compare_gaps(self, rows: NDArray[np.intp], solid: Array) -> tuple[float, Array]:
+        """Return the intensity of pairs without single branches, and by knot how much of it is in error."""
+        found = misses(self.crossings, rows, self._from_half, self.request.scale)
+        inside = (found.field >= self.request.low) & (found.field <= self.request.high)
+        amount, miss = (np.where(inside, v, 0.0) * solid[found.knot] for v in (found.amount, found.miss))
+        by_knot = np.bincount(found.knot, weights=miss, minlength=len(solid))
+        return float(amount.sum()), by_knot * self._concentration(found.field, amount, miss)
+
+    def _concentration(self, field: Array, amount: Array, miss: Array) -> float:
+        """Return how many times larger the share in error is at its worst place in the range than on the whole."""
+        some = miss > 0
+        if not some.any():
+            return 1.0
+
+        def by_place(values: Array, some: NDArray[np.bool_]) -> Array:
+            place = (field[some] - self.request.low) / (CLUSTER * self.request.scale)
+            return np.bincount(place.astype(np.intp), values[some])
+
+        worst = by_place(miss, some).max() / by_place(amount, amount > 0).max()
+        return max(1.0, worst * amount.sum() / miss.sum())
 
     def knots(self, error: float, spent: int) -> Knots:
         """Return the settled result."""
         directions, half = len(self.nodes.directions), self.half_error()
-        return Knots(self.rings, self.data, self.branches, self.other, error, directions, spent, self.local, half)
+        crossings = self.crossings if self.other.any() else None
+        return Knots(
+            self.rings, self.data, self.branches, self.other, error, directions, spent, self.local, half, crossings
+        )
 
 
 def node_accuracy(request: Request) -> float:

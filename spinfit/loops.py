@@ -22,6 +22,7 @@ from numpy.typing import NDArray
 
 from spinfit import hermite
 from spinfit.branches import KnotData, Request, stencil
+from spinfit.crossings import Crossings
 from spinfit.lineshape import Shape
 from spinfit.orientations import Mesh, Rings
 from spinfit.resonance import ZERO_FIELD, can_reach
@@ -43,11 +44,15 @@ FLAT = 0.5
 """Root of the curvature of a resonance field over one step of the first mesh, in line widths."""
 FOLD_SLOPE = 8.0
 """MHz/mT below which a level difference counts as folding, about a quarter of a free spin's slope."""
+AXIAL = 512
+"""Intervals of a meridian with which an axial system begins."""
 LARGEST = 40_000_000
 """Numbers (nodes x points x 3) of one pair's mesh at which refinement gives up."""
 MOST_ROUNDS = 5
 POWER = 2.3
-"""Power of the step with which a mesh's error falls, until it has been measured."""
+"""Power of the step with which a mesh's error falls at least, once it falls."""
+LEAST_GAIN = 1 / 16
+"""Ratio of a mesh's error to that of its every second point below which it is not trusted to lie."""
 SHARE = 0.8
 """Part of the tolerance that the meshes of looping pairs may use up."""
 FIELDS, BLOCK = 20, 6000
@@ -112,28 +117,28 @@ class _Pair:
         Estimated, relative to the top of the whole spectrum's derivative.
     """
 
-    def __init__(self, rings: Rings, data: KnotData, row: int, leaves: Index, request: Request) -> None:
-        first, last = data.leaves[leaves].min(), data.leaves[leaves].max() + 1
+    def __init__(self, rings: Rings, crossings: Crossings, row: int, leaves: Index, request: Request) -> None:
         self.rings, self.request = rings, request
-        self.fields, self.leaves = data.fields[first:last], data.leaves[leaves] - first
-        gap, slope, strength = (v[row, first:last] for v in (data.gap, data.slope, data.strength))
-        self.knots = np.concatenate([gap, slope, strength])
-        self.size = _first_size(rings, self.fields, gap, slope, request)
-        self.power, self.missed = POWER, 0.0
+        self.crossings, self.row = crossings, row
+        self.part, self.fields, self.leaves = nodes_of(crossings.data, leaves)
+        self.size = _first_size(self, request)
 
     def sum(self, look: _Look) -> int:
         """Sum over the present mesh and over its every second point; return the number of points used."""
         mesh = Mesh(self.rings.kind, *self.size)
-        values = self.rings.to_mesh_locally(self.knots, mesh)
-        self.values = values.reshape(3, len(self.fields), *values.shape[1:])
+        self.values = self.on(mesh)
         histograms = look.empty()
         used = add_looping(histograms, Landscape.of(self.fields, self.leaves, self.values, mesh), self.request)
         self.plain, self.transform = histograms.plain, histograms.transform()
         self.difference = self.coarser(look, 2, 2)
-        before, self.missed = self.missed, look.height(self.difference)
-        if before and self.missed:
-            self.power = min(5.0, max(1.5, math.log(before / self.missed) / math.log(self.grown)))
+        self.missed = look.height(self.difference)
+        before = look.height(self.coarser(look, 4, 4))
+        self.gained = min(1.0, max(LEAST_GAIN, self.missed / before)) if before else 1.0
         return used
+
+    def on(self, mesh: Mesh) -> Array:
+        """Return gap, slope and strength on a mesh, shape (3, k, thetas + 1, azimuths)."""
+        return self.crossings.continued(self.row, self.part, lambda v: self.rings.to_mesh_locally(v, mesh))
 
     def coarser(self, look: _Look, along: int, around: int) -> NDArray[np.complex128]:
         """Return how the transform changes when only every second point, along theta or phi, is used."""
@@ -146,22 +151,22 @@ class _Pair:
 
     @property
     def error(self) -> float:
-        """The present mesh's own error, in the units of `_Look.height`."""
-        return self.missed * 2.0**-self.power
+        """The present mesh's own error, in the units of `_Look.height`: it gains once more what it gained last."""
+        return self.missed * self.gained
 
     def refine(self, look: _Look, allowed: float) -> bool:
         """Choose a finer mesh that should err by no more than `allowed`; return whether there is one."""
         missed = [self.missed]
         if self.rings.kind != "axial":
             missed = [look.height(self.coarser(look, *strides)) for strides in ((2, 1), (1, 2))]
-        power = max(POWER, self.power)
-        factors = [max(1.0, min(3.0, (m * 2.0**-self.power / (0.6 * allowed)) ** (1 / power))) for m in missed]
+        power = max(POWER, -math.log2(self.gained))
+        factors = [max(1.0, min(3.0, (m * self.gained / (0.6 * allowed)) ** (1 / power))) for m in missed]
         widest = int(np.argmax(factors))
         factors[widest] = max(factors[widest], 1.4)
         size = tuple(ladder_size(f * n) if f > 1.1 else n for f, n in zip([*factors, 1.0], self.size, strict=False))
         if 3 * len(self.fields) * math.prod(size) > LARGEST:
             return False
-        self.size, self.grown = size, max(n / m for n, m in zip(size, self.size, strict=True))
+        self.size = size
         return True
 
 
@@ -192,17 +197,24 @@ def ladder_size(wanted: float) -> int:
     return 4 * math.ceil(0.25 * 2 ** (math.ceil(4 * math.log2(wanted) - 1e-9) / 4))
 
 
-def _first_size(rings: Rings, fields: Array, gap: Array, slope: Array, request: Request) -> tuple[int, int]:
+def nodes_of(data: KnotData, leaves: Index) -> tuple[slice, Array, Index]:
+    """Return the nodes that some leaves span, their fields, and the leaves counted from the first of them."""
+    first, last = int(data.leaves[leaves].min()), int(data.leaves[leaves].max()) + 1
+    return slice(first, last), data.fields[first:last], data.leaves[leaves] - first
+
+
+def _first_size(pair: _Pair, request: Request) -> tuple[int, int]:
     """Return the mesh to begin with, from how the resonance field bends over the sphere.
 
     The curvature of the level difference at fixed field, over its slope along the field, is that
     of the resonance field; at a fold, where the slope vanishes, what counts is the frequency.
     """
+    rings = pair.rings
     azimuths = {"axial": 1, "octant": 2, "quarter": 4, "half": 8}[rings.kind] * min(rings.harmonics, 24)
-    probe = Mesh(rings.kind, 2 * rings.rings, azimuths)
-    k = len(fields)
-    gap, slope = rings.to_mesh_locally(np.concatenate([gap, slope]), probe).reshape(2, k, probe.thetas + 1, -1)
-    near = np.abs(gap) <= 1.5 * np.abs(slope) * np.gradient(fields)[:, None, None] + request.scale * FOLD_SLOPE
+    gap, slope, _ = pair.on(Mesh(rings.kind, 2 * rings.rings, azimuths))
+    if rings.kind == "axial":  # costs nothing, and spares every doubt
+        return AXIAL, 1
+    near = np.abs(gap) <= 1.5 * np.abs(slope) * np.gradient(pair.fields)[:, None, None] + request.scale * FOLD_SLOPE
     bend = np.where(near, 1.0 / np.maximum(np.abs(slope), FOLD_SLOPE), 0.0)
     flat = FLAT * (request.tolerance / 1e-3) ** 0.17
     sizes = []
@@ -245,11 +257,12 @@ def add_pairs(
     rows: Index,
     request: Request,
     keep: list[Summed] | None = None,
+    crossings: Crossings | None = None,
 ) -> tuple[int, float]:
     """Add pairs of levels whose resonances come and go, each on a mesh as fine as it needs.
 
     A mesh is accepted when the spectrum of its every second point differs little enough from its
-    own: the error falls with a power of the step, which is measured once a mesh has been refined.
+    own, and that of its every fourth point more so: the mesh's own error is smaller in the same ratio.
 
     Parameters
     ----------
@@ -259,6 +272,8 @@ def add_pairs(
         Rows of `data`.
     keep : list, optional
         Gets it appended how each pair was summed.
+    crossings : Crossings, optional
+        Where levels of `data` nearly cross; without it pairs are continued as they stand.
 
     Returns
     -------
@@ -268,7 +283,8 @@ def add_pairs(
         Estimated error from the meshes, relative to the top of the spectrum's derivative.
     """
     chosen = [(row, leaves) for row in rows if len(leaves := reachable(data, row))]
-    pairs = [_Pair(rings, data, row, leaves, request) for row, leaves in chosen]
+    crossings = Crossings(data) if crossings is None else crossings
+    pairs = [_Pair(rings, crossings, row, leaves, request) for row, leaves in chosen]
     if not pairs:
         return 0, 0.0
     look = _Look(histograms, request)

@@ -140,7 +140,8 @@ class Places:
         data, kept = self.average.knots.data, self.kept
         variance = None if data.variance is None else data.variance[:, :, kept]
         arrays = (one[:, :, kept] for one in (data.gap, data.slope, data.strength))
-        return KnotData(data.fields, data.leaves, data.pairs, *arrays, variance, data.parents)
+        ladder = None if data.ladder is None else lambda: data.ladder().only(kept)
+        return KnotData(data.fields, data.leaves, data.pairs, *arrays, variance, data.parents, ladder)
 
     def after(self, move: Move) -> KnotData:
         """Return the same for a system little different."""

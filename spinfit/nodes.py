@@ -11,7 +11,7 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit.branches import KnotData, Pairs, Request, between_knots
+from spinfit.branches import KnotData, Ladder, Pairs, Request, between_knots
 from spinfit.characters import Characters
 from spinfit.hamiltonian import System
 from spinfit.levels import KELVIN_PER_MHZ, population_difference, solve, zero_field_state
@@ -37,6 +37,7 @@ class FieldNodes:
         self.leaves: list[tuple[float, float, float]] = []
         self.count = 0
         self._kept: dict[float, tuple[Array, Array, Array]] = {}
+        self.judged: tuple[float, int] | None = None
         self.weights = None if request.weigh is None else request.weigh(directions)
         self.extent = extent(system, request.high)
         self.state = None if request.populations is None else zero_field_state(system, request.populations)
@@ -140,6 +141,7 @@ class FieldNodes:
         deepest : int
             On symmetry axes levels truly cross: there halving ends at this depth.
         """
+        self.judged = accuracy, deepest
         low, high = self.request.low, self.request.high
         # levels of one electron spin 1/2 hardly bend over a narrow range
         narrow = high - low < 0.5 * high and self.system.electrons == 1 and self.system.spins[0] == 0.5
@@ -211,7 +213,10 @@ class FieldNodes:
             reach &= only & (strength > 1e-3 * self.request.tolerance * strength.max())
             if not reach.any():
                 continue
-            error = np.where(reach, midpoint_error(f_a, f_m, f_b, g_a * h, g_m * h, g_b * h), 0.0).max(axis=1)
+            error = np.where(reach, midpoint_error(f_a, f_m, f_b, g_a * h, g_m * h, g_b * h), 0.0)
+            # a flat difference turns a miss of frequency into a larger one of field
+            steep = np.minimum(np.minimum(np.abs(g_a), np.abs(g_m)), np.abs(g_b))
+            error = (error * np.clip(STEEP / np.maximum(steep, 1e-9), 1.0, FLATTEST)).max(axis=1)
             # strengths have no slopes to follow them by: their bend, squared, is what a polynomial may miss
             bend = np.where(reach, np.abs(s_m - 0.5 * (s_a + s_b)), 0.0)
             missed = bend * bend / (np.maximum(strength, 1e-300) * strength.max(initial=1e-300, where=reach))
@@ -225,7 +230,7 @@ class FieldNodes:
         return halves
 
     def moved(self, directions: Array, known: NDArray[np.intp]) -> FieldNodes:
-        """Return the same nodes for another set of directions, reusing what is known.
+        """Return the same nodes, and more where they need them, for another set of directions, reusing what is known.
 
         Parameters
         ----------
@@ -246,7 +251,30 @@ class FieldNodes:
                 array[new], array[known[kept]] = added, old[kept]
                 arrays.append(array)
             other.solved[field] = tuple(arrays)
+        if self.judged is not None:
+            other._judge_again(*self.judged)
         return other
+
+    def _judge_again(self, accuracy: float, deepest: int) -> None:
+        """Halve leaves that the present directions find too long.
+
+        What is sharp along the field may be so in few directions only, which a first set of them misses.
+        """
+        self.judged = accuracy, deepest
+        low, high = self.request.low, self.request.high
+        every = np.ones(len(self.lower), dtype=bool)
+        old, self.leaves = self.leaves, []
+        for a, m, b in old:
+            if a < low or b > high:
+                self.leaves.append((a, m, b))
+                continue
+            depth = round(math.log2(max(1.0, 0.5 * (high - low) / (b - a))))
+            pending = [(a, b)]
+            while pending:
+                pending = self._judge(pending, accuracy, depth >= deepest, depth >= 3, every)
+                self._ensure([0.5 * (x + y) for x, y in pending])
+                depth += 1
+        self.leaves.sort()
 
     def data(self, pairs: Pairs | None = None) -> KnotData:
         """Return gap, slope and strength of every pair that can be resonant and is strong enough.
@@ -271,8 +299,28 @@ class FieldNodes:
         if self.request.broadening is not None:
             variance = np.ascontiguousarray(np.stack([self._variance(x, pairs) for x in fields]).transpose(2, 0, 1))
         order = None if self.characters is None else np.stack([self.solved[x][4] for x in fields])
-        data = KnotData(np.array(fields), leaves, pairs, gap, slope, strength, variance, pairs, order=order)
-        return self._split(data) if self.system.weak else data
+        plain = KnotData(np.array(fields), leaves, pairs, gap, slope, strength, variance, pairs, order=order)
+        if self.system.weak:
+            return self._split(plain)
+        if order is not None:  # neighbours by name are none by energy
+            return plain
+
+        def ladder() -> Ladder:
+            return self._ladder(fields, pairs)
+
+        return KnotData(np.array(fields), leaves, pairs, gap, slope, strength, variance, pairs, ladder)
+
+    def _ladder(self, fields: list[float], pairs: Pairs) -> Ladder:
+        """Return all levels at the given nodes."""
+        energy, slope = (np.stack([self.solved[x][i].T for x in fields]) for i in (0, 1))
+
+        def partner(row: int, number: int, nodes: NDArray[np.intp]) -> Array:
+            both = [pairs[0][row], pairs[1][row]]
+            both[number // 2] += 2 * (number % 2) - 1
+            one = (np.array([min(both)]), np.array([max(both)]))
+            return np.stack([self._differences(fields[k], one)[2][:, 0] for k in nodes])
+
+        return Ladder(energy, slope, partner)
 
     def _split(self, data: KnotData) -> KnotData:
         """Return a row for each line into which weak nuclei split a pair."""
@@ -341,13 +389,15 @@ def _steepness(data: KnotData) -> float:
     return max(FLAT, float(np.quantile(np.abs(data.slope[strong]), 0.05)))
 
 
+STEEP = 28.0
+"""MHz/mT, the slope of a free spin's level difference."""
+FLATTEST = 5.0
+"""How much more closely level differences are followed along the field where they are flat, at the most."""
 def blur(request: Request) -> float:
     """Return by how much levels may be moved in narrow anticrossings, MHz: few directions have any."""
-    return BLUR * FREE_SLOPE * request.scale * math.sqrt(request.tolerance / 1e-3)
+    return BLUR * STEEP * request.scale * math.sqrt(request.tolerance / 1e-3)
 
 
-FREE_SLOPE = 28.0
-"""MHz/mT, a free spin's."""
 BLUR = 0.1
 """Distance of levels, in line widths, that is not seen at the default tolerance."""
 FLAT = 8.0

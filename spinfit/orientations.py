@@ -17,6 +17,9 @@ from scipy import interpolate
 
 Array = NDArray[np.float64]
 
+SPLINE = 5
+"""Degree of the splines over the sphere: their error falls as the sixth power of the step."""
+
 
 def _phi_basis(kind: str, harmonics: int, phi: Array) -> Array:
     """Return the azimuthal basis, shape (len(phi), count), for `harmonics` as in `Rings`."""
@@ -247,7 +250,7 @@ class Rings:
         return even @ amplitude @ basis.T
 
     def to_mesh_locally(self, values: Array, mesh: Mesh) -> Array:
-        """Continue values at the knots, shape (q, n), to a mesh by cubic splines: (q, thetas + 1, azimuths).
+        """Continue values at the knots, shape (q, n), to a mesh by splines: (q, thetas + 1, azimuths).
 
         Splines converge slower than series on smooth functions, but a kink, such as sorted levels
         have where they nearly cross, stays where it is.
@@ -264,7 +267,7 @@ class Rings:
         return even @ (0.5 * (rows + opposite)) + odd @ (0.5 * (rows - opposite))
 
     def to_finer_locally(self, values: Array, finer: Rings) -> Array:
-        """Continue values at the knots, shape (q, n), to the knots of another set by cubic splines."""
+        """Continue values at the knots, shape (q, n), to the knots of another set by splines."""
         return values @ _knots_to_knots_locally(self, finer).T
 
     def without_harmonics(self, values: Array, kept: int) -> Array:
@@ -330,7 +333,7 @@ def _analysis(rings: Rings) -> Array:
 
 
 def _spline_matrix(knots: Array, angles: Array, parity: int, period: float = 0.0) -> Array:
-    """Return the cubic spline through values at `knots` as a matrix, shape (len(angles), len(knots)).
+    """Return the quintic spline through values at `knots` as a matrix, shape (len(angles), len(knots)).
 
     Parameters
     ----------
@@ -353,7 +356,7 @@ def _spline_matrix(knots: Array, angles: Array, parity: int, period: float = 0.0
         y = np.concatenate([parity * unit[:0:-1], unit, parity * unit[-2::-1]])
         if parity < 0:
             y[:, [0, -1]] = 0.0
-    return interpolate.make_interp_spline(x, y, k=min(3, len(x) - 1))(angles)
+    return interpolate.make_interp_spline(x, y, k=min(SPLINE, len(x) - 1))(angles)
 
 
 def _splines_around(rings: Rings, phi: Array) -> list[Array]:

@@ -127,7 +127,7 @@ def powder(
     loops: list[Summed] = []
     if knots.other.any():
         rows = np.flatnonzero(knots.other)
-        points, error = add_pairs(histograms, knots.rings, knots.data, rows, request, loops)
+        points, error = add_pairs(histograms, knots.rings, knots.data, rows, request, loops, knots.crossings)
         report.mesh_points += points
     report.rings, report.estimated_error = knots.rings.rings, math.hypot(knots.error, error)
     report.directions, report.diagonalisations = knots.directions, knots.diagonalisations

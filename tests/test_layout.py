@@ -54,6 +54,7 @@ ORDER = (
     "lineshape",
     "sheets",
     "branches",
+    "crossings",
     "nodes",
     "knots",
     "exact",
