@@ -93,7 +93,7 @@ def fuzz(name: str, folder: Path, seconds: float, runs: int) -> dict[str, object
     while done < runs and (left := until - time.monotonic()) > 1:
         flags = [
             f"-max_total_time={int(left)}", f"-runs={runs - done}", f"-max_len={LONGEST[name]}", f"-dict={words}",
-            f"-timeout={3 if name in IN_LIBRARY else 30}", "-rss_limit_mb=3000", f"-artifact_prefix={findings}/",
+            f"-timeout={2 if name in IN_LIBRARY else 30}", "-rss_limit_mb=3000", f"-artifact_prefix={findings}/",
             f"-seed={1 + restarts}", "-reload=0", "-len_control=0", str(corpus),
         ]  # fmt: skip
         command = [sys.executable, "-W", "ignore", __file__, "--inside", name, "--folder", str(findings), *flags]
@@ -124,7 +124,7 @@ def judged(name: str, findings: Path) -> list[str]:
     """Return the findings that count; what ended the process counts unless the guarded reader refuses it."""
     counted = []
     for file in sorted(findings.iterdir()):
-        if file.name.startswith(("crash-", "timeout-", "oom-", "leak-")) and name in IN_LIBRARY:
+        if file.name.startswith(("crash-", "timeout-", "oom-", "leak-", "slow-unit-")) and name in IN_LIBRARY:
             check = f"from spinfit.{'files.reading' if name == 'hdf5' else 'report.archive_reading'} import *\n"
             check += f"from spinfit.errors import InputError\ntry: {'read' if name == 'hdf5' else 'read_archive'}"
             check += f"({str(file)!r})\nexcept InputError as e: print(e)\n"

@@ -114,6 +114,15 @@ def test_the_child_has_a_limit_on_its_memory(monkeypatch):
     assert "memory" in refusal(buffer.getvalue())
 
 
+def test_limits_of_the_user_stay(own_child):
+    """A scheduler may have limited the process already, further down than the guard would."""
+    own_child(
+        "import resource, sys; resource.setrlimit(resource.RLIMIT_CPU, (3, 3)); "
+        "resource.setrlimit(resource.RLIMIT_AS, (2**31, 2**31)); " + guard._START
+    )
+    assert read_hdf5(file_bytes(), "f.h5").columns.shape == (16, 2)
+
+
 def test_no_folder_of_the_user_is_imported_from(tmp_path, monkeypatch):
     """A file called h5py.py beside the data is data."""
     (tmp_path / "h5py.py").write_text("raise SystemExit")

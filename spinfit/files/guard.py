@@ -36,6 +36,8 @@ _PATIENCE = 20.0
 # The library may leak what a damaged file left half open.
 _MOST_FAILURES = 200
 _LONGEST_ANSWER = 2**28
+# Of a larger file (a batch's archive) a part is read at a time.
+_MOST_READ = 2**30
 _START = (
     "import json, sys; sys.path[:] = json.loads(sys.argv[1]); from spinfit.files.hdf5_child import serve; "
     "serve(int(sys.argv[2]), int(sys.argv[3]))"
@@ -46,7 +48,7 @@ Arrays = list[NDArray[Any]]
 
 def cpu_limit(size: int) -> float:
     """Return the processor time that a file of some size may take, seconds."""
-    return SECONDS + SECONDS_PER_BYTE * size
+    return SECONDS + SECONDS_PER_BYTE * min(size, _MOST_READ)
 
 
 def memory_limit(size: int) -> int:

@@ -41,15 +41,19 @@ def _own_memory() -> int | None:
 
 
 def set_limits(seconds: float, memory: int) -> None:
-    """Give this process some more processor time, and memory beyond what it has; then the system ends it."""
+    """Give this process some more processor time, and memory beyond what it has; then the system ends it.
+
+    Limits that the user or a scheduler has set stay.
+    """
     if resource is None:
         return
-    hard = resource.getrlimit(resource.RLIMIT_CPU)[1]
-    resource.setrlimit(resource.RLIMIT_CPU, (math.ceil(time.process_time() + seconds), hard))
-    resource.setrlimit(resource.RLIMIT_CORE, (0, resource.getrlimit(resource.RLIMIT_CORE)[1]))
+    wanted = {resource.RLIMIT_CPU: math.ceil(time.process_time() + seconds), resource.RLIMIT_CORE: 0}
     own = _own_memory()
     if own is not None:
-        resource.setrlimit(resource.RLIMIT_AS, (own + memory, resource.getrlimit(resource.RLIMIT_AS)[1]))
+        wanted[resource.RLIMIT_AS] = own + memory
+    for limit, value in wanted.items():
+        hard = resource.getrlimit(limit)[1]
+        resource.setrlimit(limit, (value if hard == resource.RLIM_INFINITY else min(value, hard), hard))
 
 
 def answer_to(question: Mapping[str, Any], content: bytes) -> tuple[dict[str, Any], Arrays]:
