@@ -6,6 +6,7 @@ import argparse
 import time
 from collections.abc import Iterator, Mapping
 from contextlib import contextmanager, suppress
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -19,6 +20,7 @@ EXAMPLES = (
     "spinfit fit kiln-07.toml --out kiln-07",
     "spinfit fit kiln-07.toml --json",
     "spinfit fit kiln-07.toml --out kiln-07 --profile cu.g_z --bootstrap 200",
+    "spinfit fit kiln-07.toml --sample 1000",
     "spinfit fit axial.toml rhombic.toml --compare",
 )
 # Seconds between lines of progress where nobody watches a terminal.
@@ -46,6 +48,9 @@ def options(parser: argparse.ArgumentParser) -> None:
         "--bootstrap", metavar="N", help="refit N traces of resampled residuals; 200 give an uncertainty to 5 %%"
     )
     parser.add_argument(
+        "--sample", metavar="N", help="sample the posterior by walkers of N steps (needs emcee); 1000 is a beginning"
+    )
+    parser.add_argument(
         "--compare", action="store_true", help="fit several jobs to the same data and say which model it supports"
     )
 
@@ -55,6 +60,7 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
     from spinfit.files.job import read_job
 
     resamples = _count(args.bootstrap)
+    steps = _count(args.sample, "--sample", "1000")
     if args.compare:
         return _compare(args, screen)
     if len(args.job) > 1:
@@ -63,17 +69,21 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
         )
     job = read_job(args.job[0])
     _check_profiled(job, args.profile, resamples)
+    if steps:
+        from spinfit.fitting.sampling import check_sampling
+
+        check_sampling(job, steps)
     is_new = args.out is not None and not Path(args.out).exists()
     folder = None if args.out is None else ready_folder(args.out)
     try:
-        outcome, profiles, resampled = _fitted(job, args.profile, resamples, screen)
-        written = [] if folder is None else write_outcome(folder, job, outcome, profiles=profiles, resampled=resampled)
+        outcome, tried = _fitted(job, args.profile, resamples, steps, screen)
+        written = [] if folder is None else write_outcome(folder, job, outcome, **tried)
     except BaseException:
         if is_new and folder is not None:  # a refused fit leaves no empty folder behind
             with suppress(OSError):
                 folder.rmdir()
         raise
-    _say(screen, outcome, folder, written, profiles=profiles, resampled=resampled)
+    _say(screen, outcome, folder, written, **tried)
     return _code(outcome)
 
 
@@ -81,12 +91,12 @@ def _code(outcome: Any) -> int:
     return 0 if outcome.quality.converged and outcome.quality.finished else 1
 
 
-def _count(text: str | None) -> int:
-    """Return the number of resamples, 0 for none."""
+def _count(text: str | None, option: str = "--bootstrap", example: str = "200") -> int:
+    """Return the number of resamples or steps, 0 for none."""
     if text is None:
         return 0
     if not text.isdigit() or not 2 <= int(text) <= 100_000:
-        raise InputError(f'"{text}"', "write a whole number from 2 to 100000, such as 200", place="--bootstrap")
+        raise InputError(f'"{text}"', f"write a whole number from 2 to 100000, such as {example}", place=option)
     return int(text)
 
 
@@ -106,16 +116,17 @@ def _check_profiled(job: Any, names: list[str], resamples: int) -> None:
             raise InputError(f'"{name}" is not varied', "name one of " + ", ".join(varied[:8]), place="--profile")
 
 
-def _fitted(job: Any, profiled: list[str], resamples: int, screen: Screen) -> tuple[Any, Any, Any]:
-    """Fit, then whatever was asked for beyond it."""
+def _fitted(job: Any, profiled: list[str], resamples: int, steps: int, screen: Screen) -> tuple[Any, dict[str, Any]]:
+    """Fit, then whatever was asked for beyond it: profiles, resampled, posterior."""
     from spinfit.fitting.driver import fit
     from spinfit.fitting.parameters import Binding, members
     from spinfit.fitting.resample import bootstrap, profile
+    from spinfit.fitting.sampling import sample
 
     points = max(1, sum(int(trace.used.sum()) for trace in job.traces) + sum(len(one.field) for one in job.lines))
     with shown_progress(screen, points) as progress:
         outcome = fit(job, progress=progress)
-        profiles, resampled = (), None
+        profiles, resampled, posterior = (), None, None
         if outcome.quality.finished and profiled:
             every = Binding(job.species, job.sample, job.traces).parameters
             asked = [m for name in profiled for m in members(name, every, place="--profile")]
@@ -123,7 +134,10 @@ def _fitted(job: Any, profiled: list[str], resamples: int, screen: Screen) -> tu
             profiles = profile(job, outcome, known, progress=progress) if known else ()
         if outcome.quality.finished and resamples:
             resampled = bootstrap(job, outcome, resamples, progress=progress)
-    return outcome, profiles, resampled
+        if outcome.quality.finished and steps:
+            posterior = sample(job, outcome, steps, progress=progress)
+            outcome = replace(outcome, warnings=(*outcome.warnings, *posterior.notes))
+    return outcome, {"profiles": profiles, "resampled": resampled, "posterior": posterior}
 
 
 def _compare(args: argparse.Namespace, screen: Screen) -> int:
@@ -134,7 +148,7 @@ def _compare(args: argparse.Namespace, screen: Screen) -> int:
     from spinfit.report.tables import outcome_lines
     from spinfit.report.tried import comparison_lines
 
-    for option, given in (("--profile", args.profile), ("--bootstrap", args.bootstrap)):
+    for option, given in (("--profile", args.profile), ("--bootstrap", args.bootstrap), ("--sample", args.sample)):
         if given:
             raise InputError("does not go with --compare", f"take {option} out", place=option)
     if len(args.job) < 2:
@@ -145,14 +159,16 @@ def _compare(args: argparse.Namespace, screen: Screen) -> int:
         if names.count(name) > 1:
             raise InputError(f'two jobs are called "{name}"', "give their files different names", place="--compare")
         if name.startswith("."):  # the stem of "...toml" is ".."
-            raise InputError(f'"{name}" cannot be the name of a folder', "give the file another name", place="--compare")
+            raise InputError(
+                f'"{name}" cannot be the name of a folder', "give the file another name", place="--compare"
+            )
     paths = [] if args.out is None else [Path(args.out), *(Path(args.out) / name for name in names)]
     fresh = [path for path in paths if not path.exists()]
     folders = [None if args.out is None else ready_folder(str(Path(args.out) / name)) for name in names]
     outcomes = []
     try:
         for job, folder in zip(jobs, folders, strict=True):
-            outcome, _, _ = _fitted(job, [], 0, screen)
+            outcome, _ = _fitted(job, [], 0, 0, screen)
             if folder is not None:
                 write_outcome(folder, job, outcome)
             outcomes.append(outcome)
@@ -174,19 +190,27 @@ def _compare(args: argparse.Namespace, screen: Screen) -> int:
 
 
 def _say(
-    screen: Screen, outcome: Any, folder: Path | None, written: list[str], *, profiles: Any = (), resampled: Any = None
+    screen: Screen,
+    outcome: Any,
+    folder: Path | None,
+    written: list[str],
+    *,
+    profiles: Any = (),
+    resampled: Any = None,
+    posterior: Any = None,
 ) -> None:
     from spinfit.report.outcome_files import more_record
     from spinfit.report.outcome_json import outcome_record
     from spinfit.report.tables import outcome_lines
-    from spinfit.report.tried import bootstrap_table, budget_table, profile_table
+    from spinfit.report.tried import bootstrap_table, budget_table, posterior_table, profile_table
 
-    screen.emit(outcome_record(outcome, more_record(profiles, resampled)))
+    screen.emit(outcome_record(outcome, more_record(profiles, resampled, posterior)))
     blocks = (
         outcome_lines(outcome),
         budget_table(outcome),
         profile_table(profiles),
         bootstrap_table(resampled, outcome),
+        posterior_table(posterior, outcome),
     )
     screen.say("\n\n".join(block for block in blocks if block))
     screen.say()
@@ -226,14 +250,16 @@ class _Tried(Exception):
     """Leaves a file that was only opened to see whether it can be."""
 
 
-def write_outcome(folder: Path, job: Any, outcome: Any, *, profiles: Any = (), resampled: Any = None) -> list[str]:
+def write_outcome(
+    folder: Path, job: Any, outcome: Any, *, profiles: Any = (), resampled: Any = None, posterior: Any = None
+) -> list[str]:
     """Write every file of an outcome, all or none: they are moved to their places when all are complete."""
     from contextlib import ExitStack
 
     from spinfit.files.atomic import whole_file
     from spinfit.report.outcome_files import outcome_files
 
-    contents = outcome_files(outcome, job=job, profiles=profiles, resampled=resampled)
+    contents = outcome_files(outcome, job=job, profiles=profiles, resampled=resampled, posterior=posterior)
     with ExitStack() as stack:
         places = {name: stack.enter_context(whole_file(folder / name)) for name in contents}
         for name, content in contents.items():

@@ -11,6 +11,7 @@ import numpy as np
 from spinfit.fitting.data import Job
 from spinfit.fitting.outcome import Outcome, Value
 from spinfit.fitting.resample import Bootstrap, Profile
+from spinfit.fitting.sampling import Posterior
 from spinfit.report.beside import SETTING_HEADINGS, ion_rows, setting_rows
 from spinfit.report.effective import effective_rows
 from spinfit.report.ion_tables import AXES, g_values, percent, quench_remarks
@@ -28,10 +29,13 @@ from spinfit.report.svg_figures import (
 from spinfit.report.tables import STRONG, remark, strong_correlations
 from spinfit.report.tried import (
     BOOTSTRAP_HEADINGS,
+    POSTERIOR_HEADINGS,
     PROFILE_HEADINGS,
     SOURCES,
     bootstrap_rows,
     budget_cells,
+    posterior_rows,
+    posterior_sentence,
     profile_rows,
 )
 
@@ -186,6 +190,14 @@ def _correlations(outcome: Outcome) -> str:
     return text + f'<div class="wide">{heat_map([names[k] for k in shown], matrix[np.ix_(shown, shown)])}</div>'
 
 
+def _posterior(outcome: Outcome, posterior: Posterior | None) -> str:
+    """Return the quantiles of a sampled posterior; empty when none was asked for."""
+    if posterior is None:
+        return ""
+    rows = table(POSTERIOR_HEADINGS, posterior_rows(posterior, outcome), left=(0, 1))
+    return "<h3>Posterior</h3>" + rows + paragraph(posterior_sentence(posterior) + ".", "quiet")
+
+
 def _tried(outcome: Outcome, profiles: Sequence[Profile], resampled: Bootstrap | None) -> str:
     """Return profiles of chi-squared and the bootstrap; empty when neither was asked for."""
     text = ""
@@ -258,7 +270,12 @@ def _provenance(outcome: Outcome) -> str:
 
 
 def report_text(
-    outcome: Outcome, *, job: Job | None = None, profiles: Sequence[Profile] = (), resampled: Bootstrap | None = None
+    outcome: Outcome,
+    *,
+    job: Job | None = None,
+    profiles: Sequence[Profile] = (),
+    resampled: Bootstrap | None = None,
+    posterior: Posterior | None = None,
 ) -> str:
     """Return the page.
 
@@ -268,7 +285,7 @@ def report_text(
     job : Job, optional
         What was fitted; with it the page compares ions that the job names with the free ion, and lists
         equivalent settings of zero-field tensors.
-    profiles, resampled
+    profiles, resampled, posterior
         What was tried beyond the fit.
     """
     text = str(outcome.provenance.get("job", ""))
@@ -283,7 +300,7 @@ def report_text(
         section("Fractions of spins", _fractions(outcome.fractions)),
         section("Free ion, crystal field, measurement", _ions(job, outcome)),
         section("What the data cannot tell", _left_open(job, outcome)),
-        section("Tried beyond the fit", _tried(outcome, profiles, resampled)),
+        section("Tried beyond the fit", _tried(outcome, profiles, resampled) + _posterior(outcome, posterior)),
         section("Quality", _quality(outcome)),
         section("Job", f"<pre>{escape(text)}</pre>" if text else ""),
         section("Provenance", _provenance(outcome)),

@@ -8,12 +8,13 @@ from typing import Any
 from spinfit.fitting.data import Job
 from spinfit.fitting.outcome import Outcome
 from spinfit.fitting.resample import Bootstrap, Profile
+from spinfit.fitting.sampling import Posterior
 from spinfit.report.archive import archive_bytes
 from spinfit.report.html import report_text
 from spinfit.report.outcome_json import curves_text, outcome_text
 from spinfit.report.plots import fit_figure, picture_bytes
 from spinfit.report.positions import positions_figure, positions_text
-from spinfit.report.tried import bootstrap_record, profile_record
+from spinfit.report.tried import bootstrap_record, posterior_record, profile_record
 
 NUMBERS = ("outcome.json", "curves.csv", "outcome.h5")
 """Files without pictures."""
@@ -21,13 +22,17 @@ DRAWN = ("fit.png", "fit.svg", "report.html")
 """Files that hold pictures, which take longer to draw than a short fit takes."""
 
 
-def more_record(profiles: Sequence[Profile] = (), resampled: Bootstrap | None = None) -> dict[str, Any]:
-    """Return what outcome.json says of profiles and bootstrap; empty when there are none."""
+def more_record(
+    profiles: Sequence[Profile] = (), resampled: Bootstrap | None = None, posterior: Posterior | None = None
+) -> dict[str, Any]:
+    """Return what outcome.json says of profiles, bootstrap and posterior; empty when there are none."""
     more: dict[str, Any] = {}
     if profiles:
         more["profiles"] = {one.name: profile_record(one) for one in profiles}
     if resampled is not None:
         more["bootstrap"] = bootstrap_record(resampled)
+    if posterior is not None:
+        more["posterior"] = posterior_record(posterior)
     return more
 
 
@@ -37,6 +42,7 @@ def outcome_files(
     job: Job | None = None,
     profiles: Sequence[Profile] = (),
     resampled: Bootstrap | None = None,
+    posterior: Posterior | None = None,
     pictures: bool = True,
 ) -> dict[str, bytes]:
     """Return the content of every file of an outcome by name.
@@ -48,18 +54,19 @@ def outcome_files(
         What was fitted: the page then compares its ions with free ones, and the archive keeps its files.
     profiles : sequence of Profile
     resampled : Bootstrap, optional
+    posterior : Posterior, optional
     pictures : bool
         Whether `DRAWN` is among them.
     """
     curves = positions_text(outcome) if outcome.positions else curves_text(outcome)
-    more = more_record(profiles, resampled)
+    more = more_record(profiles, resampled, posterior)
     contents = {
         "outcome.json": outcome_text(outcome, more).encode(),
         "curves.csv": curves.encode(),
     }
     if pictures:
         figure = positions_figure(outcome) if outcome.positions else fit_figure(outcome)
-        report = report_text(outcome, job=job, profiles=profiles, resampled=resampled)
+        report = report_text(outcome, job=job, profiles=profiles, resampled=resampled, posterior=posterior)
         contents |= {"fit.png": picture_bytes(figure), "fit.svg": picture_bytes(figure, "svg")}
         contents["report.html"] = report.encode()
     return contents | {"outcome.h5": archive_bytes(outcome, job, more)}

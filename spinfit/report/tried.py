@@ -1,4 +1,4 @@
-"""What was tried beyond the fit: profiles of chi-squared, bootstrap, and the budget of uncertainties."""
+"""What was tried beyond the fit: profiles, bootstrap, posterior, and the budget of uncertainties."""
 
 from __future__ import annotations
 
@@ -8,6 +8,7 @@ from typing import Any
 from spinfit.fitting.comparison import Comparison
 from spinfit.fitting.outcome import Outcome
 from spinfit.fitting.resample import Bootstrap, Profile
+from spinfit.fitting.sampling import LEVELS, Posterior
 from spinfit.report.layout import table, wrapped
 from spinfit.report.numbers import short, small
 
@@ -97,6 +98,78 @@ def bootstrap_table(one: Bootstrap | None, outcome: Outcome) -> str:
     text = table(list(BOOTSTRAP_HEADINGS), bootstrap_rows(one, outcome), left=(0, 1))
     failed = f"; {one.failed} more did not converge" if one.failed else ""
     return f"{text}\n{len(one.values)} refits to resampled residuals{failed}"
+
+
+def posterior_record(one: Posterior) -> dict[str, Any]:
+    """Return a posterior as plain types: its quantiles, and what the chain is worth."""
+    return {
+        "steps": one.steps,
+        "walkers": one.walkers,
+        "discarded": one.discarded,
+        "acceptance": one.acceptance,
+        "priors": "flat within limits",
+        "noise": "marginalised",
+        "tempered": one.tempered,
+        "parameters": {
+            name: {
+                "unit": unit,
+                "mean": float(values.mean()),
+                "standard_deviation": float(sigma),
+                "quantiles": {f"{level:g}": float(value) for level, value in zip(LEVELS, quantiles, strict=True)},
+                "autocorrelation_time": float(time),
+            }
+            for name, unit, values, sigma, quantiles, time in zip(
+                one.names, one.units, one.values.T, one.deviation, one.quantiles, one.autocorrelation, strict=True
+            )
+        },
+    }
+
+
+POSTERIOR_HEADINGS = (
+    "posterior of",
+    "unit",
+    "median",
+    "16 to 84 %",
+    "2.5 to 97.5 %",
+    "deviation",
+    "of the fit",
+    "memory",
+)
+
+
+def posterior_rows(one: Posterior, outcome: Outcome) -> list[list[str]]:
+    return [
+        [
+            name,
+            unit,
+            short(float(q[2])),
+            _span((float(q[1]), float(q[3]))),
+            _span((float(q[0]), float(q[4]))),
+            small(float(sigma)),
+            small(outcome.parameters[name].uncertainty_noise),
+            f"{time:.0f}",
+        ]
+        for name, unit, q, sigma, time in zip(
+            one.names, one.units, one.quantiles, one.deviation, one.autocorrelation, strict=True
+        )
+    ]
+
+
+def posterior_sentence(one: Posterior) -> str:
+    """Return how the posterior was drawn, in one sentence."""
+    return (
+        f"{one.walkers} walkers of {one.steps} steps, the first {one.discarded} left out, "
+        f"{100 * one.acceptance:.0f} % of the moves taken; memory is the autocorrelation time in steps; "
+        "flat priors within the limits, noise level marginalised; field axis and frequency are not in it"
+    )
+
+
+def posterior_table(one: Posterior | None, outcome: Outcome) -> str:
+    """Return quantiles beside what the fit said, as text."""
+    if one is None:
+        return ""
+    text = table(list(POSTERIOR_HEADINGS), posterior_rows(one, outcome), left=(0, 1))
+    return f"{text}\n{wrapped(posterior_sentence(one))}"
 
 
 def comparison_lines(found: Comparison) -> str:
