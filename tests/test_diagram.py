@@ -80,6 +80,10 @@ def test_the_picture_shows_levels_and_every_strong_transition() -> None:
     assert lower.get_xlabel() == "magnetic field / mT"
     assert lower.get_ylim()[0] < -1  # there is emission
     assert {text.get_text() for text in upper.texts} == {"1", "2", "3"}
+    close = diagram(
+        systems(Species("c", (Spin(0.5),), (Nucleus("63Cu", A=(-30.0,)),)))[0], Z, NU, (0.0, 400.0), points=5
+    )
+    assert {text.get_text() for text in diagram_figure(close, frequency=NU).axes[0].texts} == {"1–4", "5–8"}
     empty = diagram(system, Z, NU, (0.0, 10.0), points=5)
     assert len(diagram_figure(empty, frequency=NU).axes[0].lines) == 3
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 import subprocess
 import sys
 
@@ -16,6 +17,7 @@ from scipy import constants
 
 from spinfit.fitting.turning import analyse
 from spinfit.report import style
+from spinfit.report.page import style_sheet
 from spinfit.report.plots import angles_figure, fit_figure, g_ticks, picture_bytes, spectrum_figure, trace_figure
 
 MU_B = constants.physical_constants["Bohr magneton"][0]
@@ -148,10 +150,39 @@ def seen(colour, matrix):
 def test_colours_are_told_apart(eyes):
     matrix = SIMULATED[eyes]
     np.testing.assert_allclose(matrix.sum(axis=1), 1, atol=1e-5)
-    for group in ((style.MEASURED, style.FITTED, style.UNUSED), style.PARTS):
+    dark = style.ON_DARK
+    lit = (dark["measured"], dark["fitted"], dark["unused"])
+    for group in ((style.MEASURED, style.FITTED, style.UNUSED), style.PARTS, lit, style.PARTS_ON_DARK):
         points = [seen(colour, matrix) for colour in group]
         distances = [np.linalg.norm(a - b) for i, a in enumerate(points) for b in points[:i]]
         assert min(distances) > 30  # just noticeable is about 2.3
+
+
+def contrast(one, other):
+    """Ratio of luminances (Web Content Accessibility Guidelines 2.1, W3C 2018)."""
+    light = []
+    for colour in (one, other):
+        rgb = np.array(to_rgb(colour))
+        linear = np.where(rgb <= 0.04045, rgb / 12.92, ((rgb + 0.055) / 1.055) ** 2.4)
+        light.append(float(linear @ [0.2126, 0.7152, 0.0722]) + 0.05)
+    return max(light) / min(light)
+
+
+def variables(sheet, start):
+    block = sheet[sheet.index(start) :].partition("}")[0]
+    return dict(re.findall(r"--([\w-]+): (#\w+)", block))
+
+
+@pytest.mark.parametrize("theme", [":root", "(prefers-color-scheme: dark)"])
+def test_pages_can_be_read_light_and_dark(theme):
+    """Text 4.5 to 1 (success criterion 1.4.3), curves 3 to 1 (1.4.11), against what they stand on."""
+    colours = variables(style_sheet(), theme)
+    for text in ("ink", "quiet", "mark"):
+        for ground in ("paper", "tint"):
+            assert contrast(colours[text], colours[ground]) > 4.5, (text, ground)
+    for curve in ("measured", "fitted", "guide"):
+        assert contrast(colours[curve], colours["paper"]) > 3, curve
+    assert contrast(colours["on-strong"], colours["negative"]) > 4.5
 
 
 def test_no_pyplot_is_needed():

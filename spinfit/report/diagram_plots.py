@@ -54,13 +54,19 @@ def diagram_figure(found: Diagram, *, frequency: float | None) -> Figure:
 
 
 def _number(axes: Axes, found: Diagram) -> None:
-    """Write the levels' numbers at the last field, where they stand far enough apart to be read."""
+    """Write the levels' numbers at the last field; levels too close together share a text, "1–4"."""
     last = found.energies[-1] / 1e3
-    room = 0.035 * float(np.ptp(found.energies)) / 1e3
-    if len(last) > 1 and np.diff(last).min() < room:
-        return
-    for k, energy in enumerate(last, start=1):
-        axes.annotate(str(k), (1.0, energy), xycoords=("axes fraction", "data"), xytext=(3, 0), color=style.MEASURED,
+    room = 0.045 * (axes.get_ylim()[1] - axes.get_ylim()[0])
+    groups = [[0]]
+    for k in range(1, len(last)):
+        if last[k] - last[k - 1] < room:
+            groups[-1].append(k)
+        else:
+            groups.append([k])
+    for group in groups:
+        text = str(group[0] + 1) if len(group) == 1 else f"{group[0] + 1}–{group[-1] + 1}"
+        middle = (last[group[0]] + last[group[-1]]) / 2
+        axes.annotate(text, (1.0, middle), xycoords=("axes fraction", "data"), xytext=(3, 0), color=style.MEASURED,
                       textcoords="offset points", ha="left", va="center", fontsize=6.0)  # fmt: skip
 
 
