@@ -22,7 +22,7 @@ from spinfit.batch.table import SUMMARY, write_summary
 from spinfit.batch.tasks import RESERVED, Order, Plan, Task
 from spinfit.batch.workers import NoWorkers, Overrun, WorkerDied, Workers, process_pool
 from spinfit.errors import InputError
-from spinfit.files.folders import clear_unfinished
+from spinfit.files.folders import clear_unfinished, sync_folder
 
 MOST_DEATHS = 3
 """Processes that may die at one fit before it counts as failed."""
@@ -380,6 +380,9 @@ class _Batch:
             self.listener(self.progress, record)
 
     def _write(self, records: list[Record]) -> None:
+        if not records:
+            return
+        sync_folder(self.folder)  # the folders have their names before the journal speaks of them
         try:
             self.journal.append(records)
         except OSError as error:

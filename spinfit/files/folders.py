@@ -6,8 +6,10 @@ import os
 import shutil
 import tempfile
 from collections.abc import Collection, Mapping
+from concurrent.futures import ThreadPoolExecutor
 from contextlib import suppress
 from pathlib import Path
+from typing import BinaryIO
 
 BESIDE = ".spinfit-"
 """How the names of unfinished folders begin."""
@@ -23,18 +25,32 @@ def sync_folder(folder: Path) -> None:
             os.close(number)
 
 
-def _write(path: Path, content: bytes) -> None:
-    with open(path, "wb") as stream:
-        stream.write(content)
-        stream.flush()
-        os.fsync(stream.fileno())
+def _write(folder: Path, contents: Mapping[str, bytes]) -> None:
+    """Write files and wait until they and their names are on the disk.
+
+    One thread a file waits: the system then writes them out together, which takes little more than a single one.
+    """
+    streams: list[BinaryIO] = []
+    try:
+        for name, content in contents.items():
+            streams.append(open(folder / name, "wb"))
+            streams[-1].write(content)
+            streams[-1].flush()
+        with ThreadPoolExecutor(len(streams) + 1) as pool:
+            names = pool.submit(sync_folder, folder)
+            list(pool.map(lambda stream: os.fsync(stream.fileno()), streams))
+            names.result()
+    finally:
+        for stream in streams:
+            stream.close()
 
 
 def write_folder(folder: Path, contents: Mapping[str, bytes], *, stale: Collection[str] = ()) -> None:
-    """Write files into a folder.
+    """Write files into a folder, and wait until they are on the disk.
 
-    A folder that is not there yet appears whole under its name.  Into one that is there each file is moved whole,
-    and what else stands in it stays, but for `stale`.
+    That the folder itself has its name is on the disk once the one that it stands in is (`sync_folder`).  A folder that
+    is not there yet appears whole under its name.  Into one that is there each file is moved whole, and what else
+    stands in it stays, but for `stale`.
 
     Parameters
     ----------
@@ -49,12 +65,10 @@ def write_folder(folder: Path, contents: Mapping[str, bytes], *, stale: Collecti
     """
     beside = Path(tempfile.mkdtemp(prefix=BESIDE, dir=folder.parent))
     try:
-        for name, content in contents.items():
-            _write(beside / name, content)
+        _write(beside, contents)
         mask = os.umask(0)
         os.umask(mask)
         os.chmod(beside, 0o777 & ~mask)
-        sync_folder(beside)
         if not folder.exists():
             os.rename(beside, folder)
         else:
@@ -64,7 +78,6 @@ def write_folder(folder: Path, contents: Mapping[str, bytes], *, stale: Collecti
             sync_folder(folder)
     finally:
         shutil.rmtree(beside, ignore_errors=True)
-    sync_folder(folder.parent)
 
 
 def remove_files(folder: Path, names: Collection[str]) -> None:
