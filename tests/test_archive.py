@@ -285,6 +285,18 @@ def test_what_is_no_archive(tmp_path):
     assert "holds one fit" in refusal(FORMAT_1, trace="b")
 
 
+def test_foreign_files_with_odd_attributes_are_no_archives(tmp_path):
+    """An attribute of a kind that h5py cannot read is nobody's trouble unless somebody asks for it."""
+    with h5py.File(tmp_path / "a.h5", "w") as root:
+        kind = h5py.h5t.vlen_create(h5py.h5t.py_create(np.dtype([("a", "i4"), ("b", "f8")])))
+        h5py.h5a.create(root.id, b"odd", kind, h5py.h5s.create_simple((2,)))
+        root.attrs["empty"] = h5py.Empty("f8")
+    assert kind_of_archive(tmp_path / "a.h5") is None
+    with h5py.File(tmp_path / "a.h5", "r+") as root:
+        root.attrs["spinfit_format"] = "two"
+    assert "is no archive of spinfit" in refusal(tmp_path / "a.h5")
+
+
 # Damage ---------------------------------------------------------------------------------------------
 
 

@@ -139,14 +139,15 @@ def tree_of(root: h5py.File, under: Sequence[str], file: str) -> tuple[dict[str,
 
 
 def names_of(root: h5py.File, under: Sequence[str], file: str) -> dict[str, Any]:
-    """Return the names in a group and its attributes as far as they are single numbers or texts.
+    """Return the names in a group and its attributes as far as they are ours, single numbers or texts.
 
     Raises
     ------
     InputError
     """
     group = _group_at(root, under, file)
-    attrs = {key: group.attrs[key] for key in group.attrs}
+    # Attributes of other programs may be of kinds that h5py does not read.
+    attrs = {key: group.attrs[key] for key in group.attrs if key.startswith("spinfit_")}
     plain = {key: value.item() if isinstance(value, np.generic) else value for key, value in attrs.items()}
     names = []
     for name in group:
