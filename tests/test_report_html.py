@@ -71,6 +71,17 @@ def test_a_page_is_whole_loads_nothing_and_says_everything():
     assert page.seen.count("script") == 2
 
 
+def test_uncertainties_are_shown_with_what_they_are_made_of():
+    made = {"cu.g_perp": {"noise": 0.0001, "field axis": 0.0003, "frequency": 1e-9}}
+    page = report_text(outcome(budget=made))
+    row = re.search(r"<tr><td class=\"l\">cu.g_perp</td>.*?</tr>", page)[0]
+    assert "<td>0.00010</td><td></td><td>0.00030</td><td></td>" in row
+    # Shares of variance: 1 to 9 of 130 units.
+    assert [float(width) for width in re.findall(r'width="([\d.]+)"', row)] == pytest.approx([13, 0, 117, 0], abs=0.1)
+    derived = {"cu.g_z": Value(2.3, 0.005, 0.003, 0.004, derived=True)}
+    assert "<td>0.0030</td><td></td><td>0.0040 (both)</td>" in report_text(outcome(parameters=derived))
+
+
 def test_warnings_come_before_the_picture():
     page = everything()
     assert page.index("A warning") < page.index('<svg class="drawing"') < page.index("<h2>Parameters")

@@ -73,12 +73,15 @@ def _parameters(outcome: Outcome) -> str:
     rows = []
     for name, v in found.items():
         parts = outcome.budget.get(name, {})
+        cells = budget_cells(parts, v.uncertainty)
+        if not parts and v.uncertainty_noise is not None:  # a derived value: axis and frequency come as one
+            cells = [small(v.uncertainty_noise), "", f"{small(v.uncertainty_field)} (both)", ""]
         rows.append(
             [
                 name,
                 with_uncertainty(v.value, v.uncertainty),
                 v.unit,
-                *budget_cells(parts, v.uncertainty),
+                *cells,
                 _share_bar(parts),
                 short(v.start),
                 remark(v),

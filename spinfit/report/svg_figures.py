@@ -201,13 +201,13 @@ def g_drawing(rows: Sequence[tuple[str, QuenchRow]]) -> str:
     )
     height = 34.0 * len(rows)
     every = [v for _, row in rows for _, _, take in kinds for v in (take(row) or ())]
-    panel = Panel(150, 10, WIDTH - 164, height, span(every, room=0.08), (len(rows) - 0.5, -0.5))
+    titles = [f"{name}: {row.level.ion} {row.level.term}" for name, row in rows]
+    left = min(max(150.0, 24 + 7.5 * max(map(len, titles))), 460.0)
+    panel = Panel(left, 10, WIDTH - left - 14, height, span(every, room=0.08), (len(rows) - 0.5, -0.5))
     panel.x_axis("g")
     keys, used = [], set()
-    for k, (name, row) in enumerate(rows):
-        panel.frame.append(
-            text(142, 10 + float(panel.down(k)) + 4, f"{name}: {row.level.ion} {row.level.term}", anchor="end")
-        )
+    for k, (_, row) in enumerate(rows):
+        panel.frame.append(text(left - 8, 10 + float(panel.down(k)) + 4, titles[k][-60:], anchor="end"))
         for n, (label, kind, take) in enumerate(kinds):
             values = take(row)
             if values is None:
