@@ -114,12 +114,37 @@ def systems_of(species: Sequence[Species]) -> list[tuple[System, ...]]:
 
 def calculated(species: Sequence[Species], sample: Sample, table: Lines, *, highest: float | None = None) -> Calculated:
     """Every resonance at a table's distinct settings, up to a little above the highest measured field."""
-    distinct, _ = settings(table)
-    field, wave = directions(sample, at_settings(table, distinct))
+    return calculated_each(species, sample, (table,), highest=highest)[0]
+
+
+def calculated_each(
+    species: Sequence[Species], sample: Sample, tables: Sequence[Lines], *, highest: float | None = None
+) -> list[Calculated]:
+    """Every resonance at each table's distinct settings; tables taken under the same conditions share one search."""
+    alike: dict[tuple[object, ...], list[int]] = {}
+    for n, table in enumerate(tables):
+        by_angle = table.angle is not None and table.microwave != "parallel"
+        alike.setdefault((table.frequency, table.temperature, table.microwave, by_angle), []).append(n)
+    out: dict[int, Calculated] = {}
+    for members in alike.values():
+        placed = [directions(sample, at_settings(tables[n], settings(tables[n])[0])) for n in members]
+        edges = np.cumsum([0] + [len(field) for field, _ in placed])
+        field = np.concatenate([field for field, _ in placed])
+        waves = [wave for _, wave in placed if not isinstance(wave, str)]
+        along = np.concatenate(waves) if waves else placed[0][1]
+        top = max(_BEYOND * float(np.max(true_field(tables[n], tables[n].field))) for n in members)
+        found = _found(species, tables[members[0]], field, along, top if highest is None else highest)
+        for n, first, last in zip(members, edges[:-1], edges[1:], strict=True):
+            own = found.only((found.setting >= first) & (found.setting < last))
+            out[n] = replace(own, setting=own.setting - first)
+    return [out[n] for n in range(len(tables))]
+
+
+def _found(species: Sequence[Species], table: Lines, field: Array, wave: str | Array, top: float) -> Calculated:
+    """Every resonance up to a field, by the number of the setting; `field` has shape (settings, sites, 3)."""
     count, sites = field.shape[:2]
     flat = field.reshape(-1, 3)
     along = wave if isinstance(wave, str) else np.ascontiguousarray(wave.reshape(-1, 3))
-    top = highest if highest is not None else _BEYOND * float(np.max(true_field(table, table.field)))
     pieces = []
     for n, several in enumerate(systems_of(species)):
         for k, system in enumerate(several):

@@ -19,7 +19,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spinfit.errors import InputError
-from spinfit.fitting.assignment import CAP, Calculated, assign, calculated, gaps
+from spinfit.fitting.assignment import CAP, Calculated, assign, calculated_each, gaps
 from spinfit.fitting.data import Lines
 from spinfit.fitting.residuals import Problem, Progress
 from spinfit.fitting.signals import true_field
@@ -99,8 +99,8 @@ class LineProblem:
         self, free: Array, species: tuple[Species, ...], sample: Sample, tables: tuple[Lines, ...], scatter: Array
     ) -> State:
         residual, lines, lonely = np.empty(scatter.size), [], np.zeros(scatter.size, dtype=bool)
-        for table, block in zip(tables, self.blocks, strict=True):
-            found = calculated(species, sample, table)
+        every = calculated_each(species, sample, tables)
+        for table, block, found in zip(tables, self.blocks, every, strict=True):
             which = assign(found, table, scatter[block])
             lonely[block] = which < 0
             if found.field.size == 0:
