@@ -11,6 +11,8 @@ import signal
 import h5py
 import numpy as np
 import pytest
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
 
 from spinfit.errors import InputError
 from spinfit.files import guard
@@ -293,6 +295,69 @@ def test_truncation_anywhere_gives_one_line():
     content = file_bytes()
     for size in range(8, len(content), max(1, len(content) // 97)):
         refusal(content[:size])
+
+
+NAMES = st.sampled_from("a data field B signal frequency temperature title x\u00fc B_mT".split())
+WORDS = st.sampled_from(["", *"NXdata NXentry NXroot a data field signal B GHz mT . 1 /a ..".split()])
+ATTRIBUTES = st.dictionaries(
+    st.sampled_from(["NX_class", "default", "signal", "axes", "axis", "units", "frequency", "title", "detect"]),
+    st.one_of(
+        WORDS,
+        st.integers(-2, 2),
+        st.floats(),
+        st.lists(WORDS, min_size=1, max_size=3),
+        st.sampled_from([np.zeros((2, 2)), np.array([b"B"]), np.array([], dtype="f8"), h5py.Empty("S10"), 1j, True]),
+    ),
+    max_size=4,
+)
+DATASETS = st.one_of(
+    st.lists(st.floats(), max_size=5),
+    st.lists(st.integers(-(2**62), 2**62), min_size=1, max_size=5),
+    st.text(st.characters(codec="utf-8", exclude_characters="\x00"), max_size=5),
+    st.sampled_from(
+        [np.zeros((3, 2)), np.float64(9.4), np.ones((1, 4)), h5py.Empty("f8"), np.zeros(3, dtype="S4"),
+         np.zeros(2, dtype=[("a", "f8")]), np.ones(3, dtype=complex), np.ones(4, dtype=bool), np.ones(3, dtype="f2")]
+    ),
+    st.sampled_from(["/a", "/data/field", "../x", "nowhere", "/"]).map(h5py.SoftLink),
+    st.just(h5py.ExternalLink("other.h5", "/a")),
+)  # fmt: skip
+GROUPS = st.recursive(
+    st.dictionaries(NAMES, st.tuples(DATASETS, ATTRIBUTES), max_size=4),
+    lambda inner: st.dictionaries(NAMES, st.tuples(inner | DATASETS, ATTRIBUTES), max_size=4),
+    max_leaves=8,
+)
+
+
+def filled(group, members) -> None:
+    for name, (content, attributes) in members.items():
+        if isinstance(content, dict):
+            made = group.create_group(name)
+            filled(made, content)
+        elif isinstance(content, (h5py.SoftLink, h5py.ExternalLink)):
+            group[name] = content
+            continue
+        else:
+            made = group.create_dataset(name, data=content)
+        for key, value in attributes.items():
+            made.attrs[key] = value
+
+
+@settings(derandomize=True, deadline=None, max_examples=150, suppress_health_check=[HealthCheck.too_slow])
+@given(GROUPS, ATTRIBUTES, st.sampled_from(["trace", "tree", "names"]))
+def test_any_well_formed_file_is_read_or_refused(members, attributes, what):
+    """In this process: files that h5py wrote do not hang its library."""
+    buffer = io.BytesIO()
+    with h5py.File(buffer, "w") as root:
+        filled(root, members)
+        for key, value in attributes.items():
+            root.attrs[key] = value
+    try:
+        found, _ = answer_to({"what": what, "file": "f.h5", "path": "", "under": []}, buffer.getvalue())
+    except InputError as error:
+        assert str(error).isprintable()  # noqa: PT017
+        assert "is a damaged" not in str(error)  # noqa: PT017
+    else:
+        json.dumps(found)
 
 
 def test_the_child_itself_raises_nothing_else():
