@@ -10,6 +10,7 @@ larger along z, the rings are drawn together there.
 
 from __future__ import annotations
 
+import copy
 import math
 from collections.abc import Callable
 from dataclasses import dataclass
@@ -39,10 +40,12 @@ LEAST_MISS = 0.05
 """Line widths times tolerance by which continued levels may miss before near crossings are looked for."""
 MOST_LOOPING_KNOTS = 1200
 """The same where looping pairs matter: their kinks on symmetry axes never quite vanish from the estimate."""
-CROSSING_STATES = 8
+CROSSING_STATES = 12
 """Levels from which on so many of them may cross that errors are measured on spectra."""
 STEEPEST_SEEN = 3.0
 """Power of the step with which errors measured on spectra are trusted to fall: near crossings leave kinks."""
+UNEVEN = 1.15
+"""Ratio of the density of errors on one ring to that on its neighbour from which drawing rings together is tried."""
 MISTRUST = 2.0
 """Factor on the extrapolated error, unless it falls so fast that a power law is itself pessimistic."""
 LOOPING_MISTRUST = 1.5
@@ -102,14 +105,19 @@ class Knots:
 def settle(system: System, symmetry: Symmetry, request: Request, compare: Compare | None = None) -> Knots:
     """Refine knots for a system until the tolerance is met or `MOST_KNOTS` is reached.
 
-    `compare` is used for systems from `CROSSING_STATES` up.
+    `compare` is used where many levels may cross.  Weak nuclei, whose patterns cost more than levels do,
+    are split off until the levels alone are known well enough.
     """
     if len(system.h0) == 2:  # B^-2 of a doublet holds no harmonics above l = 2
         trial = _Trial(system, symmetry, request, Rings(symmetry.kind, 4, 4))
         if trial.half_error() <= request.tolerance:
             return trial.knots(trial.half_error(), trial.count)
-    compare = compare if len(system.h0) >= CROSSING_STATES else None
-    trial = _Trial(system, symmetry, request, _rings(symmetry.kind, SIZES[0]), compare=compare)
+    several = sum(spin > 0 for spin in system.spins[system.electrons :]) > 1
+    if symmetry.kind != "axial" and (system.weak or len(system.h0) < CROSSING_STATES and not several):
+        compare = None  # sums over two angles cost more than they save
+    # around the axis of an axial system nothing varies; elsewhere patterns have a say in how many azimuths there are
+    split = symmetry.kind != "axial"
+    trial = _Trial(system, symmetry, request, _rings(symmetry.kind, SIZES[0]), compare=compare, split=split)
     spent = trial.count
     harmonics = None
     if trial.half_error() > request.tolerance:
@@ -118,8 +126,13 @@ def settle(system: System, symmetry: Symmetry, request: Request, compare: Compar
         trial, extra = _drawn_together(trial, system, symmetry, request, harmonics)
         spent += extra
     history = [(trial.rings.rings // 2, trial.half_error())]
+    levels_known = False
     for size in [s for s in SIZES if s > trial.rings.rings]:
         error = _extrapolated(history, trial)
+        if error <= request.tolerance and not trial.split:
+            trial, levels_known = trial.whole(), True
+            history[-1] = (trial.rings.rings // 2, trial.half_error())
+            error = _extrapolated(history, trial)
         if error <= request.tolerance:
             break
         # splines converge as they promise: go there at once
@@ -129,9 +142,12 @@ def settle(system: System, symmetry: Symmetry, request: Request, compare: Compar
         finer = _rings(symmetry.kind, size, trial.rings.stretch, harmonics)
         if len(finer.angles()[0]) > (MOST_LOOPING_KNOTS if trial.looping else MOST_KNOTS):
             break
-        trial = _Trial(system, symmetry, request, finer, trial)
+        trial = _Trial(system, symmetry, request, finer, trial, split=levels_known)
         spent += trial.count
         history.append((size // 2, trial.half_error()))
+    if not trial.split:
+        trial = trial.whole()
+        history[-1] = (trial.rings.rings // 2, trial.half_error())
     return trial.knots(_extrapolated(history, trial), spent)
 
 
@@ -182,9 +198,9 @@ def _drawn_together(
     solid = np.bincount(ring, trial.rings.knot_weights())
     # rings of even number are the coarse half's own and carry no error
     density = (np.bincount(ring, trial.error_by_knot()) / solid)[1::2]
-    if density[-1] > 1.3 * density[-2]:
+    if density[-1] > UNEVEN * density[-2]:
         stretches = (1.0, 0.25, 0.08)
-    elif density[0] > 1.3 * density[1]:
+    elif density[0] > UNEVEN * density[1]:
         stretches = (1.0, 4.0, 12.0)
     else:
         return trial, 0
@@ -194,7 +210,7 @@ def _drawn_together(
     stretch = stretches[int(np.argmin(along))]
     if stretch == 1.0:
         return trial, count
-    better = _Trial(system, symmetry, request, _rings(symmetry.kind, 16, stretch, harmonics), trial)
+    better = _Trial(system, symmetry, request, _rings(symmetry.kind, 16, stretch, harmonics), trial, split=False)
     return better, count + better.count
 
 
@@ -226,7 +242,7 @@ def _along_meridian(trial: _Trial, symmetry: Symmetry, stretches: tuple[float, .
     sin = np.sin(theta)
     directions = np.column_stack([sin * math.cos(azimuth), sin * math.sin(azimuth), np.cos(theta)]) @ symmetry.axes.T
     nodes = trial.nodes.moved(directions, np.full(len(trial.nodes.directions), -1))
-    data = nodes.data(trial.data.parents)
+    data = nodes.data(trial.data.parents, split=False)
     rows = np.flatnonzero((count_roots(data) == 1).all(axis=1))
     if not len(rows):
         return [0.0] * len(stretches), len(theta)
@@ -255,9 +271,11 @@ class _Trial:
         rings: Rings,
         before: _Trial | None = None,
         compare: Compare | None = None,
+        split: bool = True,
     ) -> None:
         self.rings, self.request = rings, request
         self.compare = compare if before is None else before.compare
+        self.split = split or not system.weak
         directions = rings.directions(symmetry.axes)
         if before is None:
             self.nodes = FieldNodes(system, request, directions)
@@ -267,8 +285,21 @@ class _Trial:
             self.nodes = before.nodes.moved(directions, before.rings.within(rings))
             self.count = self.nodes.count - before.nodes.count
         self.before = None if before is None else (before.rings.rings, before.single_miss)
+        self._look()
+
+    def whole(self) -> _Trial:
+        """Return the same knots with weak nuclei."""
+        other = copy.copy(self)
+        for name in ("branches", "crossings", "_half_error"):
+            vars(other).pop(name, None)
+        other.split = True
+        other._look()
+        return other
+
+    def _look(self) -> None:
+        """Take the numbers of the nodes."""
         self.single_miss = 0.0
-        self.data = self.nodes.data()
+        self.data = self.nodes.data(split=self.split)
         counts = count_roots(self.data)
         self.single = (counts == 1).all(axis=1) if counts.size else np.zeros(len(counts), dtype=bool)
         self.other = ~self.single & (counts.any(axis=1) | _touches(self.data))

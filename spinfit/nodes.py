@@ -251,7 +251,7 @@ class FieldNodes:
                 array[new], array[known[kept]] = added, old[kept]
                 arrays.append(array)
             other.solved[field] = tuple(arrays)
-        if self.judged is not None:
+        if self.judged is not None and self.characters is None:
             other._judge_again(*self.judged)
         return other
 
@@ -276,13 +276,15 @@ class FieldNodes:
                 depth += 1
         self.leaves.sort()
 
-    def data(self, pairs: Pairs | None = None) -> KnotData:
+    def data(self, pairs: Pairs | None = None, *, split: bool = True) -> KnotData:
         """Return gap, slope and strength of every pair that can be resonant and is strong enough.
 
         Parameters
         ----------
         pairs : (lower, upper), optional
             Take these pairs in place of finding them.
+        split : bool
+            Whether weak nuclei split them.
         """
         fields = sorted({x for leaf in self.leaves for x in leaf})
         index = {x: i for i, x in enumerate(fields)}
@@ -300,7 +302,7 @@ class FieldNodes:
             variance = np.ascontiguousarray(np.stack([self._variance(x, pairs) for x in fields]).transpose(2, 0, 1))
         order = None if self.characters is None else np.stack([self.solved[x][4] for x in fields])
         plain = KnotData(np.array(fields), leaves, pairs, gap, slope, strength, variance, pairs, order=order)
-        if self.system.weak:
+        if self.system.weak and split:
             return self._split(plain)
         if order is not None:  # neighbours by name are none by energy
             return plain
@@ -393,6 +395,8 @@ STEEP = 28.0
 """MHz/mT, the slope of a free spin's level difference."""
 FLATTEST = 5.0
 """How much more closely level differences are followed along the field where they are flat, at the most."""
+
+
 def blur(request: Request) -> float:
     """Return by how much levels may be moved in narrow anticrossings, MHz: few directions have any."""
     return BLUR * STEEP * request.scale * math.sqrt(request.tolerance / 1e-3)
