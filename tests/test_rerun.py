@@ -180,7 +180,14 @@ def test_bad_files_are_one_line_and_exit_2(fitted, tmp_path, capsys):
 def test_what_is_in_an_archive(fitted, tmp_path, capsys):
     assert main(["inspect", str(fitted), "--plot", str(tmp_path / "fit.png")]) == 0
     out = capsys.readouterr().out
-    for text in ("archive of a fit, format 2: j\u00f6b", "trace \u00fc.csv", "repeats the fit", "radical.g", "SHA-256"):
+    for text in (
+        "archive of a fit, format 2: j\u00f6b",
+        "trace \u00fc.csv",
+        "repeats the fit",
+        "radical.g",
+        "SHA-256",
+        "agrees",
+    ):
         assert text in out
     assert (tmp_path / "fit.png").read_bytes().startswith(b"\x89PNG")
     assert main(["inspect", str(fitted), "--json"]) == 0
@@ -192,7 +199,9 @@ def test_what_is_in_an_archive(fitted, tmp_path, capsys):
         {"numba"} if COMPILED else set()
     )
     assert main(["inspect", str(Path(__file__).parent / "archives" / "format_1.h5")]) == 0
-    assert "it cannot be rerun" in capsys.readouterr().out
+    out = capsys.readouterr().out
+    assert "it cannot be rerun" in out
+    assert "has no digest to check" in out
 
 
 def test_line_positions_repeat_too(tmp_path, capsys):

@@ -60,6 +60,7 @@ def fit_text(archive: Archive, file: str) -> str:
     for name, content in archive.files.items():
         shown = name if name.isprintable() else ascii(name)
         item("file", f"{shown}, {len(content)} bytes, SHA-256 {hashlib.sha256(content).hexdigest()[:16]}...")
+    item("content", "as it was written: its digest agrees" if archive.format > 1 else "format 1 has no digest to check")
     item("versions", ", ".join(f"{name} {text}" for name, text in _versions(archive).items()) or "not stated")
     again = f"spinfit rerun {file} repeats the fit" if archive.files else "it holds no input files: it cannot be rerun"
     item("rerun", again)
