@@ -80,7 +80,15 @@ class Page(HTMLParser):
         assert self.policy().startswith("default-src 'none'")
 
 
-def browse(page: Path, *, width: int = 1200, height: int = 1600, act: str = "", picture: Path | None = None) -> str:
+def browse(
+    page: Path,
+    *,
+    width: int = 1200,
+    height: int = 1600,
+    act: str = "",
+    picture: Path | None = None,
+    more: tuple[str, ...] = (),
+) -> str:
     """Open a page in the browser and return its markup once its scripts have run.
 
     The page may neither complain nor be wider than the window.
@@ -91,6 +99,8 @@ def browse(page: Path, *, width: int = 1200, height: int = 1600, act: str = "", 
         Script that plays the reader, run after the page's own; the policy is taken out for it.
     picture : Path, optional
         Where a picture of the window goes.
+    more : tuple of str
+        Options of the browser.
     """
     text = page.read_text(encoding="utf-8")
     measure = "document.body.dataset.wider = document.documentElement.scrollWidth - window.innerWidth;"
@@ -102,9 +112,9 @@ def browse(page: Path, *, width: int = 1200, height: int = 1600, act: str = "", 
         if act:
             shown = Path(folder) / "acted.html"
             shown.write_text(text, encoding="utf-8")
-        command = [BROWSER, *FLAGS, f"--user-data-dir={folder}/profile", f"--window-size={width},{height}"]
+        command = [BROWSER, *FLAGS, *more, f"--user-data-dir={folder}/profile", f"--window-size={width},{height}"]
         what = [f"--screenshot={picture}"] if picture else ["--dump-dom"]
-        done = subprocess.run([*command, *what, shown.as_uri()], capture_output=True, text=True, timeout=60)
+        done = subprocess.run([*command, *what, shown.as_uri()], capture_output=True, text=True, timeout=120)
     complaints = [line for line in done.stderr.splitlines() if "CONSOLE" in line]
     assert complaints == [], complaints
     if act and not picture:

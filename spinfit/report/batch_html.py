@@ -212,14 +212,16 @@ def _certain(sigma: Array) -> NDArray[np.bool_]:
     return ~(sigma > 4 * np.median(known)) if known.size else np.ones(len(sigma), dtype=bool)
 
 
-def _range(values: Array, calm: NDArray[np.bool_]) -> tuple[float, float]:
-    """Return the ends of a trend's axis: all calm values, and others unless they would flatten these."""
+def _range(values: Array, sigma: Array, calm: NDArray[np.bool_]) -> tuple[float, float]:
+    """Return the ends of a trend's axis: calm values with their bars, and others unless they would flatten these."""
     known = np.isfinite(values)
-    base = values[known & calm] if (known & calm).any() else values[known]
-    low, high = float(base.min()), float(base.max())
+    base = known & calm if (known & calm).any() else known
+    bar = np.nan_to_num(sigma[base])
+    ends = np.concatenate([values[base] - bar, values[base] + bar])
+    low, high = float(ends.min()), float(ends.max())
     reach = 1.5 * (high - low)
     near = values[known & (values >= low - reach) & (values <= high + reach)]
-    return span(near, base, room=0.08)
+    return span(near, ends, room=0.05)
 
 
 def _trend(summary: Summary, column: str, against: str, number: int) -> str:
@@ -231,8 +233,8 @@ def _trend(summary: Summary, column: str, against: str, number: int) -> str:
     out = np.array([column in summary.outlying(n) for n in rows]) & ~bad
     kinds = {"bad": bad, "outlier": out, "good": ~bad & ~out}
     sigma = summary.numbers.get(column + UNCERTAINTY, np.full(len(y), math.nan))
-    low, high = _range(y, kinds["good"] & _certain(sigma))
-    panel = Panel(74, 8, 292, 150, span(x, room=0.04), (low, high))
+    low, high = _range(y, sigma, kinds["good"] & _certain(sigma))
+    panel = Panel(96, 8, 272, 150, span(x, room=0.04), (low, high))
     inside = np.clip(y, low, high)
     known = np.isfinite(x)
     for kind, which in kinds.items():
@@ -244,7 +246,7 @@ def _trend(summary: Summary, column: str, against: str, number: int) -> str:
     panel.x_axis("", most=4)
     title = summary.title(against) if against else "row of the table"
     more = f'data-column="{number}"'
-    panel.frame.append(text(74 + 146, 8 + 150 + 36, title, "title below", anchor="middle"))
+    panel.frame.append(text(96 + 136, 8 + 150 + 36, title, "title below", anchor="middle"))
     return f"<figure>{drawing(380, 204, [panel], f'{column} against {title}', more)}</figure>"
 
 
@@ -261,7 +263,10 @@ def _trends(summary: Summary) -> str:
     parts.append('<div class="several">')
     parts += [_trend(summary, name, against, columns.index(name)) for name in shown]
     parts.append("</div>")
-    said = "Bars are one standard uncertainty; points at an upper or lower edge lie beyond it."
+    said = (
+        "Bars are one standard uncertainty, with that of a field axis or frequency that may have moved all traces "
+        "alike; points at an upper or lower edge lie beyond it."
+    )
     if len(moving) > len(shown):
         said += f" The first {len(shown)} of {len(moving)} parameters are drawn."
     return "".join(parts) + paragraph(said, "quiet")

@@ -157,7 +157,7 @@ def profile_drawing(one: Profile) -> str:
     """Return the rise of chi-squared against one parameter, with the levels of 1 and 2 standard deviations."""
     width, height = 370.0, 210.0
     top = max(5.0, min(float(np.nanmax(one.rise)), 12.0)) * 1.06
-    panel = Panel(58, 10, width - 72, height - 62, span(one.values, room=0.04), (0.0, top))
+    panel = Panel(64, 10, width - 78, height - 62, span(one.values, room=0.04), (0.0, top))
     for level in (1.0, 4.0):
         panel.across_line(level, "guide thin")
     panel.line(one.values, one.rise, "fitted")
@@ -173,7 +173,7 @@ def bootstrap_drawing(one: Bootstrap, index: int) -> str:
     width, height = 370.0, 190.0
     counts, edges = np.histogram(values, bins=int(np.clip(np.sqrt(len(values)), 5, 30)))
     name = f"{one.names[index]} / {one.units[index]}" if one.units[index] else one.names[index]
-    panel = Panel(58, 10, width - 72, height - 62, span(edges, room=0.04), (0.0, 1.08 * float(counts.max())))
+    panel = Panel(64, 10, width - 78, height - 62, span(edges, room=0.04), (0.0, 1.08 * float(counts.max())))
     panel.line(np.repeat(edges, 2), np.concatenate(([0], np.repeat(counts, 2), [0])), "part-0")
     for end in one.interval()[index]:
         panel.upright_line(float(end), "guide dashed")
