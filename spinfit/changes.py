@@ -19,12 +19,13 @@ from spinfit.exact import Lines
 from spinfit.hamiltonian import System
 from spinfit.levels import occupation, solve, zero_field_state
 from spinfit.lineshape import FieldGrid
-from spinfit.loops import Landscape, Summed, add_looping, field_step, nodes_of
+from spinfit.loop_sums import Landscape, add_looping, field_step
+from spinfit.loops import Summed, nodes_of
 from spinfit.moves import Move, Moved, Places, symmetrised
 from spinfit.nodes import FLAT
 from spinfit.orientations import Mesh, Rings
 from spinfit.powder import Average
-from spinfit.sheets import HIDDEN, SMEAR_RATIO, Histograms, continued, restored, spacing
+from spinfit.sheets import HIDDEN, SMEAR_RATIO, Histograms, continued, restored, spacing, widest
 from spinfit.symmetry import KINDS
 
 Array = NDArray[np.float64]
@@ -248,7 +249,7 @@ def _transforms(average: Average, coarse: Rings, moved: Moved) -> list[NDArray[n
                 of_sheet = tuple(one[:, k].reshape(count, -1) for one in changes)
                 if branches.variance is None:
                     smear = np.empty(0)
-                    if apart[k].max() > HIDDEN * request.grain.close:
+                    if widest(field[k], mesh) > HIDDEN * request.grain.close:
                         smear = request.grain.smear_for(apart[k]).ravel()
                     into.sheet(*sheet, smear, of_sheet, bool(inverse[row, 0]))
                 else:

@@ -30,7 +30,11 @@ VARIANCE_LEAST, VARIANCE_RATIO = 0.25, 1.16
 MOST_NUMBERS = 100_000_000
 """Numbers in the histograms of one species, 0.8 GB."""
 HIDDEN = 1.05
-"""How many times `Grain.close` the points of a branch may lie apart before they are smeared."""
+"""How many times `Grain.close` the points of a branch may lie apart along either angle before they are smeared.
+
+A product mesh aliases along each angle by itself; a branch on a mesh that was made for a plain sum must get one, since
+its turning points are too coarse for a smear.
+"""
 ONSET = 0.3
 """Square of the distance, in units of `Grain.close`, at which half of the smear is in force."""
 SMEAR_REACH = 4.0
@@ -145,6 +149,12 @@ class Histograms:
             extra = np.zeros((len(ladder) - len(self.widened), self.grid.count))
             self.widened = np.concatenate([self.widened, extra])
 
+    def join(self, other: Histograms) -> None:
+        """Add everything deposited in another set on the same grid and of the same scale."""
+        self.plain += other.plain
+        self.reach_variance(float(other.variances[-1]))
+        self.widened[: len(other.widened)] += other.widened
+
     def _add(self, into: Array, fields: Array, weights: Array) -> None:
         into += self.grid.deposit(fields, weights)
         if self.grid.start < 0:  # the spectrum is even in B
@@ -210,10 +220,12 @@ def deposit_sheets_numpy(
     for k in range(len(x)):
         fields, weights = restored(x[k], y[k], inverse[k : k + 1])
         apart = np.abs(_central(fields, -2, False))
+        widest = apart.max()
         if around != ALONE:
-            apart = np.hypot(apart, _central(fields, -1, around == PERIODIC))
+            across = np.abs(_central(fields, -1, around == PERIODIC))
+            apart, widest = np.hypot(apart, across), max(widest, across.max())
         at, weights = (fields * place[0] + place[1]).ravel(), (weights * shares).ravel()
-        if apart.max() <= HIDDEN * close:
+        if widest <= HIDDEN * close:
             kernels.deposit_numpy(into[:1], np.intp(0), at, weights)
         else:
             kernels.deposit_smeared_numpy(into, at, weights, smear_for(apart, close, smear).ravel(), least, ratio)
@@ -234,18 +246,18 @@ def _compiled_sheets(into, factor, origin, x, y, inverse, shares, around, close,
             before, after = max(i - 1, 0), min(i + 1, thetas - 1)
             for j in range(phis):
                 along = 0.5 * (field[after, j] - field[before, j])
-                if around == ALONE:
-                    square = along * along
-                else:
+                square = along * along
+                widest = max(widest, square)
+                if around != ALONE:
                     left, right = j - 1, j + 1
                     if around == CLOSED:
                         left, right = max(left, 0), min(right, phis - 1)
                     else:
                         left, right = (phis - 1 if j == 0 else left), (0 if j == phis - 1 else right)
                     across = 0.5 * (field[i, right] - field[i, left])
-                    square = along * along + across * across
+                    widest = max(widest, across * across)
+                    square += across * across
                 apart[i, j] = square
-                widest = max(widest, square)
         plain = widest <= (HIDDEN * close) ** 2
         for i in range(thetas):
             for j in range(phis):
@@ -312,6 +324,11 @@ def spacing(values: Array, mesh: Mesh) -> Array:
         return along
     around = np.abs(_central(values, -1, mesh.kind != "octant"))
     return np.hypot(along, around)
+
+
+def widest(values: Array, mesh: Mesh) -> Array:
+    """Return how far apart neighbours along either angle lie in value at the most, shape of the leading axes."""
+    return np.abs(differences(values, mesh)).max(axis=(0, -2, -1))
 
 
 def differences(values: Array, mesh: Mesh) -> Array:
