@@ -139,8 +139,18 @@ def _differs(kept: Kept, own: Sequence[System], widths: Sequence[Broadening | No
     """Whether matrices or broadening of any system differ from those of the spectrum."""
     pairs = zip(own, kept.systems, widths, _broadenings(kept), strict=True)
     return any(
-        not np.array_equal(a.h0, b.h0) or not np.array_equal(a.zeeman, b.zeeman) or _wider(x, y) for a, b, x, y in pairs
+        not np.array_equal(a.h0, b.h0)
+        or not np.array_equal(a.zeeman, b.zeeman)
+        or not np.array_equal(_tensors(a), _tensors(b))
+        or _wider(x, y)
+        for a, b, x, y in pairs
     )
+
+
+def _tensors(system: System) -> Array:
+    """Return the tensors of the weak nuclei, one after the other."""
+    several = [t for one in system.weak for kind in one.kinds for t in (kind.hyperfine, kind.quadrupole)]
+    return np.reshape(several, (-1, 3, 3))
 
 
 def _wider(one: Broadening | None, other: Broadening | None) -> bool:

@@ -103,6 +103,16 @@ class Kept:
     averages: list[Average | Lines]
     totals: list[NDArray[np.complex128]]
 
+    @property
+    def nbytes(self) -> int:
+        """About how much memory it holds."""
+        held = sum(total.nbytes for total in self.totals)
+        for one in self.averages:
+            if isinstance(one, Average):
+                held += one.histograms.plain.nbytes + one.histograms.widened.nbytes
+                held += 0 if isinstance(one.knots, Lines) else 5 * one.knots.data.gap.nbytes
+        return held
+
 
 def simulate(
     species: Sequence[Species] | Species,

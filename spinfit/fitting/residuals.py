@@ -14,7 +14,7 @@ Everything is weighted by the noise of its trace, so that residuals count standa
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Collection, Mapping, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -23,6 +23,7 @@ from scipy import ndimage
 
 from spinfit.errors import InputError
 from spinfit.fitting.baseline import known_columns, penalty_rows, removing
+from spinfit.fitting.columns import STEP, exact_changes, move
 from spinfit.fitting.data import Job, Trace
 from spinfit.fitting.noise import noise_level
 from spinfit.fitting.parameters import Binding, Parameter, expand_vary
@@ -285,17 +286,32 @@ class Problem:
     def jacobian(self, point: Point, view: View, *, central: bool = False) -> Array:
         """Projected Jacobian of the residual, shape (points, k).
 
-        Forward differences lead a descent well; the uncertainties want `central` ones, whose error
-        does not look like a change of width.
+        Columns follow from the engine's own derivatives; where it cannot tell, differences of
+        simulations take their place.  Forward differences lead a descent well; the uncertainties want
+        `central` ones, whose error does not look like a change of width.
         """
-        columns = [
-            self.projected_change(point, view, self._column(point, view, k, central)) for k in range(len(self.names))
-        ]
+        columns = []
+        for k, changes in enumerate(self._followed(point, view, range(len(self.names)))):
+            changes = self._column(point, view, k, central) if changes is None else changes
+            columns.append(self.projected_change(point, view, changes))
         return np.stack(columns, axis=1) if columns else np.zeros((view.points, 0))
 
     def column(self, point: Point, view: View, index: int) -> Array:
-        """One column of the projected Jacobian, by forward differences, shape (points,)."""
-        return self.projected_change(point, view, self._column(point, view, index, False))
+        """One column of the projected Jacobian, shape (points,)."""
+        changes = self._followed(point, view, [index])[index]
+        changes = self._column(point, view, index, False) if changes is None else changes
+        return self.projected_change(point, view, changes)
+
+    def _followed(self, point: Point, view: View, wanted: Collection[int]) -> list[list[Array | None] | None]:
+        """Return d(signal) of every trace for each parameter as the engine knows it, None where it does not."""
+        scales = [self.parameters[name].scale for name in self.names]
+        moved = [
+            move(self.model, point.free, k, self._inside(point.free[k], STEP * scale, k)) if k in wanted else None
+            for k, scale in enumerate(scales)
+        ]
+        fields = [seen.field for seen in view.seen]
+        model = (point.species, point.sample, point.traces)
+        return exact_changes(self.signals, *model, fields, view.stage, moved, scales)
 
     def projected_change(self, point: Point, view: View, changes: Sequence[Array | None]) -> Array:
         """Carry changes of the traces' signals to the change of the projected residual.

@@ -8,15 +8,17 @@ memory is the answer.
 
 from __future__ import annotations
 
+import inspect
 import math
 from collections import OrderedDict
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from spinfit.derivatives import field_slope, phase_slope, signal_changes
 from spinfit.fitting.data import Trace
 from spinfit.species import Species
 from spinfit.sweep import Sample, Sweep
@@ -26,6 +28,8 @@ Simulate = Callable[..., Any]
 
 # A trace of 4000 points takes 32 kB: about 16 MB at most.
 _REMEMBERED = 512
+# Of the numbers from which derivatives start, at most.
+_KEPT_BYTES = 300_000_000
 
 
 @dataclass(frozen=True)
@@ -95,6 +99,23 @@ def broadened(species: Species, broadening: float) -> Species:
     return replace(species, width=replace(width, gaussian=math.hypot(width.gaussian, broadening)))
 
 
+@dataclass(frozen=True, eq=False)
+class Followed:
+    """First-order changes of one species' signal at unit amount.
+
+    Attributes
+    ----------
+    by_model : list of ndarray, shape (n,), or None
+        For each small move of the model; None where only a difference of simulations can tell.
+    by_field, by_phase : ndarray, shape (n,)
+        Derivatives with respect to the true field, 1/mT, and the microwave phase, 1/rad.
+    """
+
+    by_model: list[Array | None]
+    by_field: Array
+    by_phase: Array
+
+
 class Signals:
     """Simulated signals, remembered.
 
@@ -115,10 +136,17 @@ class Signals:
 
     def __init__(self, simulate: Simulate) -> None:
         self._simulate = simulate
+        self._keeps = "keep" in inspect.signature(simulate).parameters
+        self._kept: OrderedDict[Any, Any] = OrderedDict()
         self._memory: OrderedDict[Any, Array] = OrderedDict()
         self.simulations = 0
         self.reports: dict[tuple[str, str], Any] = {}
         self._warnings: dict[tuple[str, str], tuple[Any, ...]] = {}
+
+    @property
+    def simulate(self) -> Simulate:
+        """The engine."""
+        return self._simulate
 
     @property
     def warnings(self) -> tuple[Any, ...]:
@@ -133,14 +161,54 @@ class Signals:
         field : ndarray, shape (n,)
             mT, as in the file: the trace's correction is applied here.
         """
-        # The engine sees spins only; fields that lead to the same spins have the same signal.
-        plain = replace(species, amount=1.0, crystal_field=None)
-        key = (plain, conditions(trace), trace.field_offset, trace.field_scale, sample, field.tobytes(), stage)
+        key = self._key(species, trace, sample, field, stage)
         known = self._memory.get(key)
         if known is not None:
             self._memory.move_to_end(key)
             return known
-        fields = true_field(trace, field)
+        return self._simulated(key, species, trace, sample, field, stage)
+
+    def changes(
+        self,
+        species: Species,
+        trace: Trace,
+        sample: Sample,
+        field: Array,
+        stage: Stage,
+        moved: Sequence[tuple[Species, Sample]],
+    ) -> Followed | None:
+        """First-order changes of one species' signal at unit amount; None where the engine cannot follow any.
+
+        Parameters
+        ----------
+        moved : sequence of (Species, Sample)
+            Models a little different.
+        """
+        if not self._keeps:
+            return None
+        key = self._key(species, trace, sample, field, stage)
+        if key not in self._kept:
+            self._simulated(key, species, trace, sample, field, stage)
+        kept = self._kept.get(key)
+        if kept is None or not kept.totals:
+            return None
+        there = [
+            (broadened(replace(one, amount=1.0, crystal_field=None), stage.broadening), sample_of(where, trace))
+            for one, where in moved
+        ]
+        by_model = [None if one is None else one[0] for one in signal_changes(kept, there)]
+        return Followed(by_model, field_slope(kept)[0], phase_slope(kept)[0])
+
+    def _key(self, species: Species, trace: Trace, sample: Sample, field: Array, stage: Stage) -> Any:
+        # The engine sees spins only; fields that lead to the same spins have the same signal.
+        plain = replace(species, amount=1.0, crystal_field=None)
+        return plain, conditions(trace), trace.field_offset, trace.field_scale, sample, field.tobytes(), stage
+
+    def _simulated(
+        self, key: Any, species: Species, trace: Trace, sample: Sample, field: Array, stage: Stage
+    ) -> Array:
+        """Simulate, and remember the signal and what its derivatives start from."""
+        plain, fields = key[0], true_field(trace, field)
         spectrum = self._simulate(
             (broadened(plain, stage.broadening),),
             sweep_of(trace, fields),
@@ -148,8 +216,11 @@ class Signals:
             tolerance=stage.tolerance,
             fields=fields,
             angle=trace.angle,
+            **({"keep": True} if self._keeps else {}),
         )
         self.simulations += 1
+        if self._keeps:
+            self._keep(key, spectrum.kept)
         signal = np.asarray(spectrum.parts[0], dtype=float)
         signal.setflags(write=False)
         if stage.broadening == 0:
@@ -159,6 +230,14 @@ class Signals:
         while len(self._memory) > _REMEMBERED:
             self._memory.popitem(last=False)
         return signal
+
+    def _keep(self, key: Any, kept: Sequence[Any]) -> None:
+        """Remember what derivatives start from, the last few, within bounds of memory."""
+        if kept and kept[0].nbytes <= _KEPT_BYTES:
+            self._kept[key] = kept[0]
+            self._kept.move_to_end(key)
+        while sum(one.nbytes for one in self._kept.values()) > _KEPT_BYTES:
+            self._kept.popitem(last=False)
 
     def total(self, species: tuple[Species, ...], trace: Trace, sample: Sample, field: Array, stage: Stage) -> Array:
         """Sum of amount times part over the species, shape (n,)."""
