@@ -239,6 +239,7 @@ def test_exponent_or_squeezed_digit():
         (block(["0S2"], last=1.0, n=2), "repeats nothing"),
         (block(["0AZ999999999999"], last=1.0, n=2), "repeats nothing"),
         (block(["0AT000000"], last=1.0, n=2), "repeats an ordinate too often"),
+        (block(["07+.?"], last=1.0, n=2), "is no ordinate"),  # found by the fuzzer: a sign and a point, no digit
         (block([], last=1.0, n=2), "XYDATA is empty"),
         (block(["0 1 2"], last=0.0, n=2), "FIRSTX and LASTX are equal"),
         (block(["0 1 2"], last=float("inf"), n=2), "LASTX"),

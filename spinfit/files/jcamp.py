@@ -136,7 +136,7 @@ def _squeezed(line: str, place: str, file: str, room: int = MAX_POINTS) -> tuple
         token = _TOKEN.match(line, position)
         sqz, dif, dup, sign, missing, digits = token.groups() if token else (None,) * 6
         text = (_SQZ.get(sqz, "") if sqz else _DIF[dif] if dif else _DUP[dup] if dup else sign or "") + (digits or "")
-        if token is None or token.end() == position or (not missing and text in ("", "+", "-", ".")):
+        if token is None or token.end() == position or (not missing and not text.strip("+-.")):
             found = quote(line[position : position + 20])
             raise InputError(f"{found} is no ordinate", "give AFFN, PAC, SQZ, DIF or DUP", place=place, file=file)
         position = token.end()
