@@ -12,7 +12,8 @@ import subprocess
 import sys
 from pathlib import Path
 
-EXTRAS = "test"
+EXTRAS = ("test,fast", "test")
+"""What is installed beside the project; the second where the first is not to be had (no compiled kernels)."""
 
 
 def fingerprint(root: Path, environment: Path) -> str:
@@ -61,7 +62,7 @@ def install(root: Path, python: Path) -> None:
     print("installing spinfit and what it needs", file=sys.stderr, flush=True)
     pip = [python, "-m", "pip"] if has_pip(python) else [sys.executable, "-m", "pip", "--python", python]
     options = ["--quiet", "--disable-pip-version-check", "--no-input"]
-    if not run(*pip, "install", *options, "--editable", f"{root}[{EXTRAS}]"):
+    if not any(run(*pip, "install", *options, "--editable", f"{root}[{extras}]") for extras in EXTRAS):
         sys.exit("pip could not install the project: its message stands above; is the package index reachable?")
 
 
