@@ -215,3 +215,20 @@ def test_the_parent_loads_nothing_that_fits_or_draws():
     code = "import sys, spinfit.batch.run; print({'lmfit', 'matplotlib', 'h5py', 'pandas'} & set(sys.modules))"
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True, timeout=120)
     assert done.stdout.strip() == "set()"
+
+
+def test_archive_and_report_are_made_when_something_changed(here, capsys, in_process):
+    traces = batch_jobs.write_batch(here, 1)
+    batch = ["batch", "--template", "tile.toml", *traces, "--out", "out", "--no-pictures"]
+    assert main(batch) == 0
+    made = {name: (here / "out" / name).stat().st_mtime_ns for name in ("batch.h5", "report.html")}
+    assert "batch.h5" in capsys.readouterr().out
+    assert main(batch) == 0
+    assert {name: (here / "out" / name).stat().st_mtime_ns for name in made} == made
+    assert "batch.h5" not in capsys.readouterr().out
+    (here / "out/report.html").unlink()
+    assert main(batch) == 0
+    assert (here / "out/report.html").exists()
+    batch_jobs.write_trace(here / "traces/tile-00.csv", 5)
+    assert main([*batch, "--no-archive"]) == 0
+    assert not (here / "out/batch.h5").exists()

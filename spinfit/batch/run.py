@@ -19,7 +19,7 @@ from spinfit.batch.journal import Journal, Record
 from spinfit.batch.lock import locked
 from spinfit.batch.records import FAILED, GOOD, LATE, POOR, WORK, NoRoom, call, failed, grace
 from spinfit.batch.table import SUMMARY, write_summary
-from spinfit.batch.tasks import RESERVED, Order, Plan, Task
+from spinfit.batch.tasks import RESERVED, Order, Plan, Task, file_hash
 from spinfit.batch.workers import NoWorkers, Overrun, WorkerDied, Workers, process_pool
 from spinfit.errors import InputError
 from spinfit.files.folders import clear_unfinished, sync_folder
@@ -84,6 +84,8 @@ class Report:
     stopped : str
         Why the batch ended before its end; empty when it did not.
     seconds : float
+    changed : bool
+        Whether anything in the folder is other than before.
     """
 
     summary: Path
@@ -92,6 +94,7 @@ class Report:
     kept: int
     stopped: str
     seconds: float
+    changed: bool = True
 
     @property
     def good(self) -> bool:
@@ -150,9 +153,11 @@ def run_batch(
             batch = _Batch(plan, folder, journal, time_limit, pictures, retry, listener)
             with suppress(_Stop):
                 batch.run(_Supply(executor), in_flight)
+            before = file_hash(str(folder / SUMMARY))
             counts, summary = _table(batch)
     progress = batch.progress
-    return Report(summary, counts, progress.ended, progress.kept, batch.stopped, time.monotonic() - begun)
+    changed = progress.ended > 0 or file_hash(str(summary)) != before
+    return Report(summary, counts, progress.ended, progress.kept, batch.stopped, time.monotonic() - begun, changed)
 
 
 def _make(folder: Path) -> None:

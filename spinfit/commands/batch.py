@@ -44,6 +44,7 @@ def options(parser: argparse.ArgumentParser) -> None:
         "--time-limit", metavar="QUANTITY", help='for each fit, such as "60 s"; its best so far is kept'
     )
     parser.add_argument("--no-pictures", action="store_true", help="leave out fit.png and report.html, which take time")
+    parser.add_argument("--no-archive", action="store_true", help="leave out batch.h5, which holds every outcome again")
     parser.add_argument("--retry", action="store_true", help="repeat what did not come out good though nothing changed")
     parser.add_argument("--parquet", action="store_true", help="write summary.parquet as well (needs pyarrow)")
     parser.add_argument("--quiet", action="store_true", help="say nothing but what went wrong")
@@ -74,7 +75,7 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
     written = [report.summary.name]
     if args.parquet and report.summary.exists():
         written.append(_write_parquet(report.summary))
-    wrong = [] if report.stopped else _more(report.summary.parent, written)
+    wrong = [] if report.stopped else _more(report, written, archive=not args.no_archive)
     _say(args, screen, report, written, wrong)
     return 0 if report.good and not wrong else 1
 
@@ -178,17 +179,22 @@ def _write_parquet(summary: Path) -> str:
     return path.name
 
 
-def _more(folder: Path, written: list[str]) -> list[str]:
-    """Make archive and report; what goes wrong there costs nothing of what is written already."""
+def _more(report: Any, written: list[str], *, archive: bool) -> list[str]:
+    """Make archive and report where they are not up to date; what goes wrong costs nothing of what is written."""
     from spinfit.report.batch_archive import write_batch_archive
     from spinfit.report.batch_html import write_batch_report
 
-    wrong = []
-    for name, make in (("batch.h5", write_batch_archive), ("report.html", write_batch_report)):
+    folder, wrong = report.summary.parent, []
+    makers = {"batch.h5": write_batch_archive} if archive else {}
+    for name, make in (makers | {"report.html": write_batch_report}).items():
+        if not report.changed and (folder / name).exists():
+            continue
         try:
             written.append(make(folder).name)
         except (InputError, OSError, MemoryError) as error:
             wrong.append(f"{name} was not written: {error}")
+    if not archive and report.changed:
+        (folder / "batch.h5").unlink(missing_ok=True)  # it would tell of another batch
     return wrong
 
 
