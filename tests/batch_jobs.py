@@ -20,7 +20,7 @@ from typing import Any
 import numpy as np
 from scipy import constants
 
-from spinfit.batch.child import stop_after
+from spinfit.batch.child import allow, note, stop_after
 
 ROOT = Path(__file__).resolve().parents[1]
 MUB = constants.physical_constants["Bohr magneton"][0]
@@ -189,8 +189,7 @@ def sleeps(seconds: float) -> str:
 
 def hangs_after(allowed: float) -> None:
     """Hang where no Python signal is heard: all signals blocked, as in a C library that never returns."""
-    from spinfit.batch.child import allow
-
+    note("so far")
     allow(allowed)
     signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT, signal.SIGTERM})
     time.sleep(600)

@@ -242,12 +242,13 @@ def test_a_given_pool_that_breaks_ends_the_batch(here, monkeypatch):
 
 def test_what_overran_is_told_from_what_could_not_be_read(here, monkeypatch):
     fake = Fake(monkeypatch)
-    fake.trouble = {"tile_00": [Overrun(records.READING)], "tile_01": [Overrun(records.grace(60.0))]}
+    fake.trouble = {"tile_00": [Overrun(records.READING)], "tile_01": [Overrun(records.grace(60.0), {"r.g": 2.5})]}
     report = run(plan(3), time_limit=60.0)
     assert report.counts == {"failed": 1, "time limit": 1, "good": 1}
     rows = rows_of(here / "out")
     assert rows[0]["reason"] == "its files could not be read in 120 s"
     assert rows[1]["reason"] == "did not stop at 60 s and was ended"
+    assert (rows[1]["r.g"], rows[1]["r.g_uncertainty"]) == ("2.5", "")
     fake.done.clear()
     run(plan(3), time_limit=60.0)
     assert fake.done == []

@@ -36,6 +36,12 @@ def allow(seconds: float | None) -> None:
         _line.send(("allow", seconds))
 
 
+def note(content: Any) -> None:
+    """Say how far the call is, which `spinfit.batch.workers.Overrun` then holds if its process has to be killed."""
+    if _line is not None:
+        _line.send(("note", content))
+
+
 @contextmanager
 def stop_after(seconds: float | None) -> Iterator[None]:
     """Raise KeyboardInterrupt in the block when it takes longer; only in a process of `Workers`."""

@@ -26,7 +26,8 @@ class NoRoom(Exception):
 
 def grace(limit: float) -> float:
     """Return the seconds after which a fit that does not stop by itself at its time limit is killed."""
-    return limit + max(5.0, 0.5 * limit)
+    # Large spins take some seconds to evaluate their best values once more, on a busy machine some more.
+    return limit + max(20.0, 0.5 * limit)
 
 
 def failed(name: str, free: Mapping[str, str], digest: str, kind: str, reason: str) -> dict[str, Any]:
@@ -42,6 +43,11 @@ def failed(name: str, free: Mapping[str, str], digest: str, kind: str, reason: s
         "reason": " ".join(reason.split())[:500],
         "free": dict(free),
     }
+
+
+def late(limit: float, values: Mapping[str, float]) -> dict[str, Any]:
+    """Return what makes a failed record one of a fit that was stopped at its time limit, with its best values."""
+    return {"status": LATE, "limit": limit, "parameters": {name: [v, None, ""] for name, v in values.items()}}
 
 
 def call(order: Order) -> dict[str, Any]:

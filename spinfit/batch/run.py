@@ -17,7 +17,7 @@ from typing import Any
 
 from spinfit.batch.journal import Journal, Record
 from spinfit.batch.lock import locked
-from spinfit.batch.records import FAILED, GOOD, LATE, POOR, WORK, NoRoom, call, failed, grace
+from spinfit.batch.records import FAILED, GOOD, LATE, POOR, WORK, NoRoom, call, failed, grace, late
 from spinfit.batch.table import SUMMARY, write_summary
 from spinfit.batch.tasks import RESERVED, Order, Plan, Task, file_hash
 from spinfit.batch.workers import NoWorkers, Overrun, WorkerDied, Workers, process_pool
@@ -337,7 +337,7 @@ class _Batch:
             except NoRoom as error:
                 no_room = str(error)
             except Overrun as error:
-                records.append(self._overrun(order, float(error.args[0])))
+                records.append(self._overrun(order, *error.args))
             except CancelledError:
                 raise self._stop("the executor dropped its work") from None
             except NoWorkers as error:
@@ -354,12 +354,12 @@ class _Batch:
             raise self._stop(f"{self.folder} cannot be written to ({no_room})")
         return broken
 
-    def _overrun(self, order: Order, seconds: float) -> Record:
+    def _overrun(self, order: Order, seconds: float, best: Mapping[str, float] | None = None) -> Record:
         """Return the record of a fit whose process had to be killed."""
         limit = order.time_limit
         if limit is not None and seconds == grace(limit):
             record = failed(order.name, order.free, order.hash, "time", f"did not stop at {limit:g} s and was ended")
-            return record | {"status": LATE, "limit": limit, "seconds": seconds}
+            return record | late(limit, best or {}) | {"seconds": seconds}
         reason = f"its files could not be read in {seconds:g} s"
         return failed(order.name, order.free, order.hash, "input", reason) | {"seconds": seconds}
 

@@ -14,8 +14,8 @@ from pathlib import Path
 from typing import Any
 
 from spinfit import __version__
-from spinfit.batch.child import allow, stop_after
-from spinfit.batch.records import GOOD, LATE, POOR, READING, NoRoom, failed, grace
+from spinfit.batch.child import allow, note, stop_after
+from spinfit.batch.records import GOOD, LATE, POOR, READING, NoRoom, failed, grace, late
 from spinfit.batch.tasks import Order
 from spinfit.errors import InputError
 from spinfit.files.folders import remove_files, write_folder
@@ -28,6 +28,8 @@ from spinfit.fitting.outcome import Outcome
 from spinfit.report.outcome_files import DRAWN, NUMBERS, outcome_files
 from spinfit.report.outcome_json import clean
 
+NOTE_EVERY = 1.0
+"""Seconds between notes of the best values so far."""
 JOB = "job.toml"
 OWN = (*NUMBERS, *DRAWN, JOB)
 """Every file that a fit may leave in its folder."""
@@ -61,12 +63,18 @@ class _Best:
     """The best values so far, and the end of the time where nothing else can end it."""
 
     def __init__(self, limit: float | None) -> None:
+        self.limit = limit
         self.end = math.inf if limit is None else time.monotonic() + limit
+        self.next = 0.0
         self.values: dict[str, float] = {}
 
     def __call__(self, number: int, chi2: float, values: Mapping[str, float]) -> None:
         self.values = dict(values)
-        if time.monotonic() > self.end:
+        now = time.monotonic()
+        if self.limit is not None and now >= self.next:  # for when the process has to be killed
+            self.next = now + NOTE_EVERY
+            note({name: float(value) for name, value in values.items()})
+        if now > self.end:
             raise KeyboardInterrupt
 
 
@@ -113,9 +121,8 @@ def _done(order: Order) -> dict[str, Any]:
     except MemoryError:
         return lost("memory", "not enough memory")
     except KeyboardInterrupt:
-        record = lost("time", f"stopped after {order.time_limit:g} s")
-        values = {name: [value, None, ""] for name, value in best.values.items()}
-        return record | {"status": LATE, "limit": order.time_limit, "parameters": values}
+        limit = order.time_limit or 0.0
+        return lost("time", f"stopped after {limit:g} s") | late(limit, best.values)
     except Exception as error:
         return lost("fault", f"a fault of spinfit: {type(error).__name__}: {error}")
     try:

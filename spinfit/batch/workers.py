@@ -41,7 +41,10 @@ class NoWorkers(BrokenExecutor):
 
 
 class Overrun(Exception):
-    """The call took longer than it had asked for and its process was killed; the argument is those seconds."""
+    """The call took longer than it had asked for and its process was killed.
+
+    The arguments are those seconds, and what the call last said by `spinfit.batch.child.note`, None without.
+    """
 
 
 class _Call:
@@ -73,6 +76,7 @@ class _Process:
         self.call: _Call | None = None
         self.deadline: float | None = None
         self.allowed = 0.0
+        self.note: Any = None
 
     def end(self, *, patience: float = 0.0) -> int:
         """Close the line, wait a little for the process to leave, then kill it; return its exit code."""
@@ -191,7 +195,7 @@ class Workers(Executor):
                 self._hear(lines[line])  # type: ignore[index]
         now = time.monotonic()
         for one in [one for one in self._processes if one.deadline is not None and one.deadline <= now]:
-            self._lose(one, Overrun(one.allowed))
+            self._lose(one, Overrun(one.allowed, one.note))
         return True
 
     def _patience(self) -> float | None:
@@ -217,7 +221,7 @@ class Workers(Executor):
             starting += 1
 
     def _give(self, one: _Process, call: _Call) -> None:
-        one.call = call
+        one.call, one.note = call, None
         try:
             one.connection.send(call.message)
         except ConnectionError:
@@ -237,6 +241,8 @@ class Workers(Executor):
             one.ready, self._false_starts = True, 0
         elif kind == "complaint":
             self._complaint = str(content)
+        elif kind == "note":
+            one.note = content
         elif kind == "allow":
             one.allowed = content or 0.0
             one.deadline = None if content is None else time.monotonic() + content
