@@ -6,6 +6,7 @@ import errno
 import json
 import os
 import shutil
+import sys
 from concurrent.futures import ThreadPoolExecutor
 from concurrent.futures.process import BrokenProcessPool
 from pathlib import Path
@@ -358,6 +359,18 @@ def test_nothing_of_a_version_that_differs(here):
     record = work.do(order)
     assert record["status"] == "failed"
     assert "not 9.9" in record["reason"]
+
+
+@pytest.mark.skipif(sys.platform != "linux", reason="names that are not UTF-8")
+def test_a_name_that_is_not_utf8_costs_itself(here):
+    traces = write_batch(here, 2)
+    odd = os.fsdecode(b"traces/tile-\xff.csv")
+    os.rename(traces[1], odd)
+    report = run(template_plan(Template("tile.toml"), [traces[0], odd]))
+    assert report.counts["good"] >= 1
+    assert [row["trace"] for row in rows_of(here / "out")] == ["tile_00", "tile__"]
+    with pytest.raises(InputError, match="cannot be the name of a folder"):
+        jobs_plan([os.fsdecode(b"tile-\xff.toml")])
 
 
 def test_a_file_in_the_folders_place(here):

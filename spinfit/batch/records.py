@@ -40,9 +40,14 @@ def failed(name: str, free: Mapping[str, str], digest: str, kind: str, reason: s
         "hash": digest,
         "status": FAILED,
         "kind": kind,
-        "reason": " ".join(reason.split())[:500],
+        "reason": _writable(reason)[:500],
         "free": dict(free),
     }
+
+
+def _writable(text: str) -> str:
+    """Return a text on one line as UTF-8 can hold it: names of files need not be UTF-8."""
+    return " ".join(text.encode("utf-8", "replace").decode("utf-8").split())
 
 
 def late(limit: float, values: Mapping[str, float]) -> dict[str, Any]:
