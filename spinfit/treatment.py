@@ -128,6 +128,11 @@ def _with_strongest_exact(nuclei: tuple[Nucleus, ...]) -> tuple[Nucleus, ...]:
     return tuple(replace(one, treat="exact") if i == k else one for i, one in enumerate(nuclei))
 
 
+def whole_states(species: Species) -> int:
+    """Return the size of the largest matrix with every nucleus in it, building none."""
+    return _states(replace(species, nuclei=tuple(replace(one, treat="exact") for one in species.nuclei)))
+
+
 def _states(species: Species) -> int:
     """Return the size of the largest matrix, building none."""
     n = 1

@@ -79,12 +79,35 @@ def _unit_vectors(angles: Any) -> Any:
     return np.stack([np.sin(theta) * np.cos(phi), np.sin(theta) * np.sin(phi), np.cos(theta)], axis=1)
 
 
-def rows_of(model: Any, angles: Any, microwave: Any) -> list[dict[str, Any]]:
+MOST_STATES = 64
+"""Levels up to which every nucleus is in the matrices: more make thousands of lines a direction."""
+
+
+def _systems(one: Any, model: Any, screen: Screen) -> Any:
+    """Return the matrices of a species; those of many nuclei follow their treatment, which is said."""
+    from spinfit.hamiltonian import systems
+    from spinfit.isotropic import isotropic
+    from spinfit.treatment import decided, whole_states
+
+    one = isotropic(one) if model.sample.form == "solution" else one
+    if whole_states(one) <= MOST_STATES:
+        return systems(one)
+    sweep = model.sweep
+    scale = max(one.width.gaussian, one.width.lorentzian) or 1.0
+    several = systems(
+        decided(one, sweep.frequency, sweep.field, scale, 1e-2, sweep.microwave).species, perturb=True
+    )
+    weak = dict.fromkeys(f"{nucleus.count} {nucleus.name}" for nucleus in several[0].weak)
+    if weak:
+        text = f"{one.name}: {', '.join(weak)} split every line further; given are the lines without them"
+        screen.aside(f'{text} (treat = "exact" makes lines of their own)')
+    return several
+
+
+def rows_of(model: Any, angles: Any, microwave: Any, screen: Screen) -> list[dict[str, Any]]:
     """Return one row a resonance, by species, system, direction and field."""
     import numpy as np
 
-    from spinfit.hamiltonian import systems
-    from spinfit.isotropic import isotropic
     from spinfit.resonance import find
 
     sweep = model.sweep
@@ -92,7 +115,7 @@ def rows_of(model: Any, angles: Any, microwave: Any) -> list[dict[str, Any]]:
     degrees = np.rad2deg(angles)
     rows = []
     for one in model.species:
-        several = systems(isotropic(one) if model.sample.form == "solution" else one)
+        several = _systems(one, model, screen)
         for system in several:
             got = find(
                 system,
@@ -127,7 +150,7 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
     model, measured = _read(args, screen)
     angles, microwave = _directions(args, model)
     try:
-        rows = rows_of(model, angles, microwave)
+        rows = rows_of(model, angles, microwave, screen)
         _draw(args, model, at, measured)
     except InputError as error:
         raise error.at(file=args.model) from error
