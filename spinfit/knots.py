@@ -113,8 +113,9 @@ def settle(system: System, symmetry: Symmetry, request: Request, compare: Compar
         if trial.half_error() <= request.tolerance:
             return trial.knots(trial.half_error(), trial.count)
     several = sum(spin > 0 for spin in system.spins[system.electrons :]) > 1
+    kept = compare
     if symmetry.kind != "axial" and (system.weak or len(system.h0) < CROSSING_STATES and not several):
-        compare = None  # sums over two angles cost more than they save
+        compare = None  # sums over two angles cost more than they save, until patterns are in
     # around the axis of an axial system nothing varies; elsewhere patterns have a say in how many azimuths there are
     split = symmetry.kind != "axial"
     trial = _Trial(system, symmetry, request, _rings(symmetry.kind, SIZES[0]), compare=compare, split=split)
@@ -130,7 +131,7 @@ def settle(system: System, symmetry: Symmetry, request: Request, compare: Compar
     for size in [s for s in SIZES if s > trial.rings.rings]:
         error = _extrapolated(history, trial)
         if error <= request.tolerance and not trial.split:
-            trial, levels_known = trial.whole(), True
+            trial, levels_known = trial.whole(kept), True
             history[-1] = (trial.rings.rings // 2, trial.half_error())
             error = _extrapolated(history, trial)
         if error <= request.tolerance:
@@ -146,7 +147,7 @@ def settle(system: System, symmetry: Symmetry, request: Request, compare: Compar
         spent += trial.count
         history.append((size // 2, trial.half_error()))
     if not trial.split:
-        trial = trial.whole()
+        trial = trial.whole(kept)
         history[-1] = (trial.rings.rings // 2, trial.half_error())
     return trial.knots(_extrapolated(history, trial), spent)
 
@@ -287,9 +288,10 @@ class _Trial:
         self.before = None if before is None else (before.rings.rings, before.single_miss)
         self._look()
 
-    def whole(self) -> _Trial:
-        """Return the same knots with weak nuclei."""
+    def whole(self, compare: Compare | None) -> _Trial:
+        """Return the same knots with weak nuclei, judged by spectra."""
         other = copy.copy(self)
+        other.compare = compare
         for name in ("branches", "crossings", "_half_error"):
             vars(other).pop(name, None)
         other.split = True

@@ -266,18 +266,21 @@ def _deposited(offset: Array, share: Array, step: float, size: int) -> Array:
     base = np.arange(m * p).reshape(m, p, 1) * size
     first = first.astype(np.intp)
     # sinc(u - t) = (-1)^t sin(pi u) / (pi (u - t)), and the Gaussian's mixed term is a power
-    taps = range(1 - TAPS, TAPS + 1)
     u = np.clip(u, 1e-9, 1 - 1e-9)
     wave, power = np.sin(np.pi * u), np.exp(u / TAPER**2)
     damped = wave * power ** (1 - TAPS)
     kernel = []
-    for t in taps:
+    for t in range(1 - TAPS, TAPS + 1):
         kernel.append(damped / (u - t) * ((-1) ** t * math.exp(-0.5 * (t / TAPER) ** 2)))
         damped = damped * power
-    norm = sum(kernel)
-    scaled = share / norm
-    places = np.stack([base + (first + t) % size for t in taps])
-    flat = np.bincount(places.ravel(), np.stack([scaled * k for k in kernel]).ravel(), minlength=m * p * size)
+    scaled = share / sum(kernel)
+    flat = np.zeros(m * p * size)
+    # tap by tap: together they would not fit into any cache
+    place = (first + (1 - TAPS)) % size
+    for one in kernel:
+        flat += np.bincount((base + place).ravel(), (scaled * one).ravel(), minlength=flat.size)
+        place += 1
+        place[place == size] = 0
     return flat.reshape(m, p, size)
 
 

@@ -203,6 +203,20 @@ def test_lines_with_several_species_name_them_and_go_to_a_file(here, run):
     assert [row["species"] for row in rows] == ["radical", "other"]
 
 
+def test_lines_of_many_nuclei_are_those_of_the_strong_ones(here, capsys):
+    strong = '[[species.nucleus]]\nisotope = "63Cu"\nA = "-60, -60, -540 MHz"\n'
+    weak = '[[species.nucleus]]\nisotope = "1H"\nA = "8 MHz"\ncount = 19\n'
+    found, said = [], []
+    for name, text in (("a.toml", MODEL + strong), ("b.toml", MODEL + strong + weak)):
+        (here / name).write_text(text)
+        assert main(["lines", name, "--direction", "0, 0 deg", "--json"]) == 0
+        out, err = capsys.readouterr()
+        found.append(json.loads(out))
+        said.append(err)
+    assert found[0] == found[1]
+    assert said[0] == "" and "19 1H split every line further" in said[1]
+
+
 def test_lines_refuses(here, run):
     assert "--direction" in run("lines", "m.toml", "--direction", "30 deg", code=2)
     assert "nowhere.toml" in run("lines", "nowhere.toml", code=2)
