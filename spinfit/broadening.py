@@ -1,4 +1,4 @@
-"""Widths that differ from resonance to resonance: spreads of g, D, E, A and hidden hyperfine.
+"""Widths that differ from resonance to resonance: spreads of g, D, E, A and orientation, hidden hyperfine.
 
 A Gaussian distribution of a parameter p with width w shifts a transition's frequency by
 (d nu/dp) w to first order, so it broadens it to that width; independent parameters add in
@@ -15,6 +15,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.linalg import block_diag
 
 from spinfit.hamiltonian import System, systems
 from spinfit.species import Species, principal, tilt_matrix
@@ -90,9 +91,12 @@ def broadening(species: Species) -> tuple[Broadening, ...] | None:
     """Return the broadening of each system of a species, None where every resonance is alike."""
     hidden = principal(species.width.hidden_hyperfine)
     changes, covariance = _changes(species)
-    if not changes and not hidden.any():
+    tilt = species.spread.tilt
+    if not changes and not hidden.any() and not tilt:
         return None
     base = systems(species, perturb=True)
+    if tilt:
+        covariance = block_diag(covariance, np.eye(3))
     moved = [systems(change, perturb=True) for change in changes]
     spin = species.spins[0]
     out = []
@@ -100,8 +104,20 @@ def broadening(species: Species) -> tuple[Broadening, ...] | None:
         n = len(system.h0)
         h0 = np.array([other[number].h0 - system.h0 for other in moved]).reshape(len(moved), n, n)
         zeeman = np.array([other[number].zeeman - system.zeeman for other in moved]).reshape(len(moved), 3, n, n)
+        if tilt:
+            h0 = np.concatenate((h0, np.zeros((3, n, n))))
+            zeeman = np.concatenate((zeeman, tilt * _turned(system.zeeman)))
         out.append(Broadening(h0, zeeman, covariance, hidden, principal(spin.g), tilt_matrix(spin.g_tilt)))
     return tuple(out)
+
+
+def _turned(zeeman: NDArray[np.complex128]) -> NDArray[np.complex128]:
+    """Change of dH/dB when the sample is turned about x, y or z, for an angle of 1 rad, shape (3, 3, n, n).
+
+    Only how the field stands to the sample counts, and n + phi a x n in place of n is linear in n.
+    """
+    turns = np.array([np.cross(axis, np.eye(3)) for axis in np.eye(3)])
+    return np.einsum("aji,ikl->ajkl", turns, zeeman)
 
 
 def _changes(species: Species) -> tuple[list[Species], Array]:

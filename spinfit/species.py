@@ -219,7 +219,10 @@ class Width:
 
 @dataclass(frozen=True)
 class Spread:
-    """Gaussian distributions across the sample, FWHM: g dimensionless; D, E, A in MHz."""
+    """Gaussian distributions across the sample, FWHM: g dimensionless; D, E, A in MHz; tilt in rad.
+
+    `tilt` is that of a crystal's mosaic: each piece is turned by a little about each of three axes.
+    """
 
     g: tuple[float, ...] = (0.0,)
     D: float = 0.0
@@ -227,11 +230,12 @@ class Spread:
     A: tuple[float, ...] = (0.0,)
     correlation_g_A: float = 0.0
     correlation_D_E: float = 0.0
+    tilt: float = 0.0
 
     def __post_init__(self) -> None:
         _tensor(self.g, "spread.g")
         _tensor(self.A, "spread.A")
-        if min(self.g + self.A + (self.D, self.E)) < 0:
+        if min(self.g + self.A + (self.D, self.E, self.tilt)) < 0:
             raise InputError("a negative spread", "write spreads that are not negative", place="spread")
         for key in ("correlation_g_A", "correlation_D_E"):
             if not -1 <= getattr(self, key) <= 1:
@@ -242,7 +246,7 @@ class Spread:
     @property
     def any(self) -> bool:
         """Whether anything is spread at all."""
-        return max(self.g + self.A + (self.D, self.E)) > 0
+        return max(self.g + self.A + (self.D, self.E, self.tilt)) > 0
 
 
 @dataclass(frozen=True)

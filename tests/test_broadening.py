@@ -6,10 +6,12 @@ Transition Ions, 1970, on broadening by distributed parameters; from memory).
 """
 
 from dataclasses import replace
+from itertools import product
 
 import numpy as np
 import pytest
 from scipy import constants
+from scipy.spatial.transform import Rotation
 
 from spinfit.lineshape import GAUSSIAN_FWHM
 from spinfit.species import Nucleus, Species, Spin, Spread, Width
@@ -127,3 +129,34 @@ def test_a_spread_of_zero_changes_nothing() -> None:
     sweep = Sweep(9500.0, (290.0, 350.0), 300)
     same = simulate(replace(species, spread=Spread(g=(0.0, 0.0, 0.0))), sweep).signal
     assert np.array_equal(same, simulate(species, sweep).signal)
+
+
+@pytest.mark.parametrize("angle", [25.0, 60.0])
+def test_spread_of_tilt_is_the_average_over_turned_crystals(angle: float) -> None:
+    """Small turns about three axes: a line moves by its first derivative, so that the average is a wider line."""
+    spin = Spin(S=1.5, g=(1.98, 2.0, 2.04), D=2500.0, E=300.0)
+    sweep = Sweep(9500.0, (100.0, 520.0), 2400)
+    sample = Sample(form="crystal", start=(0.2, 0.1, 1.0), axis=(0.0, 1.0, 0.0), angles=(np.radians(angle),))
+    narrow = Species("s", (spin,), width=Width(gaussian=2.5))
+    fwhm = np.radians(0.6)
+    got = simulate(replace(narrow, spread=Spread(tilt=float(fwhm))), sweep, sample)
+    # 7 nodes of Gauss-Hermite about each axis; turning the crystal or both fields the other way round is the same.
+    x, weight = np.polynomial.hermite_e.hermegauss(7)
+    sigma = fwhm / FWHM_PER_SIGMA
+    total = 0.0
+    for (a, p), (b, q), (c, r) in product(zip(x, weight, strict=True), repeat=3):
+        turn = Rotation.from_rotvec(sigma * np.array([a, b, c]))
+        start, axis = (tuple(map(float, turn.apply(v))) for v in (sample.start, sample.axis))
+        turned = replace(sample, start=start, axis=axis)
+        total = total + p * q * r * simulate(narrow, sweep, turned).signal
+    plain = simulate(narrow, sweep, sample).signal
+    expected = total / weight.sum() ** 3
+    assert far(got.signal, expected) < 2e-2
+    assert far(plain, expected) > 0.1
+
+
+def test_an_s_half_line_of_isotropic_g_does_not_feel_tilt() -> None:
+    sweep, sample = Sweep(9500.0, (330.0, 350.0), 400), Sample(form="crystal")
+    narrow = Species("s", (Spin(g=(2.0,)),), width=Width(gaussian=0.6))
+    turned = replace(narrow, spread=Spread(tilt=0.02))
+    assert far(simulate(turned, sweep, sample).signal, simulate(narrow, sweep, sample).signal) < 1e-3

@@ -29,7 +29,7 @@ SPECIES_KEYS = (
 NUCLEUS_KEYS = ("isotope", "element", "name", "A", "A_tilt", "P", "P_tilt", "count", "couples_to", "treat")
 EXCHANGE_KEYS = ("between", "J", "dipolar", "tilt", "antisymmetric")
 WIDTH_KEYS = ("gaussian", "lorentzian", "hidden_hyperfine", "a", "b", "c")
-SPREAD_KEYS = ("g", "D", "E", "A", "correlation")
+SPREAD_KEYS = ("g", "D", "E", "A", "tilt", "correlation")
 CORRELATION_KEYS = ("g_A", "D_E")
 TREATMENTS = ("auto", "exact", "first order", "second order")
 
@@ -82,7 +82,7 @@ def _species(table: Table, name: str, form: str, auto: bool) -> Species:
     amount = table.number("amount")
     if amount is not None and amount < 0:
         raise table.error("amount", f"{amount:g}", "an amount is not negative")
-    spread = _spread(table, spins, nuclei)
+    spread = _spread(table, spins, nuclei, form)
     return _build(
         table,
         Species,
@@ -433,7 +433,7 @@ def _width(table: Table, spread: Spread, form: str, auto: bool) -> Width:
     return width
 
 
-def _spread(table: Table, spins: Sequence[Spin], nuclei: Sequence[Nucleus]) -> Spread:
+def _spread(table: Table, spins: Sequence[Spin], nuclei: Sequence[Nucleus], form: str) -> Spread:
     data = table.table("spread")
     if data is None:
         return Spread()
@@ -443,7 +443,10 @@ def _spread(table: Table, spins: Sequence[Spin], nuclei: Sequence[Nucleus]) -> S
         "D": inner.quantity("D", "energy"),
         "E": inner.quantity("E", "energy"),
         "A": inner.quantities("A", "energy", TENSOR),
+        "tilt": inner.quantity("tilt", "angle"),
     }
+    if values["tilt"] and form != "crystal":
+        raise inner.error("tilt", f"is the mosaic of a crystal and the sample is a {form}", "take it out")
     for key, value in values.items():
         smallest = min(value) if isinstance(value, tuple) else value
         if smallest is not None and smallest < 0:

@@ -160,6 +160,8 @@ def _spread_slots(name: str, path: Path, species: Species) -> Iterator[Slot]:
     spread, where = species.spread, (*path, "spread")
     more: dict[str, Any] = {"limits": NOT_NEGATIVE, "groups": (f"{name}.spread",), "relative": 0.1}
     yield from _tensor(f"{name}.spread.g", (*where, "g"), spread.g, "number", 0.002, **more)
+    if spread.tilt > 0:
+        yield Slot(f"{name}.spread.tilt", (*where, "tilt"), "angle", math.radians(0.2), **more)
     if any(spin.S > 0.5 for spin in species.spins):
         d, e = f"{name}.spread.D", f"{name}.spread.E"
         yield Slot(d, (*where, "D"), "energy", 30.0, like=(e, f"{name}.D"), **more)
