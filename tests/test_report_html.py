@@ -7,8 +7,11 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
+from hypothesis import Phase, given, settings
+from hypothesis import strategies as st
 from outcomes import curves, outcome
 from pages import BROWSER, Page, browse
+from scipy import constants
 
 from spinfit.fitting.data import Job, Trace
 from spinfit.fitting.outcome import Note, PositionTable, Quality, Value
@@ -19,6 +22,7 @@ from spinfit.report.svg import Panel, span, thinned, tick_texts, ticks
 from spinfit.species import Nucleus, Species, Spin, Width
 from spinfit.sweep import Sample
 
+MU_B = constants.physical_constants["Bohr magneton in Hz/T"][0] * 1e-9  # MHz/mT
 EVIL = "</style></script><script>alert(1)</script>\"'&<img src=x onerror=alert(1)>"
 needs_browser = pytest.mark.skipif(BROWSER is None, reason="no chromium")
 
@@ -118,6 +122,45 @@ def test_texts_from_users_are_escaped():
     assert page.seen.count("script") == 2
     assert "img" not in page.seen
     assert page.text.count("alert(1)") >= 10
+
+
+texts = st.text(max_size=30) | st.sampled_from([EVIL, "<!--", "]]>", "&amp;", "\x00", "\u2028", "a" * 90])
+floats = st.floats(-1e30, 1e30) | st.sampled_from([float("nan"), float("inf"), float("-inf"), 0.0])
+numbers = st.none() | floats
+
+
+@settings(derandomize=True, deadline=None, max_examples=40, phases=[Phase.explicit, Phase.generate])
+@given(st.data())
+def test_no_text_and_no_number_breaks_a_page(data):
+    """Whatever names, units, warnings and values are, the page is whole and runs nothing of theirs."""
+
+    def values(count):
+        made = [
+            Value(data.draw(floats), *(data.draw(numbers) for _ in range(3)), unit=data.draw(texts), varied=True,
+                  start=data.draw(numbers))
+            for _ in range(count)
+        ]  # fmt: skip
+        return dict(zip(data.draw(st.lists(texts, min_size=count, max_size=count, unique=True)), made, strict=True))
+
+    parameters = values(3)
+    base = curves(data.draw(texts), points=40)
+    bent = data.draw(st.lists(floats, min_size=40, max_size=40))
+    found = outcome(
+        replace(base, measured=np.array(bent), noise=data.draw(floats), parts={data.draw(texts): np.array(bent)}),
+        name=data.draw(texts),
+        parameters=parameters,
+        fractions=values(2),
+        correlation_names=tuple(parameters)[:2],
+        correlation_matrix=np.array(data.draw(st.lists(floats, min_size=4, max_size=4))).reshape(2, 2),
+        warnings=tuple(Note(data.draw(texts), data.draw(texts)) for _ in range(2)),
+        budget={name: {"noise": data.draw(floats)} for name in parameters},
+        provenance={"job": data.draw(texts)},
+    )
+    page = Page(report_text(found))
+    page.check()
+    assert page.seen.count("script") == 2
+    assert "NaN" not in page.source
+    assert "inf" not in re.sub(r"[^\d ML.\-a-z]", "", "".join(v for k, v in page.attributes if k == "d"))
 
 
 def test_curves_hold_what_was_found():
@@ -224,6 +267,7 @@ const point = (type, across) => drawing.dispatchEvent(new PointerEvent(type, {
 const texts = (axis) => [...drawing.querySelectorAll(`g.ticks[data-axis="${axis}"] text`)].map((t) => t.textContent);
 const below = () => texts("x").join(" "), above = () => texts("top").join(" ");
 document.body.dataset.before = below();
+point("pointermove", 0.75); document.body.dataset.under = figure.querySelector(".hint").textContent;
 point("pointerdown", 0.5); point("pointermove", 0.6); point("pointerup", 0.7);
 document.body.dataset.after = below();
 document.body.dataset.g = above();
@@ -252,6 +296,9 @@ def test_curves_are_hidden_and_magnified(tmp_path):
     shown = browse(page, act=ACT)
     got = dict(re.findall(r'data-(\w+)="([^"]*)"', re.search(r"<body[^>]*>", shown)[0]))
     assert (got["hidden"], got["again"]) == ("1", "0")
+    field, g = map(float, re.fullmatch(r"([\d.]+) mT, g ([\d.]+)", got["under"]).groups())
+    assert field == pytest.approx(335.0, abs=0.2)  # three quarters of the way
+    assert g == pytest.approx(9432.1 / (MU_B * field), rel=1e-3)
     assert got["before"] == got["whole"] == "260 280 300 320 340 360"
     # From the middle of 260 to 360 mT on a fifth of the sweep: 310 to 330 mT.
     after = [float(text) for text in got["after"].split()]

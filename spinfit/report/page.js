@@ -74,7 +74,8 @@
     whole.textContent = "whole sweep";
     whole.hidden = true;
     hint.className = "quiet hint";
-    hint.textContent = "drag over a part to magnify it; choose a name to hide its curve";
+    const advice = "drag over a part to magnify it; choose a name to hide its curve";
+    hint.textContent = advice;
     figure.querySelector(".legend").append(hint, whole);
     const reset = () => {
       for (const one of panels) { one.nowX = one.x; one.nowY = one.y; show(one); }
@@ -105,7 +106,19 @@
       if (!tall) [c, d] = [one.top, one.top + one.height];
       return { a, b, c, d, tall };
     };
+    // Field and g under the pointer, with as many digits as a unit of the drawing is worth.
+    const under = (event) => {
+      const at = place(event);
+      const one = panels.find((each) => at.x >= each.left && at.x <= each.left + each.width);
+      if (!one || at.y < panels[0].top || at.y > picture.viewBox.baseVal.height - 40) return advice;
+      const [low, high] = one.nowX, field = low + (at.x - one.left) / one.width * (high - low);
+      const fine = Math.max(0, Math.min(6, Math.ceil(-Math.log10((high - low) / one.width))));
+      const g = constant / field, finer = Math.max(0, Math.min(6, Math.ceil(-Math.log10(Math.abs(g / field) * (high - low) / one.width))));
+      return `${field.toFixed(fine)} mT` + (field > 0 ? `, g ${g.toFixed(finer)}` : "");
+    };
+    picture.addEventListener("pointerleave", () => { hint.textContent = advice; });
     picture.addEventListener("pointermove", (event) => {
+      hint.textContent = under(event);
       if (!begun) return;
       const { a, b, c, d } = bounds(event);
       for (const [key, value] of Object.entries({ x: a, y: c, width: b - a, height: d - c })) begun.box.setAttribute(key, value);

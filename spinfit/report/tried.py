@@ -19,7 +19,8 @@ _NEGLIGIBLE = 1e-2
 
 def budget_cells(parts: Mapping[str, float], whole: float | None) -> list[str]:
     """Return what each source gives to an uncertainty; those that are next to nothing stay empty."""
-    return [small(parts[s]) if parts.get(s, 0.0) > _NEGLIGIBLE * (whole or 0.0) else "" for s in SOURCES]
+    least = _NEGLIGIBLE * abs(whole or 0.0)
+    return [small(parts[s]) if parts.get(s, 0.0) > least else "" for s in SOURCES]
 
 
 def budget_rows(outcome: Outcome) -> list[list[str]]:
