@@ -137,7 +137,7 @@ class Crossings:
         return self._uses[row]
 
     def continued(self, row: int, part: slice, to: Continue) -> Array:
-        """Return gap, slope and strength of one pair, continued, shape (3, nodes, ...).
+        """Return gap, slope, strength and variance, if any, of one pair, continued, shape (3 or 4, nodes, ...).
 
         Parameters
         ----------
@@ -149,9 +149,10 @@ class Crossings:
             From values at the knots to values elsewhere.
         """
         data = self.data
-        own = np.stack([data.gap[row, part], data.slope[row, part], data.strength[row, part]])
+        columns = (data.gap, data.slope, data.strength, *(() if data.variance is None else (data.variance,)))
+        own = np.stack([one[row, part] for one in columns])
         out = to(own.reshape(-1, own.shape[2]))
-        out = out.reshape(3, -1, *out.shape[1:])
+        out = out.reshape(len(own), -1, *out.shape[1:])
         if self.ladder is None:
             return out
         pair = [data.pairs[0][row], data.pairs[1][row]]

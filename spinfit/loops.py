@@ -2,44 +2,29 @@
 
 Between one pair of levels there may be none to several resonances, and their number changes with
 direction.  At such a fold the weight diverges as 1/sqrt(distance), so sums over roots and matching
-of roots both fail.  The spectrum is the integral over the sphere of strength x delta(gap), and a
-smoothed delta function has no singularity: at a fixed field the sum over a mesh of
-strength x K(gap / h) / h converges quickly once the kernel's width h is about the difference of the
-gap between neighbouring directions.  Where resonances are steep along the field, h is narrow in
-field, and there it is cheaper to solve for the field and smear that.  A smooth share divides every
-(direction, field) between the two sums; both smear by the same kernel of sixth order, and both
-leave turning points, where neighbours agree, sharp.
+of roots both fail.  The sums of `spinfit.loop_sums` have no singularity; here each pair of levels gets
+a mesh as fine as it needs.
 """
 
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
 from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit import hermite
-from spinfit.branches import KnotData, Request, stencil
+from spinfit.branches import KnotData, Request
 from spinfit.crossings import Crossings
 from spinfit.lineshape import Shape
+from spinfit.loop_sums import Landscape, add_looping
 from spinfit.orientations import Mesh, Rings
-from spinfit.resonance import ZERO_FIELD, can_reach
-from spinfit.sheets import SMEAR_MOST, SMEAR_REACH, Histograms, differences, point_share
+from spinfit.resonance import ZERO_FIELD
+from spinfit.sheets import SMEAR_MOST, SMEAR_REACH, Histograms
 
 Array = NDArray[np.float64]
 Index = NDArray[np.intp]
 
-STEP = 1.0
-"""Distance of the fields at which the sum in frequency is taken, in line widths, at the default tolerance.
-
-That sum is smooth over several line widths: everything sharper is in the other one.
-"""
-KERNEL_REACH = 5.0
-"""Where the kernel is cut, in units of its width."""
-FOLD = 30.0
-"""How many times farther than its smear from a fold a resonance lies before it is solved for."""
 FLAT = 0.5
 """Root of the curvature of a resonance field over one step of the first mesh, in line widths."""
 FOLD_SLOPE = 8.0
@@ -55,53 +40,6 @@ LEAST_GAIN = 1 / 16
 """Ratio of a mesh's error to that of its every second point below which it is not trusted to lie."""
 SHARE = 0.8
 """Part of the tolerance that the meshes of looping pairs may use up."""
-FIELDS, BLOCK = 20, 6000
-"""Numbers of fields and of points handled at a time, so that they stay in the processor's cache."""
-
-
-def kernel(u: Array) -> Array:
-    """Return the kernel of unit area whose second and fourth moments vanish, see `lineshape.smear_kernel`."""
-    square = u * u
-    return np.exp(-0.5 * square) * (1.875 - square * (1.25 - 0.125 * square)) * (1 / math.sqrt(2 * math.pi))
-
-
-@dataclass(frozen=True, eq=False)
-class Landscape:
-    """One level difference over the points of a mesh.
-
-    Attributes
-    ----------
-    fields : ndarray, shape (k,)
-        Nodes, mT.
-    leaves : ndarray of int, shape (l, 3)
-    gap, slope, strength : ndarray, shape (k, points)
-        As in `KnotData`.
-    bend : ndarray, shape (k, points)
-        Change of the slope along the field, MHz/mT^2; continuous, unlike that of the quintics.
-    along, around : ndarray, shape (k, points)
-        Differences of the gap between neighbours along theta and phi, MHz.
-    weights : ndarray, shape (points,)
-        Shares of the solid angle.
-    """
-
-    fields: Array
-    leaves: Index
-    gap: Array
-    slope: Array
-    strength: Array
-    bend: Array
-    along: Array
-    around: Array
-    weights: Array
-
-    @classmethod
-    def of(cls, fields: Array, leaves: Index, values: Array, mesh: Mesh) -> Landscape:
-        """Build from gap, slope and strength on a mesh, shape (3, k, thetas + 1, azimuths)."""
-        k = len(fields)
-        steps = differences(values[0], mesh).reshape(2, k, -1)
-        gap, slope, strength = values.reshape(3, k, -1)
-        bend = np.gradient(slope, fields, axis=0)
-        return cls(fields, leaves, gap, slope, strength, bend, *steps, mesh.weights().ravel())
 
 
 class _Pair:
@@ -111,8 +49,8 @@ class _Pair:
     ----------
     size : (int, int)
         Intervals of the mesh.
-    plain : ndarray
-        Its histograms, as `Histograms.plain`.
+    histograms : Histograms
+        Its own.
     error : float
         Estimated, relative to the top of the whole spectrum's derivative.
     """
@@ -127,9 +65,9 @@ class _Pair:
         """Sum over the present mesh and over its every second point; return the number of points used."""
         mesh = Mesh(self.rings.kind, *self.size)
         self.values = self.on(mesh)
-        histograms = look.empty()
-        used = add_looping(histograms, Landscape.of(self.fields, self.leaves, self.values, mesh), self.request)
-        self.plain, self.transform = histograms.plain, histograms.transform()
+        self.histograms = look.empty()
+        used = add_looping(self.histograms, Landscape.of(self.fields, self.leaves, self.values, mesh), self.request)
+        self.transform = self.histograms.transform()
         self.difference = self.coarser(look, 2, 2)
         self.missed = look.height(self.difference)
         before = look.height(self.coarser(look, 4, 4))
@@ -137,7 +75,7 @@ class _Pair:
         return used
 
     def on(self, mesh: Mesh) -> Array:
-        """Return gap, slope and strength on a mesh, shape (3, k, thetas + 1, azimuths)."""
+        """Return gap, slope, strength and variance, if any, on a mesh, shape (3 or 4, k, thetas + 1, azimuths)."""
         return self.crossings.continued(self.row, self.part, lambda v: self.rings.to_mesh_locally(v, mesh))
 
     def coarser(self, look: _Look, along: int, around: int) -> NDArray[np.complex128]:
@@ -211,7 +149,7 @@ def _first_size(pair: _Pair, request: Request) -> tuple[int, int]:
     """
     rings = pair.rings
     azimuths = {"axial": 1, "octant": 2, "quarter": 4, "half": 8}[rings.kind] * min(rings.harmonics, 24)
-    gap, slope, _ = pair.on(Mesh(rings.kind, 2 * rings.rings, azimuths))
+    gap, slope = pair.on(Mesh(rings.kind, 2 * rings.rings, azimuths))[:2]
     if rings.kind == "axial":  # costs nothing, and spares every doubt
         return AXIAL, 1
     near = np.abs(gap) <= 1.5 * np.abs(slope) * np.gradient(pair.fields)[:, None, None] + request.scale * FOLD_SLOPE
@@ -301,7 +239,7 @@ def add_pairs(
         if not pending:
             break
     for pair in pairs:
-        histograms.plain += pair.plain
+        histograms.join(pair.histograms)
     if keep is not None:
         keep += [Summed(row, leaves, pair.size) for (row, leaves), pair in zip(chosen, pairs, strict=True)]
     return used, math.hypot(*(pair.error for pair in pairs)) / top
@@ -319,146 +257,3 @@ def reachable(data: KnotData, row: int) -> Index:
         if low - margin <= 0 <= high + margin:
             kept.append(number)
     return np.array(kept, dtype=np.intp)
-
-
-def add_looping(histograms: Histograms, land: Landscape, request: Request, step: float | None = None) -> int:
-    """Add one pair of levels; return the number of points used.
-
-    `step` is the distance of the fields of the sum in frequency, mT, by default what the pair asks for
-    (`field_step`).
-    """
-    step = field_step(land, request) if step is None else step
-    fields, density, used = _in_frequency(land, request, step)
-    some = density != 0
-    # hides the grain of the fields themselves
-    smear = np.full(int(some.sum()), request.grain.smear * step)
-    histograms.smeared(fields[some], density[some], smear)
-    return used + _in_field(histograms, land, request, step)
-
-
-def _in_frequency(land: Landscape, request: Request, step: float) -> tuple[Array, Array, int]:
-    """Return fields, the flat resonances' share of the intensity at each, and the points summed."""
-    first = 0.0 if request.low <= ZERO_FIELD else request.low  # the spectrum is even in B: half a step off zero
-    fields = first + step * (0.5 + np.arange(max(1, math.ceil((request.high - first) / step))))
-    density = np.zeros(len(fields))
-    used = 0
-    for leaf in land.leaves:
-        ends = land.fields[leaf]
-        here = slice(*np.searchsorted(fields, [ends[0], ends[2]]))
-        if here.start == here.stop:
-            continue
-        half = 0.5 * (ends[2] - ends[0])
-        f, g = land.gap[leaf], land.slope[leaf] * half
-        apart = _apart(land.along[leaf], land.around[leaf], np.abs(land.bend[leaf]), request, step)
-        steep = np.minimum(np.abs(land.slope[leaf]), np.abs(g + g[[1, 2, 0]]) / (2 * half))
-        flat = _nearness(apart.max(axis=0), steep.min(axis=0), np.abs(land.bend[leaf]).max(axis=0), request) > 0.25
-        hull = np.stack([*f, f[0] + g[0] / 3, f[1] - g[1] / 3, f[1] + g[1] / 3, f[2] - g[2] / 3])
-        low, high = hull.min(axis=0), hull.max(axis=0)
-        widest = 1.2 * KERNEL_REACH * request.grain.smear * apart.max(axis=0)
-        margin = widest + 0.25 * (high - low)
-        at = np.flatnonzero((low <= margin) & (high >= -margin) & flat)
-        c, widest = hermite.quintic(f[:, at], g[:, at]), widest[at]
-        # a few fields at a time: few of the points are near resonance at all of them
-        for start in range(here.start, here.stop, FIELDS):
-            some = slice(start, min(start + FIELDS, here.stop))
-            t = (fields[some] - ends[1]) / half
-            gap = (t[:, None] ** np.arange(6)) @ c
-            near = np.flatnonzero((np.abs(gap) < widest).any(axis=0))
-            used += len(near)
-            for first in range(0, len(near), BLOCK):
-                part = near[first : first + BLOCK]
-                slope = np.abs((t[:, None] ** np.arange(5) * (np.arange(1, 6) / half)) @ c[1:, part])
-                density[some] += step * _density(
-                    land, leaf[1], fields[some], at[part], gap[:, part], slope, request, step
-                )
-    return fields, density, used
-
-
-def _density(
-    land: Landscape, middle: int, fields: Array, at: Index, gap: Array, slope: Array, request: Request, step: float
-) -> Array:
-    """Return the sum over points `at` of strength x kernel at each field, from gap and slope there."""
-    indices, basis = stencil(land.fields, np.full(len(fields), middle), fields)
-    nodes = indices[:, :1], at
-    strength, bend, *steps = (basis.T @ v[nodes] for v in (land.strength, land.bend, land.along, land.around))
-    bend = np.abs(bend)
-    apart = _apart(*steps, bend, request, step)
-    width = request.grain.smear * apart
-    u = gap / width
-    some = np.flatnonzero(np.abs(u) < KERNEL_REACH)
-    apart, slope, bend, u, width, strength = (v.ravel()[some] for v in (apart, slope, bend, u, width, strength))
-    rest = 1 - _share(apart, slope, bend, request)
-    part = strength * rest * kernel(u) / width * land.weights[at][some % len(at)]
-    return np.bincount(some // len(at), weights=part, minlength=len(fields))
-
-
-def field_step(land: Landscape, request: Request) -> float:
-    """Return the distance of the fields at which the sum in frequency is taken, mT.
-
-    Short beside the line, and so short that at most folds a natural smear is as long.
-    """
-    longest = STEP * request.scale * min(2.0, max(1.0, (request.tolerance / 1e-3) ** 0.3))
-    some = slice(None, None, 1 + land.gap.shape[1] // 2000)
-    gap, slope, bend = (np.abs(v[:, some]) for v in (land.gap, land.slope, land.bend))
-    width = request.grain.smear * np.hypot(land.along[:, some], land.around[:, some])
-    near = gap <= 4 * width + 0.5 * slope * np.gradient(land.fields)[:, None]
-    if not near.any():
-        return longest
-    typical = np.quantile(width[near] / np.maximum(bend[near], 1e-12), 0.1)
-    return max(0.02 * request.scale, min(longest, math.sqrt(typical / FOLD) / 0.9))
-
-
-def _apart(along: Array, around: Array, bend: Array, request: Request, step: float) -> Array:
-    """Return how far apart neighbours are in frequency, MHz, and no less than a step of the fields resolves.
-
-    A share near a fold ends where the smear is 1/FOLD of the distance; it must be as long as a step there.
-    """
-    least = bend * (FOLD * (0.9 * step) ** 2 / request.grain.smear)
-    return np.sqrt(along * along + around * around + least * least) + 1e-9
-
-
-def _share(apart: Array, slope: Array, bend: Array, request: Request) -> Array:
-    """Return the share that is solved for: 1 where steep, 0 where flat or near a fold along the field.
-
-    A fold lies about slope/bend away, and a smear must be short beside that.
-    """
-    return point_share(_nearness(apart, slope, bend, request), 1.0)
-
-
-def _nearness(apart: Array, slope: Array, bend: Array, request: Request) -> Array:
-    grain = request.grain
-    return np.sqrt((apart / grain.far) ** 2 + FOLD * grain.smear * apart * bend) / np.maximum(slope, 1e-9)
-
-
-def _in_field(histograms: Histograms, land: Landscape, request: Request, step: float) -> int:
-    """Add the steep resonances' share; return their number."""
-    used = 0
-    grain = request.grain
-    for leaf in land.leaves:
-        ends = land.fields[leaf]
-        half = 0.5 * (ends[2] - ends[0])
-        f, g = land.gap[leaf], land.slope[leaf] * half
-        near = can_reach(f[0], f[1], g[0], g[1]) | can_reach(f[1], f[2], g[1], g[2])
-        steep = np.maximum(np.abs(g).max(axis=0), np.abs(np.diff(f, axis=0)).max(axis=0)) / half
-        apart = np.hypot(land.along[leaf], land.around[leaf]).min(axis=0)
-        at = np.flatnonzero(near & (apart < 1.5 * grain.far * steep))
-        if not len(at):
-            continue
-        c = hermite.quintic(f[:, at], g[:, at])
-        q, low, high = hermite.brackets(c, f[:, at])
-        c, point = c[:, q], at[q]
-        t = hermite.refine(c, low, high)
-        slope = np.maximum(np.abs(hermite.slope(c, t)) / half, 1e-9)
-        field = ends[1] + half * t
-        indices, basis = stencil(land.fields, np.full(len(field), leaf[1]), field)
-        nodes = indices, point
-        columns = (land.strength, land.bend, land.along, land.around)
-        strength, bend, *steps = ((basis * v[nodes]).sum(axis=0) for v in columns)
-        bend = np.abs(bend)
-        apart = _apart(*steps, bend, request, step)
-        share = _share(apart, slope, bend, request)
-        some = np.flatnonzero(share > 0)
-        weight = (strength / slope * share * land.weights[point])[some]
-        histograms.smeared(field[some], weight, grain.smear_for((apart / slope)[some]))
-        used += len(some)
-    return used

@@ -277,10 +277,6 @@ def _misgivings(one: Species, reports: list[dict[str, object]], tolerance: float
     error = max(float(report["estimated_error"]) for report in reports)
     if error > 1.5 * tolerance:
         said.append(("accuracy", f"{one.name}: the spectrum may err by {error:.1g} of its top, not {tolerance:g}"))
-    distributed = one.spread.any or max(one.width.hidden_hyperfine) > 0
-    if distributed and any(report["looping"] for report in reports):
-        text = "resonances that come and go with direction are not broadened by spreads or hidden hyperfine"
-        said.append(("spread", f"{one.name}: {text}"))
     return tuple(said)
 
 
@@ -297,7 +293,8 @@ def _own_width(one: Species) -> float:
     """Return a rough standard deviation, mT, of the widest line that spreads make."""
     spread = one.spread
     frequency = max(one.width.hidden_hyperfine) + max(spread.A) + one.spins[0].S * 2 * (spread.D + spread.E)
-    return frequency / (28.0 * FWHM_PER_SIGMA) + 0.2 * max(spread.g) * 340.0
+    turned = spread.tilt * 2 * one.spins[0].S * 340.0
+    return (frequency / 28.0 + turned) / FWHM_PER_SIGMA + 0.2 * max(spread.g) * 340.0
 
 
 def polarisation_remarks(one: Species, sample: Sample) -> tuple[tuple[str, str], ...]:
