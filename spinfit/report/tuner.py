@@ -103,27 +103,18 @@ class Tuner:
 
     def _build(self) -> None:
         """Lay out curves above, sliders below, buttons at the bottom."""
-        rows = min(len(self.names), PAGE)
+        count = min(len(self.names), PAGE)
+        columns = 1 if count <= PAGE // 2 else 2
+        rows = -(-count // columns)
         bottom = 0.11 + 0.042 * rows
-        shown = self.problem.job.traces[:PANELS]
-        height = (0.92 - bottom) / len(shown)
         self._lines: list[tuple[Any, Any, float]] = []
-        for n, (trace, seen) in enumerate(zip(shown, self.view.seen, strict=False)):
-            low = bottom + 0.02 + (len(shown) - 1 - n) * height
-            gap = 0.0 if n == 0 else 0.06  # for the g axis of the one below
-            axes = self.figure.add_axes((0.11, low, 0.86, height - 0.02 - gap))
-            factor, unit = power_of_unit(trace.signal[trace.used])
-            axes.plot(seen.field, seen.signal * seen.noise / factor, color=style.MEASURED, lw=0.7, label="measured")
-            (line,) = axes.plot(seen.field, np.full(seen.field.size, np.nan), color=style.FITTED, lw=1.0, label="model")
-            axes.set_xlim(seen.field[0], seen.field[-1])
-            axes.set_ylabel(f"{trace.name}\n/ {unit}")
-            axes.xaxis.get_major_formatter().set_useOffset(False)
-            if n == len(shown) - 1:
-                axes.set_xlabel(FIELD_LABEL, labelpad=1)
-            add_g_axis(axes, trace.frequency, label=n == 0)
-            axes.legend(loc="best")
-            self._lines.append((axes, line, factor))
-        self._slots = [self.figure.add_axes((0.26, bottom - 0.045 - 0.042 * k, 0.52, 0.028)) for k in range(rows)]
+        self._draw_traces(bottom + 0.02)
+        width = 0.52 if columns == 1 else 0.24
+        lefts = (0.26,) if columns == 1 else (0.17, 0.66)
+        self._slots = [
+            self.figure.add_axes((lefts[k // rows], bottom - 0.045 - 0.042 * (k % rows), width, 0.028))
+            for k in range(count)
+        ]
         self.sliders: list[Slider] = []
         self.status = self.figure.text(0.02, 0.015, "", fontsize=7.5, color=style.MEASURED)
         pages = -(-len(self.names) // PAGE)
@@ -135,6 +126,31 @@ class Tuner:
             button.label.set_fontsize(7.5)
             button.on_clicked(lambda _event, action=action: action())
             self.buttons[label] = button
+
+    def _draw_traces(self, bottom: float) -> None:
+        """Put one panel a trace between `bottom` and the top, in two columns where there are several."""
+        shown = self.problem.job.traces[:PANELS]
+        columns = 1 if len(shown) == 1 else 2
+        rows = -(-len(shown) // columns)
+        height, width = (0.97 - bottom) / rows, 0.90 / columns
+        for n, (trace, seen) in enumerate(zip(shown, self.view.seen, strict=False)):
+            row, column = divmod(n, columns)
+            place = (0.09 + column * (width + 0.01), bottom + 0.045 + (rows - 1 - row) * height)
+            axes = self.figure.add_axes((*place, width - (0.02 if columns == 1 else 0.07), height - 0.115))
+            factor, unit = power_of_unit(trace.signal[trace.used])
+            axes.plot(seen.field, seen.signal * seen.noise / factor, color=style.MEASURED, lw=0.7, label="measured")
+            (line,) = axes.plot(seen.field, np.full(seen.field.size, np.nan), color=style.FITTED, lw=1.0, label="model")
+            axes.set_xlim(seen.field[0], seen.field[-1])
+            axes.set_ylabel(f"signal / {unit}")
+            axes.xaxis.get_major_formatter().set_useOffset(False)
+            if row == rows - 1:
+                axes.set_xlabel(FIELD_LABEL, labelpad=1)
+            if len(shown) > 1:
+                axes.text(0.01, 0.98, trace.name[-30:], transform=axes.transAxes, ha="left", va="top", fontsize=7.5)
+            add_g_axis(axes, trace.frequency, label=row == 0, most=6 if columns == 1 else 4)
+            if n == 0:
+                axes.legend(loc="upper right")
+            self._lines.append((axes, line, factor))
 
     def _ends(self, k: int) -> tuple[float, float]:
         """Return the ends of a slider around the present value, internal units, inside the limits."""
