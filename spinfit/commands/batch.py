@@ -222,9 +222,9 @@ def _say(args: argparse.Namespace, screen: Screen, report: Any, written: list[st
         return
     counts = ", ".join(f"{number} {status}" for status, number in report.counts.items())
     screen.say(f"{counts or 'nothing'} ({report.fitted} fitted now, {report.kept} before); {report.seconds:.1f} s")
-    screen.say(
-        f"written to {args.out}: {', '.join(written)}, and a folder a trace; spinfit summary {args.out} shows them"
-    )
+    if report.changed:
+        screen.say(f"written to {args.out}: {', '.join(written)}, and a folder a trace")
+    screen.say(f"spinfit summary {args.out} shows the table")
 
 
 def _failed(summary: Path, most: int) -> list[dict[str, str]]:
