@@ -2,9 +2,9 @@
 
 The contract: a reader returns a valid object or raises one of `spinfit.errors`, on one line; never another exception,
 never a hang, within bounded memory.  Atheris (libFuzzer) makes the input.  Each target runs in a process of its own.
-HDF5 goes through the guarded child process first, and only what does not crash or hang the HDF5 library there is
-read again where coverage is seen; should it crash here all the same, the process is started again, and the input
-counts as a finding unless the guarded reader refuses it.
+HDF5 is tried in a forked process first, and only what does not crash or hang the HDF5 library there is read again
+where coverage is seen; should it do so all the same, the process is started again, and the input counts as a finding
+unless the guarded reader (`spinfit.files.guard`) refuses it.
 
     python scripts/fuzz_readers.py text jcamp --seconds 600
 """
@@ -46,8 +46,6 @@ def inside(name: str, folder: Path, flags: list[str]) -> None:
         from fuzz_targets import READERS
 
         from spinfit.errors import SpinfitError
-        from spinfit.files import guard
-    guard.SECONDS = 0.1  # small files; every damaged one that hangs costs this much
     reader = READERS[name]
     seen: set[str] = set()
 
