@@ -134,6 +134,7 @@ def test_no_folder_of_the_user_is_imported_from(tmp_path, monkeypatch):
     assert read_hdf5(file_bytes(), "f.h5").columns.shape == (16, 2)
 
 
+@pytest.mark.filterwarnings("ignore:.*fork.*:DeprecationWarning")  # Python 3.12 warns where a library has threads
 def test_a_forked_process_gets_a_child_of_its_own():
     read_hdf5(file_bytes(), "f.h5")
     ours = guard._child.process.pid

@@ -36,6 +36,7 @@ NAMES = ("text", "jcamp", "toml", "ties", "ligands", "hdf5", "archive")
 SAFE = ("text", "jcamp", "toml", "ties", "ligands")
 
 
+@pytest.mark.filterwarnings("ignore:.*fork.*:DeprecationWarning")  # Python 3.12 warns where a library has threads
 @pytest.mark.parametrize("name", NAMES)
 def test_seeds_are_good_files(name):
     """A seed that is refused at its first line would teach the fuzzer nothing."""
