@@ -150,8 +150,12 @@ def _ions(job: Job | None, outcome: Outcome) -> str:
         for n, (cells, axes) in enumerate(groups.items()):
             rows.append([*(head if n == 0 else [""] * 5), ", ".join(axes) if len(groups) > 1 else "", *cells])
         remarks += quench_remarks(row)
-        if row.measured is None and not row.kind == "":
-            remarks.append(f"{name}: its g was not fitted freely, so that there is no measured one to compare")
+        if row.measured is None and row.kind:
+            own = (v for parameter, v in outcome.parameters.items() if parameter.startswith(f"{name}.g"))
+            if any(v.derived for v in own):
+                remarks.append(f"{name}: its g follows from the crystal field that was fitted")
+            else:
+                remarks.append(f"{name}: its g was not fitted freely, so that there is no measured one to compare")
     note = paragraph(
         "The free ion's g is Landé's; the crystal field is the typical one that is named above, or the job's own. The "
         "part of the orbital moment that is left is (g - g_e) relative to the free ion's <L>/<S>; 0 is quenched.",
