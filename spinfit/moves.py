@@ -24,9 +24,10 @@ from scipy.spatial.transform import Rotation
 
 from spinfit import hermite
 from spinfit.branches import FWHM_PER_SIGMA, KnotData, Request, stencil
-from spinfit.hamiltonian import System, rotation
+from spinfit.hamiltonian import System
 from spinfit.levels import occupation, solve, zero_field_state
 from spinfit.nodes import FieldNodes
+from spinfit.operators import rotation_matrix
 from spinfit.powder import Average
 from spinfit.symmetry import Symmetry
 
@@ -95,19 +96,29 @@ def symmetrised(base: System, moved: System, symmetry: Symmetry) -> System:
     System
         `base` plus the mean of the difference over the turns of the symmetry.
     """
-    turns = _group(symmetry.kind)
+    turns = _turns(base.spins, symmetry.kind, symmetry.axes.tobytes())
     if len(turns) == 1:
         return moved
     n = len(base.h0)
     h0, zeeman = moved.h0 - base.h0, moved.zeeman - base.zeeman
     mean_h0, mean_zeeman = np.zeros_like(h0), np.zeros_like(zeeman)
-    for axis, angle in turns:
-        along = symmetry.axes @ np.array(axis)
-        u = rotation(base, tuple(along), angle)
-        matrix = Rotation.from_rotvec(angle * along).as_matrix()
-        mean_h0 += u @ h0 @ u.conj().T
-        mean_zeeman += u @ np.dot(matrix, zeeman.reshape(3, -1)).reshape(3, n, n) @ u.conj().T
+    for u, matrix in turns:
+        back = u.conj().T
+        mean_h0 += u @ h0 @ back
+        mean_zeeman += u @ np.dot(matrix, zeeman.reshape(3, -1)).reshape(3, n, n) @ back
     return replace(moved, h0=base.h0 + mean_h0 / len(turns), zeeman=base.zeeman + mean_zeeman / len(turns))
+
+
+@lru_cache(maxsize=32)
+def _turns(spins: tuple[float, ...], kind: str, axes: bytes) -> tuple[tuple[NDArray, Array], ...]:
+    """Return the turns of `_group` as unitary matrices of spins, and as rotations, in molecular axes."""
+    frame = np.frombuffer(axes).reshape(3, 3)
+    out = []
+    for axis, angle in _group(kind):
+        along = frame @ np.array(axis)
+        matrix = Rotation.from_rotvec(angle * along).as_matrix()
+        out.append((rotation_matrix(spins, tuple(along), angle), matrix))
+    return tuple(out)
 
 
 class Places:

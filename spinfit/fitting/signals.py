@@ -13,6 +13,7 @@ import math
 from collections import OrderedDict
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -21,6 +22,7 @@ from numpy.typing import NDArray
 from spinfit.derivatives import field_slope, phase_slope, signal_changes
 from spinfit.fitting.data import Trace
 from spinfit.species import Species
+from spinfit.spectrum import Kept
 from spinfit.sweep import Sample, Sweep
 
 Array = NDArray[np.float64]
@@ -99,7 +101,6 @@ def broadened(species: Species, broadening: float) -> Species:
     return replace(species, width=replace(width, gaussian=math.hypot(width.gaussian, broadening)))
 
 
-@dataclass(frozen=True, eq=False)
 class Followed:
     """First-order changes of one species' signal at unit amount.
 
@@ -107,13 +108,21 @@ class Followed:
     ----------
     by_model : list of ndarray, shape (n,), or None
         For each small move of the model; None where only a difference of simulations can tell.
-    by_field, by_phase : ndarray, shape (n,)
-        Derivatives with respect to the true field, 1/mT, and the microwave phase, 1/rad.
     """
 
-    by_model: list[Array | None]
-    by_field: Array
-    by_phase: Array
+    def __init__(self, kept: Kept, moved: Sequence[tuple[Species, Sample]]) -> None:
+        self._kept = kept
+        self.by_model: list[Array | None] = [None if one is None else one[0] for one in signal_changes(kept, moved)]
+
+    @cached_property
+    def by_field(self) -> Array:
+        """Derivative with respect to the true field, shape (n,), 1/mT."""
+        return field_slope(self._kept)[0]
+
+    @cached_property
+    def by_phase(self) -> Array:
+        """Derivative with respect to the microwave phase, shape (n,), 1/rad."""
+        return phase_slope(self._kept)[0]
 
 
 class Signals:
@@ -137,7 +146,7 @@ class Signals:
     def __init__(self, simulate: Simulate) -> None:
         self._simulate = simulate
         self._keeps = "keep" in inspect.signature(simulate).parameters
-        self._kept: OrderedDict[Any, Any] = OrderedDict()
+        self._kept: OrderedDict[Any, Kept] = OrderedDict()
         self._memory: OrderedDict[Any, Array] = OrderedDict()
         self.simulations = 0
         self.reports: dict[tuple[str, str], Any] = {}
@@ -196,8 +205,7 @@ class Signals:
             (broadened(replace(one, amount=1.0, crystal_field=None), stage.broadening), sample_of(where, trace))
             for one, where in moved
         ]
-        by_model = [None if one is None else one[0] for one in signal_changes(kept, there)]
-        return Followed(by_model, field_slope(kept)[0], phase_slope(kept)[0])
+        return Followed(kept, there)
 
     def _key(self, species: Species, trace: Trace, sample: Sample, field: Array, stage: Stage) -> Any:
         # The engine sees spins only; fields that lead to the same spins have the same signal.
@@ -231,7 +239,7 @@ class Signals:
             self._memory.popitem(last=False)
         return signal
 
-    def _keep(self, key: Any, kept: Sequence[Any]) -> None:
+    def _keep(self, key: Any, kept: Sequence[Kept]) -> None:
         """Remember what derivatives start from, the last few, within bounds of memory."""
         if kept and kept[0].nbytes <= _KEPT_BYTES:
             self._kept[key] = kept[0]
