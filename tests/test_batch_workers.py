@@ -98,6 +98,14 @@ def test_a_call_can_end_itself_in_time(workers):
     assert workers.submit(calls.counts_until, 0.2).result(60) == "best so far"
 
 
+def test_a_process_leaves_after_its_share_of_calls():
+    workers = Workers(1, most_calls=3)
+    pids = [workers.submit(calls.own_pid).result(60) for _ in range(7)]
+    workers.shutdown()
+    assert [pids.count(pid) for pid in dict.fromkeys(pids)] == [3, 3, 1]
+    assert gone(pids)
+
+
 def test_what_cannot_be_sent_is_the_callers_error(workers):
     with pytest.raises(Exception, match="pickle|local|lambda"):
         workers.submit(lambda: 1).result(60)

@@ -77,6 +77,7 @@ class _Process:
         self.deadline: float | None = None
         self.allowed = 0.0
         self.note: Any = None
+        self.calls = 0
 
     def end(self, *, patience: float = 0.0) -> int:
         """Close the line, wait a little for the process to leave, then kill it; return its exit code."""
@@ -102,11 +103,15 @@ class Workers(Executor):
         Of processes; each starts when there is work for it.
     preload : sequence of str
         Modules that a process imports before its first call.
+    most_calls : int
+        After which a process leaves and another takes its place: what libraries do not give back, the system does.
     """
 
-    def __init__(self, count: int, *, preload: Sequence[str] = ()) -> None:
+    def __init__(self, count: int, *, preload: Sequence[str] = (), most_calls: int = 500) -> None:
         if count < 1:
             raise ValueError(f"{count} workers")
+        self._most_calls = most_calls
+        self._leaving: list[subprocess.Popen[bytes]] = []
         self._max_workers = count
         self._preload = tuple(preload)
         self._waiting: deque[_Call] = deque()
@@ -176,10 +181,14 @@ class Workers(Executor):
             for one in self._processes:
                 one.end(patience=0.0 if self._killing else _LEAVE)
             self._processes.clear()
+            for process in self._leaving:
+                process.kill()
+                process.wait()
             self._fail_waiting(NoWorkers("ended with the batch"))
 
     def _step(self) -> bool:
         """Hand out calls, wait for something to happen, see to it; False when all is done."""
+        self._leaving = [process for process in self._leaving if process.poll() is None]
         with self._lock:
             self._hand_out()
             busy = any(one.call is not None for one in self._processes)
@@ -252,6 +261,12 @@ class Workers(Executor):
                 call.future.set_result(content)
             else:
                 call.future.set_exception(content)
+            one.calls += 1
+            if one.calls >= self._most_calls:
+                with self._lock:
+                    self._processes.remove(one)
+                one.connection.close()  # which it takes for the end
+                self._leaving.append(one.process)
 
     def _lose(self, one: _Process, why: BaseException | None) -> None:
         """Take a process out; the call it was at fails."""
