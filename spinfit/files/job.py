@@ -142,7 +142,9 @@ def _job_from(data: Mapping[str, Any], path: Path, text: str, store: Store) -> J
     given: Given = {}
     start = start_of(root.data.get("fit"))
     sample = read_sample(root.data.get("sample"), given, job=True)
-    species = read_species(root.tables("species"), given, form=sample.form, auto=start == "auto")
+    species = read_species(
+        root.tables("species"), given, form=sample.form, auto=start == "auto", width="trace" in root.data
+    )
     tolerance = read_tolerance(root.data.get("accuracy"), given)
     traces, lines = _data(root, store, sample, species, given)
     binding = Binding(species, sample, (*traces, *lines))

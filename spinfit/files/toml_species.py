@@ -41,7 +41,9 @@ PARTED = 0.01
 """Half the distance in g that is put between equal components of a start: about 1.5 mT at 9.5 GHz."""
 
 
-def read_species(tables: Sequence[tuple[str, Any]], given: Given, *, form: str, auto: bool) -> tuple[Species, ...]:
+def read_species(
+    tables: Sequence[tuple[str, Any]], given: Given, *, form: str, auto: bool, width: bool = True
+) -> tuple[Species, ...]:
     """Read every ``[[species]]`` table.
 
     Parameters
@@ -68,11 +70,11 @@ def read_species(tables: Sequence[tuple[str, Any]], given: Given, *, form: str, 
             raise table.error("name", '"sample" is the name of the sample', "choose another name")
         if any(other.name == name for other in found):
             raise table.error("name", f'two species are called "{name}"', "give one of them another name")
-        found.append(_species(table, name, form, auto))
+        found.append(_species(table, name, form, auto, width))
     return tuple(found)
 
 
-def _species(table: Table, name: str, form: str, auto: bool) -> Species:
+def _species(table: Table, name: str, form: str, auto: bool, needs_width: bool) -> Species:
     ion = _ion(table)
     crystal_field = _crystal_field(table, ion)
     spins = _spins(table, auto, ion) if crystal_field is None else (_spin_of_field(table, crystal_field),)
@@ -90,7 +92,7 @@ def _species(table: Table, name: str, form: str, auto: bool) -> Species:
         spins=spins,
         nuclei=nuclei,
         exchange=exchange,
-        width=_width(table, spread, form, auto),
+        width=_width(table, spread, form, auto or not needs_width),
         spread=spread,
         amount=1.0 if amount is None else amount,
         populations=_populations(table, spins),

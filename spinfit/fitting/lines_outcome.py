@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 import time
+from collections.abc import Callable, Sequence
 from dataclasses import replace
 
 import numpy as np
@@ -11,9 +12,10 @@ from numpy.typing import NDArray
 
 from spinfit.errors import InputError
 from spinfit.fitting.assignment import at_settings, calculated, settings
+from spinfit.fitting.axes import axes_of, open_components
 from spinfit.fitting.data import Job, axis_group
 from spinfit.fitting.line_search import LineSearch
-from spinfit.fitting.outcome import Note, Outcome, PositionTable, Quality
+from spinfit.fitting.outcome import Axis, Note, Outcome, PositionTable, Quality
 from spinfit.fitting.positions import OUTLIER, LineProblem, State, kept_lines, standard_scatter
 from spinfit.fitting.residuals import Problem, Progress
 from spinfit.fitting.signals import Simulate, true_field
@@ -31,6 +33,8 @@ _UNSEEN_STEPS = 100.0
 # Standard deviations by which chi-squared may exceed its expectation before uncertainties are widened.
 _EXCESS = 2.0
 _SIGN_CHI2 = 4.0
+# Part of a quantity's slope that may lie along directions the lines do not see.
+_LEAK = 1e-3
 _DRAWN_ANGLES = 181
 _DRAWN_WEIGHT = 1e-3
 
@@ -68,8 +72,12 @@ def fit_lines(job: Job, *, progress: Progress | None, simulate: Simulate, wide: 
     spread, blind = (None, ()) if not finished else _spread(lines, state, kept, scatter, at_limit)
     quality = _quality(lines, state, kept, scatter, finished=finished, converged=converged)
     notes = [Note(code, f"{t.name}: {text}") for t in job.lines for code, text in t.notes]
+    axes: tuple[Axis, ...] = ()
     if finished:
         notes += _notes(lines, state, kept, scatter, at_limit, blind, quality)
+        jacobian, propagate = _propagation(lines, state, kept, scatter, at_limit)
+        axes = axes_of(problem, state.free, propagate)
+        notes += open_components(problem, state.free, jacobian, propagate)
     else:
         notes.append(Note("unfinished", "The fit was stopped; the values are those of the start."))
     known = np.zeros(len(problem.names), dtype=bool) if spread is None else spread.known
@@ -89,6 +97,7 @@ def fit_lines(job: Job, *, progress: Progress | None, simulate: Simulate, wide: 
         engine={"evaluations": lines.evaluations},
         budget={} if spread is None else budget_of(problem, state.free, spread),
         positions=_tables(lines, state, kept, scatter),
+        axes=axes,
         message="" if converged else "the descent did not converge",
         seconds=time.perf_counter() - begun,
     )
@@ -147,6 +156,19 @@ def _spread(
     excess = _excess(lines, state, kept, scatter)
     factor = excess if excess > 1 + _EXCESS * math.sqrt(2 / freedom) else 1.0
     rows, sources = [], []
+    for source, shift in _axis_shifts(lines, state):
+        row = np.zeros(count)
+        row[known] = -response @ (shift / scatter)[kept]
+        rows.append(row)
+        sources.append(source)
+    moved = np.array(rows).reshape(len(rows), count)
+    spread = Covariances(known, factor * white, moved.T @ moved, white, moved, tuple(sources), tuple(blind), ())
+    return spread, tuple(blind)
+
+
+def _axis_shifts(lines: LineProblem, state: State) -> list[tuple[str, Array]]:
+    """What each shared standard shift of an axis or a frequency does to the residuals, mT."""
+    out = []
     whole = np.cumsum([0] + [table.field.size for table in state.tables])
     for group in dict.fromkeys(map(axis_group, state.tables)):
         for source, change, key in (
@@ -158,13 +180,38 @@ def _spread(
                 if axis_group(table) == group:
                     shift[whole[n] : whole[n + 1]] = getattr(table, key)
             if shift.any():
-                row = np.zeros(count)
-                row[known] = -response @ (change * shift / scatter)[kept]
-                rows.append(row)
-                sources.append(source)
-    moved = np.array(rows).reshape(len(rows), count)
-    spread = Covariances(known, factor * white, moved.T @ moved, white, moved, tuple(sources), tuple(blind), ())
-    return spread, tuple(blind)
+                out.append((source, change * shift))
+    return out
+
+
+def _propagation(
+    lines: LineProblem, state: State, kept: Kept, scatter: Array, at_limit: Kept
+) -> tuple[Array, Callable[[Sequence[Array]], list[tuple[float | None, float | None]]]]:
+    """Return the weighted Jacobian with limits held, and how to carry it to what follows from the parameters."""
+    jacobian = np.where(at_limit, 0.0, lines.jacobian(state) / scatter[:, None])[kept]
+    left, singular, right = np.linalg.svd(jacobian * lines.steps, full_matrices=False)
+    seen = singular > _BLIND * singular.max(initial=0.0)
+    left, singular, right = left[:, seen], singular[seen], right[seen]
+    freedom = max(int(kept.sum()) - state.free.size, 1)
+    excess = _excess(lines, state, kept, scatter)
+    factor = excess if excess > 1 + _EXCESS * math.sqrt(2 / freedom) else 1.0
+    shifts = [(shift / scatter)[kept] for _, shift in _axis_shifts(lines, state)]
+
+    def propagate(slopes: Sequence[Array]) -> list[tuple[float | None, float | None]]:
+        out: list[tuple[float | None, float | None]] = []
+        for slope in slopes:
+            scaled = slope * lines.steps
+            inside = right @ scaled
+            outside = np.linalg.norm(scaled - right.T @ inside)
+            if outside > _LEAK * np.linalg.norm(scaled):
+                out.append((None, None))
+                continue
+            response = left @ (inside / singular)
+            field = math.sqrt(sum(float(response @ shift) ** 2 for shift in shifts))
+            out.append((math.sqrt(factor) * float(np.linalg.norm(response)), field))
+        return out
+
+    return jacobian, propagate
 
 
 def _quality(

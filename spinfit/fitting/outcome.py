@@ -121,6 +121,31 @@ class PositionTable:
     drawn: NDArray[np.float64]
 
 
+@dataclass(frozen=True)
+class Axis:
+    """Where a principal axis of a tensor points.
+
+    Attributes
+    ----------
+    tensor : str
+        "cu.g", "cr.D".
+    label : str
+        "x", "y", "z" as in the parameters' names, or "par".
+    cosines : (float, float, float)
+        Along x, y, z of `frame`; the largest component is positive.
+    uncertainty : tuple of float or None
+        Standard uncertainty of each component; None where the data do not determine it.
+    frame : str
+        "crystal" (of the first site) or "molecular".
+    """
+
+    tensor: str
+    label: str
+    cosines: tuple[float, float, float]
+    uncertainty: tuple[float | None, ...]
+    frame: str = "crystal"
+
+
 @dataclass(frozen=True, eq=False)
 class Outcome:
     """The result of one fit.
@@ -141,6 +166,8 @@ class Outcome:
         What accuracy was used: orientations, diagonalisations, estimated error, per trace.
     positions : tuple of PositionTable
         Of a fit of line positions, which has no curves.
+    axes : tuple of Axis
+        Directions of the principal axes of tensors that were turned.
     seconds : float
         Wall time; kept out of files that must be bit-identical.
     """
@@ -157,6 +184,7 @@ class Outcome:
     engine: Mapping[str, object] = field(default_factory=dict)
     budget: Mapping[str, Mapping[str, float]] = field(default_factory=dict)
     positions: tuple[PositionTable, ...] = ()
+    axes: tuple[Axis, ...] = ()
     message: str = ""
     seconds: float = 0.0
 

@@ -23,6 +23,7 @@ from spinfit.fitting.assignment import CAP, Calculated, assign, calculated_each,
 from spinfit.fitting.data import Lines
 from spinfit.fitting.residuals import Problem, Progress
 from spinfit.fitting.signals import true_field
+from spinfit.fitting.solve import least_squares
 from spinfit.species import Species
 from spinfit.sweep import Sample
 
@@ -177,9 +178,7 @@ class LineProblem:
             return (self.jacobian(at[0]) * self.steps / scatter[:, None])[kept]
 
         minimizer = lmfit.Minimizer(residual, params, calc_covar=False)
-        result = minimizer.minimize(
-            method="least_squares", jac=jacobian, loss=loss, ftol=1e-10, xtol=1e-9, gtol=1e-12, max_nfev=60
-        )
+        result = least_squares(minimizer, jac=jacobian, loss=loss, ftol=1e-10, xtol=1e-9, gtol=1e-12, max_nfev=60)
         return self.evaluate(free_of(result.params), scatter), bool(result.success)
 
 

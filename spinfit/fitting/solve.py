@@ -12,7 +12,9 @@ standard uncertainty.  The step itself is still taken if it helps.
 
 from __future__ import annotations
 
+import warnings
 from dataclasses import dataclass
+from typing import Any
 
 import lmfit
 import numpy as np
@@ -228,6 +230,13 @@ def _on_limits(point: Point, problem: Problem, view: View) -> Point:
     return moved if moved.chi2 <= point.chi2 + 1e-2 * per_point else point
 
 
+def least_squares(minimizer: lmfit.Minimizer, **how: Any) -> Any:
+    """Run lmfit's least squares without warnings of the covariance that it works out and nobody asks for."""
+    with warnings.catch_warnings():
+        warnings.filterwarnings("ignore", category=RuntimeWarning, module=r"lmfit\.")
+        return minimizer.minimize(method="least_squares", **how)
+
+
 def _drive(run: _Run) -> tuple[bool, str]:
     """Hand the problem to lmfit; returns only if lmfit's own criteria end the descent."""
     problem = run.problem
@@ -243,8 +252,8 @@ def _drive(run: _Run) -> tuple[bool, str]:
         high = (problem.upper[k] - run.origin[k]) / run.steps[k]
         params.add(f"p{k}", value=0.0, min=low, max=high)
     minimizer = lmfit.Minimizer(run.residual, params, calc_covar=False)
-    result = minimizer.minimize(
-        method="least_squares",
+    result = least_squares(
+        minimizer,
         jac=run.jacobian,
         x_scale=1.0,
         ftol=1e-9,

@@ -62,6 +62,7 @@ def outcome_record(outcome: Outcome, more: Mapping[str, Any] | None = None) -> d
             "quality": {key: getattr(outcome.quality, key) for key in QUALITY_KEYS},
             "correlations": {"names": outcome.correlation_names, "matrix": outcome.correlation_matrix},
             "budget": outcome.budget,
+            **({"axes": [asdict(axis) for axis in outcome.axes]} if outcome.axes else {}),
             "warnings": [{"code": note.code, "text": note.text} for note in outcome.warnings],
             "provenance": {
                 "name": outcome.name,

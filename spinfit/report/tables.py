@@ -55,6 +55,7 @@ def fixed_line(outcome: Outcome) -> str:
         f"{name} = {short(value.value)} {value.unit}".rstrip()
         for name, value in outcome.parameters.items()
         if not (value.varied or value.tied or value.derived)
+        and not (outcome.positions and not outcome.curves and ".width." in name)
         and value.value != _NEUTRAL.get(name.rpartition(".")[2], 0.0)
     ]
     return wrapped("held fixed: " + ", ".join(fixed)) if fixed else ""
@@ -66,6 +67,17 @@ def effective_table(outcome: Outcome) -> str:
     values = aligned([with_uncertainty(row["value"], row["uncertainty"]) for row in found])
     rows = [[str(row["name"]), text, str(row["unit"])] for row, text in zip(found, values, strict=True)]
     return table(["in other units", "value", "unit"], rows, left=(0, 2)) if rows else ""
+
+
+def axes_table(outcome: Outcome) -> str:
+    """Return the directions of tensors' axes as direction cosines; may be empty."""
+    if not outcome.axes:
+        return ""
+    rows = []
+    for axis in outcome.axes:
+        shown = [with_uncertainty(v, u) for v, u in zip(axis.cosines, axis.uncertainty, strict=True)]
+        rows.append([f"{axis.tensor} {axis.label}", *shown])
+    return table([f"axis, cosines to {outcome.axes[0].frame}", "x", "y", "z"], rows, left=(0, 1, 2, 3))
 
 
 def fraction_table(outcome: Outcome) -> str:
@@ -132,6 +144,7 @@ def outcome_lines(outcome: Outcome) -> str:
         f"{outcome.name}: {traces}" if traces else outcome.name,
         parameter_table(outcome),
         effective_table(outcome),
+        axes_table(outcome),
         fraction_table(outcome),
         fixed_line(outcome),
         quality_lines(outcome),
