@@ -13,7 +13,7 @@ from spinfit.fitting.parameters import Parameter, expand_vary, members
 from spinfit.fitting.ties import compile_ties
 
 FIT_KEYS = ("vary", "start", "limits", "tie", "loss", "loss_scale")
-STARTS = ("given", "auto")
+STARTS = ("given", "near", "auto")
 _EXAMPLE = 'vary = ["cu.g", "cu.width.gaussian"]'
 
 
@@ -51,7 +51,7 @@ def read_fit(data: object, parameters: Mapping[str, Parameter]) -> FitTable:
     single = expand_vary(vary, parameters)
     ties = flatten(table.table("tie") or {}, "fit.tie")
     compiled = compile_ties(ties, parameters, varied=single)
-    limits = _limits(flatten(table.table("limits") or {}, "fit.limits"), parameters, check_start=start == "given")
+    limits = _limits(flatten(table.table("limits") or {}, "fit.limits"), parameters, check_start=start != "auto")
     for name in limits:
         if name in ties:
             found = f'"{name}" is tied and cannot have limits of its own'

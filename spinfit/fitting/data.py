@@ -154,7 +154,7 @@ class Job:
     ties : mapping of name -> expression
         Arithmetic on parameter names, text; numbers in the unit of the job.
     start : str
-        "given" or "auto".
+        "given", "near" (straight down from the start, nothing else is tried) or "auto".
     units : mapping of name -> unit
         The unit in which the job gave each parameter ("" for a plain number); outcomes use it.
     text : str

@@ -63,7 +63,7 @@ def fit(job: Job, *, progress: Progress | None = None, simulate: Simulate = _eng
     begun = time.perf_counter()
     if job.lines:
         try:
-            return fit_lines(job, progress=progress, simulate=simulate)
+            return fit_lines(job, progress=progress, simulate=simulate, wide=job.start != "near")
         except InputError as error:
             raise error.at(file=job.path or None) from None
     if not job.traces:
@@ -102,7 +102,10 @@ def _search(problem: Problem, rough: View, progress: Progress | None) -> tuple[D
             check_lines(problem, problem.evaluate(problem.start, rough), rough)
             if is_robust(problem):
                 search.view = forgiving(problem, rough, search.goal, progress)
-        found = search.run(problem.start, automatic=automatic)
+        if problem.job.start == "near":
+            found = search.best = descend(problem, search.view, problem.start, goal=search.goal, progress=progress)
+        else:
+            found = search.run(problem.start, automatic=automatic)
         view = full_view(problem.job.traces, problem.noises, engine_tolerance(problem))
         fine = descend(problem, view, found.point.free, goal=Goal(central=True), progress=progress)
         if not automatic:
