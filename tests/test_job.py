@@ -288,7 +288,7 @@ FILE = 'file = "data/kiln-07.csv"'
         ('vary = ["cr.g"]', 'vary = ["cr.gz"]', 'fit.vary: "cr.gz" is no parameter of this model; did you mean "cr.g'),
         ('vary = ["cr.g"]', 'vary = ["cr.amount"]', 'fit.vary: "cr.amount" cannot be varied; the scale is free'),
         ('vary = ["cr.g"]', 'vary = ["cr.D", "cr.B2_0"]', 'fit.vary: "cr.D" and "cr.B2_0" act alike'),
-        ('vary = ["cr.g"]', 'vary = ["cr.g"]\nstart = "guess"', 'fit.start: "guess" is not known; write "given", "auto"'),
+        ('vary = ["cr.g"]', 'vary = ["cr.g"]\nstart = "guess"', 'fit.start: "guess" is not known; write "given", "near", "auto"'),
         ('vary = ["cr.g"]', 'vary = ["cr.g"]\nmethod = "x"', 'fit: unknown key "method"'),
         ('vary = ["cr.g"]', 'vary = ["cr.g"]\nlimits = 3', "fit.limits: 3 is not a table; write [fit.limits]"),
         ('["cr.g"]', '["cr.g"]\n[fit.limits]\n"cr.g_z" = [2.1, 2.4]', "fit.limits.cr.g_z: the start, 1.984, is outside the limits 2.1 to"),
