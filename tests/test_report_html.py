@@ -16,11 +16,13 @@ from scipy import constants
 from spinfit.fitting.data import Job, Trace
 from spinfit.fitting.outcome import Note, PositionTable, Quality, Value
 from spinfit.fitting.resample import Bootstrap, Profile
+from spinfit.fitting.sampling import Posterior
 from spinfit.ion.defaults import default_model
 from spinfit.ion.species_field import species_field, spin_of
 from spinfit.report.beside import setting_rows
 from spinfit.report.html import report_text
 from spinfit.report.svg import Panel, span, thinned, tick_texts, ticks
+from spinfit.report.svg_figures import histogram_drawing
 from spinfit.species import Nucleus, Species, Spin, Width
 from spinfit.sweep import Sample
 
@@ -49,6 +51,12 @@ def refitted() -> Bootstrap:
     return Bootstrap(("cu.g_perp", "cu.63Cu.A_par"), ("", "MHz"), draws, 1)
 
 
+def sampled() -> Posterior:
+    draws = np.random.default_rng(4).normal(size=(400, 2)) @ np.array([[1.0, 0.9], [0.0, 0.4]])
+    draws = draws * [0.0001, 2.3] + [2.04123, -540.3]
+    return Posterior(("cu.g_perp", "cu.63Cu.A_par"), ("", "MHz"), draws, 40, 20, 20, np.array([3.0, 4.0]), 0.4, 1.0)
+
+
 def lines(name="turned") -> PositionTable:
     angle = np.deg2rad(np.arange(0.0, 181.0, 20.0))[:, None]
     fitted = 330 + 20 * np.cos(2 * angle[:, 0])
@@ -64,13 +72,14 @@ def everything(name="kiln-07", **changes) -> str:
         "cu", (Spin(0.5, (2.05, 2.25)),), (Nucleus("63Cu", A=(-30.0, -500.0)),), width=Width(1.0), ion="Cu2+"
     )
     found = outcome(name=name, positions=(lines(),), **changes)
-    return report_text(found, job=job(named), profiles=(profiled(),), resampled=refitted())
+    return report_text(found, job=job(named), profiles=(profiled(),), resampled=refitted(), posterior=sampled())
 
 
 def test_a_page_is_whole_loads_nothing_and_says_everything():
     page = Page(everything())
     page.check()
-    for word in ("kiln-07", "2.0412(3)", "-540(2)", "held fixed", "lower limit of 0.8 mT", 'file = "kiln-07.csv"',
+    for word in ("draws", "68 %", "kiln-07", "2.0412(3)", "-540(2)", "held fixed", "lower limit of 0.8 mT",
+                 'file = "kiln-07.csv"',
                  "g at 9.4321 GHz", "magnetic field / mT", "residual", "rise of χ²", "refits", "angle / deg",
                  "cu.g_perp and cu.63Cu.A_par: -0.950", "0.909(10)", "sha256"):  # fmt: skip
         assert word in page.text, word
@@ -86,6 +95,25 @@ def test_uncertainties_are_shown_with_what_they_are_made_of():
     assert [float(width) for width in re.findall(r'width="([\d.]+)"', row)] == pytest.approx([13, 0, 117, 0], abs=0.1)
     derived = {"cu.g_z": Value(2.3, 0.005, 0.003, 0.004, derived=True)}
     assert "<td>0.0030</td><td></td><td>0.0040 (both)</td>" in report_text(outcome(parameters=derived))
+
+
+def test_histograms_stand_beside_what_the_fit_expects():
+    """All draws are in the histogram; the bell holds as many under it."""
+    values = np.random.default_rng(1).normal(5.0, 0.5, 2000)
+    picture = histogram_drawing("x / mT", values, (4.5, 5.5), (5.0, 0.5), "draws")
+    (y,) = re.findall(r'data-y="([^"]*)"', picture)
+    top, height = float(y.split()[1]), 128.0
+    (steps,) = re.findall(r'class="part-0" d="([^"]*)"', picture)
+    points = np.array([[float(v) for v in word.split(" ")] for word in re.split("[ML]", steps) if word])
+    counts = (height - points[1:-1:2, 1]) / height * top
+    assert counts.sum() == pytest.approx(2000, rel=1e-3)
+    (bell,) = re.findall(r'class="fitted thin" d="([^"]*)"', picture)
+    points = np.array([[float(v) for v in word.split(" ")] for word in re.split("[ML]", bell) if word])
+    area = np.trapezoid((height - points[:, 1]) / height * top, points[:, 0])
+    width = (points[-1, 0] - points[0, 0]) / 8 / 0.5  # units of the drawing to one of x: 8 deviations of 0.5 are drawn
+    step = np.ptp(values) / 40
+    assert area / width / step == pytest.approx(2000, rel=0.01)
+    assert "fitted" not in histogram_drawing("x", values, (4.5, 5.5), (5.0, None), "draws")
 
 
 def test_warnings_come_before_the_picture():

@@ -19,12 +19,15 @@ from spinfit.report.numbers import short, small, with_uncertainty
 from spinfit.report.outcome_json import clean
 from spinfit.report.page import Raw, document, listed, paragraph, section, table
 from spinfit.report.svg_figures import (
-    bootstrap_drawing,
     fit_drawing,
     g_drawing,
     heat_map,
+    histogram_drawing,
+    legend,
+    pair_drawing,
     positions_drawing,
     profile_drawing,
+    swatch,
 )
 from spinfit.report.tables import STRONG, remark, strong_correlations
 from spinfit.report.tried import (
@@ -44,6 +47,7 @@ MOST_TRACES = 12
 MOST_CORRELATED = 24
 """Parameters in the map of correlations."""
 MOST_HISTOGRAMS = 24
+MOST_PAIRS = 4
 
 # Warnings that tell what the data leave open, by their codes; all others are about the measurement or the fit.
 LEFT_OPEN = (
@@ -202,7 +206,43 @@ def _posterior(outcome: Outcome, posterior: Posterior | None) -> str:
     if posterior is None:
         return ""
     rows = table(POSTERIOR_HEADINGS, posterior_rows(posterior, outcome), left=(0, 1))
-    return "<h3>Posterior</h3>" + rows + paragraph(posterior_sentence(posterior) + ".", "quiet")
+    text = "<h3>Posterior</h3>" + rows + paragraph(posterior_sentence(posterior) + ".", "quiet")
+    return text + _histograms(outcome, posterior, posterior.quantiles[:, [1, 3]], "draws") + _pairs(posterior)
+
+
+def _labels(found: Bootstrap | Posterior) -> list[str]:
+    pairs = zip(found.names, found.units, strict=True)
+    return [f"{name} / {unit}" if unit else name for name, unit in pairs]
+
+
+def _histograms(outcome: Outcome, found: Bootstrap | Posterior, ends: np.ndarray, counted: str) -> str:
+    """Return a histogram of each parameter, beside what the fit expects of the noise."""
+    figures = []
+    for k, label in enumerate(_labels(found)[:MOST_HISTOGRAMS]):
+        own = outcome.parameters[found.names[k]]
+        expected = (own.value, own.uncertainty_noise)
+        drawn = histogram_drawing(label, found.values[:, k], ends[k], expected, counted)
+        figures.append(f"<figure>{drawn}</figure>")
+    keys = [swatch("part-0", counted), swatch("fitted", "noise part of the fit"), swatch("guide dashed", "68 %")]
+    return legend(keys) + f'<div class="several">{"".join(figures)}</div>'
+
+
+def _pairs(posterior: Posterior) -> str:
+    """Return draws of the pairs of parameters that hang together most; banana shapes show here only."""
+    count = len(posterior.names)
+    if count < 2 or len(posterior.values) < 3:
+        return ""
+    with np.errstate(invalid="ignore", divide="ignore"):  # a parameter that never moved
+        matrix = np.nan_to_num(np.corrcoef(posterior.values.T))
+    one, two = np.triu_indices(count, 1)
+    order = np.argsort(-np.abs(matrix[one, two]), kind="stable")[:MOST_PAIRS]
+    labels = _labels(posterior)
+    figures = [
+        f"<figure>{pair_drawing((labels[one[n]], labels[two[n]]), posterior.values[:, [one[n], two[n]]])}</figure>"
+        for n in order
+    ]
+    said = paragraph("Draws of the pairs that hang together most:", "quiet")
+    return said + f'<div class="several">{"".join(figures)}</div>'
 
 
 def _tried(outcome: Outcome, profiles: Sequence[Profile], resampled: Bootstrap | None) -> str:
@@ -219,9 +259,7 @@ def _tried(outcome: Outcome, profiles: Sequence[Profile], resampled: Bootstrap |
         return text + paragraph(f"None of {resampled.failed} refits converged.", "bad")
     text += table(BOOTSTRAP_HEADINGS, bootstrap_rows(resampled, outcome), left=(0, 1))
     text += paragraph(f"{len(resampled.values)} refits; {resampled.failed} more did not converge.", "quiet")
-    drawn = range(min(len(resampled.names), MOST_HISTOGRAMS))
-    figures = "".join(f"<figure>{bootstrap_drawing(resampled, k)}</figure>" for k in drawn)
-    return text + f'<div class="several">{figures}</div>'
+    return text + _histograms(outcome, resampled, resampled.interval(), "refits")
 
 
 def _quality(outcome: Outcome) -> str:

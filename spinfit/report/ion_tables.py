@@ -16,7 +16,7 @@ from spinfit.ion.names import half
 from spinfit.ion.quench import QuenchRow
 from spinfit.ion.tensors import DoubletG
 from spinfit.report.layout import table, wrapped
-from spinfit.report.numbers import with_uncertainty
+from spinfit.report.numbers import short, with_uncertainty
 from spinfit.units import MHZ_PER_WAVENUMBER
 
 AXES = ("x", "y", "z")
@@ -104,7 +104,7 @@ def quench_remarks(row: QuenchRow) -> list[str]:
     if row.crystal_field:
         lines.append(f"{name}: crystal field: {row.crystal_field}")
     if row.levels:
-        listed = ", ".join(f"{e / MHZ_PER_WAVENUMBER:.4g} ({n})" for e, n in row.levels)
+        listed = ", ".join(f"{short(e / MHZ_PER_WAVENUMBER, 4)} ({n})" for e, n in row.levels)
         lines.append(f"{name}: lowest levels / cm^-1 (states): {listed}")
     if row.kind == "doublet":
         lines.append(f"{name}: crystal-field g is that of the ground doublet, effective spin 1/2")

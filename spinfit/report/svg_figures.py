@@ -8,7 +8,7 @@ from html import escape
 import numpy as np
 
 from spinfit.fitting.outcome import Curves, PositionTable
-from spinfit.fitting.resample import Bootstrap, Profile
+from spinfit.fitting.resample import Profile
 from spinfit.ion.quench import QuenchRow
 from spinfit.report import style
 from spinfit.report.plots import FIELD_LABEL, SIGNAL_NAMES, g_texts, g_ticks, power_of_unit
@@ -167,19 +167,51 @@ def profile_drawing(one: Profile) -> str:
     return drawing(width, height, [panel], f"rise of chi-squared against {one.name}")
 
 
-def bootstrap_drawing(one: Bootstrap, index: int) -> str:
-    """Return the histogram of one parameter's values over the refits."""
-    values = one.values[:, index]
+def histogram_drawing(
+    label: str, values: np.ndarray, ends: Sequence[float], expected: tuple[float, float | None], counted: str
+) -> str:
+    """Return the histogram of a parameter's values, with the bell that the fit itself expects.
+
+    Parameters
+    ----------
+    label : str
+        Name and unit.
+    values : ndarray, shape (n,)
+    ends : (low, high)
+        Of the interval to mark.
+    expected : (value, uncertainty)
+        Of the fit, from the noise; no bell without an uncertainty.
+    counted : str
+        What is counted: "refits", "draws".
+    """
     width, height = 370.0, 190.0
-    counts, edges = np.histogram(values, bins=int(np.clip(np.sqrt(len(values)), 5, 30)))
-    name = f"{one.names[index]} / {one.units[index]}" if one.units[index] else one.names[index]
-    panel = Panel(64, 10, width - 78, height - 62, span(edges, room=0.04), (0.0, 1.08 * float(counts.max())))
+    counts, edges = np.histogram(values, bins=int(np.clip(np.sqrt(len(values)), 5, 40)))
+    top = float(counts.max())
+    value, sigma = expected
+    x, bell = np.zeros(0), np.zeros(0)
+    if sigma is not None and np.isfinite(value) and 0 < sigma < 30 * float(np.ptp(edges)):
+        x = value + sigma * np.linspace(-4, 4, 81)
+        area = len(values) * float(edges[1] - edges[0])
+        bell = area * np.exp(-0.5 * ((x - value) / sigma) ** 2) / (sigma * np.sqrt(2 * np.pi))
+        top = max(top, min(float(bell.max()), 2 * top))
+    panel = Panel(64, 10, width - 78, height - 62, span(edges, room=0.04), (0.0, 1.08 * top))
     panel.line(np.repeat(edges, 2), np.concatenate(([0], np.repeat(counts, 2), [0])), "part-0")
-    for end in one.interval()[index]:
+    panel.line(x, bell, "fitted thin")
+    for end in ends:
         panel.upright_line(float(end), "guide dashed")
-    panel.y_axis("refits", most=4)
-    panel.x_axis(name, values=_few(panel))
-    return drawing(width, height, [panel], f"histogram of {one.names[index]} over the refits")
+    panel.y_axis(counted, most=4)
+    panel.x_axis(label, values=_few(panel))
+    return drawing(width, height, [panel], f"histogram of {label} over the {counted}")
+
+
+def pair_drawing(labels: tuple[str, str], values: np.ndarray) -> str:
+    """Return draws of two parameters against each other, shape (n, 2): at most a thousand of them."""
+    kept = values[:: max(1, len(values) // 1000)]
+    panel = Panel(96, 10, 262, 190, span(kept[:, 0], room=0.04), span(kept[:, 1], room=0.04))
+    panel.dots(kept[:, 0], kept[:, 1], "part-0 fine")
+    panel.y_axis(labels[1], most=5)
+    panel.x_axis(labels[0], values=_few(panel))
+    return drawing(372, 252, [panel], f"draws of {labels[1]} against {labels[0]}")
 
 
 def _few(panel: Panel) -> list[float]:
