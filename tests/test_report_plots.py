@@ -53,11 +53,12 @@ def test_what_is_drawn_is_what_was_found():
     np.testing.assert_allclose(residual[found.used], found.residual[found.used] / found.noise)
 
 
-def test_no_text_overlaps_on_the_field_axis():
-    """At a Q-band window the labels are long: 1212.5."""
+@pytest.mark.parametrize(("window", "frequency"), [((1204.0, 1226.0), 34079.0), ((12101.0, 12147.5), 340000.0)])
+def test_no_text_overlaps_on_the_field_axis(window, frequency):
+    """At high frequencies the labels are long: 1212.5, or 12112.5."""
     base = curves()
-    field = np.linspace(1204.0, 1226.0, base.field.size)
-    figure = fit_figure(outcome(type(base)(**{**vars(base), "field": field, "frequency": 34079.0})))
+    field = np.linspace(*window, base.field.size)
+    figure = fit_figure(outcome(type(base)(**{**vars(base), "field": field, "frequency": frequency})))
     figure.set_dpi(style.DOTS_PER_INCH)
     with style.styled():
         FigureCanvasAgg(figure).draw()
