@@ -219,7 +219,7 @@ class FieldNodes:
             error = (error * np.clip(STEEP / np.maximum(steep, 1e-9), 1.0, FLATTEST)).max(axis=1)
             # strengths have no slopes to follow them by: their bend, squared, is what a polynomial may miss
             bend = np.where(reach, np.abs(s_m - 0.5 * (s_a + s_b)), 0.0)
-            missed = bend * bend / (np.maximum(strength, 1e-300) * strength.max(initial=1e-300, where=reach))
+            missed = bend * bend / np.maximum(strength * strength.max(initial=0.0, where=reach), 1e-300)
             bad = error > accuracy
             bent = missed.max(axis=1).mean() > 0.25 * self.request.tolerance
             # deep down only knots on symmetry axes are left, where a true crossing has no width

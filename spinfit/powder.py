@@ -16,7 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spinfit import kernels
-from spinfit.branches import Branches, Request
+from spinfit.branches import Branches, KnotData, Request
 from spinfit.exact import Lines, deposit
 from spinfit.hamiltonian import System
 from spinfit.knots import Knots, settle
@@ -132,9 +132,28 @@ def powder(
     report.rings, report.estimated_error = knots.rings.rings, math.hypot(knots.error, error)
     report.directions, report.diagonalisations = knots.directions, knots.diagonalisations
     report.pairs, report.looping = len(knots.branches.pair), int(knots.other.sum())
+    if _meets_zero_field(knots.data, request):
+        report.notes.append("levels are h nu apart at zero field, where a powder spectrum diverges: it is rough there")
     if keep is not None:
         keep.append(Average(symmetry, request, knots, meshes, loops, histograms))
     return histograms, report
+
+
+def _meets_zero_field(data: KnotData, request: Request) -> bool:
+    """Whether a pair of levels that matters is resonant at zero field within a few line widths.
+
+    There the field of resonance goes as distance over the slope along the field, which has no lower
+    bound over the sphere: the intensity diverges with the logarithm of the distance.
+    """
+    if request.low > ZERO_FIELD or not len(data.fields):
+        return False
+    near = np.abs(data.gap[:, 0]).max(axis=1) < NEAR_ZERO * request.scale
+    strength = np.abs(data.strength[:, 0]).max(axis=1)
+    return bool((near & (strength > 0.01 * np.abs(data.strength).max(initial=0.0))).any())
+
+
+NEAR_ZERO = 30.0
+"""MHz/mT: two line widths of a free spin's pair, times their distance that matters."""
 
 
 def _one_direction(

@@ -37,8 +37,8 @@ its turning points are too coarse for a smear.
 """
 ONSET = 0.3
 """Square of the distance, in units of `Grain.close`, at which half of the smear is in force."""
-SMEAR_REACH = 4.0
-"""How far a smear reaches, in units of itself."""
+SMEAR_REACH = 7.0
+"""How far a smear reaches, in units of itself: a window without features feels what is cut off beyond it."""
 
 
 def smear_for(apart: Array, close: float, smear: float) -> Array:

@@ -231,16 +231,58 @@ def _part(
         if kept is not None:
             kept.append(Kept(one, sweep, sample, angles, request, shape, grid, fields, every, averages, totals))
         return np.array([grid.sample(grid.render(t, shape), fields) for t in totals]), used, said
-    total = 0.0
+    total, reports = _powders(every, widths, request, grid, averages)
+    said = _misgivings(one, reports, tolerance)
+    if _featureless(total, grid, scale, fields) and not any(report["looping"] for report in reports):
+        averages.clear()
+        close = tolerance * CLOSER
+        closer = replace(request, tolerance=close, grain=Grain.of(shape, close))
+        again, reports = _powders(every, widths, closer, grid, averages)
+        here, there = (grid.sample(grid.render(t, shape), fields) for t in (total, again))
+        total, request, said = again, closer, _misgivings(one, reports, tolerance)
+        error = GAINED * float(np.abs(here - there).max() / max(np.abs(there).max(), 1e-300))
+        if error > tolerance and not said:
+            text = f"{one.name}: the window holds no features; the spectrum in it may err by {error:.1g} of its top"
+            said = (("accuracy", text),)
+    if kept is not None:
+        kept.append(Kept(one, sweep, sample, angles, request, shape, grid, fields, every, averages, [total]))
+    said = (*treatment.warnings, *said)
+    return grid.sample(grid.render(total, shape), fields)[None], _used(reports, treatment), said
+
+
+FEATURELESS = 0.02
+"""Top of the derivative, relative to a single line's with the same absorption, below which a window holds no
+features: what errors are small beside is then missing."""
+CLOSER = 1e-3
+"""Share of the tolerance with which such a window is computed again."""
+GAINED = 0.02
+"""Share of the first error that is left then, at the most."""
+
+
+def _featureless(total: NDArray[np.complex128], grid: FieldGrid, scale: float, fields: Array) -> bool:
+    """Whether a spectrum is far flatter in its window than its lines are."""
+    absorption, derivative = (
+        np.abs(grid.sample(grid.render(total, Shape(scale, 0.0, detect)), fields)).max()
+        for detect in ("absorption", "derivative")
+    )
+    return bool(derivative * scale < FEATURELESS * absorption)
+
+
+def _powders(
+    every: tuple[System, ...],
+    widths: Sequence[Broadening | None],
+    request: Request,
+    grid: FieldGrid,
+    averages: list[Average | Lines],
+) -> tuple[NDArray[np.complex128], list[dict[str, object]]]:
+    """Return the transform of all systems' resonances, and what was used for each."""
+    total: NDArray[np.complex128] | float = 0.0
     reports = []
     for system, own in zip(every, widths, strict=True):
         histograms, report = powder(system, replace(request, broadening=own), grid, keep=averages)
         reports.append({"label": system.label, **vars(report)})
         total = total + system.weight * histograms.transform()
-    if kept is not None:
-        kept.append(Kept(one, sweep, sample, angles, request, shape, grid, fields, every, averages, [total]))
-    said = (*treatment.warnings, *_misgivings(one, reports, tolerance))
-    return grid.sample(grid.render(total, shape), fields)[None], _used(reports, treatment), said
+    return total, reports
 
 
 def _oriented(
@@ -277,7 +319,8 @@ def _misgivings(one: Species, reports: list[dict[str, object]], tolerance: float
     error = max(float(report["estimated_error"]) for report in reports)
     if error > 1.5 * tolerance:
         said.append(("accuracy", f"{one.name}: the spectrum may err by {error:.1g} of its top, not {tolerance:g}"))
-    return tuple(said)
+    notes = dict.fromkeys(text for report in reports for text in report["notes"])
+    return (*said, *(("accuracy", f"{one.name}: {text}") for text in notes))
 
 
 def _used(reports: list[dict[str, object]], treatment: Treatment) -> dict[str, object]:

@@ -214,7 +214,8 @@ def test_lines_of_many_nuclei_are_those_of_the_strong_ones(here, capsys):
         found.append(json.loads(out))
         said.append(err)
     assert found[0] == found[1]
-    assert said[0] == "" and "19 1H split every line further" in said[1]
+    assert said[0] == ""
+    assert "19 1H split every line further" in said[1]
 
 
 def test_lines_refuses(here, run):
