@@ -34,8 +34,8 @@ GOOD_HALF = 1.5e-3
 """Error of the spectrum by every second ring up to which its changes are taken from these alone."""
 GOOD_HALF_LOOPING = 2.5e-4
 """The same where there are pairs of levels without a branch."""
-LOOP_SHIFT = 1e-3
-"""Line widths by which pairs of levels without a branch are moved for a difference."""
+LOOP_SHIFT = 0.3
+"""Line widths by which flat pairs of levels without a branch are moved either way for a difference."""
 LARGEST = 2_000_000
 """Numbers held for a block of branches."""
 
@@ -92,7 +92,9 @@ def _loop_changes(
     """Return how the transform of a pair of levels without a branch changes, to first order.
 
     Its sums are smooth in the level difference, so that the difference of two of them on one mesh is a
-    derivative.  The mesh is every second point of the spectrum's own.
+    derivative.  The mesh is every second point of the spectrum's own.  What is left of its grain moves
+    with the parameter, too, and much faster than the lines: the two are therefore as far apart as the
+    width of the lines allows.
 
     Parameters
     ----------
@@ -115,17 +117,14 @@ def _loop_changes(
         add_looping(histograms, land, request, step)
         return histograms.transform()
 
-    here, start = transform(land), on_mesh(crossings.like(before), rings)
+    start = on_mesh(crossings.like(before), rings)
     out = []
     for one in after:
         change = on_mesh(crossings.like(one), rings) - start
         largest = np.abs(change[0]).max()
-        if not change.any():
-            out.append(np.zeros_like(here))
-            continue
-        # so far that rounding does not matter, and so little that it is a derivative
         factor = LOOP_SHIFT * FLAT * request.scale / largest if largest > 0 else 1.0
-        out.append((transform(Landscape.of(fields, leaves, values + factor * change, mesh)) - here) / factor)
+        sides = [transform(Landscape.of(fields, leaves, values + s * factor * change, mesh)) for s in (1, -1)]
+        out.append((sides[0] - sides[1]) / (2 * factor))
     return out
 
 
