@@ -16,10 +16,10 @@ from spinfit.fitting.lines_outcome import fit_lines
 from spinfit.fitting.outcome import Note, Outcome
 from spinfit.fitting.residuals import Problem, Progress, View, full_view
 from spinfit.fitting.robust import forgiving, is_robust, robust_notes, settle
+from spinfit.fitting.search import Search
 from spinfit.fitting.signals import Simulate
 from spinfit.fitting.signs import restored
 from spinfit.fitting.solve import Descent, Goal, Interrupted, descend
-from spinfit.fitting.starts import Search
 from spinfit.fitting.summary import outcome_of
 from spinfit.fitting.uncertainty import spread_of
 from spinfit.fitting.warn import check_before, check_lines, notes_after

@@ -21,7 +21,6 @@ from scipy.stats import qmc
 
 from spinfit.errors import InputError
 from spinfit.fitting.data import Trace
-from spinfit.fitting.noise import residual_noise
 from spinfit.fitting.parameters import Parameter
 from spinfit.fitting.residuals import Point, Problem, Progress, View, broadened_view
 from spinfit.fitting.signals import narrowest_width
@@ -32,29 +31,19 @@ from spinfit.units import g_of
 Array = NDArray[np.float64]
 
 # The first broadening is this part of the sweep; each next one is narrower by the factor.
-_WIDEST = 1 / 12
-_NARROWING = 2.5
+WIDEST = 1 / 12
+NARROWING = 2.5
 # Of a broadened trace only positions are asked, not details.
-_COARSE_TOLERANCE = 1e-2
-_COARSE_GOAL = Goal(gain=0.3, evaluations=25)
+COARSE_TOLERANCE = 1e-2
+COARSE_GOAL = Goal(gain=0.3, evaluations=25)
 _SCREENED = 64
-# Two descents whose chi-squared differ by less than this part ended at the same or an equivalent minimum.
-_SAME = 1e-3
 _SEED = 20240229
-# A descent is good below this chi-squared per degree of freedom, which the estimate of the noise leaves
-# uncertain by some per cent, or when no more than this part of the trace's sum of squares is unexplained.
-_AT_NOISE = 1.2
-_LITTLE = 0.05
 # Engine error of a scan, in units of the noise.
 _SCAN_ERROR = 0.3
-# Standard deviations from which something in the residuals is no chance: 1 in 10^7 of one place.
-_STANDS_OUT = 5.3
-_MEDIAN_OF_NORMAL = 0.6745
-# Scans of single parameters for another basin: points on either side, how far the promise must go
-# below the present chi-squared, and how many times in a row such a promise is followed.
+# Scans of single parameters for another basin: points on either side, and how far the promise must go
+# below the present chi-squared.
 _SCAN_POINTS = 12
 _PROMISE = 0.98
-_MOST_MOVES = 4
 # Parameters that shape lines and do not move them: held while the view is broader than the lines.
 _SHAPES = (".width.", ".spread.", ".phase")
 
@@ -65,7 +54,7 @@ def explained(point: Point, view: View) -> float:
     return 1 - point.chi2 / total if total > 0 else 0.0
 
 
-def broadenings(problem: Problem, free: Array, widest: float = _WIDEST) -> list[float]:
+def broadenings(problem: Problem, free: Array, widest: float = WIDEST) -> list[float]:
     """Peak-to-peak widths from a part of the sweep down to the lines' own, mT."""
     species, _, traces = problem.model(free)
     span = max(float(np.ptp(trace.field[trace.used])) for trace in traces)
@@ -74,7 +63,7 @@ def broadenings(problem: Problem, free: Array, widest: float = _WIDEST) -> list[
     width = span * widest
     while width > 1.2 * end:
         out.append(width)
-        width /= _NARROWING
+        width /= NARROWING
     return out
 
 
@@ -84,7 +73,7 @@ def shapes_of(names: Sequence[str]) -> NDArray[np.bool_]:
 
 
 def coarse_to_fine(
-    problem: Problem, start: Array, *, progress: Progress | None = None, widest: float = _WIDEST
+    problem: Problem, start: Array, *, progress: Progress | None = None, widest: float = WIDEST
 ) -> Array:
     """Follow the minimum from a broadened trace and model to nearly the real ones.
 
@@ -96,11 +85,11 @@ def coarse_to_fine(
     free = start
     held = shapes_of(problem.names)
     for broadening in broadenings(problem, start, widest):
-        view = broadened_view(problem.job.traces, problem.noises, broadening, _COARSE_TOLERANCE)
+        view = broadened_view(problem.job.traces, problem.noises, broadening, COARSE_TOLERANCE)
         if view.points <= view.linear + free.size:
             continue
         fixed = held if not held.all() else np.zeros_like(held)
-        free = descend(problem, view, free, goal=_COARSE_GOAL, held=fixed, progress=progress).point.free
+        free = descend(problem, view, free, goal=COARSE_GOAL, held=fixed, progress=progress).point.free
     return free
 
 
@@ -118,10 +107,10 @@ def reach_of(parameter: Parameter, wide: bool) -> tuple[str, float]:
     return "add", (10 if wide else 3) * parameter.scale
 
 
-def draws(problem: Problem, start: Array, count: int, *, wide: bool) -> Array:
+def draws(problem: Problem, start: Array, count: int, *, wide: bool, seed: int = 0) -> Array:
     """Candidates around a start, shape (count, k), from a seeded Sobol sequence."""
     k = start.size
-    unit = qmc.Sobol(k, scramble=True, rng=np.random.default_rng(_SEED)).random(count) * 2 - 1
+    unit = qmc.Sobol(k, scramble=True, rng=np.random.default_rng(_SEED + seed)).random(count) * 2 - 1
     out = np.empty((count, k))
     for column, name in enumerate(problem.names):
         parameter = problem.parameters[name]
@@ -134,7 +123,7 @@ def draws(problem: Problem, start: Array, count: int, *, wide: bool) -> Array:
     return np.clip(out, problem.lower, problem.upper)
 
 
-def _tell(problem: Problem, best: Point, progress: Progress | None) -> None:
+def tell(problem: Problem, best: Point, progress: Progress | None) -> None:
     """Report that a scan is under way; the best values are those from before it."""
     if progress is not None:
         progress(problem.evaluations, best.chi2, problem.in_job_units(best.free))
@@ -149,16 +138,16 @@ def candidates(
         return []
     found: list[tuple[float, int, Array]] = []
     tried = [start, *draws(problem, start, _SCREENED, wide=wide)]
-    for number, free in enumerate(itertools.chain(tried, _from_turning_points(problem, start))):
+    for number, free in enumerate(itertools.chain(tried, from_turning_points(problem, start))):
         for view in views:
             try:
                 point = problem.evaluate(free, view)
             except InputError:  # the draw stands where the model has no meaning
                 continue
-            _tell(problem, point, progress)
+            tell(problem, point, progress)
             found.append((point.chi2 / max(sum(float(s.rest @ s.rest) for s in view.seen), 1e-300), number, free))
     found.sort(key=lambda item: item[:2])
-    spans = np.array([_span(problem.parameters[n], v) for n, v in zip(problem.names, start, strict=True)])
+    spans = np.array([span_of(problem.parameters[n], v) for n, v in zip(problem.names, start, strict=True)])
     kept: list[Array] = []
     for _, _, free in found:
         if all(np.max(np.abs(free - other) / spans) > 1.0 for other in kept):
@@ -178,24 +167,25 @@ def neighbours(problem: Problem, view: View, descent: Descent, *, progress: Prog
     """
     if descent.jacobian is None:
         return []
-    tolerance = max(view.stage.tolerance, min(problem.tolerance(_SCAN_ERROR), _COARSE_TOLERANCE))
+    tolerance = max(view.stage.tolerance, min(problem.tolerance(_SCAN_ERROR), COARSE_TOLERANCE))
     view = replace(view, stage=replace(view.stage, tolerance=tolerance))
     best = problem.evaluate(descent.point.free, view)
     found: list[tuple[float, int, Array]] = []
-    for index in map(int, np.flatnonzero(~shapes_of(problem.names) & ~_amounts(problem.names))):
+    for index in map(int, np.flatnonzero(~shapes_of(problem.names) & ~amounts_of(problem.names))):
         for number, value in enumerate(_scan(problem, best.free[index], index)):
             try:
                 chi2, free = _promise(problem, view, best, descent.jacobian, index, value)
             except InputError:  # the model has no meaning there
                 continue
-            _tell(problem, best, progress)
+            tell(problem, best, progress)
             if chi2 < _PROMISE * best.chi2:
                 found.append((chi2, 100 * index + number, free))
     found.sort(key=lambda item: item[:2])
     return [free for _, _, free in found[:2]]
 
 
-def _amounts(names: Sequence[str]) -> NDArray[np.bool_]:
+def amounts_of(names: Sequence[str]) -> NDArray[np.bool_]:
+    """Which parameters are amounts."""
     return np.array([name.endswith(".amount") for name in names], dtype=bool)
 
 
@@ -216,7 +206,7 @@ def _promise(
     point = problem.evaluate(free, view)
     # Amounts enter linearly: their columns at the new place cost nothing and may differ altogether.
     there = jacobian.copy()
-    for k in np.flatnonzero(_amounts(problem.names)):
+    for k in np.flatnonzero(amounts_of(problem.names)):
         there[:, k] = problem.column(point, view, int(k))
     step = _followed(there[:, others], point.residual, furthest)
     after = point.residual + there[:, others] @ step
@@ -243,18 +233,18 @@ def _screens(problem: Problem, start: Array) -> list[View]:
     widths = broadenings(problem, start)
     out = []
     for broadening in widths[:2]:
-        view = broadened_view(problem.job.traces, problem.noises, broadening, _COARSE_TOLERANCE)
+        view = broadened_view(problem.job.traces, problem.noises, broadening, COARSE_TOLERANCE)
         if view.points > view.linear + 1:
             out.append(view)
     return out
 
 
-def _span(parameter: Parameter, value: float) -> float:
+def span_of(parameter: Parameter, value: float) -> float:
     how, reach = reach_of(parameter, wide=False)
     return 0.3 * (reach if how == "add" else max(abs(value) * (reach - 1), parameter.scale))
 
 
-def _from_turning_points(problem: Problem, start: Array) -> Iterator[Array]:
+def from_turning_points(problem: Problem, start: Array) -> Iterator[Array]:
     """Candidates whose g components lie at turning points of the first trace.
 
     In the derivative of an S = 1/2 powder pattern the extreme and the middle turning points lie at
@@ -294,116 +284,3 @@ def turning_fields(trace: Trace, most: int = 6) -> tuple[list[float], float | No
     extrema = sorted((p for p in found.turning_points if p.kind != "crossing"), key=lambda p: -abs(p.height))[:most]
     crossings = [p for p in found.turning_points if p.kind == "crossing"][: most // 2]
     return sorted({p.field for p in (*extrema, *crossings) if p.field > 0}), found.narrowest
-
-
-class Search:
-    """The best minimum that can be reached from a start.
-
-    A start that already explains half of the trace goes straight down.  Otherwise, or when that
-    ends short of the noise, the way over broadened views is taken, then scans for other basins, then
-    candidates, until one of them has ended at the best minimum again.
-
-    Attributes
-    ----------
-    best : Descent or None
-        Best so far; there when the search is stopped from outside.
-    """
-
-    def __init__(self, problem: Problem, view: View, *, goal: Goal, progress: Progress | None = None) -> None:
-        self.problem, self.view, self.goal, self.progress = problem, view, goal, progress
-        self.best: Descent | None = None
-        self._agreed = False
-        self._scanned: Descent | None = None
-
-    def run(self, start: Array, *, automatic: bool = False) -> Descent:
-        """Search from a start; with `automatic` the start counts as one candidate among many."""
-        problem = self.problem
-        start = np.clip(start, problem.lower, problem.upper)
-        self._try_steps(start)
-        if not automatic and explained(problem.evaluate(start, self.view), self.view) > 0.5:
-            self._follow(start)
-        if not self._good():
-            self._follow(coarse_to_fine(problem, start, progress=self.progress))
-        if not self._good():
-            self._leave_for_better_basins()
-        self._agreed = False  # ways from one start that end together prove little
-        if not self._good():
-            for free in candidates(problem, start, wide=automatic, progress=self.progress):
-                near = _WIDEST / _NARROWING
-                self._follow(coarse_to_fine(problem, free, progress=self.progress, widest=near))
-                if not self._good() and not self._agreed:
-                    self._leave_for_better_basins()
-                if self._good() or self._agreed:
-                    break
-        assert self.best is not None
-        return self.best
-
-    def _try_steps(self, start: Array) -> None:
-        """Let finite-difference steps find their size where a simulation is cheap."""
-        stage = replace(self.view.stage, tolerance=max(_COARSE_TOLERANCE, self.view.stage.tolerance))
-        cheap = replace(self.view, stage=stage)
-        self.problem.jacobian(self.problem.evaluate(start, cheap), cheap)
-
-    def _follow(self, free: Array) -> None:
-        descent = descend(self.problem, self.view, free, goal=self.goal, progress=self.progress)
-        if self.best is None:
-            self.best = descent
-            return
-        ratio = descent.point.chi2 / max(self.best.point.chi2, 1e-300)
-        self._agreed = abs(ratio - 1) < _SAME or (self._agreed and ratio > 1)
-        if ratio < 1:
-            self.best = descent
-
-    def _leave_for_better_basins(self) -> None:
-        """Try what a scan of single parameters promises, as long as it keeps its promise."""
-        for _ in range(_MOST_MOVES):
-            if self.best is None or self.best is self._scanned:
-                return
-            self._scanned = self.best
-            before = self.best.point.chi2
-            for free in neighbours(self.problem, self.view, self.best, progress=self.progress):
-                self._follow(free)
-                if self.best.point.chi2 < before * (1 - _SAME):
-                    break
-            else:
-                return
-
-    def _good(self) -> bool:
-        return _good(self.problem, self.best, self.view)
-
-
-def _good(problem: Problem, descent: Descent | None, view: View) -> bool:
-    """Whether a descent ended where no other minimum need be looked for, its scale the right way up.
-
-    That is when what is left is at the noise, or little of the trace (noise that is correlated is
-    larger than neighbouring points show), and has no features of lines.
-    """
-    if descent is None or not descent.converged or min(descent.point.scales) <= 0:
-        return False
-    freedom = max(view.points - view.linear - descent.point.free.size, 1)
-    total = sum(float(seen.rest @ seen.rest) for seen in view.seen)
-    if descent.point.chi2 > max(_AT_NOISE * freedom, freedom + _LITTLE * (total - freedom)):
-        return False
-    return _featureless(problem, descent.point, view)
-
-
-def _featureless(problem: Problem, point: Point, view: View) -> bool:
-    """Whether the residuals look like noise that is correlated, rather than like a line in a wrong place.
-
-    A missed line makes the residuals large where the model's lines are, or, averaged over about a line
-    width, larger in some place than the rest of the trace lets expect of noise, white or not.
-    """
-    at = 0
-    for trace, seen, basis in zip(point.traces, view.seen, problem.fitted_basis(point, view), strict=True):
-        residual = point.residual[at : at + seen.field.size]
-        at += seen.field.size
-        if residual_noise(residual, basis).uneven > _STANDS_OUT:
-            return False
-        spacing = float(np.median(np.diff(seen.field))) * trace.field_scale
-        width = narrowest_width(point.species) / spacing
-        for points in {int(np.clip(width * factor, 3, residual.size // 8 + 1)) for factor in (1, 2, 4)}:
-            averaged = np.convolve(residual, np.full(points, 1 / points), mode="valid")
-            usual = float(np.median(np.abs(averaged))) / _MEDIAN_OF_NORMAL
-            if float(np.abs(averaged).max()) > _STANDS_OUT * usual:
-                return False
-    return True

@@ -1,0 +1,226 @@
+"""The best minimum that can be reached from a start: which ways are taken, in which order, and when to stop."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable
+from dataclasses import replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from spinfit.errors import InputError
+from spinfit.fitting.noise import residual_noise
+from spinfit.fitting.residuals import Point, Problem, Progress, View
+from spinfit.fitting.signals import narrowest_width
+from spinfit.fitting.solve import Descent, Goal, descend
+from spinfit.fitting.starts import (
+    COARSE_TOLERANCE,
+    NARROWING,
+    WIDEST,
+    candidates,
+    coarse_to_fine,
+    explained,
+    neighbours,
+)
+from spinfit.fitting.wide import Wide
+
+Array = NDArray[np.float64]
+
+# Two descents whose chi-squared differ by less than this part ended at the same or an equivalent minimum.
+_SAME = 1e-3
+# A descent is good below this chi-squared per degree of freedom, which the estimate of the noise leaves
+# uncertain by some per cent, or when no more than this part of the trace's sum of squares is unexplained.
+_AT_NOISE = 1.2
+_LITTLE = 0.05
+# Standard deviations from which something in the residuals is no chance: of one place, 1 in 10^7; of the sum of
+# squares over a stretch of the trace, whose tail is longer, 1 in 10^5 or so.
+_STANDS_OUT = 5.3
+_STRETCH_STANDS_OUT = 5.0
+_MEDIAN_OF_NORMAL = 0.6745
+_MOST_MOVES = 4
+# Candidates that must end again at the best minimum before the search gives up on a better one.
+_ENOUGH = 2
+# A minimum that leaves more than this part of the trace is far from the right one; less than the other, beside it
+# if it is not the right one.
+_FAR, _NEAR = 0.15, 0.01
+
+
+class Search:
+    """The best minimum that can be reached from a start.
+
+    A start that already explains half of the trace goes straight down.  Otherwise, or when that
+    ends short of the noise, the way over broadened views is taken, then scans for other basins, then
+    the way over integrated traces, then candidates, drawn near the start and drawn wide, until one of them
+    has ended at the noise or at the best minimum again.
+
+    Attributes
+    ----------
+    best : Descent or None
+        Best so far; there when the search is stopped from outside.
+    """
+
+    def __init__(self, problem: Problem, view: View, *, goal: Goal, progress: Progress | None = None) -> None:
+        self.problem, self.view, self.goal, self.progress = problem, view, goal, progress
+        self.best: Descent | None = None
+        self._ends = 0
+        self._scanned: Descent | None = None
+
+    def run(self, start: Array, *, automatic: bool = False) -> Descent:
+        """Search from a start; with `automatic` the start counts as one candidate among many."""
+        problem = self.problem
+        start = np.clip(start, problem.lower, problem.upper)
+        self._try_steps(start)
+        if not automatic and explained(problem.evaluate(start, self.view), self.view) > 0.5:
+            self._follow(start)
+        if not self._good():
+            self._follow(coarse_to_fine(problem, start, progress=self.progress))
+        if not self._good():
+            self._leave_for_better_basins()
+        if self._good():
+            return self._found()
+        wide = Wide(problem, start, progress=self.progress)
+        if not automatic:
+            self._follow_all([wide.from_start()])
+        self._ends = 0  # ways from one start that end together prove little
+
+        def drawn_wide() -> list[Array]:
+            return wide.candidates()
+
+        def in_pairs() -> list[Array]:
+            return wide.around(self._found().point.free)
+
+        def drawn_near() -> list[Array]:
+            return candidates(problem, start, wide=automatic, progress=self.progress)
+
+        left = self._left()
+        if automatic or left > _FAR:
+            ways = [drawn_wide, in_pairs, drawn_near]
+        else:
+            ways = [in_pairs, drawn_near, drawn_wide] if left > _NEAR else [in_pairs, drawn_near]
+        for way in ways:
+            if not self._good():
+                self._ends = 0
+                self._follow_all(way())
+        return self._found()
+
+    def _found(self) -> Descent:
+        assert self.best is not None
+        return self.best
+
+    def _left(self) -> float:
+        """Part of the traces, beyond their noise, that the best minimum leaves."""
+        total = sum(float(seen.rest @ seen.rest) for seen in self.view.seen)
+        points = self.view.points
+        return max(self._found().point.chi2 - points, 0.0) / max(total - points, 1e-300)
+
+    def _follow_all(self, starts: Iterable[Array]) -> None:
+        """Go down from candidates until one ends where nothing is left to look for, or several at the best."""
+        for free in starts:
+            near = WIDEST / NARROWING
+            try:
+                self._follow(coarse_to_fine(self.problem, free, progress=self.progress, widest=near))
+            except InputError:  # the way led to where the model has no meaning, such as a width of 0
+                continue
+            if not self._good() and not self._agreed:
+                self._leave_for_better_basins()
+            if self._good() or self._agreed:
+                break
+
+    def _try_steps(self, start: Array) -> None:
+        """Let finite-difference steps find their size where a simulation is cheap."""
+        stage = replace(self.view.stage, tolerance=max(COARSE_TOLERANCE, self.view.stage.tolerance))
+        cheap = replace(self.view, stage=stage)
+        self.problem.jacobian(self.problem.evaluate(start, cheap), cheap)
+
+    def _follow(self, free: Array) -> None:
+        descent = descend(self.problem, self.view, free, goal=self.goal, progress=self.progress)
+        if self.best is None:
+            self.best = descent
+            return
+        ratio = descent.point.chi2 / max(self.best.point.chi2, 1e-300)
+        if abs(ratio - 1) < _SAME:
+            self._ends += 1
+        elif ratio < 1:
+            self._ends = 0
+        if ratio < 1:
+            if ratio > 1 - _SAME and self._scanned is self.best:
+                self._scanned = descent
+            self.best = descent
+
+    @property
+    def _agreed(self) -> bool:
+        """Whether candidates drawn apart have ended at the best minimum often enough."""
+        return self._ends >= _ENOUGH
+
+    def _leave_for_better_basins(self) -> None:
+        """Try what a scan of single parameters promises, as long as it keeps its promise."""
+        for _ in range(_MOST_MOVES):
+            if self.best is None or self.best is self._scanned:
+                return
+            self._scanned = self.best
+            before = self.best.point.chi2
+            for free in neighbours(self.problem, self.view, self.best, progress=self.progress):
+                self._follow(free)
+                if self.best.point.chi2 < before * (1 - _SAME):
+                    break
+            else:
+                return
+
+    def _good(self) -> bool:
+        return _good(self.problem, self.best, self.view)
+
+
+def _good(problem: Problem, descent: Descent | None, view: View) -> bool:
+    """Whether a descent ended where no other minimum need be looked for, its scale the right way up.
+
+    That is when what is left is at the noise, or little of the trace (noise that is correlated is
+    larger than neighbouring points show), and has no features of lines.
+    """
+    if descent is None or not descent.converged or min(descent.point.scales) <= 0:
+        return False
+    freedom = max(view.points - view.linear - descent.point.free.size, 1)
+    total = sum(float(seen.rest @ seen.rest) for seen in view.seen)
+    if descent.point.chi2 > max(_AT_NOISE * freedom, freedom + _LITTLE * (total - freedom)):
+        return False
+    return _featureless(problem, descent.point, view)
+
+
+def _featureless(problem: Problem, point: Point, view: View) -> bool:
+    """Whether the residuals look like noise that is correlated, rather than like a line in a wrong place.
+
+    A missed line makes the residuals large where the model's lines are, or, averaged over about a line
+    width, larger in some place than the rest of the trace lets expect of noise, white or not.
+    """
+    at = 0
+    for trace, seen, basis in zip(point.traces, view.seen, problem.fitted_basis(point, view), strict=True):
+        residual = point.residual[at : at + seen.field.size]
+        at += seen.field.size
+        if residual_noise(residual, basis).uneven > _STANDS_OUT:
+            return False
+        spacing = float(np.median(np.diff(seen.field))) * trace.field_scale
+        width = narrowest_width(point.species) / spacing
+        for points in {int(np.clip(width * factor, 3, residual.size // 8 + 1)) for factor in (1, 2, 4)}:
+            averaged = np.convolve(residual, np.full(points, 1 / points), mode="valid")
+            usual = float(np.median(np.abs(averaged))) / _MEDIAN_OF_NORMAL
+            if float(np.abs(averaged).max()) > _STANDS_OUT * usual:
+                return False
+        if _stretch(residual, width) > _STRETCH_STANDS_OUT:
+            return False
+    return True
+
+
+def _stretch(residual: Array, width: float) -> float:
+    """How far the sum of squares of the worst stretch stands above that of the others, in standard deviations.
+
+    Weak lines that are all a little off (a hyperfine pattern's) show in no single place.
+    """
+    worst = 0.0
+    squares = residual**2
+    for points in {int(np.clip(width * factor, 8, residual.size // 6 + 1)) for factor in (4, 12, 36)}:
+        sums = np.convolve(squares, np.ones(points), mode="valid")
+        # A sum of squares of correlated noise varies more than one of white noise; the quartiles tell by how much.
+        low, usual = np.quantile(sums, (0.25, 0.5))
+        deviation = max(float(usual - low) / _MEDIAN_OF_NORMAL, float(usual) * math.sqrt(2 / points))
+        worst = max(worst, (float(sums.max()) - float(usual)) / max(deviation, 1e-300))
+    return worst
