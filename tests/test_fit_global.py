@@ -5,6 +5,8 @@ The engine is the stand-in with a closed form (`stub_engine`).
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from fit_jobs import FIELDS, TRUE_G, clean_signal, job, species, trace
@@ -90,3 +92,21 @@ def test_a_trace_in_two_groups_has_the_corrections_of_both():
         value = outcome.parameters[f"{name}.field_offset"]
         assert abs(value.value - true) < 3.5 * value.uncertainty
         assert value.uncertainty < 0.01
+
+
+def test_traces_of_one_frequency_share_its_uncertainty_whatever_their_group():
+    """g = h nu / (muB B): du/u of g is that of nu, and does not shrink with the number of field axes."""
+    traces = [
+        trace(clean_signal(species()) + 1e-4 * np.random.default_rng(n).normal(size=FIELDS.size), name=f"t{n}")
+        for n in range(4)
+    ]
+    traces = [replace(one, group=f"day_{n}", frequency_uncertainty=0.5) for n, one in enumerate(traces)]
+    outcome = fit(job(*traces, start="near"), simulate=simulate)
+    for name in "xyz":
+        value = outcome.parameters[f"r.g_{name}"]
+        assert value.uncertainty_field == pytest.approx(value.value * 0.5 / traces[0].frequency, rel=0.02)
+    # At four frequencies the four days are four readings.
+    apart = [replace(one, frequency=one.frequency + n * 1e-3) for n, one in enumerate(traces)]
+    separate = fit(job(*apart, start="near"), simulate=simulate)
+    ratio = separate.parameters["r.g_x"].uncertainty_field / outcome.parameters["r.g_x"].uncertainty_field
+    assert ratio == pytest.approx(0.5, rel=0.02)

@@ -5,7 +5,7 @@ Internal units: frequency in MHz, fields in mT, angles in rad, temperature in K.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -139,6 +139,27 @@ def groups_of(one: Trace | Lines) -> tuple[str, ...]:
 def axis_group(one: Trace | Lines) -> str | None:
     """The group with which a trace or a table of lines shares its field axis."""
     return next(iter(groups_of(one)), None)
+
+
+def sharing_axis(several: Sequence[Trace | Lines]) -> list[list[int]]:
+    """Which of several share a field axis, and with it the uncertainty of its shift: those of one first group."""
+    groups = [axis_group(one) for one in several]
+    return [[n for n, other in enumerate(groups) if other == group] for group in dict.fromkeys(groups)]
+
+
+def sharing_frequency(several: Sequence[Trace | Lines]) -> list[list[int]]:
+    """Which of several share the uncertainty of their frequency.
+
+    A counter is not read anew for every group: traces of one frequency share it, whatever their field axis, as
+    do those of one field axis.
+    """
+    found: list[list[int]] = []
+    for own in sharing_axis(several):
+        same = {several[n].frequency for n in own}
+        touched = [one for one in found if same & {several[n].frequency for n in one}]
+        found = [one for one in found if one not in touched]
+        found.append(sorted(own + [n for one in touched for n in one]))
+    return sorted(found)
 
 
 @dataclass(frozen=True, eq=False)

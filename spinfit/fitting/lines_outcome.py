@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 from spinfit.errors import InputError
 from spinfit.fitting.assignment import at_settings, calculated, settings
 from spinfit.fitting.axes import axes_of, open_components
-from spinfit.fitting.data import Job, axis_group
+from spinfit.fitting.data import Job, sharing_axis, sharing_frequency
 from spinfit.fitting.line_search import LineSearch
 from spinfit.fitting.outcome import Axis, Note, Outcome, PositionTable, Quality
 from spinfit.fitting.positions import OUTLIER, LineProblem, State, kept_lines, standard_scatter
@@ -170,14 +170,14 @@ def _axis_shifts(lines: LineProblem, state: State) -> list[tuple[str, Array]]:
     """What each shared standard shift of an axis or a frequency does to the residuals, mT."""
     out = []
     whole = np.cumsum([0] + [table.field.size for table in state.tables])
-    for group in dict.fromkeys(map(axis_group, state.tables)):
-        for source, change, key in (
-            ("field axis", lines.field_change(state), "field_uncertainty"),
-            ("frequency", lines.frequency_change(state), "frequency_uncertainty"),
-        ):
+    for source, change, key, sharing in (
+        ("field axis", lines.field_change(state), "field_uncertainty", sharing_axis),
+        ("frequency", lines.frequency_change(state), "frequency_uncertainty", sharing_frequency),
+    ):
+        for members in sharing(state.tables):
             shift = np.zeros(state.residual.size)
             for n, table in enumerate(state.tables):
-                if axis_group(table) == group:
+                if n in members:
                     shift[whole[n] : whole[n + 1]] = getattr(table, key)
             if shift.any():
                 out.append((source, change * shift))

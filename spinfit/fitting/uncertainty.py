@@ -11,7 +11,7 @@ refitted along.  Three kinds of change go through it:
 
 They are independent and combine in quadrature (JCGM 100:2008, 5.1.2).  Traces of one group share
 one field axis; traces without a group share one as well, since averaging over traces of one magnet
-does not make its calibration better.  The same holds for the frequency counter.
+does not make its calibration better.  Traces of one frequency share its uncertainty whatever their group.
 """
 
 from __future__ import annotations
@@ -23,7 +23,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit.fitting.data import axis_group
+from spinfit.fitting.data import sharing_axis, sharing_frequency
 from spinfit.fitting.noise import ResidualNoise, local_covariance, residual_noise
 from spinfit.fitting.outcome import Value
 from spinfit.fitting.residuals import Point, Problem, View
@@ -244,31 +244,34 @@ def _seen_parameters(
 def _axis_shifts(problem: Problem, view: View, point: Point, response: Array) -> tuple[Array, tuple[str, ...]]:
     """Response of the parameters to each shared standard shift, shape (m, k), and what shifts."""
     rows, sources = [], []
-    for group in dict.fromkeys(map(axis_group, point.traces)):
-        for source, changes in (("field axis", _field_changes), ("frequency", _frequency_changes)):
-            moved = changes(problem, view, point, group)
+    for source, changes, sharing in (
+        ("field axis", _field_changes, sharing_axis),
+        ("frequency", _frequency_changes, sharing_frequency),
+    ):
+        for members in sharing(point.traces):
+            moved = changes(problem, view, point, members)
             if any(change is not None for change in moved):
                 rows.append(-response @ problem.projected_change(point, view, moved))
                 sources.append(source)
     return np.array(rows).reshape(len(rows), response.shape[0]), tuple(sources)
 
 
-def _field_changes(problem: Problem, view: View, point: Point, group: str | None) -> list[Array | None]:
+def _field_changes(problem: Problem, view: View, point: Point, members: Sequence[int]) -> list[Array | None]:
     """Change of each trace's signal when its axis is off by one standard uncertainty."""
     out: list[Array | None] = []
-    for trace, seen in zip(point.traces, view.seen, strict=True):
-        if axis_group(trace) != group or trace.field_uncertainty == 0:
+    for n, (trace, seen) in enumerate(zip(point.traces, view.seen, strict=True)):
+        if n not in members or trace.field_uncertainty == 0:
             out.append(None)
         else:
             out.append(problem.slope(point, trace, seen, view.stage) * trace.field_uncertainty)
     return out
 
 
-def _frequency_changes(problem: Problem, view: View, point: Point, group: str | None) -> list[Array | None]:
+def _frequency_changes(problem: Problem, view: View, point: Point, members: Sequence[int]) -> list[Array | None]:
     """Change of each trace's signal when its frequency is off by one standard uncertainty."""
     out: list[Array | None] = []
-    for trace, seen in zip(point.traces, view.seen, strict=True):
-        if axis_group(trace) != group or trace.frequency_uncertainty == 0:
+    for n, (trace, seen) in enumerate(zip(point.traces, view.seen, strict=True)):
+        if n not in members or trace.frequency_uncertainty == 0:
             out.append(None)
             continue
         highest = max(abs(float(seen.field[-1])), abs(float(seen.field[0])), np.finfo(float).tiny)
