@@ -12,6 +12,8 @@ import pytest
 
 from spinfit.cli import main
 from spinfit.commands import TABLE
+from spinfit.files.job import model_from
+from spinfit.fitting.parameters import Binding, expand_vary
 from spinfit.species import Species, Spin, Width
 from spinfit.spectrum import simulate
 from spinfit.sweep import Sweep
@@ -50,6 +52,22 @@ def test_first_fit_shows_the_demonstration_job() -> None:
     (shown,) = blocks(ROOT / "docs" / "first_fit.md", "toml")
     stored = (ROOT / "demo_spectra" / "varnish_radical.toml").read_text(encoding="utf-8")
     assert tomllib.loads(shown) == tomllib.loads(stored)
+
+
+def test_models_of_every_kind_of_sample() -> None:
+    """Each model of the page is one that `simulate` takes, with a spectrum, and what it says to vary is there."""
+    page = (ROOT / "docs" / "jobs.md").read_text(encoding="utf-8")
+    models = [section for section in page.split("\n## ") if "```toml" in section]
+    assert len(models) == 8
+    for section in models:
+        text = section.split("```toml\n")[1].split("```")[0]
+        model = model_from(tomllib.loads(text))
+        spectrum = simulate(model.species, model.sweep, model.sample, tolerance=3e-2)
+        assert np.abs(spectrum.signal).max() > 0
+        vary = re.findall(r"`vary = (\[.*\])`", section)
+        parameters = Binding(model.species, model.sample).parameters
+        for names in vary:
+            assert expand_vary(json.loads(names), parameters)
 
 
 def test_readme_lists_the_commands_that_exist() -> None:
