@@ -12,7 +12,7 @@ import subprocess
 import sys
 from pathlib import Path
 
-EXTRAS = ("test,fast", "test")
+EXTRAS = ("test,docs,fast", "test,docs")
 """What is installed beside the project; the second where the first is not to be had (no compiled kernels)."""
 
 

@@ -2,8 +2,11 @@
 
 from __future__ import annotations
 
+import importlib.util
 import json
 import re
+import subprocess
+import sys
 import tomllib
 from pathlib import Path
 
@@ -96,3 +99,20 @@ def test_every_option_in_the_pages_exists(capsys: pytest.CaptureFixture[str]) ->
             shown = set(re.findall(r"--[a-z][\w-]*", capsys.readouterr().out))
             missing += [f"{page.name}: {command} {o}" for o in re.findall(r"--[a-z][\w-]*", line) if o not in shown]
     assert missing == []
+
+
+@pytest.mark.skipif(sys.version_info[:2] not in ((3, 11), (3, 12)), reason="later versions lay out help differently")
+def test_the_page_of_commands_is_their_own_help() -> None:
+    specification = importlib.util.spec_from_file_location("make_pages", ROOT / "scripts" / "make_pages.py")
+    pages = importlib.util.module_from_spec(specification)
+    specification.loader.exec_module(pages)
+    assert pages.PAGE.read_text(encoding="utf-8") == pages.commands_page(), "run scripts/make_pages.py"
+
+
+def test_the_pages_build_without_a_warning(tmp_path: Path) -> None:
+    pytest.importorskip("sphinx")
+    pytest.importorskip("myst_parser")
+    command = [sys.executable, "-m", "sphinx", "-W", "-q", str(ROOT / "docs"), str(tmp_path)]
+    done = subprocess.run(command, capture_output=True, text=True, timeout=120)
+    assert done.returncode == 0, done.stderr
+    assert (tmp_path / "first_fit.html").is_file()
