@@ -5,6 +5,7 @@ from __future__ import annotations
 import io
 import tomllib
 from dataclasses import replace
+from pathlib import Path
 
 import numpy as np
 import pandas as pd
@@ -15,6 +16,7 @@ from fit_jobs import FIELDS, TRUE_G, clean_signal, job, level, noisy, species, t
 from stub_engine import simulate as stub
 
 from spinfit.errors import InputError
+from spinfit.files.job import read_job
 from spinfit.files.toml_fit import read_fit
 from spinfit.fitting.areas import fitted_area
 from spinfit.fitting.driver import fit
@@ -235,6 +237,31 @@ def test_keys_of_the_job() -> None:
     table = read('[fit]\nvary = ["r.g"]\nloss = "cauchy"\nloss_scale = 3\n')
     assert (table.loss, table.loss_scale) == ("cauchy", 3.0)
     assert read('[fit]\nvary = ["r.g"]\n').loss == "linear"
+
+
+def test_a_job_file_s_loss_reaches_the_fit(tmp_path: Path) -> None:
+    """What stands in the file is what the fit is given."""
+    _, bad, _ = glitched(5)
+    np.savetxt(tmp_path / "kiln.csv", np.column_stack([FIELDS, bad]), delimiter=",", fmt="%.8g")
+    text = """
+        [[species]]
+        name = "r"
+        S = "1/2"
+        g = [2.0, 2.05, 2.1]
+        [species.width]
+        gaussian = "1 mT"
+        [[trace]]
+        file = "kiln.csv"
+        field_unit = "mT"
+        frequency = "9.5 GHz"
+        [fit]
+        vary = ["r.g"]
+    """
+    path = tmp_path / "kiln.toml"
+    path.write_text(text, encoding="utf-8")
+    assert (read_job(path).loss, read_job(path).loss_scale) == ("linear", None)
+    path.write_text(f'{text}loss = "huber"\n loss_scale = 2.0\n', encoding="utf-8")
+    assert (read_job(path).loss, read_job(path).loss_scale) == ("huber", 2.0)
 
 
 @pytest.mark.parametrize(

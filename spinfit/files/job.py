@@ -166,6 +166,8 @@ def _job_from(data: Mapping[str, Any], path: Path, text: str, store: Store) -> J
         path=str(path),
         text=text,
         lines=lines,
+        loss=fit.loss,
+        loss_scale=fit.loss_scale,
         files=store.taken,
     )
 
