@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterator
 from contextlib import contextmanager
 from typing import Any
@@ -10,6 +11,8 @@ from spinfit.errors import InputError
 
 # Seconds to wait for a scheduler's answer.
 PATIENCE = 15
+_ADDRESS = re.compile(r"([a-z]+://)?[^\s/:]+(:[^\s/:]+)*:\d+|([a-z]+://)?\[[^\s\]]+\]:\d+")
+_EXAMPLE = "give a running scheduler's address, such as tcp://node-1:8786"
 
 
 @contextmanager
@@ -21,6 +24,8 @@ def connected(address: str) -> Iterator[tuple[Any, int]]:
     InputError
         When dask.distributed is not installed, nobody answers, or there are no workers.
     """
+    if not _ADDRESS.fullmatch(address):
+        raise InputError(f'"{address}" is no address', _EXAMPLE, place="--cluster")
     try:
         import distributed
     except ImportError:
@@ -28,11 +33,9 @@ def connected(address: str) -> Iterator[tuple[Any, int]]:
         raise InputError("dask.distributed is not installed", right, place="--cluster") from None
     try:
         client = distributed.Client(address, timeout=PATIENCE, set_as_default=False)
-    except (OSError, ValueError, TypeError) as error:
+    except Exception as error:  # whatever its networking raises: nobody is there who could be talked to
         found = f'"{address}" does not answer ({type(error).__name__})'
-        raise InputError(
-            found, "give a running scheduler's address, such as tcp://node-1:8786", place="--cluster"
-        ) from None
+        raise InputError(found, _EXAMPLE, place="--cluster") from None
     with client:
         threads = sum(client.ncores().values())
         if not threads:
