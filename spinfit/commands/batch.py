@@ -43,7 +43,7 @@ def options(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--time-limit", metavar="QUANTITY", help='for each fit, such as "60 s"; its best so far is kept'
     )
-    parser.add_argument("--no-pictures", action="store_true", help="leave out fit.png and report.html, which take time")
+    parser.add_argument("--no-pictures", action="store_true", help="leave out fit.png, fit.svg and report.html")
     parser.add_argument("--no-archive", action="store_true", help="leave out batch.h5, which holds every outcome again")
     parser.add_argument("--retry", action="store_true", help="repeat what did not come out good though nothing changed")
     parser.add_argument("--parquet", action="store_true", help="write summary.parquet as well (needs pyarrow)")
