@@ -113,8 +113,7 @@ def fuzz(name: str, folder: Path, seconds: float, runs: int) -> dict[str, object
         done += here
         restarts += 1
         if here == 0 and process.returncode:
-            print(f"{name}: ended with {process.returncode} before it began", flush=True)
-            break
+            sys.exit(f"{name}: ended with {process.returncode} before it began")
     return {
         "target": name, "inputs": done, "seconds": round(seconds - (until - time.monotonic())), "edges": coverage,
         "edges last grew at input": last_new, "processes": restarts, "findings": judged(name, findings),

@@ -271,3 +271,4 @@ DICTIONARIES = {
     "ligands": [*_IONS_KEYS, "[[ion]]", " cm^-1", "configuration", "level", "Fe3+", "Eu3+", "Gd3+", "U4+", "1e300"],
     "hdf5": ["OHDR", "OCHK", "TREE", "SNOD", "HEAP", "GCOL", "FRHP", "BTHD", "\\xff" * 8],
 }
+DICTIONARIES["archive"] = DICTIONARIES["hdf5"]

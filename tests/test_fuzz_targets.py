@@ -48,9 +48,11 @@ def test_seeds_are_good_files(name):
 
 def test_every_target_is_known():
     from fuzz_readers import LONGEST, TARGETS
+    from fuzz_seeds import DICTIONARIES
     from fuzz_targets import READERS
 
     assert set(TARGETS) == set(READERS) == set(LONGEST) == set(NAMES)
+    assert all(DICTIONARIES[name] for name in NAMES)  # libFuzzer ends at once when there is no word
 
 
 @pytest.mark.parametrize("name", SAFE)
