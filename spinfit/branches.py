@@ -17,10 +17,14 @@ from numpy.typing import NDArray
 
 from spinfit import hermite
 from spinfit.broadening import Broadening
-from spinfit.sheets import Grain
+from spinfit.resonance import ZERO_FIELD, can_reach
+from spinfit.sheets import SMEAR_MOST, SMEAR_REACH, Grain
 
 Array = NDArray[np.float64]
 Pairs = tuple[NDArray[np.intp], NDArray[np.intp]]
+
+UNSEEN = 0.02
+"""Share of their spread over the knots by which level differences may always go farther between them."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -83,9 +87,7 @@ class Ladder:
 
     def only(self, kept: NDArray[np.intp]) -> Ladder:
         """Return the same at some of the knots."""
-        return Ladder(
-            self.energy[:, :, kept], self.slope[:, :, kept], lambda *where: self.partner(*where)[:, kept]
-        )
+        return Ladder(self.energy[:, :, kept], self.slope[:, :, kept], lambda *where: self.partner(*where)[:, kept])
 
 
 @dataclass(frozen=True, eq=False)
@@ -179,18 +181,22 @@ def between_knots(gap: Array) -> NDArray[np.bool_]:
 
     Parameters
     ----------
-    gap : ndarray, shape (nodes, n, p)
+    gap : ndarray, shape (nodes, ..., n, p)
 
     Returns
     -------
-    ndarray of bool, shape (n, p)
+    ndarray of bool, shape (..., n, p)
         The knot closest to resonance on either side, for pairs that change sign over the sphere.
     """
     low, high = gap.min(axis=0), gap.max(axis=0)
     above, below = np.where(low > 0, low, np.inf), np.where(high < 0, -high, np.inf)
-    both = np.isfinite(above).any(axis=0) & np.isfinite(below).any(axis=0)
-    row = np.arange(len(low))[:, None]
-    return both & ((row == above.argmin(axis=0)) | (row == below.argmin(axis=0)))
+    nearest = above.min(axis=-2, keepdims=True), below.min(axis=-2, keepdims=True)
+    both = np.isfinite(nearest[0]) & np.isfinite(nearest[1])
+    if not both.any():
+        return np.zeros(low.shape, dtype=bool)
+    row = np.arange(low.shape[-2])[:, None]
+    first = above.argmin(axis=-2, keepdims=True), below.argmin(axis=-2, keepdims=True)
+    return both & ((row == first[0]) | (row == first[1]))
 
 
 FWHM_PER_SIGMA = 2 * math.sqrt(2 * math.log(2))
@@ -201,13 +207,48 @@ def count_roots(data: KnotData) -> NDArray[np.intp]:
 
     Leaves that do not touch (nothing can be resonant between them) are separate chains.
     """
-    p, _, n = data.gap.shape
-    total = np.zeros((p, n), dtype=np.intp)
     positive = data.gap >= 0
-    for first, middle, last in data.leaves:
-        total += positive[:, first] != positive[:, middle]
-        total += positive[:, middle] != positive[:, last]
-    return total
+    first, middle, last = (positive[:, nodes] for nodes in data.leaves.T)
+    return (first != middle).sum(axis=1) + (middle != last).sum(axis=1)
+
+
+def touches(data: KnotData) -> NDArray[np.bool_]:
+    """Which pairs could be resonant between nodes though they change sign at none."""
+    first, middle, last = (data.fields[nodes] for nodes in data.leaves.T)
+    gap, slope = ([v[:, nodes] for nodes in data.leaves.T] for v in (data.gap, data.slope))
+    out = np.zeros(len(data.gap), dtype=bool)
+    for (a, b), h in (((0, 1), middle - first), ((1, 2), last - middle)):
+        h = h[:, None]
+        out |= can_reach(gap[a], gap[b], slope[a] * h, slope[b] * h).any(axis=(1, 2))
+    return out
+
+
+def in_sight(data: KnotData, rows: NDArray[np.intp], request: Request) -> NDArray[np.bool_]:
+    """Which of the given rows can be resonant where it is seen, shape (rows,).
+
+    Resonances are followed farther out than a line reaches, so that smears near the edges of the range
+    find both sides; a pair that is resonant in no direction but out there adds nothing.
+    """
+    if request.broadening is not None or not len(rows):
+        return np.ones(len(rows), dtype=bool)
+    margin = SMEAR_REACH * SMEAR_MOST * request.scale
+    low = request.low + margin if request.low > ZERO_FIELD else 0.0
+    high = request.high - margin
+    nodes = data.fields[data.leaves]
+    half = 0.5 * (nodes[:, 2] - nodes[:, 0])[:, None]
+    gap, slope = (np.moveaxis(v[rows][:, data.leaves], 2, 0) for v in (data.gap, data.slope))
+    c = hermite.quintic(gap, slope * half)
+    t = hermite.SAMPLES
+    values = np.sort([hermite.value(c, one) for one in t], axis=-1)
+    # between the knots they go little farther than at them: by no more than to the third of the outermost
+    third = min(2, values.shape[-1] - 1)
+    spread = UNSEEN * (values[..., -1] - values[..., 0])
+    least = values[..., 0] - np.maximum(values[..., third] - values[..., 0], spread)
+    most = values[..., -1] + np.maximum(values[..., -1] - values[..., -1 - third], spread)
+    possible = (np.minimum(least[1:], least[:-1]) <= 0) & (np.maximum(most[1:], most[:-1]) >= 0)
+    ends = nodes[:, 1] + t[:, None] * half[:, 0]
+    seen = (ends[1:] >= low) & (ends[:-1] <= high)
+    return (possible & seen[:, None]).any(axis=(0, 2))
 
 
 def trace_branches(data: KnotData, chosen: NDArray[np.intp]) -> Branches:

@@ -30,8 +30,8 @@ from spinfit.symmetry import KINDS
 
 Array = NDArray[np.float64]
 
-GOOD_HALF = 1.5e-3
-"""Error of the spectrum by every second ring up to which its changes are taken from these alone."""
+GOOD_HALF = 5e-4
+"""Error by every second ring up to which changes are taken from these; changes err up to ten times as much."""
 GOOD_HALF_LOOPING = 2.5e-4
 """The same where there are pairs of levels without a branch."""
 LOOP_SHIFT = 0.3

@@ -19,12 +19,13 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit.branches import Branches, KnotData, Request, count_roots, trace_branches
+from spinfit.branches import Branches, KnotData, Request, count_roots, in_sight, touches, trace_branches
 from spinfit.crossings import Crossings, misses
+from spinfit.doublets import doublet
 from spinfit.hamiltonian import System
-from spinfit.nodes import FieldNodes
-from spinfit.orientations import Rings, unstretched
-from spinfit.resonance import can_reach
+from spinfit.meridian import along_meridian
+from spinfit.nodes import FieldNodes, node_accuracy
+from spinfit.orientations import Rings
 from spinfit.sheets import continued, restored
 from spinfit.symmetry import Symmetry
 
@@ -34,6 +35,10 @@ SIZES = (8, 12, 16, 20, 24, 32, 40, 48, 64, 80, 96)
 """Numbers of rings that are tried in turn."""
 MOST_KNOTS = 5_000
 """Directions at which refinement gives up and says so."""
+HIGHEST = 1.5
+"""Factor on what the highest quarter of a series holds, as a bound of what the series misses."""
+STRETCHED, STRETCHED_AXIAL = 20, 32
+"""Rings to begin with where they are drawn together: what sharp features need at the default tolerance."""
 POOR = 0.1
 """Error of the coarse half of the first set above which drawing the rings together is tried."""
 LEAST_MISS = 0.05
@@ -46,6 +51,8 @@ STEEPEST_SEEN = 3.0
 """Power of the step with which errors measured on spectra are trusted to fall: near crossings leave kinks."""
 UNEVEN = 1.15
 """Ratio of the density of errors on one ring to that on its neighbour from which drawing rings together is tried."""
+CHEAP_STATES = 16
+"""Levels up to which a few more knots of an axial system cost less than what looks after them."""
 MISTRUST = 2.0
 """Factor on the extrapolated error, unless it falls so fast that a power law is itself pessimistic."""
 LOOPING_MISTRUST = 1.5
@@ -108,13 +115,19 @@ def settle(system: System, symmetry: Symmetry, request: Request, compare: Compar
     `compare` is used where many levels may cross.  Weak nuclei, whose patterns cost more than levels do,
     are split off until the levels alone are known well enough.
     """
-    if len(system.h0) == 2:  # B^-2 of a doublet holds no harmonics above l = 2
-        trial = _Trial(system, symmetry, request, Rings(symmetry.kind, 4, 4))
+    if len(system.h0) == 2:
+        found = doublet(system, symmetry, request)
+        if found is not None:
+            rings, data, branches, spent = found
+            number = data.gap.shape[2]
+            return Knots(rings, data, branches, np.zeros(1, dtype=bool), 0.0, number, spent, False, 1.0, None)
+        trial = _Trial(system, symmetry, request, Rings(symmetry.kind, 4, 4))  # few harmonics even so
         if trial.half_error() <= request.tolerance:
             return trial.knots(trial.half_error(), trial.count)
     several = sum(spin > 0 for spin in system.spins[system.electrons :]) > 1
     kept = compare
-    if symmetry.kind != "axial" and (system.weak or len(system.h0) < CROSSING_STATES and not several):
+    few = len(system.h0) < CROSSING_STATES and not several and not system.weak
+    if few or (system.weak and symmetry.kind != "axial"):
         compare = None  # sums over two angles cost more than they save, until patterns are in
     # around the axis of an axial system nothing varies; elsewhere patterns have a say in how many azimuths there are
     split = symmetry.kind != "axial"
@@ -126,7 +139,7 @@ def settle(system: System, symmetry: Symmetry, request: Request, compare: Compar
     if trial.half_error() > max(POOR, request.tolerance) and not trial.looping:
         trial, extra = _drawn_together(trial, system, symmetry, request, harmonics)
         spent += extra
-    history = [(trial.rings.rings // 2, trial.half_error())]
+    history = trial.history()
     levels_known = False
     for size in [s for s in SIZES if s > trial.rings.rings]:
         error = _extrapolated(history, trial)
@@ -140,6 +153,8 @@ def settle(system: System, symmetry: Symmetry, request: Request, compare: Compar
         hoped = error * (trial.rings.rings / size) ** SPLINE_POWER if trial.looping else _hoped(history[-1], size)
         if size < min(SIZES[-1], 3 * trial.rings.rings) and hoped > request.tolerance:
             continue
+        if symmetry.kind == "axial" and len(system.h0) <= CHEAP_STATES and size < 2 * trial.rings.rings:
+            continue  # knots cost less than another round, and twice the rings hold all that is known
         finer = _rings(symmetry.kind, size, trial.rings.stretch, harmonics)
         if len(finer.angles()[0]) > (MOST_LOOPING_KNOTS if trial.looping else MOST_KNOTS):
             break
@@ -149,7 +164,8 @@ def settle(system: System, symmetry: Symmetry, request: Request, compare: Compar
     if not trial.split:
         trial = trial.whole(kept)
         history[-1] = (trial.rings.rings // 2, trial.half_error())
-    return trial.knots(_extrapolated(history, trial), spent)
+    as_they_are, by_series = _expected(history, trial)
+    return trial.knots(min(as_they_are, by_series), spent, by_series < as_they_are)
 
 
 def _rings(kind: str, size: int, stretch: float = 1.0, harmonics: int | None = None) -> Rings:
@@ -166,7 +182,12 @@ def _hoped(last: tuple[int, float], size: int) -> float:
 
 
 def _extrapolated(history: list[tuple[int, float]], trial: _Trial) -> float:
-    """Return the error expected of a trial from the errors measured at smaller numbers of rings.
+    """Return the error expected of a trial from the errors measured at smaller numbers of rings."""
+    return min(_expected(history, trial))
+
+
+def _expected(history: list[tuple[int, float]], trial: _Trial) -> tuple[float, float]:
+    """Return the error expected of a trial if its branches are continued as they were, and by series.
 
     The power law through the last two; a first measurement alone is trusted to gain little.  Level
     differences are continued by splines, whose error falls quickly unless there are kinks left.
@@ -179,15 +200,26 @@ def _extrapolated(history: list[tuple[int, float]], trial: _Trial) -> float:
         if known and error > 0:
             before, worse = known[-1]
             power = min(power, max(1.0, math.log(max(worse, error) / error) / math.log(size / before)))
-        return LOOPING_MISTRUST * max(1.0, (FEW_RINGS / rings) ** 3) * error * (size / rings) ** power
+        return LOOPING_MISTRUST * max(1.0, (FEW_RINGS / rings) ** 3) * error * (size / rings) ** power, math.inf
     power = 2.0
     if len(history) > 1:
         before, worse = history[-2]
         if error <= 0:
-            return 0.0
+            return 0.0, math.inf
         steepest = 8.0 if trial.compare is None else STEEPEST_SEEN
         power = min(steepest, max(0.5, math.log(max(worse, error) / error) / math.log(size / before)))
-    return (1.0 if power > 4.5 else MISTRUST) * error * (size / rings) ** power
+    law = (1.0 if power > 4.5 else MISTRUST) * error * (size / rings) ** power
+    series = trial.series_error()
+    if series == math.inf:
+        return law, series
+    # less is known of how errors fall where both were measured on this one set
+    within = len(history) == 2 and history[0][0] * 4 == history[1][0] * 2 == rings
+    least = (0.3 if within or trial.local else 0.15) * series
+    if not trial.local:
+        return math.inf, min(max(law, least), series)
+    # kinks keep splines from converging as they promise; and series fell behind them, if not by much
+    slow = MISTRUST * error * (size / rings) ** min(power, 4.0)
+    return slow, min(max(1.5 * law, least), series)
 
 
 def _drawn_together(
@@ -207,58 +239,14 @@ def _drawn_together(
         return trial, 0
     if trial.data.order is not None:  # where the rings lie far apart, levels may nearly cross
         stretches = stretches[:2]
-    along, count = _along_meridian(trial, symmetry, stretches)
+    rows = np.flatnonzero(trial.single)
+    along, count = along_meridian(trial.nodes, trial.data, rows, symmetry.axes, stretches)
     stretch = stretches[int(np.argmin(along))]
     if stretch == 1.0:
         return trial, count
-    better = _Trial(system, symmetry, request, _rings(symmetry.kind, 16, stretch, harmonics), trial, split=False)
+    size = STRETCHED_AXIAL if symmetry.kind == "axial" else STRETCHED
+    better = _Trial(system, symmetry, request, _rings(symmetry.kind, size, stretch, harmonics), trial, split=False)
     return better, count + better.count
-
-
-MERIDIAN = 32
-"""Points of the meridian, pole to pole, on which stretches are compared."""
-
-
-def _along_meridian(trial: _Trial, symmetry: Symmetry, stretches: tuple[float, ...]) -> tuple[list[float], int]:
-    """Return for each stretch the error that every second point of a meridian makes, and the cost.
-
-    On a great circle a spectrum has period pi, so that Fourier series need no parity.
-    """
-    azimuth = 0.4  # rad; a meridian that is no symmetry plane
-    s = np.pi * np.arange(MERIDIAN) / MERIDIAN
-    north = s <= 0.5 * np.pi
-    k = np.arange(1, MERIDIAN // 4)
-
-    def basis(x: Array) -> Array:
-        waves = 2 * np.outer(x, k)
-        top = np.cos(2 * (MERIDIAN // 4) * x)[:, None]
-        return np.concatenate([np.ones((len(x), 1)), np.cos(waves), np.sin(waves), top], axis=1)
-
-    to_odd = basis(s[1::2]) @ np.linalg.inv(basis(s[::2]))
-    thetas = []
-    for stretch in stretches:
-        folded = unstretched(np.where(north, s, np.pi - s), stretch)
-        thetas.append(np.where(north, folded, np.pi - folded))
-    theta = np.concatenate(thetas)
-    sin = np.sin(theta)
-    directions = np.column_stack([sin * math.cos(azimuth), sin * math.sin(azimuth), np.cos(theta)]) @ symmetry.axes.T
-    nodes = trial.nodes.moved(directions, np.full(len(trial.nodes.directions), -1))
-    data = nodes.data(trial.data.parents, split=False)
-    rows = np.flatnonzero((count_roots(data) == 1).all(axis=1))
-    if not len(rows):
-        return [0.0] * len(stretches), len(theta)
-    branches = trace_branches(data, rows)
-    errors = []
-    for i in range(len(stretches)):
-        part = slice(i * MERIDIAN, (i + 1) * MERIDIAN)
-        field, weight = branches.field[:, part], branches.weight[:, part]
-        x, y, inverse = continued(field, weight)
-        guess_b, guess_w = restored(x[:, ::2] @ to_odd.T, y[:, ::2] @ to_odd.T, inverse)
-        shift = np.minimum(np.abs(guess_b - field[:, 1::2]) / trial.request.scale, 1.0)
-        width = np.gradient(thetas[i])[1::2] * np.sin(thetas[i][1::2])
-        miss = weight[:, 1::2] * shift + np.abs(guess_w - weight[:, 1::2])
-        errors.append(float((miss * width).sum()))
-    return errors, nodes.count - trial.nodes.count
 
 
 class _Trial:
@@ -301,10 +289,12 @@ class _Trial:
     def _look(self) -> None:
         """Take the numbers of the nodes."""
         self.single_miss = 0.0
+        self._series_error: float | None = None
         self.data = self.nodes.data(split=self.split)
         counts = count_roots(self.data)
         self.single = (counts == 1).all(axis=1) if counts.size else np.zeros(len(counts), dtype=bool)
-        self.other = ~self.single & (counts.any(axis=1) | _touches(self.data))
+        self.other = ~self.single & (counts.any(axis=1) | touches(self.data))
+        self.other[self.other] = in_sight(self.data, np.flatnonzero(self.other), self.request)
         self._by_knot: Array | None = None
         self._loop_error = 0.0
         self.local = False
@@ -406,11 +396,13 @@ class _Trial:
         whole = total = 0.0
         if self.single.any():
             miss = self._miss(lambda values: coarse.to_finer(values[:, kept], self.rings))
-            if miss.sum() > self.request.tolerance:
+            self._half = self._half_by_series = float(miss.sum())
+            if self._half > self.request.tolerance:
                 # where sorted levels nearly cross, branches have kinks, and splines may do better
                 local = self._miss(lambda values: coarse.to_finer_locally(values[:, kept], self.rings))
                 self.local = bool(local.sum() < miss.sum())
                 miss = local if self.local else miss
+                self._half = float(miss.sum())
                 miss = self._release(miss)
             whole = total = self.weight_of_single()
             error += whole * miss.sum(axis=0) * self._concentration(self.branches.field, self._sizes(), miss)
@@ -426,6 +418,34 @@ class _Trial:
     def looping(self) -> bool:
         """Whether pairs without single branches carry a notable share of the error."""
         return self._loop_error > 0.3 * self.half_error()
+
+    def history(self) -> list[tuple[int, float]]:
+        """Return (rings, error) of sets that this one holds: every fourth ring, where that tells, and every second."""
+        found = [(self.rings.rings // 2, self.half_error())]
+        if self.rings.rings % 4 or self.compare is not None or self.other.any() or not self.half_error():
+            return found
+        quarter = self.rings.halved().halved()
+        kept = quarter.within(self.rings)
+        if kept.min() < 0:
+            return found
+        to_finer = quarter.to_finer_locally if self.local else quarter.to_finer
+        fourth = float(self._miss(lambda values: to_finer(values[:, kept], self.rings)).sum())
+        return [(quarter.rings, min(1.0, fourth * self.half_error() / self._half)), *found]
+
+    def series_error(self) -> float:
+        """Return the spectrum's relative error by what the series of single branches hold in their highest quarter.
+
+        That is what a set with a quarter of its rings less would miss, so more than the set itself does.
+        Infinite where it says nothing: pairs without single branches, levels that cross.
+        """
+        if self.compare is not None or self.other.any() or not self.single.any():
+            return math.inf
+        if self._series_error is None:
+            half = self._half_by_series
+            # errors count as they do in the comparison with every second ring
+            counted = max(1.0, self.half_error() / half) if half > 0 else 1.0
+            self._series_error = HIGHEST * counted * float(self._miss(self.rings.without_highest).sum())
+        return self._series_error
 
     def weight_of_single(self) -> float:
         """Return the intensity in single branches."""
@@ -469,26 +489,12 @@ class _Trial:
         worst = by_place(miss, some).max() / by_place(amount, amount > 0).max()
         return max(1.0, worst * amount.sum() / miss.sum())
 
-    def knots(self, error: float, spent: int) -> Knots:
-        """Return the settled result."""
+    def knots(self, error: float, spent: int, by_series: bool = False) -> Knots:
+        """Return the settled result, its branches continued by series where that was found to be better."""
         directions, half = len(self.nodes.directions), self.half_error()
         crossings = self.crossings if self.other.any() else None
+        if self.local and by_series:
+            self.local, half = False, max(half, self.series_error())
         return Knots(
             self.rings, self.data, self.branches, self.other, error, directions, spent, self.local, half, crossings
         )
-
-
-def node_accuracy(request: Request) -> float:
-    """Return the MHz by which a cubic may miss; the quintic that is used errs some hundred times less."""
-    return min(28.0 * request.scale * request.tolerance * 70, 2e-3 * request.frequency)
-
-
-def _touches(data: KnotData) -> NDArray[np.bool_]:
-    """Which pairs could be resonant between nodes though they change sign at none."""
-    out = np.zeros(len(data.gap), dtype=bool)
-    for first, middle, last in data.leaves:
-        for a, b in ((first, middle), (middle, last)):
-            h = data.fields[b] - data.fields[a]
-            reach = can_reach(data.gap[:, a], data.gap[:, b], data.slope[:, a] * h, data.slope[:, b] * h)
-            out |= reach.any(axis=1)
-    return out

@@ -141,13 +141,8 @@ def _solve_block(
     order: NDArray[np.intp] | None,
     near: NDArray[np.intp] | None,
 ) -> Levels:
-    n = system.h0.shape[0]
-    m = len(fields)
     along = directions * fields[:, None]
-    # real times real: half the work of a product of complex matrices
-    h = (along @ np.ascontiguousarray(system.zeeman).view(float).reshape(3, -1)).view(complex).reshape(m, n, n)
-    h += system.h0
-    energy, vectors = np.linalg.eigh(h)
+    energy, vectors = np.linalg.eigh(_matrices(system, along))
     if characters is not None:
         energy, vectors, order = characters.arranged(along, energy, vectors, order, near)
     shift = _expectation(vectors, along, operators)
@@ -155,6 +150,20 @@ def _solve_block(
     population = None if state is None else np.einsum("mai,mai->mi", vectors.conj(), state @ vectors).real
     slope, intensity = moments(vectors, system.zeeman, directions, microwave if intensities else None)
     return Levels(energy, slope, intensity, shift, seen, population, order)
+
+
+def levels(system: System, directions: Array, fields: Array) -> Array:
+    """Return the energies alone, shape (m, n), MHz, at every (direction, field) of two equally long lists."""
+    return np.linalg.eigvalsh(_matrices(system, directions * fields[:, None]))
+
+
+def _matrices(system: System, fields: Array) -> NDArray[np.complex128]:
+    """Return H at fields given as vectors, shape (m, 3), mT."""
+    # real times real: half the work of a product of complex matrices
+    h = (fields @ np.ascontiguousarray(system.zeeman).view(float).reshape(3, -1)).view(complex)
+    h = h.reshape(-1, *system.h0.shape)
+    h += system.h0
+    return h
 
 
 def _expectation(vectors: NDArray, fields: Array, operators: Operators | None) -> Array:

@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 from spinfit.branches import KnotData, Ladder, Pairs, Request, between_knots
 from spinfit.characters import Characters
 from spinfit.hamiltonian import System
-from spinfit.levels import KELVIN_PER_MHZ, population_difference, solve, zero_field_state
+from spinfit.levels import KELVIN_PER_MHZ, levels, population_difference, solve, zero_field_state
 from spinfit.patterns import node_slopes, pattern
 from spinfit.resonance import ZERO_FIELD, can_reach, level_pairs, midpoint_error
 from spinfit.weak import Felt, extent
@@ -23,6 +23,8 @@ Array = NDArray[np.float64]
 
 KEPT_PAIRS = 120
 """Pairs of levels up to which their differences at every node are kept."""
+AT_ONCE = 200_000
+"""Numbers of level differences that are looked at together."""
 BEYOND = 2.5
 """How many times the last field, and what part of the first, is searched for resonances that leave the range."""
 
@@ -99,22 +101,41 @@ class FieldNodes:
             self.middle = order
         return order
 
+    def energies(self, directions: Array, field: float) -> Array:
+        """Return the levels at one field, shape (m, levels), MHz, for other directions, shape (m, 3)."""
+        fields = np.full(len(directions), field)
+        if self.characters is None:
+            return levels(self.system, directions, fields)
+        near = self._near(directions)
+        return solve(self.system, directions, fields, intensities=False, characters=self.characters, near=near).energy
+
     def _ensure(self, fields: list[float]) -> None:
-        missing = [b for b in fields if b not in self.solved]
+        missing = [b for b in dict.fromkeys(fields) if b not in self.solved]
         if missing:
             self.solved.update(zip(missing, self._solve(self.directions, missing), strict=True))
 
     def _differences(self, field: float, pairs: Pairs) -> tuple[Array, Array, Array]:
         """Return gap, slope and strength at one node, each of shape (n, p)."""
-        energy, slope, strength = self.solved[field][:3]
+        return self._between(*self.solved[field][:3], pairs)
+
+    def _between(self, energy: Array, slope: Array, strength: Array, pairs: Pairs) -> tuple[Array, Array, Array]:
+        """Return gap, slope and strength, each of shape (..., n, p), from what `_solve` returns."""
         lower, upper = pairs
-        gap = energy[:, upper] - energy[:, lower] - self.request.frequency
-        strength = strength[:, lower, upper]
+        gap = energy[..., upper] - energy[..., lower] - self.request.frequency
+        strength = strength[..., lower, upper]
         if self.state is None:
             strength = strength * population_difference(energy, lower, upper, self.request.temperature)
         if self.request.weigh is not None:
             strength = strength * self.weights[:, None]
-        return gap, slope[:, upper] - slope[:, lower], strength
+        return gap, slope[..., upper] - slope[..., lower], strength
+
+    def _keep(self, fields: list[float]) -> None:
+        """Find `_differences` of all pairs at several nodes at once, where they are kept."""
+        missing = [x for x in dict.fromkeys(fields) if x not in self._kept]
+        if missing and len(self.lower) <= KEPT_PAIRS:
+            stacked = (np.stack([self.solved[x][i] for x in missing]) for i in range(3))
+            found = self._between(*stacked, (self.lower, self.upper))
+            self._kept.update(zip(missing, zip(*found, strict=True), strict=True))
 
     def _every(self, field: float) -> tuple[Array, Array, Array]:
         """Return `_differences` of all pairs; small systems keep them, since nodes are shared by segments."""
@@ -188,10 +209,13 @@ class FieldNodes:
     def _counts(self) -> NDArray[np.intp]:
         """Return how often the gap of every pair changes sign along the nodes, shape (n, p)."""
         total = np.zeros((len(self.directions), len(self.lower)), dtype=np.intp)
-        for leaf in self.leaves:
-            first, middle, last = (self._every(x)[0] >= 0 for x in leaf)
-            total += first != middle
-            total += middle != last
+        positive: dict[float, NDArray[np.bool_]] = {}
+        for x in {x for leaf in self.leaves for x in leaf}:
+            energy = self.solved[x][0]
+            positive[x] = energy[:, self.upper] - energy[:, self.lower] >= self.request.frequency
+        for first, middle, last in self.leaves:
+            total += positive[first] != positive[middle]
+            total += positive[middle] != positive[last]
         return total
 
     def _judge(
@@ -203,31 +227,44 @@ class FieldNodes:
         only: NDArray[np.bool_],
     ) -> list[tuple[float, float]]:
         """Accept, drop or halve each pending segment; return the halves."""
+        self._keep([x for a, b in pending for x in (a, 0.5 * (a + b), b)])
+        step = max(1, AT_ONCE // max(1, len(self.directions) * len(self.lower)))
         halves = []
-        for a, b in pending:
-            m, h = 0.5 * (a + b), b - a
-            (f_a, g_a, s_a), (f_m, g_m, s_m), (f_b, g_b, s_b) = (self._every(x) for x in (a, m, b))
-            strength = np.maximum(np.maximum(np.abs(s_a), np.abs(s_m)), np.abs(s_b))
-            reach = can_reach(f_a, f_b, g_a * h, g_b * h, self.extent) | ((f_m >= 0) != (f_a >= 0))
-            reach |= between_knots(np.stack([f_a, f_m, f_b]))
-            reach &= only & (strength > 1e-3 * self.request.tolerance * strength.max())
-            if not reach.any():
-                continue
-            error = np.where(reach, midpoint_error(f_a, f_m, f_b, g_a * h, g_m * h, g_b * h), 0.0)
-            # a flat difference turns a miss of frequency into a larger one of field
-            steep = np.minimum(np.minimum(np.abs(g_a), np.abs(g_m)), np.abs(g_b))
-            error = (error * np.clip(STEEP / np.maximum(steep, 1e-9), 1.0, FLATTEST)).max(axis=1)
-            # strengths have no slopes to follow them by: their bend, squared, is what a polynomial may miss
-            bend = np.where(reach, np.abs(s_m - 0.5 * (s_a + s_b)), 0.0)
-            missed = bend * bend / np.maximum(strength * strength.max(initial=0.0, where=reach), 1e-300)
-            bad = error > accuracy
-            bent = missed.max(axis=1).mean() > 0.25 * self.request.tolerance
-            # deep down only knots on symmetry axes are left, where a true crossing has no width
-            if last or not (bent or (bad.mean() >= 0.02 if lenient else bad.any())):
-                self.leaves.append((a, m, b))
-            else:
-                halves += [(a, m), (m, b)]
+        for first in range(0, len(pending), step):
+            some = pending[first : first + step]
+            reachable, good = self._judged(some, accuracy, lenient, only)
+            for (a, b), reach, fine in zip(some, reachable, good, strict=True):
+                m = 0.5 * (a + b)
+                if reach and (last or fine):
+                    self.leaves.append((a, m, b))
+                elif reach:
+                    halves += [(a, m), (m, b)]
         return halves
+
+    def _judged(
+        self, segments: list[tuple[float, float]], accuracy: float, lenient: bool, only: NDArray[np.bool_]
+    ) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
+        """Return which segments can hold a resonance, and which of these are followed well enough, each (segments,)."""
+        columns = [[self._every(x) for x in (a, 0.5 * (a + b), b)] for a, b in segments]
+        f, g, s = (np.array([[node[i] for node in nodes] for nodes in columns]).swapaxes(0, 1) for i in range(3))
+        h = np.array([b - a for a, b in segments])[:, None, None]
+        g = g * h
+        size = np.abs(s).max(axis=0)
+        reach = can_reach(f[0], f[2], g[0], g[2], self.extent) | ((f[1] >= 0) != (f[0] >= 0))
+        reach |= between_knots(f)
+        reach &= only & (size > 1e-3 * self.request.tolerance * size.max(axis=(1, 2), keepdims=True))
+        error = np.where(reach, midpoint_error(*f, *g), 0.0)
+        # a flat difference turns a miss of frequency into a larger one of field
+        steep = np.abs(g).min(axis=0) / h
+        error = (error * np.clip(STEEP / np.maximum(steep, 1e-9), 1.0, FLATTEST)).max(axis=2)
+        # strengths have no slopes to follow them by: their bend, squared, is what a polynomial may miss
+        bend = np.where(reach, np.abs(s[1] - 0.5 * (s[0] + s[2])), 0.0)
+        top = size.max(axis=(1, 2), keepdims=True, initial=0.0, where=reach)
+        missed = bend * bend / np.maximum(size * top, 1e-300)
+        bad = (error > accuracy).mean(axis=1)
+        bent = missed.max(axis=2).mean(axis=1) > 0.25 * self.request.tolerance
+        # deep down only knots on symmetry axes are left, where a true crossing has no width
+        return reach.any(axis=(1, 2)), ~bent & (bad < (0.02 if lenient else 1e-12))
 
     def moved(self, directions: Array, known: NDArray[np.intp]) -> FieldNodes:
         """Return the same nodes, and more where they need them, for another set of directions, reusing what is known.
@@ -244,13 +281,15 @@ class FieldNodes:
         kept = known >= 0
         new = np.ones(len(directions), dtype=bool)
         new[known[kept]] = False
-        for field, columns in zip(fields, other._solve(directions[new], fields), strict=True):
-            arrays = []
-            for old, added in zip(self.solved[field], columns, strict=True):
-                array = np.empty((len(directions), *added.shape[1:]), dtype=added.dtype)
-                array[new], array[known[kept]] = added, old[kept]
-                arrays.append(array)
-            other.solved[field] = tuple(arrays)
+        if not fields:
+            return other
+        columns = []
+        for number, added in enumerate(zip(*other._solve(directions[new], fields), strict=True)):
+            array = np.empty((len(fields), len(directions), *added[0].shape[1:]), dtype=added[0].dtype)
+            array[:, new] = added
+            array[:, known[kept]] = np.stack([self.solved[x][number] for x in fields])[:, kept]
+            columns.append(array)
+        other.solved = dict(zip(fields, zip(*columns, strict=True), strict=True))
         if self.judged is not None and self.characters is None:
             other._judge_again(*self.judged)
         return other
@@ -264,16 +303,19 @@ class FieldNodes:
         low, high = self.request.low, self.request.high
         every = np.ones(len(self.lower), dtype=bool)
         old, self.leaves = self.leaves, []
+        by_depth: dict[int, list[tuple[float, float]]] = {}
         for a, m, b in old:
             if a < low or b > high:
                 self.leaves.append((a, m, b))
                 continue
             depth = round(math.log2(max(1.0, 0.5 * (high - low) / (b - a))))
-            pending = [(a, b)]
-            while pending:
-                pending = self._judge(pending, accuracy, depth >= deepest, depth >= 3, every)
-                self._ensure([0.5 * (x + y) for x, y in pending])
-                depth += 1
+            by_depth.setdefault(depth, []).append((a, b))
+        while by_depth:
+            depth = min(by_depth)
+            halves = self._judge(by_depth.pop(depth), accuracy, depth >= deepest, depth >= 3, every)
+            self._ensure([0.5 * (x + y) for x, y in halves])
+            if halves:
+                by_depth.setdefault(depth + 1, []).extend(halves)
         self.leaves.sort()
 
     def data(self, pairs: Pairs | None = None, *, split: bool = True) -> KnotData:
@@ -291,6 +333,7 @@ class FieldNodes:
         leaves = np.array([[index[x] for x in leaf] for leaf in self.leaves], dtype=np.intp).reshape(-1, 3)
         pairs = self._relevant(fields) if pairs is None else pairs
         every = len(pairs[0]) == len(self.lower)
+        self._keep(fields)
         columns = [self._every(x) if every else self._differences(x, pairs) for x in fields]
         if not columns:
             empty = np.empty((0, 0, len(self.directions)))
@@ -366,6 +409,7 @@ class FieldNodes:
         )
 
     def _relevant(self, fields: list[float]) -> Pairs:
+        self._keep(fields)
         low = high = top = None
         for x in fields:
             gap, slope, strength = self._every(x)
@@ -406,3 +450,8 @@ BLUR = 0.1
 """Distance of levels, in line widths, that is not seen at the default tolerance."""
 FLAT = 8.0
 """MHz/mT, about a quarter of a free spin's slope."""
+
+
+def node_accuracy(request: Request) -> float:
+    """Return the MHz by which a cubic may miss; the quintic that is used errs some hundred times less."""
+    return min(28.0 * request.scale * request.tolerance * 70, 2e-3 * request.frequency)

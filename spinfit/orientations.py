@@ -13,12 +13,14 @@ from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import interpolate
+from scipy import interpolate, linalg
 
 Array = NDArray[np.float64]
 
 SPLINE = 5
 """Degree of the splines over the sphere: their error falls as the sixth power of the step."""
+FEW_KNOTS = 200
+"""Knots up to which one matrix for all rings is faster than one for each."""
 
 
 def _phi_basis(kind: str, harmonics: int, phi: Array) -> Array:
@@ -241,13 +243,15 @@ class Rings:
     def to_mesh(self, values: Array, mesh: Mesh) -> Array:
         """Continue values at the knots, shape (q, n), to a mesh: (q, thetas + 1, azimuths)."""
         even, odd = _theta_matrices(self.rings, mesh.thetas, self.stretch)
-        basis, has_odd = _mesh_basis(self, mesh)
-        amplitude = (values @ _analysis(self).T).reshape(len(values), self.rings + 1, -1)
-        if has_odd is not None:
-            columns = np.where(has_odd[None, :, None], (odd @ amplitude).transpose(0, 2, 1), 0)
-            columns += np.where(has_odd[None, :, None], 0, (even @ amplitude).transpose(0, 2, 1))
-            return columns.transpose(0, 2, 1) @ basis.T
-        return even @ amplitude @ basis.T
+        if self.kind == "axial":
+            return (values @ even.T)[:, :, None]
+        basis, is_odd = _mesh_basis(self, mesh)
+        amplitude = _amplitudes(self, values)
+        if is_odd is None:
+            return even @ amplitude @ basis.T
+        out = even @ amplitude[:, :, ~is_odd] @ basis[:, ~is_odd].T
+        out += odd @ amplitude[:, :, is_odd] @ basis[:, is_odd].T
+        return out
 
     def to_mesh_locally(self, values: Array, mesh: Mesh) -> Array:
         """Continue values at the knots, shape (q, n), to a mesh by splines: (q, thetas + 1, azimuths).
@@ -256,6 +260,8 @@ class Rings:
         have where they nearly cross, stays where it is.
         """
         around, even, odd = _local_matrices(self, mesh)
+        if self.kind == "axial":
+            return (values @ even.T)[:, :, None]
         out, column = [], 0
         for matrix in around:
             out.append(values[:, column : column + matrix.shape[1]] @ matrix.T)
@@ -276,6 +282,15 @@ class Rings:
         Harmonics are counted so that `harmonics` azimuth intervals resolve as many.
         """
         return values @ _truncation(self, kept).T
+
+    def without_highest(self, values: Array) -> Array:
+        """Return values at the knots, shape (q, n), with the highest quarter of all harmonics removed.
+
+        What is missing afterwards is about what the series would miss with a quarter of the rings less.
+        """
+        if len(self.angles()[0]) <= FEW_KNOTS:
+            return values @ _without_highest(self).T
+        return _smoothed(self, values)
 
     def to_finer(self, values: Array, finer: Rings) -> Array:
         """Continue values at the knots, shape (q, n), to the knots of another set, (q, n')."""
@@ -317,19 +332,72 @@ def _positions(coarse: Rings, fine: Rings) -> NDArray[np.intp]:
 
 
 @lru_cache(maxsize=128)
-def _analysis(rings: Rings) -> Array:
-    """Return the matrix, shape ((rings + 1) * count, n), from knot values to ring harmonics."""
-    blocks = [
+def _ring_blocks(rings: Rings) -> list[Array]:
+    """Return for each ring the matrix from its values to its harmonics."""
+    return [
         _ring_analysis(rings.kind, rings.harmonics, rings._intervals(i), i == rings.rings)
         for i in range(rings.rings + 1)
     ]
-    count = blocks[0].shape[0]
-    out = np.zeros(((rings.rings + 1) * count, sum(b.shape[1] for b in blocks)))
+
+
+@lru_cache(maxsize=128)
+def _analysis(rings: Rings) -> Array:
+    """Return the matrix, shape ((rings + 1) * count, n), from knot values to ring harmonics."""
+    return linalg.block_diag(*_ring_blocks(rings))
+
+
+def _amplitudes(rings: Rings, values: Array) -> Array:
+    """Return ring harmonics, shape (q, rings + 1, count), of values at the knots, shape (q, n)."""
+    if values.shape[1] <= FEW_KNOTS:
+        return (values @ _analysis(rings).T).reshape(len(values), rings.rings + 1, -1)
+    blocks = _ring_blocks(rings)
+    out = np.empty((len(values), len(blocks), blocks[0].shape[0]))
     column = 0
     for i, block in enumerate(blocks):
-        out[i * count : (i + 1) * count, column : column + block.shape[1]] = block
+        out[:, i] = values[:, column : column + block.shape[1]] @ block.T
         column += block.shape[1]
     return out
+
+
+def _orders(kind: str, harmonics: int) -> Array:
+    """Return the order of each column of `_phi_basis`, counted as azimuth intervals are."""
+    if kind == "axial":
+        return np.zeros(1)
+    if kind == "octant":
+        return np.arange(harmonics + 1.0)
+    unit, top = (1.0, harmonics) if kind == "quarter" else (0.5, 2 * harmonics)
+    return unit * np.concatenate([np.arange(top + 1.0), np.arange(1.0, top)])
+
+
+def _smoothed(rings: Rings, values: Array) -> Array:
+    """Return values at the knots, shape (q, n), without the highest quarter of harmonics in theta and in phi."""
+    count = rings.rings
+    angles, inner = 0.5 * np.pi * np.arange(count + 1) / count, np.arange(1, count)
+    kept = np.arange(count + 1) <= 0.75 * count
+    waves = np.cos(2 * np.outer(angles, np.arange(count + 1)))
+    even, odd = (waves * kept) @ np.linalg.inv(waves), np.zeros((count + 1, count + 1))
+    waves = np.sin(2 * np.outer(angles[inner], inner))
+    odd[1:-1, 1:-1] = (waves * kept[inner]) @ np.linalg.inv(waves)
+    amplitude = _amplitudes(rings, values)
+    is_odd = _odd_harmonics(rings.kind, rings.harmonics)
+    amplitude[:, :, ~is_odd] = even @ amplitude[:, :, ~is_odd]
+    if is_odd.any():
+        amplitude[:, :, is_odd] = odd @ amplitude[:, :, is_odd]
+    most = min(rings.harmonics, count + rings.extra)
+    amplitude *= _orders(rings.kind, rings.harmonics) <= 0.75 * most
+    _, phi = rings.angles()
+    basis = _phi_basis(rings.kind, rings.harmonics, phi)
+    out, column = np.empty(values.shape), 0
+    for i, block in enumerate(_ring_blocks(rings)):
+        part = slice(column, column + block.shape[1])
+        out[:, part] = amplitude[:, i] @ basis[part].T
+        column = part.stop
+    return out
+
+
+@lru_cache(maxsize=64)
+def _without_highest(rings: Rings) -> Array:
+    return _smoothed(rings, np.eye(len(rings.angles()[0]))).T
 
 
 def _spline_matrix(knots: Array, angles: Array, parity: int, period: float = 0.0) -> Array:
@@ -404,14 +472,7 @@ def _truncation(rings: Rings, kept: int) -> Array:
     """Return the matrix, shape (n, n), that removes harmonics above `kept` on every ring."""
     theta, phi = rings.angles()
     basis = _phi_basis(rings.kind, rings.harmonics, phi)
-    top = rings.harmonics
-    if rings.kind == "octant":
-        order = np.arange(top + 1.0)
-    elif rings.kind == "quarter":
-        order = np.concatenate([np.arange(top + 1.0), np.arange(1.0, top)])
-    else:
-        order = 0.5 * np.concatenate([np.arange(2 * top + 1.0), np.arange(1.0, 2 * top)])
-    basis = basis * (order <= kept)
+    basis = basis * (_orders(rings.kind, rings.harmonics) <= kept)
     analysis = _analysis(rings).reshape(rings.rings + 1, -1, len(theta))
     ring = np.concatenate(
         [[i] * len(_ring_azimuths(rings.kind, rings._intervals(i), i == rings.rings)) for i in range(rings.rings + 1)]

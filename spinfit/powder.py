@@ -114,6 +114,7 @@ def powder(
         if keep is not None:
             keep.append(Average(symmetry, request, lines, [], [], histograms))
         return histograms, report
+
     def compare(rings: Rings, branches: Branches, local: bool, predict: Callable[[Array], Array]) -> float:
         return _changed(rings, branches, local, predict, request, grid)
 
@@ -187,25 +188,29 @@ def _mesh_for(rings: Rings, branches: Branches, request: Request) -> list[tuple[
     Neighbours lie within what the largest smear hides, and near turning points, where the line
     itself must hide the grain, the field curves by little more than the line within one step.
     """
-    probe = Mesh(rings.kind, 2 * rings.rings, _probe_azimuths(rings))
-    values = rings.to_mesh(branches.field, probe)
+    # fine enough to see how steep a field of few harmonics gets between the knots
+    few = max(1, round(24 / _least_thetas(rings)))
+    probe = Mesh(rings.kind, few * _least_thetas(rings), 1 if rings.kind == "axial" else few * _least_azimuths(rings))
+    x, _, inverse = continued(branches.field, branches.weight)
+    values = rings.to_mesh(x, probe)
+    values, _ = restored(values, values, inverse[:, :, None])
     if branches.variance is not None:
         # where a line is broader, its neighbours may lie farther apart
         own = np.maximum(rings.to_mesh(branches.variance, probe), 0.0)
         wider = np.sqrt(1 + own / request.scale**2)
         thetas = _widened_size(values, wider, 1, probe.thetas, request, even=True)
-        thetas = np.maximum(thetas, 2 * rings.rings)
+        thetas = np.maximum(thetas, _least_thetas(rings))
         if rings.kind == "axial":
             return [(_ladder_size(t), 1) for t in thetas]
         phis = _widened_size(values, wider, 2, probe.phis, request, even=rings.kind == "octant")
-        phis = np.maximum(phis, _probe_azimuths(rings))
+        phis = np.maximum(phis, _least_azimuths(rings))
         return [(_ladder_size(t), _ladder_size(p)) for t, p in zip(thetas, phis, strict=True)]
     thetas = _sizes(values, 1, probe.thetas, request, even=True)
-    thetas = np.maximum(thetas, 2 * rings.rings)
+    thetas = np.maximum(thetas, _least_thetas(rings))
     if rings.kind == "axial":
         return [(_ladder_size(t[0] if t[0] <= 4 * t[1] else t[1]), 1) for t in thetas.T]
     phis = _sizes(values, 2, probe.phis, request, even=rings.kind == "octant")
-    phis = np.maximum(phis, _probe_azimuths(rings))
+    phis = np.maximum(phis, _least_azimuths(rings))
     # smearing costs about twice as much a point
     choice = np.where(np.prod([thetas[0], phis[0]], axis=0) <= 2 * thetas[1] * phis[1], 0, 1)
     row = np.arange(len(values))
@@ -247,8 +252,12 @@ def _sizes(values: Array, axis: int, intervals: int, request: Request, even: boo
     return np.stack([plain, np.minimum(plain, smeared)])
 
 
-def _probe_azimuths(rings: Rings) -> int:
-    return {"axial": 1, "octant": 2, "quarter": 4, "half": 8}[rings.kind] * min(rings.harmonics, 24)
+def _least_thetas(rings: Rings) -> int:
+    return max(8, 2 * rings.rings)
+
+
+def _least_azimuths(rings: Rings) -> int:
+    return {"axial": 1, "octant": 2, "quarter": 4, "half": 8}[rings.kind] * min(max(4, rings.harmonics), 24)
 
 
 def _changed(

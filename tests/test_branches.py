@@ -5,12 +5,13 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from spinfit.branches import Request, between_knots
+from spinfit.branches import Request, between_knots, in_sight
 from spinfit.hamiltonian import systems
 from spinfit.lineshape import Shape
-from spinfit.nodes import FieldNodes
+from spinfit.nodes import FieldNodes, node_accuracy
+from spinfit.orientations import Rings
 from spinfit.resonance import find
-from spinfit.sheets import Grain
+from spinfit.sheets import SMEAR_MOST, SMEAR_REACH, Grain
 from spinfit.species import Species, Spin
 
 NU, LOW, HIGH = 9500.0, 0.001, 924.0
@@ -46,3 +47,24 @@ def test_knots_on_both_sides_of_resonance_are_marked() -> None:
     marked = between_knots(gap)
     assert marked[:, 0].tolist() == [False, True, True, False]
     assert not marked[:, 1:].any()
+
+
+@pytest.mark.parametrize("scale", [0.5, 5.0])
+def test_pairs_out_of_sight(scale: float) -> None:
+    """Pairs that are resonant nowhere in the window, by exact resonances at many directions between the knots."""
+    (system,) = systems(Species("q", (Spin(3.5, (2.0,), 1500.0, 300.0),)))
+    margin = SMEAR_REACH * SMEAR_MOST * scale
+    low, high = 1150.0, 1250.0
+    shape = Shape(scale, 0.0)
+    request = Request(34_000.0, low - margin, high + margin, Grain.of(shape, 1e-3), shape.scale, 1e-3)
+    nodes = FieldNodes(system, request, Rings("octant", 8, 10, 2).directions(np.eye(3)))
+    nodes.choose(node_accuracy(request))
+    data = nodes.data()
+    seen = in_sight(data, np.arange(len(data.gap)), request)
+    ways = np.random.default_rng(2).normal(size=(400, 3))
+    found = find(system, ways / np.linalg.norm(ways, axis=1, keepdims=True), 34_000.0, (low, high))
+    there = set(zip(found.lower.tolist(), found.upper.tolist(), strict=True))
+    pairs = list(zip(data.pairs[0].tolist(), data.pairs[1].tolist(), strict=True))
+    kept = {pair for pair, one in zip(pairs, seen, strict=True) if one}
+    assert there & set(pairs) <= kept
+    assert len(kept) < len(pairs)

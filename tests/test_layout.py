@@ -56,6 +56,8 @@ ORDER = (
     "branches",
     "crossings",
     "nodes",
+    "meridian",
+    "doublets",
     "knots",
     "exact",
     "loops",
