@@ -8,7 +8,8 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from spinfit.errors import InputError
-from spinfit.files.toml_crystal_field import BOND_KEYS, FIELD_KEYS, model_from_table, parse_xyz, read_crystal_fields
+from spinfit.files.keys import BOND, FIELD
+from spinfit.files.toml_crystal_field import model_from_table, parse_xyz, read_crystal_fields
 from spinfit.ion.model import solve
 from spinfit.ion.tensors import doublet_g
 from spinfit.units import MHZ_PER_WAVENUMBER as CM
@@ -154,7 +155,7 @@ def test_xyz_with_a_count():
 WRITTEN = ["900 cm^-1", "-3 eV", "0 MHz", "1 mT", "", "term", "configuration", True, 0, 1.5, math.nan, [0, 0, 1]]
 VALUES = st.one_of(st.sampled_from(WRITTEN), st.integers(-(10**30), 10**30), st.text(max_size=6))
 INNER = ["ten_Dq", "Ds", "B", "C", "F2", "F4", "F6", "B4_0", "B2_m1", "xyz", "bonds", "z2", "O"]
-KEYS = st.sampled_from([*FIELD_KEYS, *BOND_KEYS, *INNER])
+KEYS = st.sampled_from([*FIELD, *BOND, *INNER])
 TABLES = st.dictionaries(KEYS, VALUES)
 
 

@@ -11,12 +11,11 @@ from typing import Any
 import numpy as np
 
 from spinfit.errors import InputError
-from spinfit.files.job import JOB_KEYS
+from spinfit.files.keys import JOB, LINES, TRACE
 from spinfit.files.toml_fit import read_fit, start_of
 from spinfit.files.toml_sample import read_sample, read_tolerance
 from spinfit.files.toml_species import read_species
 from spinfit.files.toml_table import Given, Table, load_toml, parse_toml
-from spinfit.files.toml_trace import LINES_KEYS, TRACE_KEYS
 from spinfit.files.toml_writing import toml_text
 from spinfit.fitting.data import Lines, Trace
 from spinfit.fitting.parameters import Binding
@@ -42,7 +41,7 @@ class Template:
         self.folder = os.path.realpath(Path(path).parent)
         self.tables, text = load_toml(path)
         try:
-            Table(self.tables, "", JOB_KEYS)
+            Table(self.tables, "", JOB)
             self.kind = self._only()
             self._check()
         except InputError as error:
@@ -63,8 +62,8 @@ class Template:
 
     def _check(self) -> None:
         """Read all but the data: what is wrong here would be wrong for every trace."""
-        root = Table(self.tables, "", JOB_KEYS)
-        keys = TRACE_KEYS if self.kind == "trace" else LINES_KEYS
+        root = Table(self.tables, "", JOB)
+        keys = TRACE if self.kind == "trace" else LINES
         entry = Table(self.tables[self.kind][0], f"{self.kind}.1", keys)
         given: Given = {}
         start = start_of(root.data.get("fit"))

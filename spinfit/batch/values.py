@@ -18,7 +18,7 @@ from pathlib import Path
 from typing import Any
 
 from spinfit.errors import InputError
-from spinfit.files.toml_trace import TRACE_KEYS
+from spinfit.files.keys import TRACE
 from spinfit.units import UNITS, parse
 
 QUANTITIES = {
@@ -192,7 +192,7 @@ def _reader(heading: str, place: str) -> tuple[str, Callable[[str, str], Any] | 
             unit = _SURROUNDED.fullmatch(heading[len(key) :])
             if unit is not None and unit[1] in UNITS[kind]:
                 return key, lambda cell, at, key=key, unit=unit[1]: _cell(key, _with_unit(cell, unit), at)
-    close = difflib.get_close_matches(heading, [key for key in (*KEYS, *TRACE_KEYS) if key != "file"], 1, _ALIKE)
+    close = difflib.get_close_matches(heading, [key for key in (*KEYS, *TRACE) if key != "file"], 1, _ALIKE)
     if close:
         units = f", or {close[0]}_UNIT over bare numbers" if close[0] in QUANTITIES else ""
         found = f'a column "{heading}", which is nearly "{close[0]}"'

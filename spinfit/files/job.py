@@ -14,6 +14,7 @@ from pathlib import Path
 from typing import Any
 
 from spinfit.errors import InputError
+from spinfit.files.keys import JOB, MODEL
 from spinfit.files.store import Folder, Kept, Store
 from spinfit.files.toml_fit import read_fit, start_of
 from spinfit.files.toml_sample import DEFAULT_TOLERANCE, read_sample, read_sweep, read_tolerance
@@ -25,8 +26,6 @@ from spinfit.fitting.parameters import Binding, expand_vary
 from spinfit.species import Species
 from spinfit.sweep import Sample, Sweep
 
-MODEL_KEYS = ("species", "sweep", "sample", "accuracy")
-JOB_KEYS = ("species", "sample", "accuracy", "trace", "lines", "fit")
 _ONLY_IN_JOBS = "it makes this a job file: fit it, or take it out to simulate"
 _NOT_IN_MODELS = {key: _ONLY_IN_JOBS for key in ("trace", "lines", "fit")}
 _NOT_IN_JOBS = {"sweep": "it makes this a model file: in a job the conditions stand in [[trace]]"}
@@ -76,7 +75,7 @@ def read_model(path: str | Path) -> Model:
 
 def model_from(data: Mapping[str, Any], *, name: str = "model", path: str = "", text: str = "") -> Model:
     """Make a model of parsed TOML (see `read_model`)."""
-    root = Table(data, "", MODEL_KEYS, elsewhere=_NOT_IN_MODELS)
+    root = Table(data, "", MODEL, elsewhere=_NOT_IN_MODELS)
     given: Given = {}
     root.require("sweep", 'a table: [sweep] with frequency = "9.5 GHz" and field = "260, 360 mT"')
     sweep = read_sweep(root.data["sweep"], given)
@@ -138,7 +137,7 @@ def job_of(text: str, name: str, contents: Mapping[str, bytes]) -> Job:
 
 
 def _job_from(data: Mapping[str, Any], path: Path, text: str, store: Store) -> Job:
-    root = Table(data, "", JOB_KEYS, elsewhere=_NOT_IN_JOBS)
+    root = Table(data, "", JOB, elsewhere=_NOT_IN_JOBS)
     given: Given = {}
     start = start_of(root.data.get("fit"))
     sample = read_sample(root.data.get("sample"), given, job=True)

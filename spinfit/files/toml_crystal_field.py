@@ -20,12 +20,25 @@ from __future__ import annotations
 
 import math
 import re
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
 from spinfit.errors import InputError, nearest
+from spinfit.files.keys import (
+    BOND,
+    COEFFICIENTS,
+    FIELD,
+    FIELD_FORMS,
+    GEOMETRY,
+    ION,
+    LIGAND,
+    OCTAHEDRAL,
+    ORBITALS,
+    RACAH,
+    SLATER,
+)
 from spinfit.files.toml_table import Given, Table, load_toml
 from spinfit.ion.crystal_field import (
     CrystalField,
@@ -40,14 +53,9 @@ from spinfit.ion.crystal_field import (
 from spinfit.ion.defaults import default_slater, default_space, default_zeta, open_shell
 from spinfit.ion.model import SPACES, IonModel, racah_to_slater
 from spinfit.ion.names import Shell, parse_name
-from spinfit.ion.orbitals import REAL_ORBITALS
 from spinfit.ion.quench import MeasuredG, parse_measured
 from spinfit.ion.species_field import FACTORS, LARGEST_FACTOR, SpeciesField, species_field
 
-FORMS = ("orbitals", "octahedral", "ligand", "geometry", "wybourne", "stevens")
-FIELD_KEYS = (*FORMS, "zeta", "reduction", "covalency", "racah", "slater", "space", "source")
-BOND_KEYS = ("e_sigma", "e_pi", "e_pi_x", "e_pi_y")
-LIGAND_KEYS = ("position", "angles", "kind", "turn", *BOND_KEYS)
 _EXAMPLE = "[ion.octahedral] with ten_Dq, [ion.orbitals], [[ion.ligand]], [ion.geometry], [ion.wybourne]"
 
 
@@ -95,7 +103,7 @@ def crystal_fields_of(data: Mapping[str, Any]) -> dict[str, GivenIon]:
 
 
 def _read_ion(entry: object, place: str) -> GivenIon:
-    table = Table(entry, place, ("name", "measured", *FIELD_KEYS))
+    table = Table(entry, place, ION)
     table.require("name", '"Cu2+"')
     name = table.text("name") or ""
     try:
@@ -119,7 +127,7 @@ def model_from_table(data: Mapping[str, Any], ion: str, *, place: str = "crystal
     ------
     InputError
     """
-    table = Table(dict(data), place, FIELD_KEYS)
+    table = Table(dict(data), place, FIELD)
     try:
         shell = open_shell(ion)
     except InputError as error:
@@ -144,7 +152,7 @@ def field_from_table(
     InputError
     """
     noted: Given = {}
-    table = Table(data, place, FIELD_KEYS, given=noted)
+    table = Table(data, place, FIELD, given=noted)
     try:
         shell = open_shell(ion)
     except InputError as error:
@@ -224,14 +232,14 @@ def _slater(table: Table, name: str, shell: Shell) -> dict[int, float]:
     if "racah" in table:
         if shell.l != 2:
             raise table.error("racah", f"does not belong to {shell}", "write slater = {F2 = ..., F4 = ..., F6 = ...}")
-        inner = _inner(table, "racah", ("B", "C"))
+        inner = _inner(table, "racah", RACAH)
         values = []
-        for key in ("B", "C"):
+        for key in RACAH:
             inner.require(key, '"900 cm^-1"')
             values.append(inner.quantity(key, "energy") or 0.0)
         return racah_to_slater(*values)
     if "slater" in table:
-        keys = tuple(f"F{k}" for k in range(2, 2 * shell.l + 1, 2))
+        keys = SLATER[shell.l]
         inner = _inner(table, "slater", keys)
         for key in keys:
             inner.require(key, '"60000 cm^-1"')
@@ -244,7 +252,7 @@ def _slater(table: Table, name: str, shell: Shell) -> dict[int, float]:
 
 def _field(table: Table, shell: Shell) -> CrystalField:
     """Read the one form of the field that is given."""
-    forms = [form for form in FORMS if form in table]
+    forms = [form for form in FIELD_FORMS if form in table]
     if not forms:
         raise InputError("has no crystal field", f"write one: {_EXAMPLE}", place=table.place)
     if len(forms) > 1:
@@ -268,29 +276,28 @@ def _field(table: Table, shell: Shell) -> CrystalField:
         raise InputError(error.found, error.right, place=place) from None
 
 
-def _inner(table: Table, key: str, keys: tuple[str, ...]) -> Table:
+def _inner(table: Table, key: str, keys: Collection[str]) -> Table:
     """Return an inner table that notes its units beside the outer one's."""
     return Table(table.table(key), table.at(key), keys, path=(*table.path, key), given=table.given)
 
 
 def _orbitals(table: Table, shell: Shell, form: str) -> CrystalField:
-    known = tuple(REAL_ORBITALS[shell.l])
-    inner = _inner(table, form, known)
+    inner = _inner(table, form, ORBITALS[shell.l])
     return from_orbitals(shell.l, {key: inner.quantity(key, "energy") or 0.0 for key in inner.data})
 
 
 def _octahedral(table: Table, shell: Shell, form: str) -> CrystalField:
     if shell.l != 2:
         raise table.error(form, f"is a form for d shells, not {shell}", "give wybourne or stevens coefficients")
-    inner = _inner(table, form, ("ten_Dq", "Ds", "Dt"))
+    inner = _inner(table, form, OCTAHEDRAL)
     inner.require("ten_Dq", '"12000 cm^-1"')
-    values = [inner.quantity(key, "energy") or 0.0 for key in ("ten_Dq", "Ds", "Dt")]
+    values = [inner.quantity(key, "energy") or 0.0 for key in OCTAHEDRAL]
     return from_octahedral(*values)
 
 
 def _coefficients(table: Table, shell: Shell, form: str) -> CrystalField:
     keys = {parameter_name(k, q): (k, q) for k in range(2, 2 * shell.l + 1, 2) for q in range(-k, k + 1)}
-    inner = _inner(table, form, tuple(keys))
+    inner = _inner(table, form, COEFFICIENTS[shell.l])
     if not inner.data:
         raise table.error(form, "is empty", 'write coefficients such as B4_0 = "-1750 cm^-1"')
     values = {keys[key]: inner.quantity(key, "energy") or 0.0 for key in inner.data}
@@ -316,7 +323,7 @@ def _ligands(table: Table, shell: Shell, form: str) -> CrystalField:
     """Read [[ligand]] tables: a position or two angles, with e_sigma and e_pi."""
     ligands = []
     for place, entry in table.tables(form):
-        inner = Table(entry, place, LIGAND_KEYS, path=(place,), given=table.given)
+        inner = Table(entry, place, LIGAND, path=(place,), given=table.given)
         if ("position" in inner) == ("angles" in inner):
             raise InputError(
                 "needs exactly one of position and angles",
@@ -335,7 +342,7 @@ def _ligands(table: Table, shell: Shell, form: str) -> CrystalField:
 
 def _geometry(table: Table, shell: Shell, form: str) -> CrystalField:
     """Read [geometry]: an xyz-style list (symbol x y z a line, the metal first) and bonds by symbol."""
-    inner = _inner(table, form, ("xyz", "bonds"))
+    inner = _inner(table, form, GEOMETRY)
     inner.require("xyz", '"""\nCu 0 0 0\nO 0 0 2.1\n"""')
     text = inner.data["xyz"]
     if not isinstance(text, str):
@@ -352,9 +359,7 @@ def _geometry(table: Table, shell: Shell, form: str) -> CrystalField:
     for symbol, entry in bonds.items():
         if symbol not in known:
             raise InputError(f'no atom "{symbol}" in xyz', nearest(symbol, known), place=inner.at("bonds"))
-        energies[symbol] = _bond(
-            Table(entry, f"{inner.at('bonds')}.{symbol}", BOND_KEYS, path=(symbol,), given=table.given)
-        )
+        energies[symbol] = _bond(Table(entry, f"{inner.at('bonds')}.{symbol}", BOND, path=(symbol,), given=table.given))
     missing = [symbol for symbol in known if symbol not in energies]
     if missing:
         raise InputError(

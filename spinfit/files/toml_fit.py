@@ -7,13 +7,12 @@ from dataclasses import dataclass, field
 from typing import Any
 
 from spinfit.errors import InputError
+from spinfit.files.keys import FIT, STARTS
 from spinfit.files.toml_table import LARGEST_NUMBER, Table, describe, flatten, is_finite, quantity_of
 from spinfit.fitting.data import LOSSES
 from spinfit.fitting.parameters import Parameter, expand_vary, members
 from spinfit.fitting.ties import compile_ties
 
-FIT_KEYS = ("vary", "start", "limits", "tie", "loss", "loss_scale")
-STARTS = ("given", "near", "auto")
 _EXAMPLE = 'vary = ["cu.g", "cu.width.gaussian"]'
 
 
@@ -33,7 +32,7 @@ def start_of(data: object) -> str:
     """Return ``fit.start`` alone, which decides what a species may leave open."""
     if data is None:
         raise InputError("is missing", f"write [fit] with {_EXAMPLE}", place="fit")
-    return Table(data, "fit", FIT_KEYS).choice("start", STARTS) or "given"
+    return Table(data, "fit", FIT).choice("start", STARTS) or "given"
 
 
 def read_fit(data: object, parameters: Mapping[str, Parameter]) -> FitTable:
@@ -46,7 +45,7 @@ def read_fit(data: object, parameters: Mapping[str, Parameter]) -> FitTable:
         and ties that are not arithmetic, form a circle, or tie what is varied or limited.
     """
     start = start_of(data)
-    table = Table(data, "fit", FIT_KEYS)
+    table = Table(data, "fit", FIT)
     vary = _vary(table)
     single = expand_vary(vary, parameters)
     ties = flatten(table.table("tie") or {}, "fit.tie")

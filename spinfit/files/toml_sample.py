@@ -7,23 +7,13 @@ from typing import Any
 import numpy as np
 
 from spinfit.errors import InputError, nearest
+from spinfit.files.keys import ACCURACY, SAMPLE, SWEEP
 from spinfit.files.toml_table import Given, Table, describe
 from spinfit.sites import POINT_GROUPS
 from spinfit.sweep import DETECT, FORMS, MICROWAVE, Sample, Sweep
 
-SWEEP_KEYS = ("frequency", "field", "points", "temperature", "microwave", "modulation", "detect", "phase")
-ACCURACY_KEYS = ("tolerance",)
-
-FORM_KEYS = {
-    "powder": (),
-    "crystal": ("axis", "from", "angles", "angle_zero", "microwave_axis", "tilt", "point_group"),
-    "aligned": ("director", "order", "angle"),
-    "solution": (),
-}
+FORM_KEYS = {form: tuple(key for key in SAMPLE if form in SAMPLE[key].forms) for form in FORMS}
 """Which keys of ``[sample]`` go with which form."""
-SAMPLE_KEYS = ("form", *dict.fromkeys(key for keys in FORM_KEYS.values() for key in keys))
-
-"""The 32 crystallographic point groups by their short international symbols."""
 
 DEFAULT_TOLERANCE = 1e-3
 MOST_POINTS = 10_000_000
@@ -38,7 +28,7 @@ def read_sweep(data: object, given: Given) -> Sweep:
     InputError
         For wrong, missing and unknown keys, non-positive conditions and a reversed or zero range.
     """
-    table = Table(data, "sweep", SWEEP_KEYS, path=("sweep",), given=given)
+    table = Table(data, "sweep", SWEEP, path=("sweep",), given=given)
     table.require("frequency", '"9.5 GHz"')
     table.require("field", '"260, 360 mT" (first, last)')
     frequency = table.positive("frequency", "frequency")
@@ -86,7 +76,7 @@ def read_sample(data: object, given: Given, *, job: bool) -> Sample:
     """
     if data is None:
         return Sample()
-    table = Table(data, "sample", SAMPLE_KEYS, path=("sample",), given=given)
+    table = Table(data, "sample", SAMPLE, path=("sample",), given=given)
     form = table.choice("form", FORMS) or "powder"
     for key in table.data:
         if key != "form" and key not in FORM_KEYS[form]:
@@ -136,7 +126,7 @@ def read_tolerance(data: object, given: Given) -> float:
     """Read ``[accuracy]``; a missing one has the default."""
     if data is None:
         return DEFAULT_TOLERANCE
-    table = Table(data, "accuracy", ACCURACY_KEYS, given=given)
+    table = Table(data, "accuracy", ACCURACY, given=given)
     value = table.number("tolerance")
     if value is None:
         return DEFAULT_TOLERANCE

@@ -9,6 +9,17 @@ from fractions import Fraction
 from typing import Any
 
 from spinfit.errors import InputError, nearest
+from spinfit.files.keys import (
+    CORRELATION,
+    EXCHANGE,
+    NUCLEUS,
+    SPECIES,
+    SPIN,
+    SPREAD,
+    STEVENS,
+    TREATMENTS,
+    WIDTH,
+)
 from spinfit.files.toml_crystal_field import field_from_table
 from spinfit.files.toml_table import Given, Table, describe, is_finite, is_number
 from spinfit.ion.lande import lookup
@@ -19,19 +30,6 @@ from spinfit.species import NO_TILT, Exchange, Nucleus, Species, Spin, Spread, W
 from spinfit.units import G_ELECTRON
 
 Path = tuple[str | int, ...]
-
-SPIN_KEYS = ("S", "g", "g_tilt", "D", "E", "rhombicity", "D_tilt", "stevens")
-SPECIES_KEYS = (
-    *("name", "ion", "amount", "populations"),
-    *SPIN_KEYS,
-    *("crystal_field", "spin", "exchange", "nucleus", "width", "spread"),
-)
-NUCLEUS_KEYS = ("isotope", "element", "name", "A", "A_tilt", "P", "P_tilt", "count", "couples_to", "treat")
-EXCHANGE_KEYS = ("between", "J", "dipolar", "tilt", "antisymmetric")
-WIDTH_KEYS = ("gaussian", "lorentzian", "hidden_hyperfine", "a", "b", "c")
-SPREAD_KEYS = ("g", "D", "E", "A", "tilt", "correlation")
-CORRELATION_KEYS = ("g_A", "D_E")
-TREATMENTS = ("auto", "exact", "first order", "second order")
 
 TENSOR = (1, 2, 3)
 LARGEST_DIMENSION = 4096
@@ -60,7 +58,7 @@ def read_species(
         raise InputError("is missing", 'write [[species]] with name = "...", S = "1/2", g = ...', place="species")
     found: list[Species] = []
     for n, (place, data) in enumerate(tables):
-        table = Table(data, place, SPECIES_KEYS, path=("species", n), given=given)
+        table = Table(data, place, SPECIES, path=("species", n), given=given)
         name = table.name("name")
         if name is None:
             if len(tables) > 1:
@@ -116,8 +114,8 @@ def _crystal_field(table: Table, ion: str | None) -> SpeciesField | None:
     data = table.table("crystal_field")
     if data is None:
         return None
-    for key in SPIN_KEYS[1:] + ("spin",):
-        if key in table:
+    for key in (*SPIN, "spin"):
+        if key != "S" and key in table:
             raise table.error(key, "stands beside crystal_field, from which it follows", "take one of the two out")
     if ion is None:
         table.require("ion", '"Cu2+" (the crystal field acts on it)')
@@ -154,7 +152,7 @@ def _spins(table: Table, auto: bool, ion: str | None) -> tuple[Spin, ...]:
     inner = table.tables("spin")
     if not inner:
         return (_spin(_moved(table, (*table.path, "spins", 0)), auto, ion),)
-    for key in SPIN_KEYS:
+    for key in SPIN:
         if key in table:
             right = f"move {key} into one of the [[species.spin]] tables"
             raise table.error(key, "stands beside [[species.spin]]", right)
@@ -162,7 +160,7 @@ def _spins(table: Table, auto: bool, ion: str | None) -> tuple[Spin, ...]:
         raise table.error("spin", "is one table", "write S and g in [[species]] itself, or a second [[species.spin]]")
     spins = []
     for n, (place, data) in enumerate(inner):
-        spins.append(_spin(Table(data, place, SPIN_KEYS, path=(*table.path, "spins", n), given=table.given), auto))
+        spins.append(_spin(Table(data, place, SPIN, path=(*table.path, "spins", n), given=table.given), auto))
     return tuple(spins)
 
 
@@ -242,22 +240,21 @@ def _stevens(table: Table, S: float) -> tuple[tuple[tuple[int, int], float], ...
     data = table.table("stevens")
     if data is None:
         return ()
-    known = [f"B{k}_{'m' if q < 0 else ''}{abs(q)}" for k in (2, 4, 6) for q in range(-k, k + 1)]
     place = table.at("stevens")
     found: list[tuple[tuple[int, int], float]] = []
     for key in data:
         match = re.fullmatch(r"B([0-9]{1,3})_(m?)([0-9]{1,3})", key, re.ASCII)
         if match is None:
-            right = nearest(key.replace("-", "m"), known)
+            right = nearest(key.replace("-", "m"), STEVENS)
             right = right if right.startswith("did") else "write B2_0, B4_3, B4_m3 (q = -3), ..."
             raise InputError(f'"{key:.40}" is no operator', right, place=place)
         k, q = int(match[1]), int(match[3]) * (-1 if match[2] else 1)
-        if key not in known:
+        if key not in STEVENS:
             raise InputError(f"there is no operator {key}", "k is 2, 4 or 6 and q from -k (m) to k", place=place)
         if k > 2 * S:
             found_text = f"{key} has no effect on S = {S:g}"
             raise InputError(found_text, f"k goes up to 2S = {2 * S:g}: take it out", place=place)
-        inner = Table(data, place, known, path=(*table.path, "stevens", len(found)), given=table.given)
+        inner = Table(data, place, STEVENS, path=(*table.path, "stevens", len(found)), given=table.given)
         found.append(((k, q), inner.quantity(key, "energy", attribute=1) or 0.0))
     return tuple(found)
 
@@ -314,7 +311,7 @@ def _populations(table: Table, spins: Sequence[Spin]) -> tuple[float, ...] | Non
 def _nuclei(table: Table, spins: int) -> tuple[Nucleus, ...]:
     found: list[Nucleus] = []
     for n, (place, data) in enumerate(table.tables("nucleus")):
-        inner = Table(data, place, NUCLEUS_KEYS, path=(*table.path, "nuclei", n), given=table.given)
+        inner = Table(data, place, NUCLEUS, path=(*table.path, "nuclei", n), given=table.given)
         nucleus = _nucleus(inner, spins)
         if nucleus.name and any(other.name == nucleus.name for other in found):
             raise inner.error("name", f'two nuclei are called "{nucleus.name}"', "give one of them another name")
@@ -373,7 +370,7 @@ def _nuclear_spin(table: Table, name: str | None, element: str | None) -> float:
 def _exchange(table: Table, spins: int) -> tuple[Exchange, ...]:
     found: list[Exchange] = []
     for n, (place, data) in enumerate(table.tables("exchange")):
-        inner = Table(data, place, EXCHANGE_KEYS, path=(*table.path, "exchange", n), given=table.given)
+        inner = Table(data, place, EXCHANGE, path=(*table.path, "exchange", n), given=table.given)
         if spins < 2:
             raise InputError("there is only one spin to couple", "write two or more [[species.spin]]", place=place)
         inner.require("between", "[1, 2]")
@@ -411,7 +408,7 @@ def _width(table: Table, spread: Spread, form: str, auto: bool) -> Width:
         if not auto:
             raise InputError("is missing", f"write {example}", place=table.at("width"))
         return Width(gaussian=1.0)
-    inner = Table(data, table.at("width"), WIDTH_KEYS, path=(*table.path, "width"), given=table.given)
+    inner = Table(data, table.at("width"), WIDTH, path=(*table.path, "width"), given=table.given)
     for key in ("a", "b", "c"):
         if key in inner and form != "solution":
             right = "write gaussian or lorentzian, or [sample] form"
@@ -439,7 +436,7 @@ def _spread(table: Table, spins: Sequence[Spin], nuclei: Sequence[Nucleus], form
     data = table.table("spread")
     if data is None:
         return Spread()
-    inner = Table(data, table.at("spread"), SPREAD_KEYS, path=(*table.path, "spread"), given=table.given)
+    inner = Table(data, table.at("spread"), SPREAD, path=(*table.path, "spread"), given=table.given)
     values: dict[str, Any] = {
         "g": inner.numbers("g", TENSOR, "g = [0.005, 0.005, 0.02]"),
         "D": inner.quantity("D", "energy"),
@@ -461,8 +458,8 @@ def _spread(table: Table, spins: Sequence[Spin], nuclei: Sequence[Nucleus], form
         raise inner.error("A", "there is no nucleus", "write [[species.nucleus]], or take it out")
     pairs = inner.table("correlation")
     if pairs is not None:
-        own = Table(pairs, inner.at("correlation"), CORRELATION_KEYS, path=inner.path, given=table.given)
-        for key in CORRELATION_KEYS:
+        own = Table(pairs, inner.at("correlation"), CORRELATION, path=inner.path, given=table.given)
+        for key in CORRELATION:
             value = own.number(key, attribute=f"correlation_{key}")
             if value is not None and not -1 <= value <= 1:
                 raise own.error(key, f"{value:g}", "a correlation lies between -1 and 1")

@@ -9,7 +9,7 @@ from __future__ import annotations
 import math
 import re
 import tomllib
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Collection, Iterable, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -171,7 +171,7 @@ class Table:
         What stood in the file.
     place : str
         Where: ``"species.1"``; "" for the whole file.
-    keys : sequence of str
+    keys : collection of str
         Every key that may stand here.
     elsewhere : mapping of key -> str, optional
         Keys that are understood but not here, with what to do about them.
@@ -190,7 +190,7 @@ class Table:
         self,
         data: object,
         place: str,
-        keys: Sequence[str],
+        keys: Collection[str],
         *,
         elsewhere: Mapping[str, str] | None = None,
         path: tuple[str | int, ...] = (),

@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spinfit.errors import InputError
+from spinfit.files.keys import CALIBRATION, COLUMNS, DIRECTIONS, FIELD_UNITS, LINES, SMOOTH, TRACE
 from spinfit.files.raw import RawTrace
 from spinfit.files.reading import Assembled, assemble, read_content
 from spinfit.files.store import Store
@@ -25,20 +26,7 @@ from spinfit.fitting.data import Lines, Trace
 from spinfit.sweep import Sample
 from spinfit.units import UNITS, from_unit, to_unit
 
-SHARED_KEYS = (
-    *("name", "file", "frequency", "temperature", "microwave", "axis", "from", "group"),
-    *("field_offset", "field_scale", "field_uncertainty", "frequency_uncertainty"),
-)
-TRACE_KEYS = (
-    *SHARED_KEYS,
-    *("field_unit", "modulation", "detect", "angle", "direction", "fit_range", "exclude", "background"),
-    *("baseline", "smoothness", "asymmetry", "columns", "field_calibration", "phase"),
-)
-LINES_KEYS = SHARED_KEYS
-DIRECTIONS = ("both", "up", "down")
-FIELD_UNITS = (*UNITS["field"], *UNITS["voltage"])
 HIGHEST_ORDER = 20
-SMOOTH = ("smooth", "asymmetric")
 _ASYMMETRY = 0.05
 
 _SHOWN = {"frequency": "GHz", "temperature": "K", "modulation": "mT", "angle": "deg"}
@@ -143,7 +131,7 @@ def read_trace(place: str, data: object, index: int, *, store: Store, sample: Sa
     InputError
         For wrong keys, and for whatever is wrong with the data files.
     """
-    table = Table(data, place, TRACE_KEYS, path=("traces", index), given=given)
+    table = Table(data, place, TRACE, path=("traces", index), given=given)
     reading = _reading(table)
     own = conditions(table)
     angle = table.quantity("angle", "angle")
@@ -182,7 +170,7 @@ def _assemble(table: Table, raw: RawTrace, **reading: Any) -> Assembled:
     try:
         return assemble(raw, **reading)
     except InputError as error:
-        if error.place is not None and error.place.partition(".")[0] in TRACE_KEYS:
+        if error.place is not None and error.place.partition(".")[0] in TRACE:
             raise InputError(error.found, error.right, place=table.at(error.place)) from None
         raise
 
@@ -201,15 +189,15 @@ def _reading(table: Table) -> dict[str, Any]:
     """Return how the columns of a file become field and signal."""
     columns, values = table.table("columns"), {}
     if columns is not None:
-        inner = Table(columns, table.at("columns"), ("field", "signal"))
-        found = {key: inner.integer(key, 1, 10_000) for key in ("field", "signal")}
+        inner = Table(columns, table.at("columns"), COLUMNS)
+        found = {key: inner.integer(key, 1, 10_000) for key in COLUMNS}
         values = _without_none(found)
         if len(values) == 2 and values["field"] == values["signal"]:
             raise inner.error("signal", f"{values['signal']} is the field's column", "name another one")
     calibration = table.table("field_calibration")
     slope = zero = None
     if calibration is not None:
-        inner = Table(calibration, table.at("field_calibration"), ("slope", "zero"))
+        inner = Table(calibration, table.at("field_calibration"), CALIBRATION)
         inner.require("slope", '"216 mT/V"')
         slope = inner.quantity("slope", "field per voltage")
         zero = inner.quantity("zero", "field") or 0.0
@@ -286,7 +274,7 @@ def read_lines(place: str, data: object, index: int, *, store: Store, sample: Sa
     InputError
         For wrong keys, a sample that is no crystal, and columns that are missing or out of range.
     """
-    table = Table(data, place, LINES_KEYS, path=("traces", index), given=given)
+    table = Table(data, place, LINES, path=("traces", index), given=given)
     if sample.form != "crystal":
         found = f"line positions need a crystal and the sample is a {sample.form}"
         raise InputError(found, 'write [sample] form = "crystal"', place=place)
