@@ -44,6 +44,8 @@ _ENOUGH = 2
 # A minimum that leaves more than this part of the trace is far from the right one; less than the other, beside it
 # if it is not the right one.
 _FAR, _NEAR = 0.15, 0.01
+# Chi-squared per point of a misfit that no weak line in a wrong place makes.
+_SYSTEMATIC = 3.0
 
 
 class Search:
@@ -97,7 +99,10 @@ class Search:
         if automatic or left > _FAR:
             ways = [drawn_wide, in_pairs, drawn_near]
         else:
-            ways = [in_pairs, drawn_near, drawn_wide] if left > _NEAR else [in_pairs, drawn_near]
+            ways = [in_pairs, drawn_near, drawn_wide]
+            # A trace with little noise that is explained but for a misfit: its lines are in their places.
+            if left < _NEAR and self._found().point.chi2 > _SYSTEMATIC * self.view.points:
+                ways.pop()
         for way in ways:
             if not self._good():
                 self._ends = 0

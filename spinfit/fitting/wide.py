@@ -37,8 +37,8 @@ Array = NDArray[np.float64]
 # and how many are handed on.
 _DRAWN, _DRAWN_OF_MANY, _MANY_LEVELS = 256, 64, 6
 _FOLLOWED, _KEPT = 12, 6
-# The same around a minimum, for each pair of parameters.
-_PAIRED, _PAIRED_OF_MANY = 32, 16
+# The same for each pair of parameters, around the start and around a minimum.
+_PAIRED, _PAIRED_OF_MANY = 32, 8
 _INTEGRATED = {"absorption": 0, "derivative": 1, "second derivative": 2}
 _GOAL = Goal(gain=0.3, evaluations=15)
 
@@ -131,8 +131,9 @@ class Wide:
         count = _PAIRED_OF_MANY if self._levels() >= _MANY_LEVELS else _PAIRED
         tried = []
         for n, (i, j) in enumerate(pairs):
-            drawn = draws(self.problem, best, count, wide=True, seed=n)
-            for row in drawn:
+            # A parameter that has run away is to be found near where the start had it.
+            drawn = (draws(self.problem, centre, count, wide=True, seed=n) for centre in (self.start, best))
+            for row in np.concatenate(list(drawn)):
                 free = best.copy()
                 free[[i, j]] = row[[i, j]]
                 tried.append(free)
