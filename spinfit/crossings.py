@@ -16,7 +16,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit.branches import KnotData, Ladder
+from spinfit.branches import KnotData, Ladder, Request
 from spinfit.resonance import can_reach
 
 Array = NDArray[np.float64]
@@ -336,3 +336,21 @@ def misses(crossings: Crossings, rows: Index, to_finer: Continue, scale: float) 
     change = share * np.abs(guess[1][at] - strength[at]) / steep
     away = np.clip(-gap[at] / np.where(slope[at] < 0, -steep, steep), -reach[node], reach[node])
     return Misses(row, knot, data.fields[node] + away, weight, weight * np.minimum(shift, 1.0) + change)
+
+
+CLUSTER = 6.0
+"""Line widths over which errors of looping pairs count together: the promise is about the worst place."""
+
+
+def concentration(field: Array, amount: Array, miss: Array, request: Request) -> float:
+    """Return how many times larger the share in error is at its worst place in the range than on the whole."""
+    some = miss > 0
+    if not some.any():
+        return 1.0
+
+    def by_place(values: Array, some: NDArray[np.bool_]) -> Array:
+        place = (field[some] - request.low) / (CLUSTER * request.scale)
+        return np.bincount(place.astype(np.intp), values[some])
+
+    worst = by_place(miss, some).max() / by_place(amount, amount > 0).max()
+    return max(1.0, worst * amount.sum() / miss.sum())

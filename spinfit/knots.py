@@ -20,7 +20,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spinfit.branches import Branches, KnotData, Request, count_roots, in_sight, touches, trace_branches
-from spinfit.crossings import Crossings, misses
+from spinfit.crossings import Crossings, concentration, misses
 from spinfit.doublets import doublet
 from spinfit.hamiltonian import System
 from spinfit.meridian import along_meridian
@@ -61,8 +61,6 @@ FEW_RINGS = 20
 """Rings below which the error of looping pairs does not fall as that of splines yet."""
 SPLINE_POWER = 5.0
 """Power of the step with which the error of splines falls at least, where levels have no kinks."""
-CLUSTER = 6.0
-"""Line widths over which errors of looping pairs count together: the promise is about the worst place."""
 HELPFUL = 3.0
 """Power of the number of rings with which the error of single branches falls where finer rings are worth it."""
 KINKED = 0.3
@@ -129,13 +127,13 @@ def settle(system: System, symmetry: Symmetry, request: Request, compare: Compar
     few = len(system.h0) < CROSSING_STATES and not several and not system.weak
     if few or (system.weak and symmetry.kind != "axial"):
         compare = None  # sums over two angles cost more than they save, until patterns are in
-    # around the axis of an axial system nothing varies; elsewhere patterns have a say in how many azimuths there are
-    split = symmetry.kind != "axial"
-    trial = _Trial(system, symmetry, request, _rings(symmetry.kind, SIZES[0]), compare=compare, split=split)
+    trial = _Trial(system, symmetry, request, _rings(symmetry.kind, SIZES[0]), compare=compare, split=False)
     spent = trial.count
     harmonics = None
     if trial.half_error() > request.tolerance:
-        harmonics = trial.harmonics_needed()
+        # patterns have a say in how many azimuths there are, where that can be told
+        plain = trial.split or symmetry.kind == "axial" or trial.other.any()
+        harmonics = (trial if plain else trial.whole(None)).harmonics_needed()
     if trial.half_error() > max(POOR, request.tolerance) and not trial.looping:
         trial, extra = _drawn_together(trial, system, symmetry, request, harmonics)
         spent += extra
@@ -144,9 +142,13 @@ def settle(system: System, symmetry: Symmetry, request: Request, compare: Compar
     for size in [s for s in SIZES if s > trial.rings.rings]:
         error = _extrapolated(history, trial)
         if error <= request.tolerance and not trial.split:
-            trial, levels_known = trial.whole(kept), True
+            trial, levels_known = trial.whole(None), True
             history[-1] = (trial.rings.rings // 2, trial.half_error())
             error = _extrapolated(history, trial)
+            if error > request.tolerance:
+                trial = trial.whole(kept)
+                history[-1] = (trial.rings.rings // 2, trial.half_error())
+                error = _extrapolated(history, trial)
         if error <= request.tolerance:
             break
         # splines converge as they promise: go there at once
@@ -280,10 +282,12 @@ class _Trial:
         """Return the same knots with weak nuclei, judged by spectra."""
         other = copy.copy(self)
         other.compare = compare
-        for name in ("branches", "crossings", "_half_error"):
-            vars(other).pop(name, None)
-        other.split = True
-        other._look()
+        vars(other).pop("_half_error", None)
+        if not self.split:
+            for name in ("branches", "crossings"):
+                vars(other).pop(name, None)
+            other.split = True
+            other._look()
         return other
 
     def _look(self) -> None:
@@ -405,7 +409,7 @@ class _Trial:
                 self._half = float(miss.sum())
                 miss = self._release(miss)
             whole = total = self.weight_of_single()
-            error += whole * miss.sum(axis=0) * self._concentration(self.branches.field, self._sizes(), miss)
+            error += whole * miss.sum(axis=0) * concentration(self.branches.field, self._sizes(), miss, self.request)
         if self.other.any():
             amount, miss = self._compare_gaps(np.flatnonzero(self.other), solid)
             error += miss
@@ -474,20 +478,7 @@ class _Trial:
         inside = (found.field >= self.request.low) & (found.field <= self.request.high)
         amount, miss = (np.where(inside, v, 0.0) * solid[found.knot] for v in (found.amount, found.miss))
         by_knot = np.bincount(found.knot, weights=miss, minlength=len(solid))
-        return float(amount.sum()), by_knot * self._concentration(found.field, amount, miss)
-
-    def _concentration(self, field: Array, amount: Array, miss: Array) -> float:
-        """Return how many times larger the share in error is at its worst place in the range than on the whole."""
-        some = miss > 0
-        if not some.any():
-            return 1.0
-
-        def by_place(values: Array, some: NDArray[np.bool_]) -> Array:
-            place = (field[some] - self.request.low) / (CLUSTER * self.request.scale)
-            return np.bincount(place.astype(np.intp), values[some])
-
-        worst = by_place(miss, some).max() / by_place(amount, amount > 0).max()
-        return max(1.0, worst * amount.sum() / miss.sum())
+        return float(amount.sum()), by_knot * concentration(found.field, amount, miss, self.request)
 
     def knots(self, error: float, spent: int, by_series: bool = False) -> Knots:
         """Return the settled result, its branches continued by series where that was found to be better."""

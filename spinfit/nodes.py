@@ -21,6 +21,9 @@ from spinfit.weak import Felt, extent
 
 Array = NDArray[np.float64]
 
+SHALLOW = 2
+"""How often a narrow range is halved where levels are ordered by character: what is left is a name that changes
+along the field in a direction or two."""
 KEPT_PAIRS = 120
 """Pairs of levels up to which their differences at every node are kept."""
 AT_ONCE = 200_000
@@ -166,6 +169,8 @@ class FieldNodes:
         low, high = self.request.low, self.request.high
         # levels of one electron spin 1/2 hardly bend over a narrow range
         narrow = high - low < 0.5 * high and self.system.electrons == 1 and self.system.spins[0] == 0.5
+        if narrow and self.characters is not None:
+            deepest = min(deepest, SHALLOW)
         edges = [float(e) for e in np.linspace(low, high, 2 if narrow else 3)]
         every = np.ones(len(self.lower), dtype=bool)
         self._halve(edges, accuracy, deepest, every)
