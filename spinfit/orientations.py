@@ -429,6 +429,9 @@ def _spline_matrix(knots: Array, angles: Array, parity: int, period: float = 0.0
 
 def _splines_around(rings: Rings, phi: Array) -> list[Array]:
     """Return for each ring the spline through its azimuths as a matrix, shape (len(phi), knots of the ring)."""
+    if rings.harmonics < rings.rings + rings.extra:  # no more azimuths than harmonics: too few for splines
+        basis = _phi_basis(rings.kind, rings.harmonics, phi)
+        return [basis @ block for block in _ring_blocks(rings)]
     around = []
     for i in range(rings.rings + 1):
         equator = i == rings.rings

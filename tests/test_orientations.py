@@ -189,3 +189,17 @@ def test_half_sphere_knots_hold_no_direction_twice() -> None:
     n = points(*Rings("half", 8, 10, 2).angles())
     overlap = np.abs(n @ n.T) - np.eye(len(n))
     assert overlap.max() < 1 - 1e-6
+
+
+@pytest.mark.parametrize(("kind", "harmonics"), [("octant", 2), ("octant", 4), ("quarter", 2), ("half", 2)])
+def test_splines_leave_few_harmonics_around_as_they_are(kind: str, harmonics: int) -> None:
+    """Three azimuths hold cos 2 phi, but no spline through them does: nothing of it may be lost."""
+    knots, mesh = Rings(kind, 16, harmonics, 4), Mesh(kind, 20, 24)
+    finer = Rings(kind, 32, 2 * harmonics, 8)
+
+    def form(n: np.ndarray) -> np.ndarray:
+        return n[..., 0] ** 2 - 0.4 * n[..., 1] ** 2 + (0.3 * n[..., 0] * n[..., 1] if kind != "octant" else 0.0)
+
+    values = form(points(*knots.angles()))[None]
+    assert np.abs(knots.to_mesh_locally(values, mesh)[0] - form(mesh_points(mesh))).max() < 1e-4
+    assert np.abs(knots.to_finer_locally(values, finer)[0] - form(points(*finer.angles()))).max() < 1e-4
