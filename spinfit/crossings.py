@@ -11,7 +11,7 @@ A level that nearly crosses one neighbour here and the other there is taken from
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
@@ -46,9 +46,10 @@ class _Near:
     slope: Array
     turn: Array
 
-    def only(self, some: NDArray[np.bool_]) -> _Near:
-        """Return the same for some of the nodes asked about."""
-        return replace(self, at=self.at[some])
+    @property
+    def arrays(self) -> tuple[Array, Array, Array, Array]:
+        """All but the positions."""
+        return self.half, self.mean, self.slope, self.turn
 
 
 class Crossings:
@@ -160,17 +161,20 @@ class Crossings:
         where = where[self.uses(row)[:, where].any(axis=(0, 2))]
         if not len(where):
             return out
-        nodes = where - (part.start or 0)
-        near = self._beside(row, where, to)
-        low, high = (self._level(row, number, where, near, to) for number in (0, 1))
         energy = self.ladder.energy[where[0]]
-        frequency = energy[pair[1], 0] - energy[pair[0], 0] - own[0, nodes[0], 0]
-        out[0, nodes] = high[0] - low[0] - frequency
-        out[1, nodes] = high[1] - low[1]
-        bent = self._strength_bends(row)[where]
-        if bent.any():
-            near = {a: one.only(bent) for a, one in near.items()}
-            out[2, nodes[bent]] = self._strength(row, where[bent], near, to, out[2, nodes[bent]])
+        frequency = energy[pair[1], 0] - energy[pair[0], 0] - data.gap[row, where[0], 0]
+        # nodes that are alike together: whole arrays in place of many picked from them
+        kind = (self.uses(row)[:, where].transpose(1, 0, 2).reshape(-1, 4) << np.arange(4)).sum(axis=1)
+        kind = kind + 16 * self._strength_bends(row)[where]
+        for one in np.unique(kind):
+            alike = where[kind == one]
+            nodes = alike - (part.start or 0)
+            near = self._beside(row, alike, to)
+            low, high = (self._level(row, number, alike, near, to) for number in (0, 1))
+            out[0, nodes] = high[0] - low[0] - frequency
+            out[1, nodes] = high[1] - low[1]
+            if one >= 16:
+                out[2, nodes] = self._strength(row, alike, near, to, out[2, nodes])
         return out
 
     def _beside(self, row: int, where: Index, to: Continue) -> dict[int, _Near]:
@@ -220,6 +224,8 @@ class Crossings:
         if alone.any():
             got = to(np.concatenate([self.ladder.energy[where[alone], level], self.ladder.slope[where[alone], level]]))
             got = got.reshape(2, -1, *got.shape[1:])
+            if alone.all():
+                return got[0], got[1]
             energy, slope = (np.empty((len(where), *got.shape[2:])) for _ in range(2))
             energy[alone], slope[alone] = got
         for chosen in ((True, False), (False, True), (True, True)):
@@ -230,13 +236,15 @@ class Crossings:
             for side, sign in ((0, 1), (1, -1)):
                 if chosen[side]:
                     one = near[level - 1 + side]
-                    half, mean, along, turn = (v[one.at[some]] for v in (one.half, one.mean, one.slope, one.turn))
+                    half, mean, along, turn = (_picked(v, one.at[some]) for v in one.arrays)
                     sides.append((half, mean + sign * half, along + sign * turn))
             if len(sides) == 2:
                 share = _share(sides[0][0], sides[1][0])
                 values = [share * a + (1 - share) * b for a, b in zip(sides[0][1:], sides[1][1:], strict=True)]
             else:
                 values = sides[0][1:]
+            if some.all():
+                return values[0], values[1]
             if energy is None:
                 energy, slope = (np.empty((len(where), *values[0].shape[1:])) for _ in range(2))
             energy[some], slope[some] = values
@@ -251,7 +259,7 @@ class Crossings:
             some = uses[side, :, number // 2]
             if not some.any() or (a == lower and upper == lower + 1):  # the pair's own two levels
                 continue
-            nodes, half = where[some], near[a].half[near[a].at[some]]
+            nodes, half = where[some], _picked(near[a].half, near[a].at[some])
             mine, other = self.data.strength[row, nodes], self.ladder.partner(row, number, nodes)
             apart = 0.5 * (self.ladder.energy[nodes, a + 1] - self.ladder.energy[nodes, a])
             got = to(np.concatenate([0.5 * (mine + other), 0.5 * (mine - other) * apart]))
@@ -261,6 +269,11 @@ class Crossings:
             total[some] += weight
             out[some] += weight * (mean + np.clip(product / np.maximum(half, 1e-9), -most, most))
         return np.where(total > 0, out / np.where(total > 0, total, 1.0), plain)
+
+
+def _picked(values: Array, at: Index) -> Array:
+    """Return values[at], without a copy where that is all of them."""
+    return values if len(at) == len(values) and np.array_equal(at, np.arange(len(at))) else values[at]
 
 
 def _share(near: Array, far: Array) -> Array:

@@ -152,7 +152,8 @@ def settle(system: System, symmetry: Symmetry, request: Request, compare: Compar
         if error <= request.tolerance:
             break
         # splines converge as they promise: go there at once
-        hoped = error * (trial.rings.rings / size) ** SPLINE_POWER if trial.looping else _hoped(history[-1], size)
+        splines = error * min(1.0, trial.rings.rings / FEW_RINGS) ** 2 * (trial.rings.rings / size) ** SPLINE_POWER
+        hoped = splines if trial.looping else _hoped(history[-1], size)
         if size < min(SIZES[-1], 3 * trial.rings.rings) and hoped > request.tolerance:
             continue
         if symmetry.kind == "axial" and len(system.h0) <= CHEAP_STATES and size < 2 * trial.rings.rings:
@@ -202,7 +203,7 @@ def _expected(history: list[tuple[int, float]], trial: _Trial) -> tuple[float, f
         if known and error > 0:
             before, worse = known[-1]
             power = min(power, max(1.0, math.log(max(worse, error) / error) / math.log(size / before)))
-        return LOOPING_MISTRUST * max(1.0, (FEW_RINGS / rings) ** 3) * error * (size / rings) ** power, math.inf
+        return LOOPING_MISTRUST * max(1.0, (FEW_RINGS / rings) ** 5) * error * (size / rings) ** power, math.inf
     power = 2.0
     if len(history) > 1:
         before, worse = history[-2]
@@ -269,7 +270,7 @@ class _Trial:
         self.split = split or not system.weak
         directions = rings.directions(symmetry.axes)
         if before is None:
-            self.nodes = FieldNodes(system, request, directions)
+            self.nodes = FieldNodes(system, request, directions, rings.rings)
             self.nodes.choose(node_accuracy(request))
             self.count = self.nodes.count
         else:
@@ -453,9 +454,7 @@ class _Trial:
 
     def weight_of_single(self) -> float:
         """Return the intensity in single branches."""
-        if not self.single.any():
-            return 0.0
-        return float(self._sizes().sum())
+        return float(self._sizes().sum()) if self.single.any() else 0.0
 
     @cached_property
     def branches(self) -> Branches:

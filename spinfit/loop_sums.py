@@ -39,7 +39,7 @@ STEP_OF_ALL = 0.5
 """The same where everything is summed in frequency."""
 KERNEL_REACH = 5.0
 """Where the kernel is cut, in units of its width."""
-FOLD = 30.0
+FOLD = 60.0
 """How many times farther than its smear from a fold a resonance lies before it is solved for."""
 TAPS = 5
 """Nodes by which strengths are interpolated along the field."""

@@ -25,12 +25,12 @@ from spinfit.sheets import SMEAR_MOST, SMEAR_REACH, Histograms
 Array = NDArray[np.float64]
 Index = NDArray[np.intp]
 
-FLAT = 0.5
+FLAT = 0.4
 """Root of the curvature of a resonance field over one step of the first mesh, in line widths."""
 FOLD_SLOPE = 8.0
 """MHz/mT below which a level difference counts as folding, about a quarter of a free spin's slope."""
-AXIAL = 512
-"""Intervals of a meridian with which an axial system begins."""
+AXIAL = 2048
+"""Intervals of a meridian with which an axial system begins, at the default tolerance."""
 LARGEST = 40_000_000
 """Numbers (nodes x points x 3) of one pair's mesh at which refinement gives up."""
 MOST_ROUNDS = 5
@@ -38,8 +38,10 @@ POWER = 2.3
 """Power of the step with which a mesh's error falls at least, once it falls."""
 LEAST_GAIN = 1 / 16
 """Ratio of a mesh's error to that of its every second point below which it is not trusted to lie."""
-SHARE = 0.8
-"""Part of the tolerance that the meshes of looping pairs may use up."""
+SHARE = 0.5
+"""Part of the tolerance that the meshes of looping pairs may use up by what two coarser meshes say."""
+MISTRUST = 2.0
+"""Factor by which meshes were found to err more than that."""
 
 
 class _Pair:
@@ -91,6 +93,15 @@ class _Pair:
     def error(self) -> float:
         """The present mesh's own error, in the units of `_Look.height`: it gains once more what it gained last."""
         return self.missed * self.gained
+
+    def by_half(self, look: _Look) -> NDArray[np.complex128]:
+        """Return how the transform on every second point changes when every second ring of knots is left out."""
+        mesh = Mesh(self.rings.kind, self.size[0] // 2, max(1, self.size[1] // 2))
+        half, kept = self.rings.halved(), self.rings.halved_knots()
+        values = self.crossings.continued(self.row, self.part, lambda v: half.to_mesh_locally(v[:, kept], mesh))
+        histograms = look.empty()
+        add_looping(histograms, Landscape.of(self.fields, self.leaves, values, mesh), self.request)
+        return histograms.transform() - self.transform - self.difference
 
     def refine(self, look: _Look, allowed: float) -> bool:
         """Choose a finer mesh that should err by no more than `allowed`; return whether there is one."""
@@ -149,9 +160,10 @@ def _first_size(pair: _Pair, request: Request) -> tuple[int, int]:
     """
     rings = pair.rings
     azimuths = {"axial": 1, "octant": 2, "quarter": 4, "half": 8}[rings.kind] * min(rings.harmonics, 24)
-    gap, slope = pair.on(Mesh(rings.kind, 2 * rings.rings, azimuths))[:2]
+    gap, slope, strength = pair.on(Mesh(rings.kind, 2 * rings.rings, azimuths))[:3]
+    strong = np.abs(strength)
     if rings.kind == "axial":  # costs nothing, and spares every doubt
-        return AXIAL, 1
+        return ladder_size(AXIAL * (1e-3 / request.tolerance) ** 0.3), 1
     near = np.abs(gap) <= 1.5 * np.abs(slope) * np.gradient(pair.fields)[:, None, None] + request.scale * FOLD_SLOPE
     bend = np.where(near, 1.0 / np.maximum(np.abs(slope), FOLD_SLOPE), 0.0)
     flat = FLAT * (request.tolerance / 1e-3) ** 0.17
@@ -164,7 +176,7 @@ def _first_size(pair: _Pair, request: Request) -> tuple[int, int]:
         padded = np.pad(gap, [(1, 1) if a == axis else (0, 0) for a in range(3)], **mode)
         second = np.abs(np.diff(padded, 2, axis=axis)) * bend
         # the few sharpest spots, where levels cross on an axis, would size the mesh for everything
-        sharp = np.quantile(second[second > 0], 0.98) if (second > 0).any() else 0.0
+        sharp = _quantile(second[some], strong[some], 0.98) if (some := second > 0).any() else 0.0
         least = (rings.rings, azimuths / 2)[axis - 1]
         sizes.append(ladder_size(max(least, math.sqrt(sharp / request.scale) * (gap.shape[axis] - even) / flat)))
     return sizes[0], sizes[1]
@@ -188,6 +200,13 @@ class Summed(NamedTuple):
     size: tuple[int, int]
 
 
+def _quantile(values: Array, weights: Array, share: float) -> float:
+    """Return the value below which a share of the weight lies."""
+    order = np.argsort(values)
+    running = np.cumsum(weights[order])
+    return float(values[order[min(len(order) - 1, np.searchsorted(running, share * running[-1]))]])
+
+
 def add_pairs(
     histograms: Histograms,
     rings: Rings,
@@ -196,7 +215,7 @@ def add_pairs(
     request: Request,
     keep: list[Summed] | None = None,
     crossings: Crossings | None = None,
-) -> tuple[int, float]:
+) -> tuple[int, float, float]:
     """Add pairs of levels whose resonances come and go, each on a mesh as fine as it needs.
 
     A mesh is accepted when the spectrum of its every second point differs little enough from its
@@ -219,18 +238,25 @@ def add_pairs(
         Points summed.
     error : float
         Estimated error from the meshes, relative to the top of the spectrum's derivative.
+    by_half : float
+        The change of the spectrum, likewise, when every second ring of knots is left out.
     """
     chosen = [(row, leaves) for row in rows if len(leaves := reachable(data, row))]
     crossings = Crossings(data) if crossings is None else crossings
     pairs = [_Pair(rings, crossings, row, leaves, request) for row, leaves in chosen]
     if not pairs:
-        return 0, 0.0
+        return 0, 0.0, 0.0
     look = _Look(histograms, request)
     used = 0
     pending = pairs
     for _ in range(MOST_ROUNDS):
         used += sum(pair.sum(look) for pair in pending)
+        if pending is pairs:
+            by_half = look.height(sum(pair.by_half(look) for pair in pairs))
         top = look.height(look.others + sum(pair.transform for pair in pairs)) or 1.0
+        error = look.height(sum(pair.difference * pair.gained for pair in pairs)) / top
+        if error <= SHARE * request.tolerance:
+            break
         together = look.height(sum(pair.difference for pair in pairs))
         largest = max(pair.missed for pair in pairs)
         # errors of different pairs mostly lie at different fields
@@ -242,7 +268,7 @@ def add_pairs(
         histograms.join(pair.histograms)
     if keep is not None:
         keep += [Summed(row, leaves, pair.size) for (row, leaves), pair in zip(chosen, pairs, strict=True)]
-    return used, math.hypot(*(pair.error for pair in pairs)) / top
+    return used, MISTRUST * error, by_half / top
 
 
 def reachable(data: KnotData, row: int) -> Index:

@@ -21,6 +21,8 @@ from spinfit.weak import Felt, extent
 
 Array = NDArray[np.float64]
 
+BETWEEN = 2.0
+"""Part of a level difference's range over the sphere, times the rings squared, that may hide between knots."""
 SHALLOW = 2
 """How often a narrow range is halved where levels are ordered by character: what is left is a name that changes
 along the field in a direction or two."""
@@ -35,8 +37,9 @@ BEYOND = 2.5
 class FieldNodes:
     """Solutions at shared fields for a growing set of directions."""
 
-    def __init__(self, system: System, request: Request, directions: Array) -> None:
+    def __init__(self, system: System, request: Request, directions: Array, rings: int = 0) -> None:
         self.system, self.request, self.directions = system, request, directions
+        self.between = BETWEEN / rings**2 if rings else 0.0
         self.lower, self.upper = level_pairs(len(system.h0))
         self.solved: dict[float, tuple[Array, ...]] = {}
         self.leaves: list[tuple[float, float, float]] = []
@@ -255,7 +258,9 @@ class FieldNodes:
         h = np.array([b - a for a, b in segments])[:, None, None]
         g = g * h
         size = np.abs(s).max(axis=0)
-        reach = can_reach(f[0], f[2], g[0], g[2], self.extent) | ((f[1] >= 0) != (f[0] >= 0))
+        # directions between the knots reach a little farther than any knot does
+        beyond = self.extent + self.between * np.ptp(f[1], axis=1, keepdims=True)
+        reach = can_reach(f[0], f[2], g[0], g[2], beyond) | ((f[1] >= 0) != (f[0] >= 0))
         reach |= between_knots(f)
         reach &= only & (size > 1e-3 * self.request.tolerance * size.max(axis=(1, 2), keepdims=True))
         error = np.where(reach, midpoint_error(*f, *g), 0.0)

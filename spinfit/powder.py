@@ -118,19 +118,28 @@ def powder(
     def compare(rings: Rings, branches: Branches, local: bool, predict: Callable[[Array], Array]) -> float:
         return _changed(rings, branches, local, predict, request, grid)
 
-    knots = settle(system, symmetry, request, compare)
-    histograms = Histograms(grid, request.scale)
-    meshes = []
-    if len(knots.branches.pair):
-        meshes = _sum_branches(knots.rings, knots.branches, knots.local, request, histograms)
-        report.mesh_points += sum(Mesh(knots.rings.kind, *size).weights().size for size in meshes)
-    error = 0.0
-    loops: list[Summed] = []
-    if knots.other.any():
-        rows = np.flatnonzero(knots.other)
-        points, error = add_pairs(histograms, knots.rings, knots.data, rows, request, loops, knots.crossings)
-        report.mesh_points += points
-    report.rings, report.estimated_error = knots.rings.rings, math.hypot(knots.error, error)
+    asked = request
+    for last in (False, True):
+        knots = settle(system, symmetry, asked, compare)
+        histograms = Histograms(grid, request.scale)
+        meshes, loops = [], []
+        report.mesh_points, error, by_knots = 0, 0.0, 0.0
+        if len(knots.branches.pair):
+            meshes = _sum_branches(knots.rings, knots.branches, knots.local, request, histograms)
+            report.mesh_points += sum(Mesh(knots.rings.kind, *size).weights().size for size in meshes)
+        if knots.other.any():
+            rows = np.flatnonzero(knots.other)
+            points, error, by_half = add_pairs(
+                histograms, knots.rings, knots.data, rows, request, loops, knots.crossings
+            )
+            report.mesh_points += points
+            # the spectrum itself knows better where knots are too few than shifts of its resonances do
+            by_knots = by_half * knots.error / max(knots.half_error, 1e-300)
+        if last or by_knots <= 2 * request.tolerance:
+            break
+        asked = replace(request, tolerance=request.tolerance * max(0.1, 0.6 * request.tolerance / by_knots))
+    error += max(by_knots, knots.error)
+    report.rings, report.estimated_error = knots.rings.rings, error
     report.directions, report.diagonalisations = knots.directions, knots.diagonalisations
     report.pairs, report.looping = len(knots.branches.pair), int(knots.other.sum())
     if _meets_zero_field(knots.data, request):
