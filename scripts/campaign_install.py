@@ -1,0 +1,89 @@
+"""The project as a user gets it: an sdist, a wheel of it, a fresh environment, and the demonstration from there.
+
+Run as ``scripts/campaign install`` or ``python scripts/campaign_install.py``; it needs git and a package index.
+The short form, the content of a wheel, is in the tests.
+"""
+
+from __future__ import annotations
+
+import argparse
+import os
+import shutil
+import subprocess
+import sys
+import tarfile
+import tempfile
+import venv
+from pathlib import Path
+
+ROOT = Path(__file__).resolve().parent.parent
+# Tracked, but of use in a clone only.
+NOT_PACKED = (".gitignore", ".ci/")
+MADE_BY_BUILD = ("PKG-INFO", "setup.cfg", "spinfit.egg-info/")
+
+
+def run(*command: str | Path, **more: object) -> str:
+    """Run a command and return what it printed; leave with that when it fails."""
+    done = subprocess.run([str(part) for part in command], capture_output=True, text=True, timeout=1800, **more)
+    if done.returncode != 0:
+        sys.exit(f"{' '.join(map(str, command))}: exit code {done.returncode}\n{done.stdout}{done.stderr}")
+    return done.stdout
+
+
+def environment(place: Path, *wanted: str | Path) -> Path:
+    """Make a virtual environment with some packages and return its folder of programs."""
+    venv.create(place, with_pip=True)
+    programs = place / "bin"
+    run(programs / "python", "-m", "pip", "install", "--quiet", "--disable-pip-version-check", *wanted)
+    return programs
+
+
+def build(work: Path) -> Path:
+    """Build from the tracked files alone, compare the sdist with them, and return the wheel."""
+    tracked = run("git", "-C", ROOT, "ls-files", "-z").rstrip("\0").split("\0")
+    source = work / "source"
+    for name in filter(lambda name: (ROOT / name).is_file(), tracked):
+        (source / name).parent.mkdir(parents=True, exist_ok=True)
+        shutil.copy(ROOT / name, source / name)
+    programs = environment(work / "builder", "build")
+    run(programs / "python", "-m", "build", "--outdir", work, source)  # the wheel is built of the sdist
+    (sdist,), (wheel,) = work.glob("*.tar.gz"), work.glob("*.whl")
+    with tarfile.open(sdist) as archive:
+        packed = {name.partition("/")[2] for name in archive.getnames() if archive.getmember(name).isfile()}
+    expected = {name for name in tracked if not name.startswith(NOT_PACKED) and (source / name).is_file()}
+    missing = sorted(expected - packed)
+    more = sorted(name for name in packed - expected if not name.startswith(MADE_BY_BUILD))
+    print(f"{sdist.name}: {sdist.stat().st_size / 1e3:.0f} kB, {len(packed)} files; missing {missing}, more {more}")
+    print(f"{wheel.name}: {wheel.stat().st_size / 1e3:.0f} kB", flush=True)
+    if missing or more:
+        sys.exit(1)
+    return wheel
+
+
+def use(wheel: Path, work: Path) -> None:
+    """Install the wheel and fit the demonstration jobs with it, far from the project's folder."""
+    programs = environment(work / "user", wheel)
+    rack = work / "rack"
+    shutil.copytree(ROOT / "demo_spectra", rack)
+    apart = {key: value for key, value in os.environ.items() if not key.startswith("PYTHON")}
+    print(run(programs / "spinfit", "--version", cwd=rack, env=apart).strip())
+    where = run(programs / "python", "-c", "import spinfit; print(spinfit.__file__)", cwd=rack, env=apart).strip()
+    if not where.startswith(str(work)):
+        sys.exit(f"spinfit was imported from {where}")
+    for job in sorted(path.stem for path in rack.glob("*.toml")):
+        run(programs / "spinfit", "fit", f"{job}.toml", "--out", f"out/{job}", cwd=rack, env=apart)
+        made = sorted(path.name for path in (rack / "out" / job).iterdir())
+        print(f"{job}: {', '.join(made)}", flush=True)
+
+
+def main() -> int:
+    parser = argparse.ArgumentParser(description=__doc__.partition("\n")[0])
+    parser.parse_args()
+    with tempfile.TemporaryDirectory(prefix="spinfit-install-") as folder:
+        work = Path(folder).resolve()
+        use(build(work), work)
+    return 0
+
+
+if __name__ == "__main__":
+    sys.exit(main())
