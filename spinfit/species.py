@@ -41,7 +41,8 @@ def tilt_matrix(tilt: Angles) -> NDArray[np.float64]:
 
     `tilt` is (alpha, beta, gamma) in rad, intrinsic z, y', z'' rotations.
     """
-    return Rotation.from_euler("ZYZ", tilt).as_matrix()
+    matrix: NDArray[np.float64] = Rotation.from_euler("ZYZ", tilt).as_matrix()
+    return matrix
 
 
 def tensor_matrix(tensor: tuple[float, ...], tilt: Angles = NO_TILT) -> NDArray[np.float64]:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -161,7 +162,9 @@ def simulate(
     window = (float(where.min()), float(where.max()))
     angles = sample.angles if sample.form == "crystal" else (sample.angle,)
     angles = angles if angle is None else (angle,)
-    spectra, report, warnings = [], {}, {}
+    spectra: list[NDArray[np.float64]] = []
+    report: dict[str, Any] = {}
+    warnings: dict[tuple[str, str], None] = {}
     kept: list[Kept] | None = [] if keep else None
     for one in several:
         part, report[one.name], said = _part(one, sweep, sample, tolerance, where, window, angles, kept)
@@ -276,9 +279,9 @@ def _powders(
     request: Request,
     grid: FieldGrid,
     averages: list[Average | Lines],
-) -> tuple[NDArray[np.complex128], list[dict[str, object]]]:
+) -> tuple[NDArray[np.complex128], list[dict[str, Any]]]:
     """Return the transform of all systems' resonances, and what was used for each."""
-    total: NDArray[np.complex128] | float = 0.0
+    total: Any = 0.0
     reports = []
     for system, own in zip(every, widths, strict=True):
         histograms, report = powder(system, replace(request, broadening=own), grid, keep=averages)
@@ -298,8 +301,9 @@ def _oriented(
     averages: list[Average | Lines],
 ) -> tuple[list[NDArray[np.complex128]], dict[str, object], tuple[tuple[str, str], ...]]:
     """Return transforms of a crystal or an aligned sample, one for each angle, what was used, and warnings."""
-    totals = [0.0] * len(angles)
-    reports, warnings = [], dict.fromkeys(treatment.warnings)
+    totals: list[Any] = [0.0] * len(angles)
+    reports: list[dict[str, Any]] = []
+    warnings = dict.fromkeys(treatment.warnings)
     if sample.form == "crystal":
         warnings |= dict.fromkeys(remarks(sample, angles, request.microwave))
     for system, own in zip(systems(treatment.species, perturb=True), widths, strict=True):
@@ -315,7 +319,7 @@ def _oriented(
     return totals, _used(reports, treatment), tuple(warnings)
 
 
-def _misgivings(one: Species, reports: list[dict[str, object]], tolerance: float) -> tuple[tuple[str, str], ...]:
+def _misgivings(one: Species, reports: list[dict[str, Any]], tolerance: float) -> tuple[tuple[str, str], ...]:
     """Return what a powder spectrum cannot promise."""
     said = []
     error = max(float(report["estimated_error"]) for report in reports)
@@ -325,9 +329,10 @@ def _misgivings(one: Species, reports: list[dict[str, object]], tolerance: float
     return (*said, *(("accuracy", f"{one.name}: {text}") for text in notes))
 
 
-def _used(reports: list[dict[str, object]], treatment: Treatment) -> dict[str, object]:
+def _used(reports: list[dict[str, Any]], treatment: Treatment) -> dict[str, object]:
     """Return the report of one species: of each system, and how each nucleus was treated."""
-    return {"systems": reports} | ({"nuclei": list(treatment.nuclei)} if treatment.nuclei else {})
+    used: dict[str, object] = {"systems": reports}
+    return used | ({"nuclei": list(treatment.nuclei)} if treatment.nuclei else {})
 
 
 WIDEST = 4.0

@@ -8,7 +8,7 @@ right.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
@@ -175,8 +175,9 @@ def _data(
     root: Table, store: Store, sample: Sample, species: tuple[Species, ...], given: Given
 ) -> tuple[tuple[Trace, ...], tuple[Lines, ...]]:
     """Read traces and tables of lines, in this order, and see that nothing is called alike."""
-    entries = [(place, entry, read_trace) for place, entry in root.tables("trace")]
-    entries += [(place, entry, read_lines) for place, entry in root.tables("lines")]  # type: ignore[list-item]
+    entries: list[tuple[str, Any, Callable[..., Trace | Lines]]] = []
+    entries += [(place, entry, read_trace) for place, entry in root.tables("trace")]
+    entries += [(place, entry, read_lines) for place, entry in root.tables("lines")]
     if not entries:
         raise InputError("is missing", 'write [[trace]] with file = "..."', place="trace")
     if len(entries) > MOST_TRACES:
@@ -190,8 +191,8 @@ def _data(
             raise InputError(text, 'write another name = "..." here', place=f"{place}.name")
         names[one.name] = "a trace"
         found.append(one)
-    for one, (place, _, _) in zip(found, entries, strict=True):
-        taken = next((group for group in groups_of(one) if group in names), None)
+    for kept, (place, _, _) in zip(found, entries, strict=True):
+        taken = next((group for group in groups_of(kept) if group in names), None)
         if taken is not None:
             text = f'"{taken}" is the name of {names[taken]} already'
             raise InputError(text, "choose another name for the group", place=f"{place}.group")

@@ -331,12 +331,12 @@ def _ligands(table: Table, shell: Shell, form: str) -> CrystalField:
                 place=place,
             )
         if "position" in inner:
-            position = inner.numbers("position", (3,), "position = [0, 0, 2.1]") or (0.0, 0.0, 0.0)
+            x, y, z = inner.numbers("position", (3,), "position = [0, 0, 2.1]") or (0.0, 0.0, 0.0)
         else:
             theta, phi = inner.quantities("angles", "angle", 2) or (0.0, 0.0)
-            position = (math.sin(theta) * math.cos(phi), math.sin(theta) * math.sin(phi), math.cos(theta))
+            x, y, z = math.sin(theta) * math.cos(phi), math.sin(theta) * math.sin(phi), math.cos(theta)
         turn = inner.quantity("turn", "angle") or 0.0
-        ligands.append(Ligand(tuple(position), kind=inner.name("kind") or "", turn=turn, **_bond(inner)))
+        ligands.append(Ligand((x, y, z), kind=inner.name("kind") or "", turn=turn, **_bond(inner)))
     return from_overlap(shell.l, ligands)
 
 
@@ -366,7 +366,7 @@ def _geometry(table: Table, shell: Shell, form: str) -> CrystalField:
             f'the bond of "{missing[0]}" is missing', 'write e_sigma = "..." for it', place=inner.at("bonds")
         )
     ligands = [
-        Ligand(tuple(a - b for a, b in zip(at, metal, strict=True)), kind=symbol, **energies[symbol])
+        Ligand((at[0] - metal[0], at[1] - metal[1], at[2] - metal[2]), kind=symbol, **energies[symbol])
         for symbol, at in atoms[1:]
     ]
     return from_overlap(shell.l, ligands)
@@ -388,7 +388,8 @@ def parse_xyz(text: str, *, place: str = "xyz") -> list[tuple[str, tuple[float, 
         numbers = words[1:4]
         if len(words) != 4 or not re.fullmatch(r"[A-Za-z][A-Za-z0-9]*", words[0]) or not all(map(_is_float, numbers)):
             raise InputError(f'"{line:.40}" is not an atom', 'write "O 0.0 0.0 2.1"', place=f"{place}, line {number}")
-        atoms.append((words[0], tuple(float(w) for w in numbers)))
+        x, y, z = map(float, numbers)
+        atoms.append((words[0], (x, y, z)))
     if len(atoms) < 2:
         raise InputError(f"{len(atoms)} atoms", "write the metal and at least one ligand", place=place)
     return atoms

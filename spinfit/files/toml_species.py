@@ -6,7 +6,7 @@ import math
 import re
 from collections.abc import Sequence
 from fractions import Fraction
-from typing import Any
+from typing import Any, TypeVar
 
 from spinfit.errors import InputError, nearest
 from spinfit.files.keys import (
@@ -30,6 +30,7 @@ from spinfit.species import NO_TILT, Exchange, Nucleus, Species, Spin, Spread, W
 from spinfit.units import G_ELECTRON
 
 Path = tuple[str | int, ...]
+Built = TypeVar("Built")
 
 TENSOR = (1, 2, 3)
 LARGEST_DIMENSION = 4096
@@ -120,7 +121,7 @@ def _crystal_field(table: Table, ion: str | None) -> SpeciesField | None:
     if ion is None:
         table.require("ion", '"Cu2+" (the crystal field acts on it)')
     where = (*table.path, "crystal_field")
-    return field_from_table(data, ion, place=table.at("crystal_field"), path=where, given=table.given)
+    return field_from_table(data, str(ion), place=table.at("crystal_field"), path=where, given=table.given)
 
 
 def _spin_of_field(table: Table, field: SpeciesField) -> Spin:
@@ -136,7 +137,7 @@ def _spin_of_field(table: Table, field: SpeciesField) -> Spin:
     return spin
 
 
-def _build(table: Table, kind: Any, **values: Any) -> Any:
+def _build(table: Table, kind: type[Built], **values: Any) -> Built:
     """Make a dataclass; what it refuses is at this table."""
     try:
         return kind(**{key: value for key, value in values.items() if value is not None})

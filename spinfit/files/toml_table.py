@@ -403,7 +403,7 @@ def flatten(table: Mapping[str, Any], place: str) -> dict[str, Any]:
     """
     # Quoted keys can nest deeper than a parameter's name is long.
     found: dict[str, Any] = {}
-    waiting = [(key, value) for key, value in reversed(table.items())]
+    waiting = [(key, value) for key, value in reversed(list(table.items()))]
     while waiting:
         name, value = waiting.pop()
         if isinstance(value, dict) and name.count(".") < 20:

@@ -131,7 +131,8 @@ def _best_so_far(problem: Problem, view: View, best: Descent | None, free: Array
 def _conclude(problem: Problem, view: View, descent: Descent, *, finished: bool, begun: float) -> Outcome:
     """Uncertainties, notes and everything else at the end of a search."""
     at_limit = limits_reached(problem, descent.point.free)
-    spread, field_notes = None, []
+    spread = None
+    field_notes: list[Note] = []
     responses = _responses(problem, descent)
     if finished and problem.names:
         # A descent that converged computed its last Jacobian a few hundredths of an uncertainty away.
