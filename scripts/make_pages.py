@@ -75,9 +75,9 @@ SECTIONS: tuple[tuple[str, str, Keys], ...] = (
     ("`ligand`", "", keys.LIGAND),
     ("`geometry`", "", keys.GEOMETRY),
     ("`geometry.bonds`, for each symbol", "", keys.BOND),
-    ("`wybourne`, `stevens`", "k up to 4 for d shells, 6 for f shells.", keys.ANY_COEFFICIENT),
+    ("`wybourne`, `stevens`", "k up to 2 for p shells, 4 for d shells, 6 for f shells.", keys.ANY_COEFFICIENT),
     ("`racah`", "", keys.RACAH),
-    ("`slater`", "F6 for f shells only.", keys.ANY_SLATER),
+    ("`slater`", "F2 for p shells; F2 and F4 for d shells; F2, F4 and F6 for f shells.", keys.ANY_SLATER),
 )
 
 

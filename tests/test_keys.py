@@ -33,7 +33,7 @@ def _pages():
 
 
 PAGES = _pages()
-SHELLS = {2: "Fe3+", 3: "Er3+"}
+SHELLS = {1: "Bi2+", 2: "Fe3+", 3: "Er3+"}
 
 MODEL = """
 [sweep]
@@ -149,8 +149,8 @@ def around(heading: str, name: str) -> tuple[dict, dict]:
             del top["octahedral"]
             top[form] = {"ligand": [LIGAND.copy()], "geometry": copy.deepcopy(GEOMETRY)}.get(form, {})
         rank = next((shell for shell in SHELLS if name in keys.ORBITALS[shell] or name in keys.COEFFICIENTS[shell]), 2)
-        if form in ("orbitals", "wybourne") and rank == 3:
-            top["name"] = SHELLS[3]
+        if form in ("orbitals", "wybourne") and rank != 2:
+            top["name"] = SHELLS[rank]
             del top["racah"]
         if form == "orbitals":
             top[form] = {orbital: "0 eV" for orbital in keys.ORBITALS[rank]}
@@ -223,7 +223,7 @@ CASES = [
     pytest.param(heading, name, key, id=f"{heading.strip('`[]')}.{name}")
     for heading, _, table in PAGES.SECTIONS
     for name, key in table.items()
-    if key.example and not (heading == "`orbitals`" and name in keys.ORBITALS[1])
+    if key.example
 ]
 
 

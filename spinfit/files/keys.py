@@ -234,7 +234,7 @@ FIELD = _keys(
     racah=Key(
         "table", "repulsion of d electrons", '{B = "900 cm^-1", C = "3800 cm^-1"}', without="see [the ion](ion.md)"
     ),
-    slater=Key("table", "repulsion: F2, F4 and, for f shells, F6", without="see [the ion](ion.md)"),
+    slater=Key("table", "repulsion of the electrons", without="see [the ion](ion.md)"),
     space=Key(words(SPACES), "states that are computed", '"term"', without="see [the ion](ion.md)"),
     source=Key("text", "where the numbers come from, printed with every result", '"band maxima"', without="the form"),
 )
