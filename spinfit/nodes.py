@@ -179,6 +179,7 @@ class FieldNodes:
         self._halve(edges, accuracy, deepest, every)
         self._follow_out(low, high, accuracy, deepest)
         self.leaves.sort()
+        self._fill(accuracy, deepest)
 
     def _halve(self, edges: list[float], accuracy: float, deepest: int, only: NDArray[np.bool_]) -> None:
         pending = list(zip(edges[:-1], edges[1:], strict=True))
@@ -233,14 +234,15 @@ class FieldNodes:
         last: bool,
         lenient: bool,
         only: NDArray[np.bool_],
+        forced: NDArray[np.bool_] | None = None,
     ) -> list[tuple[float, float]]:
-        """Accept, drop or halve each pending segment; return the halves."""
+        """Accept, drop or halve each pending segment; return the halves. `forced` pairs count in any case."""
         self._keep([x for a, b in pending for x in (a, 0.5 * (a + b), b)])
         step = max(1, AT_ONCE // max(1, len(self.directions) * len(self.lower)))
         halves = []
         for first in range(0, len(pending), step):
             some = pending[first : first + step]
-            reachable, good = self._judged(some, accuracy, lenient, only)
+            reachable, good = self._judged(some, accuracy, lenient, only, forced)
             for (a, b), reach, fine in zip(some, reachable, good, strict=True):
                 m = 0.5 * (a + b)
                 if reach and (last or fine):
@@ -250,7 +252,12 @@ class FieldNodes:
         return halves
 
     def _judged(
-        self, segments: list[tuple[float, float]], accuracy: float, lenient: bool, only: NDArray[np.bool_]
+        self,
+        segments: list[tuple[float, float]],
+        accuracy: float,
+        lenient: bool,
+        only: NDArray[np.bool_],
+        forced: NDArray[np.bool_] | None,
     ) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
         """Return which segments can hold a resonance, and which of these are followed well enough, each (segments,)."""
         columns = [[self._every(x) for x in (a, 0.5 * (a + b), b)] for a, b in segments]
@@ -262,6 +269,8 @@ class FieldNodes:
         beyond = self.extent + self.between * np.ptp(f[1], axis=1, keepdims=True)
         reach = can_reach(f[0], f[2], g[0], g[2], beyond) | ((f[1] >= 0) != (f[0] >= 0))
         reach |= between_knots(f)
+        if forced is not None:
+            reach |= forced
         reach &= only & (size > 1e-3 * self.request.tolerance * size.max(axis=(1, 2), keepdims=True))
         error = np.where(reach, midpoint_error(*f, *g), 0.0)
         # a flat difference turns a miss of frequency into a larger one of field
@@ -327,6 +336,29 @@ class FieldNodes:
             if halves:
                 by_depth.setdefault(depth + 1, []).extend(halves)
         self.leaves.sort()
+        self._fill(accuracy, deepest)
+
+    def _fill(self, accuracy: float, deepest: int) -> None:
+        """Add what is missing between leaves on both sides of which one pair can be resonant.
+
+        Resonance fields are continuous over the sphere: directions between the knots cross the hole.
+        """
+        for one, other in list(zip(self.leaves[:-1], self.leaves[1:], strict=True)):
+            a, b = one[2], other[0]
+            if a >= b or a < self.request.low or b > self.request.high:
+                continue
+            forced = self._reachable(one) & self._reachable(other)
+            pending, depth = [(a, b)] * bool(forced.any()), 0
+            while pending:
+                self._ensure([0.5 * (x + y) for x, y in pending])
+                pending = self._judge(pending, accuracy, depth >= deepest, depth >= 3, forced, forced)
+                depth += 1
+        self.leaves.sort()
+
+    def _reachable(self, leaf: tuple[float, float, float]) -> NDArray[np.bool_]:
+        """Return which pairs can be resonant in a leaf at some knot."""
+        (f_a, g_a, _), _, (f_b, g_b, _) = (self._every(x) for x in leaf)
+        return can_reach(f_a, f_b, g_a * (leaf[2] - leaf[0]), g_b * (leaf[2] - leaf[0])).any(axis=0)
 
     def data(self, pairs: Pairs | None = None, *, split: bool = True) -> KnotData:
         """Return gap, slope and strength of every pair that can be resonant and is strong enough.
