@@ -60,6 +60,8 @@ ORDER = (
     "doublets",
     "knots",
     "exact",
+    "loop_kernels",
+    "loop_sums",
     "loops",
     "powder",
     "moves",

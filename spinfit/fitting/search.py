@@ -34,9 +34,9 @@ _SAME = 1e-3
 _AT_NOISE = 1.2
 _LITTLE = 0.05
 # Standard deviations from which something in the residuals is no chance: of one place, 1 in 10^7; of the sum of
-# squares over a stretch of the trace, whose tail is longer, 1 in 10^5 or so.
+# squares over a stretch of the trace, whose tail is longer and which has many chances, found rare by trial.
 _STANDS_OUT = 5.3
-_STRETCH_STANDS_OUT = 5.0
+_STRETCH_STANDS_OUT = 6.5
 _MEDIAN_OF_NORMAL = 0.6745
 _MOST_MOVES = 4
 # Candidates that must end again at the best minimum before the search gives up on a better one.
