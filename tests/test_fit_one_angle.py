@@ -5,8 +5,8 @@ import pytest
 
 from spinfit.fitting.data import Job, Trace
 from spinfit.fitting.driver import fit
-from spinfit.spectrum import simulate
 from spinfit.species import Species, Spin, Width
+from spinfit.spectrum import simulate
 from spinfit.sweep import Sample, Sweep
 
 FIELDS = np.linspace(300.0, 345.0, 500)
