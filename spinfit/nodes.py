@@ -26,6 +26,8 @@ BETWEEN = 2.0
 SHALLOW = 2
 """How often a narrow range is halved where levels are ordered by character: what is left is a name that changes
 along the field in a direction or two."""
+FAINT = 0.003
+"""Strength beside the largest below which a miss counts less; a faint pair may be the sharpest line of all."""
 KEPT_PAIRS = 120
 """Pairs of levels up to which their differences at every node are kept."""
 AT_ONCE = 200_000
@@ -279,7 +281,7 @@ class FieldNodes:
         # strengths have no slopes to follow them by: their bend, squared, is what a polynomial may miss
         bend = np.where(reach, np.abs(s[1] - 0.5 * (s[0] + s[2])), 0.0)
         top = size.max(axis=(1, 2), keepdims=True, initial=0.0, where=reach)
-        missed = bend * bend / np.maximum(size * top, 1e-300)
+        missed = bend * bend / np.maximum(size * np.maximum(size, FAINT * top), 1e-300)
         bad = (error > accuracy).mean(axis=1)
         bent = missed.max(axis=2).mean(axis=1) > 0.25 * self.request.tolerance
         # deep down only knots on symmetry axes are left, where a true crossing has no width
