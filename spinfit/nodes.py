@@ -24,8 +24,7 @@ Array = NDArray[np.float64]
 BETWEEN = 2.0
 """Part of a level difference's range over the sphere, times the rings squared, that may hide between knots."""
 SHALLOW = 2
-"""How often a narrow range is halved where levels are ordered by character: what is left is a name that changes
-along the field in a direction or two."""
+"""How often a narrow range is halved where levels are ordered by character: what is left is a name that changes."""
 FAINT = 0.003
 """Strength beside the largest below which a miss counts less; a faint pair may be the sharpest line of all."""
 KEPT_PAIRS = 120

@@ -120,8 +120,9 @@ def test_parameters_of_powders(name: str) -> None:
 
 
 def test_resonances_that_come_and_go() -> None:
-    # both spectra of the difference err by up to the tolerance of their top, whatever the parameter does
-    step, tolerance = 15.0, 3e-3
+    # the spectra of the difference, and the two sums of the derivative, err by up to the tolerance of their top
+    # each, whatever the parameter does
+    step, tolerance = 15.0, 1e-3
     species = Species(name="s", spins=(Spin(S=1.5, g=(1.98,), D=6500.0, E=600.0),), width=Width(gaussian=20.0))
     sweep = Sweep(9500.0, (20.0, 520.0), 200)
     spectrum = simulate(species, sweep, keep=True, tolerance=tolerance)
@@ -131,7 +132,7 @@ def test_resonances_that_come_and_go() -> None:
     )
     [change] = signal_changes(spectrum.kept[0], [(near, Sample())])
     difference = simulate(above, sweep, tolerance=tolerance).signal - simulate(below, sweep, tolerance=tolerance).signal
-    allowed = 2 * tolerance * np.abs(spectrum.signal).max()
+    allowed = 4 * tolerance * np.abs(spectrum.signal).max()
     assert np.abs(difference).max() > 10 * allowed
     assert change[0] * (2 * step / 0.02) == pytest.approx(difference, abs=allowed)
 
