@@ -44,6 +44,8 @@ _ENOUGH = 2
 # A minimum that leaves more than this part of the trace is far from the right one; less than the other, beside it
 # if it is not the right one.
 _FAR, _NEAR = 0.15, 0.01
+# Less than this part is left by a shape that is not quite the lines', not by a line in a wrong place.
+_MISFIT = 0.003
 # Chi-squared per point of a misfit that no weak line in a wrong place makes.
 _SYSTEMATIC = 3.0
 
@@ -79,7 +81,7 @@ class Search:
             self._follow(coarse_to_fine(problem, start, progress=self.progress))
         if not self._good():
             self._leave_for_better_basins()
-        if self._good():
+        if self._good() or (not automatic and self._found().converged and self._left() < _MISFIT):
             return self._found()
         wide = Wide(problem, start, progress=self.progress)
         if not automatic:
@@ -145,12 +147,12 @@ class Search:
             return
         ratio = descent.point.chi2 / max(self.best.point.chi2, 1e-300)
         if abs(ratio - 1) < _SAME:
+            # The same minimum, or one with its axes named otherwise: the first is named as the start was.
             self._ends += 1
+            if descent.converged and not self.best.converged:
+                self.best = descent
         elif ratio < 1:
             self._ends = 0
-        if ratio < 1:
-            if ratio > 1 - _SAME and self._scanned is self.best:
-                self._scanned = descent
             self.best = descent
 
     @property
