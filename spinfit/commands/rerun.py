@@ -12,7 +12,7 @@ from spinfit.commands.screen import Screen
 from spinfit.errors import InputError
 
 NAME = "rerun"
-SUMMARY = "repeat a fit from its archive alone: do the numbers agree?"
+SUMMARY = "repeat a fit from its archive alone and say whether the numbers agree"
 EXAMPLES = (
     "spinfit rerun kiln-07/outcome.h5",
     "spinfit rerun kiln-07/outcome.h5 --out again",

@@ -13,7 +13,7 @@ drawn through the lines, whatever the detection.
 With columns K and penalty rows P the least sum over b is rest' R^2 rest, R^2 = 1 - K (K'K + P'P)^-1 K'.
 Residuals and Jacobian are multiplied by the symmetric root R, which for a polynomial is the projection
 away from it.  The covariance that follows is the Bayesian one, in which the background may be any that the
-penalty lets expect (G. Wahba, J. R. Stat. Soc. B 45, 133 (1983)): it is inside every uncertainty.
+penalty lets expect (G. Wahba, J. R. Stat. Soc. B 45, 133 (1983), from memory): it is inside every uncertainty.
 """
 
 from __future__ import annotations

@@ -7,14 +7,14 @@ A loss rho replaces the square of each standardised residual r (published defini
     huber    z, and 2 sqrt(z) - 1 beyond z = 1        cauchy   ln(1 + z)
 
 The minimum is found by iteratively reweighted least squares, weights rho'(z) (P. W. Holland, R. E. Welsch,
-Commun. Stat. A 6, 813 (1977)): in each round scale, baseline and parameters are solved as in a plain fit
+Commun. Stat. A 6, 813 (1977), from memory): in each round scale, baseline and parameters are solved as in a plain fit
 with these weights, so that they belong together.  The default c leave 95 % of the efficiency of least squares where
 the noise is Gaussian.
 
 At the minimum the fit to *pseudo-values*, fitted curve + psi(r)/mean(psi'), psi(r) = r rho'(z), is a plain
 least-squares fit with the same solution, and its covariance is that of the robust one,
-mean(psi^2)/mean(psi')^2 (J'J)^-1 (P. J. Huber, Robust Statistics (1981), chapter 7).  So everything after the
-minimum, from uncertainties to tests of residuals, looks at the pseudo-values.
+mean(psi^2)/mean(psi')^2 (J'J)^-1 (P. J. Huber, Robust Statistics (1981), chapter 7, from memory).  So
+everything after the minimum, from uncertainties to tests of residuals, looks at the pseudo-values.
 
 A smooth baseline under an absorption may be asymmetric: points above it count `asymmetry`, those below
 1 - asymmetry (P. H. C. Eilers, H. F. M. Boelens, 2005, from memory), so that lines of absorption that no species
@@ -36,8 +36,8 @@ from spinfit.fitting.solve import Descent, Goal, descend
 
 Array = NDArray[np.float64]
 
-# 95 % efficient for Gaussian noise: huber and cauchy by Holland and Welsch (1977); soft_l1 by the same integral,
-# mean(psi')^2 / mean(psi^2), which a test does again.
+# 95 % efficient for Gaussian noise: huber and cauchy by Holland and Welsch (1977), from memory; soft_l1 by the same
+# integral, mean(psi')^2 / mean(psi^2), which a test does again.
 SCALES = {"huber": 1.345, "cauchy": 2.385, "soft_l1": 1.287}
 # Standard deviations beyond which a point is listed: noise gets there in 1 of 16 000.
 LISTED = 4.0
