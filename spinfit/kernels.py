@@ -54,6 +54,19 @@ def deposit_numpy(into: Array, rows: NDArray[np.intp] | np.intp, x: Array, weigh
         flat += np.bincount(i + (k - 1), weights=weights * shares[k], minlength=flat.size)
 
 
+def smear_classes(smear: Array, least: float, ratio: float, rows: int) -> tuple[NDArray[np.intp], Array]:
+    """Return the lower of the two histograms that share each point by its smear, and the share of the upper one.
+
+    Row 0 is for no smear, row k for `least` x `ratio`^(k - 1); shares are smooth, so that no edge between
+    classes shows.
+    """
+    rung = np.where(smear < least, smear / least, 1 + np.log(np.maximum(smear, least) / least) / math.log(ratio))
+    rung = np.minimum(rung, rows - 1 - 1e-9)
+    lower = rung.astype(np.intp)
+    part = rung - lower
+    return lower, part * part * (3 - 2 * part)
+
+
 def deposit_smeared_numpy(into: Array, x: Array, weights: Array, smear: Array, least: float, ratio: float) -> None:
     """Add weights at places x, each shared smoothly between the two histograms next to its smear.
 
@@ -63,13 +76,9 @@ def deposit_smeared_numpy(into: Array, x: Array, weights: Array, smear: Array, l
         Row 0 is for no smear, row k for `least` x `ratio`^(k - 1).
     x, weights, smear : ndarray, shape (n,)
     """
-    place = np.where(smear < least, smear / least, 1 + np.log(np.maximum(smear, least) / least) / math.log(ratio))
-    place = np.minimum(place, len(into) - 1 - 1e-9)
-    lower = place.astype(np.intp)
-    part = place - lower
-    upper_share = part * part * (3 - 2 * part)
+    lower, upper = smear_classes(smear, least, ratio, len(into))
     rows = np.concatenate([lower, lower + 1])
-    shares = np.concatenate([weights * (1 - upper_share), weights * upper_share])
+    shares = np.concatenate([weights * (1 - upper), weights * upper])
     deposit_numpy(into, rows, np.concatenate([x, x]), shares)
 
 
@@ -143,141 +152,9 @@ def deposit_sheet_changes_numpy(
     if not len(smear):
         deposit_changes_numpy(into, np.intp(0), x, weights, moves)
         return
-    rung = np.where(smear < least, smear / least, 1 + np.log(np.maximum(smear, least) / least) / math.log(ratio))
-    rung = np.minimum(rung, into.shape[1] - 1 - 1e-9)
-    lower = rung.astype(np.intp)
-    part = rung - lower
-    upper = part * part * (3 - 2 * part)
+    lower, upper = smear_classes(smear, least, ratio, into.shape[1])
     deposit_changes_numpy(into, lower, x, weights * (1 - upper), moves * (1 - upper))
     deposit_changes_numpy(into, lower + 1, x, weights * upper, moves * upper)
-
-
-def _compiled_deposit(into, rows, x, weights):
-    count = into.shape[1]
-    for n in range(x.size):
-        if x[n] >= 1.0 and x[n] < count - 3:
-            i = int(x[n])
-            u = x[n] - i
-            v = 1.0 - u
-            w = weights[n] / 6.0
-            row = rows[n] if rows.size > 1 else rows[0]
-            into[row, i - 1] += w * v * v * v
-            into[row, i] += w * (4.0 - 6.0 * u * u + 3.0 * u * u * u)
-            into[row, i + 1] += w * (4.0 - 6.0 * v * v + 3.0 * v * v * v)
-            into[row, i + 2] += w * u * u * u
-
-
-def _compiled_smeared(into, x, weights, smear, least, ratio):
-    rows, count = into.shape
-    scale = 1.0 / math.log(ratio)
-    for n in range(x.size):
-        if x[n] >= 1.0 and x[n] < count - 3:
-            place = smear[n] / least
-            if place >= 1.0:
-                place = 1.0 + math.log(place) * scale
-            place = min(place, rows - 1 - 1e-9)
-            row = int(place)
-            part = place - row
-            upper = part * part * (3.0 - 2.0 * part)
-            i = int(x[n])
-            u = x[n] - i
-            v = 1.0 - u
-            a = v * v * v / 6.0
-            b = (4.0 - 6.0 * u * u + 3.0 * u * u * u) / 6.0
-            c = (4.0 - 6.0 * v * v + 3.0 * v * v * v) / 6.0
-            d = u * u * u / 6.0
-            w = weights[n] * (1.0 - upper)
-            into[row, i - 1] += w * a
-            into[row, i] += w * b
-            into[row, i + 1] += w * c
-            into[row, i + 2] += w * d
-            w = weights[n] * upper
-            into[row + 1, i - 1] += w * a
-            into[row + 1, i] += w * b
-            into[row + 1, i + 1] += w * c
-            into[row + 1, i + 2] += w * d
-
-
-def _compiled_changes(into, rows, x, weights, moves):
-    changes, _, count = into.shape
-    for n in range(x.size):
-        if x[n] >= 1.0 and x[n] < count - 3:
-            i = int(x[n])
-            u = x[n] - i
-            v = 1.0 - u
-            row = rows[n] if rows.size > 1 else rows[0]
-            a = v * v * v / 6.0
-            b = (4.0 - 6.0 * u * u + 3.0 * u * u * u) / 6.0
-            c = (4.0 - 6.0 * v * v + 3.0 * v * v * v) / 6.0
-            d = u * u * u / 6.0
-            da = -0.5 * v * v
-            db = 1.5 * u * u - 2.0 * u
-            dc = 2.0 * v - 1.5 * v * v
-            dd = 0.5 * u * u
-            for k in range(changes):
-                w = weights[k, n]
-                m = moves[k, n]
-                into[k, row, i - 1] += w * a + m * da
-                into[k, row, i] += w * b + m * db
-                into[k, row, i + 1] += w * c + m * dc
-                into[k, row, i + 2] += w * d + m * dd
-
-
-def _compiled_sheet_changes(
-    into, factor, origin, field, weight, share, smear, by_field, by_weight, inverse, least, ratio
-):
-    changes, rows, count = into.shape
-    scale = 1.0 / math.log(ratio)
-    for n in range(field.size):
-        b = field[n]
-        x = b * factor + origin
-        if x >= 1.0 and x < count - 3:
-            i = int(x)
-            u = x - i
-            v = 1.0 - u
-            a0 = v * v * v / 6.0
-            a1 = (4.0 - 6.0 * u * u + 3.0 * u * u * u) / 6.0
-            a2 = (4.0 - 6.0 * v * v + 3.0 * v * v * v) / 6.0
-            a3 = u * u * u / 6.0
-            d0 = -0.5 * v * v
-            d1 = 1.5 * u * u - 2.0 * u
-            d2 = 2.0 * v - 1.5 * v * v
-            d3 = 0.5 * u * u
-            row = 0
-            upper = 0.0
-            if smear.size:
-                rung = smear[n] / least
-                if rung >= 1.0:
-                    rung = 1.0 + math.log(rung) * scale
-                rung = min(rung, rows - 1 - 1e-9)
-                row = int(rung)
-                part = rung - row
-                upper = part * part * (3.0 - 2.0 * part)
-            cube = b * b * b
-            third = 3.0 * weight[n] / b
-            whole = weight[n] * share[n] * factor
-            for k in range(changes):
-                m = by_field[k, n]
-                w = by_weight[k, n]
-                if inverse:
-                    m = -0.5 * cube * m
-                    w = cube * w + third * m
-                m = m * whole
-                w = w * share[n]
-                t0 = w * a0 + m * d0
-                t1 = w * a1 + m * d1
-                t2 = w * a2 + m * d2
-                t3 = w * a3 + m * d3
-                if upper > 0.0:
-                    into[k, row + 1, i - 1] += upper * t0
-                    into[k, row + 1, i] += upper * t1
-                    into[k, row + 1, i + 1] += upper * t2
-                    into[k, row + 1, i + 2] += upper * t3
-                lower = 1.0 - upper
-                into[k, row, i - 1] += lower * t0
-                into[k, row, i] += lower * t1
-                into[k, row, i + 1] += lower * t2
-                into[k, row, i + 2] += lower * t3
 
 
 def compiled(function: Callable) -> Callable:
@@ -290,10 +167,102 @@ def compiled(function: Callable) -> Callable:
         return njit(function)
 
 
-_compiled_deposit = compiled(_compiled_deposit)
-_compiled_smeared = compiled(_compiled_smeared)
-_compiled_changes = compiled(_compiled_changes)
-_compiled_sheet_changes = compiled(_compiled_sheet_changes)
+taps_at, slopes_at = compiled(taps), compiled(slopes_of_taps)
+"""`taps` and `slopes_of_taps` for one point, inside other kernels."""
+
+
+def _smear_class(smear, least, scale, rows):
+    """Return `smear_classes` of one point; `scale` is 1/log(ratio)."""
+    rung = smear / least
+    if rung >= 1.0:
+        rung = 1.0 + math.log(rung) * scale
+    rung = min(rung, rows - 1 - 1e-9)
+    row = int(rung)
+    part = rung - row
+    return row, part * part * (3.0 - 2.0 * part)
+
+
+def _add(row, i, weight, t):
+    """Add a weight at four neighbouring places of one histogram, in shares t."""
+    row[i - 1] += weight * t[0]
+    row[i] += weight * t[1]
+    row[i + 1] += weight * t[2]
+    row[i + 2] += weight * t[3]
+
+
+smear_class, add_at = compiled(_smear_class), compiled(_add)
+"""Parts of other kernels."""
+
+
+def _deposit(into, rows, x, weights):
+    count = into.shape[1]
+    for n in range(x.size):
+        if x[n] >= 1.0 and x[n] < count - 3:
+            i = int(x[n])
+            row = rows[n] if rows.size > 1 else rows[0]
+            add_at(into[row], i, weights[n], taps_at(x[n] - i))
+
+
+def _smeared(into, x, weights, smear, least, ratio):
+    rows, count = into.shape
+    scale = 1.0 / math.log(ratio)
+    for n in range(x.size):
+        if x[n] >= 1.0 and x[n] < count - 3:
+            row, upper = smear_class(smear[n], least, scale, rows)
+            i = int(x[n])
+            t = taps_at(x[n] - i)
+            add_at(into[row], i, weights[n] * (1.0 - upper), t)
+            add_at(into[row + 1], i, weights[n] * upper, t)
+
+
+def _changes(into, rows, x, weights, moves):
+    changes, _, count = into.shape
+    for n in range(x.size):
+        if x[n] >= 1.0 and x[n] < count - 3:
+            i = int(x[n])
+            row = rows[n] if rows.size > 1 else rows[0]
+            t, d = taps_at(x[n] - i), slopes_at(x[n] - i)
+            for k in range(changes):
+                add_at(into[k, row], i, weights[k, n], t)
+                add_at(into[k, row], i, moves[k, n], d)
+
+
+def _sheet_changes(into, factor, origin, field, weight, share, smear, by_field, by_weight, inverse, least, ratio):
+    changes, rows, count = into.shape
+    scale = 1.0 / math.log(ratio)
+    for n in range(field.size):
+        b = field[n]
+        x = b * factor + origin
+        if x >= 1.0 and x < count - 3:
+            i = int(x)
+            t, d = taps_at(x - i), slopes_at(x - i)
+            row, upper = 0, 0.0
+            if smear.size:
+                row, upper = smear_class(smear[n], least, scale, rows)
+            cube = b * b * b
+            third = 3.0 * weight[n] / b
+            whole = weight[n] * share[n] * factor
+            for k in range(changes):
+                m = by_field[k, n]
+                w = by_weight[k, n]
+                if inverse:
+                    m = -0.5 * cube * m
+                    w = cube * w + third * m
+                m = m * whole
+                w = w * share[n]
+                both = (
+                    w * t[0] + m * d[0],
+                    w * t[1] + m * d[1],
+                    w * t[2] + m * d[2],
+                    w * t[3] + m * d[3],
+                )
+                if upper > 0.0:
+                    add_at(into[k, row + 1], i, upper, both)
+                add_at(into[k, row], i, 1.0 - upper, both)
+
+
+_compiled_deposit, _compiled_smeared = compiled(_deposit), compiled(_smeared)
+_compiled_changes, _compiled_sheet_changes = compiled(_changes), compiled(_sheet_changes)
 
 
 def deposit(into: Array, rows: NDArray[np.intp] | np.intp, x: Array, weights: Array) -> None:

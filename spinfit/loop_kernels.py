@@ -1,6 +1,6 @@
-"""The sums of `spinfit.loops`, point by point, for compilation.
+"""The sums of `spinfit.loop_sums`, point by point, for compilation.
 
-Both do what their twins `spinfit.loops.in_frequency_numpy` and `in_field_numpy` do, to rounding, and
+Both do what their twins `spinfit.loop_sums.in_frequency_numpy` and `in_field_numpy` do, to rounding, and
 stand under the same tests.  Arrays over nodes and points have shape (k, points).
 """
 
@@ -10,18 +10,8 @@ import math
 
 import numpy as np
 
-from spinfit.kernels import compiled
-
-
-def _taps(x):
-    """Return the place left of x and the four cubic B-spline weights there."""
-    i = int(x)
-    u = x - i
-    v = 1.0 - u
-    a = v * v * v / 6.0
-    b = (4.0 - 6.0 * u * u + 3.0 * u * u * u) / 6.0
-    c = (4.0 - 6.0 * v * v + 3.0 * v * v * v) / 6.0
-    return i, a, b, c, u * u * u / 6.0
+from spinfit.kernels import add_at, compiled, smear_class, taps_at
+from spinfit.sheets import smear_at
 
 
 def _value(c0, c1, c2, c3, c4, c5, t):
@@ -293,36 +283,21 @@ def _in_field(
                     continue
                 weight = s / rise * share * weights[p]
                 used += 1
-                distance = apart / rise
-                part = (distance / close) ** 2
-                place = smear * distance * part / (part + 0.3) / least_size
-                if place >= 1.0:
-                    place = 1.0 + math.log(place) * turn
-                place = min(place, rows - 1 - 1e-9)
-                row = int(place)
-                part = place - row
-                upper = part * part * (3.0 - 2.0 * part)
+                row, upper = smear_class(smear_at(apart / rise, close, smear), least_size, turn, rows)
                 for sign in (1.0, -1.0):
                     if sign < 0 and start >= 0:
                         break  # the spectrum is even in B
                     x = (sign * field - start) / spacing
                     if x < 1.0 or x >= count - 3:
                         continue
-                    i, w0, w1, w2, w3 = _taps(x)
-                    w = weight * (1.0 - upper)
-                    into[row, i - 1] += w * w0
-                    into[row, i] += w * w1
-                    into[row, i + 1] += w * w2
-                    into[row, i + 2] += w * w3
-                    w = weight * upper
-                    into[row + 1, i - 1] += w * w0
-                    into[row + 1, i] += w * w1
-                    into[row + 1, i + 1] += w * w2
-                    into[row + 1, i + 2] += w * w3
+                    i = int(x)
+                    taps = taps_at(x - i)
+                    add_at(into[row], i, weight * (1.0 - upper), taps)
+                    add_at(into[row + 1], i, weight * upper, taps)
     return used
 
 
-_taps, _value, _rise, _quintic = compiled(_taps), compiled(_value), compiled(_rise), compiled(_quintic)
+_value, _rise, _quintic = compiled(_value), compiled(_rise), compiled(_quintic)
 _refined, _lagrange, _shared = compiled(_refined), compiled(_lagrange), compiled(_shared)
 _nearness_squared, _reaches = compiled(_nearness_squared), compiled(_reaches)
 in_frequency, in_field = compiled(_in_frequency), compiled(_in_field)

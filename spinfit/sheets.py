@@ -47,6 +47,10 @@ def smear_for(apart: Array, close: float, smear: float) -> Array:
     return smear * apart * ratio / (ratio + ONSET)
 
 
+smear_at = kernels.compiled(smear_for)
+"""`smear_for` for one point, inside kernels."""
+
+
 class Histograms:
     """Deposits on one grid: plain, smeared by classes of size, and broadened by classes of width.
 
@@ -269,31 +273,14 @@ def _compiled_sheets(into, factor, origin, x, y, inverse, shares, around, close,
                 if inverse[k]:
                     w *= b * b * b
                 n = int(at)
-                u = at - n
-                v = 1.0 - u
-                t0 = v * v * v / 6.0
-                t1 = (4.0 - 6.0 * u * u + 3.0 * u * u * u) / 6.0
-                t2 = (4.0 - 6.0 * v * v + 3.0 * v * v * v) / 6.0
-                t3 = u * u * u / 6.0
+                t = kernels.taps_at(at - n)
                 row = 0
                 if not plain:
-                    share = apart[i, j] / (close * close)
-                    rung = smear * math.sqrt(apart[i, j]) * share / (share + ONSET) / least
-                    if rung >= 1.0:
-                        rung = 1.0 + math.log(rung) * scale
-                    rung = min(rung, rows - 1 - 1e-9)
-                    row = int(rung)
-                    part = rung - row
-                    upper = w * part * part * (3.0 - 2.0 * part)
-                    into[row + 1, n - 1] += upper * t0
-                    into[row + 1, n] += upper * t1
-                    into[row + 1, n + 1] += upper * t2
-                    into[row + 1, n + 2] += upper * t3
-                    w -= upper
-                into[row, n - 1] += w * t0
-                into[row, n] += w * t1
-                into[row, n + 1] += w * t2
-                into[row, n + 2] += w * t3
+                    own = smear_at(math.sqrt(apart[i, j]), close, smear)
+                    row, upper = kernels.smear_class(own, least, scale, rows)
+                    kernels.add_at(into[row + 1], n, w * upper, t)
+                    w *= 1.0 - upper
+                kernels.add_at(into[row], n, w, t)
 
 
 _compiled_sheets = kernels.compiled(_compiled_sheets)

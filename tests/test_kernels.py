@@ -117,3 +117,32 @@ def test_branches_over_a_mesh(kind: str, close: float) -> None:
         deposit(got, (2.0, -10.0), x, y, inverse, mesh.weights(), around, (close, 0.6, 0.1, 1.6))
         assert got == pytest.approx(want, abs=1e-12)
     assert want[1:].any() == (close < 1)
+
+
+@pytest.mark.parametrize("inverse", [False, True])
+@pytest.mark.parametrize("smeared", [False, True])
+@pytest.mark.parametrize("deposit", [kernels.deposit_sheet_changes_numpy, kernels.deposit_sheet_changes])
+def test_changes_of_a_sheet(deposit, inverse: bool, smeared: bool) -> None:
+    """The change of a deposit of fields and weights that are moved either way, by the kernels that deposit them."""
+    rng = np.random.default_rng(9)
+    field, weight, share = rng.uniform(5.0, 15.0, 300), rng.normal(size=300), rng.uniform(0.1, 1.0, 300)
+    smear = np.geomspace(1e-2, 20.0, 300) if smeared else np.empty(0)
+    change_b, change_w = rng.normal(size=(2, 2, 300))
+    factor, origin = 2.5, -10.0
+    got = np.zeros((2, 6, 60))
+    by_field, by_weight = change_b, change_w
+    if inverse:  # of x = B^-2 and y = W B^-3
+        by_field = -2 * change_b / field**3
+        by_weight = (change_w - 3 * weight * change_b / field) / field**3
+    deposit(got, (factor, origin), (field, weight, share, smear), (by_field, by_weight), inverse, 0.4, 1.6)
+    step = 1e-5
+    for k in range(2):
+        sides = np.zeros((2, 6, 60))
+        for side, sign in zip(sides, (1, -1), strict=True):
+            place = (field + sign * step * change_b[k]) * factor + origin
+            weights = (weight + sign * step * change_w[k]) * share
+            if smeared:
+                kernels.deposit_smeared_numpy(side, place, weights, smear, 0.4, 1.6)
+            else:
+                kernels.deposit_numpy(side, np.intp(0), place, weights)
+        assert got[k] == pytest.approx((sides[0] - sides[1]) / (2 * step), abs=1e-6 * np.abs(got[k]).max())
