@@ -257,19 +257,27 @@ class Signals:
     def slope(
         self, species: tuple[Species, ...], trace: Trace, sample: Sample, field: Array, stage: Stage, step: float
     ) -> Array:
-        """Derivative of the sum with respect to the true field, shape (n,), by central differences.
+        """Derivative of the sum with respect to the true field, shape (n,).
 
-        Both sides come from one simulation, so that a choice the engine makes is the same for both.
+        The engine's own where it has one, else by central differences, both sides of which come from one
+        simulation, so that a choice the engine makes is the same for both.
 
         Parameters
         ----------
         step : float
             mT; half the distance of the two sides.
         """
-        shift = step / trace.field_scale
-        both, place = np.unique(np.concatenate((field - shift, field + shift)), return_inverse=True)
-        total = self.total(species, trace, sample, both, stage)[place]
-        return (total[field.size :] - total[: field.size]) / (2 * step)
+        out = np.zeros(field.size)
+        for one in species:
+            followed = self.changes(one, trace, sample, field, stage, ())
+            if followed is not None:
+                out += one.amount * followed.by_field
+                continue
+            shift = step / trace.field_scale
+            both, place = np.unique(np.concatenate((field - shift, field + shift)), return_inverse=True)
+            part = self.part(one, trace, sample, both, stage)[place]
+            out += one.amount * (part[field.size :] - part[: field.size]) / (2 * step)
+        return out
 
 
 def narrowest_width(species: tuple[Species, ...]) -> float:
