@@ -9,7 +9,7 @@ differences of simulations.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -22,6 +22,7 @@ from spinfit.species import Species
 from spinfit.sweep import Sample
 
 Array = NDArray[np.float64]
+Model = Callable[[Array], tuple[tuple[Species, ...], Sample, tuple[Trace, ...]]]
 
 # Of a parameter's typical change.  Levels move by some 1e-3 MHz then, a hundred million times their
 # rounding, while the second order of that is as small beside the first.
@@ -152,7 +153,7 @@ def _turned(sample: Sample, new: Trace, trace: Trace) -> Sample | None:
     return replace(sample, angle_zero=sample.angle_zero + trace.angle - new.angle)
 
 
-def move(model: object, free: Array, index: int, step: float) -> Moved | None:
+def move(model: Model, free: Array, index: int, step: float) -> Moved | None:
     """Return the model with one free parameter moved, None where it has no meaning there.
 
     Parameters
