@@ -157,6 +157,10 @@ def main(argv: Sequence[str] | None = None) -> int:
                 traceback.print_exception(error)
             message, code = _verdict(error)
             print(f"spinfit: {message}", file=sys.stderr)
+            try:
+                sys.stdout.flush()
+            except OSError:  # what could not be written cannot be written at the end either
+                _leave_quietly()
             return code
 
 

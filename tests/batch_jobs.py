@@ -89,7 +89,12 @@ def spinfit(*arguments: str, **more: Any) -> subprocess.Popen[str]:
     command = [sys.executable, "-m", "spinfit.cli", *arguments]
     environment = os.environ | {"PYTHONPATH": str(ROOT)}
     streams = {"stdout": subprocess.PIPE, "stderr": subprocess.PIPE}
-    return subprocess.Popen(command, text=True, env=environment, **(streams | more))
+    # a shell's background jobs ignore Ctrl-C, and so would what they start
+    before = signal.signal(signal.SIGINT, signal.default_int_handler)
+    try:
+        return subprocess.Popen(command, text=True, env=environment, **(streams | more))
+    finally:
+        signal.signal(signal.SIGINT, before)
 
 
 def killed_and_resumed(command: Sequence[str], out: Path, moments: Sequence[int], total: int) -> list[int]:
