@@ -11,6 +11,8 @@ import sys
 import traceback
 import warnings
 from collections.abc import Sequence
+from contextlib import suppress
+from typing import Any
 
 from spinfit import __version__
 from spinfit.commands import TABLE
@@ -23,6 +25,9 @@ COMMON = ("--json", "--debug")
 
 class _Parser(argparse.ArgumentParser):
     """An argument parser that raises `InputError` where argparse would print its usage and exit."""
+
+    def _print_message(self, message: str, file: Any = None) -> None:
+        (file or sys.stderr).write(message)  # argparse passes over a full disk
 
     def error(self, message: str) -> None:
         raise InputError(message, f'see "{self.prog} --help"', place=self.prog.removeprefix("spinfit").strip() or None)
@@ -124,12 +129,39 @@ def _verdict(error: BaseException) -> tuple[str, int]:
     return f"a fault of spinfit, not yours: {what}; {report} (--debug shows where it arose)", 3
 
 
-def _leave_quietly() -> None:
-    """Point standard output at nothing, so that the interpreter's last flush finds no broken pipe."""
+def _open_streams() -> None:
+    """Put something in the place of standard streams that are closed, as under some schedulers.
+
+    The next file that is opened would get a closed stream's number, and what a library says there would go into it.
+    """
+    for number in range(3):
+        try:
+            os.fstat(number)
+        except OSError:
+            opened = os.open(os.devnull, os.O_RDWR)
+            if opened != number:
+                os.dup2(opened, number)
+                os.close(opened)
+    for name in ("stdout", "stderr"):
+        stream = getattr(sys, name)
+        if stream is None:  # it was closed before Python began
+            setattr(sys, name, open(os.devnull, "w", encoding="utf-8"))
+        elif hasattr(stream, "reconfigure"):  # a terminal that cannot show a character shows "?" in its place
+            stream.reconfigure(errors="replace")
+
+
+def _leave_quietly(stream: Any) -> None:
+    """Point a stream at nothing, so that the interpreter's last flush finds no broken pipe and no full disk."""
+    with suppress(OSError, ValueError, AttributeError):  # it has no file descriptor
+        os.dup2(os.open(os.devnull, os.O_WRONLY), stream.fileno())
+
+
+def _complain(message: str) -> None:
+    """Write a line on standard error, where there is room for it."""
     try:
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-    except (OSError, ValueError, AttributeError):  # standard output has no file descriptor
-        pass
+        print(f"spinfit: {message}", file=sys.stderr, flush=True)
+    except OSError:
+        _leave_quietly(sys.stderr)
 
 
 def main(argv: Sequence[str] | None = None) -> int:
@@ -137,30 +169,30 @@ def main(argv: Sequence[str] | None = None) -> int:
     one_thread()
     arguments = list(sys.argv[1:] if argv is None else argv)
     debug = "--debug" in arguments
-    for stream in (sys.stdout, sys.stderr):  # a terminal that cannot show a character shows "?" in its place
-        if hasattr(stream, "reconfigure"):
-            stream.reconfigure(errors="replace")
+    _open_streams()
     with warnings.catch_warnings():
         if not debug and not sys.warnoptions:
             warnings.simplefilter("ignore")  # a library's own warnings are not for users; ours are in the outcome
         try:
-            code = _run(arguments)
+            try:
+                code = _run(arguments)
+            except SystemExit as leaving:  # argparse's --help
+                code = leaving.code if isinstance(leaving.code, int) else 0
             sys.stdout.flush()
             return code
-        except SystemExit as leaving:  # argparse's --help
-            return leaving.code if isinstance(leaving.code, int) else 0
         except BrokenPipeError:  # whoever read our output has seen enough: "spinfit simulate ... | head"
-            _leave_quietly()
+            _leave_quietly(sys.stdout)
             return 0
         except (Exception, KeyboardInterrupt) as error:
             if debug:
-                traceback.print_exception(error)
+                with suppress(OSError):
+                    traceback.print_exception(error)
             message, code = _verdict(error)
-            print(f"spinfit: {message}", file=sys.stderr)
+            _complain(message)
             try:
                 sys.stdout.flush()
             except OSError:  # what could not be written cannot be written at the end either
-                _leave_quietly()
+                _leave_quietly(sys.stdout)
             return code
 
 
