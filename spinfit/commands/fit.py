@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import argparse
+import os
 import time
 from collections.abc import Iterator, Mapping
 from contextlib import contextmanager, suppress
@@ -11,7 +12,7 @@ from pathlib import Path
 from typing import Any
 
 from spinfit.commands.screen import Screen
-from spinfit.errors import InputError
+from spinfit.errors import InputError, on_one_line
 
 NAME = "fit"
 SUMMARY = "fit a model to measured traces: values, uncertainties, pictures"
@@ -77,13 +78,15 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
     folder = None if args.out is None else ready_folder(args.out)
     try:
         outcome, tried = _fitted(job, args.profile, resamples, steps, screen)
-        written = [] if folder is None else write_outcome(folder, job, outcome, **tried)
+        written, trouble = kept(folder, job, outcome, **tried)
+        _say(screen, outcome, folder, written, **tried)
+        if trouble is not None:
+            raise trouble
     except BaseException:
         if is_new and folder is not None:  # a refused fit leaves no empty folder behind
             with suppress(OSError):
                 folder.rmdir()
         raise
-    _say(screen, outcome, folder, written, **tried)
     return _code(outcome)
 
 
@@ -144,9 +147,6 @@ def _compare(args: argparse.Namespace, screen: Screen) -> int:
     """Fit every job and rank the models; with --out each job has a folder of its own in it."""
     from spinfit.files.job import read_job
     from spinfit.fitting.comparison import compare
-    from spinfit.report.outcome_json import outcome_record
-    from spinfit.report.tables import outcome_lines
-    from spinfit.report.tried import comparison_lines
 
     for option, given in (("--profile", args.profile), ("--bootstrap", args.bootstrap), ("--sample", args.sample)):
         if given:
@@ -165,28 +165,37 @@ def _compare(args: argparse.Namespace, screen: Screen) -> int:
     paths = [] if args.out is None else [Path(args.out), *(Path(args.out) / name for name in names)]
     fresh = [path for path in paths if not path.exists()]
     folders = [None if args.out is None else ready_folder(str(Path(args.out) / name)) for name in names]
-    outcomes = []
+    outcomes, troubles = [], []
     try:
         for job, folder in zip(jobs, folders, strict=True):
             outcome, _ = _fitted(job, [], 0, 0, screen)
-            if folder is not None:
-                write_outcome(folder, job, outcome)
+            troubles.append(kept(folder, job, outcome)[1])
             outcomes.append(outcome)
         found = compare(outcomes)
+        _say_comparison(screen, outcomes, found)
+        for trouble in filter(None, troubles):
+            raise trouble
     except BaseException:
         for path in reversed(fresh):  # those that hold nothing go again
             with suppress(OSError):
                 path.rmdir()
         raise
+    if args.out is not None:
+        screen.say(f"\nwritten to {on_one_line(args.out)}: {', '.join(names)}")
+    return max(map(_code, outcomes))
+
+
+def _say_comparison(screen: Screen, outcomes: list[Any], found: Any) -> None:
+    from spinfit.report.outcome_json import outcome_record
+    from spinfit.report.tables import outcome_lines
+    from spinfit.report.tried import comparison_lines
+
     records = {one.name: outcome_record(one) for one in outcomes}
     screen.emit({"comparison": found, "outcomes": records})
     for outcome in outcomes:
         screen.say(outcome_lines(outcome))
         screen.say()
     screen.say(comparison_lines(found))
-    if args.out is not None:
-        screen.say(f"\nwritten to {args.out}: {', '.join(names)}")
-    return max(map(_code, outcomes))
 
 
 def _say(
@@ -216,8 +225,10 @@ def _say(
     screen.say()
     if folder is None:
         screen.say(f"{outcome.seconds:.1f} s; nothing was written: add --out DIR to keep curves, picture and report")
+    elif written:
+        screen.say(f"{outcome.seconds:.1f} s; written to {on_one_line(str(folder))}: {', '.join(written)}")
     else:
-        screen.say(f"{outcome.seconds:.1f} s; written to {folder}: {', '.join(written)}")
+        screen.say(f"{outcome.seconds:.1f} s; nothing could be written: the numbers above are all that is left of it")
 
 
 def ready_folder(out: str) -> Path:
@@ -250,6 +261,16 @@ class _Tried(Exception):
     """Leaves a file that was only opened to see whether it can be."""
 
 
+def kept(folder: Path | None, job: Any, outcome: Any, **tried: Any) -> tuple[list[str], Exception | None]:
+    """Write an outcome; return the files' names, or none and what went wrong: what was fitted is to be shown first."""
+    if folder is None:
+        return [], None
+    try:
+        return write_outcome(folder, job, outcome, **tried), None
+    except Exception as error:
+        return [], error
+
+
 def write_outcome(
     folder: Path, job: Any, outcome: Any, *, profiles: Any = (), resampled: Any = None, posterior: Any = None
 ) -> list[str]:
@@ -263,7 +284,10 @@ def write_outcome(
     with ExitStack() as stack:
         places = {name: stack.enter_context(whole_file(folder / name)) for name in contents}
         for name, content in contents.items():
-            places[name].write_bytes(content)
+            with open(places[name], "wb") as stream:
+                stream.write(content)
+                stream.flush()
+                os.fsync(stream.fileno())  # some systems find only here that there is no room
     return list(contents)
 
 

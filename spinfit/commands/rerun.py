@@ -7,9 +7,9 @@ from contextlib import suppress
 from pathlib import Path
 from typing import Any
 
-from spinfit.commands.fit import ready_folder, shown_progress, write_outcome
+from spinfit.commands.fit import kept, ready_folder, shown_progress
 from spinfit.commands.screen import Screen
-from spinfit.errors import InputError
+from spinfit.errors import InputError, on_one_line
 
 NAME = "rerun"
 SUMMARY = "repeat a fit from its archive alone and say whether the numbers agree"
@@ -42,17 +42,19 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
     try:
         with shown_progress(screen, points) as progress:
             outcome = fit(job, progress=progress)
-        written = [] if folder is None else write_outcome(folder, job, outcome)
+        written, trouble = kept(folder, job, outcome)
+        found = compare_outcomes(archive.outcome, outcome)
+        screen.emit(_record(args, archive, found))
+        screen.say(_text(archive, found))
+        if trouble is not None:
+            raise trouble
     except BaseException:
         if is_new and folder is not None:
             with suppress(OSError):
                 folder.rmdir()
         raise
-    found = compare_outcomes(archive.outcome, outcome)
-    screen.emit(_record(args, archive, found))
-    screen.say(_text(archive, found))
     if folder is not None:
-        screen.say(f"\nwritten to {folder}: {', '.join(written)}")
+        screen.say(f"\nwritten to {on_one_line(str(folder))}: {', '.join(written)}")
     return 0 if found.agrees else 1
 
 

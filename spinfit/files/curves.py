@@ -11,7 +11,8 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from spinfit.errors import InputError
-from spinfit.files.atomic import whole_file, write_text
+from spinfit.files.atomic import write_text
+from spinfit.files.hdf5_writing import whole_hdf5
 
 SUFFIXES = (".csv", ".jdx", ".h5")
 _UNITS = {"frequency": "MHz", "temperature": "K", "modulation": "mT", "angle": "rad"}
@@ -95,9 +96,11 @@ def write_nxdata(group: h5py.Group, field: ArrayLike, signals: Mapping[str, Arra
         group.create_dataset(name, data=np.asarray(values, dtype=float), track_times=False)
 
 
-def _write_hdf5(path: Path, field: NDArray, signal: NDArray, names: tuple[str, str], header: Mapping[str, Any]) -> None:
+def _write_hdf5(
+    path: str | Path, field: NDArray, signal: NDArray, names: tuple[str, str], header: Mapping[str, Any]
+) -> None:
     """Write one NXentry with one NXdata, and the conditions beside it."""
-    with h5py.File(path, "w") as root:
+    with whole_hdf5(path) as (root, _):
         root.attrs["default"] = "spectrum"
         entry = root.create_group("spectrum")
         entry.attrs["NX_class"] = "NXentry"
@@ -146,7 +149,6 @@ def write_spectrum(
     elif suffix == ".jdx":
         write_text(path, jcamp_text(x, y, names or ("field", "signal"), header))
     elif suffix == ".h5":
-        with whole_file(path) as beside:
-            _write_hdf5(beside, x, y, names or ("field", "signal"), header)
+        _write_hdf5(path, x, y, names or ("field", "signal"), header)
     else:
         raise InputError(f'"{suffix}" is not a format to write', "end the name in " + ", ".join(SUFFIXES), file=path)

@@ -17,11 +17,10 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-import h5py
 import numpy as np
 
 from spinfit.errors import InputError
-from spinfit.files.atomic import whole_file
+from spinfit.files.hdf5_writing import whole_hdf5
 from spinfit.files.raw import quote
 from spinfit.files.tree import Attribute, Data, Group, is_intact, sealed, write_tree
 from spinfit.report.archive import FORMAT, FORMAT_VERSION, KIND, as_entry, collection, nxdata
@@ -224,7 +223,7 @@ def build_batch_archive(folder: Path) -> tuple[Path, dict[str, str]]:
     path = folder / ARCHIVE
     fits: dict[str, None] = {}
     skipped: dict[str, str] = {}
-    with whole_file(path) as beside, h5py.File(beside, "w") as root:
+    with whole_hdf5(path) as (root, check):
         for name, status in _names(folder, rows):
             single = folder / name / SINGLE
             if not _is_plain(name) or name in fits:
@@ -241,6 +240,7 @@ def build_batch_archive(folder: Path) -> tuple[Path, dict[str, str]]:
                 skipped[name] = " ".join(part for part in (error.place, error.found) if part)
                 continue
             write_tree(root.create_group(name), sealed(as_entry(tree)))
+            check()
             fits[name] = None
         if not fits:
             raise InputError("holds no fit that could be kept", "run spinfit batch --out here first", file=folder)
