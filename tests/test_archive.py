@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import io
 import json
+import time
 from dataclasses import fields, replace
 from pathlib import Path
 
@@ -462,3 +463,34 @@ def test_trees_come_back_from_a_file():
     found = tree_from(*guard.ask("tree", file="f.h5", content=buffer.getvalue()))
     assert is_intact(found)
     assert digest_of(found) == digest_of(tree)
+
+
+def test_an_array_in_several_places_is_stored_once():
+    long, short = np.arange(500.0), np.arange(5.0)
+    tree = Group(
+        {
+            "a": Group({"x": Data(long), "y": Data(short)}),
+            "b": Group({"x": Data(long.copy()), "y": Data(short.copy())}),
+            "c": Group({"x": Data(long, {"units": "mT"}), "\u00fc": Data(long.astype("f4"))}),
+            "d": Group({"x": Data(long.reshape(2, 250)), "y": Data(long > 3)}),
+        }
+    )
+    buffer = io.BytesIO()
+    with h5py.File(buffer, "w") as root:
+        write_tree(root, tree)
+        assert root["a/x"] == root["b/x"]
+        assert root["a/y"] != root["b/y"]
+        assert len({root[name].id for name in ("a/x", "c/x", "c/\u00fc", "d/x", "d/y")}) == 5
+    found = tree_from(*guard.ask("tree", file="f.h5", content=buffer.getvalue()))
+    assert digest_of(found) == digest_of(tree)
+
+
+@pytest.mark.parametrize("points", [801, 40_000])  # the longer ones are packed
+def test_what_is_written_does_not_depend_on_the_hour(points):
+    found, given_job = outcome(curves(points=points)), job("kiln_07")
+    first = archive_bytes(found, given_job)
+    time.sleep(1.1)  # HDF5 counts times in seconds
+    assert archive_bytes(found, given_job) == first
+    with h5py.File(io.BytesIO(first)) as root:
+        np.testing.assert_array_equal(root["kiln_07/fit/measured"], found.curves[0].measured)
+        assert (root["kiln_07/fit/measured"].compression == "gzip") == (points == 40_000)

@@ -266,7 +266,7 @@ def test_ctrl_c_keeps_the_rows(here, monkeypatch):
         if len([one for one in seen if one]) == 2:
             raise KeyboardInterrupt
 
-    report = run(plan(5), listener=listener)
+    report = run(plan(5), listener=listener, in_flight=4)
     assert report.stopped
     assert not report.good
     assert report.counts["not run"] <= 3

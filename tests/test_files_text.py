@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import io
 import os
+import re
 
 import numpy as np
 import pytest
@@ -255,3 +256,14 @@ def test_any_bytes_give_a_trace_or_an_input_error(scratch, content, suffix):
         assert len(raw.columns) >= 1
         assert np.isfinite(raw.columns).all()
     assert len(message.splitlines()) <= 1
+
+
+@settings(derandomize=True, deadline=None, max_examples=400)
+@given(st.text("12.-+eE,; \t#%x", max_size=12))
+def test_a_line_of_plain_numbers_is_seen_at_once(line):
+    """The short way of telling a line of numbers against the long one."""
+    quick = text_module._looks_numeric(text_module._without_comment(line)), text_module._without_comment(line)
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setattr(text_module, "_ROW", re.compile("(?!)"))
+        slow = text_module._looks_numeric(text_module._without_comment(line)), text_module._without_comment(line)
+    assert quick == slow

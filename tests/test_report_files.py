@@ -79,3 +79,12 @@ def test_curves_of_one_and_of_several_traces():
     assert several[1][0] == "a"
     assert several[-1][0] == "b"
     assert several[-1][-1] == ""  # this trace has no such species
+
+
+def test_each_number_of_a_curve_has_nine_digits():
+    """Python's own formatting of one number at a time, over more lines than are written at once."""
+    one = curves("50%", points=2345)
+    lines = curves_text(outcome(one, curves("b"))).splitlines()
+    columns = [one.field, one.measured, one.fitted, one.residual, *one.parts.values()]
+    wanted = ["50%," + ",".join(format(value, ".9g") for value in row) for row in np.column_stack(columns).tolist()]
+    assert lines[1:2346] == wanted

@@ -5,6 +5,7 @@ What fits, draws and writes (`spinfit.batch.work`) is loaded in the workers alon
 
 from __future__ import annotations
 
+import errno
 import importlib
 from collections.abc import Mapping
 from typing import Any
@@ -18,6 +19,9 @@ READING = 120.0
 
 GOOD, POOR, LATE, FAILED, WAITING = "good", "not converged", "time limit", "failed", "not run"
 """What can have become of a trace."""
+
+NO_ROOM = (errno.ENOSPC, errno.EDQUOT, errno.EROFS, errno.EFBIG)
+"""What the system says where nothing more can be written."""
 
 
 class NoRoom(Exception):
@@ -43,6 +47,16 @@ def failed(name: str, free: Mapping[str, str], digest: str, kind: str, reason: s
         "reason": _writable(reason)[:500],
         "free": dict(free),
     }
+
+
+def said(error: OSError) -> str:
+    """Return why something could not be written."""
+    return error.strerror or str(error)
+
+
+def unwritten(name: str, free: Mapping[str, str], digest: str, error: OSError) -> dict[str, Any]:
+    """Return the record of a fit whose files could not be written."""
+    return failed(name, free, digest, "write", f"cannot be written ({said(error)})")
 
 
 def _writable(text: str) -> str:

@@ -11,18 +11,33 @@ import time
 from collections.abc import Callable, Iterator, Mapping
 from concurrent.futures import FIRST_COMPLETED, BrokenExecutor, CancelledError, Executor, Future, wait
 from contextlib import suppress
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
+from functools import partial
 from pathlib import Path
 from typing import Any
 
 from spinfit.batch.journal import Journal, Record
 from spinfit.batch.lock import locked
-from spinfit.batch.records import FAILED, GOOD, LATE, POOR, WORK, NoRoom, call, failed, grace, late
+from spinfit.batch.records import (
+    FAILED,
+    GOOD,
+    LATE,
+    NO_ROOM,
+    POOR,
+    WORK,
+    NoRoom,
+    call,
+    failed,
+    grace,
+    late,
+    said,
+    unwritten,
+)
 from spinfit.batch.table import SUMMARY, write_summary
 from spinfit.batch.tasks import RESERVED, Order, Plan, Task, file_hash
 from spinfit.batch.workers import NoWorkers, Overrun, WorkerDied, Workers, process_pool
 from spinfit.errors import InputError
-from spinfit.files.folders import clear_unfinished, sync_folder
+from spinfit.files.folders import clear_unfinished, disk_waiters, force_folders, sync_folder
 
 MOST_DEATHS = 3
 """Processes that may die at one fit before it counts as failed."""
@@ -124,7 +139,8 @@ def run_batch(
         Where the fits run; one process a core by default.  An executor that is given is not shut down.  A function
         is called again when its executor breaks; a given executor that breaks ends the batch.
     in_flight : int, optional
-        Fits handed out at a time; twice the executor's workers by default.
+        Fits handed out at a time; four times the executor's workers by default, so that these are busy while the disk
+        is waited for.
     time_limit : float, optional
         Seconds for each fit, which then keeps its best values so far.
     pictures : bool
@@ -242,6 +258,7 @@ class _Batch:
         self.alone: list[Order] = []
         self.tried_alone: set[str] = set()
         self.stopped = ""
+        self.waiters = disk_waiters()
 
     def run(self, supply: _Supply, in_flight: int | None) -> None:
         """Hand out, take in, until there is nothing left."""
@@ -256,10 +273,12 @@ class _Batch:
             if not isinstance(error, KeyboardInterrupt):
                 raise
             self.stopped = "stopped before its end"
+        finally:
+            self.waiters.shutdown(wait=False)
 
     def _work(self, orders: Iterator[Order], supply: _Supply, in_flight: int | None) -> None:
         while True:
-            while not self.pending or len(self.pending) < (in_flight or 2 * supply.size()):
+            while not self.pending or len(self.pending) < (in_flight or 4 * supply.size()):
                 order = self.again.pop() if self.again else next(orders, None)
                 if order is None:
                     break
@@ -283,7 +302,10 @@ class _Batch:
 
     def _hand_out(self, order: Order, supply: _Supply) -> None:
         try:
-            future = supply.get().submit(call, order)
+            executor = supply.get()
+            if getattr(executor, "is_local", False):  # then its files can be forced to the disk from here
+                order = replace(order, force=False)
+            future = executor.submit(call, order)
         except (BrokenExecutor, RuntimeError) as error:  # broken, or shut down by someone else
             self.again.append(order)
             if not isinstance(error, BrokenExecutor) or not supply.broken():
@@ -328,12 +350,15 @@ class _Batch:
     def _take_in(self, futures: Any) -> bool:
         """Put down what came back; return whether the executor broke."""
         records: list[Record] = []
+        loose: list[Path] = []
         broken = False
         no_room = ""
-        for future in [one for one in self.pending if one in futures]:  # in the order of handing out
-            order = self.pending.pop(future)
+        taken = [one for one in self.pending if one in futures]  # in the order of handing out
+        for future in taken:
+            order = self.pending[future]
             try:
                 records.append(future.result())
+                loose += [] if order.force else [self.folder / order.name]
             except NoRoom as error:
                 no_room = str(error)
             except Overrun as error:
@@ -348,8 +373,12 @@ class _Batch:
             except Exception as error:  # what an executor makes of a process that died at a call, among others
                 reason = f"the executor gave it up: {type(error).__name__}: {error}"
                 records.append(failed(order.name, order.free, order.hash, "death", reason) | {"seconds": 0.0})
-        self.progress.running = len(self.pending)
-        self._put_down(records)
+        self.progress.running = len(self.pending) - len(taken)
+        wrong = {path.name: error for path, error in force_folders(loose, self.waiters).items()}
+        no_room = next((said(error) for error in wrong.values() if error.errno in NO_ROOM), no_room)
+        self._put_down([one for one in map(partial(_on_disk, wrong), records) if one is not None])
+        for future in taken:  # not before: what Ctrl-C interrupts here is taken in once more
+            del self.pending[future]
         if no_room:
             raise self._stop(f"{self.folder} cannot be written to ({no_room})")
         return broken
@@ -391,7 +420,17 @@ class _Batch:
         try:
             self.journal.append(records)
         except OSError as error:
-            raise self._stop(f"{self.journal.path} cannot be written to ({error.strerror or error})") from None
+            raise self._stop(f"{self.journal.path} cannot be written to ({said(error)})") from None
+
+
+def _on_disk(wrong: Mapping[str, OSError], record: Record) -> Record | None:
+    """Return the record of a fit whose files were to be forced to the disk; None when there was no room for them."""
+    error = wrong.get(record["trace"])
+    if error is None:
+        return record
+    if error.errno in NO_ROOM:
+        return None
+    return unwritten(record["trace"], record["free"], record["hash"], error) | {"seconds": record["seconds"]}
 
 
 def _has_result(future: Future[Any]) -> bool:

@@ -77,6 +77,8 @@ class Order:
         Seconds.
     version : str
         Of spinfit, which the worker has to have too.
+    force : bool
+        Whether the worker waits until its files are on the disk; without it whoever takes the record in does.
     """
 
     name: str
@@ -91,6 +93,7 @@ class Order:
     pictures: bool = True
     time_limit: float | None = None
     version: str = __version__
+    force: bool = True
 
 
 class Plan:

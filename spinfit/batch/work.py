@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import errno
 import math
 import os
 import threading
@@ -15,7 +14,7 @@ from typing import Any
 
 from spinfit import __version__
 from spinfit.batch.child import allow, note, stop_after
-from spinfit.batch.records import GOOD, LATE, POOR, READING, NoRoom, failed, grace, late
+from spinfit.batch.records import GOOD, LATE, NO_ROOM, POOR, READING, NoRoom, failed, grace, late, said, unwritten
 from spinfit.batch.tasks import Order
 from spinfit.errors import InputError
 from spinfit.files.folders import remove_files, write_folder
@@ -34,7 +33,6 @@ JOB = "job.toml"
 OWN = (*NUMBERS, *DRAWN, JOB)
 """Every file that a fit may leave in its folder."""
 
-_NO_ROOM = (errno.ENOSPC, errno.EDQUOT, errno.EROFS, errno.EFBIG)
 # matplotlib and h5py are not made for several threads at once; fits on a cluster may share a process.
 _drawing = threading.Lock()
 
@@ -132,11 +130,11 @@ def _done(order: Order) -> dict[str, Any]:
         return lost("fault", f"a fault of spinfit: {type(error).__name__}: {error}")
     try:
         folder = Path(order.out) / order.name
-        write_folder(folder, contents | {JOB: order.copy.encode("utf-8")}, stale=OWN)
+        write_folder(folder, contents | {JOB: order.copy.encode("utf-8")}, stale=OWN, force=order.force)
     except OSError as error:
-        if error.errno in _NO_ROOM:
-            raise NoRoom(error.strerror or str(error)) from None
-        return failed(order.name, order.free, order.hash, "write", f"cannot be written ({error.strerror or error})")
+        if error.errno in NO_ROOM:
+            raise NoRoom(said(error)) from None
+        return unwritten(order.name, order.free, order.hash, error)
     return _record(order, job, outcome)
 
 

@@ -107,6 +107,9 @@ class Workers(Executor):
         After which a process leaves and another takes its place: what libraries do not give back, the system does.
     """
 
+    is_local = True
+    """What its processes write is there for the process that started them, before it is on the disk too."""
+
     def __init__(self, count: int, *, preload: Sequence[str] = (), most_calls: int = 500) -> None:
         if count < 1:
             raise ValueError(f"{count} workers")

@@ -5,14 +5,15 @@ from __future__ import annotations
 import os
 import shutil
 import tempfile
-from collections.abc import Collection, Mapping
-from concurrent.futures import ThreadPoolExecutor
+from collections.abc import Collection, Mapping, Sequence
+from concurrent.futures import Executor, Future, ThreadPoolExecutor
 from contextlib import suppress
 from pathlib import Path
-from typing import BinaryIO
 
 BESIDE = ".spinfit-"
 """How the names of unfinished folders begin."""
+# Threads that wait for the disk.
+_MOST_WAITING = 32
 
 
 def sync_folder(folder: Path) -> None:
@@ -25,27 +26,47 @@ def sync_folder(folder: Path) -> None:
             os.close(number)
 
 
-def _write(folder: Path, contents: Mapping[str, bytes]) -> None:
-    """Write files and wait until they and their names are on the disk.
+def disk_waiters() -> ThreadPoolExecutor:
+    """Return threads for `force_folders`, which start when they are needed."""
+    return ThreadPoolExecutor(_MOST_WAITING, "spinfit disk")
+
+
+def force_folders(folders: Sequence[Path], pool: Executor) -> dict[Path, OSError]:
+    """Wait until all files of folders, and their names, are on the disk.
 
     One thread a file waits: the system then writes them out together, which takes little more than a single one.
+
+    Returns
+    -------
+    dict of folder -> OSError
+        What went wrong; a folder that is no longer there is no fault.
     """
-    streams: list[BinaryIO] = []
-    try:
-        for name, content in contents.items():
-            streams.append(open(folder / name, "wb"))
-            streams[-1].write(content)
-            streams[-1].flush()
-        with ThreadPoolExecutor(len(streams) + 1) as pool:
-            names = pool.submit(sync_folder, folder)
-            list(pool.map(lambda stream: os.fsync(stream.fileno()), streams))
-            names.result()
-    finally:
-        for stream in streams:
-            stream.close()
+    wrong: dict[Path, OSError] = {}
+    waits: list[tuple[Path, Future[None]]] = []
+    for folder in folders:
+        with suppress(FileNotFoundError, NotADirectoryError):
+            waits += [(folder, pool.submit(_force, path)) for path in folder.iterdir()]
+        waits.append((folder, pool.submit(sync_folder, folder)))
+    for folder, wait in waits:
+        try:
+            wait.result()
+        except OSError as error:
+            wrong[folder] = error
+    return wrong
 
 
-def write_folder(folder: Path, contents: Mapping[str, bytes], *, stale: Collection[str] = ()) -> None:
+def _force(path: Path) -> None:
+    with suppress(FileNotFoundError, IsADirectoryError):
+        number = os.open(path, os.O_RDWR)
+        try:
+            os.fsync(number)
+        finally:
+            os.close(number)
+
+
+def write_folder(
+    folder: Path, contents: Mapping[str, bytes], *, stale: Collection[str] = (), force: bool = True
+) -> None:
     """Write files into a folder, and wait until they are on the disk.
 
     That the folder itself has its name is on the disk once the one that it stands in is (`sync_folder`).  A folder that
@@ -57,6 +78,8 @@ def write_folder(folder: Path, contents: Mapping[str, bytes], *, stale: Collecti
     contents : mapping of file name -> bytes
     stale : collection of str
         Files that are removed unless they are among `contents`.
+    force : bool
+        Whether to wait for the disk; without it a new folder is left to `force_folders`.
 
     Raises
     ------
@@ -65,11 +88,17 @@ def write_folder(folder: Path, contents: Mapping[str, bytes], *, stale: Collecti
     """
     beside = Path(tempfile.mkdtemp(prefix=BESIDE, dir=folder.parent))
     try:
-        _write(beside, contents)
+        for name, content in contents.items():
+            (beside / name).write_bytes(content)
+        is_new = not folder.exists()
+        if force or not is_new:  # before they take the place of others
+            with disk_waiters() as pool:
+                for error in force_folders([beside], pool).values():
+                    raise error
         mask = os.umask(0)
         os.umask(mask)
         os.chmod(beside, 0o777 & ~mask)
-        if not folder.exists():
+        if is_new:
             os.rename(beside, folder)
         else:
             for name in contents:

@@ -137,9 +137,9 @@ def find_spikes(signal: Floats) -> Bools:
     floor = max(noise_level(signal), _quantum(signal))
     for m, least, ratio in ((1, _SPIKE, _SPIKE_RATIO), (2, _PAIR, _PAIR_RATIO)):
         window = sliding_window_view(signal, 6 + m)
-        around = np.concatenate([window[:, :3], window[:, 3 + m :]], axis=1)
-        off = window[:, 3 : 3 + m] - np.median(around, axis=1)[:, None]
-        limit = np.maximum(least * floor, ratio * np.ptp(around, axis=1))
+        around = np.sort(np.concatenate([window[:, :3], window[:, 3 + m :]], axis=1), axis=1)
+        off = window[:, 3 : 3 + m] - 0.5 * (around[:, 2] + around[:, 3])[:, None]  # from their median
+        limit = np.maximum(least * floor, ratio * (around[:, -1] - around[:, 0]))
         found = (np.abs(off).min(axis=1) > limit) & (np.abs(off.sum(axis=1)) >= np.abs(off).max(axis=1))
         for k in range(m):
             bad[3 + k : 3 + k + len(found)] |= found

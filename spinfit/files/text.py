@@ -23,6 +23,8 @@ from spinfit.files.raw import MAX_POINTS, Note, RawTrace, decode, quote
 _COMMENT = ("#", ";", "%")
 # Possessive: a long row of digits before something else would be split in every way.
 _NUMBER = re.compile(r"[+-]?(?:\d++(?:\.\d*+)?|\.\d++)(?:[eEdD][+-]?\d++)?", re.ASCII)
+# A line of nothing but such numbers and what may stand between them, as most lines are.
+_ROW = re.compile(rf"{_NUMBER.pattern}(?:[;,\t ]++{_NUMBER.pattern})*+", re.ASCII)
 _NOT_FINITE = re.compile(r"[+-]?(?:nan|inf|infinity)", re.IGNORECASE)
 _UNCLEAN = re.compile(r"[^0-9eE+\-.,; \t\n]")
 _MINUS = str.maketrans({"\u2212": "-", "\u00a0": " "})
@@ -55,6 +57,8 @@ class Dialect:
 def _without_comment(line: str) -> str:
     """Return what stands before a comment; a semicolon only begins one at the start of the line."""
     line = line.strip(" \n\r")
+    if _ROW.fullmatch(line):
+        return line
     if line.lstrip().startswith(_COMMENT):
         return ""
     return re.split(r"[#%]", line, maxsplit=1)[0].rstrip(" ")
@@ -62,6 +66,8 @@ def _without_comment(line: str) -> str:
 
 def _looks_numeric(line: str) -> bool:
     """Whether a line is made of numbers in some dialect."""
+    if _ROW.fullmatch(line):
+        return True
     tokens = [token.strip("\"'") for token in re.split(r"[;\t ]+", line.strip())]
     tokens = [part for token in tokens for part in token.split(",") if part]
     return bool(tokens) and all(_NUMBER.fullmatch(t) or _NOT_FINITE.fullmatch(t) for t in tokens)
@@ -77,10 +83,10 @@ def _dialect(sample: list[str]) -> Dialect:
         return Dialect(";", "," if "," in text else ".")
     if "," not in text:
         return Dialect("", ".")
+    if "." in text or re.search(r",\s|\s,", text):
+        return Dialect(",", ".")
     spaced = all(re.search(r"[^,\s]\s+[^,\s]", line) for line in text.split("\n"))
-    if "." not in text and spaced and not re.search(r",\s|\s,", text):
-        return Dialect("", ",")
-    return Dialect(",", ".")
+    return Dialect("", ",") if spaced else Dialect(",", ".")
 
 
 @dataclass

@@ -19,7 +19,6 @@ Nothing in it depends on when or where it was written, and a digest over the who
 from __future__ import annotations
 
 import hashlib
-import io
 from collections.abc import Mapping
 from dataclasses import replace
 from typing import Any
@@ -33,6 +32,9 @@ from spinfit.files.tree import Attribute, Data, Group, sealed, write_tree
 from spinfit.fitting.data import Job, Lines, Trace
 from spinfit.fitting.outcome import Curves, Outcome, PositionTable, Value
 from spinfit.report.outcome_json import QUALITY_KEYS, outcome_text
+
+# Bytes by which the file grows in memory while it is written.
+_BLOCK = 2**17
 
 FORMAT_VERSION = 2
 """Of the layout; readers accept this and every older one.  1 held no input files and no digest."""
@@ -203,7 +205,9 @@ def _input(files: Mapping[str, bytes]) -> Group:
     )
 
 
-def archive_tree(outcome: Outcome, job: Job | None = None, more: Mapping[str, Any] | None = None) -> Group:
+def archive_tree(
+    outcome: Outcome, job: Job | None = None, more: Mapping[str, Any] | None = None, *, record: str = ""
+) -> Group:
     """Return everything on a fit as one tree.
 
     Parameters
@@ -213,6 +217,8 @@ def archive_tree(outcome: Outcome, job: Job | None = None, more: Mapping[str, An
         What was fitted: its files and conditions are kept, without which the fit cannot be repeated.
     more : mapping, optional
         What else stands in outcome.json (profiles, bootstrap).
+    record : str, optional
+        The text of outcome.json where it is there already.
     """
     traces = {one.name: one for one in job.traces} if job else {}
     lines = {one.name: one for one in job.lines} if job else {}
@@ -227,7 +233,7 @@ def archive_tree(outcome: Outcome, job: Job | None = None, more: Mapping[str, An
         "traces": Data([one.trace for one in outcome.curves]),
         "lines": Data([one.name for one in outcome.positions]),
         "fit": _process(outcome),
-        "outcome_json": note(outcome_text(outcome, more), "application/json", file_name="outcome.json"),
+        "outcome_json": note(record or outcome_text(outcome, more), "application/json", file_name="outcome.json"),
         "job": note(text, "application/toml", file_name=f"{outcome.name}.toml"),
         "input": _input(job.files if job else {}),
     }
@@ -248,9 +254,11 @@ def as_entry(root: Group) -> Group:
     return Group(members, {**root.attrs, "NX_class": "NXentry"})
 
 
-def archive_bytes(outcome: Outcome, job: Job | None = None, more: Mapping[str, Any] | None = None) -> bytes:
+def archive_bytes(
+    outcome: Outcome, job: Job | None = None, more: Mapping[str, Any] | None = None, *, record: str = ""
+) -> bytes:
     """Return the bytes of `outcome.h5`; the same outcome gives the same bytes (see `archive_tree`)."""
-    buffer = io.BytesIO()
-    with h5py.File(buffer, "w") as root:
-        write_tree(root, sealed(archive_tree(outcome, job, more)))
-    return buffer.getvalue()
+    with h5py.File("outcome.h5", "w", driver="core", backing_store=False, block_size=_BLOCK) as root:  # in memory
+        write_tree(root, sealed(archive_tree(outcome, job, more, record=record)))
+        root.flush()
+        return bytes(root.id.get_file_image())

@@ -60,8 +60,9 @@ def outcome_files(
     """
     curves = positions_text(outcome) if outcome.positions else curves_text(outcome)
     more = more_record(profiles, resampled, posterior)
+    record = outcome_text(outcome, more)
     contents = {
-        "outcome.json": outcome_text(outcome, more).encode(),
+        "outcome.json": record.encode(),
         "curves.csv": curves.encode(),
     }
     if pictures:
@@ -69,4 +70,4 @@ def outcome_files(
         report = report_text(outcome, job=job, profiles=profiles, resampled=resampled, posterior=posterior)
         contents |= {"fit.png": picture_bytes(figure), "fit.svg": picture_bytes(figure, "svg")}
         contents["report.html"] = report.encode()
-    return contents | {"outcome.h5": archive_bytes(outcome, job, more)}
+    return contents | {"outcome.h5": archive_bytes(outcome, job, more, record=record)}
