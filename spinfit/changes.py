@@ -17,9 +17,10 @@ from spinfit.branches import FWHM_PER_SIGMA, KnotData
 from spinfit.crossings import Crossings
 from spinfit.exact import Lines
 from spinfit.hamiltonian import System
+from spinfit.landscape import Landscape
 from spinfit.levels import occupation, solve, zero_field_state
 from spinfit.lineshape import FieldGrid
-from spinfit.loop_sums import Landscape, add_looping, field_step
+from spinfit.loop_sums import add_looping, field_step
 from spinfit.loops import Summed, nodes_of
 from spinfit.moves import Move, Moved, Places, symmetrised
 from spinfit.nodes import FLAT
@@ -114,7 +115,7 @@ def _loop_changes(
 
     def transform(land: Landscape) -> NDArray[np.complex128]:
         histograms = Histograms(average.histograms.grid, request.scale)
-        add_looping(histograms, land, request, step)
+        add_looping(histograms, [land], request, step)
         return histograms.transform()
 
     start = on_mesh(crossings.like(before), rings)

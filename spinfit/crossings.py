@@ -10,8 +10,9 @@ A level that nearly crosses one neighbour here and the other there is taken from
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 from numpy.typing import NDArray
@@ -21,7 +22,7 @@ from spinfit.resonance import can_reach
 
 Array = NDArray[np.float64]
 Index = NDArray[np.intp]
-Continue = Callable[[Array], Array]
+Continue = Callable[..., Array]
 """From values at the knots, shape (q, n), to values elsewhere, shape (q, ...)."""
 
 GAIN = 0.7
@@ -30,26 +31,24 @@ NEAR = 500.0
 """MHz from resonance within which a pair's errors count most."""
 BLEND = 4
 """Power of the distance by which the closer of two near crossings prevails."""
+WASTE = 1.25
+"""How many rows of a mesh, for each that is needed, nodes that are continued together may take."""
 
 
 @dataclass(frozen=True, eq=False)
-class _Near:
-    """Two neighbouring levels, continued: arrays of shape (nodes, ...).
+class Window:
+    """The part of a mesh that each node needs.
 
-    `half` is half their distance, `mean` their mean, `turn` half the difference of their slopes;
-    `at` has the position of each of the nodes asked about, -1 for none.
+    Attributes
+    ----------
+    shape : (int, int)
+        Of the mesh: rows, azimuths.
+    rows : ndarray of int, shape (nodes, 2)
+        First row, and that after the last.
     """
 
-    at: Index
-    half: Array
-    mean: Array
-    slope: Array
-    turn: Array
-
-    @property
-    def arrays(self) -> tuple[Array, Array, Array, Array]:
-        """All but the positions."""
-        return self.half, self.mean, self.slope, self.turn
+    shape: tuple[int, int]
+    rows: Index
 
 
 class Crossings:
@@ -137,7 +136,7 @@ class Crossings:
             self._uses[row] = np.stack([(best == 1) | (best == 3), (best == 2) | (best == 3)])
         return self._uses[row]
 
-    def continued(self, row: int, part: slice, to: Continue) -> Array:
+    def continued(self, row: int, part: slice, to: Continue, window: Window | None = None) -> Array:
         """Return gap, slope, strength and variance, if any, of one pair, continued, shape (3 or 4, nodes, ...).
 
         Parameters
@@ -147,133 +146,154 @@ class Crossings:
         part : slice
             Of the nodes.
         to : callable
-            From values at the knots to values elsewhere.
+            From values at the knots to values elsewhere, and with a window's rows to these rows alone.
+        window : Window, optional
+            Outside it there are zeros.
         """
-        data = self.data
-        columns = (data.gap, data.slope, data.strength, *(() if data.variance is None else (data.variance,)))
-        own = np.stack([one[row, part] for one in columns])
-        out = to(own.reshape(-1, own.shape[2]))
-        out = out.reshape(len(own), -1, *out.shape[1:])
-        if self.ladder is None:
-            return out
-        pair = [data.pairs[0][row], data.pairs[1][row]]
-        where = np.arange(len(data.fields))[part]
-        where = where[self.uses(row)[:, where].any(axis=(0, 2))]
-        if not len(where):
-            return out
-        energy = self.ladder.energy[where[0]]
-        frequency = energy[pair[1], 0] - energy[pair[0], 0] - data.gap[row, where[0], 0]
-        # nodes that are alike together: whole arrays in place of many picked from them
-        kind = (self.uses(row)[:, where].transpose(1, 0, 2).reshape(-1, 4) << np.arange(4)).sum(axis=1)
-        kind = kind + 16 * self._strength_bends(row)[where]
-        for one in np.unique(kind):
-            alike = where[kind == one]
-            nodes = alike - (part.start or 0)
-            near = self._beside(row, alike, to)
-            low, high = (self._level(row, number, alike, near, to) for number in (0, 1))
-            out[0, nodes] = high[0] - low[0] - frequency
-            out[1, nodes] = high[1] - low[1]
-            if one >= 16:
-                out[2, nodes] = self._strength(row, alike, near, to, out[2, nodes])
+        where = np.arange(len(self.data.fields))[part]
+        out = None
+        for nodes, kind in self._alike(row, where, window):
+            if window is None:
+                here, at = to, slice(None)
+            else:
+                at = slice(int(window.rows[nodes, 0].min()), int(window.rows[nodes, 1].max()))
+                here = partial(to, rows=at)
+            got = self._group(row, where[nodes], kind, here)
+            if out is None:
+                shape = got[0].shape[1:] if window is None else window.shape
+                out = np.zeros((len(got), len(where), *shape))
+            for column, values in zip(out, got, strict=True):
+                column[nodes, at] = values
         return out
 
-    def _beside(self, row: int, where: Index, to: Continue) -> dict[int, _Near]:
-        """Continue the two levels of each near crossing of a pair's, by the lower of the two."""
-        near: dict[int, _Near] = {}
-        pair, uses = [self.data.pairs[0][row], self.data.pairs[1][row]], self.uses(row)[:, where]
-        for lower in sorted({level - side for level in pair for side in (1, 0)}):
-            some = np.zeros(len(where), dtype=bool)
-            for number, level in enumerate(pair):
-                if level - lower in (0, 1):
-                    some |= uses[1 - (level - lower), :, number]
-            if some.any():
-                near[lower] = self._near(lower, where, some, to)
-        return near
+    def _alike(self, row: int, where: Index, window: Window | None) -> Iterator[tuple[Index, int]]:
+        """Yield positions in `where` of nodes that are continued in one way, and that way; in a window, of like rows.
+
+        The way is the bits of `uses`, and 16 where strengths are made of both, too.
+        """
+        kind = np.zeros(len(where), dtype=np.intp)
+        if self.ladder is not None:
+            kind = (self.uses(row)[:, where].transpose(1, 0, 2).reshape(-1, 4) << np.arange(4)).sum(axis=1)
+            if kind.any():
+                kind = kind + 16 * self._strength_bends(row)[where]
+        for one in np.unique(kind):
+            alike = np.flatnonzero(kind == one)
+            if window is not None:
+                rows = window.rows[alike]
+                alike, rows = alike[rows[:, 1] > rows[:, 0]], rows[rows[:, 1] > rows[:, 0]]
+            first = 0
+            for last in range(1, len(alike) + 1):
+                if last < len(alike) and (window is None or _share_rows(rows[first : last + 1])):
+                    continue
+                yield alike[first:last], int(one)
+                first = last
+
+    def _group(self, row: int, nodes: Index, kind: int, to: Continue) -> list[Array]:
+        """Return gap, slope, strength and variance, if any, at nodes that are all continued in one way."""
+        data = self.data
+        spread = [] if data.variance is None else [data.variance[row, nodes]]
+        if not kind & 15:
+            return to_each(to, [data.gap[row, nodes], data.slope[row, nodes], data.strength[row, nodes], *spread])
+        pair = [data.pairs[0][row], data.pairs[1][row]]
+        used = np.array([[kind >> (2 * side + number) & 1 for number in (0, 1)] for side in (0, 1)], dtype=bool)
+        lowers = sorted({pair[number] - 1 + side for side, number in zip(*np.nonzero(used), strict=True)})
+        alone = [number for number in (0, 1) if not used[:, number].any()]
+        mixed = []
+        if kind & 16:
+            sides = ((number, number // 2, number % 2) for number in range(4))
+            # not the pair's own two levels
+            mixed = [
+                (number, pair[which] - 1 + side)
+                for number, which, side in sides
+                if used[side, which] and not (pair[which] - 1 + side == pair[0] and pair[1] == pair[0] + 1)
+            ]
+        columns, energy, slope = [*spread], self.ladder.energy[nodes], self.ladder.slope[nodes]
+        if len(mixed) == 0:
+            columns.append(data.strength[row, nodes])
+        most = {}
+        for lower in lowers:
+            half, turn = (0.5 * (v[:, lower + 1] - v[:, lower]) for v in (energy, slope))
+            mean, along = (0.5 * (v[:, lower + 1] + v[:, lower]) for v in (energy, slope))
+            columns += [mean, half**2, along, half * turn]
+            most[lower] = np.abs(turn).max(axis=1)
+        for number in alone:
+            columns += [energy[:, pair[number]], slope[:, pair[number]]]
+        bounds = []
+        for number, lower in mixed:
+            mine, other = data.strength[row, nodes], self.ladder.partner(row, number, nodes)
+            apart = 0.5 * (energy[:, lower + 1] - energy[:, lower])
+            columns += [0.5 * (mine + other), 0.5 * (mine - other) * apart]
+            bounds.append(0.5 * np.abs(mine - other).max(axis=1))
+        got = iter(to_each(to, columns))
+        variance = [next(got) for _ in spread]
+        strength = next(got) if len(mixed) == 0 else None
+        near = {}
+        for lower in lowers:
+            mean, square, along, product = (next(got) for _ in range(4))
+            half = np.sqrt(np.maximum(square, 0.0))
+            near[lower] = half, mean, along, _bounded(product, half, most[lower])
+        level = [(next(got), next(got)) if number in alone else None for number in (0, 1)]
+        for number in (0, 1):
+            if level[number] is None:
+                one = pair[number]
+                sides = [_of_both(near[one - 1 + side], 1 - 2 * side) for side in (0, 1) if used[side, number]]
+                level[number] = sides[0][1:] if len(sides) == 1 else _blended(*sides)
+        if strength is None:
+            total = strength = 0.0
+            for (_, lower), bound in zip(mixed, bounds, strict=True):
+                mean, product = next(got), next(got)
+                half = near[lower][0]
+                value = mean + _bounded(product, half, bound)
+                if len(mixed) == 1:
+                    total, strength = 1.0, value
+                else:
+                    weight = (half + 1e-6) ** -BLEND
+                    total, strength = total + weight, strength + weight * value
+            strength = strength / total
+        frequency = energy[0, pair[1], 0] - energy[0, pair[0], 0] - data.gap[row, nodes[0], 0]
+        return [level[1][0] - level[0][0] - frequency, level[1][1] - level[0][1], strength, *variance]
 
     def _strength_bends(self, row: int) -> NDArray[np.bool_]:
         """Whether the strength of a pair, too, is better made of both, at each node."""
         if row not in self._bent:
-            where = np.flatnonzero(self.uses(row).any(axis=(0, 2)))
-            own, share, to_finer = self.data.strength[row, where], self._closeness(row)[where], self._to_finer
-            plain = to_finer(own)
-            made = self._strength(row, where, self._beside(row, where, to_finer), to_finer, plain)
-            better = (np.abs(made - own) * share).sum(axis=1) < GAIN * (np.abs(plain - own) * share).sum(axis=1)
-            self._bent[row] = np.zeros(len(self.data.fields), dtype=bool)
-            self._bent[row][where[better]] = True
+            self._bent[row] = bent = np.zeros(len(self.data.fields), dtype=bool)
+            kinds = (self.uses(row).transpose(1, 0, 2).reshape(-1, 4) << np.arange(4)).sum(axis=1)
+            for kind in np.unique(kinds[kinds > 0]):
+                where = np.flatnonzero(kinds == kind)
+                own, share = self.data.strength[row, where], self._closeness(row)[where]
+                plain, made = (self._group(row, where, int(kind) + more, self._to_finer)[2] for more in (0, 16))
+                missed = [(np.abs(one - own) * share).sum(axis=1) for one in (plain, made)]
+                bent[where] = missed[1] < GAIN * missed[0]
         return self._bent[row]
 
-    def _near(self, lower: int, where: Index, some: NDArray[np.bool_], to: Continue) -> _Near:
-        """Continue levels `lower` and `lower` + 1 at some of the nodes `where`."""
-        energy, slope = self.ladder.energy[where[some]], self.ladder.slope[where[some]]
-        half, turn = (0.5 * (v[:, lower + 1] - v[:, lower]) for v in (energy, slope))
-        mean, along = (0.5 * (v[:, lower + 1] + v[:, lower]) for v in (energy, slope))
-        got = to(np.concatenate([mean, half**2, along, half * turn]))
-        mean, square, along, product = got.reshape(4, len(half), *got.shape[1:])
-        most = np.abs(turn).max(axis=1).reshape(-1, *[1] * (mean.ndim - 1))
-        half = np.sqrt(np.maximum(square, 0.0))
-        at = np.where(some, np.cumsum(some) - 1, -1)
-        return _Near(at, half, mean, along, np.clip(product / np.maximum(half, 1e-9), -most, most))
 
-    def _level(
-        self, row: int, number: int, where: Index, near: dict[int, _Near], to: Continue
-    ) -> tuple[Array, Array]:
-        """Return energy and slope of a pair's lower (0) or upper (1) level at the nodes `where`."""
-        level, uses = self.data.pairs[number][row], self.uses(row)[:, where, number]
-        alone = ~uses.any(axis=0)
-        energy = slope = None
-        if alone.any():
-            got = to(np.concatenate([self.ladder.energy[where[alone], level], self.ladder.slope[where[alone], level]]))
-            got = got.reshape(2, -1, *got.shape[1:])
-            if alone.all():
-                return got[0], got[1]
-            energy, slope = (np.empty((len(where), *got.shape[2:])) for _ in range(2))
-            energy[alone], slope[alone] = got
-        for chosen in ((True, False), (False, True), (True, True)):
-            some = (uses == np.array(chosen)[:, None]).all(axis=0)
-            if not some.any():
-                continue
-            sides = []
-            for side, sign in ((0, 1), (1, -1)):
-                if chosen[side]:
-                    one = near[level - 1 + side]
-                    half, mean, along, turn = (_picked(v, one.at[some]) for v in one.arrays)
-                    sides.append((half, mean + sign * half, along + sign * turn))
-            if len(sides) == 2:
-                share = _share(sides[0][0], sides[1][0])
-                values = [share * a + (1 - share) * b for a, b in zip(sides[0][1:], sides[1][1:], strict=True)]
-            else:
-                values = sides[0][1:]
-            if some.all():
-                return values[0], values[1]
-            if energy is None:
-                energy, slope = (np.empty((len(where), *values[0].shape[1:])) for _ in range(2))
-            energy[some], slope[some] = values
-        return energy, slope
-
-    def _strength(self, row: int, where: Index, near: dict[int, _Near], to: Continue, plain: Array) -> Array:
-        """Return the strength of a pair at the nodes `where`."""
-        lower, upper = self.data.pairs[0][row], self.data.pairs[1][row]
-        total, out, uses = np.zeros_like(plain), np.zeros_like(plain), self.uses(row)[:, where]
-        for number, (level, side) in enumerate(((lower, 0), (lower, 1), (upper, 0), (upper, 1))):
-            a = level - 1 + side
-            some = uses[side, :, number // 2]
-            if not some.any() or (a == lower and upper == lower + 1):  # the pair's own two levels
-                continue
-            nodes, half = where[some], _picked(near[a].half, near[a].at[some])
-            mine, other = self.data.strength[row, nodes], self.ladder.partner(row, number, nodes)
-            apart = 0.5 * (self.ladder.energy[nodes, a + 1] - self.ladder.energy[nodes, a])
-            got = to(np.concatenate([0.5 * (mine + other), 0.5 * (mine - other) * apart]))
-            mean, product = got.reshape(2, len(nodes), *got.shape[1:])
-            most = 0.5 * np.abs(mine - other).max(axis=1).reshape(-1, *[1] * (mean.ndim - 1))
-            weight = (half + 1e-6) ** -BLEND
-            total[some] += weight
-            out[some] += weight * (mean + np.clip(product / np.maximum(half, 1e-9), -most, most))
-        return np.where(total > 0, out / np.where(total > 0, total, 1.0), plain)
+def to_each(to: Continue, columns: list[Array]) -> list[Array]:
+    """Continue several arrays of one shape (q, n) at once."""
+    got = to(np.concatenate(columns))
+    return list(got.reshape(len(columns), -1, *got.shape[1:]))
 
 
-def _picked(values: Array, at: Index) -> Array:
-    """Return values[at], without a copy where that is all of them."""
-    return values if len(at) == len(values) and np.array_equal(at, np.arange(len(at))) else values[at]
+def _bounded(product: Array, half: Array, most: Array) -> Array:
+    """Return a product over half a distance, no larger in size than `most` of each node."""
+    most = most.reshape(-1, *[1] * (half.ndim - 1))
+    return np.clip(product / np.maximum(half, 1e-9), -most, most)
+
+
+def _of_both(near: tuple[Array, ...], sign: int) -> tuple[Array, Array, Array]:
+    """Return half the distance, energy and slope of the upper (1) or the lower (-1) of two levels."""
+    half, mean, along, turn = near
+    return (half, mean + half, along + turn) if sign > 0 else (half, mean - half, along - turn)
+
+
+def _blended(one: tuple[Array, ...], other: tuple[Array, ...]) -> list[Array]:
+    """Return energy and slope of a level that nearly crosses two, each with half the distance to it first."""
+    share = _share(one[0], other[0])
+    return [share * a + (1 - share) * b for a, b in zip(one[1:], other[1:], strict=True)]
+
+
+def _share_rows(rows: Index) -> bool:
+    """Whether nodes want so much the same rows of a mesh, each shape (2,), that they are continued together."""
+    return len(rows) * int(rows[:, 1].max() - rows[:, 0].min()) <= WASTE * int((rows[:, 1] - rows[:, 0]).sum())
 
 
 def _share(near: Array, far: Array) -> Array:

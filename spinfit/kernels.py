@@ -162,9 +162,10 @@ def compiled(function: Callable) -> Callable:
     if njit is None:
         return function
     try:
-        return njit(cache=True)(function)
+        # without checks for division by zero, which would keep loops from being vectorised
+        return njit(cache=True, error_model="numpy")(function)
     except RuntimeError:  # nowhere to keep the compiled code: compile anew in each process
-        return njit(function)
+        return njit(error_model="numpy")(function)
 
 
 taps_at, slopes_at = compiled(taps), compiled(slopes_of_taps)

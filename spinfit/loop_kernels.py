@@ -1,7 +1,7 @@
-"""The sums of `spinfit.loop_sums`, point by point, for compilation.
+"""The sums of `spinfit.loop_sums` and the meshes of `spinfit.landscape`, point by point, for compilation.
 
-Both do what their twins `spinfit.loop_sums.in_frequency_numpy` and `in_field_numpy` do, to rounding, and
-stand under the same tests.  Arrays over nodes and points have shape (k, points).
+All do what their twins there, named the same and `_numpy`, do, to rounding, and stand under the same
+tests.  Arrays over nodes and points have shape (k, points).
 """
 
 from __future__ import annotations
@@ -12,6 +12,9 @@ import numpy as np
 
 from spinfit.kernels import add_at, compiled, smear_class, taps_at
 from spinfit.sheets import smear_at
+
+TINY = 1e-18
+"""MHz^2 that neighbours differ by at the least, squared."""
 
 
 def _value(c0, c1, c2, c3, c4, c5, t):
@@ -51,6 +54,15 @@ def _refined(c0, c1, c2, c3, c4, c5, low, high, rounds):
     return t
 
 
+def _parabola(s0, s1, s2):
+    """Return the coefficients of the parabola through values at t = -1, 0, 1."""
+    return s1, 0.5 * (s2 - s0), 0.5 * (s2 + s0) - s1
+
+
+def _on_parabola(s0, s1, s2, t):
+    return s1 + t * (0.5 * (s2 - s0) + t * (0.5 * (s2 + s0) - s1))
+
+
 def _lagrange(nodes, first, size, field, basis):
     """Fill `basis` with the Lagrange polynomials of `size` nodes from `first` on, at a field."""
     for i in range(size):
@@ -61,19 +73,14 @@ def _lagrange(nodes, first, size, field, basis):
         basis[i] = product
 
 
-def _nearness_squared(apart, slope, bend, far, smear, fold):
-    """Return the square of `spinfit.loop_sums.nearness`."""
-    distance = apart / far
-    return (distance * distance + fold * smear * apart * bend) / (slope * slope)
-
-
-def _shared(nearness):
-    """Return `spinfit.sheets.point_share` for an allowed distance of 1."""
-    x = (nearness - 0.4) / 0.6
-    if x <= 0.0:
-        return 1.0
-    if x >= 1.0:
+def _shared(apart_squared, slope, bend, far, smear, fold):
+    """Return `spinfit.sheets.point_share` of `spinfit.loop_sums.nearness` for an allowed distance of 1."""
+    square = (apart_squared / (far * far) + fold * smear * math.sqrt(apart_squared) * bend) / (slope * slope)
+    if square >= 1.0:
         return 0.0
+    if square <= 0.16:
+        return 1.0
+    x = (math.sqrt(square) - 0.4) / 0.6
     return 1.0 - x * x * x * (10 + x * (6 * x - 15))
 
 
@@ -106,6 +113,7 @@ def _in_frequency(
     around,
     own,
     weights,
+    points,
     step,
     numbers,
     reach,
@@ -117,6 +125,7 @@ def _in_frequency(
     used = 0
     size = min(stencil, len(nodes))
     basis = np.empty((len(fields), size))
+    places, gaps = np.empty(len(fields)), np.empty(len(fields))
     norm = 1.0 / math.sqrt(2 * math.pi)
     for leaf in range(leaves.shape[0]):
         a, m, b = leaves[leaf]
@@ -127,7 +136,8 @@ def _in_frequency(
         first = min(max(m - stencil // 2, 0), len(nodes) - size)
         for q in range(begin, end):
             _lagrange(nodes, first, size, fields[q], basis[q])
-        for p in range(gap.shape[1]):
+            places[q] = (fields[q] - nodes[m]) / half
+        for p in range(points[leaf, 0], points[leaf, 1]):
             f0, f1, f2 = gap[a, p], gap[m, p], gap[b, p]
             d0, d1, d2 = slope[a, p] * half, slope[m, p] * half, slope[b, p] * half
             i0, i1, i2, i3 = f0 + d0 / 3, f1 - d1 / 3, f1 + d1 / 3, f2 - d2 / 3
@@ -141,7 +151,7 @@ def _in_frequency(
                 most = max(most, along[n, p] ** 2 + around[n, p] ** 2 + x * x)
                 if broad:
                     widest = max(widest, own[n, p] + (smear * step * slope[n, p]) ** 2)
-            most = math.sqrt(most) + 1e-9
+            most = math.sqrt(most + TINY)
             widest = 1.2 * reach * math.sqrt((smear * most) ** 2 + widest)
             margin = widest + 0.25 * (high - low)
             if low > margin or high < -margin:
@@ -159,36 +169,40 @@ def _in_frequency(
                 continue
             c0, c1, c2, c3, c4, c5 = _quintic(f0, f1, f2, d0, d1, d2)
             for q in range(begin, end):
-                t = (fields[q] - nodes[m]) / half
-                g = _value(c0, c1, c2, c3, c4, c5, t)
+                gaps[q] = _value(c0, c1, c2, c3, c4, c5, places[q])
+            x0, x1, x2 = _parabola(along[a, p], along[m, p], along[b, p])
+            y0, y1, y2 = _parabola(around[a, p], around[m, p], around[b, p])
+            e0, e1, e2 = _parabola(bend[a, p], bend[m, p], bend[b, p])
+            for q in range(begin, end):
+                g = gaps[q]
                 if abs(g) >= widest:
                     continue
                 used += 1
-                s = e = x = y = v = 0.0
-                for i in range(size):
-                    w = basis[q, i]
-                    s += w * strength[first + i, p]
-                    e += w * bend[first + i, p]
-                    x += w * along[first + i, p]
-                    y += w * around[first + i, p]
-                    if broad:
-                        v += w * own[first + i, p]
-                e = abs(e)
-                v = max(v, 0.0)
+                t = places[q]
+                x = x0 + t * (x1 + t * x2)
+                y = y0 + t * (y1 + t * y2)
+                e = abs(e0 + t * (e1 + t * e2))
                 rise = max(abs(_rise(c1, c2, c3, c4, c5, t)) / half, 1e-9)
-                apart = math.sqrt(x * x + y * y + (least * e) ** 2) + 1e-9
-                square = (smear * apart) ** 2
+                apart_squared = x * x + y * y + (least * e) ** 2 + TINY
+                square = smear * smear * apart_squared
+                v = 0.0
                 if broad:
                     square += (smear * step * rise) ** 2
+                    for i in range(size):
+                        v += basis[q, i] * own[first + i, p]
+                    v = max(v, 0.0)
                 total = square + v
                 u2 = g * g / total
                 if u2 >= reach * reach:
                     continue
                 rest = 1.0
                 if not broad:
-                    rest -= _shared(math.sqrt(_nearness_squared(apart, rise, e, far, smear, fold)))
+                    rest -= _shared(apart_squared, rise, e, far, smear, fold)
                     if rest == 0.0:
                         continue
+                s = 0.0
+                for i in range(size):
+                    s += basis[q, i] * strength[first + i, p]
                 r = square / total
                 kernel = (
                     math.exp(-0.5 * u2)
@@ -214,6 +228,7 @@ def _in_field(
     along,
     around,
     weights,
+    points,
     step,
     numbers,
     close,
@@ -233,7 +248,7 @@ def _in_field(
         a, m, b = leaves[leaf]
         half = 0.5 * (nodes[b] - nodes[a])
         first = min(max(m - stencil // 2, 0), len(nodes) - size)
-        for p in range(gap.shape[1]):
+        for p in range(points[leaf, 0], points[leaf, 1]):
             f0, f1, f2 = gap[a, p], gap[m, p], gap[b, p]
             d0, d1, d2 = slope[a, p] * half, slope[m, p] * half, slope[b, p] * half
             if not (_reaches(f0, f1, d0, d1, safety) or _reaches(f1, f2, d1, d2, safety)):
@@ -268,22 +283,21 @@ def _in_field(
                 t = _refined(c0, c1, c2, c3, c4, c5, low[k], high[k], 5)
                 rise = max(abs(_rise(c1, c2, c3, c4, c5, t)) / half, 1e-9)
                 field = nodes[m] + half * t
-                _lagrange(nodes, first, size, field, basis)
-                s = e = x = y = 0.0
-                for i in range(size):
-                    w = basis[i]
-                    s += w * strength[first + i, p]
-                    e += w * bend[first + i, p]
-                    x += w * along[first + i, p]
-                    y += w * around[first + i, p]
-                e = abs(e)
-                apart = math.sqrt(x * x + y * y + (least * e) ** 2) + 1e-9
-                share = _shared(math.sqrt(_nearness_squared(apart, rise, e, far, smear, fold)))
+                x = _on_parabola(along[a, p], along[m, p], along[b, p], t)
+                y = _on_parabola(around[a, p], around[m, p], around[b, p], t)
+                e = abs(_on_parabola(bend[a, p], bend[m, p], bend[b, p], t))
+                apart_squared = x * x + y * y + (least * e) ** 2 + TINY
+                share = _shared(apart_squared, rise, e, far, smear, fold)
                 if share == 0.0:
                     continue
+                _lagrange(nodes, first, size, field, basis)
+                s = 0.0
+                for i in range(size):
+                    s += basis[i] * strength[first + i, p]
                 weight = s / rise * share * weights[p]
                 used += 1
-                row, upper = smear_class(smear_at(apart / rise, close, smear), least_size, turn, rows)
+                smeared = smear_at(math.sqrt(apart_squared) / rise, close, smear)
+                row, upper = smear_class(smeared, least_size, turn, rows)
                 for sign in (1.0, -1.0):
                     if sign < 0 and start >= 0:
                         break  # the spectrum is even in B
@@ -297,7 +311,91 @@ def _in_field(
     return used
 
 
+def _folded(i, count):
+    """Return the place of a place past either end of values that are even about both."""
+    if i < 0:
+        return -i
+    return i if i < count else 2 * (count - 1) - i
+
+
+def _doubled(values, rows, start, octant, opposite, middle, out):
+    columns, nodes, count, azimuths = values.shape
+    finer = out.shape[3]
+    m0, m1, m2 = middle[0], middle[1], middle[2]
+    buffer = np.empty((count, finer))
+    for column in range(columns):
+        for node in range(nodes):
+            first, last = rows[node]
+            if first >= last:
+                continue
+            first, last = first + start, last + start
+            for i in range(max(0, first // 2 - 2), min(count, last // 2 + 4)):
+                if azimuths == 1:
+                    buffer[i, 0] = values[column, node, i, 0]
+                    continue
+                row, into = values[column, node, i], buffer[i]
+                for j in range(2, azimuths - 3):
+                    into[2 * j] = row[j]
+                    into[2 * j + 1] = (
+                        m0 * (row[j - 2] + row[j + 3]) + m1 * (row[j - 1] + row[j + 2]) + m2 * (row[j] + row[j + 1])
+                    )
+                ends = min(5, azimuths)
+                for end in range(ends):
+                    j = end if end < 2 else azimuths - ends + end
+                    into[2 * j] = row[j]
+                    if 2 * j + 1 < finer:
+                        total = 0.0
+                        for n in range(6):
+                            k = j - 2 + n
+                            total += middle[n] * row[_folded(k, azimuths) if octant else k % azimuths]
+                        into[2 * j + 1] = total
+            for r in range(first, last):
+                i = r // 2
+                into = out[column, node, r - start]
+                if r == 2 * i:
+                    into[:] = buffer[i]
+                    continue
+                if opposite == 0 or 2 <= i < count - 3:
+                    b0, b1, b2 = buffer[_folded(i - 2, count)], buffer[_folded(i - 1, count)], buffer[i]
+                    b3, b4, b5 = buffer[i + 1], buffer[_folded(i + 2, count)], buffer[_folded(i + 3, count)]
+                    for j in range(finer):
+                        into[j] = m0 * (b0[j] + b5[j]) + m1 * (b1[j] + b4[j]) + m2 * (b2[j] + b3[j])
+                    continue
+                into[:] = 0.0
+                for n in range(6):
+                    k = i - 2 + n
+                    here = _folded(k, count)
+                    turned = 0 if here == k else opposite
+                    for j in range(finer):
+                        into[j] += middle[n] * buffer[here, (j + turned) % finer]
+
+
+def _surroundings(shares, gap, slope, rows, octant, out):
+    nodes, _, azimuths = gap.shape
+    for node in range(nodes):
+        first, last = rows[node]
+        w0, w1, w2 = shares[node]
+        for r in range(first, last):
+            before, after, here = gap[node, max(first, r - 1)], gap[node, min(last - 1, r + 1)], gap[node, r]
+            s0, s1, s2 = slope[max(0, node - 1), r], slope[node, r], slope[min(nodes - 1, node + 1), r]
+            along, around, bend = out[0, node, r], out[1, node, r], out[2, node, r]
+            for j in range(azimuths):
+                along[j] = 0.5 * (after[j] - before[j])
+                bend[j] = w0 * s0[j] + w1 * s1[j] + w2 * s2[j]
+            if azimuths == 1:
+                continue
+            for j in range(1, azimuths - 1):
+                around[j] = 0.5 * (here[j + 1] - here[j - 1])
+            end = azimuths - 1
+            low, high = (0, end) if octant else (end, 0)
+            around[0] = 0.5 * (here[1] - here[low])
+            around[end] = 0.5 * (here[high] - here[end - 1])
+
+
 _value, _rise, _quintic = compiled(_value), compiled(_rise), compiled(_quintic)
+_parabola, _on_parabola = compiled(_parabola), compiled(_on_parabola)
 _refined, _lagrange, _shared = compiled(_refined), compiled(_lagrange), compiled(_shared)
-_nearness_squared, _reaches = compiled(_nearness_squared), compiled(_reaches)
+_reaches = compiled(_reaches)
 in_frequency, in_field = compiled(_in_frequency), compiled(_in_field)
+_folded = compiled(_folded)
+doubled, surroundings = compiled(_doubled), compiled(_surroundings)

@@ -16,16 +16,17 @@ Both sums exist twice: here in numpy, and compiled in `spinfit.loop_kernels`.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from collections.abc import Iterable
+from dataclasses import replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from spinfit import hermite, kernels, loop_kernels
-from spinfit.branches import FWHM_PER_SIGMA, Request, stencil
-from spinfit.orientations import Mesh
+from spinfit.branches import Request, parabola, stencil
+from spinfit.landscape import TAPS, Landscape
 from spinfit.resonance import SAFETY, ZERO_FIELD, can_reach
-from spinfit.sheets import SMEAR_RATIO, Histograms, differences, point_share
+from spinfit.sheets import SMEAR_RATIO, Histograms, point_share
 
 Array = NDArray[np.float64]
 Index = NDArray[np.intp]
@@ -38,11 +39,11 @@ That sum is smooth over several line widths: everything sharper is in the other 
 STEP_OF_ALL = 0.5
 """The same where everything is summed in frequency."""
 KERNEL_REACH = 5.0
-"""Where the kernel is cut, in units of its width."""
+"""Where the kernel is cut, in units of its width, at the default tolerance."""
 FOLD = 60.0
 """How many times farther than its smear from a fold a resonance lies before it is solved for."""
-TAPS = 5
-"""Nodes by which strengths are interpolated along the field."""
+OVER_POINTS = ("gap", "slope", "strength", "bend", "along", "around", "own")
+"""What a `Landscape` has at every point of its mesh."""
 FIELDS, BLOCK = 20, 6000
 """Numbers of fields and of points handled at a time, so that they stay in the processor's cache."""
 
@@ -58,71 +59,74 @@ def kernel(u: Array, part: Array | float = 1.0) -> Array:
     return np.exp(-0.5 * square) * shape * (1 / math.sqrt(2 * math.pi))
 
 
-@dataclass(frozen=True, eq=False)
-class Landscape:
-    """One level difference over the points of a mesh.
+def kernel_reach(request: Request) -> float:
+    """Return where the kernel is cut, in units of its width: where it is a tenth of the tolerance."""
+    return KERNEL_REACH - max(0.0, 0.8 * math.log10(request.tolerance / 1e-3))
 
-    Attributes
+
+def reach(land: Landscape, thetas: int, finer: tuple[float, float], request: Request) -> Array:
+    """Return the share of the meridian, first and last, in which each leaf can be resonant, shape (l, 2).
+
+    Parameters
     ----------
-    fields : ndarray, shape (k,)
-        Nodes, mT.
-    leaves : ndarray of int, shape (l, 3)
-    gap, slope, strength : ndarray, shape (k, points)
-        As in `KnotData`.
-    bend : ndarray, shape (k, points)
-        Change of the slope along the field, MHz/mT^2; continuous, unlike that of the quintics.
-    along, around : ndarray, shape (k, points)
-        Differences of the gap between neighbours along theta and phi, MHz.
-    own : ndarray, shape (k, points), or (0, points) where all widths are alike
-        Variance of the resonance's own Gaussian in frequency, MHz^2.
-    weights : ndarray, shape (points,)
-        Shares of the solid angle.
+    land : Landscape
+        On a mesh of few rows.
+    thetas : int
+        Intervals of its rows.
+    finer : (float, float)
+        How many times closer along theta and phi points of the coarsest mesh lie that is to be summed.
     """
-
-    fields: Array
-    leaves: Index
-    gap: Array
-    slope: Array
-    strength: Array
-    bend: Array
-    along: Array
-    around: Array
-    own: Array
-    weights: Array
-
-    @property
-    def broad(self) -> bool:
-        """Whether resonances have widths of their own."""
-        return len(self.own) > 0
-
-    @classmethod
-    def of(cls, fields: Array, leaves: Index, values: Array, mesh: Mesh) -> Landscape:
-        """Build from gap, slope, strength and squared FWHM, if any, on a mesh: (3 or 4, k, thetas + 1, azimuths)."""
-        k = len(fields)
-        steps = differences(values[0], mesh).reshape(2, k, -1)
-        gap, slope, strength = values[:3].reshape(3, k, -1)
-        bend = np.gradient(slope, fields, axis=0)
-        own = np.maximum(values[3:].reshape(-1, gap.shape[1]), 0.0) / FWHM_PER_SIGMA**2
-        return cls(fields, leaves, gap, slope, strength, bend, *steps, own, mesh.weights().ravel())
+    step, coarser = field_step(land, request, finer), max(1.0, 1 / min(finer))
+    out = np.tile(np.array([1.0, 0.0]), (len(land.leaves), 1))
+    for number, leaf in enumerate(land.leaves):
+        half = 0.5 * (land.fields[leaf[2]] - land.fields[leaf[0]])
+        low, high = _hull(land.gap[leaf], land.slope[leaf] * half)
+        widest = request.grain.smear * coarser * _apart_at_most(land, leaf, request, step)
+        if land.broad:
+            more = land.own[leaf] + (request.grain.smear * step * land.slope[leaf]) ** 2
+            widest = np.sqrt(widest**2 + more.max(axis=0))
+        margin = 1.2 * kernel_reach(request) * widest + 0.5 * (high - low)
+        rows = np.flatnonzero(((low <= margin) & (high >= -margin)).reshape(-1, land.azimuths).any(axis=1))
+        if len(rows):
+            out[number] = max(0, rows[0] - 1) / thetas, min(thetas, rows[-1] + 1) / thetas
+    return out
 
 
-def add_looping(histograms: Histograms, land: Landscape, request: Request, step: float | None = None) -> int:
+def _hull(f: Array, g: Array) -> tuple[Array, Array]:
+    """Return least and largest of a leaf's gaps and of what their slopes, times half the leaf, lead to."""
+    hull = np.stack([*f, f[0] + g[0] / 3, f[1] - g[1] / 3, f[1] + g[1] / 3, f[2] - g[2] / 3])
+    return hull.min(axis=0), hull.max(axis=0)
+
+
+def _apart_at_most(land: Landscape, leaf: Index, request: Request, step: float) -> Array:
+    bend = np.abs(land.bend[leaf])
+    return _apart(land.along[leaf], land.around[leaf], bend, request, step).max(axis=0)
+
+
+def add_looping(histograms: Histograms, lands: Iterable[Landscape], request: Request, step: float) -> int:
     """Add one pair of levels; return the number of points used.
 
-    `step` is the distance of the fields of the sum in frequency, mT, by default what the pair asks for
-    (`field_step`).
+    Parameters
+    ----------
+    lands : iterable of Landscape
+        Parts of one mesh.
+    step : float
+        Distance of the fields of the sum in frequency, mT (`field_step`).
     """
-    step = field_step(land, request) if step is None else step
     first = 0.0 if request.low <= ZERO_FIELD else request.low  # the spectrum is even in B: half a step off zero
     fields = first + step * (0.5 + np.arange(max(1, math.ceil((request.high - first) / step))))
     density = np.zeros(len(fields))
     in_frequency, in_field = _COMPILED if kernels.COMPILED else (in_frequency_numpy, in_field_numpy)
-    used = in_frequency(density, fields, land, request, step)
+    used = 0
+    for land in lands:
+        used += in_frequency(density, fields, land, request, step)
+        if not land.broad:
+            used += in_field(histograms, land, request, step)
     some = density != 0
     # hides the grain of the fields themselves
     smear = np.full(int(some.sum()), request.grain.smear * step)
     histograms.smeared(fields[some], density[some], smear)
-    return used if land.broad else used + in_field(histograms, land, request, step)
+    return used
 
 
 def _in_frequency_compiled(density: Array, fields: Array, land: Landscape, request: Request, step: float) -> int:
@@ -139,9 +143,10 @@ def _in_frequency_compiled(density: Array, fields: Array, land: Landscape, reque
         land.around,
         land.own,
         land.weights,
+        land.points,
         step,
         (request.grain.far, request.grain.smear, FOLD),
-        KERNEL_REACH,
+        kernel_reach(request),
         TAPS,
     )
 
@@ -163,6 +168,7 @@ def _in_field_compiled(histograms: Histograms, land: Landscape, request: Request
         land.along,
         land.around,
         land.weights,
+        land.points,
         step,
         (request.grain.far, request.grain.smear, FOLD),
         request.grain.close,
@@ -185,26 +191,28 @@ def in_frequency_numpy(density: Array, fields: Array, land: Landscape, request: 
         In steps of `step`, mT.
     """
     used = 0
-    for leaf in land.leaves:
+    for leaf, points in zip(land.leaves, land.points, strict=True):
+        if points[0] == points[1]:
+            continue
+        seen = replace(land, **{name: getattr(land, name)[:, slice(*points)] for name in OVER_POINTS})
         ends = land.fields[leaf]
         here = slice(*np.searchsorted(fields, [ends[0], ends[2]]))
         if here.start == here.stop:
             continue
         half = 0.5 * (ends[2] - ends[0])
-        f, g = land.gap[leaf], land.slope[leaf] * half
-        bend = np.abs(land.bend[leaf])
-        apart = _apart(land.along[leaf], land.around[leaf], bend, request, step).max(axis=0)
+        f, g = seen.gap[leaf], seen.slope[leaf] * half
+        bend = np.abs(seen.bend[leaf])
+        apart = _apart_at_most(seen, leaf, request, step)
         widest = request.grain.smear * apart
         flat = np.ones(len(apart), dtype=bool)
         if land.broad:
-            more = land.own[leaf] + (request.grain.smear * step * land.slope[leaf]) ** 2
+            more = seen.own[leaf] + (request.grain.smear * step * seen.slope[leaf]) ** 2
             widest = np.sqrt(widest**2 + more.max(axis=0))
         else:
-            steep = np.minimum(np.abs(land.slope[leaf]), np.abs(g + g[[1, 2, 0]]) / (2 * half)).min(axis=0)
+            steep = np.minimum(np.abs(seen.slope[leaf]), np.abs(g + g[[1, 2, 0]]) / (2 * half)).min(axis=0)
             flat = nearness(apart, steep, bend.max(axis=0), request) > 0.25
-        hull = np.stack([*f, f[0] + g[0] / 3, f[1] - g[1] / 3, f[1] + g[1] / 3, f[2] - g[2] / 3])
-        low, high = hull.min(axis=0), hull.max(axis=0)
-        widest = 1.2 * KERNEL_REACH * widest
+        low, high = _hull(f, g)
+        widest = 1.2 * kernel_reach(request) * widest
         margin = widest + 0.25 * (high - low)
         at = np.flatnonzero((low <= margin) & (high >= -margin) & flat)
         c, widest = hermite.quintic(f[:, at], g[:, at]), widest[at]
@@ -218,26 +226,29 @@ def in_frequency_numpy(density: Array, fields: Array, land: Landscape, request: 
             for first in range(0, len(near), BLOCK):
                 part = near[first : first + BLOCK]
                 slope = np.abs((t[:, None] ** np.arange(5) * (np.arange(1, 6) / half)) @ c[1:, part])
+                where = points[0] + at[part]
                 density[some] += step * _density(
-                    land, leaf[1], fields[some], at[part], gap[:, part], slope, request, step
+                    land, leaf, fields[some], where, gap[:, part], slope, request, step
                 )
     return used
 
 
 def _density(
-    land: Landscape, middle: int, fields: Array, at: Index, gap: Array, slope: Array, request: Request, step: float
+    land: Landscape, leaf: Index, fields: Array, at: Index, gap: Array, slope: Array, request: Request, step: float
 ) -> Array:
     """Return the sum over points `at` of strength x kernel at each field, from gap and slope there."""
-    indices, basis = stencil(land.fields, np.full(len(fields), middle), fields, TAPS)
+    indices, basis = stencil(land.fields, np.full(len(fields), leaf[1]), fields, TAPS)
     nodes = indices[:, :1], at
-    strength, bend, *steps = (basis.T @ v[nodes] for v in (land.strength, land.bend, land.along, land.around))
+    strength = basis.T @ land.strength[nodes]
+    t = 2 * (fields[:, None] - land.fields[leaf[1]]) / (land.fields[leaf[2]] - land.fields[leaf[0]])
+    bend, *steps = (parabola(v[leaf][:, None, at], t) for v in (land.bend, land.along, land.around))
     bend = np.abs(bend)
     apart = _apart(*steps, bend, request, step)
     square = whole = (request.grain.smear * apart) ** 2
     if land.broad:
         square = square + (request.grain.smear * step * slope) ** 2
         whole = square + np.maximum(basis.T @ land.own[nodes], 0.0)
-    some = np.flatnonzero(gap * gap < KERNEL_REACH**2 * whole)
+    some = np.flatnonzero(gap * gap < kernel_reach(request) ** 2 * whole)
     apart, slope, bend, gap, square, whole, strength = (
         v.ravel()[some] for v in (apart, slope, bend, gap, square, whole, strength)
     )
@@ -247,18 +258,23 @@ def _density(
     return np.bincount(some // len(at), weights=part, minlength=len(fields))
 
 
-def field_step(land: Landscape, request: Request) -> float:
+def field_step(land: Landscape, request: Request, finer: tuple[float, float] = (1.0, 1.0)) -> float:
     """Return the distance of the fields at which the sum in frequency is taken, mT.
 
     Short beside the line, and so short that at most folds a natural smear is as long.
+
+    Parameters
+    ----------
+    finer : (float, float)
+        How many times closer along theta and phi the points of the mesh lie that it is for.
     """
     longest = (
         (STEP_OF_ALL if land.broad else STEP) * request.scale * min(2.0, max(1.0, (request.tolerance / 1e-3) ** 0.3))
     )
     some = slice(None, None, 1 + land.gap.shape[1] // 2000)
     gap, slope, bend = (np.abs(v[:, some]) for v in (land.gap, land.slope, land.bend))
-    width = request.grain.smear * np.hypot(land.along[:, some], land.around[:, some])
-    near = gap <= 4 * width + 0.5 * slope * np.gradient(land.fields)[:, None]
+    width = request.grain.smear * np.hypot(land.along[:, some] / finer[0], land.around[:, some] / finer[1])
+    near = (gap <= 4 * width + 0.5 * slope * np.gradient(land.fields)[:, None]) & (width + bend > 0)
     if not near.any():
         return longest
     typical = np.quantile(width[near] / np.maximum(bend[near], 1e-12), 0.1)
@@ -271,7 +287,7 @@ def _apart(along: Array, around: Array, bend: Array, request: Request, step: flo
     A share near a fold ends where the smear is 1/FOLD of the distance; it must be as long as a step there.
     """
     least = bend * (FOLD * (0.9 * step) ** 2 / request.grain.smear)
-    return np.sqrt(along * along + around * around + least * least) + 1e-9
+    return np.sqrt(along * along + around * around + least * least + loop_kernels.TINY)
 
 
 def nearness(apart: Array, slope: Array, bend: Array, request: Request) -> Array:
@@ -287,26 +303,29 @@ def in_field_numpy(histograms: Histograms, land: Landscape, request: Request, st
     """Add the steep resonances' share; return their number."""
     used = 0
     grain = request.grain
-    for leaf in land.leaves:
+    for leaf, points in zip(land.leaves, land.points, strict=True):
+        if points[0] == points[1]:
+            continue
+        seen = slice(*points)
         ends = land.fields[leaf]
         half = 0.5 * (ends[2] - ends[0])
-        f, g = land.gap[leaf], land.slope[leaf] * half
+        f, g = land.gap[leaf, seen], land.slope[leaf, seen] * half
         near = can_reach(f[0], f[1], g[0], g[1]) | can_reach(f[1], f[2], g[1], g[2])
         steep = np.maximum(np.abs(g).max(axis=0), np.abs(np.diff(f, axis=0)).max(axis=0)) / half
-        apart = np.hypot(land.along[leaf], land.around[leaf]).min(axis=0)
+        apart = np.hypot(land.along[leaf, seen], land.around[leaf, seen]).min(axis=0)
         at = np.flatnonzero(near & (apart < 1.5 * grain.far * steep))
         if not len(at):
             continue
         c = hermite.quintic(f[:, at], g[:, at])
         q, low, high = hermite.brackets(c, f[:, at])
-        c, point = c[:, q], at[q]
+        c, point = c[:, q], points[0] + at[q]
         t = hermite.refine(c, low, high)
         slope = np.maximum(np.abs(hermite.slope(c, t)) / half, 1e-9)
         field = ends[1] + half * t
         indices, basis = stencil(land.fields, np.full(len(field), leaf[1]), field, TAPS)
         nodes = indices, point
-        columns = (land.strength, land.bend, land.along, land.around)
-        strength, bend, *steps = ((basis * v[nodes]).sum(axis=0) for v in columns)
+        strength = (basis * land.strength[nodes]).sum(axis=0)
+        bend, *steps = (parabola(v[leaf][:, point], t) for v in (land.bend, land.along, land.around))
         bend = np.abs(bend)
         apart = _apart(*steps, bend, request, step)
         share = point_share(nearness(apart, slope, bend, request), 1.0)

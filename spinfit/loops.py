@@ -9,15 +9,19 @@ a mesh as fine as it needs.
 from __future__ import annotations
 
 import math
+from collections.abc import Callable, Iterable, Iterator
+from functools import partial
 from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
+from spinfit import kernels
 from spinfit.branches import KnotData, Request
-from spinfit.crossings import Crossings
+from spinfit.crossings import Crossings, Window
+from spinfit.landscape import Landscape, Scratch, View, doubled
 from spinfit.lineshape import Shape
-from spinfit.loop_sums import Landscape, add_looping
+from spinfit.loop_sums import add_looping, field_step, reach
 from spinfit.orientations import Mesh, Rings
 from spinfit.resonance import ZERO_FIELD
 from spinfit.sheets import SMEAR_MOST, SMEAR_REACH, Histograms
@@ -31,6 +35,10 @@ FOLD_SLOPE = 8.0
 """MHz/mT below which a level difference counts as folding, about a quarter of a free spin's slope."""
 AXIAL = 2048
 """Intervals of a meridian with which an axial system begins, at the default tolerance."""
+BAND = 200_000
+"""Nodes x points of a band of rows: what a pair needs of six arrays of these is a few megabytes."""
+LEAST = 8
+"""Intervals of the mesh of the first look."""
 LARGEST = 40_000_000
 """Numbers (nodes x points x 3) of one pair's mesh at which refinement gives up."""
 MOST_ROUNDS = 5
@@ -61,32 +69,60 @@ class _Pair:
         self.rings, self.request = rings, request
         self.crossings, self.row = crossings, row
         self.part, self.fields, self.leaves = nodes_of(crossings.data, leaves)
-        self.size = _first_size(self, request)
+        self.size, self.reach = _first_size(self, request)
 
     def sum(self, look: _Look) -> int:
         """Sum over the present mesh and over its every second point; return the number of points used."""
         mesh = Mesh(self.rings.kind, *self.size)
-        self.values = self.on(mesh)
-        self.histograms = look.empty()
-        used = add_looping(self.histograms, Landscape.of(self.fields, self.leaves, self.values, mesh), self.request)
+        self.view = View.of(self.reach, self.leaves, len(self.fields), mesh.thetas, 4)
+        half = Mesh(self.rings.kind, self.size[0] // 2, max(1, self.size[1] // 2))
+        self.half = self._on(half, self.rings.to_mesh_locally, self.view.every(2))
+        self.histograms, used = self._add(look, self._bands(look, mesh), mesh)
         self.transform = self.histograms.transform()
         self.difference = self.coarser(look, 2, 2)
         self.missed = look.height(self.difference)
-        before = look.height(self.coarser(look, 4, 4))
+        self.fourth = self.coarser(look, 4, 4)
+        before = look.height(self.fourth)
         self.gained = min(1.0, max(LEAST_GAIN, self.missed / before)) if before else 1.0
         return used
 
-    def on(self, mesh: Mesh) -> Array:
+    def finer(self, size: tuple[int, int]) -> tuple[float, float]:
+        """Return how many times closer than in the first look points of a mesh lie."""
+        mesh, _ = self.probe
+        return size[0] / mesh.thetas, size[1] / mesh.phis
+
+    def _add(self, look: _Look, lands: Iterable[Landscape], mesh: Mesh) -> tuple[Histograms, int]:
+        """Sum over parts of a mesh; return histograms and the number of points used."""
+        histograms = look.empty()
+        step = field_step(self.probe[1], self.request, self.finer((mesh.thetas, mesh.phis)))
+        return histograms, add_looping(histograms, lands, self.request, step)
+
+    def _bands(self, look: _Look, mesh: Mesh) -> Iterator[Landscape]:
+        """Yield the present mesh a few rows at a time, so that these stay in the processor's cache."""
+        height = max(8, BAND // (len(self.fields) * len(mesh.phi()))) if kernels.COMPILED else mesh.thetas + 1
+        for view, some in self.view.bands(mesh.thetas + 1, height):
+            values = doubled(self.half, mesh, view.nodes, look.scratch, some)
+            yield Landscape.of(self.fields, self.leaves, values, mesh, view, look.scratch, some)
+
+    def _on(self, mesh: Mesh, to_mesh: Callable[..., Array], view: View | None = None) -> Array:
         """Return gap, slope, strength and variance, if any, on a mesh, shape (3 or 4, k, thetas + 1, azimuths)."""
-        return self.crossings.continued(self.row, self.part, lambda v: self.rings.to_mesh_locally(v, mesh))
+        window = None
+        if view is not None:
+            window = Window((mesh.thetas + 1, len(mesh.phi())), view.nodes)
+        return self.crossings.continued(self.row, self.part, partial(to_mesh, mesh=mesh), window)
 
     def coarser(self, look: _Look, along: int, around: int) -> NDArray[np.complex128]:
-        """Return how the transform changes when only every second point, along theta or phi, is used."""
+        """Return how the transform changes when only every so many points, along theta or phi, are used."""
         around = 1 if self.rings.kind == "axial" else around
         mesh = Mesh(self.rings.kind, self.size[0] // along, self.size[1] // around)
-        values = np.ascontiguousarray(self.values[:, :, ::along, ::around])
-        histograms = look.empty()
-        add_looping(histograms, Landscape.of(self.fields, self.leaves, values, mesh), self.request)
+        if along == around or self.rings.kind == "axial":
+            values = self.half[:, :, :: along // 2, :: max(1, around // 2)]
+        else:
+            whole = doubled(self.half, Mesh(self.rings.kind, *self.size), self.view.nodes, look.scratch)
+            values = whole[:, :, ::along, ::around]
+        view = self.view.every(along)
+        land = Landscape.of(self.fields, self.leaves, np.ascontiguousarray(values), mesh, view, look.scratch)
+        histograms, _ = self._add(look, [land], mesh)
         return histograms.transform() - self.transform
 
     @property
@@ -95,13 +131,14 @@ class _Pair:
         return self.missed * self.gained
 
     def by_half(self, look: _Look) -> NDArray[np.complex128]:
-        """Return how the transform on every second point changes when every second ring of knots is left out."""
-        mesh = Mesh(self.rings.kind, self.size[0] // 2, max(1, self.size[1] // 2))
+        """Return how the transform on every fourth point changes when every second ring of knots is left out."""
+        mesh = Mesh(self.rings.kind, self.size[0] // 4, max(1, self.size[1] // 4))
         half, kept = self.rings.halved(), self.rings.halved_knots()
-        values = self.crossings.continued(self.row, self.part, lambda v: half.to_mesh_locally(v[:, kept], mesh))
-        histograms = look.empty()
-        add_looping(histograms, Landscape.of(self.fields, self.leaves, values, mesh), self.request)
-        return histograms.transform() - self.transform - self.difference
+        view = self.view.every(4)
+        values = self._on(mesh, lambda v, **of: half.to_mesh_locally(v[:, kept], **of), view)
+        land = Landscape.of(self.fields, self.leaves, values, mesh, view, look.scratch)
+        histograms, _ = self._add(look, [land], mesh)
+        return histograms.transform() - self.transform - self.fourth
 
     def refine(self, look: _Look, allowed: float) -> bool:
         """Choose a finer mesh that should err by no more than `allowed`; return whether there is one."""
@@ -125,7 +162,7 @@ class _Look:
     def __init__(self, histograms: Histograms, request: Request) -> None:
         self.grid, self.scale = histograms.grid, request.scale
         self.others = histograms.transform()
-        self.shape = Shape(request.scale, 0.0)
+        self.shape, self.scratch = Shape(request.scale, 0.0), Scratch()
         fields = self.grid.start + self.grid.step * np.arange(self.grid.count)
         margin = SMEAR_REACH * SMEAR_MOST * request.scale  # past the window, where sums are cut off
         low = request.low + margin if request.low > ZERO_FIELD else 0.0
@@ -152,32 +189,39 @@ def nodes_of(data: KnotData, leaves: Index) -> tuple[slice, Array, Index]:
     return slice(first, last), data.fields[first:last], data.leaves[leaves] - first
 
 
-def _first_size(pair: _Pair, request: Request) -> tuple[int, int]:
-    """Return the mesh to begin with, from how the resonance field bends over the sphere.
+def _first_size(pair: _Pair, request: Request) -> tuple[tuple[int, int], Array]:
+    """Return the mesh to begin with, from how the resonance field bends over the sphere, and what each leaf reaches.
 
     The curvature of the level difference at fixed field, over its slope along the field, is that
     of the resonance field; at a fold, where the slope vanishes, what counts is the frequency.
     """
     rings = pair.rings
-    azimuths = {"axial": 1, "octant": 2, "quarter": 4, "half": 8}[rings.kind] * min(rings.harmonics, 24)
-    gap, slope, strength = pair.on(Mesh(rings.kind, 2 * rings.rings, azimuths))[:3]
-    strong = np.abs(strength)
+    azimuths = {"axial": 1, "octant": 1, "quarter": 2, "half": 4}[rings.kind] * min(rings.harmonics, 24)
+    mesh = Mesh(rings.kind, max(LEAST, rings.rings), 1 if rings.kind == "axial" else max(LEAST, azimuths))
+    values = pair._on(mesh, rings.to_mesh_locally)
+    land = Landscape.of(pair.fields, pair.leaves, values, mesh)
     if rings.kind == "axial":  # costs nothing, and spares every doubt
-        return ladder_size(AXIAL * (1e-3 / request.tolerance) ** 0.3), 1
-    near = np.abs(gap) <= 1.5 * np.abs(slope) * np.gradient(pair.fields)[:, None, None] + request.scale * FOLD_SLOPE
+        size = ladder_size(AXIAL * (1e-3 / request.tolerance) ** 0.3), 1
+    else:
+        size = _size_by_bend(values, rings, pair.fields, request)
+    pair.probe = mesh, land
+    return size, reach(land, mesh.thetas, pair.finer((size[0] // 4, max(1, size[1] // 4))), request)
+
+
+def _size_by_bend(values: Array, rings: Rings, fields: Array, request: Request) -> tuple[int, int]:
+    gap, slope, strength = values[:3]
+    strong = np.abs(strength)
+    near = np.abs(gap) <= 1.5 * np.abs(slope) * np.gradient(fields)[:, None, None] + request.scale * FOLD_SLOPE
     bend = np.where(near, 1.0 / np.maximum(np.abs(slope), FOLD_SLOPE), 0.0)
     flat = FLAT * (request.tolerance / 1e-3) ** 0.17
     sizes = []
     for axis, even in ((1, True), (2, rings.kind == "octant")):
-        if axis == 2 and rings.kind == "axial":
-            sizes.append(1)
-            continue
         mode = {"mode": "reflect"} if even else {"mode": "wrap"}
         padded = np.pad(gap, [(1, 1) if a == axis else (0, 0) for a in range(3)], **mode)
         second = np.abs(np.diff(padded, 2, axis=axis)) * bend
         # the few sharpest spots, where levels cross on an axis, would size the mesh for everything
         sharp = _quantile(second[some], strong[some], 0.98) if (some := second > 0).any() else 0.0
-        least = (rings.rings, azimuths / 2)[axis - 1]
+        least = (rings.rings, strong.shape[2])[axis - 1]
         sizes.append(ladder_size(max(least, math.sqrt(sharp / request.scale) * (gap.shape[axis] - even) / flat)))
     return sizes[0], sizes[1]
 

@@ -253,24 +253,24 @@ class Rings:
         out += odd @ amplitude[:, :, is_odd] @ basis[:, is_odd].T
         return out
 
-    def to_mesh_locally(self, values: Array, mesh: Mesh) -> Array:
-        """Continue values at the knots, shape (q, n), to a mesh by splines: (q, thetas + 1, azimuths).
+    def to_mesh_locally(self, values: Array, mesh: Mesh, rows: slice = slice(None)) -> Array:
+        """Continue values at the knots, shape (q, n), to some rows of a mesh by splines: (q, rows, azimuths).
 
         Splines converge slower than series on smooth functions, but a kink, such as sorted levels
         have where they nearly cross, stays where it is.
         """
         around, even, odd = _local_matrices(self, mesh)
+        even, odd = even[rows], odd[rows]
         if self.kind == "axial":
             return (values @ even.T)[:, :, None]
-        out, column = [], 0
-        for matrix in around:
-            out.append(values[:, column : column + matrix.shape[1]] @ matrix.T)
+        ring, column = np.empty((len(values), len(around), len(around[0]))), 0
+        for i, matrix in enumerate(around):
+            np.matmul(values[:, column : column + matrix.shape[1]], matrix.T, out=ring[:, i])
             column += matrix.shape[1]
-        rows = np.stack(out, axis=1)
         if self.kind != "half":
-            return even @ rows
-        opposite = np.roll(rows, mesh.phis // 2, axis=2)
-        return even @ (0.5 * (rows + opposite)) + odd @ (0.5 * (rows - opposite))
+            return even @ ring
+        opposite = np.roll(ring, mesh.phis // 2, axis=2)
+        return even @ (0.5 * (ring + opposite)) + odd @ (0.5 * (ring - opposite))
 
     def to_finer_locally(self, values: Array, finer: Rings) -> Array:
         """Continue values at the knots, shape (q, n), to the knots of another set by splines."""

@@ -61,6 +61,7 @@ ORDER = (
     "knots",
     "exact",
     "loop_kernels",
+    "landscape",
     "loop_sums",
     "loops",
     "powder",

@@ -10,8 +10,8 @@ from scipy import integrate
 
 from spinfit import loop_kernels, loop_sums
 from spinfit.branches import FWHM_PER_SIGMA, Request
+from spinfit.landscape import Landscape
 from spinfit.lineshape import FieldGrid, Shape
-from spinfit.loop_sums import Landscape
 from spinfit.orientations import Mesh
 from spinfit.resonance import SAFETY, can_reach
 from spinfit.sheets import Grain, Histograms
@@ -69,7 +69,8 @@ def test_a_fold_with_a_width_in_frequency(width):
     sigma = width / FWHM_PER_SIGMA
     fields = np.linspace(50.0, 380.0, 300)
     histograms = Histograms(GRID, SHAPE.scale)
-    loop_sums.add_looping(histograms, landscape(Mesh("axial", 512, 1), width), REQUEST)
+    land = landscape(Mesh("axial", 512, 1), width)
+    loop_sums.add_looping(histograms, [land], REQUEST, loop_sums.field_step(land, REQUEST))
     got = GRID.sample(GRID.render(histograms.transform(), SHAPE), fields)
     fine = np.arange(-20.0, 460.0, 0.02)
     cosine, weights = np.polynomial.legendre.leggauss(1000)
