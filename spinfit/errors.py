@@ -77,8 +77,12 @@ def _cut(text: str, longest: int) -> str:
 
 def on_one_line(text: str) -> str:
     """Return a text on one line without what a terminal would take for a command: it may quote a file."""
-    words = " ".join(text.split())
-    return words if words.isprintable() else "".join(c if c.isprintable() else "\ufffd" for c in words)
+    return printable(" ".join(text.split()))
+
+
+def printable(text: str) -> str:
+    """Return a text with a mark in place of what a terminal would take for a command, and of what is no character."""
+    return text if text.isprintable() else "".join(c if c.isprintable() else "\ufffd" for c in text)
 
 
 def nearest(word: str, known: Iterable[str]) -> str:

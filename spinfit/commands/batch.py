@@ -11,7 +11,7 @@ from pathlib import Path
 from typing import Any
 
 from spinfit.commands.screen import Screen, quantity
-from spinfit.errors import InputError
+from spinfit.errors import InputError, on_one_line
 
 NAME = "batch"
 SUMMARY = "fit many traces in parallel into one table; the same command goes on where it was cut short"
@@ -223,8 +223,8 @@ def _say(args: argparse.Namespace, screen: Screen, report: Any, written: list[st
     counts = ", ".join(f"{number} {status}" for status, number in report.counts.items())
     screen.say(f"{counts or 'nothing'} ({report.fitted} fitted now, {report.kept} before); {report.seconds:.1f} s")
     if report.changed:
-        screen.say(f"written to {args.out}: {', '.join(written)}, and a folder a trace")
-    screen.say(f"spinfit summary {args.out} shows the table")
+        screen.say(f"written to {on_one_line(args.out)}: {', '.join(written)}, and a folder a trace")
+    screen.say(f"spinfit summary {on_one_line(args.out)} shows the table")
 
 
 def _failed(summary: Path, most: int) -> list[dict[str, str]]:

@@ -8,7 +8,7 @@ from typing import Any
 
 from spinfit.commands.measured import add_reading_options, read_measured
 from spinfit.commands.screen import Screen, number, quantity
-from spinfit.errors import InputError
+from spinfit.errors import InputError, on_one_line
 
 NAME = "calibrate"
 SUMMARY = "the field axis's offset, and scale, from traces of g standards"
@@ -86,7 +86,7 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
         try:
             readings.append(
                 read_standard(
-                    Path(path).name,
+                    on_one_line(Path(path).name),
                     trace.field[trace.used],
                     trace.signal[trace.used],
                     known,

@@ -7,7 +7,7 @@ import sys
 from collections.abc import Mapping, Sequence
 from typing import Any, TextIO
 
-from spinfit.errors import InputError
+from spinfit.errors import InputError, printable
 
 
 class Screen:
@@ -27,6 +27,8 @@ class Screen:
     def say(self, text: str = "") -> None:
         """Write a line for people; nothing with --json."""
         if not self.as_json:
+            if not text.replace("\n", "").isprintable():  # a name or a title may hold what a terminal obeys
+                text = "\n".join(map(printable, text.split("\n")))
             print(text, file=self.out)
 
     def emit(self, content: Mapping[str, Any] | Sequence[Any]) -> None:

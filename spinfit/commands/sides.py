@@ -11,7 +11,7 @@ from typing import Any
 
 from spinfit.commands.measured import read_measured
 from spinfit.commands.screen import Screen, number, quantity
-from spinfit.errors import InputError
+from spinfit.errors import InputError, on_one_line
 
 QUANTITIES = {
     "frequency": "frequency",
@@ -146,7 +146,7 @@ def _from_data(
     if which == "reference":  # what is said without "reference" is the trace's alone
         reading.frequency = reading.modulation = None
     trace = read_measured(path, reading)
-    name = Path(path).name
+    name = on_one_line(Path(path).name)
     header = {"frequency": trace.frequency, "modulation": trace.modulation, "temperature": trace.temperature}
     known = {key: value for key, value in header.items() if value is not None} | said
     used = trace.used & _windowed(trace.field, window, name)
@@ -175,7 +175,7 @@ def _from_job(path: str, said: dict[str, Any], screen: Screen, window: Any, base
     if not outcome.quality.finished:
         raise KeyboardInterrupt
     area = fitted_area(job, outcome)
-    names = Path(path).name
+    names = on_one_line(Path(path).name)
     values = {name: value.value for name, value in outcome.parameters.items()}
     fractions = {name: value.value for name, value in outcome.fractions.items()}
     known = {"frequency": trace.frequency, "temperature": trace.temperature, "modulation": trace.modulation or None}

@@ -10,7 +10,7 @@ import h5py
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from spinfit.errors import InputError
+from spinfit.errors import InputError, on_one_line
 from spinfit.files.atomic import write_text
 from spinfit.files.hdf5_writing import whole_hdf5
 
@@ -35,7 +35,7 @@ def _said(key: str, value: Any) -> str:
     """Return a condition with its unit on one line."""
     if isinstance(value, (int, float)):
         return f"{float(value)!r} {_UNITS.get(key, '')}".strip()
-    return " ".join(str(value).split())
+    return on_one_line(str(value))
 
 
 def jcamp_text(field: NDArray, signal: NDArray, names: tuple[str, str], header: Mapping[str, Any]) -> str:
@@ -109,7 +109,8 @@ def _write_hdf5(
         for key, value in header.items():
             if value is None:
                 continue
-            item = entry.create_dataset(key, data=value, track_times=False)
+            kept = on_one_line(value) if isinstance(value, str) else value
+            item = entry.create_dataset(key, data=kept, track_times=False)
             if key in _UNITS:
                 item.attrs["units"] = _UNITS[key]
 

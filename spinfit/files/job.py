@@ -13,7 +13,7 @@ from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
-from spinfit.errors import InputError
+from spinfit.errors import InputError, on_one_line
 from spinfit.files.keys import JOB, MODEL
 from spinfit.files.store import Folder, Kept, Store
 from spinfit.files.toml_fit import read_fit, start_of
@@ -60,6 +60,11 @@ class Model:
 
 def read_model(path: str | Path) -> Model:
     """Read a model file.
+
+    Parameters
+    ----------
+    path : str or Path
+        TOML, with the tables ``[sweep]``, ``[sample]``, ``[accuracy]`` and ``[[species]]``.
 
     Raises
     ------
@@ -161,7 +166,7 @@ def _job_from(data: Mapping[str, Any], path: Path, text: str, store: Store) -> J
         start=fit.start,
         tolerance=tolerance,
         units=units,
-        name=path.stem,
+        name=on_one_line(path.stem) or "job",
         path=str(path),
         text=text,
         lines=lines,

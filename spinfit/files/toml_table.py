@@ -339,6 +339,17 @@ class Table:
             raise self.error(key, "has unprintable characters", f'write {key} = "..."')
         return value
 
+    def file_name(self, key: str) -> str | None:
+        """Return the name of a file, with whatever a file system lets stand in it, or None when the key is missing."""
+        value = self.data.get(key)
+        if not isinstance(value, str) or not value.strip():
+            return self.text(key)
+        if "\0" in value:
+            raise self.error(key, "has a zero character", "write the name as the system shows it")
+        if any("\ud800" <= character <= "\udfff" for character in value):  # how Python reads what is not UTF-8
+            raise self.error(key, "names a file whose name is not UTF-8", "rename the file")
+        return value
+
     def name(self, key: str) -> str | None:
         """Return a text fit for parameter names, or None when the key is missing."""
         value = self.text(key)

@@ -14,7 +14,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit.errors import InputError
+from spinfit.errors import InputError, on_one_line
 from spinfit.files.keys import CALIBRATION, COLUMNS, DIRECTIONS, FIELD_UNITS, LINES, SMOOTH, TRACE
 from spinfit.files.raw import RawTrace
 from spinfit.files.reading import Assembled, assemble, read_content
@@ -62,7 +62,7 @@ class _Source:
     def __init__(self, table: Table, store: Store) -> None:
         self.table = table
         table.require("file", '"..." (relative to this file)')
-        self.written = table.text("file") or ""
+        self.written = table.file_name("file") or ""
         self.raw = _read(store, self.written)
         self.name = table.name("name") or name_from(self.written)
         self.notes: list[tuple[str, str]] = list(self.raw.notes)
@@ -73,7 +73,8 @@ class _Source:
         if own is None or header is None:
             return header if own is None else own
         if not _same(own, header):
-            text = f"{self.name}: {key} is {_said(key, own)} in the job and {_said(key, header)} in {self.written}"
+            file = on_one_line(self.written)
+            text = f"{self.name}: {key} is {_said(key, own)} in the job and {_said(key, header)} in {file}"
             self.notes.append(("header_differs", f"{text}; the job's is used"))
         return own
 
@@ -81,7 +82,7 @@ class _Source:
         """Return the frequency in MHz, which a fit cannot do without."""
         value = self.merged("frequency", self.table.positive("frequency", "frequency"))
         if value is None:
-            found = f"is missing, here and in the header of {self.written}"
+            found = f"is missing, here and in the header of {on_one_line(self.written)}"
             raise self.table.error("frequency", found, 'write frequency = "9.4321 GHz"')
         return float(value)
 
@@ -145,7 +146,7 @@ def read_trace(place: str, data: object, index: int, *, store: Store, sample: Sa
     found["angle"] = _angle(source, sample, angle)
     found |= {"frequency": source.frequency(), "phase": phase, **source.shared(sample)}
     swept = _assemble(table, source.raw, **reading)
-    background = table.text("background")
+    background = table.file_name("background")
     under = None
     if background is not None:
         columns = {key: reading[key] for key in ("columns", "field_unit", "field_calibration")}
@@ -255,7 +256,7 @@ def _angle(source: _Source, sample: Sample, own: float | None) -> float | None:
         return None
     value = source.merged("angle", own)
     if value is None and sample.form == "crystal":
-        found = f"is missing, here and in the header of {source.written}"
+        found = f"is missing, here and in the header of {on_one_line(source.written)}"
         raise source.table.error("angle", found, 'write angle = "140 deg"')
     return sample.angle if value is None else float(value)
 

@@ -19,7 +19,7 @@ from urllib.parse import quote
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit.errors import InputError
+from spinfit.errors import InputError, on_one_line
 from spinfit.files.atomic import write_text
 from spinfit.report.numbers import short, with_uncertainty
 from spinfit.report.page import Raw, document, listed, paragraph, section, table
@@ -395,7 +395,7 @@ def _counts(summary: Summary) -> list[str]:
 def batch_report_text(folder: Path) -> str:
     """Return the page of a batch's folder (see `write_batch_report`)."""
     summary = read_summary(folder)
-    name = folder.resolve().name or "batch"
+    name = on_one_line(folder.resolve().name) or "batch"
     body = [
         f"<h1>{escape(name)}</h1>",
         listed(_counts(summary)),
