@@ -5,7 +5,8 @@ Every system is computed at tolerances 1e-3 and 1e-2 and compared with `tests/de
 meshes are refined until two agree; `ref` is by how much the last two differed, and the finer one,
 which is used, is better than that.  Errors are relative to the spectrum's largest value; a promise is
 broken, too, when the engine's own estimate is smaller than an error of more than a third of the tolerance.
-Cases whose names begin with "scan" go through spins, splittings, rhombicities and widths.
+Cases whose names begin with "scan" go through spins, splittings, rhombicities and widths; those that begin
+with "axial" are drawn at random.
 References do not depend on the engine: with ``--cache`` they are kept from run to run (empty the
 folder after a change of `tests/dense.py`).
 """
@@ -111,7 +112,7 @@ def compare(case: Case, reference: tuple[NDArray, float, tuple[int, int]], toler
     error = float(np.abs(got.signal - truth).max() / np.abs(truth).max())
     used = got.report["s"]["systems"][0]
     note = f"{used['symmetry']}, {used['rings']} rings, {used['pairs']} + {used['looping']} looping, " + (
-        f"estimate {used['estimated_error']:.0e}"
+        f"estimate {used['estimated_error']:.0e}{', warned' if got.warnings else ''}"
     )
     return Row(case.name, tolerance, error, difference, took, note, used["estimated_error"])
 
@@ -276,9 +277,40 @@ def _looping() -> list[Case]:
     return out
 
 
+def _axial(count: int = 120) -> list[Case]:
+    """Return random systems of full rotation symmetry, whose references cost a second each.
+
+    A third of them has a splitting at zero field within a tenth of the quantum, so that loops close in the window.
+    """
+    out = []
+    for number in range(count):
+        rng = np.random.default_rng([17, number])
+        spin = int(rng.integers(2, 8)) / 2
+        ratio = float(rng.choice([-1, 1]) * 10 ** rng.uniform(-0.7, 0.5))
+        if number % 3 == 0:
+            # |m| and |m - 1| are (2|m| - 1) D apart
+            steps = int(rng.integers(1, int(spin + 0.5) + 1))
+            ratio = float(rng.choice([-1, 1]) * rng.uniform(0.9, 1.1) / (2 * (spin - steps + 1) - 1 or 2))
+        g = (float(rng.uniform(1.9, 2.1)), float(rng.uniform(1.9, 2.1)))
+        stevens = (
+            (((4, 0), float(rng.normal() * 0.002 * abs(ratio) * X_BAND)),) if spin >= 2 and number % 4 == 1 else ()
+        )
+        scan = Scan(
+            X_BAND,
+            (0, 800, 1024),
+            float(rng.uniform(3, 12)),
+            mode="parallel" if number % 5 == 2 else "perpendicular",
+            temperature=float(10 ** rng.uniform(0.5, 2.5)) if number % 2 else None,
+            detect="absorption" if number % 7 == 3 else "derivative",
+        )
+        spins = (Spin(spin, g, ratio * X_BAND, stevens=stevens),)
+        out.append(Case(f"axial {number} S={spin:g} D/hnu {ratio:.3f}", spins, scan, "axial", (400, 1), 32))
+    return out
+
+
 def cases() -> list[Case]:
     """Return every case."""
-    return _radicals() + _coupled() + _high_spin() + _looping()
+    return _radicals() + _coupled() + _high_spin() + _looping() + _axial()
 
 
 def show(rows: list[Row], write: Callable[[str], object] = print) -> None:

@@ -74,3 +74,18 @@ def test_junk_around_seeds(name):
             assert str(error).isprintable()  # noqa: PT017
 
     run()
+
+
+@pytest.mark.parametrize(("kind", "count"), [("trace", 80), ("archive", 12)])
+def test_odd_files_of_the_hdf5_library_itself(kind, count):
+    """Whole files, but with types, links, filters and attributes that nothing of ours writes."""
+    from fuzz_guarded import answer_of, made
+    from fuzz_seeds import seeds_of
+
+    seeds = seeds_of("hdf5" if kind == "trace" else "archive")
+    answers = set()
+    for number in range(count):
+        answer, fault = answer_of(kind, made("odd", "test", number, seeds))
+        assert not fault
+        answers.add(answer)
+    assert len(answers) > 5  # readable ones and several refusals
