@@ -1,12 +1,17 @@
-"""Signs that a trace does not determine, and which of them to report.
+"""Signs and names of axes that a trace does not determine, and which of them to report.
 
 A powder pattern knows most components of a hyperfine or quadrupole tensor by their size: the other
 sign of a single one moves its lines by a second-order amount, often below the noise.  On its way from a
 rough start a descent may carry such a component through zero.  Which sign is then reported is a matter
 of chance; here it is the sign that the start had, unless the other fits significantly better.
+
+Likewise x, y and z of a powder's g tensor are names: they are given out as the start has them.
 """
 
 from __future__ import annotations
+
+import itertools
+import re
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,6 +20,7 @@ from spinfit.errors import InputError
 from spinfit.fitting.outcome import Note
 from spinfit.fitting.residuals import Point, Problem, Progress, View
 from spinfit.fitting.solve import Descent, Goal, descend
+from spinfit.species import Species
 
 Array = NDArray[np.float64]
 
@@ -103,6 +109,44 @@ def restored(problem: Problem, view: View, descent: Descent, progress: Progress 
     return descent
 
 
+def named_as_started(problem: Problem, view: View, descent: Descent, progress: Progress | None = None) -> Descent:
+    """Give the axes of g the names with which its components are nearest to where they started.
+
+    Only where g alone has axes and each of its components is free, so that a renaming is the same model.
+    """
+    free = descent.point.free.copy()
+    for one in problem.job.species if problem.job.sample.form == "powder" else ():
+        names = [f"{one.name}.g_{axis}" for axis in "xyz"]
+        if not _only_g_has_axes(one) or not all(_is_free(problem, name) for name in names):
+            continue
+        at = [problem.names.index(name) for name in names]
+        start, found = problem.start[at], free[at]
+        orders = itertools.permutations(
+            range(3)
+        )  # the first one leaves all as it is, and wins when others are no nearer
+        free[at] = found[list(min(orders, key=lambda order: float(np.sum((found[list(order)] - start) ** 2))))]
+    if np.array_equal(free, descent.point.free):
+        return descent
+    again = descend(problem, view, free, goal=Goal(central=True), progress=progress)
+    same = again.point.chi2 - descent.point.chi2 < 0.01 * per_point(view, descent.point)
+    return again if again.converged and same else descent
+
+
+def _only_g_has_axes(one: Species) -> bool:
+    """Whether nothing of a species but g points anywhere."""
+    spin = one.spins[0]
+    tensors = (*((n.A, n.P) for n in one.nuclei), (one.width.hidden_hyperfine, one.spread.g, one.spread.A))
+    plain = len(one.spins) == 1 and spin.D == 0 and spin.zfs_E == 0 and not spin.stevens and one.crystal_field is None
+    return plain and all(len(set(tensor)) == 1 for several in tensors for tensor in several)
+
+
+def _is_free(problem: Problem, name: str) -> bool:
+    """Whether a parameter is varied without limits, and no tie of another hangs on it."""
+    if name not in problem.names or name in problem.job.limits:
+        return False
+    return not any(re.search(rf"(?<![\w.]){re.escape(name)}(?![\w.])", text) for text in problem.job.ties.values())
+
+
 def single_sign_notes(
     problem: Problem, view: View, point: Point, jacobian: Array, known: NDArray[np.bool_]
 ) -> list[Note]:
@@ -119,9 +163,9 @@ def single_sign_notes(
     notes = []
     for names in open_signs.values():
         listed = names[0] if len(names) == 1 else ", ".join(names[:-1]) + " and " + names[-1]
-        word = "sign" if len(names) == 1 else "signs"
+        which = "sign of" if len(names) == 1 else "signs, each by itself, of"
         text = (
-            f"The {word} of {listed}, each by itself, cannot be told from the data: the other sign fits as well. "
+            f"The {which} {listed} cannot be told from the data: the other sign fits as well. "
             "Signs are reported as the start had them; only sizes are measured."
         )
         notes.append(Note("single_signs", text))
