@@ -245,6 +245,21 @@ def test_simulate_to_standard_output_and_to_files(here, run):
         assert seen["points"] == 501
 
 
+def test_simulate_with_noise(here, run):
+    """The residual against the plain spectrum is white, of the deviation asked for, and follows the seed."""
+    plain, noisy, again, other = (
+        np.array(json.loads(run("simulate", "m.toml", "--json", *more))["signal"])
+        for more in ([], ["--noise", "0.02"], ["--noise", "0.02", "--seed", "1"], ["--noise", "0.02", "--seed", "2"])
+    )
+    np.testing.assert_array_equal(noisy, again)
+    assert not np.array_equal(noisy, other)
+    noise = (noisy - plain) / np.abs(plain).max() / 0.02
+    # Of 501 normal deviates: mean 0 +- 1/sqrt(501), deviation 1 +- 1/sqrt(2 501), neighbours uncorrelated +- 1/sqrt(501).
+    assert abs(noise.mean()) < 4 / 501**0.5
+    assert abs(noise.std() - 1) < 4 / 1002**0.5
+    assert abs(np.mean(noise[1:] * noise[:-1])) < 4 / 501**0.5
+
+
 def test_simulate_json(here, run):
     found = json.loads(run("simulate", "m.toml", "--json"))
     assert len(found["field_mT"]) == len(found["signal"]) == 501
@@ -282,6 +297,9 @@ def test_simulate_a_crystal_at_several_angles(here, run):
         (("--plot", "s.gif"), 's.gif: --plot: ".gif" is not a format of pictures; end the name in .png, .svg, .pdf'),
         (("-o", "s.h5", "--species"), "--species"),
         (("--angle", "30 deg"), "a powder has no angle"),
+        (("--noise", "-1"), "--noise: -1; write a positive number"),
+        (("--seed", "2"), "--seed: there is no noise to choose; add --noise"),
+        (("--noise", "0.1", "--seed", "-2"), "--seed: -2; write 0 or more"),
     ],
 )
 def test_simulate_refuses(argv, says, here, run):

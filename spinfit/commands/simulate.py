@@ -6,7 +6,7 @@ import argparse
 from pathlib import Path
 from typing import Any
 
-from spinfit.commands.screen import Screen, quantity
+from spinfit.commands.screen import Screen, number, quantity
 from spinfit.errors import InputError
 
 NAME = "simulate"
@@ -15,6 +15,7 @@ EXAMPLES = (
     "spinfit simulate copper.toml > copper.csv",
     "spinfit simulate copper.toml -o copper.jdx --plot copper.png",
     "spinfit simulate copper.toml --parts",
+    "spinfit simulate copper.toml -o practice.jdx --noise 0.02 --seed 7",
 )
 SUFFIXES = (".csv", ".jdx", ".h5")
 
@@ -36,6 +37,15 @@ def options(parser: argparse.ArgumentParser) -> None:
         help="list the transitions: levels, fields, where on the sphere, share of the intensity, and what lies outside "
         "the sweep (without -o in place of the csv)",
     )
+    parser.add_argument(
+        "--noise",
+        metavar="FRACTION",
+        help="add Gaussian noise of this standard deviation, as a fraction of the largest signal: a trace to practise "
+        "on, or to see what an experiment could tell",
+    )
+    parser.add_argument(
+        "--seed", type=int, metavar="N", help="which noise: the same N gives the same noise (default 1)"
+    )
 
 
 def _check_names(args: argparse.Namespace) -> None:
@@ -51,6 +61,9 @@ def _check_names(args: argparse.Namespace) -> None:
         from spinfit.commands.drawing import picture_kind
 
         picture_kind(args.plot)
+    if args.seed is not None and (args.noise is None or args.seed < 0):
+        found = "there is no noise to choose" if args.noise is None else f"{args.seed}"
+        raise InputError(found, "add --noise" if args.noise is None else "write 0 or more", place="--seed")
 
 
 def run(args: argparse.Namespace, screen: Screen) -> int:
@@ -61,6 +74,7 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
     from spinfit.spectrum import simulate
 
     _check_names(args)
+    noise = number(args.noise, "--noise", positive=True)
     model = read_model(args.model)
     angles = _angles(args, model)
     try:
@@ -77,6 +91,8 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
             {"angle_deg": np.full(len(spectrum.fields), round(float(np.rad2deg(angle)), 9))} if len(angles) > 1 else {}
         )
         tables.append({**turned, "field_mT": spectrum.fields, "signal": spectrum.signal, **parts})
+    if noise is not None:
+        _add_noise(tables, noise, 1 if args.seed is None else args.seed)
     warnings = list(dict.fromkeys(_said(warning) for spectrum in spectra for warning in spectrum.warnings))
     for text in warnings:
         screen.aside(f"warning: {text}")
@@ -99,6 +115,16 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
     if args.plot:
         _draw(args.plot, model, tables, angles)
     return 0
+
+
+def _add_noise(tables: list[dict[str, Any]], fraction: float, seed: int) -> None:
+    """Add noise to the signals, each point and each angle its own; the columns of species stay without."""
+    import numpy as np
+
+    deviation = fraction * max(float(np.abs(table["signal"]).max()) for table in tables)
+    draws = np.random.default_rng(seed)
+    for table in tables:
+        table["signal"] = table["signal"] + draws.normal(0.0, deviation, len(table["signal"]))
 
 
 def _said(warning: Any) -> str:
