@@ -133,11 +133,26 @@ class Spin:
 
 @dataclass(frozen=True)
 class Nucleus:
-    """One nucleus, or `count` equivalent ones.
+    """One nucleus, or several equivalent ones.
 
-    Exactly one of `isotope` ("63Cu") and `element` ("Cu", every isotope in natural abundance) is
-    given.  `A` and `P` are principal values in MHz; P is traceless.  `couples_to` counts spins
-    from 1.  `treat` is "auto", "exact", "first order" or "second order".
+    Attributes
+    ----------
+    isotope, element : str or None
+        Exactly one of the two: "63Cu", or "Cu" for every isotope in natural abundance.
+    name : str or None
+        How its parameters are called, where not by the isotope or element.
+    A : tuple of float
+        Hyperfine coupling, MHz, 1, 2 or 3 principal values.
+    P : tuple of float
+        Quadrupole coupling, MHz, traceless.
+    A_tilt, P_tilt : (alpha, beta, gamma)
+        rad.
+    count : int
+        How many equivalent ones there are.
+    couples_to : int
+        Which spin, counted from 1.
+    treat : str
+        "auto", "exact", "first order" or "second order".
     """
 
     isotope: str | None = None
@@ -169,8 +184,18 @@ class Nucleus:
 class Exchange:
     """Coupling of two spins, MHz: J S1.S2 + S1.T.S2 + d.(S1 x S2); J > 0 is antiferromagnetic.
 
-    `between` counts spins from 1 and orders `antisymmetric` (d, in molecular axes); `tilt` turns
-    the traceless tensor T (`dipolar`) only.
+    Attributes
+    ----------
+    between : (int, int)
+        Which spins, counted from 1; their order is that of d.
+    J : float
+        MHz.
+    dipolar : tuple of float
+        T, MHz, traceless.
+    tilt : (alpha, beta, gamma)
+        rad; turns T only.
+    antisymmetric : (float, float, float)
+        d, MHz, in molecular axes.
     """
 
     between: tuple[int, int] = (1, 2)
@@ -220,9 +245,20 @@ class Width:
 
 @dataclass(frozen=True)
 class Spread:
-    """Gaussian distributions across the sample, FWHM: g dimensionless; D, E, A in MHz; tilt in rad.
+    """Gaussian distributions across the sample, each as its FWHM.
 
-    `tilt` is that of a crystal's mosaic: each piece is turned by a little about each of three axes.
+    Attributes
+    ----------
+    g : tuple of float
+        Dimensionless, 1, 2 or 3 numbers.
+    D, E : float
+        MHz.
+    A : tuple of float
+        MHz, 1, 2 or 3 numbers.
+    correlation_g_A, correlation_D_E : float
+        Between the two distributions, -1 to 1.
+    tilt : float
+        rad; of a crystal's mosaic: each piece is turned by a little about each of three axes.
     """
 
     g: tuple[float, ...] = (0.0,)
@@ -260,6 +296,10 @@ class Species:
         How parameters are called: ``"cu"`` gives ``"cu.g_z"``.
     spins : tuple of Spin
         One, or several coupled by `exchange`.
+    nuclei : tuple of Nucleus
+    exchange : tuple of Exchange
+    width : Width
+    spread : Spread
     amount : float
         Relative number of spins (of species, not of unpaired electrons).
     populations : tuple of float or None

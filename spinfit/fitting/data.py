@@ -53,8 +53,8 @@ class Trace:
         mT and 1.
     field_uncertainty, frequency_uncertainty : float
         Standard uncertainties, mT and MHz.
-    sha256 : str
-        Of the input file.
+    file, sha256 : str
+        Path and digest of the input file.
     notes : tuple of (code, text)
         What the reader wants to warn of.
     """
@@ -105,6 +105,8 @@ class Lines:
     levels : ndarray of int, shape (n, 2), or None
         Lower and upper level, counted from 1 by energy; 0 where the file does not say.
     frequency, temperature, microwave, axis, start, group, field_offset, field_scale
+        As in `Trace`.
+    field_uncertainty, frequency_uncertainty, file, sha256, notes
         As in `Trace`.
     """
 
@@ -168,6 +170,12 @@ class Job:
 
     Attributes
     ----------
+    species : tuple of Species
+        With their start values.
+    sample : Sample
+        How they are oriented; the angles are those of the traces.
+    traces : tuple of Trace
+        Empty where only line positions are fitted.
     vary : tuple of str
         Names or groups, as the user wrote them, checked.
     limits : mapping of name -> (low, high)
@@ -178,8 +186,14 @@ class Job:
         "given", "near" (straight down from the start, nothing else is tried) or "auto".
     units : mapping of name -> unit
         The unit in which the job gave each parameter ("" for a plain number); outcomes use it.
-    text : str
-        The job file as it was read.
+    tolerance : float
+        Largest error of a spectrum relative to its largest value; fits compute finer where the noise asks for it.
+    name, path, text : str
+        Stem and path of the job file, and the file as it was read.
+    loss : str
+        "linear" for least squares, "soft_l1", "huber" or "cauchy".
+    loss_scale : float or None
+        Standard deviations of the noise at which the loss bends; None is the loss's own.
     lines : tuple of Lines
         Tables of line positions, fitted together with the traces.
     files : mapping of name -> bytes

@@ -19,11 +19,28 @@ from spinfit.markup import html_table
 class Value:
     """One parameter after the fit.
 
-    `uncertainty` is one standard deviation, the quadrature sum of `uncertainty_noise` (from the
-    covariance at the trace's noise) and `uncertainty_field` (from the stated uncertainties of the
-    field axis and of the frequency); all None when the parameter was not varied or when no
-    covariance could be had.  A `derived` value follows from varied ones through a model and cannot be
-    varied itself (g of a species that is given by its crystal field); its uncertainty is propagated.
+    Attributes
+    ----------
+    value : float
+        In `unit`.
+    uncertainty : float or None
+        One standard deviation, the quadrature sum of the next two.  All three are None when the parameter was
+        not varied or when no covariance could be had.
+    uncertainty_noise : float or None
+        From the covariance at the trace's noise.
+    uncertainty_field : float or None
+        From the stated uncertainties of the field axis and of the frequency.
+    unit : str
+        That of the job; "" for a plain number.
+    varied, tied : bool
+        Whether the fit moved it, or an expression of the job did.
+    at_limit : bool
+        Whether it ended at one of its limits.
+    start : float or None
+        Where it began, where it was varied.
+    derived : bool
+        Whether it follows from varied ones through a model and cannot be varied itself (g of a species that
+        is given by its crystal field); its uncertainty is then propagated.
     """
 
     value: float
@@ -42,8 +59,20 @@ class Value:
 class Quality:
     """How good the fit is.
 
-    `noise` is the estimated standard deviation of the first trace's points, in its signal's unit;
-    `finished` is False when the fit was interrupted.
+    Attributes
+    ----------
+    converged : bool
+        Whether the fit came to a minimum.
+    finished : bool
+        False when it was interrupted.
+    chi2_reduced : float
+        Near 1 where what is left is noise.
+    noise : float
+        Estimated standard deviation of the first trace's points, in its signal's unit.
+    points, free_parameters : int
+        Fitted points; parameters with the scales and baselines that were solved along.
+    aicc, bic : float
+        Smaller is better, between models of the same data.
     """
 
     converged: bool
@@ -58,7 +87,15 @@ class Quality:
 
 @dataclass(frozen=True)
 class Note:
-    """A warning: a stable `code` for scripts ("at_limit") and a sentence for people."""
+    """A warning.
+
+    Attributes
+    ----------
+    code : str
+        For scripts, and stable: "at_limit".
+    text : str
+        A sentence for people.
+    """
 
     code: str
     text: str
@@ -68,9 +105,30 @@ class Note:
 class Curves:
     """One trace with its fit; every array has shape (n,).
 
-    `field` is the true field (offset and scale applied), mT.  `fitted` includes `baseline`;
-    `parts` maps species name to its scaled signal without the baseline; `used` marks the points
-    that were fitted.  `weight` is there after a robust fit only: what each point counted, 0 where not used.
+    Attributes
+    ----------
+    trace : str
+        Its name.
+    frequency : float
+        MHz.
+    field : ndarray
+        True field (offset and scale applied), mT.
+    measured, fitted, residual : ndarray
+        In the signal's unit; `fitted` includes `baseline`, and `residual` is the difference.
+    baseline : ndarray
+        Polynomial, spline or background that was solved along.
+    used : ndarray of bool
+        Which points were fitted.
+    parts : mapping of species name -> ndarray
+        Its scaled signal without the baseline.
+    noise : float
+        Standard deviation of the points.
+    scale : float
+        Signal of the trace over that of the model.
+    detect : str
+        "derivative", "absorption" or "second derivative".
+    weight : ndarray or None
+        After a robust fit only: what each point counted, 0 where not used.
     """
 
     trace: str
@@ -94,6 +152,8 @@ class PositionTable:
 
     Attributes
     ----------
+    name : str
+        That of the table.
     frequency : float
         MHz.
     setting : ndarray, shape (n, 1) or (n, 2)
@@ -155,6 +215,12 @@ class Outcome:
     parameters : mapping of name -> Value
         All parameters of the model, in file order, varied or not; g, D and E that follow from a crystal
         field stand after its parameters.
+    quality : Quality
+        How good the fit is, in numbers.
+    warnings : tuple of Note
+        What to know before believing the values.
+    curves : tuple of Curves
+        One for each trace.
     correlation_names, correlation_matrix
         Of the varied parameters; shape (n, n); empty when there is no covariance.
     fractions : mapping of species name -> Value
@@ -168,6 +234,10 @@ class Outcome:
         Of a fit of line positions, which has no curves.
     axes : tuple of Axis
         Directions of the principal axes of tensors that were turned.
+    provenance : mapping
+        Digests of the input, versions, the text of the job.
+    message : str
+        How the search ended, in words.
     seconds : float
         Wall time; kept out of files that must be bit-identical.
     """
