@@ -6,6 +6,8 @@ import os
 
 THREADS = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "VECLIB_MAXIMUM_THREADS")
 """Environment variables that the libraries under numpy look at when they are loaded."""
+COMPILED = "NUMBA_NUM_THREADS"
+"""The one that the compiler of kernels looks at, and takes no nonsense in; the others pass over it by themselves."""
 
 
 def one_thread() -> None:
@@ -16,8 +18,11 @@ def one_thread() -> None:
     """
     for name in THREADS:
         os.environ.setdefault(name, "1")
+    given = os.environ.get(COMPILED, "1").strip()
+    if not (given.isascii() and given.isdigit() and int(given)):  # it would refuse to be loaded
+        os.environ[COMPILED] = "1"
 
 
 def single_threaded() -> dict[str, str]:
     """Return this process's environment with one thread each, whatever the user set, for processes side by side."""
-    return dict(os.environ) | dict.fromkeys((*THREADS, "NUMBA_NUM_THREADS"), "1")
+    return dict(os.environ) | dict.fromkeys((*THREADS, COMPILED), "1")

@@ -13,7 +13,7 @@ import pytest
 from spinfit import __version__, commands
 from spinfit.cli import build_parser, main
 from spinfit.errors import InputError
-from spinfit.threads import THREADS
+from spinfit.threads import COMPILED, THREADS
 
 
 def test_top_help_names_every_command(capsys):
@@ -162,3 +162,20 @@ def test_one_thread_unless_the_user_says_otherwise(given, kept):
     environment |= {} if given is None else dict.fromkeys(THREADS, given)
     done = subprocess.run([sys.executable, "-c", code], env=environment, capture_output=True, text=True, check=True)
     assert done.stdout.splitlines()[-1] == str([kept] * len(THREADS))
+
+
+def test_odd_numbers_of_threads_change_nothing(tmp_path):
+    """Of what the libraries under us refuse some at all; the spectrum is the same to the last bit."""
+    model = tmp_path / "m.toml"
+    model.write_text(
+        '[sweep]\nfrequency = "9.5 GHz"\nfield = "300, 380 mT"\npoints = 50\n'
+        '[[species]]\nS = "1/2"\ng = [2.0, 2.1, 2.3]\n[species.width]\ngaussian = "1 mT"\n'
+    )
+    command = [sys.executable, "-m", "spinfit.cli", "simulate", str(model)]
+    said = {}
+    for value in ("1", "", "0", "abc", "999", "-1", "1,2"):
+        environment = os.environ | dict.fromkeys((*THREADS, COMPILED), value)
+        done = subprocess.run(command, env=environment, capture_output=True, text=True, timeout=120)
+        assert (done.returncode, done.stderr) == (0, ""), value
+        said[value] = done.stdout
+    assert len(set(said.values())) == 1

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import codecs
 import hashlib
+import os
 import re
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -64,13 +65,27 @@ class RawTrace:
         set_field(self, "notes", tuple((code, on_one_line(text)) for code, text in self.notes))
 
 
+def _whole(path: Path) -> bytes:
+    """Return the bytes of a file that nobody changes meanwhile."""
+    with open(path, "rb") as stream:
+        before = os.fstat(stream.fileno())
+        if before.st_size > MAX_BYTES:
+            found = f"has {before.st_size:.3g} bytes"
+            raise InputError(found, f"a data file has at most {MAX_BYTES:.3g}", file=path)
+        content = stream.read(before.st_size + 1)  # one more than there should be, and never without end
+        after = os.fstat(stream.fileno())
+    if len(content) != before.st_size or (after.st_size, after.st_mtime_ns) != (before.st_size, before.st_mtime_ns):
+        raise InputError("was changed while it was read", "wait until the measurement has ended", file=path)
+    return content
+
+
 def load(path: str | Path) -> tuple[bytes, str]:
     """Return a file's bytes and their SHA-256.
 
     Raises
     ------
     InputError
-        For a missing, unreadable, empty or overlarge file, and for a folder.
+        For a missing, unreadable, empty or overlarge file, one that somebody is writing, and for a folder.
     """
     try:
         where = Path(path)
@@ -78,10 +93,7 @@ def load(path: str | Path) -> tuple[bytes, str]:
             raise InputError("is a folder", "name a data file in it", file=path)
         if where.exists() and not where.is_file():
             raise InputError("is not a regular file", "name a data file", file=path)
-        size = where.stat().st_size
-        if size > MAX_BYTES:
-            raise InputError(f"has {size:.3g} bytes", f"a data file has at most {MAX_BYTES:.3g}", file=path)
-        content = where.read_bytes()
+        content = _whole(where)
     except FileNotFoundError as error:
         raise InputError("there is no such file", "check the name and the folder", file=path) from error
     except (OSError, ValueError) as error:
