@@ -32,6 +32,9 @@ from spinfit.sweep import Sample
 Array = NDArray[np.float64]
 Transforms = list[NDArray[np.complex128]]
 
+# Spectra that are drawn together.
+_DRAWN_AT_ONCE = 32
+
 
 def signal_changes(kept: Kept, moved: Sequence[tuple[Species, Sample]]) -> list[Array | None]:
     """Return the linearised change of one species' spectrum for each of several small moves.
@@ -54,6 +57,9 @@ def signal_changes(kept: Kept, moved: Sequence[tuple[Species, Sample]]) -> list[
     out: list[Array | None] = [None] * len(moved)
     if len(kept.averages) != len(kept.systems):
         return out
+    transforms: dict[int, NDArray[np.complex128]] = {}
+    plain = kept.shape.transform(kept.grid.wavenumbers())
+    totals = np.array(kept.totals)
     followed: list[tuple[int, tuple[System, ...], tuple[Broadening | None, ...], Sample]] = []
     for number, (species, sample) in enumerate(moved):
         species = _treated(species, kept.species)
@@ -74,18 +80,27 @@ def signal_changes(kept: Kept, moved: Sequence[tuple[Species, Sample]]) -> list[
             modulation=kept.shape.modulation,
             phase=kept.shape.phase,
         )
-        out[number] = _of_shape(kept, shape)
+        reshaped = 0.0 if shape == kept.shape else shape.transform(kept.grid.wavenumbers()) - plain
+        transforms[number] = totals * reshaped
         if sample != kept.sample or _differs(kept, own, widths):
             followed.append((number, own, widths, sample))
-    if not followed:
-        return out
-    changes = _followed(kept, followed)
+    changes = _followed(kept, followed) if followed else []
     for (number, *_), change in zip(followed, changes, strict=True):
         if change is None:
-            out[number] = None
+            del transforms[number]
         else:
-            out[number] = out[number] + np.array([_drawn(kept, one, kept.shape) for one in change])
+            transforms[number] = transforms[number] + plain * np.array(change)
+    for numbers in _batched(list(transforms), len(totals)):
+        drawn = kept.grid.sample(kept.grid.spline(np.array([transforms[n] for n in numbers])), kept.fields)
+        for number, one in zip(numbers, drawn, strict=True):
+            out[number] = one
     return out
+
+
+def _batched(numbers: list[int], rows: int) -> list[list[int]]:
+    """Cut a list into pieces of at most `_DRAWN_AT_ONCE` rows, each number having as many."""
+    size = max(_DRAWN_AT_ONCE // max(rows, 1), 1)
+    return [numbers[k : k + size] for k in range(0, len(numbers), size)]
 
 
 def field_slope(kept: Kept) -> Array:
@@ -118,13 +133,6 @@ def _alike(sample: Sample, like: Sample) -> bool:
     return sample == like or (
         sample.form == like.form == "crystal" and replace(sample, tilt=like.tilt, angle_zero=like.angle_zero) == like
     )
-
-
-def _of_shape(kept: Kept, shape: Shape) -> Array:
-    """Return the change that a change of the line shape makes, shape (angles, n)."""
-    if shape == kept.shape:
-        return np.zeros((len(kept.totals), len(kept.fields)))
-    return np.array([_drawn(kept, t, shape) - _drawn(kept, t, kept.shape) for t in kept.totals])
 
 
 def _requests(kept: Kept) -> list[Request]:

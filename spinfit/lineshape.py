@@ -189,20 +189,22 @@ class FieldGrid:
 
     def render(self, transform: NDArray[np.complex128], shape: Shape) -> Array:
         """Return the spline coefficients, shape (count,), of a transform broadened by a shape."""
-        return fft.irfft(
-            transform * shape.transform(self.wavenumbers()) * (_of_splines(self.count)[1] / self.step), self.count
-        )
+        return self.spline(transform * shape.transform(self.wavenumbers()))
+
+    def spline(self, transforms: NDArray[np.complex128]) -> Array:
+        """Return the spline coefficients, shape (..., count), of the transforms of spectra."""
+        return fft.irfft(transforms * (_of_splines(self.count)[1] / self.step), self.count)
 
     def coefficients(self, histograms: dict[int, Array], shape: Shape) -> Array:
         """Return the spline coefficients, shape (count,), of the spectrum of deposits by order."""
         return self.render(sum(self.transform(h, order) for order, h in histograms.items()), shape)
 
     def sample(self, coefficients: Array, fields: Array) -> Array:
-        """Return the spline's values at any fields, same shape as `fields`."""
+        """Return the values at any fields, shape (..., n), of splines, shape (..., count)."""
         x = (fields - self.start) / self.step
         i = np.clip(x.astype(np.intp), 1, self.count - 3)
         taps = kernels.taps(x - i)
-        return sum(taps[k] * coefficients[i + (k - 1)] for k in range(4))
+        return sum(taps[k] * coefficients.take(i + (k - 1), axis=-1) for k in range(4))
 
 
 def smear_kernel(k: Array, size: float) -> Array:

@@ -33,7 +33,7 @@ Array = NDArray[np.float64]
 _ERROR_TO_NOISE = 0.02
 _FINEST = 0.1
 # Until then chi-squared need not be known better than this times its value per point.
-_ROUGH_GAIN = 0.03
+_ROUGH_GAIN = 0.3
 
 
 def fit(job: Job, *, progress: Progress | None = None, simulate: Simulate = _engine) -> Outcome:

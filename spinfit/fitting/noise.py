@@ -205,15 +205,11 @@ def _unbiased_covariances(residual: Array, basis: Array, lags: int) -> Array:
     E[sum_i r_i r_(i+l)] = 1/2 sum_m c_m tr(S_l (1-H) S_m (1-H)), S_0 = 1 taken once.
     """
     n = residual.size
-    moved = [_shifted(basis, lag) for lag in range(lags + 1)]
-    inner = [basis.T @ m for m in moved]
-    system = np.empty((lags + 1, lags + 1))
-    for row in range(lags + 1):
-        for column in range(row, lags + 1):
-            trace = 0.0 if row != column else (n if row == 0 else 2.0 * (n - row))
-            trace -= 2.0 * float(np.sum(moved[row] * moved[column]))
-            trace += float(np.sum(inner[row] * inner[column].T))
-            system[row, column] = system[column, row] = trace
+    moved = np.array([_shifted(basis, lag) for lag in range(lags + 1)])
+    inner = basis.T @ moved
+    flat = moved.reshape(lags + 1, -1)
+    system = np.einsum("lij,mji->lm", inner, inner) - 2.0 * (flat @ flat.T)
+    system[np.diag_indices(lags + 1)] += [n if lag == 0 else 2.0 * (n - lag) for lag in range(lags + 1)]
     products = _lagged_products(residual, lags)
     products[1:] *= 2.0
     return linalg.solve(system, products, assume_a="sym")

@@ -32,6 +32,8 @@ DEFAULT_UNITS = {"energy": "MHz", "field": "mT", "angle": "deg", "number": ""}
 WORD = re.compile(r"[A-Za-z0-9_]+")
 """What a part of a name is made of."""
 
+# Species, samples and traces with values put in that are remembered: the columns of a Jacobian move one of many.
+_BUILT = 256
 _FROM_FIELD = re.compile(r"g(_x|_y|_z|_perp|_par)?|D|E|rhombicity|[gD]_tilt(_alpha|_beta|_gamma)?")
 
 
@@ -165,6 +167,7 @@ class Binding:
                 raise InputError(f'two parameters are called "{slot.name}"', "give one of the two another name")
             self._paths[slot.name] = slot.path
             self.parameters[slot.name] = self._parameter(slot, units or {})
+        self._built: dict[Any, Any] = {}
 
     def _parameter(self, slot: Slot, units: Mapping[str, str]) -> Parameter:
         if slot.path[0] in ("turn", "group"):
@@ -218,15 +221,30 @@ class Binding:
                 corrections.append((path, float(value)))
             else:
                 _put(tree, path, float(value))
-        model = _rebuild(self._model, tree)
-        if any(one.crystal_field is not None for one in model.species):
-            model = replace(model, species=tuple(map(_resolved, model.species)))
-        traces = list(model.traces)
+        changes = {str(branch): below for branch, below in tree.items()}
+        species = tuple(
+            self._part(one, ("species", n), changes.get("species", {})) for n, one in enumerate(self._model.species)
+        )
+        sample = self._part(self._model.sample, ("sample", 0), {0: changes["sample"]} if "sample" in changes else {})
+        traces = [self._part(one, ("traces", n), changes.get("traces", {})) for n, one in enumerate(self._model.traces)]
         for (how, which, key), value in corrections:
             for n, trace in enumerate(traces):
                 if n == which if how == "turn" else which in groups_of(trace):
                     traces[n] = _correct(trace, str(key), value)
-        return model.species, model.sample, tuple(traces)
+        return species, sample, tuple(traces)
+
+    def _part(self, node: Any, place: tuple[str, int], changes: Mapping[str | int, Any]) -> Any:
+        """Return one species, the sample or one trace with its changes put in, the same object for the same changes."""
+        change = changes.get(place[1])
+        if change is None:
+            return _resolved(node) if isinstance(node, Species) else node
+        key = place, repr(change)
+        if key not in self._built:
+            if len(self._built) >= _BUILT:
+                self._built.clear()
+            built = _rebuild(node, change)
+            self._built[key] = _resolved(built) if isinstance(node, Species) else built
+        return self._built[key]
 
 
 def _resolved(species: Species) -> Species:

@@ -39,6 +39,10 @@ Array = NDArray[np.float64]
 _STEP_EFFECT = 0.02
 # Beyond these the step is taken again.
 _STEP_WINDOW = (0.004, 0.08)
+# The engine's tolerance while the size of such a step is sought.
+_TRIED_AT = 1e-2
+# Parameters whose columns need no difference of simulations.
+_KNOWN_COLUMNS = (".amount", ".field_offset", ".field_scale", ".phase")
 # Half the distance of the two sides of a derivative with respect to the field, in narrowest widths.
 _FIELD_STEP = 0.02
 # Points to a peak-to-peak width that a broadened trace keeps.
@@ -229,6 +233,7 @@ class Problem:
         self.signals = Signals(simulate)
         self.evaluations = 0
         self._steps = np.array([0.01 * self.parameters[name].scale for name in self.names])
+        self._tried = [False] * len(self.names)
 
     def _limits(self, name: str) -> tuple[float, float]:
         parameter = self.parameters[name]
@@ -283,18 +288,23 @@ class Problem:
         chi2 = float(residual @ residual)
         return Point(free, species, sample, traces, tuple(signals), tuple(scales), residual, chi2)
 
-    def jacobian(self, point: Point, view: View, *, central: bool = False) -> Array:
+    def jacobian(
+        self, point: Point, view: View, *, central: bool = False, wanted: Collection[int] | None = None
+    ) -> Array:
         """Projected Jacobian of the residual, shape (points, k).
 
         Columns follow from the engine's own derivatives; where it cannot tell, differences of
         simulations take their place.  Forward differences lead a descent well; the uncertainties want
-        `central` ones, whose error does not look like a change of width.
+        `central` ones, whose error does not look like a change of width.  Columns that are not `wanted`
+        are 0.
         """
-        columns = []
-        for k, changes in enumerate(self._followed(point, view, range(len(self.names)))):
-            changes = self._column(point, view, k, central) if changes is None else changes
-            columns.append(self.projected_change(point, view, changes))
-        return np.stack(columns, axis=1) if columns else np.zeros((view.points, 0))
+        wanted = range(len(self.names)) if wanted is None else wanted
+        columns = np.zeros((len(self.names), view.points))
+        followed = self._followed(point, view, wanted)
+        for k in wanted:
+            changes = self._column(point, view, k, central) if followed[k] is None else followed[k]
+            columns[k] = self.projected_change(point, view, changes)
+        return columns.T
 
     def column(self, point: Point, view: View, index: int) -> Array:
         """One column of the projected Jacobian, shape (points,)."""
@@ -350,6 +360,7 @@ class Problem:
         scale, and is remembered.
         """
         largest = self.parameters[self.names[index]].scale
+        self._try_step(point, view, index)
         for _ in range(4):
             step = float(np.clip(self._steps[index], 1e-7 * largest, largest))
             step = self._inside(point.free[index], step, index)
@@ -366,6 +377,16 @@ class Problem:
                 return changes
             changes = [a if a is None or b is None else (a + b) / 2 for a, b in zip(changes, behind, strict=True)]
         return changes
+
+    def _try_step(self, point: Point, view: View, index: int) -> None:
+        """Let the step of a parameter's first difference find its size where a simulation is cheap."""
+        if self._tried[index]:
+            return
+        self._tried[index] = True
+        if view.stage.tolerance >= _TRIED_AT or self.names[index].endswith(_KNOWN_COLUMNS):
+            return
+        cheap = replace(view, stage=replace(view.stage, tolerance=_TRIED_AT))
+        self._column(self.evaluate(point.free, cheap), cheap, index, False)
 
     def _one_side(self, point: Point, view: View, index: int, step: float) -> tuple[float, list[Array | None], float]:
         """Return the step and the difference over it, on the other side where the model ends on this one."""

@@ -146,7 +146,8 @@ class Signals:
     def __init__(self, simulate: Simulate) -> None:
         self._simulate = simulate
         self._keeps = "keep" in inspect.signature(simulate).parameters
-        self._kept: OrderedDict[Any, Kept] = OrderedDict()
+        self._kept: OrderedDict[Any, tuple[Kept, int]] = OrderedDict()
+        self._held = 0
         self._memory: OrderedDict[Any, Array] = OrderedDict()
         self.simulations = 0
         self.reports: dict[tuple[str, str], Any] = {}
@@ -198,7 +199,7 @@ class Signals:
         key = self._key(species, trace, sample, field, stage)
         if key not in self._kept:
             self._simulated(key, species, trace, sample, field, stage)
-        kept = self._kept.get(key)
+        kept, _ = self._kept.get(key, (None, 0))
         if kept is None or not kept.totals:
             return None
         there = [
@@ -241,11 +242,13 @@ class Signals:
 
     def _keep(self, key: Any, kept: Sequence[Kept]) -> None:
         """Remember what derivatives start from, the last few, within bounds of memory."""
-        if kept and kept[0].nbytes <= _KEPT_BYTES:
-            self._kept[key] = kept[0]
-            self._kept.move_to_end(key)
-        while sum(one.nbytes for one in self._kept.values()) > _KEPT_BYTES:
-            self._kept.popitem(last=False)
+        size = kept[0].nbytes if kept else _KEPT_BYTES + 1
+        if size <= _KEPT_BYTES:
+            _, before = self._kept.pop(key, (None, 0))
+            self._kept[key] = kept[0], size
+            self._held += size - before
+        while self._held > _KEPT_BYTES:
+            self._held -= self._kept.popitem(last=False)[1][1]
 
     def total(self, species: tuple[Species, ...], trace: Trace, sample: Sample, field: Array, stage: Stage) -> Array:
         """Sum of amount times part over the species, shape (n,)."""

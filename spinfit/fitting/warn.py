@@ -88,7 +88,7 @@ def check_lines(problem: Problem, point: Point, view: View) -> None:
 def _has_line(problem: Problem, one: Species, point: Point, view: View, index: int) -> bool:
     seen, trace = view.seen[index], point.traces[index]
     coarse = Stage(0.0, 1e-2)
-    inside = float(np.abs(problem.signals.part(one, trace, point.sample, seen.field, coarse)).max())
+    inside = float(np.abs(problem.signals.part(one, trace, point.sample, seen.field, view.stage)).max())
     if inside == 0 or not math.isfinite(inside):
         return False
     # Wide enough for g from 1 up; narrow lines may fall between the points, which is on the safe side.
