@@ -11,12 +11,15 @@ from scipy.signal import lfilter
 from stub_engine import simulate
 
 from spinfit.errors import InputError
+from spinfit.fitting.data import Job, Trace
 from spinfit.fitting.driver import fit as real_fit
 from spinfit.fitting.residuals import Problem, full_view
 from spinfit.fitting.signs import restored
 from spinfit.fitting.solve import descend
 from spinfit.fitting.starts import neighbours
-from spinfit.species import Nucleus
+from spinfit.species import Nucleus, Species, Spin, Width
+from spinfit.spectrum import simulate as engine
+from spinfit.sweep import Sample, Sweep
 from spinfit.units import field_of
 
 
@@ -275,6 +278,28 @@ def test_sign_of_A():
     outcome = fit(jobs.job(jobs.trace(signal), model=model, vary=("r.g", "r.1H.A")))
     note = next(n for n in outcome.warnings if n.code == "sign_of_A")
     assert "r.1H.A" in note.text
+
+
+@pytest.mark.parametrize(("temperature", "said"), [(None, True), (1.0, False)])
+def test_signs_that_are_known_against_each_other_only(temperature: float | None, said: bool) -> None:
+    """H of -D, -A with the field turned round is -H but for the nuclear Zeeman term, so that at one high temperature
+    the spectra agree; populations at 1 K tell them apart, and the second-order shifts tell D against A."""
+    species = Species("mn", (Spin(1.0, (2.0,), D=400.0),), (Nucleus("55Mn", A=(-250.0,)),), width=Width(gaussian=1.0))
+    sweep = Sweep(9500.0, (280.0, 400.0), 400, temperature=temperature)
+    signal = engine(species, sweep).signal
+    for one, other in ((-1, 1), (1, -1), (-1, -1)):
+        flipped = replace(
+            species,
+            spins=(replace(species.spins[0], D=400.0 * one),),
+            nuclei=(replace(species.nuclei[0], A=(-250.0 * other,)),),
+        )
+        far = np.abs(engine(flipped, sweep).signal - signal).max() / np.abs(signal).max()
+        assert (far < 1e-3) == (one == other and said)
+    noisy = signal + 0.01 * np.abs(signal).max() * np.random.default_rng(5).normal(size=signal.size)
+    trace = Trace("t", sweep.fields, noisy, np.ones(400, dtype=bool), frequency=9500.0, temperature=temperature)
+    outcome = real_fit(Job((species,), Sample(), (trace,), ("mn.D", "mn.55Mn.A", "mn.width.gaussian")))
+    assert ("sign_of_D_and_A" in codes(outcome)) is said
+    assert not {"sign_of_D", "sign_of_A"} & codes(outcome)
 
 
 def test_signs_that_do_not_matter_are_those_of_the_start():

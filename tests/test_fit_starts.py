@@ -111,3 +111,21 @@ def test_axes_keep_the_names_of_the_start_under_a_misfit(seed: int) -> None:
     assert outcome.quality.chi2_reduced > 1.2
     g = [outcome.parameters[f"r.g_{axis}"].value for axis in "xyz"]
     assert g == sorted(g, reverse=True)
+
+
+@pytest.mark.parametrize(("gaussian", "seed"), [(0.325, 2), (0.3138, 3)])
+def test_axes_keep_the_names_of_the_start_in_a_plain_fit(gaussian: float, seed: int) -> None:
+    # A step across g_x = g_y costs nothing in a powder; the names went with it.
+    truth = Species("r", (Spin(g=(2.0061, 2.0043, 2.0021)),), width=Width(gaussian=gaussian))
+    sweep = Sweep(9432.1, (332.0, 341.0), 600)
+    signal = engine(truth, sweep).signal
+    signal = signal / np.abs(signal).max() + np.random.default_rng(seed).normal(0, 0.02, sweep.points)
+    trace = Trace("t", sweep.fields, signal, np.ones(sweep.points, dtype=bool), frequency=9432.1)
+    start = Species("r", (Spin(g=(2.007, 2.004, 2.002)),), width=Width(gaussian=0.5))
+    found = fit(Job((start,), Sample(), (trace,), ("r.g", "r.width.gaussian"))).parameters
+    for axis, true in zip("xyz", truth.spins[0].g, strict=True):
+        # Nothing is uncertain here but the noise.
+        assert abs(found[f"r.g_{axis}"].value - true) < 4 * found[f"r.g_{axis}"].uncertainty
+    # A tie knows one of them by its name: nothing is renamed.
+    tied = Job((start,), Sample(), (trace,), ("r.g_x", "r.g_y", "r.width.gaussian"), ties={"r.g_z": "4.01 - r.g_x"})
+    assert fit(tied).parameters["r.g_z"].tied

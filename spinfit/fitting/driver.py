@@ -18,7 +18,7 @@ from spinfit.fitting.residuals import Problem, Progress, View, full_view
 from spinfit.fitting.robust import forgiving, is_robust, robust_notes, settle
 from spinfit.fitting.search import Search
 from spinfit.fitting.signals import Simulate
-from spinfit.fitting.signs import restored
+from spinfit.fitting.signs import named_as_started, restored
 from spinfit.fitting.solve import Descent, Goal, Interrupted, descend
 from spinfit.fitting.summary import outcome_of
 from spinfit.fitting.uncertainty import spread_of
@@ -109,7 +109,7 @@ def _search(problem: Problem, rough: View, progress: Progress | None) -> tuple[D
         view = full_view(problem.job.traces, problem.noises, engine_tolerance(problem))
         fine = descend(problem, view, found.point.free, goal=Goal(central=True), progress=progress)
         if not automatic:
-            fine = restored(problem, view, fine, progress)
+            fine = named_as_started(problem, view, restored(problem, view, fine, progress), progress)
         if is_robust(problem):
             fine, view = settle(problem, view, fine, goal=Goal(), progress=progress)
         return fine, view, True

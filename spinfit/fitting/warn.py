@@ -193,20 +193,31 @@ def _residual_notes(point: Point, view: View, spread: Covariances) -> list[Note]
 
 
 def _sign_notes(problem: Problem, view: View, point: Point, jacobian: Array, spread: Covariances) -> list[Note]:
-    """Try the other sign of D (with E) and of A, the rest refitted linearly."""
-    notes = []
+    """Try the other sign of D (with E), of A, and of both together, the rest refitted linearly."""
+    notes: list[Note] = []
     values = problem.values(point.free)
     moving = set(values)
     for n, one in enumerate(point.species):
         zfs = [x for x in moving if x.startswith(f"{one.name}.") and x.rsplit(".", 1)[1] in ("D", "E")]
         flips = [("D", [x for x in zfs if x.endswith(".D")], _flip_zfs)]
         flips.append(("A", [x for x in moving if x.startswith(f"{one.name}.") and _is_hyperfine(x)], _flip_hyperfine))
+        before = len(notes)
         for symbol, names, flip in flips:
             if names and _as_good(problem, view, point, jacobian, spread, n, flip(one)):
                 named = _listed(sorted(names))
                 why = " without a temperature" if symbol == "D" and point.traces[0].temperature is None else ""
                 text = f"The sign of {named} is not determined{why}: the other sign fits as well."
                 notes.append(Note(f"sign_of_{symbol}", text))
+        (_, ds, _), (_, hyperfine, _) = flips
+        both = _flip_zfs(_flip_hyperfine(one))
+        # The hyperfine shifts know the sign of A against that of D, as in Mn(II); populations alone know either.
+        if ds and hyperfine and len(notes) == before and _as_good(problem, view, point, jacobian, spread, n, both):
+            named = _listed(sorted(ds + hyperfine))
+            text = (
+                f"The signs of {named} are determined only against each other: with all of them turned round the fit "
+                "is as good."
+            )
+            notes.append(Note("sign_of_D_and_A", text))
     return notes
 
 

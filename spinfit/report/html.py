@@ -51,8 +51,8 @@ MOST_PAIRS = 4
 
 # Warnings that tell what the data leave open, by their codes; all others are about the measurement or the fit.
 LEFT_OPEN = (
-    "at_limit", "undetermined", "single_signs", "sign_of_D", "sign_of_A", "other_setting", "one_angle", "few_lines",
-    "crystal_field_rank", "lines_beyond_sweep",
+    "at_limit", "undetermined", "single_signs", "sign_of_D", "sign_of_A", "sign_of_D_and_A", "other_setting",
+    "one_angle", "few_lines", "crystal_field_rank", "lines_beyond_sweep",
 )  # fmt: skip
 
 
