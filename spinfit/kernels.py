@@ -13,6 +13,8 @@ from collections.abc import Callable
 import numpy as np
 from numpy.typing import NDArray
 
+from spinfit.compiling import kept_compiled
+
 try:
     from numba import njit
 except ImportError:  # the extra is optional
@@ -159,13 +161,8 @@ def deposit_sheet_changes_numpy(
 
 def compiled(function: Callable) -> Callable:
     """Compile a kernel where numba is installed; return it as it is otherwise."""
-    if njit is None:
-        return function
-    try:
-        # without checks for division by zero, which would keep loops from being vectorised
-        return njit(cache=True, error_model="numpy")(function)
-    except RuntimeError:  # nowhere to keep the compiled code: compile anew in each process
-        return njit(error_model="numpy")(function)
+    # without checks for division by zero, which would keep loops from being vectorised
+    return function if njit is None else kept_compiled(njit, function, error_model="numpy")
 
 
 taps_at, slopes_at = compiled(taps), compiled(slopes_of_taps)

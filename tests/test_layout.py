@@ -32,6 +32,7 @@ ORDER = (
     "threads",
     "units",
     "hermite",
+    "compiling",
     "kernels",
     "moments",
     "operators",
