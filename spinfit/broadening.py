@@ -41,6 +41,8 @@ class Broadening:
     g : ndarray, shape (3,)
     axes : ndarray, shape (3, 3)
         g axes as columns, molecular components.
+    spread : tuple of str
+        What each parameter is in which the Hamiltonian is linear, such as "g_z"; turns of a crystal come after them.
     """
 
     h0: NDArray[np.complex128]
@@ -49,6 +51,7 @@ class Broadening:
     hidden: Array
     g: Array
     axes: Array
+    spread: tuple[str, ...] = ()
 
     def variance(self, shifts: Array, directions: Array) -> Array:
         """Return the squared frequency width of transitions, MHz^2, shape (m, p).
@@ -90,7 +93,7 @@ class Broadening:
 def broadening(species: Species) -> tuple[Broadening, ...] | None:
     """Return the broadening of each system of a species, None where every resonance is alike."""
     hidden = principal(species.width.hidden_hyperfine)
-    changes, covariance = _changes(species)
+    changes, covariance, names = _changes(species)
     tilt = species.spread.tilt
     if not changes and not hidden.any() and not tilt:
         return None
@@ -106,12 +109,13 @@ def broadening(species: Species) -> tuple[Broadening, ...] | None:
         zeeman = np.array([other[number].zeeman - system.zeeman for other in moved]).reshape(len(moved), 3, n, n)
         if tilt:
             h0 = np.concatenate((h0, np.zeros((3, n, n))))
-            zeeman = np.concatenate((zeeman, tilt * _turned(system.zeeman)))
-        out.append(Broadening(h0, zeeman, covariance, hidden, principal(spin.g), tilt_matrix(spin.g_tilt)))
+            zeeman = np.concatenate((zeeman, tilt * turned(system.zeeman)))
+        axes = tilt_matrix(spin.g_tilt)
+        out.append(Broadening(h0, zeeman, covariance, hidden, principal(spin.g), axes, names))
     return tuple(out)
 
 
-def _turned(zeeman: NDArray[np.complex128]) -> NDArray[np.complex128]:
+def turned(zeeman: NDArray[np.complex128]) -> NDArray[np.complex128]:
     """Change of dH/dB when the sample is turned about x, y or z, for an angle of 1 rad, shape (3, 3, n, n).
 
     Only how the field stands to the sample counts, and n + phi a x n in place of n is linear in n.
@@ -120,8 +124,8 @@ def _turned(zeeman: NDArray[np.complex128]) -> NDArray[np.complex128]:
     return np.einsum("aji,ikl->ajkl", turns, zeeman)
 
 
-def _changes(species: Species) -> tuple[list[Species], Array]:
-    """Return the species moved by each spread's FWHM in turn, and the correlation of the spreads.
+def _changes(species: Species) -> tuple[list[Species], Array, tuple[str, ...]]:
+    """Return the species moved by each spread's FWHM in turn, the correlation of the spreads, and their names.
 
     The Hamiltonian is linear in all of them, so that the difference is the derivative times the
     width.  D is spread at constant E, whichever way E was given.
@@ -158,7 +162,9 @@ def _changes(species: Species) -> tuple[list[Species], Array]:
                 covariance[i, j] = spread.correlation_g_A
             elif pair == {"D", "E"}:
                 covariance[i, j] = spread.correlation_D_E
-    return changes, covariance
+    suffixes = {1: ("",), 2: ("_perp", "_par"), 3: ("_x", "_y", "_z")}
+    sizes = {"g": len(spread.g), "A": len(spread.A)}
+    return changes, covariance, tuple(kind + suffixes[sizes.get(kind, 1)][number] for kind, number in labels)
 
 
 def _components(widths: tuple[float, ...], values: tuple[float, ...]) -> list[tuple[int, tuple[int, ...]]]:

@@ -20,6 +20,7 @@ from spinfit.branches import Request
 from spinfit.broadening import Broadening, broadening
 from spinfit.changes import average_changes, line_changes
 from spinfit.crystal import moved_directions
+from spinfit.distribution import axes, expanded
 from spinfit.errors import InputError
 from spinfit.exact import Lines
 from spinfit.hamiltonian import System, systems
@@ -69,9 +70,13 @@ def signal_changes(kept: Kept, moved: Sequence[tuple[Species, Sample]]) -> list[
             own = systems(species, perturb=True)
         except InputError:
             continue
+        widths = broadening(species) or (None,) * len(own)
+        if kept.mixture:
+            if widths[0] is None or axes(widths[0]).shape[1] != len(next(iter(kept.mixture)).at):
+                continue
+            own, widths = expanded(own, widths, kept.mixture)
         if [s.spins for s in own] != [s.spins for s in kept.systems]:
             continue
-        widths = broadening(species) or (None,) * len(own)
         if any((a is None) != (b is None) for a, b in zip(widths, _broadenings(kept), strict=True)):
             continue
         shape = replace(

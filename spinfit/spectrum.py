@@ -5,17 +5,19 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit.alignment import aligned
+from spinfit.alignment import aligned, mesh_directions
 from spinfit.branches import FWHM_PER_SIGMA, Request
 from spinfit.broadening import Broadening, broadening
-from spinfit.crystal import crystal, remarks
+from spinfit.crystal import crystal, remarks, site_directions
+from spinfit.distribution import AVERAGED, ENOUGH, Mixture, Node, averaged, expanded
 from spinfit.errors import InputError
 from spinfit.exact import Lines
+from spinfit.first_order import first_order_errors
 from spinfit.hamiltonian import System, systems
 from spinfit.levels import shares_unevenly
 from spinfit.lineshape import FieldGrid, Shape
@@ -25,6 +27,7 @@ from spinfit.sheets import SMEAR_MOST, SMEAR_REACH, Grain
 from spinfit.solution import solution
 from spinfit.species import Species
 from spinfit.sweep import Sample, Sweep
+from spinfit.symmetry import symmetry_of
 from spinfit.transitions import remarks as outside_remarks
 from spinfit.transitions import transitions
 from spinfit.treatment import Treatment, decided
@@ -90,6 +93,9 @@ class Kept:
         Of each system: `spinfit.powder.Average`, or a crystal's `spinfit.exact.Lines`; empty for other samples.
     totals : list of ndarray
         Transform of the resonances, weighted over the systems, one for each angle.
+    mixture : Mixture
+        Where widths of first order were not good enough, the nodes of the distribution: `systems` are then
+        those of each node in turn, weighted by its share.
     """
 
     species: Species
@@ -103,6 +109,7 @@ class Kept:
     systems: tuple[System, ...]
     averages: list[Average | Lines]
     totals: list[NDArray[np.complex128]]
+    mixture: Mixture = field(default_factory=dict)
 
     @property
     def nbytes(self) -> int:
@@ -228,29 +235,29 @@ def _part(
     one = treatment.species
     every = systems(one, perturb=True)
     widths = broadening(one) or (None,) * len(every)
-    averages: list[Average | Lines] = []
-    if sample.form != "powder":
-        totals, used, said = _oriented(treatment, request, widths, grid, shape, sample, angles, averages)
-        if kept is not None:
-            kept.append(Kept(one, sweep, sample, angles, request, shape, grid, fields, every, averages, totals))
-        return np.array([grid.sample(grid.render(t, shape), fields) for t in totals]), used, said
-    total, reports = _powders(every, widths, request, grid, averages)
-    said = _misgivings(one, reports, tolerance)
-    if _featureless(total, grid, scale, fields) and not any(report["looping"] for report in reports):
-        averages.clear()
+    asked = _Asked(every, widths, sample, angles, shape, grid, fields)
+    done = asked.averaged(request)
+    flat = sample.form == "powder" and _featureless(done.totals[0], grid, scale, fields)
+    if flat and not any(report["looping"] for report in done.reports):
         close = tolerance * CLOSER
-        closer = replace(request, tolerance=close, grain=Grain.of(shape, close))
-        again, reports = _powders(every, widths, closer, grid, averages)
-        here, there = (grid.sample(grid.render(t, shape), fields) for t in (total, again))
-        total, request, said = again, closer, _misgivings(one, reports, tolerance)
+        request = replace(request, tolerance=close, grain=Grain.of(shape, close))
+        before, done = done, asked.averaged(request)
+        here, there = (grid.sample(grid.render(one.totals[0], shape), fields) for one in (before, done))
         error = GAINED * float(np.abs(here - there).max() / max(np.abs(there).max(), 1e-300))
+        said = _misgivings(one, done, tolerance)
         if error > tolerance and not said:
             text = f"{one.name}: the window holds no features; the spectrum in it may err by {error:.1g} of its top"
             said = (("accuracy", text),)
+    else:
+        said = _misgivings(one, done, tolerance)
     if kept is not None:
-        kept.append(Kept(one, sweep, sample, angles, request, shape, grid, fields, every, averages, [total]))
+        own = done.systems, done.averages, done.totals, done.mixture
+        kept.append(Kept(one, sweep, sample, angles, request, shape, grid, fields, *own))
+    if sample.form == "crystal":
+        said = (*remarks(sample, angles, request.microwave), *said)
     said = (*treatment.warnings, *said)
-    return grid.sample(grid.render(total, shape), fields)[None], _used(reports, treatment), said
+    used = _used(done, treatment)
+    return np.array([grid.sample(grid.render(t, shape), fields) for t in done.totals]), used, said
 
 
 FEATURELESS = 0.02
@@ -273,66 +280,150 @@ def _featureless(total: NDArray[np.complex128], grid: FieldGrid, scale: float, f
     return bool(derivative * scale < FEATURELESS * absorption)
 
 
-def _powders(
-    every: tuple[System, ...],
-    widths: Sequence[Broadening | None],
-    request: Request,
-    grid: FieldGrid,
-    averages: list[Average | Lines],
-) -> tuple[NDArray[np.complex128], list[dict[str, Any]]]:
-    """Return the transform of all systems' resonances, and what was used for each."""
-    total: Any = 0.0
-    reports = []
-    for system, own in zip(every, widths, strict=True):
-        histograms, report = powder(system, replace(request, broadening=own), grid, keep=averages)
-        reports.append({"label": system.label, **vars(report)})
-        total = total + system.weight * histograms.transform()
-    return total, reports
+class _Done(NamedTuple):
+    """An average over the directions of a sample, and over a distribution where need be; see `Kept`."""
+
+    totals: list[NDArray[np.complex128]]
+    reports: list[dict[str, Any]]
+    systems: tuple[System, ...]
+    averages: list[Average | Lines]
+    mixture: Mixture
+    spreads: dict[str, Any]
 
 
-def _oriented(
-    treatment: Treatment,
-    request: Request,
-    widths: tuple[Broadening | None, ...],
-    grid: FieldGrid,
-    shape: Shape,
-    sample: Sample,
-    angles: tuple[float, ...],
-    averages: list[Average | Lines],
-) -> tuple[list[NDArray[np.complex128]], dict[str, object], tuple[tuple[str, str], ...]]:
-    """Return transforms of a crystal or an aligned sample, one for each angle, what was used, and warnings."""
-    totals: list[Any] = [0.0] * len(angles)
-    reports: list[dict[str, Any]] = []
-    warnings = dict.fromkeys(treatment.warnings)
-    if sample.form == "crystal":
-        warnings |= dict.fromkeys(remarks(sample, angles, request.microwave))
-    for system, own in zip(systems(treatment.species, perturb=True), widths, strict=True):
-        asked = replace(request, broadening=own)
-        if sample.form == "crystal":
-            histograms, report = crystal(system, asked, grid, sample, angles, averages)
-        else:
-            histogram, report = aligned(system, asked, grid, shape, sample, angles[0])
-            histograms = [histogram]
-            warnings |= dict.fromkeys(("directions", text) for text in report.get("notes", ()))
-        totals = [t + system.weight * h.transform() for t, h in zip(totals, histograms, strict=True)]
-        reports.append(report)
-    return totals, _used(reports, treatment), tuple(warnings)
+class _Asked(NamedTuple):
+    """What one species' spectrum is asked for, but for the accuracy."""
+
+    systems: tuple[System, ...]
+    widths: Sequence[Broadening | None]
+    sample: Sample
+    angles: tuple[float, ...]
+    shape: Shape
+    grid: FieldGrid
+    fields: Array
+
+    def averaged(self, request: Request) -> _Done:
+        """Average over directions, and over the distribution as far as widths of first order err."""
+        widths = self.widths[0]
+        names = [] if widths is None else [name for name in widths.spread if name in AVERAGED]
+        if not names:
+            return self.one(self.systems, self.widths, request)
+        first = self.first_order_errors(request)
+        told: dict[str, Any] = {"first_order_errors": dict(zip(names, map(float, first), strict=True))}
+        if first.sum() <= ENOUGH * request.tolerance:
+            return self.one(self.systems, self.widths, request)._replace(spreads=told)
+        found: dict[Node, _Done] = {}
+
+        def spectrum(node: Node) -> NDArray[np.complex128]:
+            if node not in found:
+                found[node] = self.one(*expanded(self.systems, self.widths, {node: 1.0}), request)
+            return np.array(found[node].totals)
+
+        def height(transforms: NDArray[np.complex128]) -> float:
+            drawn = (self.grid.sample(self.grid.render(one, self.shape), self.fields) for one in transforms)
+            return max(float(np.abs(one).max()) for one in drawn)
+
+        spectrum(centre := Node((0.0,) * len(names), (1.0,) * len(names)))
+        # no better than the sums over directions
+        reached = max(float(report.get("estimated_error", 0.0)) for report in found[centre].reports)
+        got = averaged(spectrum, height, first, max(request.tolerance, reached))
+        told |= {"nodes": len(found), "estimated_error": float(got.error)}
+        if len(got.mixture) == 1:
+            return found[next(iter(got.mixture))]._replace(spreads=told)
+        several = [found[node] for node in got.mixture]
+        averages = [average for one in several for average in one.averages]
+        reports = [report for one in several for report in one.reports]
+        systems, _ = expanded(self.systems, self.widths, got.mixture)
+        return _Done(list(got.total), reports, systems, averages, got.mixture, told)
+
+    def one(self, systems: Sequence[System], widths: Sequence[Broadening | None], request: Request) -> _Done:
+        """Average over directions alone."""
+        totals: list[Any] = [0.0] * len(self.angles)
+        reports: list[dict[str, Any]] = []
+        averages: list[Average | Lines] = []
+        for system, own in zip(systems, widths, strict=True):
+            asked = replace(request, broadening=own)
+            if self.sample.form == "powder":
+                histogram, report = powder(system, asked, self.grid, keep=averages)
+                histograms, used = [histogram], {"label": system.label, **vars(report)}
+            elif self.sample.form == "crystal":
+                histograms, used = crystal(system, asked, self.grid, self.sample, self.angles, averages)
+            else:
+                histogram, used = aligned(system, asked, self.grid, self.shape, self.sample, self.angles[0])
+                histograms = [histogram]
+            totals = [t + system.weight * h.transform() for t, h in zip(totals, histograms, strict=True)]
+            reports.append(used)
+        return _Done(totals, reports, tuple(systems), averages, {}, {})
+
+    def first_order_errors(self, request: Request) -> Array:
+        """Return the estimated error that each spread's width of first order makes, of the commonest system."""
+        system, own = max(zip(self.systems, self.widths, strict=True), key=lambda pair: pair[0].weight)
+        request = replace(request, broadening=own)
+        window = float(self.fields.min()), float(self.fields.max())
+        if self.sample.form == "crystal":
+            where = site_directions(self.sample, self.angles)
+            wave = None if request.microwave == "parallel" else where.microwave
+            return np.max(
+                [
+                    first_order_errors(system, request, window, *(v[own] for v in (where.field, where.share)), 0.0, w)
+                    for own in (where.angle == k for k in range(len(self.angles)))
+                    for w in [None if wave is None else wave[own]]
+                ],
+                axis=0,
+            )
+        symmetry = own.lowered(symmetry_of(system), system)
+        polar, azimuths = SAMPLED
+        directions, share = mesh_directions(None, symmetry, polar, azimuths)
+        return first_order_errors(system, request, window, directions, share, 0.5 * math.pi / polar)
 
 
-def _misgivings(one: Species, reports: list[dict[str, Any]], tolerance: float) -> tuple[tuple[str, str], ...]:
-    """Return what a powder spectrum cannot promise."""
+SAMPLED = (8, 6)
+"""Intervals of the mesh on which the error of the first order is told."""
+
+
+def _misgivings(one: Species, done: _Done, tolerance: float) -> tuple[tuple[str, str], ...]:
+    """Return what a spectrum cannot promise."""
     said = []
-    error = max(float(report["estimated_error"]) for report in reports)
-    if error > 1.5 * tolerance:
+    error = max(float(report.get("estimated_error", 0.0)) for report in done.reports)
+    if error > 1.5 * tolerance and "rings" in done.reports[0]:
         said.append(("accuracy", f"{one.name}: the spectrum may err by {error:.1g} of its top, not {tolerance:g}"))
-    notes = dict.fromkeys(text for report in reports for text in report["notes"])
-    return (*said, *(("accuracy", f"{one.name}: {text}") for text in notes))
+    error = done.spreads.get("estimated_error", 0.0)
+    if error > 1.5 * tolerance:
+        text = f"{one.name}: spreads are so wide that the spectrum may err by {error:.1g} of its top, not {tolerance:g}"
+        said.append(("accuracy", text))
+    code = "accuracy" if "rings" in done.reports[0] else "directions"
+    notes = dict.fromkeys(text for report in done.reports for text in report.get("notes", ()))
+    return (*said, *((code, f"{one.name}: {text}" if code == "accuracy" else text) for text in notes))
 
 
-def _used(reports: list[dict[str, Any]], treatment: Treatment) -> dict[str, object]:
-    """Return the report of one species: of each system, and how each nucleus was treated."""
-    used: dict[str, object] = {"systems": reports}
+def _used(done: _Done, treatment: Treatment) -> dict[str, object]:
+    """Return the report of one species: of each system, of its spreads, and how each nucleus was treated."""
+    used: dict[str, object] = {"systems": _joined(done)}
+    used |= {"spreads": done.spreads} if done.spreads else {}
     return used | ({"nuclei": list(treatment.nuclei)} if treatment.nuclei else {})
+
+
+SUMMED = ("directions", "diagonalisations", "mesh_points", "resonances")
+"""What a report counts for each node of a distribution."""
+
+
+def _joined(done: _Done) -> list[dict[str, Any]]:
+    """Return one report for each system, of all nodes together: the work summed, of all else the most."""
+    nodes = max(1, len(done.mixture))
+    count = len(done.reports) // nodes
+    out = []
+    for number in range(count):
+        several = done.reports[number::count]
+        joined = dict(several[0])
+        for key, value in joined.items():
+            if key in SUMMED:
+                joined[key] = sum(one[key] for one in several)
+            elif isinstance(value, (int, float)) and not isinstance(value, bool):
+                joined[key] = max(one[key] for one in several)
+            elif key == "notes":
+                joined[key] = list(dict.fromkeys(text for one in several for text in one.get(key, ())))
+        out.append(joined)
+    return out
 
 
 WIDEST = 4.0
