@@ -18,10 +18,12 @@ from test_cli_fit import G, write_trace
 
 from spinfit.cli import main
 from spinfit.errors import InputError
-from spinfit.files.tree import Data, Group, sealed, write_tree
+from spinfit.files.tree import DIGEST, Data, Group, digest_of, sealed, write_tree
 from spinfit.fitting.agreement import compare_outcomes
 from spinfit.fitting.outcome import Value
 from spinfit.kernels import COMPILED
+from spinfit.report import batch_archive
+from spinfit.report.archive import as_entry
 from spinfit.report.archive_reading import read_archive, read_group
 from spinfit.report.batch_archive import build_batch_archive, read_batch_summary, write_batch_archive
 
@@ -335,6 +337,41 @@ def test_a_batch_can_be_made_again_and_is_then_the_same(batch):
     assert read_batch_summary(path).fits == ("a", "b")
     assert list(skipped) == ["torn"]
     assert read_batch_summary(path).table == {}
+
+
+def test_a_known_archive_is_copied_and_any_other_is_read(batch, monkeypatch):
+    """What is copied as it stands is what reading and writing it gives; a hash of another file is no pass."""
+    read = write_batch_archive(batch)
+    trees = {name: read_group(read, (name,)) for name in "ab"}
+    known = {name: hashlib.sha256((batch / name / "outcome.h5").read_bytes()).hexdigest() for name in "ab"}
+    asked, single = [], batch_archive._single
+    monkeypatch.setattr(batch_archive, "_single", lambda path: asked.append(path.parent.name) or single(path))
+    path, skipped = build_batch_archive(batch, known | {"torn": "0" * 64})
+    assert asked == ["torn"]
+    for name, tree in trees.items():
+        copied = read_group(path, (name,))
+        assert digest_of(copied) == digest_of(tree)
+        assert copied.attrs == tree.attrs
+        assert read_archive(path, name).outcome.parameters == read_archive(read, name).outcome.parameters
+    assert set(skipped) == {"torn", "lost"}
+    with h5py.File(path) as whole:
+        assert whole["a"].attrs["NX_class"] == "NXentry"
+        assert whole["a/spinfit.outcome"].attrs["NX_class"] == "NXsubentry"
+        assert whole["a"].attrs[DIGEST] == read_group(batch / "a" / "outcome.h5").attrs[DIGEST]
+
+
+def test_a_batch_of_format_2_is_read(batch, tmp_path):
+    """Its fits have digests of their own, made anew when they became entries."""
+    path = tmp_path / "old.h5"
+    tree = read_group(batch / "a" / "outcome.h5")
+    with h5py.File(path, "w") as root:
+        write_tree(root.create_group("a"), sealed(as_entry(tree)))
+        root.attrs.update({"NX_class": "NXroot", "spinfit_format": 2, "spinfit_kind": "batch"})
+    assert read_archive(path, "a").record == read_archive(batch / "a" / "outcome.h5").record
+    with h5py.File(path, "r+") as root:
+        root["a/spinfit.outcome"].attrs["NX_class"] = "NXnote"
+    with pytest.raises(InputError, match="its digest is another"):
+        read_archive(path, "a")
 
 
 @pytest.mark.parametrize("name", ["..", ".", "../out", "/etc", "a/b", "", "spinfit.summary", "C:\\x", "x" * 300, "b"])

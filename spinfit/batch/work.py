@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 import math
 import os
 import threading
@@ -24,7 +25,7 @@ from spinfit.files.toml_table import parse_toml
 from spinfit.fitting.data import Job
 from spinfit.fitting.driver import fit
 from spinfit.fitting.outcome import Outcome
-from spinfit.report.outcome_files import DRAWN, NUMBERS, outcome_files
+from spinfit.report.outcome_files import ARCHIVE, DRAWN, NUMBERS, outcome_files
 from spinfit.report.outcome_json import clean
 
 NOTE_EVERY = 1.0
@@ -135,7 +136,7 @@ def _done(order: Order) -> dict[str, Any]:
         if error.errno in NO_ROOM:
             raise NoRoom(said(error)) from None
         return unwritten(order.name, order.free, order.hash, error)
-    return _record(order, job, outcome)
+    return _record(order, job, outcome) | {"archive": hashlib.sha256(contents[ARCHIVE]).hexdigest()}
 
 
 def _read(order: Order) -> Job:

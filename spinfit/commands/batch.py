@@ -181,11 +181,18 @@ def _write_parquet(summary: Path) -> str:
 
 def _more(report: Any, written: list[str], *, archive: bool) -> list[str]:
     """Make archive and report where they are not up to date; what goes wrong costs nothing of what is written."""
+    from spinfit.batch.journal import journal_records
     from spinfit.report.batch_archive import write_batch_archive
     from spinfit.report.batch_html import write_batch_report
 
     folder, wrong = report.summary.parent, []
-    makers = {"batch.h5": write_batch_archive} if archive else {}
+
+    def archived(folder: Path) -> Path:
+        # Those that wrote them have put down what they wrote.
+        known = {one["trace"]: one["archive"] for one in journal_records(folder) if "archive" in one}
+        return write_batch_archive(folder, known)
+
+    makers = {"batch.h5": archived} if archive else {}
     for name, make in (makers | {"report.html": write_batch_report}).items():
         if not report.changed and (folder / name).exists():
             continue

@@ -11,7 +11,7 @@ from typing import Any
 
 import h5py
 import numpy as np
-from h5py import h5a, h5d, h5g, h5o, h5p, h5s, h5t
+from h5py import h5a, h5d, h5f, h5g, h5o, h5p, h5s, h5t
 from numpy.typing import NDArray
 
 Attribute = str | int | float | list[str] | list[int] | list[float]
@@ -195,6 +195,45 @@ def _packed(values: NDArray[Any]) -> h5p.PropDCID:
         how.set_shuffle()
     how.set_deflate(4)
     return how
+
+
+def change_text_attribute(group: h5py.Group, key: str, changes: Mapping[str, str]) -> None:
+    """Put another text in place of the one that an attribute of a group, and of the groups in it, holds now."""
+    _, held = _text_kinds()
+    for name in (b".", *group.id):
+        node = h5o.open(group.id, name)
+        if not isinstance(node, h5g.GroupID) or not h5a.exists(node, key.encode()):
+            continue
+        attribute = h5a.open(node, key.encode())
+        value = np.empty((), dtype=_TEXT)
+        attribute.read(value, mtype=held)
+        text = value[()].decode() if isinstance(value[()], bytes) else value[()]
+        if text in changes:
+            attribute.write(np.array(changes[text], dtype=_TEXT), mtype=held)
+
+
+def copy_tree(into: h5py.Group, name: str, content: bytes) -> h5py.Group:
+    """Copy everything in an HDF5 file into a new group, by the library alone.
+
+    Only for files that are known to be as this program wrote them: a damaged one may crash the library.
+
+    Parameters
+    ----------
+    into : h5py.Group
+    name : str
+        Of the new group.
+    content : bytes
+        The file.
+    """
+    how = h5p.create(h5p.FILE_ACCESS)
+    how.set_fapl_core(_PACKED_FROM, False)
+    how.set_file_image(content)
+    source = h5f.open(b"in memory", h5f.ACC_RDONLY, how)
+    try:
+        h5o.copy(source, b"/", into.id, name.encode("utf-8"), lcpl=_utf8_names())
+    finally:
+        source.close()
+    return into[name]
 
 
 def tree_from(found: Mapping[str, Any], arrays: list[NDArray[Any]]) -> Group:

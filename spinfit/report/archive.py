@@ -28,7 +28,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spinfit import __version__
-from spinfit.files.tree import Attribute, Data, Group, sealed, write_tree
+from spinfit.files.tree import Attribute, Data, Group, change_text_attribute, sealed, write_tree
 from spinfit.fitting.data import Job, Lines, Trace
 from spinfit.fitting.outcome import Curves, Outcome, PositionTable, Value
 from spinfit.report.outcome_json import QUALITY_KEYS, outcome_text
@@ -38,6 +38,10 @@ _BLOCK = 2**17
 
 FORMAT_VERSION = 2
 """Of the layout; readers accept this and every older one.  1 held no input files and no digest."""
+
+BATCH_FORMAT_VERSION = 3
+"""Of the layout of a batch's archive.  Up to 2 each of its fits had a digest made anew; now it is that of the fit's own
+archive."""
 
 FORMAT, KIND = "spinfit_format", "spinfit_kind"
 """Attributes of the root: the layout's version, and "fit" or "batch"."""
@@ -242,16 +246,38 @@ def archive_tree(
     return Group(entries, attrs)
 
 
+_LOWERED = {"NXroot": "NXentry", "NXentry": "NXsubentry"}
+_RAISED = {lower: upper for upper, lower in _LOWERED.items()}
+
+
+def _moved(root: Group, classes: Mapping[str, str]) -> Group:
+    """Return a tree with the classes of its root and of the members of that changed."""
+
+    def changed(node: Group | Data) -> Group | Data:
+        kind = node.attrs.get("NX_class") if isinstance(node, Group) else None
+        return replace(node, attrs={**node.attrs, "NX_class": classes[kind]}) if kind in classes else node
+
+    top = changed(Group({name: changed(node) for name, node in root.members.items()}, root.attrs))
+    assert isinstance(top, Group)
+    return top
+
+
 def as_entry(root: Group) -> Group:
-    """Return a fit's tree as one entry of a larger archive: what were entries in it become subentries."""
+    """Return a fit's tree as one entry of a larger archive: what were entries in it become subentries.
 
-    def lowered(node: Group | Data) -> Group | Data:
-        if isinstance(node, Group) and node.attrs.get("NX_class") == "NXentry":
-            return replace(node, attrs={**node.attrs, "NX_class": "NXsubentry"})
-        return node
+    Its digest stays that of the tree by itself (see `as_root`).
+    """
+    return _moved(root, _LOWERED)
 
-    members = {name: lowered(node) for name, node in root.members.items()}
-    return Group(members, {**root.attrs, "NX_class": "NXentry"})
+
+def as_root(entry: Group) -> Group:
+    """Return the tree that was made an entry."""
+    return _moved(entry, _RAISED)
+
+
+def make_entry(copied: h5py.Group) -> None:
+    """Do to a copied tree in a file what `as_entry` does."""
+    change_text_attribute(copied, "NX_class", _LOWERED)
 
 
 def archive_bytes(

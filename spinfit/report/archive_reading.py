@@ -21,7 +21,16 @@ from spinfit.errors import InputError, nearest
 from spinfit.files.guard import SIGNATURE, ask
 from spinfit.files.tree import DIGEST, Data, Group, is_intact, tree_from
 from spinfit.fitting.outcome import Curves, Note, Outcome, PositionTable, Quality, Value
-from spinfit.report.archive import FLAGS, FORMAT, FORMAT_VERSION, KIND, NUMBERS, OUTCOME_GROUP
+from spinfit.report.archive import (
+    BATCH_FORMAT_VERSION,
+    FLAGS,
+    FORMAT,
+    FORMAT_VERSION,
+    KIND,
+    NUMBERS,
+    OUTCOME_GROUP,
+    as_root,
+)
 from spinfit.report.outcome_json import QUALITY_KEYS, clean
 
 LARGEST = 2**40
@@ -276,10 +285,11 @@ def version_of(attrs: Mapping[str, Any], file: str, *, kind: str = "fit") -> int
     version = attrs.get(FORMAT)
     if not isinstance(version, int) or version < 1:
         raise InputError("is no archive of spinfit", "give the outcome.h5 of a fit, or a batch.h5", file=file)
-    if version > FORMAT_VERSION:
-        found = f"is an archive of format {version}; this version of spinfit reads up to {FORMAT_VERSION}"
-        raise InputError(found, "use a newer spinfit", file=file)
     own = attrs.get(KIND, "fit")
+    newest = BATCH_FORMAT_VERSION if own == "batch" else FORMAT_VERSION
+    if version > newest:
+        found = f"is an archive of format {version}; this version of spinfit reads up to {newest}"
+        raise InputError(found, "use a newer spinfit", file=file)
     if own != kind:
         right = "name one of its fits" if own == "batch" else "give a batch.h5"
         raise InputError(f'is an archive of kind "{own!s:.20}"', right, file=file)
@@ -295,7 +305,8 @@ def archive_from(root: Group, file: str) -> Archive:
         When something is missing, of the wrong kind, or contradicts itself.
     """
     version = version_of(root.attrs, file)
-    if version > 1 and not is_intact(root):
+    # In a batch's archive a fit is an entry: since format 3 with the digest that it had as a root.
+    if version > 1 and not (is_intact(root) or is_intact(as_root(root))):
         found = "does not hold what was written: its digest is another" if DIGEST in root.attrs else "has no digest"
         raise InputError(f"is damaged or was changed ({found})", _DAMAGED, file=file)
     reader = _Reader(root, "", file)

@@ -1,6 +1,6 @@
 """`batch.h5`: every fit of a batch in one file, made from the folders of the single fits and their table.
 
-Each fit is an NXentry under the name of its folder, laid out as its `outcome.h5` is, under a digest of its own;
+Each fit is an NXentry under the name of its folder, laid out as its `outcome.h5` is, with the digest of that;
 `spinfit.summary` is an NXentry with the table, and opens on its first fitted g against the row.  One fit is in memory
 at a time, and the file can be made again at any time.
 """
@@ -8,6 +8,7 @@ at a time, and the file can be made again at any time.
 from __future__ import annotations
 
 import csv
+import hashlib
 import json
 import math
 import re
@@ -22,8 +23,8 @@ import numpy as np
 from spinfit.errors import InputError
 from spinfit.files.hdf5_writing import whole_hdf5
 from spinfit.files.raw import quote
-from spinfit.files.tree import Attribute, Data, Group, is_intact, sealed, write_tree
-from spinfit.report.archive import FORMAT, FORMAT_VERSION, KIND, as_entry, collection, nxdata
+from spinfit.files.tree import Attribute, Data, Group, copy_tree, is_intact, sealed, write_tree
+from spinfit.report.archive import BATCH_FORMAT_VERSION, FORMAT, KIND, as_entry, collection, make_entry, nxdata
 from spinfit.report.archive_reading import archive_from, kind_of_archive, read_group
 
 ARCHIVE = "batch.h5"
@@ -204,8 +205,24 @@ def _single(path: Path) -> Group:
     return tree
 
 
-def build_batch_archive(folder: Path) -> tuple[Path, dict[str, str]]:
+def _is_known(single: Path, sha256: str | None) -> bytes | None:
+    """Return the bytes of a fit's archive when they are those that were written; None when they may be others."""
+    try:
+        content = single.read_bytes() if sha256 is not None else b""
+    except OSError:
+        return None
+    return content if sha256 is not None and hashlib.sha256(content).hexdigest() == sha256 else None
+
+
+def build_batch_archive(folder: Path, known: Mapping[str, str] | None = None) -> tuple[Path, dict[str, str]]:
     """Write `batch.h5` into the folder of a batch.
+
+    Parameters
+    ----------
+    folder : Path
+    known : mapping of name -> SHA-256, optional
+        Of the single archives as the batch wrote them.  One that still is so is copied as it stands; any other is a
+        file like those of strangers, and is read and checked as such, which takes ten times as long.
 
     Returns
     -------
@@ -234,12 +251,16 @@ def build_batch_archive(folder: Path) -> tuple[Path, dict[str, str]]:
                 if status in ("good", "not converged"):
                     skipped[name] = "there is no outcome.h5"
                 continue
+            content = _is_known(single, (known or {}).get(name))
             try:
-                tree = _single(single)
+                if content is not None:
+                    make_entry(copy_tree(root, name, content))
+                else:
+                    tree = as_entry(_single(single))
+                    write_tree(root.create_group(name), tree)
             except InputError as error:
                 skipped[name] = " ".join(part for part in (error.place, error.found) if part)
                 continue
-            write_tree(root.create_group(name), sealed(as_entry(tree)))
             check()
             fits[name] = None
         if not fits:
@@ -247,19 +268,19 @@ def build_batch_archive(folder: Path) -> tuple[Path, dict[str, str]]:
         summary = _summary_tree(_columns(rows or []), _units(folder), list(fits), skipped)
         write_tree(root.create_group(SUMMARY_GROUP), summary)
         first = SUMMARY_GROUP if "default" in summary.attrs else next(iter(fits))
-        for key, value in (("NX_class", "NXroot"), ("default", first), (FORMAT, FORMAT_VERSION), (KIND, "batch")):
+        for key, value in (("NX_class", "NXroot"), ("default", first), (FORMAT, BATCH_FORMAT_VERSION), (KIND, "batch")):
             root.attrs[key] = value
     return path, skipped
 
 
-def write_batch_archive(folder: Path) -> Path:
+def write_batch_archive(folder: Path, known: Mapping[str, str] | None = None) -> Path:
     """Write `batch.h5` into the folder of a batch and return its path (see `build_batch_archive`).
 
     Raises
     ------
     InputError
     """
-    return build_batch_archive(folder)[0]
+    return build_batch_archive(folder, known)[0]
 
 
 def read_batch_summary(path: str | Path) -> BatchSummary:

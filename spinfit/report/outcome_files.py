@@ -16,7 +16,8 @@ from spinfit.report.plots import fit_figure, picture_bytes
 from spinfit.report.positions import positions_figure, positions_text
 from spinfit.report.tried import bootstrap_record, posterior_record, profile_record
 
-NUMBERS = ("outcome.json", "curves.csv", "outcome.h5")
+ARCHIVE = "outcome.h5"
+NUMBERS = ("outcome.json", "curves.csv", ARCHIVE)
 """Files without pictures."""
 DRAWN = ("fit.png", "fit.svg", "report.html")
 """Files that hold pictures, which take longer to draw than a short fit takes."""
@@ -70,4 +71,4 @@ def outcome_files(
         report = report_text(outcome, job=job, profiles=profiles, resampled=resampled, posterior=posterior)
         contents |= {"fit.png": picture_bytes(figure), "fit.svg": picture_bytes(figure, "svg")}
         contents["report.html"] = report.encode()
-    return contents | {"outcome.h5": archive_bytes(outcome, job, more, record=record)}
+    return contents | {ARCHIVE: archive_bytes(outcome, job, more, record=record)}
