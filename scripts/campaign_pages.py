@@ -1,8 +1,13 @@
-"""The pages in a browser: real fits and batches, wide and narrow, light and dark, with hostile names, on paper.
+"""The pages: the code of the documentation, slow parts too, and reports in a browser.
 
-Run as ``scripts/campaign pages`` or ``python scripts/campaign_pages.py [--out DIR]``; it needs Chromium.
+Run as ``scripts/campaign pages [docs] [reports] [--page NAME] [--write] [--out DIR]``.
+
+``docs`` runs every block of README and docs, those marked as slow too, and compares what is shown.  With ``--write``
+the pictures in ``docs/pictures`` are made anew, and outputs that hold nothing but ``...`` are filled in.
+
+``reports`` opens real fits and batches in Chromium: wide and narrow, light and dark, with hostile names, on paper.
 Each page is opened under its own policy and may neither complain on the console nor be wider than the
-window; pictures of it and a PDF are left in the folder for a person to look at.  The short form is in the
+window; pictures of it and a PDF are left in the folder for a person to look at.  The short forms are in the
 tests of the pages.
 """
 
@@ -13,16 +18,20 @@ import shutil
 import subprocess
 import sys
 import tempfile
+import time
 from collections.abc import Iterator
 from pathlib import Path
 
 import numpy as np
+from PIL import Image
 
 ROOT = Path(__file__).resolve().parent.parent
 sys.path[:0] = [str(ROOT), str(ROOT / "tests")]
 
+from page_code import Block, Runner, run_page  # noqa: E402
 from pages import BROWSER, FLAGS, Page, browse  # noqa: E402
 from test_batch_html import folder_of, rows  # noqa: E402
+from test_page_code import PAGES  # noqa: E402
 from test_report_html import EVIL, everything  # noqa: E402
 
 from spinfit.cli import main  # noqa: E402
@@ -106,28 +115,83 @@ def looked_at(page: Path, out: Path) -> None:
         subprocess.run([*command, page.resolve().as_uri()], check=True, capture_output=True, timeout=300)
 
 
+def small(drawn: Path, place: Path) -> None:
+    """Store a picture as a page shows it: 800 points wide at most, 64 colours."""
+    with Image.open(drawn) as picture:
+        flat = picture.convert("RGB")
+        flat.thumbnail((800, 1600))
+        flat.quantize(64).save(place, optimize=True)
+
+
+def documentation(only: str | None, write: bool) -> int:
+    """Run the code of the pages; return how many are wrong."""
+    wrong = 0
+    for page in PAGES:
+        name = page.relative_to(ROOT).as_posix()
+        if only and only not in name:
+            continue
+        fresh: list[tuple[Block, str]] = []
+
+        def seen(block: Block, runner: Runner, page: Path = page, fresh: list[tuple[Block, str]] = fresh) -> None:
+            if not write:
+                return
+            if block.fate == "output" and block.text.strip() == "...":
+                fresh.append((block, runner.printed or ""))
+            elif block.fate == "picture":
+                (page.parent / block.text).parent.mkdir(exist_ok=True)
+                small(runner.folder / block.marks["picture"], page.parent / block.text)
+
+        began = time.monotonic()
+        with tempfile.TemporaryDirectory(prefix="page-") as folder:
+            try:
+                said = f"{run_page(page, Path(folder), slow=True, seen=seen)} blocks of code run"
+            except Exception as error:  # a page must not keep the others from being looked at
+                wrong, said = wrong + 1, f"WRONG: {error or type(error).__name__}"
+        print(f"{name}: {said}, {time.monotonic() - began:.0f} s", flush=True)
+        lines = page.read_text(encoding="utf-8").splitlines()
+        for block, printed in reversed(fresh):
+            lines[block.line : block.line + 1] = printed.rstrip().splitlines()
+        if fresh:
+            page.write_text("\n".join(lines) + "\n", encoding="utf-8")
+    return wrong
+
+
 def run() -> int:
     parser = argparse.ArgumentParser(description=__doc__.partition("\n")[0])
+    parser.add_argument("parts", nargs="*", metavar="PART", help="docs, reports, or both (the default)")
+    parser.add_argument("--page", metavar="NAME", help="docs: only pages whose name holds this")
+    parser.add_argument("--write", action="store_true", help="docs: draw the pictures anew, fill in empty outputs")
     parser.add_argument("--out", type=Path, default=Path("pages_out"), help="a new folder for pages and their pictures")
     args = parser.parse_args()
+    parts = args.parts or ["docs", "reports"]
+    if unknown := set(parts) - {"docs", "reports"}:
+        parser.error(f"there is no part {unknown.pop()}: docs or reports")
+    wrong = documentation(args.page, args.write) if "docs" in parts else 0
+    if "reports" in parts:
+        wrong += reports(args.out)
+    return min(wrong, 1)
+
+
+def reports(out: Path) -> int:
+    """Open the reports; return how many are wrong."""
     if BROWSER is None:
         print("Chromium is not installed", file=sys.stderr)
-        return 2
-    if args.out.exists():
-        print(f"{args.out} is there already: name a new folder", file=sys.stderr)
-        return 2
-    args.out.mkdir(parents=True)
+        return 1
+    if out.exists():
+        print(f"{out} is there already: name a new folder", file=sys.stderr)
+        return 1
+    out.mkdir(parents=True)
     wrong = 0
     for source in (made_up, fits, batches):
-        for page in source(args.out.resolve()):
+        for page in source(out.resolve()):
             try:
-                looked_at(page, args.out.resolve())
+                looked_at(page, out.resolve())
                 said = "fine"
             except (AssertionError, subprocess.SubprocessError) as error:
                 wrong, said = wrong + 1, f"WRONG: {error}"
             print(f"{page.parent.name}/{page.name}: {page.stat().st_size / 1e3:.0f} kB, {said}", flush=True)
-    shutil.rmtree(args.out / "series", ignore_errors=True)
-    return 1 if wrong else 0
+    shutil.rmtree(out / "series", ignore_errors=True)
+    return wrong
 
 
 if __name__ == "__main__":

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import dataclasses
 import importlib.util
+import inspect
 import json
 import re
 import subprocess
@@ -13,17 +15,17 @@ from pathlib import Path
 import numpy as np
 import pytest
 
+import spinfit
 from spinfit.cli import main
 from spinfit.commands import TABLE
-from spinfit.files.job import model_from
-from spinfit.fitting.parameters import Binding, expand_vary
+from spinfit.fitting import outcome
 from spinfit.species import Species, Spin, Width
 from spinfit.spectrum import simulate
 from spinfit.sweep import Sweep
 
 ROOT = Path(__file__).resolve().parents[1]
 PAGES = [ROOT / "README.md", ROOT / "DEVELOPERS.md", ROOT / "CHANGELOG.md", ROOT / "demo_spectra" / "README.md"]
-PAGES += sorted((ROOT / "docs").glob("*.md"))
+PAGES += sorted(path for path in (ROOT / "docs").rglob("*.md") if "_build" not in path.parts)
 
 
 def blocks(page: Path, language: str) -> list[str]:
@@ -57,20 +59,40 @@ def test_first_fit_shows_the_demonstration_job() -> None:
     assert tomllib.loads(shown) == tomllib.loads(stored)
 
 
-def test_models_of_every_kind_of_sample() -> None:
-    """Each model of the page is one that `simulate` takes, with a spectrum, and what it says to vary is there."""
-    page = (ROOT / "docs" / "jobs.md").read_text(encoding="utf-8")
-    models = [section for section in page.split("\n## ") if "```toml" in section]
-    assert len(models) == 8
-    for section in models:
-        text = section.split("```toml\n")[1].split("```")[0]
-        model = model_from(tomllib.loads(text))
-        spectrum = simulate(model.species, model.sweep, model.sample, tolerance=3e-2)
-        assert np.abs(spectrum.signal).max() > 0
-        vary = re.findall(r"`vary = (\[.*\])`", section)
-        parameters = Binding(model.species, model.sample).parameters
-        for names in vary:
-            assert expand_vary(json.loads(names), parameters)
+def test_every_worked_example_is_listed() -> None:
+    pages = {f"jobs/{path.name}" for path in (ROOT / "docs" / "jobs").glob("*.md")}
+    assert len(pages) >= 10
+    listed = re.findall(r"\]\((jobs/\w+\.md)\)", (ROOT / "docs" / "jobs.md").read_text(encoding="utf-8"))
+    assert set(listed) == pages
+    contents = (ROOT / "docs" / "index.md").read_text(encoding="utf-8")
+    every = {path.relative_to(ROOT / "docs").with_suffix("").as_posix() for path in PAGES if "docs" in path.parts}
+    assert set(re.findall(r"^[\w/]+$", contents, flags=re.MULTILINE)) == every - {"index"}
+
+
+@pytest.mark.parametrize("heading", ["The job", "How to read it", "What goes wrong"])
+def test_worked_examples_have_the_same_parts(heading: str) -> None:
+    for path in (ROOT / "docs" / "jobs").glob("*.md"):
+        assert f"\n## {heading}\n" in path.read_text(encoding="utf-8"), path.name
+
+
+def test_the_version_to_cite_is_this_one() -> None:
+    for page in ("CITATION.cff", "docs/citing.md"):
+        text = (ROOT / page).read_text(encoding="utf-8")
+        found = re.findall(r"version(?:: | = \{| |\*\*)(\d+\.\d+\.\d+)", text.replace("cff-version: 1.2.0\n", ""))
+        assert found, page
+        assert set(found) == {spinfit.__version__}, page
+
+
+@pytest.mark.parametrize("name", [*spinfit.__all__, "Value", "Quality", "Note", "Curves", "Axis", "PositionTable"])
+def test_docstrings_describe_every_attribute(name: str) -> None:
+    found = getattr(spinfit, name, None) or getattr(outcome, name)
+    described = inspect.getdoc(found) or ""
+    if dataclasses.is_dataclass(found):
+        names = [one.name for one in dataclasses.fields(found)]
+    else:
+        names = [*inspect.signature(found).parameters]
+    hidden = {"kept"} if name == "Spectrum" else set()  # what derivatives need
+    assert [one for one in names if one not in hidden and not re.search(rf"\b{one}\b", described)] == []
 
 
 def test_readme_lists_the_commands_that_exist() -> None:
@@ -116,3 +138,5 @@ def test_the_pages_build_without_a_warning(tmp_path: Path) -> None:
     done = subprocess.run(command, capture_output=True, text=True, timeout=120)
     assert done.returncode == 0, done.stderr
     assert (tmp_path / "first_fit.html").is_file()
+    reference = (tmp_path / "reference.html").read_text(encoding="utf-8")
+    assert [name for name in spinfit.__all__ if f'id="spinfit.{name}"' not in reference] == []
