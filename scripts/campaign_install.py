@@ -1,6 +1,7 @@
 """The project as a user gets it: an sdist, a wheel of it, a fresh environment, and the demonstration from there.
 
-Run as ``scripts/campaign install`` or ``python scripts/campaign_install.py [--all]``; it needs git and a package index.
+Run as ``scripts/campaign install`` or ``python scripts/campaign_install.py [--all] [--tests]``; it needs git and a
+package index.  With ``--tests`` the tests of the sdist run against the installed wheel, its own modules hidden.
 The short form, the content of a wheel, is in the tests.
 """
 
@@ -25,7 +26,7 @@ MADE_BY_BUILD = ("PKG-INFO", "setup.cfg", "spinfit.egg-info/")
 
 def run(*command: str | Path, **more: object) -> str:
     """Run a command and return what it printed; leave with that when it fails."""
-    done = subprocess.run([str(part) for part in command], capture_output=True, text=True, timeout=1800, **more)
+    done = subprocess.run([str(part) for part in command], capture_output=True, text=True, timeout=7200, **more)
     if done.returncode != 0:
         sys.exit(f"{' '.join(map(str, command))}: exit code {done.returncode}\n{done.stdout}{done.stderr}")
     return done.stdout
@@ -50,6 +51,7 @@ def build(work: Path) -> Path:
     run(programs / "python", "-m", "build", "--outdir", work, source)  # the wheel is built of the sdist
     (sdist,), (wheel,) = work.glob("*.tar.gz"), work.glob("*.whl")
     with tarfile.open(sdist) as archive:
+        archive.extractall(work / "sdist", filter="data")
         packed = {name.partition("/")[2] for name in archive.getnames() if archive.getmember(name).isfile()}
     expected = {name for name in tracked if not name.startswith(NOT_PACKED) and (source / name).is_file()}
     missing = sorted(expected - packed)
@@ -77,15 +79,34 @@ def use(wheel: Path, work: Path, every: bool) -> None:
         print(f"{job}: {', '.join(made)}", flush=True)
 
 
+def test(wheel: Path, work: Path) -> None:
+    """Run the sdist's tests with the wheel; what only reads the sources finds them where the sdist has them."""
+    (project,) = (work / "sdist").iterdir()
+    programs = environment(work / "tester", f"{wheel}[test,docs,fast]")
+    apart = {key: value for key, value in os.environ.items() if not key.startswith("PYTHON")}
+    # pytest as a program, and from elsewhere: `python -m` and the project's folder would put its modules first.
+    command = [programs / "pytest", "-p", "no:cacheprovider", "-p", "where", "-c", project / "pyproject.toml"]
+    where = "import spinfit, sys\n\n\ndef pytest_report_header(config):\n    return f'spinfit is {spinfit.__file__}'\n"
+    (work / "where.py").write_text(where, encoding="utf-8")
+    said = run(*command, project / "tests", cwd=work, env={**apart, "PYTHONPATH": str(work)})
+    if f"spinfit is {work / 'tester'}" not in said:
+        sys.exit(f"the tests did not run with the wheel:\n{said}")
+    print("the sdist's tests with the wheel:", said.strip().splitlines()[-1], flush=True)
+
+
 def main() -> int:
     parser = argparse.ArgumentParser(description=__doc__.partition("\n")[0])
     parser.add_argument(
         "--all", action="store_true", help="fit every job, which takes minutes without compiled kernels"
     )
+    parser.add_argument("--tests", action="store_true", help="run the sdist's tests with the installed wheel: minutes")
     args = parser.parse_args()
     with tempfile.TemporaryDirectory(prefix="spinfit-install-") as folder:
         work = Path(folder).resolve()
-        use(build(work), work, args.all)
+        wheel = build(work)
+        use(wheel, work, args.all)
+        if args.tests:
+            test(wheel, work)
     return 0
 
 

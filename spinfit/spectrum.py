@@ -326,7 +326,7 @@ class _Asked(NamedTuple):
         spectrum(centre := Node((0.0,) * len(names), (1.0,) * len(names)))
         # no better than the sums over directions
         reached = max(float(report.get("estimated_error", 0.0)) for report in found[centre].reports)
-        got = averaged(spectrum, height, first, max(request.tolerance, reached))
+        got = averaged(spectrum, height, first.tolist(), max(request.tolerance, reached))
         told |= {"nodes": len(found), "estimated_error": float(got.error)}
         if len(got.mixture) == 1:
             return found[next(iter(got.mixture))]._replace(spreads=told)
@@ -341,18 +341,21 @@ class _Asked(NamedTuple):
         totals: list[Any] = [0.0] * len(self.angles)
         reports: list[dict[str, Any]] = []
         averages: list[Average | Lines] = []
+        meshes: list[Average] = []
+        lines: list[Lines] = []
         for system, own in zip(systems, widths, strict=True):
             asked = replace(request, broadening=own)
             if self.sample.form == "powder":
-                histogram, report = powder(system, asked, self.grid, keep=averages)
+                histogram, report = powder(system, asked, self.grid, keep=meshes)
                 histograms, used = [histogram], {"label": system.label, **vars(report)}
             elif self.sample.form == "crystal":
-                histograms, used = crystal(system, asked, self.grid, self.sample, self.angles, averages)
+                histograms, used = crystal(system, asked, self.grid, self.sample, self.angles, lines)
             else:
                 histogram, used = aligned(system, asked, self.grid, self.shape, self.sample, self.angles[0])
                 histograms = [histogram]
             totals = [t + system.weight * h.transform() for t, h in zip(totals, histograms, strict=True)]
             reports.append(used)
+        averages += [*meshes, *lines]
         return _Done(totals, reports, tuple(systems), averages, {}, {})
 
     def first_order_errors(self, request: Request) -> Array:
@@ -363,15 +366,15 @@ class _Asked(NamedTuple):
         if self.sample.form == "crystal":
             where = site_directions(self.sample, self.angles)
             wave = None if request.microwave == "parallel" else where.microwave
-            return np.max(
-                [
-                    first_order_errors(system, request, window, *(v[own] for v in (where.field, where.share)), 0.0, w)
-                    for own in (where.angle == k for k in range(len(self.angles)))
-                    for w in [None if wave is None else wave[own]]
-                ],
-                axis=0,
-            )
-        symmetry = own.lowered(symmetry_of(system), system)
+            errors = []
+            for k in range(len(self.angles)):
+                at = where.angle == k
+                along = None if wave is None else wave[at]
+                args = (where.field[at], where.share[at], 0.0, along)
+                errors.append(first_order_errors(system, request, window, *args))
+            worst: Array = np.max(errors, axis=0)
+            return worst
+        symmetry = symmetry_of(system) if own is None else own.lowered(symmetry_of(system), system)
         polar, azimuths = SAMPLED
         directions, share = mesh_directions(None, symmetry, polar, azimuths)
         return first_order_errors(system, request, window, directions, share, 0.5 * math.pi / polar)
