@@ -350,12 +350,15 @@ class _Trial:
     def _miss(self, predict: Callable[[Array], Array]) -> Array:
         """Return the relative error, by branch and knot, of single branches when continued values are replaced."""
         branches = self.branches
-        rows = branches.pair
         x, y, inverse = continued(branches.field, branches.weight)
-        guess = predict(np.concatenate([x, y]))
-        field, weight = restored(guess[: len(rows)], guess[len(rows) :], inverse)
+        own = () if branches.variance is None else (branches.variance,)
+        x, y, *widths = predict(np.concatenate([x, y, *own])).reshape(-1, *x.shape)
+        field, weight = restored(x, y, inverse)
         size = self._sizes()
-        shift = np.minimum(np.abs(field - branches.field) / self.request.scale, 1.0)
+        shift = np.abs(field - branches.field) / self.request.scale
+        for variance, width in zip(own, widths, strict=True):  # by how much the line's own height changes
+            shift = shift + 0.5 * np.abs(width - variance) / (variance + self.request.scale**2)
+        shift = np.minimum(shift, 1.0)
         change = np.abs(weight - branches.weight) * self.rings.knot_weights() * (size > 0)
         return (size * shift + change) / max(size.sum(), 1e-300)
 

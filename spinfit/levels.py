@@ -28,6 +28,9 @@ KELVIN_PER_MHZ = constants.h * 1e6 / constants.k
 BLOCK_BYTES = 192_000_000
 """Largest working set of one batch: about ten complex (n, n) matrices a point."""
 
+FORBIDDEN = 1e-26
+"""Squared moment of a transition, beside the square of the largest slope of a level, that is rounding."""
+
 
 @dataclass(frozen=True, eq=False)
 class Levels:
@@ -149,6 +152,9 @@ def _solve_block(
     seen = felt(system, energy, vectors) if weak else {}
     population = None if state is None else np.einsum("mai,mai->mi", vectors.conj(), state @ vectors).real
     slope, intensity = moments(vectors, system.zeeman, directions, microwave if intensities else None)
+    if intensity is not None and not (isinstance(microwave, str) and microwave == "perpendicular"):
+        # along the field a pure Zeeman operator moves nothing: what is left is rounding, not a weak spectrum
+        intensity[intensity < FORBIDDEN * (slope * slope).max(axis=1)[:, None, None]] = 0.0
     return Levels(energy, slope, intensity, shift, seen, population, order)
 
 

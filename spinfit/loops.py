@@ -75,26 +75,29 @@ class _Pair:
         """Sum over the present mesh and over its every second point; return the number of points used."""
         mesh = Mesh(self.rings.kind, *self.size)
         self.view = View.of(self.reach, self.leaves, len(self.fields), mesh.thetas, 4)
-        half = Mesh(self.rings.kind, self.size[0] // 2, max(1, self.size[1] // 2))
-        self.half = self._on(half, self.rings.to_mesh_locally, self.view.every(2))
-        self.histograms, used = self._add(look, self._bands(look, mesh), mesh)
+        self.half = self._on(self._mesh(2), self.rings.to_mesh_locally, self.view.every(2))
+        self.fourth_land = self._coarse(self.half[:, :, ::2, :: 1 if mesh.phis == 1 else 2], 4)
+        self.histograms, used = self._add(look, self._bands(look, mesh), (4.0, 4.0))
         self.transform = self.histograms.transform()
-        self.difference = self.coarser(look, 2, 2)
+        self.difference = self._changed(look, self._coarse(self.half, 2), (2.0, 2.0))
         self.missed = look.height(self.difference)
-        self.fourth = self.coarser(look, 4, 4)
+        self.fourth = self._changed(look, self.fourth_land, (1.0, 1.0))
         before = look.height(self.fourth)
         self.gained = min(1.0, max(LEAST_GAIN, self.missed / before)) if before else 1.0
         return used
 
-    def finer(self, size: tuple[int, int]) -> tuple[float, float]:
-        """Return how many times closer than in the first look points of a mesh lie."""
-        mesh, _ = self.probe
-        return size[0] / mesh.thetas, size[1] / mesh.phis
+    def _mesh(self, stride: int) -> Mesh:
+        return Mesh(self.rings.kind, self.size[0] // stride, max(1, self.size[1] // stride))
 
-    def _add(self, look: _Look, lands: Iterable[Landscape], mesh: Mesh) -> tuple[Histograms, int]:
-        """Sum over parts of a mesh; return histograms and the number of points used."""
+    def _coarse(self, values: Array, stride: int) -> Landscape:
+        """Return every so many points of the present mesh."""
+        values = np.ascontiguousarray(values)
+        return Landscape.of(self.fields, self.leaves, values, self._mesh(stride), self.view.every(stride))
+
+    def _add(self, look: _Look, lands: Iterable[Landscape], finer: tuple[float, float]) -> tuple[Histograms, int]:
+        """Sum over parts of a mesh, so much finer than every fourth point; return histograms and points used."""
         histograms = look.empty()
-        step = field_step(self.probe[1], self.request, self.finer((mesh.thetas, mesh.phis)))
+        step = field_step(self.fourth_land, self.request, finer)
         return histograms, add_looping(histograms, lands, self.request, step)
 
     def _bands(self, look: _Look, mesh: Mesh) -> Iterator[Landscape]:
@@ -111,19 +114,18 @@ class _Pair:
             window = Window((mesh.thetas + 1, len(mesh.phi())), view.nodes)
         return self.crossings.continued(self.row, self.part, partial(to_mesh, mesh=mesh), window)
 
+    def _changed(self, look: _Look, land: Landscape, finer: tuple[float, float]) -> NDArray[np.complex128]:
+        """Return how the transform changes when it is summed over another mesh."""
+        histograms, _ = self._add(look, [land], finer)
+        return histograms.transform() - self.transform
+
     def coarser(self, look: _Look, along: int, around: int) -> NDArray[np.complex128]:
         """Return how the transform changes when only every so many points, along theta or phi, are used."""
-        around = 1 if self.rings.kind == "axial" else around
+        whole = doubled(self.half, self._mesh(1), self.view.nodes, look.scratch)
+        values = np.ascontiguousarray(whole[:, :, ::along, ::around])
         mesh = Mesh(self.rings.kind, self.size[0] // along, self.size[1] // around)
-        if along == around or self.rings.kind == "axial":
-            values = self.half[:, :, :: along // 2, :: max(1, around // 2)]
-        else:
-            whole = doubled(self.half, Mesh(self.rings.kind, *self.size), self.view.nodes, look.scratch)
-            values = whole[:, :, ::along, ::around]
-        view = self.view.every(along)
-        land = Landscape.of(self.fields, self.leaves, np.ascontiguousarray(values), mesh, view, look.scratch)
-        histograms, _ = self._add(look, [land], mesh)
-        return histograms.transform() - self.transform
+        land = Landscape.of(self.fields, self.leaves, values, mesh, self.view.every(along))
+        return self._changed(look, land, (4 / along, 4 / around))
 
     @property
     def error(self) -> float:
@@ -131,14 +133,12 @@ class _Pair:
         return self.missed * self.gained
 
     def by_half(self, look: _Look) -> NDArray[np.complex128]:
-        """Return how the transform on every fourth point changes when every second ring of knots is left out."""
-        mesh = Mesh(self.rings.kind, self.size[0] // 4, max(1, self.size[1] // 4))
+        """Return how the transform on fewer points changes when every second ring of knots is left out."""
+        stride, before = (2, self.difference) if self.rings.kind == "axial" else (4, self.fourth)
         half, kept = self.rings.halved(), self.rings.halved_knots()
-        view = self.view.every(4)
-        values = self._on(mesh, lambda v, **of: half.to_mesh_locally(v[:, kept], **of), view)
-        land = Landscape.of(self.fields, self.leaves, values, mesh, view, look.scratch)
-        histograms, _ = self._add(look, [land], mesh)
-        return histograms.transform() - self.transform - self.fourth
+        view = self.view.every(stride)
+        values = self._on(self._mesh(stride), lambda v, **of: half.to_mesh_locally(v[:, kept], **of), view)
+        return self._changed(look, self._coarse(values, stride), (4 / stride, 4 / stride)) - before
 
     def refine(self, look: _Look, allowed: float) -> bool:
         """Choose a finer mesh that should err by no more than `allowed`; return whether there is one."""
@@ -204,8 +204,8 @@ def _first_size(pair: _Pair, request: Request) -> tuple[tuple[int, int], Array]:
         size = ladder_size(AXIAL * (1e-3 / request.tolerance) ** 0.3), 1
     else:
         size = _size_by_bend(values, rings, pair.fields, request)
-    pair.probe = mesh, land
-    return size, reach(land, mesh.thetas, pair.finer((size[0] // 4, max(1, size[1] // 4))), request)
+    finer = size[0] / (4 * mesh.thetas), size[1] / (4 * mesh.phis)
+    return size, reach(land, mesh.thetas, finer, request)
 
 
 def _size_by_bend(values: Array, rings: Rings, fields: Array, request: Request) -> tuple[int, int]:

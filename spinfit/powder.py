@@ -29,6 +29,8 @@ from spinfit.symmetry import Symmetry, symmetry_of
 
 Array = NDArray[np.float64]
 
+ALIKE = 0.3
+"""Relative difference of the widths of neighbours, where widths differ, at the default tolerance."""
 STEEPNESS = 0.1
 """Relative change of a field's steepness within one step where it is smeared, at the most."""
 FLATNESS = 0.19
@@ -143,6 +145,7 @@ def powder(
     report.directions, report.diagonalisations = knots.directions, knots.diagonalisations
     report.pairs, report.looping = len(knots.branches.pair), int(knots.other.sum())
     if _meets_zero_field(knots.data, request):
+        report.estimated_error = max(error, min(ROUGHEST, ROUGH * request.tolerance))
         report.notes.append("levels are h nu apart at zero field, where a powder spectrum diverges: it is rough there")
     if keep is not None:
         keep.append(Average(symmetry, request, knots, meshes, loops, histograms))
@@ -162,6 +165,8 @@ def _meets_zero_field(data: KnotData, request: Request) -> bool:
     return bool((near & (strength > 0.01 * np.abs(data.strength).max(initial=0.0))).any())
 
 
+ROUGH, ROUGHEST = 40.0, 0.3
+"""What spectra that meet zero field were found to err by: in tolerances, and at the most."""
 NEAR_ZERO = 30.0
 """MHz/mT: two line widths of a free spin's pair, times their distance that matters."""
 
@@ -227,12 +232,14 @@ def _mesh_for(rings: Rings, branches: Branches, request: Request) -> list[tuple[
 
 
 def _widened_size(values: Array, wider: Array, axis: int, intervals: int, request: Request, even: bool) -> Array:
-    """Return the intervals at which neighbours lie within the local line, shape (branches,)."""
+    """Return the intervals at which neighbours lie within the local line and are about as wide, shape (branches,)."""
     if not even:
         values, wider = (np.concatenate([v, np.take(v, [0], axis)], axis) for v in (values, wider))
     ahead = np.take(wider, range(1, wider.shape[axis]), axis)
     local = np.minimum(ahead, np.take(wider, range(wider.shape[axis] - 1), axis))
-    return (np.abs(np.diff(values, axis=axis)) / local).max(axis=(1, 2)) * intervals / request.grain.close
+    close = np.abs(np.diff(values, axis=axis)) / local / request.grain.close
+    alike = np.abs(np.diff(np.log(wider), axis=axis)) / (ALIKE * (request.tolerance / 1e-3) ** 0.17)
+    return np.maximum(close, alike).max(axis=(1, 2)) * intervals
 
 
 def _sizes(values: Array, axis: int, intervals: int, request: Request, even: bool) -> Array:
@@ -279,11 +286,13 @@ def _changed(
 ) -> float:
     """Return by how much a prediction of continued values changes the spectrum, relative to its top."""
     x, y, inverse = continued(branches.field, branches.weight)
-    guess = predict(np.concatenate([x, y]))
-    field, weight = restored(guess[: len(x)], guess[len(x) :], inverse)
+    own = () if branches.variance is None else (branches.variance,)
+    x, y, *own = predict(np.concatenate([x, y, *own])).reshape(-1, *x.shape)
+    field, weight = restored(x, y, inverse)
+    changed = replace(branches, field=field, weight=weight, variance=own[0] if own else None)
     here, there = Histograms(grid, request.scale), Histograms(grid, request.scale)
     sizes = _sum_branches(rings, branches, local, request, here)
-    _sum_branches(rings, replace(branches, field=field, weight=weight), local, request, there, sizes)
+    _sum_branches(rings, changed, local, request, there, sizes)
     shape, before = Shape(request.scale, 0.0), here.transform()
     fields = grid.start + grid.step * np.arange(grid.count)
     margin = SMEAR_REACH * SMEAR_MOST * request.scale  # past the window, where sums are cut off

@@ -124,6 +124,16 @@ def test_correlated_spreads_of_g_and_A(correlation: float) -> None:
     assert far(got.signal, total / weights) < 1e-2
 
 
+def test_widths_that_fields_do_not_tell_of_are_followed() -> None:
+    # E spread about zero: fields and weights do not depend on azimuth, widths go with its cosine
+    sweep = Sweep(9500.0, (230.0, 440.0), 700)
+    spin = Spin(S=1, g=(2.0,), D=1500.0)
+    narrow = Species("s", (spin,), width=Width(gaussian=1.0))
+    got = simulate(replace(narrow, spread=Spread(E=100.0)), sweep, tolerance=1e-4).signal
+    want = averaged(narrow, sweep, lambda one, t: replace(one, spins=(replace(spin, E=100.0 * t),)))
+    assert far(got, want) < 1e-3
+
+
 def test_a_spread_of_zero_changes_nothing() -> None:
     species = Species("s", (Spin(g=(2.0, 2.05, 2.2)),), width=Width(gaussian=0.6))
     sweep = Sweep(9500.0, (290.0, 350.0), 300)

@@ -196,3 +196,20 @@ def test_all_tolerances_tell_one_story() -> None:
 def test_a_doublet_of_isotropic_g_needs_one_direction() -> None:
     got = engine(of(Spin(g=(2.0,)), width=1.0), Scan(X_BAND, (330, 350, 200), 1.0))
     assert got.report["s"]["systems"][0]["directions"] == 1
+
+
+def test_a_pure_zeeman_transition_has_no_parallel_mode():
+    # the microwave field's operator is the Zeeman operator along the field: diagonal between its own states
+    species = Species("s", (Spin(g=(2.0, 2.05, 2.2)),), width=Width(gaussian=1.0))
+    got = simulate(species, Sweep(9500.0, (270.0, 380.0), 256, microwave="parallel"))
+    assert not got.signal.any()
+    assert simulate(species, Sweep(9500.0, (270.0, 380.0), 256)).signal.any()
+
+
+def test_a_spectrum_that_meets_zero_field_says_how_far_it_may_err():
+    # 1 MHz from the quantum: at this tolerance the spectrum was found a quarter of its top wrong
+    species = Species("s", (Spin(S=1, g=(2.0,), D=9499.0),), width=Width(gaussian=4.0))
+    got = simulate(species, Sweep(9500.0, (0.0, 800.0), 512), tolerance=1e-2)
+    fine = simulate(species, Sweep(9500.0, (0.0, 800.0), 512), tolerance=2e-4)
+    error = np.abs(got.signal - fine.signal).max() / np.abs(fine.signal).max()
+    assert 0.01 < error < got.report["s"]["systems"][0]["estimated_error"]
