@@ -160,7 +160,7 @@ def around(heading: str, name: str) -> tuple[dict, dict]:
     if heading == "`[sample]`":
         form = (keys.SAMPLE[name].forms or ("powder",))[0] if name in keys.SAMPLE else "powder"
         tree["sample"] = {"form": form} | ({"order": 0.5} if form == "aligned" else {})
-    if heading == "`[[trace]]`" and name in ("axis", "from", "angle"):
+    if heading == "`[[trace]]`" and name in ("axis", "from", "angle", "angle_uncertainty"):
         tree["sample"], tree["trace"][0]["angle"] = {"form": "crystal"}, "0 deg"
     if heading == "`[species.width]`" and name in ("a", "b", "c"):
         tree["sample"] = {"form": "solution"}

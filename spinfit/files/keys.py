@@ -310,6 +310,7 @@ LINES = _keys(
     field_scale=Key("number, positive", "see `field_offset`", "1.0001", "1.0"),
     field_uncertainty=Key("field", "standard uncertainty of the axis' shift; goes into every g", '"0.02 mT"', '"0 mT"'),
     frequency_uncertainty=Key("frequency", "standard uncertainty; goes into every g", '"0.2 MHz"', '"0 MHz"'),
+    angle_uncertainty=Key("angle", "standard uncertainty of each reading of an angle", '"1 deg"', '"0 deg"'),
 )
 TRACE = _keys(
     LINES,

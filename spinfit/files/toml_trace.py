@@ -86,6 +86,14 @@ class _Source:
             raise self.table.error("frequency", found, 'write frequency = "9.4321 GHz"')
         return float(value)
 
+    def angle_uncertainty(self, sample: Sample) -> float | None:
+        """Return the uncertainty of an angle, rad, where there is an angle."""
+        given = self.table.positive("angle_uncertainty", "angle", zero=True)
+        if given is not None and sample.form not in ("crystal", "aligned"):
+            right = 'it needs [sample] form = "crystal" or "aligned": take angle_uncertainty out'
+            raise self.table.error("angle_uncertainty", f"means nothing for a {sample.form}", right)
+        return given
+
     def shared(self, sample: Sample) -> dict[str, Any]:
         """Return what traces and tables of lines have in common; None for what is missing."""
         table = self.table
@@ -108,6 +116,7 @@ class _Source:
             "field_scale": scale,
             "field_uncertainty": table.positive("field_uncertainty", "field", zero=True),
             "frequency_uncertainty": table.positive("frequency_uncertainty", "frequency", zero=True),
+            "angle_uncertainty": self.angle_uncertainty(sample),
         }
 
 

@@ -53,6 +53,8 @@ class Trace:
         mT and 1.
     field_uncertainty, frequency_uncertainty : float
         Standard uncertainties, mT and MHz.
+    angle_uncertainty : float
+        Of the angle's reading, rad; see `sharing_angle`.
     file, sha256 : str
         Path and digest of the input file.
     notes : tuple of (code, text)
@@ -84,6 +86,7 @@ class Trace:
     file: str = ""
     sha256: str = ""
     notes: tuple[tuple[str, str], ...] = ()
+    angle_uncertainty: float = 0.0
 
 
 @dataclass(frozen=True, eq=False)
@@ -108,6 +111,8 @@ class Lines:
         As in `Trace`.
     field_uncertainty, frequency_uncertainty, file, sha256, notes
         As in `Trace`.
+    angle_uncertainty : float
+        Of the reading of each angle, rad; 0 when `direction` is given.
     """
 
     name: str
@@ -129,6 +134,7 @@ class Lines:
     file: str = ""
     sha256: str = ""
     notes: tuple[tuple[str, str], ...] = ()
+    angle_uncertainty: float = 0.0
 
 
 def groups_of(one: Trace | Lines) -> tuple[str, ...]:
@@ -162,6 +168,21 @@ def sharing_frequency(several: Sequence[Trace | Lines]) -> list[list[int]]:
         found = [one for one in found if one not in touched]
         found.append(sorted(own + [n for one in touched for n in one]))
     return sorted(found)
+
+
+def sharing_angle(traces: Sequence[Trace]) -> list[list[int]]:
+    """Which traces share one reading of their angle: those of one angle and one file or group, such as up and down."""
+    found: list[list[int]] = []
+    for n, trace in enumerate(traces):
+        for one in found:
+            first = traces[one[0]]
+            together = (first.file != "" and first.file == trace.file) or set(groups_of(first)) & set(groups_of(trace))
+            if first.angle == trace.angle and together:
+                one.append(n)
+                break
+        else:
+            found.append([n])
+    return found
 
 
 @dataclass(frozen=True, eq=False)

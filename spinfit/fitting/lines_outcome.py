@@ -167,7 +167,7 @@ def _spread(
 
 
 def _axis_shifts(lines: LineProblem, state: State) -> list[tuple[str, Array]]:
-    """What each shared standard shift of an axis or a frequency does to the residuals, mT."""
+    """What each shared standard shift of an axis, a frequency or an angle does to the residuals, mT."""
     out = []
     whole = np.cumsum([0] + [table.field.size for table in state.tables])
     for source, change, key, sharing in (
@@ -181,6 +181,15 @@ def _axis_shifts(lines: LineProblem, state: State) -> list[tuple[str, Array]]:
                     shift[whole[n] : whole[n + 1]] = getattr(table, key)
             if shift.any():
                 out.append((source, change * shift))
+    for n, table in enumerate(state.tables):
+        if table.angle is None or table.angle_uncertainty == 0:
+            continue
+        change = lines.angle_change(state, n) * table.angle_uncertainty
+        # each angle was read once, whatever lines there are
+        for angle in np.unique(table.angle):
+            shift = np.zeros(state.residual.size)
+            shift[whole[n] : whole[n + 1]] = np.where(table.angle == angle, change, 0.0)
+            out.append(("angle", np.where(state.free_lines, 0.0, shift)))
     return out
 
 

@@ -12,7 +12,7 @@ the two levels; dG/dp at fixed field is taken by differences of exact eigenvalue
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import lmfit
 import numpy as np
@@ -32,6 +32,8 @@ Indices = NDArray[np.intp]
 
 # How far in typical steps a parameter is moved for a difference of eigenvalues.
 _STEP = 1e-2
+# rad by which a crystal is turned either way for a difference of eigenvalues.
+_TURN = 1e-4
 # A residual beyond this many times the scatter is an outlier: one normal line in 150 000.
 OUTLIER = 4.5
 
@@ -143,6 +145,17 @@ class LineProblem:
         """d(residual)/d(frequency), mT/MHz."""
         slopes = np.concatenate([which.slope for which in state.lines])
         return np.where(np.abs(slopes) > 1e-3, -1 / np.where(slopes == 0, np.inf, slopes), 0.0)
+
+    def angle_change(self, state: State, number: int) -> Array:
+        """d(residual)/d(angle) of the lines of one table, mT/rad, shape (lines of the table,)."""
+        table, which = state.tables[number], state.lines[number]
+        rows = np.arange(table.field.size)
+        above, below = (
+            gaps(state.species, state.sample, replace(table, angle=table.angle + turn), which, rows)
+            for turn in (_TURN, -_TURN)
+        )
+        slope = np.where(np.abs(which.slope) > 1e-3, which.slope, np.inf)
+        return (above - below) / (2 * _TURN) / slope
 
     def field_change(self, state: State) -> Array:
         """d(residual)/d(shift of the field axis): 1 for every line that has a partner."""

@@ -1,4 +1,4 @@
-"""What the varied parameters are known to: noise, field axis, frequency.
+"""What the varied parameters are known to: noise, field axis, frequency, angle.
 
 The response of the least-squares values to a change e of the residuals is dp = -G e with
 G = (J'J)^-1 J' and J the projected Jacobian, so that everything linear (scales, baselines) is
@@ -7,11 +7,13 @@ refitted along.  Three kinds of change go through it:
 - the noise, with the covariance C that the residuals show: G C G', which is the familiar
   sigma^2 (J'J)^-1 when the noise is white and wider when neighbours hang together;
 - a shift of the field axis by its standard uncertainty;
-- a shift of the frequency by its own.
+- a shift of the frequency by its own;
+- a turn of the sample by the uncertainty of its angle's reading.
 
 They are independent and combine in quadrature (JCGM 100:2008, 5.1.2).  Traces of one group share
 one field axis; traces without a group share one as well, since averaging over traces of one magnet
 does not make its calibration better.  Traces of one frequency share its uncertainty whatever their group.
+Angles are read anew for every trace, but for parts of one sweep.
 """
 
 from __future__ import annotations
@@ -23,10 +25,10 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit.fitting.data import sharing_axis, sharing_frequency
+from spinfit.fitting.data import Trace, sharing_angle, sharing_axis, sharing_frequency
 from spinfit.fitting.noise import ResidualNoise, local_covariance, residual_noise
 from spinfit.fitting.outcome import Value
-from spinfit.fitting.residuals import Point, Problem, View
+from spinfit.fitting.residuals import Point, Problem, Seen, View
 from spinfit.fitting.signals import narrowest_width
 
 Array = NDArray[np.float64]
@@ -40,7 +42,7 @@ _UNSEEN_STEPS = 100.0
 _NOWHERE = 1e-7
 # Standard deviations by which squared residuals on the lines may exceed those beside them.
 _UNEVEN = 4.5
-# Part of a line width by which the frequency is moved, as a field.
+# Part of a line width by which the frequency is moved, as a field, and at the most by which an angle is.
 _FREQUENCY_STEP = 0.02
 
 
@@ -54,13 +56,13 @@ class Covariances:
         Whether the data determine the parameter and it is not on a limit; rows and columns of the
         others are 0.
     noise, field : ndarray, shape (k, k)
-        From the noise; from field axis and frequency.
+        From the noise; from field axis, frequency and angles.
     white : ndarray, shape (k, k)
         What `noise` would be without correlation of neighbours and without misfit.
     field_shifts : ndarray, shape (m, k)
-        The parameters' response to each shared standard shift of an axis or a frequency.
+        The parameters' response to each shared standard shift of an axis, a frequency or an angle.
     shift_sources : tuple of str
-        What each of these is: "field axis" or "frequency".
+        What each of these is: "field axis", "frequency" or "angle".
     blind : tuple of tuple of str
         Sets of parameters of which only combinations are determined.
     traces : tuple of ResidualNoise
@@ -247,6 +249,7 @@ def _axis_shifts(problem: Problem, view: View, point: Point, response: Array) ->
     for source, changes, sharing in (
         ("field axis", _field_changes, sharing_axis),
         ("frequency", _frequency_changes, sharing_frequency),
+        ("angle", _angle_changes, sharing_angle),
     ):
         for members in sharing(point.traces):
             moved = changes(problem, view, point, members)
@@ -274,17 +277,38 @@ def _frequency_changes(problem: Problem, view: View, point: Point, members: Sequ
         if n not in members or trace.frequency_uncertainty == 0:
             out.append(None)
             continue
-        highest = max(abs(float(seen.field[-1])), abs(float(seen.field[0])), np.finfo(float).tiny)
-        width = narrowest_width(point.species) or float(np.median(np.diff(seen.field)))
-        step = _FREQUENCY_STEP * width / highest * trace.frequency
-        above, below = (
-            problem.signals.total(
-                point.species, replace(trace, frequency=trace.frequency + s), point.sample, seen.field, view.stage
-            )
-            for s in (step, -step)
-        )
-        out.append((above - below) / (2 * step) * trace.frequency_uncertainty)
+        step = _small(point, seen) * trace.frequency
+        sides = [replace(trace, frequency=trace.frequency + s) for s in (step, -step)]
+        out.append(_difference(problem, view, point, seen, sides) / (2 * step) * trace.frequency_uncertainty)
     return out
+
+
+def _angle_changes(problem: Problem, view: View, point: Point, members: Sequence[int]) -> list[Array | None]:
+    """Change of each trace's signal when its angle is off by one standard uncertainty."""
+    out: list[Array | None] = []
+    for n, (trace, seen) in enumerate(zip(point.traces, view.seen, strict=True)):
+        if n not in members or trace.angle_uncertainty == 0 or trace.angle is None:
+            out.append(None)
+            continue
+        # a resonance moves by its own field at the most in a turn of one radian, or little more
+        step = _small(point, seen)
+        sides = [replace(trace, angle=trace.angle + s) for s in (step, -step)]
+        out.append(_difference(problem, view, point, seen, sides) / (2 * step) * trace.angle_uncertainty)
+    return out
+
+
+def _small(point: Point, seen: Seen) -> float:
+    """Return the part of the highest field that is a small part of a line's width."""
+    highest = max(abs(float(seen.field[-1])), abs(float(seen.field[0])), np.finfo(float).tiny)
+    width = narrowest_width(point.species) or float(np.median(np.diff(seen.field)))
+    return _FREQUENCY_STEP * width / highest
+
+
+def _difference(problem: Problem, view: View, point: Point, seen: Seen, sides: Sequence[Trace]) -> Array:
+    above, below = (
+        problem.signals.total(point.species, trace, point.sample, seen.field, view.stage) for trace in sides
+    )
+    return above - below
 
 
 def combined(noise: float, field: float) -> float:
@@ -311,7 +335,8 @@ def budget_of(problem: Problem, free: Array, spread: Covariances) -> dict[str, d
     -------
     mapping of name -> {source: standard uncertainty}
         "noise" as if it were white, "correlation and misfit" what widens it beyond that, "field
-        axis" and "frequency"; their quadrature sum is the parameter's uncertainty.
+        axis" and "frequency", and "angle" where one has an uncertainty; their quadrature sum is the
+        parameter's uncertainty.
     """
     out = {}
     for name, slope in tied_slopes(problem, free).items():
@@ -321,7 +346,7 @@ def budget_of(problem: Problem, free: Array, spread: Covariances) -> dict[str, d
         white = float(slope @ spread.white @ slope)
         # Correlation can narrow as well: then the noise part is what it is, and nothing is added.
         parts = {"noise": min(math.sqrt(white), noise), "correlation and misfit": math.sqrt(max(noise**2 - white, 0.0))}
-        for source in ("field axis", "frequency"):
+        for source in dict.fromkeys(("field axis", "frequency", *spread.shift_sources)):
             rows = [row for row, kind in zip(spread.field_shifts, spread.shift_sources, strict=True) if kind == source]
             parts[source] = math.sqrt(sum(float(slope @ row) ** 2 for row in rows))
         parameter = problem.parameters[name]

@@ -40,6 +40,7 @@ from spinfit.report.tried import (
     posterior_rows,
     posterior_sentence,
     profile_rows,
+    sources_of,
 )
 
 MOST_TRACES = 12
@@ -56,9 +57,9 @@ LEFT_OPEN = (
 )  # fmt: skip
 
 
-def _share_bar(parts: Mapping[str, float]) -> Raw:
+def _share_bar(parts: Mapping[str, float], sources: Sequence[str]) -> Raw:
     """Return how much of the variance each source has, as a bar; the numbers stand beside it."""
-    squares = [max(parts.get(source, 0.0), 0.0) ** 2 for source in SOURCES]
+    squares = [max(parts.get(source, 0.0), 0.0) ** 2 for source in sources]
     whole = sum(squares)
     if not (np.isfinite(whole) and whole > 0):
         return Raw("")
@@ -72,21 +73,23 @@ def _share_bar(parts: Mapping[str, float]) -> Raw:
 
 def _parameters(outcome: Outcome) -> str:
     """Return the table of what was found, each uncertainty with what it is made of."""
-    headings = ["parameter", "value", "unit", *SOURCES, "shares of variance", "start", ""]
+    sources = sources_of(outcome)
+    headings = ["parameter", "value", "unit", *sources, "shares of variance", "start", ""]
     found = {name: v for name, v in outcome.parameters.items() if v.varied or v.tied or v.derived}
     rows = []
     for name, v in found.items():
         parts = outcome.budget.get(name, {})
-        cells = budget_cells(parts, v.uncertainty)
-        if not parts and v.uncertainty_noise is not None:  # a derived value: axis and frequency come as one
-            cells = [small(v.uncertainty_noise), "", f"{small(v.uncertainty_field)} (both)", ""]
+        cells = budget_cells(parts, v.uncertainty, sources)
+        if not parts and v.uncertainty_noise is not None:  # a derived value: axis, frequency and angles come as one
+            whole = "both" if len(sources) == len(SOURCES) - 1 else "all"
+            cells = [small(v.uncertainty_noise), "", f"{small(v.uncertainty_field)} ({whole})", *cells[3:]]
         rows.append(
             [
                 name,
                 with_uncertainty(v.value, v.uncertainty),
                 v.unit,
                 *cells,
-                _share_bar(parts),
+                _share_bar(parts, sources),
                 short(v.start),
                 remark(v),
             ]
@@ -96,16 +99,16 @@ def _parameters(outcome: Outcome) -> str:
     key = "".join(
         f'<span class="key"><svg class="swatch" viewBox="0 0 30 10" aria-hidden="true">'
         f'<rect class="share-{n}" width="30" height="10"/></svg>{escape(source)}</span>'
-        for n, source in enumerate(SOURCES)
+        for n, source in enumerate(sources)
     )
     return (
-        table(headings, rows, left=(0, 2, 7, 9), bold=1)
+        table(headings, rows, left=(0, 2, len(headings) - 3, len(headings) - 1), bold=1)
         + f'<p class="legend">{key}</p>'
         + paragraph(
             "In parentheses one standard uncertainty, in units of the last digit. Its sources add in quadrature: the "
             "noise of the trace; what the correlation of neighbouring points and a systematic residual add to it; and "
-            "the stated uncertainties of field axis and frequency, which move all values together: differences "
-            "between components of g are better known than the components.",
+            "the stated uncertainties of field axis, frequency and angles. The first two of these move all values "
+            "together: differences between components of g are better known than the components.",
             "quiet",
         )
     )

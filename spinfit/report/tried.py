@@ -12,23 +12,29 @@ from spinfit.fitting.sampling import LEVELS, Posterior
 from spinfit.report.layout import table, wrapped
 from spinfit.report.numbers import short, small
 
-SOURCES = ("noise", "correlation and misfit", "field axis", "frequency")
+SOURCES = ("noise", "correlation and misfit", "field axis", "frequency", "angle")
 # An entry this small a part of the whole says nothing.
 _NEGLIGIBLE = 1e-2
 
 
-def budget_cells(parts: Mapping[str, float], whole: float | None) -> list[str]:
+def sources_of(outcome: Outcome) -> tuple[str, ...]:
+    """Return the sources of uncertainty that an outcome knows of: angles only where one has an uncertainty."""
+    angles = any("angle" in parts for parts in outcome.budget.values())
+    return SOURCES if angles else SOURCES[:-1]
+
+
+def budget_cells(parts: Mapping[str, float], whole: float | None, sources: Sequence[str]) -> list[str]:
     """Return what each source gives to an uncertainty; those that are next to nothing stay empty."""
     least = _NEGLIGIBLE * abs(whole or 0.0)
-    return [small(parts[s]) if parts.get(s, 0.0) > least else "" for s in SOURCES]
+    return [small(parts[s]) if parts.get(s, 0.0) > least else "" for s in sources]
 
 
 def budget_rows(outcome: Outcome) -> list[list[str]]:
     """Return one row a parameter: name, unit, total, then each source; those that are next to nothing empty."""
-    rows = []
+    rows, sources = [], sources_of(outcome)
     for name, parts in outcome.budget.items():
         value = outcome.parameters[name]
-        rows.append([name, value.unit, small(value.uncertainty), *budget_cells(parts, value.uncertainty)])
+        rows.append([name, value.unit, small(value.uncertainty), *budget_cells(parts, value.uncertainty, sources)])
     return rows
 
 
@@ -36,7 +42,7 @@ def budget_table(outcome: Outcome) -> str:
     """Return what each uncertainty is made of, as text; empty when it is noise alone."""
     if not any(parts.get(s, 0.0) > 0 for parts in outcome.budget.values() for s in SOURCES[1:]):
         return ""
-    return table(["uncertainty of", "unit", "in all", *SOURCES], budget_rows(outcome), left=(0, 1))
+    return table(["uncertainty of", "unit", "in all", *sources_of(outcome)], budget_rows(outcome), left=(0, 1))
 
 
 def profile_record(one: Profile) -> dict[str, Any]:
