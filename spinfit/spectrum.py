@@ -387,13 +387,13 @@ SAMPLED = (8, 6)
 def _misgivings(one: Species, done: _Done, tolerance: float) -> tuple[tuple[str, str], ...]:
     """Return what a spectrum cannot promise."""
     said = []
-    error = max(float(report.get("estimated_error", 0.0)) for report in done.reports)
+    error = max(float(report.get("estimated_error", 0.0)) for report in _joined(done))
     if error > 1.5 * tolerance and "rings" in done.reports[0]:
         said.append(("accuracy", f"{one.name}: the spectrum may err by {error:.1g} of its top, not {tolerance:g}"))
-    error = done.spreads.get("estimated_error", 0.0)
-    if error > 1.5 * tolerance:
-        text = f"{one.name}: spreads are so wide that the spectrum may err by {error:.1g} of its top, not {tolerance:g}"
-        said.append(("accuracy", text))
+    spread = done.spreads.get("estimated_error", 0.0)
+    if spread > 1.5 * max(tolerance, error):
+        text = f"spreads are so wide that the spectrum may err by {spread:.1g} of its top, not {tolerance:g}"
+        said.append(("accuracy", f"{one.name}: {text}"))
     code = "accuracy" if "rings" in done.reports[0] else "directions"
     notes = dict.fromkeys(text for report in done.reports for text in report.get("notes", ()))
     return (*said, *((code, f"{one.name}: {text}" if code == "accuracy" else text) for text in notes))
@@ -411,9 +411,9 @@ SUMMED = ("directions", "diagonalisations", "mesh_points", "resonances")
 
 
 def _joined(done: _Done) -> list[dict[str, Any]]:
-    """Return one report for each system, of all nodes together: the work summed, of all else the most."""
-    nodes = max(1, len(done.mixture))
-    count = len(done.reports) // nodes
+    """Return one report for each system, of all nodes: the work summed, the errors' mean, of all else the most."""
+    shares = np.abs(list(done.mixture.values())) if done.mixture else np.ones(1)
+    count = len(done.reports) // len(shares)
     out = []
     for number in range(count):
         several = done.reports[number::count]
@@ -421,6 +421,8 @@ def _joined(done: _Done) -> list[dict[str, Any]]:
         for key, value in joined.items():
             if key in SUMMED:
                 joined[key] = sum(one[key] for one in several)
+            elif key == "estimated_error":
+                joined[key] = float(np.average([one[key] for one in several], weights=shares))
             elif isinstance(value, (int, float)) and not isinstance(value, bool):
                 joined[key] = max(one[key] for one in several)
             elif key == "notes":
