@@ -253,13 +253,15 @@ _RAISED = {lower: upper for upper, lower in _LOWERED.items()}
 def _moved(root: Group, classes: Mapping[str, str]) -> Group:
     """Return a tree with the classes of its root and of the members of that changed."""
 
-    def changed(node: Group | Data) -> Group | Data:
-        kind = node.attrs.get("NX_class") if isinstance(node, Group) else None
-        return replace(node, attrs={**node.attrs, "NX_class": classes[kind]}) if kind in classes else node
+    def attrs(node: Group) -> Mapping[str, Attribute]:
+        kind = str(node.attrs.get("NX_class", ""))
+        return {**node.attrs, "NX_class": classes[kind]} if kind in classes else node.attrs
 
-    top = changed(Group({name: changed(node) for name, node in root.members.items()}, root.attrs))
-    assert isinstance(top, Group)
-    return top
+    members = {
+        name: replace(node, attrs=attrs(node)) if isinstance(node, Group) else node
+        for name, node in root.members.items()
+    }
+    return Group(members, attrs(root))
 
 
 def as_entry(root: Group) -> Group:
