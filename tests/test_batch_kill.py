@@ -11,6 +11,7 @@ import batch_jobs
 import numpy as np
 import pytest
 
+from spinfit.batch.journal import Journal
 from spinfit.cli import main
 
 pytestmark = pytest.mark.skipif(os.name != "posix", reason="kills processes by signals")
@@ -68,6 +69,25 @@ def test_ctrl_c_keeps_what_is_finished(batch, tmp_path):
     assert main([*batch, "--out", "out"]) == 0
     assert len(batch_jobs.journal_of(tmp_path / "out")) == COUNT
     assert before >= len(done)
+
+
+def test_ctrl_c_between_writing_and_noting_writes_nothing_twice(tmp_path, monkeypatch):
+    """What is interrupted while the disk is waited for is handed in again at the end."""
+    records = [{"trace": f"t{n}", "status": "good", "seconds": 0.1 * n} for n in range(3)]
+
+    def interrupted(number):
+        raise KeyboardInterrupt
+
+    with Journal(tmp_path) as journal:
+        journal.append(records[:1])
+        with monkeypatch.context() as patch:
+            patch.setattr(os, "fsync", interrupted)
+            with pytest.raises(KeyboardInterrupt):
+                journal.append(records[1:2])
+        journal.append(records[1:])
+        journal.append(records[:1])  # the same once more, on purpose, is written
+        assert journal.last("t1") == records[1]
+    assert batch_jobs.journal_of(tmp_path) == [*records, records[0]]
 
 
 def test_a_second_batch_is_refused_and_the_lock_dies_with_the_first(batch, tmp_path, capsys):

@@ -88,10 +88,11 @@ class Journal:
             When there is no room; the file is then as it was.
         """
         lines = [(str(one["trace"]), _line(one)) for one in records]
+        if lines and self._stream.seek(0, os.SEEK_END) != self._end:
+            self.catch_up()  # Ctrl-C came between writing and noting; what was written comes again
+            lines = [(name, line) for name, line in lines if self._line_of(name) != line]
         if not lines:
             return
-        if self._stream.seek(0, os.SEEK_END) != self._end:
-            self.catch_up()
         content = b"".join(line for _, line in lines)
         try:
             rest = memoryview(content)
@@ -105,6 +106,14 @@ class Journal:
         for name, line in lines:
             self._places[name] = self._end
             self._end += len(line)
+
+    def _line_of(self, trace: str) -> bytes:
+        """Return the last line of a trace as it stands in the file; nothing when it has none."""
+        if trace not in self._places:
+            return b""
+        with open(self.path, "rb") as stream:
+            stream.seek(self._places[trace])
+            return stream.readline()
 
     def __contains__(self, trace: str) -> bool:
         return trace in self._places
