@@ -304,7 +304,7 @@ def _axial(count: int = 120) -> list[Case]:
             detect="absorption" if number % 7 == 3 else "derivative",
         )
         spins = (Spin(spin, g, ratio * X_BAND, stevens=stevens),)
-        out.append(Case(f"axial {number} S={spin:g} D/hnu {ratio:.3f}", spins, scan, "axial", (400, 1), 32))
+        out.append(Case(f"axial {number} S={spin:g} D/hnu {ratio:.3f}", spins, scan, "axial", (400, 1), 64))
     return out
 
 
