@@ -125,7 +125,7 @@ def rough(job: Job, rng: np.random.Generator) -> tuple[Species, ...]:
 
 @dataclass(frozen=True)
 class Tried:
-    """One trace: chi-squared from the rough start over that from the truth, seconds, and the numbers."""
+    """One trace: chi-squared from the rough start over that from the truth, seconds of processor time, and the numbers."""
 
     number: int
     ratio: float
@@ -151,12 +151,12 @@ def tried(name: str, start: str, number: int) -> Tried:
     job = Job(species, Sample(), (trace,), system.vary)
     wide = replace(job, species=rough(job, rng), start=start)
     best = fit(job).quality.chi2_reduced
-    begun = time.perf_counter()
+    begun = time.process_time()
     try:
         outcome = fit(wide)
     except InputError as error:  # a start without a line in the window is refused before it is fitted
-        return Tried(number, math.inf, time.perf_counter() - begun, str(error))
-    seconds = time.perf_counter() - begun
+        return Tried(number, math.inf, time.process_time() - begun, str(error))
+    seconds = time.process_time() - begun
     shown = [
         f"{key} {job_value:.5g} < {value.start:.5g} > {value.value:.5g}"
         for key, value in outcome.parameters.items()

@@ -11,18 +11,11 @@ from numpy.typing import NDArray
 
 from spinfit.errors import InputError
 from spinfit.fitting.noise import residual_noise
+from spinfit.fitting.other_signs import best_signs
 from spinfit.fitting.residuals import Point, Problem, Progress, View
 from spinfit.fitting.signals import narrowest_width
 from spinfit.fitting.solve import Descent, Goal, descend
-from spinfit.fitting.starts import (
-    COARSE_TOLERANCE,
-    NARROWING,
-    WIDEST,
-    candidates,
-    coarse_to_fine,
-    explained,
-    neighbours,
-)
+from spinfit.fitting.starts import COARSE_TOLERANCE, candidates, coarse_to_fine, explained, neighbours
 from spinfit.fitting.wide import Wide
 
 Array = NDArray[np.float64]
@@ -46,6 +39,9 @@ _ENOUGH = 2
 _FAR, _NEAR = 0.15, 0.01
 # Less than this part is left by a shape that is not quite the lines', not by a line in a wrong place.
 _MISFIT = 0.003
+# Engine error, in units of the noise, that a search through expensive spectra allows itself.
+_SEARCH_ERROR = 0.3
+_SEARCH_GAIN, _SEARCH_EVALUATIONS = 1.0, 15
 # Chi-squared per point of a misfit that no weak line in a wrong place makes.
 _SYSTEMATIC = 3.0
 
@@ -54,9 +50,9 @@ class Search:
     """The best minimum that can be reached from a start.
 
     A start that already explains half of the trace goes straight down.  Otherwise, or when that
-    ends short of the noise, the way over broadened views is taken, then scans for other basins, then
-    the way over integrated traces, then candidates, drawn near the start and drawn wide, until one of them
-    has ended at the noise or at the best minimum again.
+    ends short of the noise, the way over integrated and broadened traces is taken, then that over broadened
+    ones, then scans for other basins, then candidates, drawn near the start and drawn wide, until one of
+    them has ended at the noise or at the best minimum again.
 
     Attributes
     ----------
@@ -69,36 +65,51 @@ class Search:
         self.best: Descent | None = None
         self._ends = 0
         self._scanned: Descent | None = None
+        self._turned: Descent | None = None
 
     def run(self, start: Array, *, automatic: bool = False) -> Descent:
-        """Search from a start; with `automatic` the start counts as one candidate among many."""
+        """Search from a start; with `automatic` the start counts as one candidate among many.
+
+        Then signs and the names of a tensor's axes are not taken from the start either.
+        """
+        start = np.clip(start, self.problem.lower, self.problem.upper)
+        self._search(start, automatic)
+        if automatic:
+            self._turn_signs()
+        return self._found()
+
+    def _search(self, start: Array, automatic: bool) -> None:
         problem = self.problem
-        start = np.clip(start, problem.lower, problem.upper)
-        self._try_steps(start)
         if not automatic and explained(problem.evaluate(start, self.view), self.view) > 0.5:
             self._follow(start)
-        if not self._good():
-            self._follow(coarse_to_fine(problem, start, progress=self.progress))
-        if not self._good():
-            self._leave_for_better_basins()
-        if self._good() or (not automatic and self._found().converged and self._left() < _MISFIT):
-            return self._found()
+            if self._good():
+                return
         wide = Wide(problem, start, progress=self.progress)
-        if not automatic:
-            self._follow_all([wide.from_start()])
-        self._ends = 0  # ways from one start that end together prove little
+        if wide.sketched:
+            self._loosen()
+        self._follow_all(wide, [wide.from_start()])
+        if not self._good() and not wide.sketched:
+            self._follow(coarse_to_fine(problem, start, progress=self.progress))
+        if not self._good() and not wide.sketched:
+            self._leave_for_better_basins()
+        if automatic and not self._good():
+            self._turn_signs()
+        if self._good() or (not automatic and self._found().converged and self._left() < _MISFIT):
+            return
 
-        def drawn_wide() -> list[Array]:
-            return wide.candidates()
+        def drawn_wide() -> Iterable[Array]:
+            return wide.candidates(self._found().point.free)
 
-        def in_pairs() -> list[Array]:
+        def in_pairs() -> Iterable[Array]:
             return wide.around(self._found().point.free)
 
-        def drawn_near() -> list[Array]:
-            return candidates(problem, start, wide=automatic, progress=self.progress)
+        def drawn_near() -> Iterable[Array]:
+            return candidates(wide.plain, start, wide=automatic, progress=self.progress)
 
         left = self._left()
-        if automatic or left > _FAR:
+        if wide.sketched:
+            ways = [drawn_wide, in_pairs]
+        elif automatic or left > _FAR:
             ways = [drawn_wide, in_pairs, drawn_near]
         else:
             ways = [in_pairs, drawn_near, drawn_wide]
@@ -107,9 +118,23 @@ class Search:
                 ways.pop()
         for way in ways:
             if not self._good():
-                self._ends = 0
-                self._follow_all(way())
-        return self._found()
+                self._ends = 0  # ways from one start that end together prove little
+                self._follow_all(wide, way())
+
+    def _turn_signs(self) -> None:
+        """Try other signs and axes of the best minimum, once of each."""
+        if self._found() is not self._turned:
+            goal, progress = self.goal, self.progress
+            self.best = self._turned = best_signs(self.problem, self.view, self._found(), goal=goal, progress=progress)
+
+    def _loosen(self) -> None:
+        """Search where spectra are expensive no more precisely than the noise is worth."""
+        self.goal = replace(self.goal, gain=max(self.goal.gain, _SEARCH_GAIN), evaluations=_SEARCH_EVALUATIONS)
+        tolerance = min(self.problem.tolerance(_SEARCH_ERROR), COARSE_TOLERANCE)
+        if tolerance > self.view.stage.tolerance:
+            self.view = replace(self.view, stage=replace(self.view.stage, tolerance=tolerance))
+            if self.best is not None:
+                self.best = replace(self.best, point=self.problem.evaluate(self.best.point.free, self.view))
 
     def _found(self) -> Descent:
         assert self.best is not None
@@ -121,24 +146,17 @@ class Search:
         points = self.view.points
         return max(self._found().point.chi2 - points, 0.0) / max(total - points, 1e-300)
 
-    def _follow_all(self, starts: Iterable[Array]) -> None:
+    def _follow_all(self, wide: Wide, starts: Iterable[Array]) -> None:
         """Go down from candidates until one ends where nothing is left to look for, or several at the best."""
         for free in starts:
-            near = WIDEST / NARROWING
             try:
-                self._follow(coarse_to_fine(self.problem, free, progress=self.progress, widest=near))
+                self._follow(wide.narrowed(free))
             except InputError:  # the way led to where the model has no meaning, such as a width of 0
                 continue
-            if not self._good() and not self._agreed:
+            if not self._good() and not self._agreed and not wide.sketched:
                 self._leave_for_better_basins()
             if self._good() or self._agreed:
                 break
-
-    def _try_steps(self, start: Array) -> None:
-        """Let finite-difference steps find their size where a simulation is cheap."""
-        stage = replace(self.view.stage, tolerance=max(COARSE_TOLERANCE, self.view.stage.tolerance))
-        cheap = replace(self.view, stage=stage)
-        self.problem.jacobian(self.problem.evaluate(start, cheap), cheap)
 
     def _follow(self, free: Array) -> None:
         descent = descend(self.problem, self.view, free, goal=self.goal, progress=self.progress)
