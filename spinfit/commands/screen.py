@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import shutil
 import sys
 from collections.abc import Mapping, Sequence
 from typing import Any, TextIO
@@ -29,6 +30,10 @@ class Screen:
         if not self.as_json:
             if not text.replace("\n", "").isprintable():  # a name or a title may hold what a terminal obeys
                 text = "\n".join(map(printable, text.split("\n")))
+            if self.out.isatty():  # elsewhere lines stay as they are, for those who search them
+                from spinfit.report.layout import narrowed
+
+                text = narrowed(text, shutil.get_terminal_size().columns)
             print(text, file=self.out)
 
     def emit(self, content: Mapping[str, Any] | Sequence[Any]) -> None:
