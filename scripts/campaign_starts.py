@@ -125,7 +125,7 @@ def rough(job: Job, rng: np.random.Generator) -> tuple[Species, ...]:
 
 @dataclass(frozen=True)
 class Tried:
-    """One trace: chi-squared from the rough start over that from the truth, seconds of processor time, and the numbers."""
+    """One trace: chi-squared from the rough start over that from the truth, processor seconds, and the numbers."""
 
     number: int
     ratio: float
