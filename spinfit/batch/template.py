@@ -71,7 +71,7 @@ class Template:
         species = read_species(root.tables("species"), given, form=sample.form, auto=start == "auto")
         read_tolerance(root.data.get("accuracy"), given)
         nothing = np.zeros(2)
-        conditions = {"frequency": 1.0, "group": entry.name("group")}
+        conditions: dict[str, Any] = {"frequency": 1.0, "group": entry.name("group")}
         name = entry.name("name") or "trace"
         one = (
             Trace(name=name, field=nothing, signal=nothing, used=nothing == 0, **conditions)

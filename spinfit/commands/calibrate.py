@@ -105,8 +105,8 @@ def run(args: argparse.Namespace, screen: Screen) -> int:
 
 
 def _list(screen: Screen, known: Any) -> int:
+    from spinfit.report.layout import table
     from spinfit.report.numbers import with_uncertainty
-    from spinfit.report.tables import table
 
     screen.emit([{"name": s.name, "g": s.g, "uncertainty": s.uncertainty, "source": s.source} for s in known])
     rows = [[s.name, with_uncertainty(s.g, s.uncertainty), s.description, s.source] for s in known]
@@ -157,8 +157,8 @@ def _record(result: Any, lines: list[str]) -> dict[str, Any]:
 def _text(result: Any, lines: list[str]) -> str:
     from math import degrees
 
+    from spinfit.report.layout import table, wrapped
     from spinfit.report.numbers import small, with_uncertainty
-    from spinfit.report.tables import table, wrapped
 
     rows = [
         [

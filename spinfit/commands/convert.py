@@ -74,7 +74,7 @@ def all_units(text: str, g: float | None) -> dict[str, float]:
 
 def run(args: argparse.Namespace, screen: Screen) -> int:
     """Convert and print."""
-    from spinfit.report.tables import table
+    from spinfit.report.layout import table
 
     g = number(args.g, "--g")
     if args.quantity is not None:

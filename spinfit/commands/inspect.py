@@ -151,8 +151,8 @@ def _record(file: str, trace: Measured, found: Any, too_large: bool | None) -> d
 def _text(file: str, trace: Measured, found: Any, modulation: str) -> str:
     import numpy as np
 
+    from spinfit.report.layout import aligned, table, wrapped
     from spinfit.report.numbers import short, small, with_uncertainty
-    from spinfit.report.tables import aligned, table, wrapped
 
     steps = np.diff(trace.field)
     even = np.ptp(steps) < 0.02 * np.median(steps)

@@ -116,8 +116,8 @@ def _verdict(found: Any) -> str:
 
 
 def _text(archive: Any, found: Any) -> str:
+    from spinfit.report.layout import table
     from spinfit.report.numbers import short, with_uncertainty
-    from spinfit.report.tables import table
 
     versions = [f"{name} {a or 'none'} before, {b or 'none'} now" for name, (a, b) in found.versions.items()]
     lines = [

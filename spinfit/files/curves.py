@@ -38,7 +38,7 @@ def _said(key: str, value: Any) -> str:
     return on_one_line(str(value))
 
 
-def jcamp_text(field: NDArray, signal: NDArray, names: tuple[str, str], header: Mapping[str, Any]) -> str:
+def jcamp_text(field: NDArray[Any], signal: NDArray[Any], names: tuple[str, str], header: Mapping[str, Any]) -> str:
     """Return a spectrum as JCAMP-DX 5.01 in free form (AFFN); pairs when the fields are not evenly spaced."""
     n = len(field)
     even = n > 1 and np.array_equal(np.linspace(field[0], field[-1], n), field)
@@ -97,7 +97,7 @@ def write_nxdata(group: h5py.Group, field: ArrayLike, signals: Mapping[str, Arra
 
 
 def _write_hdf5(
-    path: str | Path, field: NDArray, signal: NDArray, names: tuple[str, str], header: Mapping[str, Any]
+    path: str | Path, field: NDArray[Any], signal: NDArray[Any], names: tuple[str, str], header: Mapping[str, Any]
 ) -> None:
     """Write one NXentry with one NXdata, and the conditions beside it."""
     with whole_hdf5(path) as (root, _):

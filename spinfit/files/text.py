@@ -31,6 +31,10 @@ _MINUS = str.maketrans({"\u2212": "-", "\u00a0": " "})
 _SAMPLE = 400
 
 
+# Of which all but the last end alike, before that says anything.
+_ENOUGH_LINES = 12
+
+
 @dataclass(frozen=True)
 class Dialect:
     """How a file writes its numbers: `separator` "" stands for blanks and tabs."""
@@ -164,7 +168,7 @@ def _fast(body: str, dialect: Dialect, width: int) -> NDArray[np.float64] | None
     return data if data.shape[1] == width and np.isfinite(data).all() else None
 
 
-def _slow(lines: list[str], pre: _Preamble, header: dict[str, Any], notes: list[Note], file: str) -> NDArray:
+def _slow(lines: list[str], pre: _Preamble, header: dict[str, Any], notes: list[Note], file: str) -> NDArray[Any]:
     """Read line by line, so that a wrong one is found by its number."""
     rows: list[list[float]] = []
     for number, line in enumerate(lines[pre.start :], pre.start + 1):
@@ -206,6 +210,34 @@ def _check_ambiguity(pre: _Preamble, lines: list[str], file: str) -> None:
             )
 
 
+def _check_end(lines: list[str], pre: _Preamble, file: str) -> None:
+    """Refuse a last number that was cut off, as in a file that is still being written.
+
+    It is known by this: no line end follows it, and it is the beginning of what every other line ends in.
+
+    Raises
+    ------
+    InputError
+    """
+    if len(lines) - pre.start < _ENOUGH_LINES or pre.dialect.number(_last(lines[-1], pre.dialect)) is None:
+        return  # too little to tell, or a line end or a comment at the end
+    last, *others = (_tail(line, pre.dialect) for line in reversed(lines[pre.start :]))
+    if len(set(others)) == 1 and others[0] != last and others[0].startswith(last):
+        found = f"{quote(_last(lines[-1], pre.dialect))} is cut off: it has fewer digits than the last number of every line above"
+        right = "wait until the measurement has ended, or take the line out"
+        raise InputError(found, right, place=f"line {len(lines)}", file=file)
+
+
+def _last(line: str, dialect: Dialect) -> str:
+    return (dialect.split(line) or [""])[-1]
+
+
+def _tail(line: str, dialect: Dialect) -> str:
+    """Return the decimals and the exponent of a line's last number, each digit as 0, each sign of an exponent as +."""
+    _, point, decimals = _last(line, dialect).partition(dialect.decimal)
+    return re.sub(r"\d", "0", point + decimals).replace("-", "+")
+
+
 def read_text(content: bytes, file: str, sha256: str = "") -> RawTrace:
     """Read delimited text.
 
@@ -232,4 +264,5 @@ def read_text(content: bytes, file: str, sha256: str = "") -> RawTrace:
     data = _fast("\n".join(lines[pre.start :]), pre.dialect, pre.width)
     if data is None:
         data = _slow(lines, pre, header, notes, file)
+    _check_end(lines, pre, file)
     return RawTrace(data, pre.names, pre.units, header, sha256, file, tuple(notes), "text")

@@ -16,7 +16,7 @@ from spinfit.fitting.driver import engine_tolerance
 from spinfit.fitting.noise import residual_noise
 from spinfit.fitting.outcome import Outcome
 from spinfit.fitting.quantify import FittedArea
-from spinfit.fitting.residuals import Problem, full_view
+from spinfit.fitting.residuals import Point, Problem, View, full_view
 from spinfit.fitting.robust import settled_at
 from spinfit.fitting.signals import Simulate
 from spinfit.fitting.uncertainty import tied_slopes
@@ -70,7 +70,7 @@ def _sigma(problem: Problem, outcome: Outcome, name: str) -> float:
     return abs(problem.parameters[name].from_job(outcome.parameters[name].uncertainty_noise or 0.0))
 
 
-def _scale_variance(problem: Problem, view: object, point: object, index: int) -> float:
+def _scale_variance(problem: Problem, view: View, point: Point, index: int) -> float:
     """Variance of a trace's scale with the parameters held."""
     seen, signal = view.seen[index], point.signals[index]
     column = signal / seen.noise

@@ -10,6 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, fields, replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -72,7 +73,7 @@ class Calculated:
     slope: Array
     weight: Array
 
-    def only(self, kept: NDArray) -> Calculated:
+    def only(self, kept: NDArray[Any]) -> Calculated:
         return Calculated(**{f.name: getattr(self, f.name)[kept] for f in fields(self)})
 
 

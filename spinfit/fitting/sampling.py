@@ -17,6 +17,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -234,7 +235,7 @@ def _inside(
     raise InputError("no walkers can be placed within the limits", "widen the limits", place="fit.limits")
 
 
-def _posterior(problem: Problem, sampler: object, tempered: float, stopped: bool) -> Posterior:
+def _posterior(problem: Problem, sampler: Any, tempered: float, stopped: bool) -> Posterior:
     """Cut the settling off and say what the chain is worth."""
     steps = sampler.iteration
     times = np.nan_to_num(sampler.get_autocorr_time(tol=0), nan=float(steps))

@@ -20,7 +20,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spinfit.derivatives import field_slope, phase_slope, signal_changes
-from spinfit.fitting.data import Trace
+from spinfit.fitting.data import Lines, Trace
 from spinfit.species import Species
 from spinfit.spectrum import Kept
 from spinfit.sweep import Sample, Sweep
@@ -44,13 +44,16 @@ class Stage:
         Peak-to-peak width of a further Gaussian on every resonance, mT; 0 for the real thing.
     tolerance : float
         Asked of the engine.
+    first_order : bool
+        Whether spreads are left to widths of first order, on the way to a minimum.
     """
 
     broadening: float = 0.0
     tolerance: float = 1e-4
+    first_order: bool = False
 
 
-def true_field(trace: Trace, field: Array) -> Array:
+def true_field(trace: Trace | Lines, field: Array) -> Array:
     """Carry fields as in the file to true fields with the trace's correction."""
     return field * trace.field_scale + trace.field_offset
 
@@ -70,7 +73,7 @@ def conditions(trace: Trace) -> tuple[Any, ...]:
     )
 
 
-def sample_of(sample: Sample, trace: Trace) -> Sample:
+def sample_of(sample: Sample, trace: Trace | Lines) -> Sample:
     """Return the sample with the trace's own rotation plane, where it has one."""
     if trace.axis is not None:
         sample = replace(sample, axis=trace.axis)
@@ -145,7 +148,8 @@ class Signals:
 
     def __init__(self, simulate: Simulate) -> None:
         self._simulate = simulate
-        self._keeps = "keep" in inspect.signature(simulate).parameters
+        known = inspect.signature(simulate).parameters
+        self._keeps, self._averages = "keep" in known, "first_order" in known
         self._kept: OrderedDict[Any, tuple[Kept, int]] = OrderedDict()
         self._held = 0
         self._memory: OrderedDict[Any, Array] = OrderedDict()
@@ -213,9 +217,7 @@ class Signals:
         plain = replace(species, amount=1.0, crystal_field=None)
         return plain, conditions(trace), trace.field_offset, trace.field_scale, sample, field.tobytes(), stage
 
-    def _simulated(
-        self, key: Any, species: Species, trace: Trace, sample: Sample, field: Array, stage: Stage
-    ) -> Array:
+    def _simulated(self, key: Any, species: Species, trace: Trace, sample: Sample, field: Array, stage: Stage) -> Array:
         """Simulate, and remember the signal and what its derivatives start from."""
         plain, fields = key[0], true_field(trace, field)
         spectrum = self._simulate(
@@ -226,6 +228,7 @@ class Signals:
             fields=fields,
             angle=trace.angle,
             **({"keep": True} if self._keeps else {}),
+            **({"first_order": stage.first_order} if self._averages else {}),
         )
         self.simulations += 1
         if self._keeps:

@@ -12,6 +12,7 @@ import math
 from dataclasses import dataclass
 from functools import lru_cache
 from itertools import combinations
+from typing import Any, TypeAlias
 
 import numpy as np
 from numpy.typing import NDArray
@@ -20,7 +21,7 @@ from scipy import sparse
 from spinfit.ion.orbitals import tensor
 from spinfit.operators import spin_matrices
 
-Sparse = sparse.csr_array
+Sparse: TypeAlias = sparse.csr_array
 
 
 @dataclass(frozen=True, eq=False)
@@ -83,7 +84,7 @@ def excitations(l: int, count: int) -> Excitations:  # noqa: E741
     return Excitations(len(states), row, column, p_all, q_all, sign)
 
 
-def one_electron(l: int, count: int, matrix: NDArray) -> Sparse:  # noqa: E741
+def one_electron(l: int, count: int, matrix: NDArray[Any]) -> Sparse:  # noqa: E741
     """Return sum_pq h_pq a+_p a_q on the determinants of l^count.
 
     Parameters

@@ -8,6 +8,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from functools import lru_cache
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -57,7 +58,7 @@ def _misfit(curve: NDArray[np.float64], measured: Sequence[float]) -> NDArray[np
     return np.sqrt(np.mean(((np.sort(curve, axis=-1) - wanted) / scale) ** 2, axis=-1))
 
 
-def _doublet_squares(states: NDArray, moments: NDArray) -> NDArray[np.float64]:
+def _doublet_squares(states: NDArray[Any], moments: NDArray[Any]) -> NDArray[np.float64]:
     """Return g along x, y, z of doublets: states (n, dimension, 2), moments (3, dimension, dimension)."""
     inner = np.einsum("nai,xab,nbj->nxij", states.conj(), moments, states, optimize=True)
     return np.sqrt(np.clip(2 * np.einsum("nxij,nxji->nx", inner, inner).real, 0, None))

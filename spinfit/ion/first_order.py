@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -92,7 +93,7 @@ def _coupling(model: IonModel) -> tuple:
     return tuple(operators if basis is None else [(basis.T @ (m @ basis)).toarray() for m in operators])
 
 
-def _table(share: NDArray, bare: Levels) -> tuple[Mixing, ...]:
+def _table(share: NDArray[Any], bare: Levels) -> tuple[Mixing, ...]:
     """Collect n by level along each axis."""
     rows = []
     edges = np.cumsum((0, *bare.degeneracies()))

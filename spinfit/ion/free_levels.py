@@ -6,6 +6,7 @@ Each J is found in the block of one M_J, so that even f7 (327 levels) needs smal
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -61,7 +62,7 @@ def _square(vector: tuple) -> sparse.csr_array:
     return sum((m @ m).real for m in vector).tocsr()
 
 
-def _restrict(operator: sparse.csr_array, kept: NDArray) -> NDArray:
+def _restrict(operator: sparse.csr_array, kept: NDArray[Any]) -> NDArray[Any]:
     """Return the dense block of a sparse operator."""
     return operator[kept][:, kept].toarray()
 
@@ -88,7 +89,7 @@ def free_terms(model: IonModel) -> tuple[FreeTerm, ...]:
     return tuple(FreeTerm(term_symbol(S, L), S, L, value - lowest) for value, S, L in found)
 
 
-def _joint(first: NDArray, second: NDArray) -> dict[tuple[float, float], NDArray]:
+def _joint(first: NDArray[Any], second: NDArray[Any]) -> dict[tuple[float, float], NDArray[Any]]:
     """Return (j1, j2) -> joint eigenstates of two commuting squares of angular momenta.
 
     They are told apart by the eigenvalues of first + second/pi, which no two pairs share.
@@ -140,7 +141,12 @@ def free_levels(model: IonModel, *, lowest: int | None = None) -> tuple[FreeLeve
 
 
 def _level(
-    energy: float, J: float, vector: NDArray, terms: dict[tuple[float, float], NDArray], moment: NDArray, m: float
+    energy: float,
+    J: float,
+    vector: NDArray[Any],
+    terms: dict[tuple[float, float], NDArray[Any]],
+    moment: NDArray[Any],
+    m: float,
 ) -> FreeLevel:
     """Label one state of a block by its largest term."""
     shares: dict[Term, float] = {

@@ -6,6 +6,7 @@ import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import lru_cache
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -147,7 +148,9 @@ def doublet_matches(
     return tuple(sorted(matches, key=lambda match: match.misfit))
 
 
-def _best(S: float, doublet: int, lam: NDArray, curve: NDArray, misfit: NDArray, sigma: NDArray | None) -> DoubletMatch:
+def _best(
+    S: float, doublet: int, lam: NDArray[Any], curve: NDArray[Any], misfit: NDArray[Any], sigma: NDArray[Any] | None
+) -> DoubletMatch:
     """Refine the smallest misfit of one doublet by a parabola and propagate the uncertainty."""
     i = int(np.argmin(misfit))
     best = float(lam[i])

@@ -9,6 +9,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass, field, replace
 from functools import lru_cache
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -132,11 +133,11 @@ class IonModel:
 class SpaceOperators:
     """Operators of one space: L and S (3 each), sum l.s, repulsion by k; sparse or dense alike."""
 
-    orbital: tuple
-    spin: tuple
-    spin_orbit: object
-    repulsion: dict[int, object]
-    basis: object | None
+    orbital: tuple[Any, ...]
+    spin: tuple[Any, ...]
+    spin_orbit: Any
+    repulsion: dict[int, Any]
+    basis: Any
 
     @property
     def dimension(self) -> int:
@@ -156,7 +157,7 @@ def space_operators(l: int, count: int, space: str) -> SpaceOperators:  # noqa: 
     if space == "level":
         basis = sparse.csr_array(basis @ level_states(S, L, hund((Shell(0, l, count),))[2]))
 
-    def project(operator: object) -> NDArray:
+    def project(operator: Any) -> NDArray[Any]:
         return (basis.T @ (operator @ basis)).toarray()
 
     return SpaceOperators(
@@ -164,7 +165,7 @@ def space_operators(l: int, count: int, space: str) -> SpaceOperators:  # noqa: 
     )
 
 
-def hamiltonian(model: IonModel) -> NDArray | sparse.csr_array:
+def hamiltonian(model: IonModel) -> NDArray[Any] | sparse.csr_array:
     """Return H/h of the model at zero field, MHz; dense in the small spaces, sparse in the configuration."""
     shell = model.shell
     operators = space_operators(shell.l, shell.count, model.space)
@@ -220,7 +221,9 @@ class Levels:
         operators = space_operators(shell.l, shell.count, self.model.space)
         return operators.orbital, operators.spin
 
-    def matrices(self, columns: slice | NDArray, rows: slice | NDArray | None = None) -> tuple[NDArray, NDArray]:
+    def matrices(
+        self, columns: slice | NDArray[Any], rows: slice | NDArray[Any] | None = None
+    ) -> tuple[NDArray[Any], NDArray[Any]]:
         """Return <row|L|column> and <row|S|column>, each of shape (3, rows, columns)."""
         right = self.states[:, columns]
         left = right if rows is None else self.states[:, rows]
@@ -230,7 +233,7 @@ class Levels:
             np.array([left.conj().T @ (m @ right) for m in spin]),
         )
 
-    def moments(self, columns: slice | NDArray, rows: slice | NDArray | None = None) -> NDArray:
+    def moments(self, columns: slice | NDArray[Any], rows: slice | NDArray[Any] | None = None) -> NDArray[Any]:
         """Return <row| k L + g_S S |column>, shape (3, rows, columns): minus the moment in muB."""
         orbital, spin = self.matrices(columns, rows)
         return self.model.reduction * orbital + self.model.g_spin * spin
@@ -283,7 +286,7 @@ def _tolerance(largest: float) -> float:
     return max(1e-12 * largest, 1e-9)
 
 
-def _lanczos(matrix: sparse.csr_array, count: int) -> tuple[NDArray, NDArray, float]:
+def _lanczos(matrix: sparse.csr_array, count: int) -> tuple[NDArray[Any], NDArray[Any], float]:
     """Return the lowest energies and states of a large sparse Hermitian matrix, and a bound of all energies.
 
     Lanczos iteration finds one state of a degenerate level at a time and may stop before the last one.  What
@@ -310,17 +313,17 @@ def _lanczos(matrix: sparse.csr_array, count: int) -> tuple[NDArray, NDArray, fl
     return energies, states, largest
 
 
-def _rayleigh(matrix: sparse.csr_array, states: NDArray) -> NDArray[np.float64]:
+def _rayleigh(matrix: sparse.csr_array, states: NDArray[Any]) -> NDArray[np.float64]:
     """Return <v|H|v>/<v|v> of each column."""
     return np.einsum("ai,ai->i", states.conj(), matrix @ states).real / np.linalg.norm(states, axis=0) ** 2
 
 
 def _lowest_beyond(
-    matrix: sparse.csr_array, known: NDArray, largest: float, count: int, start: NDArray
+    matrix: sparse.csr_array, known: NDArray[Any], largest: float, count: int, start: NDArray[Any]
 ) -> NDArray[np.complex128]:
     """Return the lowest states of what is left when known states are lifted out of the way."""
 
-    def act(vector: NDArray) -> NDArray:
+    def act(vector: NDArray[Any]) -> NDArray[Any]:
         return matrix @ vector + 2 * largest * (known @ (known.conj().T @ vector))
 
     size = matrix.shape[0]

@@ -9,6 +9,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -67,19 +68,19 @@ _STRAIGHT = 1e-9
 _NO_SPLITTING = 1e-3
 
 
-def _is_straight(tensor: NDArray) -> bool:
+def _is_straight(tensor: NDArray[Any]) -> bool:
     off = tensor - np.diag(np.diag(tensor))
     return bool(np.abs(off).max() <= _STRAIGHT * np.abs(tensor).max())
 
 
-def _principal(tensor: NDArray) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+def _principal(tensor: NDArray[Any]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Return principal values and right-handed axes, as near as possible to x, y, z."""
     if _is_straight(tensor):
         return np.diag(tensor).copy(), np.eye(3)
     return principal_axes(tensor)
 
 
-def _zero_field(tensor: NDArray) -> tuple[float, float, NDArray[np.float64]]:
+def _zero_field(tensor: NDArray[Any]) -> tuple[float, float, NDArray[np.float64]]:
     """Return D, E and axes, the molecular ones where D is diagonal there: E/D is then what it is."""
     if _is_straight(tensor):
         x, y, z = np.diag(tensor)
@@ -251,7 +252,7 @@ def rank_of(matrix: NDArray[np.float64], names: Sequence[str], scales: NDArray[n
     )
 
 
-def _in_words(names: Sequence[str], vector: NDArray) -> str:
+def _in_words(names: Sequence[str], vector: NDArray[Any]) -> str:
     """Write a direction of relative changes with its largest part set to 1."""
     vector = vector / vector[np.argmax(np.abs(vector))]
     parts = [f"{name} {v:+.2f}" for name, v in zip(names, vector, strict=True) if abs(v) > 0.05]

@@ -6,6 +6,7 @@ import math
 import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -132,7 +133,7 @@ class QuenchRow:
         caption = "; ".join([f"{self.level.ion} {self.level.term}", self.crystal_field, *self.notes])
         return html_table(["g", "x", "y", "z"], rows, caption=caption)
 
-    def as_record(self) -> dict[str, object]:
+    def as_record(self) -> dict[str, Any]:
         """Return the machine-readable form; energies in cm^-1."""
         measured = self.measured
 
@@ -288,7 +289,7 @@ def quench_row(
             notes.append(f"{error.found}; {error.right}")
     if model is not None and g_spin is not None:
         model = replace(model, g_spin=g_spin)
-    row: dict[str, object] = {}
+    row: dict[str, Any] = {}
     ruler = level  # the free level that surviving orbital moments are measured against
     if model is not None:
         if str(model.shell) not in (level.configuration or "").split():
@@ -301,13 +302,11 @@ def quench_row(
     return QuenchRow(level=level, spin_only=level.g_spin, notes=tuple(dict.fromkeys(notes)), **row)
 
 
-def _crystal_part(
-    model: IonModel, level: IonLevel, notes: list[str], temperatures: Sequence[float]
-) -> dict[str, object]:
+def _crystal_part(model: IonModel, level: IonLevel, notes: list[str], temperatures: Sequence[float]) -> dict[str, Any]:
     """Fill what the crystal-field model says."""
     levels = solve(model)
     remark = model.crystal.remark or f"{model.crystal.form} field given"
-    row: dict[str, object] = {"crystal_field": remark, "levels": _lowest_levels(levels)}
+    row: dict[str, Any] = {"crystal_field": remark, "levels": _lowest_levels(levels)}
     ground = ground_state(model, levels)
     if isinstance(ground, str):
         notes.append(ground.removeprefix(f"{model.name}: "))
@@ -382,13 +381,11 @@ def _model_fraction(
     )
 
 
-def _divided(values: NDArray, by: float) -> NDArray:
+def _divided(values: NDArray[Any], by: float) -> NDArray[Any]:
     return values / by if by else np.zeros_like(values)
 
 
-def _measured_part(
-    measured: MeasuredG, level: IonLevel, row: Mapping[str, object], notes: list[str]
-) -> dict[str, object]:
+def _measured_part(measured: MeasuredG, level: IonLevel, row: Mapping[str, Any], notes: list[str]) -> dict[str, Any]:
     """Fill the surviving fraction of the measurement."""
     S, L, _ = numbers_of(level)
     if L == 0 or S == 0:
@@ -411,7 +408,7 @@ def _measured_part(
     return {"fraction_measured": result[0], "fraction_uncertainty": result[1]}
 
 
-def _effective_g(measured: MeasuredG, row: Mapping[str, object]) -> str:
+def _effective_g(measured: MeasuredG, row: Mapping[str, Any]) -> str:
     """Say which doublet of a high spin the measurement looks like, where it is far from the spin's own g."""
     S, own = row.get("effective_spin"), row.get("g_crystal")
     if not isinstance(S, float) or own is None or S < 1.5 or round(2 * S) % 2 == 0:

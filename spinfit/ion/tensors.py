@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, replace
 from itertools import permutations
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -104,7 +105,7 @@ def doublet_g(levels: Levels, *, which: int = 0) -> DoubletG:
     return _from_moments(orbital, spin, float(levels.excitation[first]))
 
 
-def _from_moments(orbital: NDArray, spin: NDArray, energy: float) -> DoubletG:
+def _from_moments(orbital: NDArray[Any], spin: NDArray[Any], energy: float) -> DoubletG:
     """Build the tensor from the moment's 2x2 matrices, each of shape (3, 2, 2)."""
     total = orbital + spin
     G = 2 * np.einsum("iab,jba->ij", total, total).real
@@ -122,7 +123,7 @@ def _from_moments(orbital: NDArray, spin: NDArray, energy: float) -> DoubletG:
     return DoubletG(principal, axes, G, sign, orbital_part, principal - orbital_part, energy)
 
 
-def principal_axes(tensor: NDArray) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+def principal_axes(tensor: NDArray[Any]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Return principal values and axes of a symmetric tensor, ordered to lie as near as possible to x, y, z.
 
     The axes are columns, right-handed, with a positive diagonal where possible.  Where values coincide (to
@@ -145,7 +146,7 @@ def principal_axes(tensor: NDArray) -> tuple[NDArray[np.float64], NDArray[np.flo
     return values[order], axes + 0.0  # no minus before zero
 
 
-def _straightened(vectors: NDArray) -> NDArray[np.float64]:
+def _straightened(vectors: NDArray[Any]) -> NDArray[np.float64]:
     """Return another orthonormal basis of the same space, near the Cartesian axes that lie closest to it."""
     projector = vectors @ vectors.T
     nearest = np.sort(np.argsort(-np.diag(projector), kind="stable")[: vectors.shape[1]])
@@ -242,7 +243,7 @@ def spin_hamiltonian(model: IonModel, *, levels: Levels | None = None, spin: flo
     return _resolve(S, effective, moments, purity)
 
 
-def spin_states(model: IonModel, without: Levels) -> tuple[NDArray, float]:
+def spin_states(model: IonModel, without: Levels) -> tuple[NDArray[Any], float]:
     """Return the pure states |S M>, M falling, of the ground manifold and its S.
 
     Parameters
@@ -281,7 +282,7 @@ def spin_states(model: IonModel, without: Levels) -> tuple[NDArray, float]:
     return states, S
 
 
-def _resolve(S: float, effective: NDArray, moments: NDArray, purity: float) -> SpinHamiltonian:
+def _resolve(S: float, effective: NDArray[Any], moments: NDArray[Any], purity: float) -> SpinHamiltonian:
     """Resolve energies and moments over |S M> into g and D."""
     spins = spin_matrices(S)
     norm = S * (S + 1) * (2 * S + 1) / 3
@@ -299,7 +300,7 @@ def _resolve(S: float, effective: NDArray, moments: NDArray, purity: float) -> S
     return SpinHamiltonian(S, g, D_tensor, D, E, D_axes, values, g_axes, zfs_error, g_error, purity)
 
 
-def _zero_field(S: float, effective: NDArray) -> tuple[NDArray, float]:
+def _zero_field(S: float, effective: NDArray[Any]) -> tuple[NDArray[Any], float]:
     """Return the D-tensor and what it leaves, rms in MHz."""
     size = round(2 * S) + 1
     centred = effective - np.trace(effective) / size * np.eye(size)
@@ -321,7 +322,7 @@ def _zero_field(S: float, effective: NDArray) -> tuple[NDArray, float]:
     return tensor, float(np.linalg.norm(rest) / np.sqrt(size))
 
 
-def d_and_e(tensor: NDArray) -> tuple[float, float, NDArray[np.float64]]:
+def d_and_e(tensor: NDArray[Any]) -> tuple[float, float, NDArray[np.float64]]:
     """Return D, E (0 <= E/D <= 1/3) and the axes x, y, z, as columns, of a traceless symmetric tensor."""
     values, vectors = np.linalg.eigh(tensor)
     values = values - values.mean()

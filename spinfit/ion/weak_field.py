@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -67,7 +68,7 @@ def term_in_field(
     zeeman = MU_B_OVER_H * (g_orbital * l_z + g_s * s_z)
     energies = lande_intervals(S, L, lam)
     rising = sorted(level_js(S, L), key=lambda J: energies[J])
-    parts: list[tuple[float, float, NDArray, NDArray]] = []
+    parts: list[tuple[float, float, NDArray[Any], NDArray[Any]]] = []
     for M in sorted({float(m) for m in s_z + l_z}):
         kept = np.flatnonzero(np.abs(s_z + l_z - M) < 0.1)
         block = coupling[np.ix_(kept, kept)] + field[:, None, None] * np.diag(zeeman[kept])

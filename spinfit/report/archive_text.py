@@ -9,8 +9,9 @@ from typing import Any
 
 from spinfit.report.archive_reading import Archive
 from spinfit.report.batch_archive import BatchSummary
+from spinfit.report.layout import wrapped
 from spinfit.report.outcome_json import value_record
-from spinfit.report.tables import outcome_lines, wrapped
+from spinfit.report.tables import outcome_lines
 
 MOST_LISTED = 30
 

@@ -11,7 +11,7 @@ import numpy as np
 from spinfit.errors import InputError
 from spinfit.fitting.data import Job
 from spinfit.fitting.equivalent import AXES, conventional, permuted
-from spinfit.fitting.outcome import Outcome
+from spinfit.fitting.outcome import Outcome, Value
 from spinfit.fitting.parameters import Binding
 from spinfit.ion.quench import QuenchRow, measured_from_parameters, quench_row
 from spinfit.report.numbers import short
@@ -33,7 +33,7 @@ def final_species(job: Job, outcome: Outcome) -> tuple[Species, ...]:
     return binding.apply(values)[0]
 
 
-def g_was_measured(parameters: Mapping[str, object], species: str) -> bool:
+def g_was_measured(parameters: Mapping[str, Value], species: str) -> bool:
     """Say whether any component of a species' g was varied, tied or derived rather than held."""
     names = (f"{species}.g", *(f"{species}.g_{axis}" for axis in ("x", "y", "z", "perp", "par")))
     found = [parameters[name] for name in names if name in parameters]

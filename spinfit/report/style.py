@@ -6,6 +6,9 @@ green- and blue-blind readers and, nearly, on a grey printer.  Curves differ in 
 
 from __future__ import annotations
 
+from contextlib import AbstractContextManager
+from typing import Any
+
 from matplotlib import rc_context
 
 MEASURED = "#30343b"
@@ -51,11 +54,11 @@ SETTINGS = {
 }
 
 
-def styled():
+def styled() -> AbstractContextManager[None]:
     """Return a context in which figures are built and saved in the project's style."""
     return rc_context(SETTINGS)
 
 
-def part_colour(index: int) -> tuple[str, tuple]:
+def part_colour(index: int) -> tuple[str, tuple[Any, ...]]:
     """Return colour and dashes of the `index`-th species."""
     return PARTS[index % len(PARTS)], DASHES[index % len(DASHES)]
