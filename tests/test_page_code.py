@@ -114,6 +114,8 @@ def test_what_is_right_passes(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -
     [
         ("r.g 2.0061(2) 1.0e-05", "r.g   2.0062(2)  1.05e-05", True),
         ("r.g 2.0061(2)", "r.g 2.0064(2)", False),
+        ("r.width 0.315(4) 3.8e-06", "r.width 0.315(4) 1.9e-06", True),
+        ("r.width 0.315(4) 3.8e-04", "r.width 0.315(4) 1.9e-04", False),
         ("r.g 2.0061(2)", "r.g 2.0061(5)", False),
         ("D 129.9(1.0)", "D 130.5(1.1)", True),
         ("D 129.9(1.0)", "D 131.5(1.0)", False),
