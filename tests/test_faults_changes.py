@@ -18,6 +18,7 @@ from spinfit.batch.template import Template
 from spinfit.cli import main
 from spinfit.errors import InputError
 from spinfit.files import raw
+from spinfit.files.reading import read_content
 
 PACKAGE = Path(raw.__file__).resolve().parents[1]
 
@@ -176,3 +177,33 @@ def test_a_clock_that_goes_backwards_changes_nothing(tmp_path, monkeypatch):
     assert batch_jobs.timeless(tmp_path / "out") == batch_jobs.timeless(tmp_path / "calm")
     for name in ("tile_00/outcome.json", "tile_01/outcome.h5", "batch.h5"):
         assert (tmp_path / "out" / name).read_bytes() == (tmp_path / "calm" / name).read_bytes()
+
+
+# A trace that grows --------------------------------------------------------------------------------
+
+
+def rows(count: int, form: str) -> str:
+    return "".join(form.format(300 + 0.1 * n, 12.3456 * (n - 20)) for n in range(count))
+
+
+@pytest.mark.parametrize(
+    ("separator", "form"), [(",", "{:.3f},{:.5f}\n"), ("\t", "{:.3f}\t{:.4e}\n"), (" ", "{:.3f} {:.2f}\n")]
+)
+def test_a_last_line_that_was_cut_off_is_refused_wherever_it_was_cut(separator, form):
+    """Half a number reads as another one; only where the line's end alone is missing nothing is wrong."""
+    whole = f"field/mT{separator}signal\n" + rows(40, form)
+    last = len(form.format(303.9, 12.3456 * 19))
+    size = len(read_content(whole.encode(), "a.csv").columns)
+    for cut in range(1, last):
+        content = whole[:-cut].encode()
+        if cut == 1:  # the line's end alone is missing
+            assert len(read_content(content, "a.csv").columns) == size
+        else:
+            with pytest.raises(InputError, match="line 41: .*(is cut off|column|is not a number)"):
+                read_content(content, "a.csv")
+
+
+def test_numbers_of_various_lengths_are_not_taken_for_cut_off():
+    """Where trailing zeros are left out, a last number with fewer digits is a number like others."""
+    for text in (rows(40, "{:.2f},{:.3g}\n"), rows(40, "{:.2f},{:.0f}\n"), rows(5, "{:.2f},{:.2f}\n")[:-2]):
+        assert len(read_content(text.rstrip("\n").encode(), "a.csv").columns) in (40, 5)

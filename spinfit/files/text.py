@@ -168,7 +168,7 @@ def _fast(body: str, dialect: Dialect, width: int) -> NDArray[np.float64] | None
     return data if data.shape[1] == width and np.isfinite(data).all() else None
 
 
-def _slow(lines: list[str], pre: _Preamble, header: dict[str, Any], notes: list[Note], file: str) -> NDArray[Any]:
+def _slow(lines: list[str], pre: _Preamble, header: dict[str, Any], notes: list[Note], file: str) -> NDArray:
     """Read line by line, so that a wrong one is found by its number."""
     rows: list[list[float]] = []
     for number, line in enumerate(lines[pre.start :], pre.start + 1):
@@ -223,7 +223,8 @@ def _check_end(lines: list[str], pre: _Preamble, file: str) -> None:
         return  # too little to tell, or a line end or a comment at the end
     last, *others = (_tail(line, pre.dialect) for line in reversed(lines[pre.start :]))
     if len(set(others)) == 1 and others[0] != last and others[0].startswith(last):
-        found = f"{quote(_last(lines[-1], pre.dialect))} is cut off: it has fewer digits than the last number of every line above"
+        number = quote(_last(lines[-1], pre.dialect))
+        found = f"{number} is cut off: it has fewer digits than the last number of every line above"
         right = "wait until the measurement has ended, or take the line out"
         raise InputError(found, right, place=f"line {len(lines)}", file=file)
 
