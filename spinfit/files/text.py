@@ -168,7 +168,7 @@ def _fast(body: str, dialect: Dialect, width: int) -> NDArray[np.float64] | None
     return data if data.shape[1] == width and np.isfinite(data).all() else None
 
 
-def _slow(lines: list[str], pre: _Preamble, header: dict[str, Any], notes: list[Note], file: str) -> NDArray:
+def _slow(lines: list[str], pre: _Preamble, header: dict[str, Any], notes: list[Note], file: str) -> NDArray[Any]:
     """Read line by line, so that a wrong one is found by its number."""
     rows: list[list[float]] = []
     for number, line in enumerate(lines[pre.start :], pre.start + 1):
