@@ -14,6 +14,9 @@ They are independent and combine in quadrature (JCGM 100:2008, 5.1.2).  Traces o
 one field axis; traces without a group share one as well, since averaging over traces of one magnet
 does not make its calibration better.  Traces of one frequency share its uncertainty whatever their group.
 Angles are read anew for every trace, but for parts of one sweep.
+
+In the response to the noise J'J gives way to the second derivatives of chi-squared where these differ
+(`spinfit.fitting.bending`).
 """
 
 from __future__ import annotations
@@ -25,6 +28,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
+from spinfit.fitting.bending import bendings, stiffened
 from spinfit.fitting.data import Trace, sharing_angle, sharing_axis, sharing_frequency
 from spinfit.fitting.noise import ResidualNoise, local_covariance, residual_noise
 from spinfit.fitting.outcome import Value
@@ -153,20 +157,35 @@ def _covariances(
     response = (right.T / singular) @ left.T / size[:, None]
     blocks = _blocks(view)
     linear = problem.fitted_basis(point, view)
-    traces, noise, white = [], np.zeros((used.shape[1],) * 2), np.zeros((used.shape[1],) * 2)
-    for rows, basis in zip(blocks, linear, strict=True):
-        residual = point.residual[rows]
-        one = residual_noise(residual, np.column_stack((basis, left[rows])))
-        traces.append(one)
-        columns = response[:, rows].T
-        white += one.variance * (columns.T @ columns)
-        noise += _widened(columns.T @ one.applied(columns), one, residual, columns)
+    traces = [
+        residual_noise(point.residual[rows], np.column_stack((basis, left[rows])))
+        for rows, basis in zip(blocks, linear, strict=True)
+    ]
+    noise, white = _of_noise(point, blocks, traces, response)
     shifts, sources = _axis_shifts(problem, view, point, response)
+    if cut == 0:
+        inverse = _filled(response @ response.T, known)
+        bent = bendings(problem, view, point, jacobian * known, inverse, np.sqrt(np.diag(_filled(noise, known))))[known]
+        if np.any(bent != 1):
+            # An axis that is off takes noise and lines along: only the response to noise feels the bending.
+            noise, white = _of_noise(point, blocks, traces, stiffened(response, bent))
     moved = np.zeros((shifts.shape[0], known.size))
     moved[:, known] = shifts
     return Covariances(
         known, _filled(noise, known), moved.T @ moved, _filled(white, known), moved, sources, blind, tuple(traces)
     )
+
+
+def _of_noise(
+    point: Point, blocks: Sequence[slice], traces: Sequence[ResidualNoise], response: Array
+) -> tuple[Array, Array]:
+    """Covariance that the noise of all traces makes, shape (k, k), and what it would be if it were white."""
+    noise, white = np.zeros((response.shape[0],) * 2), np.zeros((response.shape[0],) * 2)
+    for rows, one in zip(blocks, traces, strict=True):
+        columns = response[:, rows].T
+        white += one.variance * (columns.T @ columns)
+        noise += _widened(columns.T @ one.applied(columns), one, point.residual[rows], columns)
+    return noise, white
 
 
 def propagated_to(
