@@ -19,7 +19,6 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import ndimage
 
 from spinfit.errors import InputError
 from spinfit.fitting.baseline import known_columns, penalty_rows, removing
@@ -28,6 +27,7 @@ from spinfit.fitting.data import Job, Trace
 from spinfit.fitting.noise import noise_level
 from spinfit.fitting.parameters import Binding, Parameter, expand_vary
 from spinfit.fitting.signals import Signals, Simulate, Stage, conditions, narrowest_width
+from spinfit.fitting.smoothing import gaussian
 from spinfit.fitting.ties import compile_ties
 from spinfit.species import Species
 from spinfit.sweep import Sample
@@ -189,7 +189,7 @@ def _convolved(values: Array, sigma: float) -> Array:
     before = 2 * values[0] - values[pad:0:-1]
     after = 2 * values[-1] - values[-2 : -pad - 2 : -1]
     longer = np.concatenate((before, values, after))
-    return ndimage.gaussian_filter1d(longer, sigma, mode="nearest")[pad : pad + values.size]
+    return gaussian(longer, sigma, mode="nearest")[pad : pad + values.size]
 
 
 class Problem:

@@ -14,6 +14,7 @@ from spinfit.fitting.noise import residual_noise
 from spinfit.fitting.other_signs import best_signs
 from spinfit.fitting.residuals import Point, Problem, Progress, View
 from spinfit.fitting.signals import narrowest_width
+from spinfit.fitting.smoothing import running_sum
 from spinfit.fitting.solve import Descent, Goal, descend
 from spinfit.fitting.starts import COARSE_TOLERANCE, candidates, coarse_to_fine, explained, neighbours
 from spinfit.fitting.wide import Wide
@@ -226,7 +227,7 @@ def _featureless(problem: Problem, point: Point, view: View) -> bool:
         spacing = float(np.median(np.diff(seen.field))) * trace.field_scale
         width = narrowest_width(point.species) / spacing
         for points in {int(np.clip(width * factor, 3, residual.size // 8 + 1)) for factor in (1, 2, 4)}:
-            averaged = np.convolve(residual, np.full(points, 1 / points), mode="valid")
+            averaged = running_sum(residual, points) / points
             usual = float(np.median(np.abs(averaged))) / _MEDIAN_OF_NORMAL
             if float(np.abs(averaged).max()) > _STANDS_OUT * usual:
                 return False
@@ -243,7 +244,7 @@ def _stretch(residual: Array, width: float) -> float:
     worst = 0.0
     squares = residual**2
     for points in {int(np.clip(width * factor, 8, residual.size // 6 + 1)) for factor in (4, 12, 36)}:
-        sums = np.convolve(squares, np.ones(points), mode="valid")
+        sums = running_sum(squares, points)
         # A sum of squares of correlated noise varies more than one of white noise; the quartiles tell by how much.
         low, usual = np.quantile(sums, (0.25, 0.5))
         deviation = max(float(usual - low) / _MEDIAN_OF_NORMAL, float(usual) * math.sqrt(2 / points))

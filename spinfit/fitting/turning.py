@@ -12,10 +12,11 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import ndimage, special
 from scipy import signal as filters
+from scipy import special
 
 from spinfit.fitting.noise import noise_level
+from spinfit.fitting.smoothing import gaussian
 from spinfit.units import g_of
 
 Array = NDArray[np.float64]
@@ -105,7 +106,7 @@ class _Extremum:
 
 
 def _smooth(values: Array, scale: float) -> Array:
-    return ndimage.gaussian_filter1d(values, scale, mode="reflect") if scale else values
+    return gaussian(values, scale, mode="reflect")
 
 
 def _noise_left(scale: float) -> float:
