@@ -79,7 +79,7 @@ def copper_job(folder: Path) -> None:
 def series(folder: Path) -> None:
     """A template, its traces, and whole jobs."""
     (folder / "kiln.toml").write_text(COPPER.format(file=""), encoding="utf-8")
-    for n in (6, 7, 8):
+    for n in (7, 8):
         write_trace(
             folder / f"traces/kiln-0{n}.csv", signal_of((2.052, 2.068, 2.32 + 0.002 * n), 2.4, 270, 360, 400), n
         )
@@ -90,9 +90,12 @@ def series(folder: Path) -> None:
 
 def two_areas(folder: Path) -> None:
     """A trace and a reference, with a frequency in their headers."""
-    for name, g, width, seed in (("glaze", (2.05, 2.26), 2.0, 1), ("standard", (2.0036,), 1.0, 2)):
-        columns = signal_of(g, width, 250, 420, 1000)
-        write_trace(folder / f"{name}.csv", columns, seed, noise=0.003, header="frequency 9.4321 GHz\nfield_mT,signal")
+    for name, g, width, window, seed in (
+        ("glaze", (2.05, 2.26), 2.0, (250, 420), 1),
+        ("standard", (2.0036,), 1.0, (326, 346), 2),
+    ):
+        header = "frequency 9.4321 GHz\nfield_mT,signal"
+        write_trace(folder / f"{name}.csv", signal_of(g, width, *window, 1000), seed, noise=0.002, header=header)
 
 
 def archive(folder: Path) -> None:
