@@ -13,6 +13,7 @@ from hypothesis import strategies as st
 from scipy import constants
 from scipy.signal import lfilter
 
+from spinfit.fitting import turning
 from spinfit.fitting.turning import analyse, largest_modulation
 
 FIELD = np.linspace(320.0, 350.0, 1501)
@@ -138,3 +139,11 @@ def test_modulation_limit_is_a_third_of_the_narrowest_width():
 def test_short_and_flat_traces_are_survived():
     assert analyse(np.arange(8.0), np.zeros(8)).turning_points == ()
     assert analyse(np.arange(8.0), np.ones(8)).signal_to_noise == 0
+
+
+def test_nothing_stands_out_of_a_million_points_of_noise():
+    """Their highest stands ten standard deviations above their lowest, more than that of a few thousand."""
+    values = np.random.default_rng(2).normal(size=1_000_000)
+    assert np.ptp(values) > turning.SIGNIFICANT
+    assert turning._extrema(values, {0.0: 1.0}) == []
+    assert turning.significant(8000) == turning.SIGNIFICANT

@@ -147,13 +147,21 @@ def noise_by_scale(values: Array, white: float) -> dict[float, float]:
     return dict(sorted(out.items()))
 
 
+def significant(points: float) -> float:
+    """Return by how many standard deviations an extremum must stand out among so many points of noise.
+
+    Of n normal deviates fewer than n exp(-z^2 / 2) exceed z, so that few are beyond z = sqrt(2 ln n) on either side.
+    """
+    return max(SIGNIFICANT, 2 * float(np.sqrt(2 * np.log(max(points, 1.0)))) + 1)
+
+
 def _extrema(values: Array, left: dict[float, float]) -> list[_Extremum]:
     """Return every extremum that stands out of the noise, at the narrowest scale that shows it."""
     found: list[_Extremum] = []
     smallest = SMALLEST_PART * float(np.ptp(_smooth(values, 1.0)))
     for scale, noise in left.items():
         smooth = _smooth(values, scale)
-        prominence = max(smallest, SIGNIFICANT * noise, 1e-300)
+        prominence = max(smallest, significant(values.size / max(scale, 1.0)) * noise, 1e-300)
         new: list[_Extremum] = []
         for sign, kind in ((1.0, "maximum"), (-1.0, "minimum")):
             index, more = filters.find_peaks(sign * smooth, prominence=prominence, width=0, rel_height=0.3)
