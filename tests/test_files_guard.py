@@ -365,3 +365,21 @@ def test_the_child_itself_raises_nothing_else():
     question = {"what": "trace", "file": "f.h5", "path": "", "under": []}
     with pytest.raises(InputError, match="damaged HDF5"):
         answer_to(question, b"\x89HDF\r\n\x1a\n" + b"\x08" * 200)
+
+
+def with_a_latin_1_name(root: h5py.File) -> None:
+    """Add an attribute whose name is not UTF-8: h5py gives it as bytes, which JSON does not know."""
+    space = h5py.h5s.create(h5py.h5s.SCALAR)
+    h5py.h5a.create(root["a"].id, "größe".encode("latin-1"), h5py.h5t.NATIVE_DOUBLE, space)
+
+
+def test_names_that_are_not_utf8():
+    """A trace is read beside them; an archive has none, and the child says so and lives."""
+    content = file_bytes(with_a_latin_1_name)
+    np.testing.assert_array_equal(read_hdf5(content, "f.h5").columns[:, 0], X)
+    assert "names" in guard.ask("names", file="f.h5", content=content, under=["a"])[0]
+    process = guard._child.process
+    with pytest.raises(InputError, match="/a: holds a name that is not UTF-8"):
+        guard.ask("tree", file="f.h5", content=content)
+    assert guard._child.process is process
+    assert process.poll() is None

@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 
 from spinfit.errors import InputError
 from spinfit.files.hdf5_checks import check_dataset
+from spinfit.files.raw import quote
 
 MOST_NODES = 400_000
 """Groups and datasets: a job of 10 000 traces makes about 350 000."""
@@ -92,10 +93,13 @@ def attributes_of(node: h5py.Group | h5py.Dataset, place: str, file: str) -> dic
     Raises
     ------
     InputError
-        For attributes that are neither numbers nor texts.
+        For attributes that are neither numbers nor texts, or whose names are not UTF-8.
     """
     found: dict[str, Any] = {}
     for key in node.attrs:
+        if not isinstance(key, str):  # h5py gives what is not UTF-8 as bytes
+            found_name = f"holds a name that is not UTF-8 ({quote(key)})"
+            raise InputError(found_name, "an archive of spinfit is made otherwise", place=place, file=file)
         value = node.attrs[key]
         if isinstance(value, np.ndarray) and value.ndim == 1:
             value = value.tolist()
@@ -147,7 +151,8 @@ def names_of(root: h5py.File, under: Sequence[str], file: str) -> dict[str, Any]
     """
     group = _group_at(root, under, file)
     # Attributes of other programs may be of kinds that h5py does not read.
-    attrs = {key: group.attrs[key] for key in group.attrs if key.startswith("spinfit_")}
+    ours = [key for key in group.attrs if isinstance(key, str) and key.startswith("spinfit_")]
+    attrs = {key: group.attrs[key] for key in ours}
     plain = {key: value.item() if isinstance(value, np.generic) else value for key, value in attrs.items()}
     names = []
     for name in group:
