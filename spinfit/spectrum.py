@@ -132,6 +132,7 @@ def simulate(
     angle: float | None = None,
     parts: bool = False,
     keep: bool = False,
+    spread_tolerance: float | None = None,
 ) -> Spectrum:
     """Compute a spectrum to a promised accuracy.
 
@@ -153,6 +154,9 @@ def simulate(
         "transitions"), and warnings say how much intensity lies outside the sweep.
     keep : bool
         Whether the spectrum's derivatives will be asked for: `Spectrum.kept` then holds what they need.
+    spread_tolerance : float, optional
+        How far what spreads do may err, by default `tolerance`; infinite leaves them to widths of first order,
+        which takes one spectrum.
 
     Returns
     -------
@@ -174,7 +178,8 @@ def simulate(
     warnings: dict[tuple[str, str], None] = {}
     kept: list[Kept] | None = [] if keep else None
     for one in several:
-        part, report[one.name], said = _part(one, sweep, sample, tolerance, where, window, angles, kept)
+        own = where, window, angles, tolerance if spread_tolerance is None else spread_tolerance
+        part, report[one.name], said = _part(one, sweep, sample, tolerance, *own, kept)
         spectra.append(part if len(part) > 1 else part[0])
         if parts:
             at = replace(sample, angles=angles, angle=angles[0])
@@ -195,6 +200,7 @@ def _part(
     fields: Array,
     window: tuple[float, float],
     angles: tuple[float, ...],
+    spread_tolerance: float,
     kept: list[Kept] | None,
 ) -> tuple[Array, dict[str, object], tuple[tuple[str, str], ...]]:
     """Return spectra, shape (angles, n), what was used, and warnings."""
@@ -235,7 +241,7 @@ def _part(
     one = treatment.species
     every = systems(one, perturb=True)
     widths = broadening(one) or (None,) * len(every)
-    asked = _Asked(every, widths, sample, angles, shape, grid, fields)
+    asked = _Asked(every, widths, sample, angles, shape, grid, fields, spread_tolerance)
     done = asked.averaged(request)
     flat = sample.form == "powder" and _featureless(done.totals[0], grid, scale, fields)
     if flat and not any(report["looping"] for report in done.reports):
@@ -301,6 +307,7 @@ class _Asked(NamedTuple):
     shape: Shape
     grid: FieldGrid
     fields: Array
+    spread_tolerance: float
 
     def averaged(self, request: Request) -> _Done:
         """Average over directions, and over the distribution as far as widths of first order err."""
@@ -310,7 +317,7 @@ class _Asked(NamedTuple):
             return self.one(self.systems, self.widths, request)
         first = self.first_order_errors(request)
         told: dict[str, Any] = {"first_order_errors": dict(zip(names, map(float, first), strict=True))}
-        if first.sum() <= ENOUGH * request.tolerance:
+        if first.sum() <= ENOUGH * self.spread_tolerance:
             return self.one(self.systems, self.widths, request)._replace(spreads=told)
         found: dict[Node, _Done] = {}
 
@@ -326,8 +333,8 @@ class _Asked(NamedTuple):
         spectrum(centre := Node((0.0,) * len(names), (1.0,) * len(names)))
         # no better than the sums over directions
         reached = max(float(report.get("estimated_error", 0.0)) for report in found[centre].reports)
-        got = averaged(spectrum, height, first.tolist(), max(request.tolerance, reached))
-        told |= {"nodes": len(found), "estimated_error": float(got.error)}
+        got = averaged(spectrum, height, first.tolist(), max(self.spread_tolerance, reached))
+        told |= {"nodes": len(found), "estimated_error": float(got.error), "tolerance": self.spread_tolerance}
         if len(got.mixture) == 1:
             return found[next(iter(got.mixture))]._replace(spreads=told)
         several = [found[node] for node in got.mixture]
@@ -391,7 +398,7 @@ def _misgivings(one: Species, done: _Done, tolerance: float) -> tuple[tuple[str,
     if error > 1.5 * tolerance and "rings" in done.reports[0]:
         said.append(("accuracy", f"{one.name}: the spectrum may err by {error:.1g} of its top, not {tolerance:g}"))
     spread = done.spreads.get("estimated_error", 0.0)
-    if spread > 1.5 * max(tolerance, error):
+    if spread > 1.5 * max(tolerance, error, done.spreads.get("tolerance", 0.0)):
         text = f"spreads are so wide that the spectrum may err by {spread:.1g} of its top, not {tolerance:g}"
         said.append(("accuracy", f"{one.name}: {text}"))
     code = "accuracy" if "rings" in done.reports[0] else "directions"

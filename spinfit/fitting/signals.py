@@ -44,13 +44,10 @@ class Stage:
         Peak-to-peak width of a further Gaussian on every resonance, mT; 0 for the real thing.
     tolerance : float
         Asked of the engine.
-    first_order : bool
-        Whether spreads are left to widths of first order, on the way to a minimum.
     """
 
     broadening: float = 0.0
     tolerance: float = 1e-4
-    first_order: bool = False
 
 
 def true_field(trace: Trace | Lines, field: Array) -> Array:
@@ -148,8 +145,7 @@ class Signals:
 
     def __init__(self, simulate: Simulate) -> None:
         self._simulate = simulate
-        known = inspect.signature(simulate).parameters
-        self._keeps, self._averages = "keep" in known, "first_order" in known
+        self._keeps = "keep" in inspect.signature(simulate).parameters
         self._kept: OrderedDict[Any, tuple[Kept, int]] = OrderedDict()
         self._held = 0
         self._memory: OrderedDict[Any, Array] = OrderedDict()
@@ -228,7 +224,6 @@ class Signals:
             fields=fields,
             angle=trace.angle,
             **({"keep": True} if self._keeps else {}),
-            **({"first_order": stage.first_order} if self._averages else {}),
         )
         self.simulations += 1
         if self._keeps:
