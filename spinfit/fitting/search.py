@@ -40,6 +40,8 @@ _ENOUGH = 2
 _FAR, _NEAR = 0.15, 0.01
 # Less than this part is left by a shape that is not quite the lines', not by a line in a wrong place.
 _MISFIT = 0.003
+# A width that has shrunk to this part of the start's is no line's.
+_RUN_AWAY = 0.05
 # Engine error, in units of the noise, that a search through expensive spectra allows itself.
 _SEARCH_ERROR = 0.3
 _SEARCH_GAIN, _SEARCH_EVALUATIONS = 1.0, 15
@@ -180,7 +182,13 @@ class Search:
         return self._ends >= _ENOUGH
 
     def _leave_for_better_basins(self) -> None:
-        """Try what a scan of single parameters promises, as long as it keeps its promise."""
+        """Try what a scan of single parameters promises, as long as it keeps its promise.
+
+        Not where a width has run away to nothing, on a line that is not there: such lines cost most to simulate.
+        """
+        least = _RUN_AWAY * narrowest_width(self.problem.job.species)
+        if self.best is not None and narrowest_width(self.best.point.species) < least:
+            return
         for _ in range(_MOST_MOVES):
             if self.best is None or self.best is self._scanned:
                 return
