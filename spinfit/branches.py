@@ -289,3 +289,15 @@ def trace_branches(data: KnotData, chosen: NDArray[np.intp]) -> Branches:
 def parabola(s: Array, t: Array) -> Array:
     """Return the parabola through values s, shape (3, ...), at t = -1, 0, 1, evaluated at t."""
     return s[1] + t * (0.5 * (s[2] - s[0]) + t * (0.5 * (s[2] + s[0]) - s[1]))
+
+
+FLAT = 8.0
+"""MHz/mT, about a quarter of a free spin's slope."""
+
+
+def steepness(data: KnotData) -> float:
+    """Return how steeply strong level differences rise at the least, MHz/mT; folds count as `FLAT`."""
+    if not data.slope.size:
+        return FLAT
+    strong = np.abs(data.strength) > 0.05 * np.abs(data.strength).max()
+    return max(FLAT, float(np.quantile(np.abs(data.slope[strong]), 0.05)))

@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from spinfit import kernels
-from spinfit.branches import FWHM_PER_SIGMA, KnotData
+from spinfit.branches import FLAT, FWHM_PER_SIGMA, KnotData
 from spinfit.crossings import Crossings
 from spinfit.exact import Lines
 from spinfit.hamiltonian import System
@@ -23,7 +23,6 @@ from spinfit.lineshape import FieldGrid
 from spinfit.loop_sums import add_looping, field_step
 from spinfit.loops import Summed, nodes_of
 from spinfit.moves import Move, Moved, Places, symmetrised
-from spinfit.nodes import FLAT
 from spinfit.orientations import Mesh, Rings
 from spinfit.powder import Average
 from spinfit.sheets import HIDDEN, SMEAR_RATIO, Histograms, continued, restored, spacing, widest

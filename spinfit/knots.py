@@ -57,15 +57,18 @@ MISTRUST = 2.0
 """Factor on the extrapolated error, unless it falls so fast that a power law is itself pessimistic."""
 LOOPING_MISTRUST = 1.5
 """The same where looping pairs matter."""
+LOOPS_ASIDE = 0.05
+"""Error of looping pairs, by every second ring, in tolerances, up to which single branches alone are asked."""
 FEW_RINGS = 20
 """Rings below which the error of looping pairs does not fall as that of splines yet."""
 SPLINE_POWER = 5.0
 """Power of the step with which the error of splines falls at least, where levels have no kinks."""
+AXIAL_POWER = 1.5
+"""The same along one meridian, where rings cost little."""
 HELPFUL = 3.0
 """Power of the number of rings with which the error of single branches falls where finer rings are worth it."""
 KINKED = 0.3
 """Part of a single branch's error to which continuing its levels must bring it to be worth its greater cost."""
-
 
 Compare = Callable[[Rings, Branches, bool, Callable[[Array], Array]], float]
 """From rings, branches on them, whether splines continue them, and a prediction of what is continued, shape
@@ -140,15 +143,15 @@ def settle(system: System, symmetry: Symmetry, request: Request, compare: Compar
     history = trial.history()
     levels_known = False
     for size in [s for s in SIZES if s > trial.rings.rings]:
-        error = _extrapolated(history, trial)
+        error = min(_expected(history, trial))
         if error <= request.tolerance and not trial.split:
             trial, levels_known = trial.whole(None), True
             history[-1] = (trial.rings.rings // 2, trial.half_error())
-            error = _extrapolated(history, trial)
+            error = min(_expected(history, trial))
             if error > request.tolerance:
                 trial = trial.whole(kept)
                 history[-1] = (trial.rings.rings // 2, trial.half_error())
-                error = _extrapolated(history, trial)
+                error = min(_expected(history, trial))
         if error <= request.tolerance:
             break
         # splines converge as they promise: go there at once
@@ -184,13 +187,8 @@ def _hoped(last: tuple[int, float], size: int) -> float:
     return math.sqrt(geometric * error) * (rings / size) ** 2
 
 
-def _extrapolated(history: list[tuple[int, float]], trial: _Trial) -> float:
-    """Return the error expected of a trial from the errors measured at smaller numbers of rings."""
-    return min(_expected(history, trial))
-
-
 def _expected(history: list[tuple[int, float]], trial: _Trial) -> tuple[float, float]:
-    """Return the error expected of a trial if its branches are continued as they were, and by series.
+    """Return the error expected from errors at fewer rings if branches are continued as they were, and by series.
 
     The power law through the last two; a first measurement alone is trusted to gain little.  Level
     differences are continued by splines, whose error falls quickly unless there are kinks left.
@@ -198,7 +196,7 @@ def _expected(history: list[tuple[int, float]], trial: _Trial) -> tuple[float, f
     rings = trial.rings.rings
     size, error = history[-1]
     if trial.looping:
-        power = SPLINE_POWER
+        power = AXIAL_POWER if trial.rings.kind == "axial" else SPLINE_POWER
         known = [one for one in history if FEW_RINGS // 3 <= one[0] <= size / 1.3 and one[1] > 0]
         if known and error > 0:
             before, worse = known[-1]
@@ -412,7 +410,7 @@ class _Trial:
                 miss = local if self.local else miss
                 self._half = float(miss.sum())
                 miss = self._release(miss)
-            whole = total = self.weight_of_single()
+            whole = total = float(self._sizes().sum())
             error += whole * miss.sum(axis=0) * concentration(self.branches.field, self._sizes(), miss, self.request)
         if self.other.any():
             amount, miss = self._compare_gaps(np.flatnonzero(self.other), solid)
@@ -423,6 +421,11 @@ class _Trial:
         return error / total if total else error
 
     @property
+    def _loops_matter(self) -> bool:
+        """Whether pairs without single branches have a say in how many knots are needed."""
+        return bool(self.other.any()) and self._loop_error > LOOPS_ASIDE * self.request.tolerance
+
+    @property
     def looping(self) -> bool:
         """Whether pairs without single branches carry a notable share of the error."""
         return self._loop_error > 0.3 * self.half_error()
@@ -430,15 +433,22 @@ class _Trial:
     def history(self) -> list[tuple[int, float]]:
         """Return (rings, error) of sets that this one holds: every fourth ring, where that tells, and every second."""
         found = [(self.rings.rings // 2, self.half_error())]
-        if self.rings.rings % 4 or self.compare is not None or self.other.any() or not self.half_error():
+        if self.rings.rings % 4 or self._loops_matter or not self.half_error():
             return found
         quarter = self.rings.halved().halved()
         kept = quarter.within(self.rings)
         if kept.min() < 0:
             return found
         to_finer = quarter.to_finer_locally if self.local else quarter.to_finer
-        fourth = float(self._miss(lambda values: to_finer(values[:, kept], self.rings)).sum())
-        return [(quarter.rings, min(1.0, fourth * self.half_error() / self._half)), *found]
+
+        def predict(values: Array) -> Array:
+            return to_finer(values[:, kept], self.rings)
+
+        if self.compare is None:
+            fourth = float(self._miss(predict).sum()) * self.half_error() / self._half
+        else:
+            fourth = self._compared(predict)
+        return [(quarter.rings, min(1.0, fourth)), *found]
 
     def series_error(self) -> float:
         """Return the spectrum's relative error by what the series of single branches hold in their highest quarter.
@@ -446,18 +456,15 @@ class _Trial:
         That is what a set with a quarter of its rings less would miss, so more than the set itself does.
         Infinite where it says nothing: pairs without single branches, levels that cross.
         """
-        if self.compare is not None or self.other.any() or not self.single.any():
+        if self.compare is not None or self._loops_matter or not self.single.any():
             return math.inf
         if self._series_error is None:
             half = self._half_by_series
             # errors count as they do in the comparison with every second ring
             counted = max(1.0, self.half_error() / half) if half > 0 else 1.0
             self._series_error = HIGHEST * counted * float(self._miss(self.rings.without_highest).sum())
+            self._series_error += self._loop_error
         return self._series_error
-
-    def weight_of_single(self) -> float:
-        """Return the intensity in single branches."""
-        return float(self._sizes().sum()) if self.single.any() else 0.0
 
     @cached_property
     def branches(self) -> Branches:

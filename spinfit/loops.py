@@ -35,8 +35,8 @@ FOLD_SLOPE = 8.0
 """MHz/mT below which a level difference counts as folding, about a quarter of a free spin's slope."""
 AXIAL = 2048
 """Intervals of a meridian with which an axial system begins, at the default tolerance."""
-BAND = 200_000
-"""Nodes x points of a band of rows: what a pair needs of six arrays of these is a few megabytes."""
+BAND = 100_000
+"""Nodes x points of a band of rows: what a pair needs of six arrays of these is about two megabytes."""
 LEAST = 8
 """Intervals of the mesh of the first look."""
 LARGEST = 40_000_000
@@ -77,7 +77,7 @@ class _Pair:
         self.view = View.of(self.reach, self.leaves, len(self.fields), mesh.thetas, 4)
         self.half = self._on(self._mesh(2), self.rings.to_mesh_locally, self.view.every(2))
         self.fourth_land = self._coarse(self.half[:, :, ::2, :: 1 if mesh.phis == 1 else 2], 4)
-        self.histograms, used = self._add(look, self._bands(look, mesh), (4.0, 4.0))
+        self.histograms, used = self._add(look, self._parts(look), (4.0, 4.0))
         self.transform = self.histograms.transform()
         self.difference = self._changed(look, self._coarse(self.half, 2), (2.0, 2.0))
         self.missed = look.height(self.difference)
@@ -97,11 +97,19 @@ class _Pair:
     def _add(self, look: _Look, lands: Iterable[Landscape], finer: tuple[float, float]) -> tuple[Histograms, int]:
         """Sum over parts of a mesh, so much finer than every fourth point; return histograms and points used."""
         histograms = look.empty()
-        step = field_step(self.fourth_land, self.request, finer)
+        if self.rings.kind == "axial":
+            lands, finer = list(lands), (1.0, 1.0)
+        step = field_step(lands[0] if self.rings.kind == "axial" else self.fourth_land, self.request, finer)
         return histograms, add_looping(histograms, lands, self.request, step)
 
-    def _bands(self, look: _Look, mesh: Mesh) -> Iterator[Landscape]:
-        """Yield the present mesh a few rows at a time, so that these stay in the processor's cache."""
+    def _parts(self, look: _Look) -> Iterator[Landscape]:
+        """Yield the present mesh; where it is large, a few rows at a time, so that these stay in the cache."""
+        mesh = self._mesh(1)
+        if self.rings.kind == "axial":
+            # continued at every point: it costs little, and no polynomial is exact at a kink
+            values = self._on(mesh, self.rings.to_mesh_locally, self.view)
+            yield Landscape.of(self.fields, self.leaves, values, mesh, self.view)
+            return
         height = max(8, BAND // (len(self.fields) * len(mesh.phi()))) if kernels.COMPILED else mesh.thetas + 1
         for view, some in self.view.bands(mesh.thetas + 1, height):
             values = doubled(self.half, mesh, view.nodes, look.scratch, some)

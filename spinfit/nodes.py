@@ -11,7 +11,7 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit.branches import KnotData, Ladder, Pairs, Request, between_knots
+from spinfit.branches import KnotData, Ladder, Pairs, Request, between_knots, steepness
 from spinfit.characters import Characters
 from spinfit.hamiltonian import System
 from spinfit.levels import KELVIN_PER_MHZ, levels, population_difference, solve, zero_field_state
@@ -199,7 +199,8 @@ class FieldNodes:
         """
         counts = self._counts()
         partly = (counts >= 1).any(axis=0) & ~(counts == 1).all(axis=0)
-        leaving = partly & (counts <= 1).all(axis=0)
+        strong = np.max([found[2][:, self.lower, self.upper].max(axis=0) for found in self.solved.values()], axis=0)
+        leaving = partly & (counts <= 1).all(axis=0) & (strong > FAINT * strong.max())
         if 2 * leaving.sum() < max(1, partly.sum()):
             return
         inside = list(self.leaves)
@@ -272,7 +273,10 @@ class FieldNodes:
         reach |= between_knots(f)
         if forced is not None:
             reach |= forced
-        reach &= only & (size > 1e-3 * self.request.tolerance * size.max(axis=(1, 2), keepdims=True))
+        # a pair that is forbidden at one knot may not be so next to it; on axes that it is, levels truly cross
+        least = 1e-3 * self.request.tolerance * size.max(axis=(1, 2), keepdims=True)
+        kept = reach & only & (size.max(axis=1, keepdims=True) > least)
+        reach = kept & (size > least) if lenient else kept
         error = np.where(reach, midpoint_error(*f, *g), 0.0)
         # a flat difference turns a miss of frequency into a larger one of field
         steep = np.abs(g).min(axis=0) / h
@@ -284,7 +288,7 @@ class FieldNodes:
         bad = (error > accuracy).mean(axis=1)
         bent = missed.max(axis=2).mean(axis=1) > 0.25 * self.request.tolerance
         # deep down only knots on symmetry axes are left, where a true crossing has no width
-        return reach.any(axis=(1, 2)), ~bent & (bad < (0.02 if lenient else 1e-12))
+        return kept.any(axis=(1, 2)), ~bent & (bad < (0.02 if lenient else 1e-12))
 
     def moved(self, directions: Array, known: NDArray[np.intp]) -> FieldNodes:
         """Return the same nodes, and more where they need them, for another set of directions, reusing what is known.
@@ -423,7 +427,7 @@ class FieldNodes:
             seen,
             along,
             data.pairs,
-            scale=self.request.scale * _steepness(data),
+            scale=self.request.scale * steepness(data),
             tolerance=self.request.tolerance,
             strength=top / max(top.max(initial=0.0), 1e-300),
         )
@@ -470,14 +474,6 @@ class FieldNodes:
         return self.lower[keep], self.upper[keep]
 
 
-def _steepness(data: KnotData) -> float:
-    """Return how steeply strong level differences rise at the least, MHz/mT; folds count as `FLAT`."""
-    if not data.slope.size:
-        return FLAT
-    strong = np.abs(data.strength) > 0.05 * np.abs(data.strength).max()
-    return max(FLAT, float(np.quantile(np.abs(data.slope[strong]), 0.05)))
-
-
 STEEP = 28.0
 """MHz/mT, the slope of a free spin's level difference."""
 FLATTEST = 5.0
@@ -491,8 +487,6 @@ def blur(request: Request) -> float:
 
 BLUR = 0.1
 """Distance of levels, in line widths, that is not seen at the default tolerance."""
-FLAT = 8.0
-"""MHz/mT, about a quarter of a free spin's slope."""
 
 
 def node_accuracy(request: Request) -> float:

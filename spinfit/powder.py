@@ -29,6 +29,11 @@ from spinfit.symmetry import Symmetry, symmetry_of
 
 Array = NDArray[np.float64]
 
+SPARED = 4.0, 1.5
+"""How many times more points than smeared ones and than close ones need a meridian gets, where they cost little.
+
+What is aliased counts beside the top of the derivative, and a broad hump has much less of that than of absorption.
+"""
 ALIKE = 0.3
 """Relative difference of the widths of neighbours, where widths differ, at the default tolerance."""
 STEEPNESS = 0.1
@@ -123,20 +128,10 @@ def powder(
     asked = request
     for last in (False, True):
         knots = settle(system, symmetry, asked, compare)
-        histograms = Histograms(grid, request.scale)
-        meshes, loops = [], []
-        report.mesh_points, error, by_knots = 0, 0.0, 0.0
-        if len(knots.branches.pair):
-            meshes = _sum_branches(knots.rings, knots.branches, knots.local, request, histograms)
-            report.mesh_points += sum(Mesh(knots.rings.kind, *size).weights().size for size in meshes)
-        if knots.other.any():
-            rows = np.flatnonzero(knots.other)
-            points, error, by_half = add_pairs(
-                histograms, knots.rings, knots.data, rows, request, loops, knots.crossings
-            )
-            report.mesh_points += points
-            # the spectrum itself knows better where knots are too few than shifts of its resonances do
-            by_knots = by_half * knots.error / max(knots.half_error, 1e-300)
+        histograms, meshes, loops, points, error, by_half = _summed(knots, request, grid)
+        report.mesh_points = points
+        # the spectrum itself knows better where knots are too few than shifts of its resonances do
+        by_knots = by_half * knots.error / max(knots.half_error, 1e-300)
         if last or by_knots <= 2 * request.tolerance:
             break
         asked = replace(request, tolerance=request.tolerance * max(0.1, 0.6 * request.tolerance / by_knots))
@@ -150,6 +145,22 @@ def powder(
     if keep is not None:
         keep.append(Average(symmetry, request, knots, meshes, loops, histograms))
     return histograms, report
+
+
+def _summed(
+    knots: Knots, request: Request, grid: FieldGrid
+) -> tuple[Histograms, list[tuple[int, int]], list[Summed], int, float, float]:
+    """Return histograms, meshes of branches, how other pairs were summed, points, and errors as in `add_pairs`."""
+    histograms = Histograms(grid, request.scale)
+    meshes, loops, points, error, by_half = [], [], 0, 0.0, 0.0
+    if len(knots.branches.pair):
+        meshes = _sum_branches(knots.rings, knots.branches, knots.local, request, histograms)
+        points = sum(Mesh(knots.rings.kind, *size).weights().size for size in meshes)
+    if knots.other.any():
+        rows = np.flatnonzero(knots.other)
+        found = add_pairs(histograms, knots.rings, knots.data, rows, request, loops, knots.crossings)
+        points, error, by_half = points + found[0], found[1], found[2]
+    return histograms, meshes, loops, points, error, by_half
 
 
 def _meets_zero_field(data: KnotData, request: Request) -> bool:
@@ -222,7 +233,7 @@ def _mesh_for(rings: Rings, branches: Branches, request: Request) -> list[tuple[
     thetas = _sizes(values, 1, probe.thetas, request, even=True)
     thetas = np.maximum(thetas, _least_thetas(rings))
     if rings.kind == "axial":
-        return [(_ladder_size(t[0] if t[0] <= 4 * t[1] else t[1]), 1) for t in thetas.T]
+        return [(_ladder_size(min(SPARED[1] * plain, SPARED[0] * smeared)), 1) for plain, smeared in thetas.T]
     phis = _sizes(values, 2, probe.phis, request, even=rings.kind == "octant")
     phis = np.maximum(phis, _least_azimuths(rings))
     # smearing costs about twice as much a point
