@@ -27,6 +27,8 @@ SHALLOW = 2
 """How often a narrow range is halved where levels are ordered by character: what is left is a name that changes."""
 FAINT = 0.003
 """Strength beside the largest below which a miss counts less; a faint pair may be the sharpest line of all."""
+BENT = 4.0
+"""Square of the bend of a strength over a segment, in tolerances, that five nodes were found to follow well enough."""
 KEPT_PAIRS = 120
 """Pairs of levels up to which their differences at every node are kept."""
 AT_ONCE = 200_000
@@ -286,7 +288,7 @@ class FieldNodes:
         top = size.max(axis=(1, 2), keepdims=True, initial=0.0, where=reach)
         missed = bend * bend / np.maximum(size * np.maximum(size, FAINT * top), 1e-300)
         bad = (error > accuracy).mean(axis=1)
-        bent = missed.max(axis=2).mean(axis=1) > 0.25 * self.request.tolerance
+        bent = missed.max(axis=2).mean(axis=1) > BENT * self.request.tolerance
         # deep down only knots on symmetry axes are left, where a true crossing has no width
         return kept.any(axis=(1, 2)), ~bent & (bad < (0.02 if lenient else 1e-12))
 

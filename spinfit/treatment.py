@@ -181,7 +181,8 @@ def _errors(
         error = SMOOTHING * (shift[:, lower] + shift[:, upper]) / (28.0 * scale)
         error = error + mixed[:, lower, upper] + 0.3 * turned[:, lower, upper] * min(1.0, coupling / (28.0 * scale))
         # each pair makes a feature of its own, and the one that errs most counts
-        out[k] = float(((near * np.minimum(error, 1.0)).sum(axis=0) / of_pair.max()).max())
+        # where nothing is allowed without nuclei, all there is depends on them
+        out[k] = float((near * np.minimum(error, 1.0)).sum(axis=0).max() / of_pair.max()) if of_pair.any() else 1.0
     return out
 
 
