@@ -261,7 +261,7 @@ class Crossings:
             for kind in np.unique(kinds[kinds > 0]):
                 where = np.flatnonzero(kinds == kind)
                 own, share = self.data.strength[row, where], self._closeness(row)[where]
-                plain, made = (self._group(row, where, int(kind) + more, self._to_finer)[2] for more in (0, 16))
+                plain, made = self._to_finer(own), self._group(row, where, int(kind) + 16, self._to_finer)[2]
                 missed = [(np.abs(one - own) * share).sum(axis=1) for one in (plain, made)]
                 bent[where] = missed[1] < GAIN * missed[0]
         return self._bent[row]

@@ -263,8 +263,17 @@ def _in_field(
                 continue
             c0, c1, c2, c3, c4, c5 = _quintic(f0, f1, f2, d0, d1, d2)
             number = 0
+            # most resonances are alone in their leaf: steep at five places, and the same way
+            up = d1 > 0
+            alone = (d0 > 0) == up and (d2 > 0) == up and (f1 > f0) == up and (f2 > f1) == up
+            alone = alone and (_rise(c1, c2, c3, c4, c5, -0.5) > 0) == up and (_rise(c1, c2, c3, c4, c5, 0.5) > 0) == up
+            if alone:
+                if (f0 >= 0) == (f2 >= 0):
+                    continue
+                low[0], high[0] = (-1.0, 0.0) if (f0 >= 0) != (f1 >= 0) else (0.0, 1.0)
+                number = 1
             before, rise_before = f0, _rise(c1, c2, c3, c4, c5, -1.0)
-            for k in range(1, 9):
+            for k in range(1, 1 if alone else 9):
                 t = -1.0 + 0.25 * k
                 here = f1 if k == 4 else (f2 if k == 8 else _value(c0, c1, c2, c3, c4, c5, t))
                 rise = _rise(c1, c2, c3, c4, c5, t)
