@@ -263,7 +263,12 @@ def _part(
         said = (*remarks(sample, angles, request.microwave), *said)
     said = (*treatment.warnings, *said)
     used = _used(done, treatment)
-    return np.array([grid.sample(grid.render(t, shape), fields) for t in done.totals]), used, said
+    signal = np.array([grid.sample(grid.render(t, shape), fields) for t in done.totals])
+    if not signal.any():
+        mode = "in the parallel mode " if sweep.microwave == "parallel" else ""
+        text = f"{one.name}: nothing is resonant {mode}between {window[0]:g} and {window[1]:g} mT"
+        said = (*said, ("empty", text))
+    return signal, used, said
 
 
 FEATURELESS = 0.02

@@ -203,7 +203,12 @@ def test_a_pure_zeeman_transition_has_no_parallel_mode():
     species = Species("s", (Spin(g=(2.0, 2.05, 2.2)),), width=Width(gaussian=1.0))
     got = simulate(species, Sweep(9500.0, (270.0, 380.0), 256, microwave="parallel"))
     assert not got.signal.any()
-    assert simulate(species, Sweep(9500.0, (270.0, 380.0), 256)).signal.any()
+    assert ("empty", "s: nothing is resonant in the parallel mode between 270 and 380 mT") in got.warnings
+    across = simulate(species, Sweep(9500.0, (270.0, 380.0), 256))
+    assert across.signal.any()
+    assert not across.warnings
+    beside = simulate(species, Sweep(9500.0, (100.0, 200.0), 256))
+    assert ("empty", "s: nothing is resonant between 100 and 200 mT") in beside.warnings
 
 
 def test_a_spectrum_that_meets_zero_field_says_how_far_it_may_err():
