@@ -162,7 +162,7 @@ def deposit_sheet_changes_numpy(
 def compiled(function: Callable) -> Callable:
     """Compile a kernel where numba is installed; return it as it is otherwise."""
     # without checks for division by zero, which would keep loops from being vectorised
-    return function if njit is None else kept_compiled(njit, function, error_model="numpy")
+    return function if njit is None else kept_compiled(njit, function, error_model="numpy", fastmath={"contract"})
 
 
 taps_at, slopes_at = compiled(taps), compiled(slopes_of_taps)

@@ -27,8 +27,8 @@ SHALLOW = 2
 """How often a narrow range is halved where levels are ordered by character: what is left is a name that changes."""
 FAINT = 0.003
 """Strength beside the largest below which a miss counts less; a faint pair may be the sharpest line of all."""
-BENT = 4.0
-"""Square of the bend of a strength over a segment, in tolerances, that five nodes were found to follow well enough."""
+BENT = 0.3
+"""Part of the tolerance that strengths may miss between nodes: five of them miss about their bend to the power 5/2."""
 KEPT_PAIRS = 120
 """Pairs of levels up to which their differences at every node are kept."""
 AT_ONCE = 200_000
@@ -288,7 +288,7 @@ class FieldNodes:
         top = size.max(axis=(1, 2), keepdims=True, initial=0.0, where=reach)
         missed = bend * bend / np.maximum(size * np.maximum(size, FAINT * top), 1e-300)
         bad = (error > accuracy).mean(axis=1)
-        bent = missed.max(axis=2).mean(axis=1) > BENT * self.request.tolerance
+        bent = missed.max(axis=2).mean(axis=1) > (BENT * self.request.tolerance) ** 0.8
         # deep down only knots on symmetry axes are left, where a true crossing has no width
         return kept.any(axis=(1, 2)), ~bent & (bad < (0.02 if lenient else 1e-12))
 
@@ -411,6 +411,9 @@ class FieldNodes:
         def partner(row: int, number: int, nodes: NDArray[np.intp]) -> Array:
             both = [pairs[0][row], pairs[1][row]]
             both[number // 2] += 2 * (number % 2) - 1
+            if len(self.lower) <= KEPT_PAIRS:
+                (place,) = np.flatnonzero((self.lower == min(both)) & (self.upper == max(both)))
+                return np.stack([self._every(fields[k])[2][:, place] for k in nodes])
             one = (np.array([min(both)]), np.array([max(both)]))
             return np.stack([self._differences(fields[k], one)[2][:, 0] for k in nodes])
 
