@@ -254,7 +254,7 @@ def test_simulate_with_noise(here, run):
     np.testing.assert_array_equal(noisy, again)
     assert not np.array_equal(noisy, other)
     noise = (noisy - plain) / np.abs(plain).max() / 0.02
-    # Of 501 normal deviates: mean 0 +- 1/sqrt(501), deviation 1 +- 1/sqrt(2 501), neighbours uncorrelated +- 1/sqrt(501).
+    # Of 501 normal deviates: mean 0 +- 1/sqrt(501), deviation 1 +- 1/sqrt(2 501), neighbours as the mean.
     assert abs(noise.mean()) < 4 / 501**0.5
     assert abs(noise.std() - 1) < 4 / 1002**0.5
     assert abs(np.mean(noise[1:] * noise[:-1])) < 4 / 501**0.5
