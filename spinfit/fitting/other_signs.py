@@ -13,9 +13,8 @@ from collections.abc import Iterator
 import numpy as np
 from numpy.typing import NDArray
 
-from spinfit.errors import InputError
-from spinfit.fitting.residuals import Point, Problem, Progress, View
-from spinfit.fitting.signs import flippable, flipped, per_point
+from spinfit.fitting.residuals import Problem, Progress, View
+from spinfit.fitting.signs import flippable, flipped, per_point, rise_at
 from spinfit.fitting.solve import Descent, Goal, descend
 
 Array = NDArray[np.float64]
@@ -44,7 +43,7 @@ def best_signs(
         jacobian = problem.jacobian(descent.point, view) if descent.jacobian is None else descent.jacobian
         promising = []
         for number, other in enumerate(others(problem, descent.point.free)):
-            rise = _rise(problem, view, descent.point, jacobian, other)
+            rise = rise_at(problem, view, descent.point, jacobian, other)
             if rise < _HOPELESS:
                 promising.append((rise, number, other))
         best = descent
@@ -86,14 +85,3 @@ def _home(name: str) -> str:
     """Return the tensor that a parameter belongs to; D and E of a spin are one."""
     head, _, last = name.rpartition(".")
     return f"{head}.zero_field" if last in ("D", "E") else f"{head}.{last.partition('_')[0]}"
-
-
-def _rise(problem: Problem, view: View, point: Point, jacobian: Array, other: Array) -> float:
-    """Rise of chi-squared, per point, at other values when all parameters follow to first order."""
-    try:
-        there = problem.evaluate(other, view)
-    except InputError:
-        return float("inf")
-    step = np.linalg.lstsq(jacobian, there.residual, rcond=1e-6)[0]
-    after = there.residual - jacobian @ step
-    return (float(after @ after) - point.chi2) / per_point(view, point)

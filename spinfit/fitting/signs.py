@@ -57,8 +57,11 @@ def rise_of(problem: Problem, view: View, point: Point, jacobian: Array, which: 
     helps less than a descent would.  Infinite where the flipped model has no meaning.
     """
     other = flipped(problem, point.free, which)
-    if other is None:
-        return float("inf")
+    return float("inf") if other is None else rise_at(problem, view, point, jacobian, other)
+
+
+def rise_at(problem: Problem, view: View, point: Point, jacobian: Array, other: Array) -> float:
+    """Rise of chi-squared, per point, at other values when all parameters follow to first order."""
     try:
         there = problem.evaluate(other, view)
     except InputError:
