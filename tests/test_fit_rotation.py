@@ -87,7 +87,11 @@ def test_one_job_fits_three_days_of_a_rotation(tmp_path):
     ):
         value = found[name]
         assert abs(value.value - true) < 3 * math.hypot(value.uncertainty, known), name
-    assert found["cr.D"].uncertainty < 0.01
+    # One of these angles alone leaves 0.04 GHz.  Ruby has D -5.747 GHz and g_par 1.984 (literature, from memory): with
+    # the misfit that there is, uncertainties by J'J alone, 0.004 GHz and 0.003, left them 4 and 9 uncertainties off.
+    assert found["cr.D"].uncertainty < 0.02
+    assert abs(found["cr.D"].value + 5.747) < 3 * found["cr.D"].uncertainty
+    assert abs(found["cr.g_par"].value - 1.984) < 3 * found["cr.g_par"].uncertainty
     # g follows the frequency: 5 MHz in 9185 is 1 in 1800.
     assert found["cr.g_perp"].uncertainty_field > 0.5 * 2 * 5 / 9185
     assert all(abs(found[f"at_{angle}.angle_zero"].value) < 1 for angle in TRACES if angle != 150)
