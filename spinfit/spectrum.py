@@ -264,7 +264,7 @@ def _part(
     said = (*treatment.warnings, *said)
     used = _used(done, treatment)
     signal = np.array([grid.sample(grid.render(t, shape), fields) for t in done.totals])
-    if not signal.any():
+    if not signal.any() and not said:
         mode = "in the parallel mode " if sweep.microwave == "parallel" else ""
         text = f"{one.name}: nothing is resonant {mode}between {window[0]:g} and {window[1]:g} mT"
         said = (*said, ("empty", text))
