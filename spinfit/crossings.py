@@ -151,7 +151,8 @@ class Crossings:
             Outside it there are zeros.
         """
         where = np.arange(len(self.data.fields))[part]
-        out = None
+        columns = 3 if self.data.variance is None else 4
+        out = None if window is None else np.zeros((columns, len(where), *window.shape))
         for nodes, kind in self._alike(row, where, window):
             if window is None:
                 here, at = to, slice(None)
@@ -160,8 +161,7 @@ class Crossings:
                 here = partial(to, rows=at)
             got = self._group(row, where[nodes], kind, here)
             if out is None:
-                shape = got[0].shape[1:] if window is None else window.shape
-                out = np.zeros((len(got), len(where), *shape))
+                out = np.zeros((columns, len(where), *got[0].shape[1:]))
             for column, values in zip(out, got, strict=True):
                 column[nodes, at] = values
         return out
@@ -208,7 +208,7 @@ class Crossings:
                 if used[side, which] and not (pair[which] - 1 + side == pair[0] and pair[1] == pair[0] + 1)
             ]
         columns, energy, slope = [*spread], self.ladder.energy[nodes], self.ladder.slope[nodes]
-        if len(mixed) == 0:
+        if not mixed:
             columns.append(data.strength[row, nodes])
         most = {}
         for lower in lowers:
@@ -226,7 +226,7 @@ class Crossings:
             bounds.append(0.5 * np.abs(mine - other).max(axis=1))
         got = iter(to_each(to, columns))
         variance = [next(got) for _ in spread]
-        strength = next(got) if len(mixed) == 0 else None
+        strength = None if mixed else next(got)
         near = {}
         for lower in lowers:
             mean, square, along, product = (next(got) for _ in range(4))

@@ -97,9 +97,11 @@ class _Pair:
     def _add(self, look: _Look, lands: Iterable[Landscape], finer: tuple[float, float]) -> tuple[Histograms, int]:
         """Sum over parts of a mesh, so much finer than every fourth point; return histograms and points used."""
         histograms = look.empty()
-        if self.rings.kind == "axial":
-            lands, finer = list(lands), (1.0, 1.0)
-        step = field_step(lands[0] if self.rings.kind == "axial" else self.fourth_land, self.request, finer)
+        if self.rings.kind == "axial":  # whose mesh is one part
+            lands = list(lands)
+            step = field_step(lands[0], self.request)
+        else:
+            step = field_step(self.fourth_land, self.request, finer)
         return histograms, add_looping(histograms, lands, self.request, step)
 
     def _parts(self, look: _Look) -> Iterator[Landscape]:

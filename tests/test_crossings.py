@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+from functools import partial
+
 import numpy as np
 import pytest
 
 from spinfit.branches import KnotData, Ladder
-from spinfit.crossings import Crossings, misses
+from spinfit.crossings import Crossings, Window, misses
 from spinfit.orientations import Mesh, Rings
 
 FREQUENCY = 300.0
@@ -83,3 +85,23 @@ def _both(crossings: Crossings, data: KnotData, rings: Rings):
         return half.to_finer_locally(values[:, kept], rings)
 
     return (crossings, to_finer), (Crossings(data), to_finer)
+
+
+@pytest.mark.parametrize("kind", ["axial", "half"])
+def test_a_window_holds_what_is_asked_for_and_nothing_else(kind: str) -> None:
+    rings, fields = Rings(kind, 16, 20, 4), np.array([40.0, 60.0, 80.0])
+    data = knot_data(rings, fields, 0.2)
+    half, kept = rings.halved(), rings.halved_knots()
+    crossings = Crossings(data, lambda v: half.to_finer_locally(v[:, kept], rings), rings.knot_weights(), 1e-6)
+    assert crossings.uses(0).any()
+    mesh = Mesh(kind, 24, 16)
+    whole = crossings.continued(0, slice(0, 3), partial(rings.to_mesh_locally, mesh=mesh))
+    shape = whole.shape[2:]
+    rows = np.array([[2, 9], [0, 0], [20, 25]])
+    part = crossings.continued(0, slice(0, 3), partial(rings.to_mesh_locally, mesh=mesh), Window(shape, rows))
+    for node, (first, last) in enumerate(rows):
+        assert part[:, node, first:last] == pytest.approx(whole[:, node, first:last], abs=1e-9)
+    assert not part[:, 1].any()
+    nothing = crossings.continued(0, slice(0, 3), partial(rings.to_mesh_locally, mesh=mesh), Window(shape, 0 * rows))
+    assert nothing.shape == whole.shape
+    assert not nothing.any()
