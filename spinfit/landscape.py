@@ -2,7 +2,8 @@
 
 A resonance passes through a few nodes at each direction, and through a part of the sphere at each node.
 Only these parts of the mesh are looked at; and the finest mesh is made from every second of its points,
-between which a polynomial is exact enough, for continuing from the knots is what costs most.
+between which a polynomial is exact enough, for continuing from the knots is what costs most.  Along one
+meridian it costs little, and the mesh is continued as a whole.
 
 What is done at every point exists twice: here in numpy, and compiled in `spinfit.loop_kernels`.
 """

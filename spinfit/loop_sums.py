@@ -60,7 +60,7 @@ def kernel(u: Array, part: Array | float = 1.0) -> Array:
 
 
 def kernel_reach(request: Request) -> float:
-    """Return where the kernel is cut, in units of its width: where it is a tenth of the tolerance."""
+    """Return where the kernel is cut, in units of its width: where it is a tenth of the tolerance, or little more."""
     return KERNEL_REACH - max(0.0, 0.8 * math.log10(request.tolerance / 1e-3))
 
 

@@ -59,6 +59,12 @@ class _Pair:
     ----------
     size : (int, int)
         Intervals of the mesh.
+    reach : ndarray, shape (l, 2)
+        Shares of the meridian, first and last, in which each leaf can be resonant.
+    view : View
+        The same in rows of the mesh.
+    half : ndarray, shape (3 or 4, k, thetas / 2 + 1, azimuths)
+        Gap, slope, strength and variance, if any, at every second point.
     histograms : Histograms
         Its own.
     error : float

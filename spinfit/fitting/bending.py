@@ -3,11 +3,12 @@
 The response of least-squares values to the noise follows from the second derivatives of chi-squared.  J'J is their
 mean over the noise; what the noise of this trace makes of them differs from it by as much as an uncertainty is large
 beside the width of the feature that tells of the parameter.  The uncertainty that belongs to this trace is the one
-by the second derivatives observed (B. Efron, D. V. Hinkley, Biometrika 65, 457 (1978)): where noise has flattened
-the minimum the value is the more uncertain, and large deviations are mostly of that kind.  A minimum that noise has
-made steeper is so near its bottom only: there the geometric mean of both is taken.  For the place of a single line in
-white noise, an uncertainty of 0.3 standard deviations of the line wide, 3000 simulated traces had 66, 93 and 98.5 % of
-the values inside 1, 2 and 3 uncertainties by J'J, and 70, 95 and 99.5 % so.
+by the second derivatives observed (B. Efron, D. V. Hinkley, Biometrika 65, 457 (1978), from memory): where noise has
+flattened the minimum the value is the more uncertain, and large deviations are mostly of that kind. A minimum that
+noise has made steeper is so near its bottom only: there the geometric mean of both is taken, a rule that was chosen
+on simulated traces and is not derived. For the place of a single line in white noise, an uncertainty of 0.3 standard
+deviations of the line wide, 3000 simulated traces had 66, 93 and 98.5 % of the values inside 1, 2 and 3 uncertainties
+by J'J, and 70, 95 and 99.5 % so.
 """
 
 from __future__ import annotations

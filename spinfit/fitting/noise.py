@@ -160,7 +160,7 @@ def residual_noise(residual: Array, basis: Array) -> ResidualNoise:
     autocovariances are too small.  With H the projector on the fitted space, E[r r'] = (1-H) C (1-H)
     is linear in the autocovariances of C; solving for them at the first few lags removes the bias.
     The order of the autoregressive process through them is the one of least AICc (C. M. Hurvich,
-    C.-L. Tsai, Biometrika 76, 297 (1989)), and an order above 0 must also improve the likelihood by
+    C.-L. Tsai, Biometrika 76, 297 (1989), from memory), and an order above 0 must also improve the likelihood by
     more than white noise would in 1 of 20 traces.
 
     Parameters

@@ -2,9 +2,9 @@
 
 Of each trace the scale, the polynomial baseline and the scale of an empty-tube background enter
 linearly.  They are not handed to the optimiser but solved at every step (variable projection,
-G. H. Golub, V. Pereyra, SIAM J. Numer. Anal. 10, 413 (1973)): the residual is what of the trace
+G. H. Golub, V. Pereyra, SIAM J. Numer. Anal. 10, 413 (1973), from memory): the residual is what of the trace
 lies outside the space that model, background and baseline span.  Its Jacobian is the model's,
-projected the same way (L. Kaufman, BIT 15, 49 (1975)); at the minimum the inverse of its normal
+projected the same way (L. Kaufman, BIT 15, 49 (1975), from memory); at the minimum the inverse of its normal
 matrix is the covariance of the parameters with all linear coefficients left free, the Schur
 complement of the full normal matrix.
 
